@@ -1,0 +1,69 @@
+package pipeline
+
+import (
+	"errors"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"strings"
+
+	"github.com/tidwall/gjson"
+
+	"evenkeel/dataset"
+	"evenkeel/provenance"
+)
+
+// Audit checks every record in out against the files it names, and against the
+// raw files in raw; with raw "" they are looked for where out's DatasetLinks say.
+// The raw dataset that was used is returned, "" if none could be found. A raw that
+// was given and is not there is a [*dataset.NotFound], and so is a missing out.
+func Audit(out, raw string) ([]provenance.Finding, provenance.Checked, string, error) {
+	if err := isFolder(out); err != nil {
+		return nil, provenance.Checked{}, "", &dataset.NotFound{Root: out, Err: err}
+	}
+	if raw != "" {
+		if err := isFolder(raw); err != nil {
+			return nil, provenance.Checked{}, "", &dataset.NotFound{Root: raw, Err: err}
+		}
+	} else {
+		raw = linkedRaw(out)
+	}
+	findings, checked, err := provenance.Audit(out, raw)
+	if err != nil {
+		return findings, checked, raw, &IOError{Path: out, Step: "auditing", Err: err}
+	}
+	if checked.Records == 0 && len(findings) == 0 {
+		return nil, checked, raw, &dataset.NotFound{Root: out, Err: errors.New("no record (*_desc-steady_prov.json) in it")}
+	}
+	return findings, checked, raw, nil
+}
+
+func isFolder(name string) error {
+	info, err := os.Stat(name)
+	if err != nil {
+		return cause(err)
+	}
+	if !info.IsDir() {
+		return &fs.PathError{Op: "open", Path: name, Err: errors.New("not a folder")}
+	}
+	return nil
+}
+
+// linkedRaw finds the raw dataset through DatasetLinks: a value without a scheme is
+// relative to the dataset it stands in.
+func linkedRaw(out string) string {
+	data, err := os.ReadFile(filepath.Join(out, "dataset_description.json"))
+	if err != nil || !gjson.ValidBytes(data) {
+		return ""
+	}
+	link := gjson.GetBytes(data, "DatasetLinks."+rawLink).String()
+	if link == "" || strings.Contains(link, ":") {
+		return ""
+	}
+	// Relative to where OUT really is: it may have been reached through a link.
+	raw := filepath.Join(realPath(out), filepath.FromSlash(link))
+	if isFolder(raw) != nil {
+		return ""
+	}
+	return raw
+}

@@ -1,0 +1,217 @@
+package pipeline
+
+// How files come to stand under their final names:
+//
+//  1. Everything a run writes goes to hidden files in the folder of the final
+//     ones (a rename across file systems would not be atomic), created 0644 less
+//     the user's umask.
+//  2. Each is synced to the disk before it is closed.
+//  3. When all are whole, an older record is removed, then all are renamed, the
+//     new record last. Whatever happens in between, a record that exists names
+//     files that belong to it.
+//  4. Hidden files left by a process that died are removed by the next one that
+//     holds the lock of the run.
+
+import (
+	"bufio"
+	"bytes"
+	"crypto/sha256"
+	"encoding/hex"
+	"errors"
+	"fmt"
+	"hash"
+	"io"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"strings"
+
+	"evenkeel/provenance"
+)
+
+// hiddenMark stands between a file's final name and the process that writes it.
+const hiddenMark = ".partial-"
+
+func hiddenName(final string) string {
+	dir, base := filepath.Split(final)
+	return filepath.Join(dir, fmt.Sprintf(".%s%s%d", base, hiddenMark, os.Getpid()))
+}
+
+// A publisher holds the files of one run until all are whole.
+type publisher struct {
+	out     string
+	pending []*pendingFile
+}
+
+type pendingFile struct {
+	role   string
+	rel    string // relative to OUT, slashes
+	final  string
+	hidden string
+	f      *os.File
+	buf    *bufio.Writer
+	sum    hash.Hash
+	n      int64
+}
+
+func (p *publisher) path(rel string) string { return filepath.Join(p.out, filepath.FromSlash(rel)) }
+
+// write makes one hidden file and lets fill write it.
+func (p *publisher) write(role, rel string, fill func(io.Writer) error) error {
+	final := p.path(rel)
+	pf := &pendingFile{role: role, rel: rel, final: final, hidden: hiddenName(final), sum: sha256.New()}
+	f, err := os.OpenFile(pf.hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
+	if err != nil {
+		return creating(rel, err)
+	}
+	pf.f = f
+	pf.buf = bufio.NewWriterSize(pf, 1<<18)
+	p.pending = append(p.pending, pf)
+	err = fill(pf.buf)
+	if err == nil {
+		err = pf.buf.Flush()
+	}
+	if err == nil {
+		err = f.Sync()
+	}
+	if cerr := f.Close(); err == nil {
+		err = cerr
+	}
+	if err != nil {
+		return &IOError{Path: rel, Step: "writing", Err: err}
+	}
+	return nil
+}
+
+func (p *publisher) writeBytes(role, rel string, data []byte) error {
+	return p.write(role, rel, func(w io.Writer) error {
+		_, err := w.Write(data)
+		return err
+	})
+}
+
+// Write counts and digests what reaches the file.
+func (f *pendingFile) Write(b []byte) (int, error) {
+	n, err := f.f.Write(b)
+	f.sum.Write(b[:n])
+	f.n += int64(n)
+	return n, err
+}
+
+// files describes what has been written so far, for the record.
+func (p *publisher) files() []provenance.File {
+	var out []provenance.File
+	for _, f := range p.pending {
+		out = append(out, provenance.File{Role: f.role, Path: f.rel, SHA256: hex.EncodeToString(f.sum.Sum(nil)), Bytes: f.n})
+	}
+	return out
+}
+
+// publish renames everything, in the order of writing; old names files of an
+// earlier record, that record included, which make way.
+func (p *publisher) publish(old []string) error {
+	ours := map[string]bool{}
+	for _, f := range p.pending {
+		ours[f.rel] = true
+	}
+	record := p.pending[len(p.pending)-1]
+	// Without its record, a run is not complete: so this comes first.
+	if err := os.Remove(record.final); err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return creating(record.rel, err)
+	}
+	for _, rel := range old {
+		if !ours[rel] {
+			if err := os.Remove(p.path(rel)); err != nil && !errors.Is(err, fs.ErrNotExist) {
+				return &IOError{Path: rel, Step: "removing a file of the earlier record", Err: err}
+			}
+		}
+	}
+	dirs := []string{}
+	seen := map[string]bool{}
+	for _, f := range p.pending {
+		if dir := filepath.Dir(f.final); !seen[dir] {
+			seen[dir] = true
+			dirs = append(dirs, dir)
+		}
+		if f == record { // the others must be on the disk before the record can be
+			syncDirs(dirs)
+		}
+		if err := os.Rename(f.hidden, f.final); err != nil {
+			return &IOError{Path: f.rel, Step: "renaming", Err: err}
+		}
+	}
+	syncDirs(dirs)
+	p.pending = nil
+	return nil
+}
+
+// syncDirs makes renames durable. Some file systems refuse to sync a folder;
+// the files themselves are synced already, so that is let pass.
+func syncDirs(dirs []string) {
+	for _, d := range dirs {
+		if f, err := os.Open(d); err == nil {
+			f.Sync()
+			f.Close()
+		}
+	}
+}
+
+// discard removes whatever has not been published.
+func (p *publisher) discard() {
+	for _, f := range p.pending {
+		os.Remove(f.hidden)
+	}
+	p.pending = nil
+}
+
+// sweep removes hidden files that a dead process left of these outputs. The
+// caller holds the run's lock, so no live process can own one.
+func sweep(out string, outputs []Output) {
+	byDir := map[string][]string{}
+	for _, o := range outputs {
+		dir, base := filepath.Split(filepath.Join(out, filepath.FromSlash(o.Path)))
+		byDir[dir] = append(byDir[dir], base)
+	}
+	for dir, bases := range byDir {
+		entries, err := os.ReadDir(dir)
+		if err != nil {
+			continue // nothing there yet
+		}
+		for _, e := range entries {
+			for _, base := range bases {
+				if strings.HasPrefix(e.Name(), "."+base+hiddenMark) {
+					os.Remove(filepath.Join(dir, e.Name()))
+				}
+			}
+		}
+	}
+}
+
+// replaceFile writes one file of the dataset as a whole, atomically, if its content
+// is not there already. rel is for messages.
+func replaceFile(name, rel string, data []byte) error {
+	if have, err := os.ReadFile(name); err == nil && bytes.Equal(have, data) {
+		return nil
+	}
+	hidden := hiddenName(name)
+	os.Remove(hidden) // of a dead process that had our number
+	f, err := os.OpenFile(hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
+	if err != nil {
+		return creating(rel, err)
+	}
+	_, err = f.Write(data)
+	if err == nil {
+		err = f.Sync()
+	}
+	if cerr := f.Close(); err == nil {
+		err = cerr
+	}
+	if err == nil {
+		err = os.Rename(hidden, name)
+	}
+	if err != nil {
+		os.Remove(hidden)
+		return &IOError{Path: rel, Step: "writing", Err: err}
+	}
+	return nil
+}

@@ -1,0 +1,564 @@
+package pipeline
+
+// One unit: the echoes of one acquisition, from raw files to published ones.
+
+import (
+	"context"
+	"crypto/sha256"
+	"encoding/hex"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"hash"
+	"io"
+	"math"
+	"os"
+	"path/filepath"
+	"slices"
+	"time"
+
+	"evenkeel/fault"
+	"evenkeel/internal/parallel"
+	"evenkeel/nifti"
+	"evenkeel/provenance"
+	"evenkeel/realign"
+	"evenkeel/slicetime"
+)
+
+// Stages of a run, in the order of the work. Observers count them.
+var Stages = []string{"read", "estimate", "measure-raw", "time", "space", "measure-steady", "write"}
+
+// A unit is worked on as a whole: its echoes share one pose.
+type unit struct {
+	plans []*Plan // those selected and not refused
+}
+
+// A worker does units one after another.
+type worker struct {
+	out     string
+	workers int // goroutines inside a run
+	stage   func(p *Plan, stage string)
+}
+
+// A digester takes the SHA-256 of everything that passes.
+type digester struct {
+	h hash.Hash
+	n int64
+}
+
+func newDigester() *digester { return &digester{h: sha256.New()} }
+
+func (d *digester) Write(b []byte) (int, error) {
+	d.n += int64(len(b))
+	return d.h.Write(b)
+}
+
+func (d *digester) readFrom(r io.Reader) (int64, error) { return io.Copy(d, r) }
+
+func (d *digester) file(role, path string) provenance.File {
+	return provenance.File{Role: role, Path: path, SHA256: hex.EncodeToString(d.h.Sum(nil)), Bytes: d.n}
+}
+
+// loaded is a series in memory with the digest of the bytes it was decoded from.
+type loaded struct {
+	data   []float32
+	nt     int
+	digest *digester
+}
+
+// load reads a series; errors are faults (*Refused), or IOError.
+func load(p *Plan, rel string, skip int) (*loaded, error) {
+	d := newDigester()
+	_, s, err := nifti.ReadSeries(p.Dataset.Path(rel), d, skip)
+	// A file that changed under us explains whatever else is wrong with it.
+	if faults := p.changed(); len(faults) > 0 {
+		return nil, &Refused{faults}
+	}
+	if f, isFault := imageFault(rel, err); isFault {
+		return nil, &Refused{[]fault.Fault{f}}
+	}
+	if err != nil {
+		return nil, &IOError{Path: rel, Step: "reading", Err: err}
+	}
+	return &loaded{s.Data, s.NT, d}, nil
+}
+
+// posed is what the pose series gave: shared by the echoes, not changed by them.
+type posed struct {
+	est       *realign.Estimate // nil with motion none
+	digest    *digester         // of the pose series
+	reference *digester         // of the sbref, nil if none was used
+	sbref     []float32
+	seconds   float64
+}
+
+// run does the plans of a unit; the result has one outcome a plan. It holds at most one
+// series at a time, the pose series first, so that no file is read twice.
+func (w *worker) run(ctx context.Context, u unit) []Outcome {
+	out := make([]Outcome, len(u.plans))
+	var shared *posed
+	// The echo that the pose comes from goes first, if it is selected.
+	order := make([]int, 0, len(u.plans))
+	for i, p := range u.plans {
+		if p.Run.File == p.Pose.File {
+			order = append([]int{i}, order...)
+		} else {
+			order = append(order, i)
+		}
+	}
+	for _, i := range order {
+		p := u.plans[i]
+		figures, extra, err := w.one(ctx, p, &shared)
+		out[i] = ended(p, figures, extra, err)
+	}
+	return out
+}
+
+// ended turns how a run ended into its outcome.
+func ended(p *Plan, figures *Figures, extra []fault.Fault, err error) Outcome {
+	o := Outcome{Plan: p, Faults: append(append([]fault.Fault{}, p.Faults...), extra...)}
+	var refused *Refused
+	switch {
+	case err == nil:
+		o.State, o.Figures = Done, figures
+	case errors.As(err, &refused):
+		o.State = RefusedRun
+		o.Faults = append(o.Faults, refused.Faults...)
+	case errors.Is(err, context.Canceled), errors.Is(err, context.DeadlineExceeded):
+		o.State = Interrupted
+	default:
+		o.State, o.Err = Failed, err
+	}
+	return o
+}
+
+// one does one run.
+func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, []fault.Fault, error) {
+	rec := &recorder{started: time.Now(), seconds: map[string]float64{}}
+	stage := func(name string) func() {
+		if err := ctx.Err(); err == nil && w.stage != nil {
+			w.stage(p, name)
+		}
+		t := time.Now()
+		return func() { rec.seconds[name] += time.Since(t).Seconds() }
+	}
+	if faults := p.changed(); len(faults) > 0 {
+		return nil, nil, &Refused{faults}
+	}
+
+	// Read, and estimate on the raw series of the shortest echo.
+	var s *loaded
+	if *shared == nil {
+		end := stage("read")
+		first, err := load(p, p.Pose.File, p.Settings.Skip)
+		if err != nil {
+			return nil, nil, err
+		}
+		end()
+		end = stage("estimate")
+		po, err := w.estimate(ctx, p, first)
+		if err != nil {
+			return nil, nil, err
+		}
+		end()
+		*shared = po
+		if p.Pose.File == p.Run.File {
+			s = first
+		}
+	}
+	if s == nil {
+		end := stage("read")
+		var err error
+		if s, err = load(p, p.Run.File, p.Settings.Skip); err != nil {
+			return nil, nil, err
+		}
+		end()
+	}
+	if err := ctx.Err(); err != nil {
+		return nil, nil, err
+	}
+	nt := s.nt
+	po := *shared
+
+	reference, mask, centre := w.standard(p, po, s)
+	m := &measures{mask: mask}
+	m.measurePoses(po.est, nt)
+
+	end := stage("measure-raw")
+	if err := m.measureRaw(ctx, p, s.data, nt, w.workers); err != nil {
+		return nil, nil, err
+	}
+	end()
+	steps := []string{"time", "space"}
+	if p.Settings.Order == "space-first" {
+		steps = []string{"space", "time"}
+	}
+	for _, step := range steps {
+		end := stage(step)
+		var err error
+		if step == "time" {
+			err = w.correctTime(ctx, p, s.data, nt)
+		} else {
+			err = w.resample(ctx, p, po.est, s.data, nt)
+		}
+		if err != nil {
+			return nil, nil, err
+		}
+		end()
+	}
+	end = stage("measure-steady")
+	if err := m.measureSteady(ctx, s.data, nt, w.workers); err != nil {
+		return nil, nil, err
+	}
+	end()
+
+	end = stage("write")
+	inputs, err := p.inputFiles(s, po)
+	if err != nil {
+		return nil, nil, err
+	}
+	// The last look at the inputs: what was read is what the record names.
+	if faults := p.changed(); len(faults) > 0 {
+		return nil, nil, &Refused{faults}
+	}
+	pub := &publisher{out: w.out}
+	defer pub.discard()
+	if err := p.writeData(ctx, pub, s.data, nt, reference, mask, centre, m, po.est); err != nil {
+		return nil, nil, err
+	}
+	end()
+	if err := p.writeRecord(pub, rec, inputs, m, po); err != nil {
+		return nil, nil, err
+	}
+	if err := ctx.Err(); err != nil {
+		return nil, nil, err // before the first rename, or not at all
+	}
+	old, _ := readRecord(filepath.Join(w.out, filepath.FromSlash(p.Output("record"))))
+	if err := pub.publish(oldOutputs(p, old)); err != nil {
+		return nil, nil, err
+	}
+	figures, err := parseFigures(m.qualityFile(p))
+	if err != nil {
+		panic("pipeline: our own quality file cannot be read back: " + err.Error())
+	}
+	return figures, nil, nil
+}
+
+// estimate finds the poses of the pose series, on the raw data.
+func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, error) {
+	po := &posed{digest: s.digest}
+	if p.Settings.Motion == "none" {
+		return po, nil
+	}
+	opt := realign.Options{SliceAxis: p.Schedule.Axis, Workers: w.workers}
+	switch r := p.Settings.Reference; r.Word {
+	case "mean":
+		opt.Reference = realign.Mean
+	case "first":
+		opt.Reference = realign.First
+	case "middle":
+		opt.Reference = realign.Middle
+	case "sbref":
+		d := newDigester()
+		_, ref, err := nifti.ReadSeries(p.Dataset.Path(p.Pose.SBRef), d, 0)
+		if f, isFault := imageFault(p.Pose.SBRef, err); isFault {
+			return nil, &Refused{[]fault.Fault{f}}
+		}
+		if err != nil {
+			return nil, &IOError{Path: p.Pose.SBRef, Step: "reading", Err: err}
+		}
+		po.reference, po.sbref = d, ref.Volume(0)
+		opt.Reference, opt.External = realign.External, po.sbref
+	default:
+		opt.Reference, opt.Index = realign.Index, r.Index
+	}
+	g := p.Grid
+	if p.poseHeader != nil {
+		g.Affine = p.poseHeader.Affine()
+	}
+	est, err := realign.EstimateVolumes(ctx, g, s.data, s.nt, opt)
+	var few *realign.TooFewAligned
+	if errors.As(err, &few) {
+		return nil, &Refused{[]fault.Fault{fault.New("motion-lost", p.Pose.File, "",
+			fmt.Sprintf("%d of %d volumes that could be aligned", few.Aligned, few.Volumes), "at least 2",
+			"look at the images; another --reference, or --motion none, may still give something")}}
+	}
+	if err != nil {
+		return nil, err
+	}
+	po.est = est
+	return po, nil
+}
+
+// standard gives the reference volume, the head mask and its centroid.
+func (w *worker) standard(p *Plan, po *posed, s *loaded) (ref []float32, mask []bool, centre [3]float64) {
+	if po.est != nil {
+		// The reference may be a volume of the series itself, which is about
+		// to be changed in place.
+		return slices.Clone(po.est.Reference), po.est.Mask, po.est.Centre
+	}
+	nv := len(s.data) / s.nt
+	pick := func(t int) []float32 { return append([]float32{}, s.data[t*nv:(t+1)*nv]...) }
+	switch r := p.Settings.Reference; r.Word {
+	case "first":
+		ref = pick(0)
+	case "middle":
+		ref = pick(s.nt / 2)
+	case "":
+		ref = pick(r.Index)
+	default:
+		ref = meanVolume(s.data, nv, s.nt)
+	}
+	mask = realign.HeadMask(p.Grid, ref)
+	return ref, mask, centroid(p.Grid, mask)
+}
+
+// meanVolume averages volumes in their order.
+func meanVolume(data []float32, nv, nt int) []float32 {
+	out := make([]float32, nv)
+	for v := range out {
+		sum := 0.0
+		for t := range nt {
+			sum += float64(data[t*nv+v])
+		}
+		out[v] = float32(sum / float64(nt))
+	}
+	return out
+}
+
+// centroid is the mean world position of the mask's voxels (of the whole field when the mask is empty).
+func centroid(g realign.Grid, mask []bool) [3]float64 {
+	var sum [3]float64
+	n := 0.0
+	i := 0
+	for z := range g.N[2] {
+		for y := range g.N[1] {
+			for x := range g.N[0] {
+				if mask[i] {
+					sum[0] += float64(x)
+					sum[1] += float64(y)
+					sum[2] += float64(z)
+					n++
+				}
+				i++
+			}
+		}
+	}
+	for a := range sum {
+		if n > 0 {
+			sum[a] /= n
+		} else {
+			sum[a] = float64(g.N[a]-1) / 2
+		}
+	}
+	var c [3]float64
+	for a := range c {
+		r := g.Affine[4*a:]
+		c[a] = float64(r[0]*sum[0]) + float64(r[1]*sum[1]) + float64(r[2]*sum[2]) + r[3]
+	}
+	return c
+}
+
+// correctTime moves every slice to the run's instant, in place.
+func (w *worker) correctTime(ctx context.Context, p *Plan, data []float32, nt int) error {
+	if !p.Timing.Temporal {
+		return ctx.Err()
+	}
+	opt := slicetime.Options{Kernel: slicetime.Fourier, Reach: p.Settings.SincReach}
+	if p.Settings.Time == "sinc" {
+		opt.Kernel = slicetime.Sinc
+	}
+	n := p.Grid.N
+	return slicetime.Correct(ctx, data, n[0], n[1], n[2], nt, p.Schedule, p.Timing.Origin, opt, w.workers)
+}
+
+// resample brings every volume to the reference, in place, each volume once. A
+// volume that stands there already is left as it is, bit for bit.
+func (w *worker) resample(ctx context.Context, p *Plan, est *realign.Estimate, data []float32, nt int) error {
+	if est == nil {
+		return ctx.Err()
+	}
+	degree := 5
+	if p.Settings.Space == "cubic" {
+		degree = 3
+	}
+	nv := len(data) / nt
+	rs := make([]*realign.Resampler, max(1, w.workers))
+	return parallel.For(ctx, w.workers, nt, func(worker, t int) error {
+		pose := est.Volumes[t].Pose
+		if pose == realign.Identity {
+			return nil
+		}
+		if rs[worker] == nil {
+			rs[worker] = realign.NewResampler(p.Grid.N, degree)
+		}
+		vol := data[t*nv : (t+1)*nv]
+		rs[worker].Load(vol)
+		rs[worker].Eval(vol, realign.PoseMap(p.Grid, pose))
+		return nil
+	})
+}
+
+// inputFiles describes what the run was computed from, for its record.
+func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
+	var out []provenance.File
+	for _, in := range p.Inputs {
+		switch in.Role {
+		case "series":
+			out = append(out, s.digest.file(in.Role, in.Path))
+		case "pose-series":
+			out = append(out, po.digest.file(in.Role, in.Path))
+		case "reference-series":
+			out = append(out, po.reference.file(in.Role, in.Path))
+		default:
+			out = append(out, provenance.File{Role: in.Role, Path: in.Path, SHA256: in.sha256, Bytes: in.stamp.size})
+		}
+	}
+	return out, nil
+}
+
+// writeData writes every file of the run but its record, under hidden names.
+func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, est *realign.Estimate) error {
+	t := p.Timing
+	nv := len(ref)
+	lo, hi := extent(data)
+	dt := nifti.Float32
+	if p.Settings.Store == "int16" {
+		dt = nifti.Int16
+	}
+	series := p.Header.Derived(nt, false, dt, t.AtOneInstant && p.Settings.Time != "none", t.StartTime)
+	p.correctVolumeTime(series)
+	if dt == nifti.Int16 {
+		series.SclSlope, series.SclInter = nifti.Int16Scaling(lo, hi)
+	}
+	single := func(dt nifti.Datatype) *nifti.Header { return p.Header.Derived(1, true, dt, true, 0) }
+	inside := make([]float32, nv)
+	for i, in := range mask {
+		if in {
+			inside[i] = 1
+		}
+	}
+	image := func(h *nifti.Header, data []float32, nt int) func(io.Writer) error {
+		return func(w io.Writer) error {
+			nw, err := nifti.NewWriter(w, h, true)
+			if err != nil {
+				return err
+			}
+			for n := range nt {
+				if err := ctx.Err(); err != nil {
+					return err
+				}
+				if err := nw.WriteVolume(data[n*nv : (n+1)*nv]); err != nil {
+					return err
+				}
+			}
+			return nw.Close()
+		}
+	}
+	text := func(b []byte) func(io.Writer) error {
+		return func(w io.Writer) error { _, err := w.Write(b); return err }
+	}
+	for _, o := range p.Outputs {
+		var fill func(io.Writer) error
+		switch o.Role {
+		case "steady-series":
+			fill = image(series, data, nt)
+		case "steady-sidecar":
+			fill = text(p.steadySidecar())
+		case "reference":
+			fill = image(single(nifti.Float32), ref, 1)
+		case "reference-sidecar":
+			fill = text(p.referenceSidecar())
+		case "mask":
+			fill = image(single(nifti.Uint8), inside, 1)
+		case "mask-sidecar":
+			fill = text(p.maskSidecar())
+		case "pose-table":
+			fill = text(poseTable(p, m))
+		case "pose-description":
+			fill = text(poseDescription(p, est, centre))
+		case "quality":
+			fill = text(m.qualityFile(p))
+		case "raw-tsnr":
+			fill = image(single(nifti.Float32), m.tsnrRaw, 1)
+		case "steady-tsnr":
+			fill = image(single(nifti.Float32), m.tsnrSteady, 1)
+		case "events":
+			moved, faults := moveEvents(p.Run.Events, p.events, t.StartTime)
+			if len(faults) > 0 {
+				return &Refused{faults}
+			}
+			fill = text(moved)
+		case "record":
+			continue
+		default:
+			panic("pipeline: output " + o.Role + " is declared but never written")
+		}
+		if err := pub.write(o.Role, o.Path, fill); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// extent is the range of the values; a value that is not finite is a mistake of
+// ours, since the reader lets none in.
+func extent(data []float32) (lo, hi float32) {
+	lo, hi = data[0], data[0]
+	for _, v := range data {
+		if d := float64(v); math.IsNaN(d) || math.IsInf(d, 0) {
+			panic("pipeline: a voxel value of the output is not finite")
+		}
+		lo, hi = min(lo, v), max(hi, v)
+	}
+	return lo, hi
+}
+
+// volumeTimeTolerance is the one of the standard for RepetitionTime against pixdim[4] (1 ms).
+const volumeTimeTolerance = 1e-3
+
+// correctVolumeTime puts the repetition time used into the header where the
+// raw header says otherwise (an accepted tr-mismatch, or no time at all), so that the
+// output does not contradict itself. Nothing else of the geometry is touched.
+func (p *Plan) correctVolumeTime(h *nifti.Header) {
+	sec, _ := p.Header.SecondsPerVolume()
+	if p.Timing.TR <= 0 || math.Abs(sec-p.Timing.TR) <= volumeTimeTolerance {
+		return
+	}
+	perSecond := map[int32]float64{16: 1e3, 24: 1e6}[p.Header.XYZTUnits&0x38]
+	if perSecond == 0 {
+		perSecond = 1
+	}
+	h.Pixdim[4] = p.Timing.TR * perSecond
+}
+
+// oldOutputs names the files of an earlier record of this very run that no
+// longer belong to it, as far as they lie beside it.
+func oldOutputs(p *Plan, old *provenance.Record) []string {
+	if old == nil {
+		return nil
+	}
+	var out []string
+	for _, f := range old.Outputs {
+		if isOwn(p, f.Path) {
+			out = append(out, f.Path)
+		}
+	}
+	return out
+}
+
+func readRecord(name string) (*provenance.Record, error) {
+	data, err := os.ReadFile(name)
+	if err != nil {
+		return nil, err
+	}
+	return provenance.Parse(data)
+}
+
+func rawJSON(v any) json.RawMessage {
+	b, err := json.Marshal(v)
+	if err != nil {
+		panic("pipeline: a part of the record cannot be written as JSON: " + err.Error())
+	}
+	return b
+}

@@ -1,0 +1,105 @@
+package pipeline
+
+import (
+	"encoding/json"
+	"slices"
+
+	"evenkeel/dataset"
+)
+
+// rawLink is the name by which BIDS URIs in OUT refer to the raw dataset.
+const rawLink = "raw"
+
+// sources gives the BIDS URIs of the images the series is computed from.
+func (p *Plan) sources() []string {
+	var out []string
+	for _, in := range p.Inputs {
+		if in.Role != "sidecar" && in.Role != "events" {
+			out = append(out, dataset.URI(rawLink, in.Path))
+		}
+	}
+	return out
+}
+
+// timingFields are written by us from the plan: as they stand in the raw sidecar
+// they may not be true of the output.
+var timingFields = []string{"RepetitionTime", "VolumeTiming", "SliceTiming", "SliceEncodingDirection", "StartTime", "SlicesAtOneInstant", "DelayTime", "FrameAcquisitionDuration"}
+
+// steadySidecar describes the series.
+func (p *Plan) steadySidecar() []byte {
+	t, a := p.Timing, p.Acq
+	var o object
+	o.add("Description", "BOLD series: "+p.What())
+	o.add("Sources", p.sources())
+	o.add("SkullStripped", false)
+	if p.Settings.Motion == "none" {
+		// Nothing was moved: the series stands on its own raw grid.
+		o.add("SpatialReference", "orig")
+	} else {
+		o.add("SpatialReference", dataset.URI("", p.Output("reference")))
+	}
+	if t.Onsets != nil && t.TR == 0 {
+		o.add("VolumeTiming", nums(t.Onsets))
+	} else if t.TR > 0 {
+		o.add("RepetitionTime", num(t.TR))
+	}
+	o.add("StartTime", num(t.StartTime))
+	o.add("SlicesAtOneInstant", t.AtOneInstant)
+	if a.DelayTime > 0 && t.TR > 0 {
+		o.add("DelayTime", num(a.DelayTime))
+	}
+	if p.Settings.Skip > 0 {
+		o.add("NumberOfVolumesDiscardedByUser", p.Settings.Skip)
+	}
+	if len(a.SliceTimes) > 0 && !t.AtOneInstant {
+		// By increasing slice index, whatever direction the raw sidecar gave.
+		o.add("SliceTiming", nums(a.SliceTimes))
+		o.add("SliceEncodingDirection", string("ijk"[a.SliceAxis]))
+	}
+	if a.TaskName != "" {
+		o.add("TaskName", a.TaskName)
+	}
+	for _, f := range a.Carried {
+		taken := slices.Contains(timingFields, f.Key) ||
+			slices.ContainsFunc(o, func(m member) bool { return m.key == f.Key })
+		if !taken {
+			o.add(f.Key, json.RawMessage(f.Raw))
+		}
+	}
+	return o.file()
+}
+
+func (p *Plan) referenceSidecar() []byte {
+	var o object
+	what := map[string]string{
+		"mean":   "Average of the aligned volumes, standing at the pose of the first of them",
+		"first":  "The first volume kept",
+		"middle": "The middle volume of those kept",
+		"sbref":  "The run's single-band reference",
+		"":       "The volume chosen among those kept",
+	}[p.Settings.Reference.Word]
+	if p.Settings.Motion == "none" && p.Settings.Reference.Word == "mean" {
+		what = "Average of all volumes kept, as they stand"
+	}
+	if p.Pose.File != p.Run.File {
+		what += ", from the shortest echo"
+	}
+	o.add("Description", what+"; raw intensities, not moved in time.")
+	uris := []string{dataset.URI(rawLink, p.Pose.File)}
+	if p.Settings.Reference.Word == "sbref" {
+		uris = []string{dataset.URI(rawLink, p.Pose.SBRef)}
+	}
+	o.add("Sources", uris)
+	o.add("SkullStripped", false)
+	o.add("SpatialReference", "orig")
+	return o.file()
+}
+
+func (p *Plan) maskSidecar() []byte {
+	var o object
+	o.add("Description", "Voxels of the reference that belong to the head: 1 inside, 0 outside. Used for estimation and for the figures.")
+	o.add("Type", "Brain")
+	o.add("Sources", []string{dataset.URI("", p.Output("reference"))})
+	o.add("SpatialReference", dataset.URI("", p.Output("reference")))
+	return o.file()
+}

@@ -1,0 +1,250 @@
+package pipeline
+
+import (
+	"context"
+	"fmt"
+	"os"
+	"path/filepath"
+	"runtime/debug"
+	"slices"
+	"sync"
+
+	"golang.org/x/sync/errgroup"
+	"golang.org/x/sync/semaphore"
+
+	"evenkeel/dataset"
+)
+
+// A Job says how the work is spread; none of it changes a byte of the output.
+type Job struct {
+	Out    string
+	Jobs   int   // units at once; 0: as many as there are cores and units
+	Cores  int   // 0: all
+	Memory int64 // bytes that runs may hold together; 0: [DefaultMemory]
+	Redo   bool
+	Limits Limits
+	// Observe, if not nil, is told what happens, one call at a time, from
+	// any goroutine.
+	Observe func(Event)
+}
+
+// EventKind says what an [Event] is about.
+type EventKind string
+
+const (
+	RunStarted EventKind = "started"
+	RunStage   EventKind = "stage"
+	RunWaiting EventKind = "waiting" // another process holds the run
+	RunEnded   EventKind = "ended"
+)
+
+// An Event is something that happened to a run.
+type Event struct {
+	Kind    EventKind
+	Plan    *Plan
+	Stage   string   // with RunStage
+	Outcome *Outcome // with RunEnded
+}
+
+// Steady processes the plans that are not refused and returns one outcome a plan,
+// in the order of the plans. An error means that nothing could be started, or
+// that the files common to all runs could not be written; outcomes are returned
+// beside it as far as there are any.
+//
+// When ctx is cancelled, runs under way stop at the next volume, leave no file
+// behind, and are reported as interrupted.
+func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([]Outcome, error) {
+	if err := CheckOut(ds.Root, job.Out); err != nil {
+		return nil, err
+	}
+	outcomes := make([]Outcome, len(plans))
+	observe := serial(job.Observe)
+	end := func(i int, o Outcome) {
+		outcomes[i] = o
+		observe(Event{Kind: RunEnded, Plan: o.Plan, Outcome: &outcomes[i]})
+	}
+	var units []unit
+	slot := map[*Plan]int{}
+	at := map[string]int{}
+	for i, p := range plans {
+		slot[p] = i
+		if !p.Runs() {
+			o := Outcome{Plan: p, State: RefusedRun, Faults: p.Faults}
+			if p.Err != nil && len(p.Refusals()) == 0 {
+				o.State, o.Err = Failed, p.Err
+			}
+			end(i, o)
+			continue
+		}
+		j, ok := at[p.unit()]
+		if !ok {
+			j = len(units)
+			at[p.unit()] = j
+			units = append(units, unit{})
+		}
+		units[j].plans = append(units[j].plans, p)
+	}
+	if ds.Derivative {
+		return outcomes, nil // no derivative of a derivative: nothing is written at all
+	}
+	if err := os.MkdirAll(job.Out, 0o755); err != nil {
+		return outcomes[:0], creating(job.Out, err)
+	}
+	if err := writeDescriptions(ds, job.Out); err != nil {
+		return outcomes[:0], err
+	}
+
+	cores := job.Cores
+	if cores <= 0 {
+		cores = Cores()
+	}
+	jobs := job.Jobs
+	if jobs <= 0 {
+		jobs = min(cores, len(units))
+	}
+	jobs = max(1, jobs)
+	// A whole cohort keeps every core busy with runs of its own; few runs
+	// share the cores among themselves.
+	inner := max(1, cores/min(jobs, max(1, len(units))))
+	budget := job.Memory
+	if budget <= 0 {
+		budget = DefaultMemory()
+	}
+	defer debug.SetMemoryLimit(debug.SetMemoryLimit(max(budget, memoryFloor)))
+
+	admit := newAdmission(budget)
+	var group errgroup.Group
+	group.SetLimit(jobs)
+	for _, u := range units {
+		workers, need := u.fit(inner, budget)
+		// Admission is in the order of the plans: a large run is not
+		// overtaken for ever by small ones.
+		if err := admit.acquire(ctx, need); err != nil {
+			for _, p := range u.plans {
+				end(slot[p], Outcome{Plan: p, State: Interrupted, Faults: p.Faults})
+			}
+			continue
+		}
+		group.Go(func() error {
+			defer admit.release(need)
+			w := &worker{out: job.Out, workers: workers, stage: func(p *Plan, s string) {
+				observe(Event{Kind: RunStage, Plan: p, Stage: s})
+			}}
+			for i, o := range w.guarded(ctx, u, job, observe) {
+				if o.Figures != nil {
+					o.Outside = job.Limits.Outside(o.Figures)
+				}
+				end(slot[u.plans[i]], o)
+			}
+			return nil // a run that failed stops no other
+		})
+	}
+	group.Wait()
+
+	// An interruption must not lose what has been done: the table is small.
+	if err := writeRuns(context.WithoutCancel(ctx), job.Out, outcomes); err != nil {
+		return outcomes, err
+	}
+	return outcomes, nil
+}
+
+// memoryFloor keeps a tiny --memory from making the collector run all the time:
+// the program itself needs about this much.
+const memoryFloor = 256 << 20
+
+// fit returns how many goroutines the unit may use inside a run so that it stays
+// within the budget, and what it then needs.
+func (u unit) fit(workers int, budget int64) (int, int64) {
+	need := func(workers int) int64 {
+		most := int64(0)
+		for _, p := range u.plans {
+			most = max(most, p.Memory(workers))
+		}
+		return most
+	}
+	for workers > 1 && need(workers) > budget {
+		workers--
+	}
+	return workers, min(need(workers), budget)
+}
+
+// An admission hands out memory, first come first served.
+type admission struct{ sem *semaphore.Weighted }
+
+func newAdmission(budget int64) *admission { return &admission{semaphore.NewWeighted(budget)} }
+
+func (a *admission) acquire(ctx context.Context, n int64) error {
+	if err := ctx.Err(); err != nil {
+		return err
+	}
+	return a.sem.Acquire(ctx, n)
+}
+
+func (a *admission) release(n int64) { a.sem.Release(n) }
+
+// serial makes an observer that is called by one goroutine at a time.
+func serial(observe func(Event)) func(Event) {
+	if observe == nil {
+		return func(Event) {}
+	}
+	var mu sync.Mutex
+	return func(e Event) {
+		mu.Lock()
+		defer mu.Unlock()
+		observe(e)
+	}
+}
+
+// guarded does a unit under its lock. A panic becomes the outcome of every run of
+// the unit: it must not reach the goroutine's end, where it would take all
+// other runs with it.
+func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Event)) (out []Outcome) {
+	defer func() {
+		if v := recover(); v != nil {
+			out = u.all(func(p *Plan) Outcome {
+				return Outcome{Plan: p, State: Failed, Faults: p.Faults, Err: asBug(p.Run.Stem, v, debug.Stack())}
+			})
+		}
+	}()
+	failed := func(err error) []Outcome {
+		return u.all(func(p *Plan) Outcome { return ended(p, nil, nil, err) })
+	}
+	first := u.plans[0]
+	dir := filepath.Join(job.Out, filepath.FromSlash(first.Run.Dir))
+	if err := os.MkdirAll(dir, 0o755); err != nil {
+		return failed(creating(first.Run.Dir, err))
+	}
+	lock, err := lockFile(ctx, filepath.Join(dir, fmt.Sprintf(".%s.lock", first.Run.Group)), func() {
+		observe(Event{Kind: RunWaiting, Plan: first})
+	})
+	if err != nil {
+		return failed(err)
+	}
+	defer lock.release()
+
+	out = make([]Outcome, len(u.plans))
+	var todo unit
+	for i, p := range u.plans {
+		sweep(job.Out, p.Outputs)
+		if !job.Redo {
+			if f := upToDate(job.Out, p); f != nil {
+				out[i] = Outcome{Plan: p, State: UpToDate, Faults: p.Faults, Figures: f}
+				continue
+			}
+		}
+		observe(Event{Kind: RunStarted, Plan: p})
+		todo.plans = append(todo.plans, p)
+	}
+	for _, o := range w.run(ctx, todo) {
+		out[slices.Index(u.plans, o.Plan)] = o
+	}
+	return out
+}
+
+func (u unit) all(outcome func(*Plan) Outcome) []Outcome {
+	out := make([]Outcome, len(u.plans))
+	for i, p := range u.plans {
+		out[i] = outcome(p)
+	}
+	return out
+}
