@@ -84,6 +84,13 @@ func (s *Scan) VolumePose(n int) [16]float64 {
 	return s.Motion.at(float64(float64(n)*s.TR) + s.Middle())
 }
 
+// Moved is the true map (world mm) from a point of the head where it stood at
+// Middle of one volume to where it stood at Middle of another: with from the
+// reference, the matrix of the pose table.
+func (s *Scan) Moved(from, to int) [16]float64 {
+	return Mul(s.VolumePose(to), Inverse(s.VolumePose(from)))
+}
+
 // Value is the signal, without noise, of voxel (i, j, k) in volume n.
 func (s *Scan) Value(i, j, k, n int) float64 {
 	v := [3]int{i, j, k}
