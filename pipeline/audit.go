@@ -4,10 +4,6 @@ import (
 	"errors"
 	"io/fs"
 	"os"
-	"path/filepath"
-	"strings"
-
-	"github.com/tidwall/gjson"
 
 	"evenkeel/dataset"
 	"evenkeel/provenance"
@@ -49,20 +45,10 @@ func isFolder(name string) error {
 	return nil
 }
 
-// linkedRaw finds the raw dataset through DatasetLinks: a value without a scheme is
-// relative to the dataset it stands in.
+// linkedRaw finds the raw dataset through DatasetLinks, "" if it is not there.
 func linkedRaw(out string) string {
-	data, err := os.ReadFile(filepath.Join(out, "dataset_description.json"))
-	if err != nil || !gjson.ValidBytes(data) {
-		return ""
-	}
-	link := gjson.GetBytes(data, "DatasetLinks."+rawLink).String()
-	if link == "" || strings.Contains(link, ":") {
-		return ""
-	}
-	// Relative to where OUT really is: it may have been reached through a link.
-	raw := filepath.Join(realPath(out), filepath.FromSlash(link))
-	if isFolder(raw) != nil {
+	raw, ok := dataset.FindRaw(out)
+	if !ok || isFolder(raw) != nil {
 		return ""
 	}
 	return raw

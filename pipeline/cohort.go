@@ -69,30 +69,11 @@ func realPath(name string) string {
 	}
 }
 
-// relativeLink says where the raw dataset is, seen from OUT; "" when the way leads
-// through the root of the file system and so would be an absolute path in disguise.
-func relativeLink(root, out string) string {
-	r, o := realPath(root), realPath(out)
-	rel, err := filepath.Rel(o, r)
-	if err != nil {
-		return ""
-	}
-	common := o
-	for s := rel; strings.HasPrefix(s, ".."); s = strings.TrimPrefix(strings.TrimPrefix(s, ".."), string(filepath.Separator)) {
-		common = filepath.Dir(common)
-	}
-	if common == filepath.Dir(common) {
-		return ""
-	}
-	return filepath.ToSlash(rel)
-}
-
 // writeDescriptions writes dataset_description.json, README and .bidsignore.
 func writeDescriptions(ds *dataset.Dataset, out string) error {
 	d := dataset.Derivative{
-		Name:       "Steady series of " + cmp.Or(ds.Name, "a dataset without a name"),
-		SourceName: ds.Name, SourceVersion: ds.BIDSVersion, Version: Version,
-		RawLink: relativeLink(ds.Root, out),
+		SourceName: ds.Name, SourceDOI: ds.DOI, Version: Version,
+		RawLink: dataset.RawLinkFor(out, ds.Root),
 	}
 	for _, f := range []struct {
 		name string

@@ -1,13 +1,13 @@
 package pipeline
 
 import (
-	"bytes"
+	"errors"
 	"fmt"
 	"math"
-	"slices"
 	"strconv"
 	"strings"
 
+	"evenkeel/dataset"
 	"evenkeel/fault"
 )
 
@@ -24,35 +24,30 @@ func moveEvents(file string, data []byte, startTime float64) ([]byte, []fault.Fa
 		return []fault.Fault{fault.New("sidecar-syntax", file, "onset", fmt.Sprintf("%s (line %d)", found, line), expected,
 			"mend the table, or leave --events out")}
 	}
-	text := strings.TrimPrefix(string(data), "\ufeff")
-	lines := strings.Split(strings.ReplaceAll(text, "\r\n", "\n"), "\n")
-	head := strings.Split(lines[0], "\t")
-	col := slices.Index(head, "onset")
+	table, err := dataset.ParseTable(data)
+	var flaw *dataset.TableError
+	if errors.As(err, &flaw) {
+		return nil, bad(flaw.Line, flaw.Reason, "a table of events")
+	} else if err != nil {
+		return nil, bad(1, err.Error(), "a table of events")
+	}
+	col := table.Column("onset")
 	if col < 0 {
 		return nil, bad(1, "no such column", "a column called onset, as every events table has")
 	}
-	var out bytes.Buffer
-	out.WriteString(lines[0] + "\n")
-	for i, line := range lines[1:] {
-		if line == "" && i == len(lines)-2 {
-			break
+	for i, cells := range table.Rows {
+		if cells[col] == dataset.Missing {
+			continue
 		}
-		cells := strings.Split(line, "\t")
-		if len(cells) != len(head) {
-			return nil, bad(i+2, fmt.Sprintf("%d cells", len(cells)), fmt.Sprintf("%d, as the first line has", len(head)))
+		t, err := strconv.ParseFloat(strings.TrimSpace(cells[col]), 64)
+		if err != nil || math.IsNaN(t) || math.IsInf(t, 0) {
+			// The value itself is not repeated: a shifted cell could hold
+			// anything, a name included.
+			return nil, bad(i+2, "no number", "seconds, or n/a")
 		}
-		if cells[col] != "n/a" {
-			t, err := strconv.ParseFloat(strings.TrimSpace(cells[col]), 64)
-			if err != nil || math.IsNaN(t) || math.IsInf(t, 0) {
-				// The value itself is not repeated: a shifted cell could
-				// hold anything, a name included.
-				return nil, bad(i+2, "no number", "seconds, or n/a")
-			}
-			cells[col] = decimal(t-startTime, 6)
-		}
-		out.WriteString(strings.Join(cells, "\t") + "\n")
+		cells[col] = decimal(t-startTime, 6)
 	}
-	return out.Bytes(), nil
+	return table.Bytes(), nil
 }
 
 // decimal writes v with at most that many digits after the point, without

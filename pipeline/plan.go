@@ -123,9 +123,16 @@ func (p *Plan) Memory(workers int) int64 {
 	}
 	nx, ny, nz, _ := p.Header.Size()
 	nv := int64(nx) * int64(ny) * int64(nz)
-	// A worker of the temporal interpolation holds one row of series at a
-	// time, which is below its share of the spatial step.
-	return nv*(4*int64(p.Volumes)+fixedPerVoxel+workerPerVoxel*int64(max(1, workers))) + runOverhead
+	// Time and space are done one after the other: the larger counts.
+	work := nv * workerPerVoxel * int64(max(1, workers))
+	if p.Timing.Temporal {
+		kernel := slicetime.Options{Kernel: slicetime.Fourier, Reach: p.Settings.SincReach}
+		if p.Settings.Time == "sinc" {
+			kernel.Kernel = slicetime.Sinc
+		}
+		work = max(work, slicetime.WorkBytes(nx, ny, nz, p.Volumes, p.Schedule.Axis, workers, kernel))
+	}
+	return nv*(4*int64(p.Volumes)+fixedPerVoxel) + work + runOverhead
 }
 
 // Request says which runs are wanted and how they are to be processed.
@@ -375,7 +382,11 @@ func settle(ds *dataset.Dataset, s *source, echoes []*source, req Request) (*Pla
 				"at most "+Bytes(req.Memory), "give --memory a larger size, or run it on a machine with more memory"))
 		}
 	}
-	if set.Events && p.Run.Events != "" {
+	switch {
+	case !set.Events || p.Header == nil:
+	case p.Run.EventsFault != nil:
+		found = append(found, *p.Run.EventsFault)
+	case p.Run.Events != "":
 		found = append(found, p.readEvents()...)
 	}
 	p.Faults = set.weigh(found)
@@ -531,6 +542,9 @@ func (p *Plan) findReference() []fault.Fault {
 	}
 	const remedy = "give another --reference, or leave this run out"
 	ref := p.Pose.SBRef
+	if f := p.Pose.SBRefFault; f != nil {
+		return []fault.Fault{*f}
+	}
 	if ref == "" {
 		return []fault.Fault{fault.New("reference-missing", p.Pose.File, "", "no sbref of this run",
 			"an image named as the run is, with the suffix sbref", remedy)}

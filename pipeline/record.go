@@ -1,7 +1,6 @@
 package pipeline
 
 import (
-	"maps"
 	"path"
 	"runtime"
 	"runtime/debug"
@@ -92,8 +91,8 @@ func (p *Plan) stages(m *measures, po *posed) []provenance.Stage {
 	add("read", object{{"skip", p.Settings.Skip}}, object{{"size", []int{n[0], n[1], n[2], p.Volumes}}})
 	if po.est != nil {
 		par := object{{"motion", p.Settings.Motion}, {"reference", p.Settings.Reference.String()}, {"series", p.Pose.File}}
-		for _, k := range slices.Sorted(maps.Keys(po.est.Parameters)) {
-			par.add(k, num(po.est.Parameters[k]))
+		for _, c := range po.est.Parameters {
+			par.add(c.Name, num(c.Value))
 		}
 		vols := make([]object, len(po.est.Volumes))
 		for i, v := range po.est.Volumes {
@@ -102,7 +101,7 @@ func (p *Plan) stages(m *measures, po *posed) []provenance.Stage {
 				vols[i].add("reason", v.Reason)
 			}
 		}
-		ref := object{{"reference_index", po.est.ReferenceIndex}, {"volumes", vols}}
+		ref := object{{"reference_index", po.est.ReferenceIndex}, {"passes", po.est.Passes}, {"volumes", vols}}
 		add("estimate", par, ref)
 	}
 	if t.Temporal {

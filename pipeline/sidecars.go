@@ -7,15 +7,12 @@ import (
 	"evenkeel/dataset"
 )
 
-// rawLink is the name by which BIDS URIs in OUT refer to the raw dataset.
-const rawLink = "raw"
-
 // sources gives the BIDS URIs of the images the series is computed from.
 func (p *Plan) sources() []string {
 	var out []string
 	for _, in := range p.Inputs {
 		if in.Role != "sidecar" && in.Role != "events" {
-			out = append(out, dataset.URI(rawLink, in.Path))
+			out = append(out, dataset.URI(dataset.RawName, in.Path))
 		}
 	}
 	return out
@@ -85,9 +82,9 @@ func (p *Plan) referenceSidecar() []byte {
 		what += ", from the shortest echo"
 	}
 	o.add("Description", what+"; raw intensities, not moved in time.")
-	uris := []string{dataset.URI(rawLink, p.Pose.File)}
+	uris := []string{dataset.URI(dataset.RawName, p.Pose.File)}
 	if p.Settings.Reference.Word == "sbref" {
-		uris = []string{dataset.URI(rawLink, p.Pose.SBRef)}
+		uris = []string{dataset.URI(dataset.RawName, p.Pose.SBRef)}
 	}
 	o.add("Sources", uris)
 	o.add("SkullStripped", false)

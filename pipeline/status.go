@@ -221,8 +221,10 @@ func codeOf(err error) int {
 var precedence = []int{ExitBug, ExitIO, ExitNoCreate, ExitInterrupt, ExitData, ExitSome, ExitOutside}
 
 // ExitCode gives the exit status of a command that ended with err (nil if it ran
-// its course) and these outcomes.
-func ExitCode(err error, outcomes []Outcome) int {
+// its course) and these outcomes. hidden says that part of the dataset could not be
+// looked into, so that runs may have gone unseen: then the whole selection is
+// not done, whatever became of the runs that were seen.
+func ExitCode(err error, outcomes []Outcome, hidden bool) int {
 	holds := map[int]bool{}
 	switch c := codeOf(err); c {
 	case ExitDone:
@@ -232,6 +234,9 @@ func ExitCode(err error, outcomes []Outcome) int {
 		holds[c] = true
 	}
 	refused, bad := 0, 0
+	if hidden {
+		holds[ExitSome] = true
+	}
 	for _, o := range outcomes {
 		switch o.State {
 		case RefusedRun:

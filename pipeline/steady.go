@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"os"
+	"path"
 	"path/filepath"
 	"runtime/debug"
 	"slices"
@@ -214,7 +215,7 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 	if err := os.MkdirAll(dir, 0o755); err != nil {
 		return failed(creating(first.Run.Dir, err))
 	}
-	lock, err := lockFile(ctx, filepath.Join(dir, fmt.Sprintf(".%s.lock", first.Run.Group)), func() {
+	lock, err := lockFile(ctx, filepath.Join(dir, fmt.Sprintf(".%s.lock", path.Base(first.Run.Group))), func() {
 		observe(Event{Kind: RunWaiting, Plan: first})
 	})
 	if err != nil {

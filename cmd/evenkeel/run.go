@@ -1,0 +1,216 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+	"os/signal"
+	"runtime/debug"
+	"strings"
+	"syscall"
+
+	"github.com/urfave/cli/v2"
+
+	"evenkeel/pipeline"
+)
+
+// A session is one invocation of the program.
+type session struct {
+	stdin          io.Reader
+	stdout, stderr io.Writer
+	log            *logger
+
+	code int // what the command's outcomes come to, when it returns no error
+}
+
+// exit is returned by a command that ran its course with a code of its own; it has
+// no ExitCode method, on which the option library would leave the process.
+type exit struct{ code int }
+
+func (e *exit) Error() string { return fmt.Sprintf("exit status %d", e.code) }
+
+// Run executes the command line args (the program's name first) and returns the
+// exit status. It never panics: a mistake of ours is reported in a plain sentence.
+func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
+	s := &session{stdin: stdin, stdout: stdout, stderr: stderr, log: &logger{w: stderr}}
+	defer func() {
+		if v := recover(); v != nil {
+			code = s.fail(&pipeline.BugError{Value: v, Stack: debug.Stack()})
+		}
+	}()
+	app := s.app()
+	line, err := normalise(app, args)
+	s.log.json, s.log.quiet = line.json, line.quiet
+	if err != nil {
+		return s.fail(err)
+	}
+	ctx, stop := s.interruptible()
+	defer stop()
+	err = app.RunContext(ctx, line.args)
+	s.log.stopProgress()
+	var own *exit
+	if errors.As(err, &own) {
+		return s.last(own.code)
+	}
+	if err != nil {
+		return s.fail(err)
+	}
+	return s.last(pipeline.ExitDone)
+}
+
+// fail reports an error and returns its code.
+func (s *session) fail(err error) int {
+	code := pipeline.ExitCode(err, nil, false)
+	var (
+		bug   *pipeline.BugError
+		usage *pipeline.UsageError
+	)
+	switch {
+	case errors.As(err, &usage):
+		s.log.error("usage", err.Error(), nil)
+		s.log.hint("see evenkeel help")
+	case errors.As(err, &bug):
+		s.log.bug(bug)
+	case code == pipeline.ExitInterrupt:
+		s.log.error("interrupted", "interrupted; run the same command again to go on", nil)
+	default:
+		s.log.error("failed", err.Error(), nil)
+	}
+	return s.last(code)
+}
+
+// last is the last word of the JSON log.
+func (s *session) last(code int) int {
+	s.log.exit(code)
+	return code
+}
+
+// interruptible returns a context that the first SIGINT or SIGTERM ends. Later
+// ones change nothing: schedulers send several, and a clean end is under way.
+func (s *session) interruptible() (context.Context, func()) {
+	ctx, cancel := context.WithCancel(context.Background())
+	signals := make(chan os.Signal, 8)
+	signal.Notify(signals, os.Interrupt, syscall.SIGTERM)
+	done := make(chan struct{})
+	go func() {
+		told := false
+		for {
+			select {
+			case <-done:
+				return
+			case sig := <-signals:
+				if !told {
+					told = true
+					s.log.warn("interrupted", fmt.Sprintf("%v: stopping after the step under way, no partial file is left", sig), nil)
+					cancel()
+				}
+			}
+		}
+	}()
+	return ctx, func() {
+		signal.Stop(signals)
+		close(done)
+		cancel()
+	}
+}
+
+const research = "FOR RESEARCH ONLY. Not a medical device; not for diagnosis or treatment. Images of\na head can identify a person: treat outputs as you treat the raw data."
+
+func (s *session) app() *cli.App {
+	app := &cli.App{
+		Name:      "evenkeel",
+		Usage:     "raw EPI BOLD runs in, series at one instant and one head position out",
+		UsageText: "evenkeel [global options] COMMAND [options] ARGUMENTS",
+		Description: "Turns the raw BOLD runs of a BIDS dataset into series in which every voxel of a\n" +
+			"volume refers to one instant and one head position, with the poses, the figures\n" +
+			"and the record of how each was made. Options may stand before and after arguments.\n\n" +
+			research + "\n\nEXAMPLE:\n  evenkeel survey voyage && evenkeel steady voyage voyage-steady\n\n" + exitHelp(),
+		Writer: s.stdout, ErrWriter: s.stderr, Reader: s.stdin,
+		HideVersion: true, HideHelpCommand: false,
+		DisableSliceFlagSeparator: true,
+		// Codes are decided in one place, after deferred functions have run.
+		ExitErrHandler: func(*cli.Context, error) {},
+		OnUsageError: func(_ *cli.Context, err error, _ bool) error {
+			return &pipeline.UsageError{Message: err.Error()}
+		},
+		Flags: globalFlags(),
+		Action: func(c *cli.Context) error {
+			return &pipeline.UsageError{Message: "no command given; one of " + strings.Join(commandNames(c.App), ", ")}
+		},
+		Commands: []*cli.Command{
+			s.surveyCommand(), s.steadyCommand(), s.auditCommand(), s.reportCommand(), s.clusterCommand(), s.demoCommand(), s.versionCommand(),
+		},
+	}
+	for _, c := range app.Commands {
+		c.Flags = append(c.Flags, globalFlags()...)
+		c.OnUsageError = app.OnUsageError
+		c.UseShortOptionHandling = false
+		c.HideHelpCommand = true
+	}
+	return app
+}
+
+func commandNames(app *cli.App) []string {
+	var out []string
+	for _, c := range app.Commands {
+		if c.Name != "help" {
+			out = append(out, c.Name)
+		}
+	}
+	return out
+}
+
+// globalFlags are accepted before and after the command.
+func globalFlags() []cli.Flag {
+	return []cli.Flag{
+		&cli.StringFlag{Name: "log", Usage: "log on standard error as `text|json`, JSON being one object a line", Value: "text"},
+		&cli.BoolFlag{Name: "quiet", Usage: "say nothing but results and errors"},
+	}
+}
+
+// exitHelp lists exit codes, those given or all, for help.
+func exitHelp(codes ...int) string {
+	var b strings.Builder
+	b.WriteString("EXIT CODES:")
+	for _, e := range pipeline.ExitCodes {
+		wanted := len(codes) == 0
+		for _, c := range codes {
+			wanted = wanted || c == e.Code
+		}
+		if wanted {
+			fmt.Fprintf(&b, "\n  %2d  %s", e.Code, e.Meaning)
+		}
+	}
+	return b.String()
+}
+
+// describe joins the parts of a command's help.
+func describe(text, example string, codes ...int) string {
+	return text + "\n\nEXAMPLE:\n  " + example + "\n\n" + exitHelp(codes...)
+}
+
+// arguments takes a fixed number of arguments, named for the message.
+func arguments(c *cli.Context, names ...string) ([]string, error) {
+	got := c.Args().Slice()
+	least := 0
+	for _, n := range names {
+		if !strings.HasPrefix(n, "[") {
+			least++
+		}
+	}
+	line := "evenkeel " + c.Command.Name + " " + strings.Join(names, " ")
+	if len(got) < least {
+		return nil, &pipeline.UsageError{Where: c.Command.Name, Message: fmt.Sprintf("%s is missing; give %s", names[len(got)], line)}
+	}
+	if len(got) > len(names) {
+		return nil, &pipeline.UsageError{Where: c.Command.Name, Message: fmt.Sprintf("%q is one argument too many; give %s", got[len(names)], line)}
+	}
+	for i, g := range got {
+		if g == "" {
+			return nil, &pipeline.UsageError{Where: c.Command.Name, Message: names[i] + " is empty; give " + line}
+		}
+	}
+	return got, nil
+}

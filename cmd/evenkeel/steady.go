@@ -1,0 +1,199 @@
+package main
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"io"
+	"math"
+	"slices"
+	"strconv"
+	"strings"
+
+	"github.com/urfave/cli/v2"
+
+	"evenkeel/fault"
+	"evenkeel/pipeline"
+)
+
+func (s *session) steadyCommand() *cli.Command {
+	return &cli.Command{
+		Name:      "steady",
+		Usage:     "estimate motion, correct slice timing, resample once, write the derivative dataset",
+		ArgsUsage: "DATASET OUT",
+		Description: describe("For every selected run: estimates motion on the raw series, moves every slice to one\n"+
+			"instant, resamples each volume once, and writes series, poses, figures and record\n"+
+			"into OUT. Runs that are complete and up to date are skipped, so the same command\n"+
+			"again goes on where it was interrupted. Results do not depend on --jobs, --memory\n"+
+			"or the machine.", "evenkeel steady voyage voyage-steady --task watch --limit-mean-fd 0.3",
+			pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput,
+			pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt),
+		Flags: slices.Concat(selectionFlags(), settingFlags(), limitFlags(), []cli.Flag{
+			&cli.StringFlag{Name: "jobs", Usage: "`N` runs at once", DefaultText: "chosen from cores and runs"},
+			memoryFlag(),
+			&cli.BoolFlag{Name: "redo", Usage: "recompute runs whose record is up to date"},
+			&cli.BoolFlag{Name: "plan", Usage: "print what would be done, write nothing"},
+			&cli.BoolFlag{Name: "no-report", Usage: "leave report.html to a later report (this version writes none yet)"},
+		}),
+		Action: func(c *cli.Context) error {
+			args, err := arguments(c, "DATASET", "OUT")
+			if err != nil {
+				return err
+			}
+			return s.steady(c, args[0], args[1])
+		},
+	}
+}
+
+func (s *session) steady(c *cli.Context, root, out string) error {
+	req, err := request(c)
+	if err != nil {
+		return err
+	}
+	job := pipeline.Job{Out: out, Memory: req.Memory, Redo: c.Bool("redo"), Observe: s.observe}
+	if c.IsSet("jobs") {
+		if job.Jobs, err = count(c, "jobs", 1); err != nil {
+			return err
+		}
+	}
+	if job.Limits, err = limits(c); err != nil {
+		return err
+	}
+	found, err := s.survey(c, root, req)
+	if err != nil {
+		return err
+	}
+	if err := pipeline.CheckOut(root, out); err != nil {
+		return err
+	}
+	if c.Bool("plan") {
+		if err := found.writeText(s.stdout); err != nil {
+			return &pipeline.IOError{Path: "standard output", Err: err}
+		}
+		return &exit{found.code()}
+	}
+	for _, f := range found.leftOut {
+		s.log.fault("", f)
+	}
+	runs := 0
+	for _, p := range found.plans {
+		if p.Runs() {
+			runs++
+			for _, f := range p.Faults {
+				s.log.fault(p.Run.Stem, f) // warnings; those that refuse come with the run's end
+			}
+		}
+	}
+	s.log.startProgress(runs * len(pipeline.Stages))
+	outcomes, err := pipeline.Steady(c.Context, found.ds, found.plans, job)
+	s.log.stopProgress()
+	if werr := writeOutcomes(s.stdout, outcomes); werr != nil && err == nil {
+		err = &pipeline.IOError{Path: "standard output", Err: werr}
+	}
+	if err != nil && !errors.Is(err, context.Canceled) {
+		s.log.error("failed", err.Error(), nil)
+	}
+	s.log.info("summary", summary(outcomes), nil)
+	return &exit{pipeline.ExitCode(err, outcomes, found.hidden())}
+}
+
+// observe turns what happens to runs into log lines.
+func (s *session) observe(e pipeline.Event) {
+	run := e.Plan.Run.Stem
+	switch e.Kind {
+	case pipeline.RunWaiting:
+		s.log.info("waiting", run+": another process holds this run, waiting for it", fields{"run": run})
+	case pipeline.RunStarted:
+		s.log.info("started", run+": "+e.Plan.What(), fields{"run": run, "file": e.Plan.Run.File})
+	case pipeline.RunStage:
+		s.log.step(1)
+		if s.log.json {
+			s.log.info("stage", e.Stage, fields{"run": run, "stage": e.Stage})
+		}
+	case pipeline.RunEnded:
+		s.ended(run, e.Outcome)
+	}
+}
+
+func (s *session) ended(run string, o *pipeline.Outcome) {
+	f := fields{"run": run, "state": o.State}
+	switch o.State {
+	case pipeline.Done:
+		s.log.info("done", run+": done", f)
+	case pipeline.UpToDate:
+		s.log.step(len(pipeline.Stages))
+		s.log.info("up-to-date", run+": up to date", f)
+	case pipeline.RefusedRun:
+		for _, x := range o.Faults {
+			s.log.fault(run, x)
+		}
+		s.log.info("refused", run+": refused", f)
+	case pipeline.Interrupted:
+		s.log.info("interrupted", run+": interrupted, not written", f)
+	case pipeline.Failed:
+		var bug *pipeline.BugError
+		if errors.As(o.Err, &bug) {
+			s.log.bug(bug)
+		} else {
+			s.log.error("failed", run+": "+o.Err.Error(), f)
+		}
+	}
+	for _, text := range o.Outside {
+		s.log.error("outside-limit", run+": "+text, fields{"run": run})
+	}
+}
+
+// writeOutcomes writes one line a run, in the order of the runs.
+func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
+	width := 0
+	for _, o := range outcomes {
+		width = max(width, len(o.Plan.Run.Stem))
+	}
+	var b strings.Builder
+	for _, o := range outcomes {
+		line := fmt.Sprintf("%-*s  %-11s", width, o.Plan.Run.Stem, o.State)
+		switch f := o.Figures; {
+		case f != nil:
+			line += fmt.Sprintf("  %d volumes, FD mean %s max %s mm, lost %d", f.Volumes, millimetres(f.MeanFD), millimetres(f.MaxFD), f.Lost)
+			if len(o.Outside) > 0 {
+				line += ", outside a limit"
+			}
+		case o.State == pipeline.RefusedRun:
+			var ids []string
+			for _, x := range o.Faults {
+				if x.Level == fault.Refuse && !slices.Contains(ids, x.ID) {
+					ids = append(ids, x.ID)
+				}
+			}
+			line += "  " + strings.Join(ids, ", ")
+		}
+		b.WriteString(strings.TrimRight(line, " ") + "\n")
+	}
+	_, err := io.WriteString(w, b.String())
+	return err
+}
+
+func millimetres(v float64) string {
+	if math.IsNaN(v) {
+		return "n/a"
+	}
+	return strconv.FormatFloat(v, 'f', 3, 64)
+}
+
+// summary counts how the runs ended.
+func summary(outcomes []pipeline.Outcome) string {
+	n := map[pipeline.State]int{}
+	for _, o := range outcomes {
+		n[o.State]++
+	}
+	var parts []string
+	for _, s := range []pipeline.State{pipeline.Done, pipeline.UpToDate, pipeline.RefusedRun, pipeline.Failed, pipeline.Interrupted} {
+		if n[s] > 0 {
+			parts = append(parts, fmt.Sprintf("%d %s", n[s], strings.ReplaceAll(string(s), "-", " ")))
+		}
+	}
+	if len(parts) == 0 {
+		return "no runs in this part"
+	}
+	return strings.Join(parts, ", ")
+}

@@ -1,0 +1,56 @@
+package main
+
+import (
+	"encoding/json"
+	"fmt"
+	"runtime"
+	"strings"
+
+	"github.com/urfave/cli/v2"
+
+	"evenkeel/pipeline"
+)
+
+func (s *session) versionCommand() *cli.Command {
+	return &cli.Command{
+		Name:        "version",
+		Usage:       "print version, Go version, module versions and CPU features",
+		Description: describe("Prints what a record says about the software, and the processor's features.", "evenkeel version --json", pipeline.ExitDone, pipeline.ExitUsage),
+		Flags:       []cli.Flag{&cli.BoolFlag{Name: "json", Usage: "as one JSON document"}},
+		Action: func(c *cli.Context) error {
+			if _, err := arguments(c); err != nil {
+				return err
+			}
+			sw, features := pipeline.Software(), pipeline.CPUFeatures()
+			if c.Bool("json") {
+				type module struct {
+					Path    string `json:"path"`
+					Version string `json:"version"`
+				}
+				doc := struct {
+					Version      string   `json:"version"`
+					Revision     string   `json:"revision,omitempty"`
+					Go           string   `json:"go"`
+					OS           string   `json:"os"`
+					Architecture string   `json:"architecture"`
+					CPUFeatures  []string `json:"cpu_features"`
+					Modules      []module `json:"modules"`
+				}{sw.Version, sw.Revision, sw.GoVersion, runtime.GOOS, runtime.GOARCH, append([]string{}, features...), []module{}}
+				for _, m := range sw.Modules {
+					doc.Modules = append(doc.Modules, module{m.Path, m.Version})
+				}
+				b, err := json.MarshalIndent(doc, "", "  ")
+				if err != nil {
+					return err
+				}
+				fmt.Fprintf(s.stdout, "%s\n", b)
+				return nil
+			}
+			fmt.Fprintf(s.stdout, "evenkeel %s\n%s %s/%s\ncpu features: %s\n", sw.Version, sw.GoVersion, runtime.GOOS, runtime.GOARCH, strings.Join(features, " "))
+			for _, m := range sw.Modules {
+				fmt.Fprintf(s.stdout, "%s %s\n", m.Path, m.Version)
+			}
+			return nil
+		},
+	}
+}
