@@ -43,6 +43,7 @@ var faultCases = []struct {
 		"tr-unit slice-times-unit", "RepetitionTime", nil},
 	{"zero", with([2]string{"RepetitionTime", "0.0"}), nil, "tr-range", "RepetitionTime", []string{"found 0.0", "above zero"}},
 	{"negative", with([2]string{"RepetitionTime", "-2000"}), nil, "tr-range", "RepetitionTime", []string{"found -2000"}},
+	{"a number without end", with([2]string{"RepetitionTime", "-" + strings.Repeat("7", 500)}), nil, "tr-range", "RepetitionTime", []string{"found -" + strings.Repeat("7", 39) + "..., expected"}},
 	{"not finite", with([2]string{"RepetitionTime", "1e999"}), nil, "tr-range", "RepetitionTime", []string{"found 1e999"}},
 
 	// VolumeTiming
@@ -94,6 +95,7 @@ var faultCases = []struct {
 	// multiband
 	{"factor of 2, slices one by one", with([2]string{"MultibandAccelerationFactor", "2"}), nil, "multiband-mismatch", "MultibandAccelerationFactor", []string{"found 2, while SliceTiming", "has 1 slices an excitation"}},
 	{"uneven groups", with([2]string{"MultibandAccelerationFactor", "2"}, [2]string{"SliceTiming", "[0, 0, 0, 1]"}), nil, "multiband-mismatch", "MultibandAccelerationFactor", []string{"1 to 3 slices"}},
+	{"uneven groups, the largest as the factor", with([2]string{"MultibandAccelerationFactor", "3"}, [2]string{"SliceTiming", "[0, 0, 0, 1]"}), nil, "multiband-mismatch", "MultibandAccelerationFactor", nil},
 	{"factor of zero", with([2]string{"MultibandAccelerationFactor", "0"}), nil, "multiband-mismatch", "MultibandAccelerationFactor", nil},
 	{"half a factor", with([2]string{"MultibandAccelerationFactor", "1.5"}), nil, "multiband-mismatch", "MultibandAccelerationFactor", nil},
 
@@ -115,6 +117,7 @@ var faultCases = []struct {
 
 	// 3-D
 	{"3-D", with([2]string{"MRAcquisitionType", `"3D"`}, [2]string{"SliceTiming", ""}), nil, "three-dimensional", "MRAcquisitionType", []string{"found 3D"}},
+	{"3-D, second phase encoding along the slab", with([2]string{"MRAcquisitionType", `"3D"`}, [2]string{"PhaseEncodingDirection", `"k"`}), nil, "three-dimensional", "MRAcquisitionType", nil},
 	{"3-D with slice times", with([2]string{"MRAcquisitionType", `"3D"`}, [2]string{"SliceTiming", "[9999]"}), nil, "three-dimensional", "MRAcquisitionType", []string{"and SliceTiming"}},
 	{"4-D", with([2]string{"MRAcquisitionType", `"4D"`}), nil, "sidecar-syntax", "MRAcquisitionType", []string{`"2D" or "3D"`}},
 

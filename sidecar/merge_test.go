@@ -81,6 +81,30 @@ func TestReversalExample(t *testing.T) {
 	}
 }
 
+// A direction that cannot be read leaves the order of the list unknown: no
+// slice times are better than times in a guessed order.
+func TestUnreadableDirectionGivesNoSliceTimes(t *testing.T) {
+	for _, text := range []string{
+		with([2]string{"SliceEncodingDirection", `"up"`}),
+		strings.Replace(with(), "{", `{"SliceEncodingDirection": "k", "SliceEncodingDirection": "k-",`, 1),
+	} {
+		acq, faults := read(harbour, text)
+		if acq.SliceTimes != nil || ids(faults) != "sidecar-syntax" {
+			t.Errorf("%v\n%s", acq.SliceTimes, list(faults))
+		}
+	}
+}
+
+// Raw holds numbers as they stand and no white space between them.
+func TestUsedIsCompact(t *testing.T) {
+	acq, _ := read(harbour, with([2]string{"SliceTiming", "[\n 0.00, 1e0,\t0.5 , 1.50 ]"}))
+	for _, f := range acq.Used {
+		if f.Key == "SliceTiming" && f.Raw != "[0.00,1e0,0.5,1.50]" {
+			t.Errorf("%q", f.Raw)
+		}
+	}
+}
+
 // Without SliceEncodingDirection the header's statement counts, and without it k.
 func TestSliceAxisSources(t *testing.T) {
 	times := func(n int) string {

@@ -37,6 +37,7 @@ var brokenFiles = []struct {
 	{"minus infinity", "{\"a\": -Infinity}", "line 1, column 7: -Infinity"},
 	{"Python's truth", "{\"a\": True}", "line 1, column 7: True"},
 	{"word", "{\"a\": Ishmael}", "line 1, column 7: a word without quotes"},
+	{"word that begins well", "{\"a\": nullify}", "line 1, column 7: a word without quotes"},
 	{"plus", "{\"a\": +1}", "line 1, column 7: '+'"},
 	{"leading zero", "{\"a\": 012}", "line 1, column 7: a number with a zero in front"},
 	{"point first", "{\"a\": .5}", "line 1, column 7: '.'"},
