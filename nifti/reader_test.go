@@ -332,6 +332,30 @@ func TestPairNames(t *testing.T) {
 	}
 }
 
+// Where both a plain and a compressed partner are there, the one that is stored
+// as the half that was named belongs to it.
+func TestPairPartner(t *testing.T) {
+	im := sample(1, binary.LittleEndian)
+	im.pair = true
+	other := bytes.Clone(im.data)
+	other[0]++
+	dir := t.TempDir()
+	for name, b := range map[string][]byte{"a.hdr": im.header(), "a.img": im.data, "a.hdr.gz": zip(im.header()), "a.img.gz": zip(other)} {
+		if err := os.WriteFile(filepath.Join(dir, name), b, 0o666); err != nil {
+			t.Fatal(err)
+		}
+	}
+	for name, want := range map[string][]byte{"a.hdr": im.data, "a.hdr.gz": other} {
+		_, s, err := ReadSeries(filepath.Join(dir, name), nil, 0)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if sameFloats(s.Data, oracle(want, Int16, im.order, 1, 0, false)) >= 0 {
+			t.Errorf("%s was read with the partner of the other", name)
+		}
+	}
+}
+
 func TestReadSeriesSkip(t *testing.T) {
 	b := sample(1, binary.LittleEndian).bytes()
 	path := writeFile(t, "a.nii", b)
