@@ -33,14 +33,14 @@ func selectionFlags() []cli.Flag {
 func settingFlags() []cli.Flag {
 	var out []cli.Flag
 	for _, c := range pipeline.Choices {
-		usage := c.Help
+		usage := "`" + c.Values + "`: " + c.Help
 		switch {
 		case c.Switch:
-			out = append(out, &cli.BoolFlag{Name: c.Option(), Usage: usage})
+			out = append(out, &cli.BoolFlag{Name: c.Option(), Usage: c.Help})
 		case c.Repeat:
-			out = append(out, &cli.StringSliceFlag{Name: c.Option(), Usage: usage + "; repeatable (`" + c.Values + "`)"})
+			out = append(out, &cli.StringSliceFlag{Name: c.Option(), Usage: usage + "; repeatable"})
 		default:
-			out = append(out, &cli.StringFlag{Name: c.Option(), Usage: usage + " (`" + c.Values + "`)", Value: c.Default()})
+			out = append(out, &cli.StringFlag{Name: c.Option(), Usage: usage, Value: c.Default()})
 		}
 	}
 	return append(out, &cli.StringFlag{Name: "settings", Usage: "the settings object of an earlier record, or a part of one, in `FILE`; options given beside it win"})

@@ -116,6 +116,62 @@ func (s *session) interruptible() (context.Context, func()) {
 	}
 }
 
+// Help shows an option on one line and what it does, wrapped, below it: with
+// longer option names than columns, a table would not fit a terminal.
+func init() {
+	cli.FlagStringer = func(f cli.Flag) string {
+		var name, usage, value string
+		switch f := f.(type) {
+		case *cli.BoolFlag:
+			name, usage = f.Name, f.Usage
+		case *cli.StringFlag:
+			name, usage, value = f.Name, f.Usage, f.DefaultText
+			if value == "" {
+				value = f.Value
+			}
+		case *cli.StringSliceFlag:
+			name, usage = f.Name, f.Usage
+		default:
+			return f.String()
+		}
+		line := "--" + name
+		if before, rest, ok := strings.Cut(usage, "`"); ok {
+			placeholder, after, _ := strings.Cut(rest, "`")
+			line += " " + placeholder
+			if before == "" {
+				usage = strings.TrimPrefix(after, ": ")
+			} else {
+				usage = before + placeholder + after
+			}
+		}
+		if value != "" {
+			usage += " (default: " + value + ")"
+		}
+		const indent = "      "
+		for _, l := range wrap(usage, 80-3-len(indent)) {
+			line += "\n   " + indent + l
+		}
+		return line
+	}
+}
+
+// wrap breaks a text at spaces into lines of at most width.
+func wrap(text string, width int) []string {
+	var out []string
+	line := ""
+	for _, w := range strings.Fields(text) {
+		if line != "" && len(line)+1+len(w) > width {
+			out = append(out, line)
+			line = ""
+		}
+		if line != "" {
+			line += " "
+		}
+		line += w
+	}
+	return append(out, line)
+}
+
 const research = "FOR RESEARCH ONLY. Not a medical device; not for diagnosis or treatment. Images of\na head can identify a person: treat outputs as you treat the raw data."
 
 func (s *session) app() *cli.App {

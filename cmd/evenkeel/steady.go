@@ -154,7 +154,7 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 		line := fmt.Sprintf("%-*s  %-11s", width, o.Plan.Run.Stem, o.State)
 		switch f := o.Figures; {
 		case f != nil:
-			line += fmt.Sprintf("  %d volumes, FD mean %s max %s mm, lost %d", f.Volumes, millimetres(f.MeanFD), millimetres(f.MaxFD), f.Lost)
+			line += fmt.Sprintf("  %d volumes, FD mean %s max %s mm, %d doubtful, %d lost", f.Volumes, millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
 			if len(o.Outside) > 0 {
 				line += ", outside a limit"
 			}
