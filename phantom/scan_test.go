@@ -276,3 +276,27 @@ func TestWithoutSliceTimesAllSlicesStandAtTheStart(t *testing.T) {
 		t.Error("nil differs from zeros")
 	}
 }
+
+// Slices taken at different instants, or side by side, share no noise.
+func TestEverySliceHasNoiseOfItsOwn(t *testing.T) {
+	for axis := range 3 {
+		s := sampleScan(axis)
+		s.Affine[3] += 1000 // the head is out of the field: noise alone
+		s.NoiseSD = 9
+		seen := map[float32][2]int{}
+		twice := 0
+		for i, v := range simulate(t, s, 2) {
+			p := [3]int{i % s.N[0], i / s.N[0] % s.N[1], i / (s.N[0] * s.N[1]) % s.N[2]}
+			at := [2]int{i / (s.N[0] * s.N[1] * s.N[2]), p[axis]}
+			if was, ok := seen[v]; ok && was != at {
+				twice++
+			}
+			seen[v] = at
+		}
+		// 10 710 values among the 2^23 or so float32 that hold them: some ten
+		// meet by chance; one slice in two places would bring 200.
+		if twice > 60 {
+			t.Errorf("axis %d: %d values occur in two slices", axis, twice)
+		}
+	}
+}
