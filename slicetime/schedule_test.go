@@ -96,6 +96,8 @@ func TestWords(t *testing.T) {
 		{"irregular", by(.1, 0, 5, 3, 1, 4, 2), .6, "irregular order (slices 1, 6, 4, 2, 5, 3), 6 shots, 0.1 s apart, no pause between volumes"},
 		{"irregular, long", by(.1, 0, 5, 3, 1, 4, 2, 6, 7), .8, "irregular order (slices 1, 6, 4, 2, 5, 3, ...), 8 shots, 0.1 s apart, no pause between volumes"},
 		{"packages", []float64{0, .1, .2, 1, 1.1, 1.2}, 2, "sequential ascending, 6 shots, unevenly 0.1 to 0.8 s apart, 0.8 s from the last shot to the next volume's first"},
+		{"broken off", by(.1, 0, 2, 1, 3, 4, 5), .6, "irregular order (slices 1, 3, 2, 4, 5, 6), 6 shots, 0.1 s apart, no pause between volumes"},
+		{"uneven by more than rounding", []float64{0, .01, .024, .034}, .05, "sequential ascending, 4 shots, unevenly 0.01 to 0.014 s apart, 0.016 s from the last shot to the next volume's first"},
 		{"late start", []float64{.05, .55, 1.05, 1.55}, 2, "sequential ascending, 4 shots, 0.5 s apart, no pause between volumes"},
 		{"overlapping", []float64{0, .5, 1, 1.5}, 1.6, "sequential ascending, 4 shots, 0.5 s apart, the volumes overlapping by 0.4 s"},
 		{"multiband 3 interleaved", []float64{0, .4, .2, .6, 0, .4, .2, .6, 0, .4, .2, .6}, .8, "multiband 3 (slices 4 apart), interleaved ascending within each band of 4, odd slices first (1st, 3rd), 4 shots, 0.2 s apart, no pause between volumes"},

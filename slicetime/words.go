@@ -154,24 +154,16 @@ func sequence(seq []int, within string) []string {
 	return []string{fmt.Sprintf("irregular order%s (slices %s)", within, list(few, 6))}
 }
 
-// passes reports whether pos, positions 0..n-1 in order of time, consists of
-// runs that each rise by step through all positions of one remainder.
+// passes reports whether pos, a permutation of 0..n-1, consists of runs that each
+// rise by step through all positions of one remainder. It is enough that every
+// run begins below step: what a run left out would have to begin another above it.
 func passes(pos []int, step int) bool {
-	n, runs := len(pos), 0
-	for i := 0; i < n; {
-		if pos[i] >= step {
-			return false // does not begin at the near end
+	for i, p := range pos {
+		if p >= step && (i == 0 || p != pos[i-1]+step) {
+			return false
 		}
-		last := pos[i]
-		for i++; i < n && pos[i] == last+step; i++ {
-			last = pos[i]
-		}
-		if last+step < n {
-			return false // stops before the far end
-		}
-		runs++
 	}
-	return runs == min(step, n)
+	return true
 }
 
 // cycle returns the step k if pos advances by k modulo its length throughout, else 0.

@@ -121,7 +121,7 @@ def moved(x, shift, kernel, reach=8):
 
 def whole(rng):
     cases = []
-    for n in (4, 5, 7, 19, 20, 21, 40, 99):
+    for n in (4, 5, 7, 19, 20, 21, 40, 76, 99):
         t = np.arange(n)
         slow = np.cumsum(rng.normal(0, 1, n)); signals = {
             "walk": 1000 + 4 * slow, "noise": 500 + 10 * rng.normal(0, 1, n),
