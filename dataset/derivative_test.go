@@ -170,12 +170,13 @@ func TestRawLink(t *testing.T) {
 // What RawLinkFor writes, FindRaw reads, through links and before OUT exists.
 func TestRawLinkFindsBack(t *testing.T) {
 	dir := t.TempDir()
-	files(t, dir, "study/raw 1/"+described, "study/real/", "study/link -> real", "alias -> study")
+	files(t, dir, "study/raw 1/"+described, "study/real/", "study/link -> real", "far/off/link -> ../../study/real", "alias -> study")
 	for _, c := range []struct{ out, root, link string }{
 		{"study/raw 1/derivatives/even", "study/raw 1", "../.."},
 		{"study/even", "study/raw 1", "../raw%201"},
 		{"alias/even2", "study/raw 1", "../raw%201"},
 		{"study/link", "alias/raw 1", "../raw%201"},
+		{"far/off/link", "study/raw 1", "../raw%201"},
 	} {
 		out, root := filepath.Join(dir, c.out), filepath.Join(dir, c.root)
 		link := RawLinkFor(out, root)

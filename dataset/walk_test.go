@@ -17,7 +17,7 @@ import (
 func TestOnlyTheRawTreeIsWalked(t *testing.T) {
 	image := "func/sub-01_task-rest_bold.nii.gz"
 	d := open(t,
-		"sub-01/"+image, "sub-01/func/sub-01_task-rest_bold.json", "sub-01/func/._sub-01_task-rest_bold.nii.gz",
+		"sub-01/"+image, "sub-01/func/sub-01_task-rest_bold.json", "sub-01/func/._sub-01_task-rest_bold.nii.gz", "sub-01/func/._sub-01_task-rest_bold.json",
 		"derivatives/x/sub-01/"+image, "sourcedata/sub-01/"+image, "code/sub-01/"+image, "stimuli/sub-01/"+image,
 		".git/sub-01/"+image, ".sub-01/"+image, "sub-01/.func/x_bold.nii", "sub-01/anat/sub-01_task-rest_bold.nii.gz", "sub-01/derivatives/"+image,
 		"sub-01/func/sub-01_task-rest_phase.nii.gz", "sub-01/func/sub-01_task-bold_sbref.nii.gz", "sub-01/func/sub-01_task-rest_cbv.nii.gz",
@@ -40,8 +40,10 @@ func TestOnlyTheRawTreeIsWalked(t *testing.T) {
 
 func TestSessionsAndSorting(t *testing.T) {
 	d := open(t, "sub-2/ses-b/func/sub-2_ses-b_task-x_bold.nii", "sub-2/ses-a/func/sub-2_ses-a_task-x_bold.nii",
-		"sub-10/func/sub-10_task-x_bold.nii", "sub-10/ses-z/func/sub-10_ses-z_task-x_bold.nii")
-	want := []string{"sub-10_task-x", "sub-10_ses-z_task-x", "sub-2_ses-a_task-x", "sub-2_ses-b_task-x"}
+		"sub-10/func/sub-10_task-x_bold.nii", "sub-2+a/func/sub-2+a_task-x_bold.nii",
+		// In a path + comes before the slash, in a folder list after the end of a name.
+		"sub-10/ses-z/func/sub-10_ses-z_task-x_bold.nii")
+	want := []string{"sub-10_task-x", "sub-10_ses-z_task-x", "sub-2+a_task-x", "sub-2_ses-a_task-x", "sub-2_ses-b_task-x"}
 	if diff := cmp.Diff(want, stems(d.Runs)); diff != "" {
 		t.Error(diff)
 	}
@@ -328,7 +330,9 @@ func TestDescriptions(t *testing.T) {
 		`[]`:                                    "no JSON object",
 		``:                                      "no JSON object",
 		strings.Repeat("[", 1<<20):              "no JSON object",
-		strings.Repeat(" ", maxSmallFile+1):     "larger than",
+		// Valid, and deeper than the parser may be trusted to go.
+		`{"Name": "x", "BIDSVersion": "1.8.0", "a": ` + strings.Repeat("[", 2000) + strings.Repeat("]", 2000) + "}": "no JSON object",
+		strings.Repeat(" ", maxSmallFile+1): "larger than",
 	} {
 		root := t.TempDir()
 		files(t, root, "dataset_description.json = "+text)
