@@ -382,9 +382,10 @@ func TestAuditCannotBeMade(t *testing.T) {
 
 func TestFindingsAreSortedAndWritten(t *testing.T) {
 	tr := goodTree(t)
-	for _, p := range []string{three + pose, one + series, two + mask, one + mask, two + RecordSuffix} {
+	for _, p := range []string{three + pose, two + mask, one + mask, two + RecordSuffix} {
 		tr.do(os.Remove(filepath.Join(tr.out, p)))
 	}
+	tr.write(tr.out, one+pose, "ti") // of the kinds, changed stands before missing
 	got, _, err := Auditor{Out: tr.out, Workers: 4}.Audit(context.Background())
 	if err != nil {
 		t.Fatal(err)
@@ -395,7 +396,7 @@ func TestFindingsAreSortedAndWritten(t *testing.T) {
 	}
 	want := []string{
 		"missing: " + one + mask + ": found nothing, expected 24 bytes (" + one + RecordSuffix + ")",
-		"missing: " + one + series + ": found nothing, expected 26 bytes (" + one + RecordSuffix + ")",
+		"changed: " + one + pose + ": found 2 bytes, expected 5 bytes (" + one + RecordSuffix + ")",
 		"no-record: " + two + series + ": found no record, expected " + filepath.Base(two) + RecordSuffix + " (" + two + RecordSuffix + ")",
 		"missing: " + three + pose + ": found nothing, expected 5 bytes (" + three + RecordSuffix + ")",
 	}
