@@ -1,0 +1,757 @@
+package realign
+
+import (
+	"context"
+	"fmt"
+	"math"
+	"slices"
+
+	"evenkeel/internal/parallel"
+)
+
+// State says how far the pose of a volume can be relied on.
+type State string
+
+const (
+	Aligned  State = "aligned"
+	Doubtful State = "doubtful" // a pose was found, but the volume does not look like the reference there
+	Lost     State = "lost"     // no pose was found
+)
+
+// Volume is what was found for one volume.
+type Volume struct {
+	Pose       Pose // of a lost volume: interpolated between its aligned neighbours
+	State      State
+	Fit        float64 // correlation with the reference inside the head after alignment, both lightly smoothed
+	Outside    float64 // share of the head outside the field of view
+	Iterations int     // of all matches that led to the pose
+	Reason     string  // why the volume is not aligned; "" if it is
+	// SliceResiduals says, by slice index, how badly each slice fits: the rms
+	// residual after alignment over that of the median slice; 0 for a slice with
+	// nothing to compare, nil if no match ended.
+	SliceResiduals []float64
+
+	shares []float64 // residual of each slice over its signal
+}
+
+// Reference says what volumes are aligned to.
+type Reference int
+
+const (
+	Mean     Reference = iota // the average of the aligned volumes, at the pose of the first of them
+	First                     // volume 0
+	Middle                    // volume nt/2
+	Index                     // the volume Options.Index
+	External                  // Options.External
+)
+
+// Options of [EstimateVolumes].
+type Options struct {
+	Reference Reference
+	Index     int       // with [Index]
+	External  []float32 // with [External]: a volume on the same grid
+	SliceAxis int       // axis along which slices are stacked: 0, 1, 2
+	Workers   int       // goroutines; results do not depend on it
+}
+
+// Estimate is the outcome for a run.
+type Estimate struct {
+	Volumes        []Volume
+	Reference      []float32  // the reference, on the grid
+	Mask           []bool     // the head in the reference
+	Centre         [3]float64 // centroid of Mask, world mm: the centre of rotation
+	ReferenceIndex int        // the volume at whose pose the reference stands; -1 for an external one
+	Passes         int        // how often every volume was matched
+	Parameters     []Parameter
+}
+
+// Parameter is one constant that an estimate used, for the record.
+type Parameter struct {
+	Name  string
+	Value float64
+}
+
+// TooFewAligned is returned when all but one volume are lost, or all.
+type TooFewAligned struct {
+	Aligned int // volumes for which a pose was found, doubtful ones included
+	Volumes int
+}
+
+func (e *TooFewAligned) Error() string {
+	return fmt.Sprintf("%d of %d volumes could be aligned, at least 2 are needed", e.Aligned, e.Volumes)
+}
+
+// Constants of the estimate, each with its reason.
+const (
+	// coarseSigma: a Gaussian of 8 mm leaves structures of the size of the head,
+	// so that a start 30 mm or 40 degrees off still slopes towards the match
+	// (numerics, section 1e).
+	coarseSigma = 8.0
+	// fineShare of the largest voxel edge, at most fineMost mm: 2 mm at 3.8 mm
+	// voxels removes the spectrum that quintic splines cannot follow, at under
+	// 2 % of the precision (numerics, sections 1a and 1b).
+	fineShare = 0.55
+	fineMost  = 3.0
+	// fineMargin: with an averaged template two planes are left out at each
+	// field edge, in the volume and in the template (numerics, section 1d).
+	fineMargin = 2.0
+	// coarseMargin: coarse planes are further apart, and rough is enough.
+	coarseMargin = 1.0
+	// rim: the head's outline, blurred by the filter, holds much of what tells
+	// poses apart; two voxels take it in.
+	rim = 2
+	// fineTolerance ends a match after a step by which no point of the head moved
+	// by more. Steps shrink at least tenfold each, so what is left is below a
+	// twentieth of a micrometre; the best precision that noise allows is about 5.
+	fineTolerance   = 5e-4
+	roughTolerance  = 5e-3 // first of two passes: small beside the noise of its single-volume template
+	coarseTolerance = 2e-2
+	// maxIterations is twice what any start within capture range took.
+	maxIterations       = 30
+	coarseMaxIterations = 25
+	// fanBelow: when the match from rest looks worse than this, other starting
+	// turns are tried too. An undisturbed volume has 0.99 and more.
+	fanBelow = 0.95
+	// alignedFit: of real volumes, those that moved by millimetres and were
+	// matched correctly correlate above 0.9, those turned by tens of degrees
+	// while they were taken, or partly out of the field, stay below 0.85.
+	alignedFit = 0.90
+	// doubtfulFit: below, the pose found is no better than others nearby.
+	doubtfulFit = 0.5
+	// mostOutside: with a third of the head out of the field, what is left no
+	// longer pins down six parameters.
+	mostOutside = 0.33
+	// coverage: the average counts where half of its volumes contributed.
+	coverage = 0.5
+)
+
+// EstimateVolumes finds one pose for each of the nt volumes in data
+// (data[t*nv:(t+1)*nv] is volume t on grid g, nv its voxel count). data is not
+// changed. It fails with [*TooFewAligned], or with the error of ctx.
+func EstimateVolumes(ctx context.Context, g Grid, data []float32, nt int, opt Options) (*Estimate, error) {
+	nv := g.voxels()
+	if len(data) != nv*nt || nt < 1 {
+		panic("realign: series and grid differ in size")
+	}
+	e := &estimator{ctx: ctx, g: g, nt: nt, opt: opt, workers: max(1, opt.Workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }}
+	e.prepare()
+	return e.run()
+}
+
+// estimator holds what the passes of one estimate share.
+type estimator struct {
+	ctx     context.Context
+	g       Grid
+	nt      int
+	opt     Options
+	workers int
+	volume  func(t int) []float32
+
+	sigma   float64 // mm, fine
+	scratch []*workspace
+	coarse  Grid
+}
+
+// workspace is what one worker owns.
+type workspace struct {
+	fine, coarse   *smoother
+	vFine, vCoarse []float32
+	m              matcher
+}
+
+func (e *estimator) prepare() {
+	edge := e.g.edges()
+	e.sigma = min(fineMost, fineShare*max(edge[0], edge[1], edge[2]))
+	// Coarse samples stand about 8 mm apart, one sigma, but no axis is thinned
+	// to fewer than 8 planes.
+	var stride [3]int
+	for a := range stride {
+		stride[a] = max(1, min(int(coarseSigma/edge[a]), e.g.N[a]/8))
+	}
+	e.scratch = make([]*workspace, e.workers)
+	for i := range e.scratch {
+		w := &workspace{
+			fine:   newSmoother(e.g, e.sigma, [3]int{1, 1, 1}),
+			coarse: newSmoother(e.g, coarseSigma, stride),
+		}
+		w.vFine = make([]float32, e.g.voxels())
+		w.vCoarse = make([]float32, w.coarse.out[0]*w.coarse.out[1]*w.coarse.out[2])
+		e.scratch[i] = w
+	}
+	e.coarse = e.scratch[0].coarse.grid(e.g)
+}
+
+// model is a reference prepared at both levels.
+type model struct {
+	image        []float32
+	mask         []bool
+	centre       [3]float64
+	fine, coarse *template
+}
+
+// newModel prepares a reference; unknown marks voxels it has no data for.
+func (e *estimator) newModel(image []float32, unknown []bool, degree int) *model {
+	m := &model{image: image, mask: HeadMask(e.g, image)}
+	for i, u := range unknown {
+		m.mask[i] = m.mask[i] && !u
+	}
+	m.centre = centroid(e.g, m.mask)
+	w := e.scratch[0]
+	v := make([]float32, e.g.voxels())
+	w.fine.run(v, image)
+	m.fine = newTemplate(e.g, v, m.mask, unknown, rim, edgeMargins(e.g.N, fineMargin), m.centre, degree)
+	c := make([]float32, len(w.vCoarse))
+	w.coarse.run(c, image)
+	m.coarse = newTemplate(e.coarse, c, thinMask(m.mask, e.g.N, w.coarse), nil, 1, edgeMargins(e.coarse.N, coarseMargin), m.centre, 3)
+	return m
+}
+
+// run makes the passes.
+func (e *estimator) run() (*Estimate, error) {
+	switch e.opt.Reference {
+	case External:
+		if len(e.opt.External) != e.g.voxels() {
+			panic("realign: external reference and grid differ in size")
+		}
+		return e.against(e.opt.External, -1)
+	case First:
+		return e.against(e.volume(0), 0)
+	case Middle:
+		return e.against(e.volume(e.nt/2), e.nt/2)
+	case Index:
+		return e.against(e.volume(e.opt.Index), e.opt.Index)
+	}
+	return e.againstMean()
+}
+
+// fineEffort is that of the pass whose poses are kept.
+func (e *estimator) fineEffort() effort {
+	return effort{tolerance: fineTolerance, iterations: maxIterations, robust: true, sliceAxis: e.opt.SliceAxis}
+}
+
+// against aligns all volumes with a given reference, one pass.
+func (e *estimator) against(image []float32, index int) (*Estimate, error) {
+	m := e.newModel(image, nil, 5)
+	vols, err := e.pass(m, nil, e.fineEffort())
+	if err != nil {
+		return nil, err
+	}
+	return e.finish(m, vols, index, 1)
+}
+
+// againstMean aligns all volumes with one of them, averages those aligned, and
+// aligns all with the average.
+func (e *estimator) againstMean() (*Estimate, error) {
+	rough := e.fineEffort()
+	rough.tolerance, rough.thin = roughTolerance, true
+	// The first volume serves unless hardly any other looks like it: then it is
+	// the odd one, and the middle or last volume gets its turn.
+	var vols []Volume
+	passes, target := 0, 0
+	for _, t := range []int{0, e.nt / 2, e.nt - 1} {
+		m := e.newModel(e.volume(t), nil, 3)
+		v, err := e.pass(m, nil, rough)
+		if err != nil {
+			return nil, err
+		}
+		passes++
+		if countState(v, Aligned) > countState(vols, Aligned) {
+			vols, target = v, t
+		}
+		if 4*countState(vols, Aligned) >= e.nt {
+			break
+		}
+	}
+	var m *model
+	first := -1
+	weak := e.weakSlices(vols, target)
+	for range 3 {
+		// The average stands at the pose of the first aligned volume.
+		if first = firstAligned(vols); first < 0 {
+			return nil, &TooFewAligned{Aligned: 0, Volumes: e.nt}
+		}
+		back := vols[first].Pose.Inverse()
+		used := make([]bool, e.nt)
+		for t := range vols {
+			vols[t].Pose = vols[t].Pose.Compose(back)
+			used[t] = vols[t].State == Aligned
+		}
+		vols[first].Pose = Identity
+		image, unknown, err := e.average(vols, weak)
+		if err != nil {
+			return nil, err
+		}
+		m = e.newModel(image, unknown, 5)
+		next, err := e.pass(m, vols, e.fineEffort())
+		if err != nil {
+			return nil, err
+		}
+		passes++
+		// A volume that entered the average but does not fit it must leave it, and
+		// so must slices, if there are enough of them to matter.
+		nextWeak := e.weakSlices(next, -1)
+		clean := !spoilt(used, weak, nextWeak)
+		for t := range vols {
+			clean = clean && (!used[t] || next[t].State == Aligned)
+		}
+		vols, weak = next, nextWeak
+		if clean {
+			break
+		}
+	}
+	return e.finish(m, vols, first, passes)
+}
+
+// spoiltShare: bad slices in a fiftieth of the volumes averaged shift an average
+// by about a percent, and poses by less than noise does.
+const spoiltShare = 0.02
+
+// spoilt reports whether some slice of the average took in too many bad ones:
+// marked now, not before.
+func spoilt(used []bool, before, now [][]bool) bool {
+	volumes := 0
+	bad := make([]int, len(now[0]))
+	for t, u := range used {
+		if !u {
+			continue
+		}
+		volumes++
+		for s := range bad {
+			if now[t][s] && !before[t][s] {
+				bad[s]++
+			}
+		}
+	}
+	return float64(slices.Max(bad)) > float64(spoiltShare*float64(volumes))
+}
+
+// weakSlices marks, per volume and slice, the slices that are to stay out of
+// the average. A slice that fits badly in most volumes is the fault of what they
+// were compared with, so it is weak only in volumes that stand out among their
+// fellows, and in the volume target that they were compared with (-1: none).
+func (e *estimator) weakSlices(vols []Volume, target int) [][]bool {
+	n := e.g.N[e.opt.SliceAxis]
+	weak := make([][]bool, len(vols))
+	for t := range weak {
+		weak[t] = make([]bool, n)
+	}
+	for s := range n {
+		var z []float32
+		for t, v := range vols {
+			if t != target && v.State == Aligned && v.SliceResiduals != nil {
+				z = append(z, float32(v.SliceResiduals[s]))
+			}
+		}
+		usual := max(1, float64(median(z)))
+		stands := func(z, among float64) bool {
+			return sliceWeights([]float64{z / among})[0] < weakBelow
+		}
+		for t, v := range vols {
+			if v.SliceResiduals != nil {
+				weak[t][s] = v.shares[s] > weakShare && stands(v.SliceResiduals[s], usual)
+			}
+		}
+		if target >= 0 && stands(usual, 1) {
+			weak[target][s] = true
+		}
+	}
+	return weak
+}
+
+func countState(vols []Volume, s State) (n int) {
+	for _, v := range vols {
+		if v.State == s {
+			n++
+		}
+	}
+	return n
+}
+
+func firstAligned(vols []Volume) int {
+	for t, v := range vols {
+		if v.State == Aligned {
+			return t
+		}
+	}
+	return -1
+}
+
+// pass matches every volume with the model. known holds poses to start from;
+// volumes that are lost there, and all when it is nil, start from scratch.
+func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, error) {
+	vols := make([]Volume, e.nt)
+	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, t int) error {
+		w := e.scratch[worker]
+		w.fine.run(w.vFine, e.volume(t))
+		if known != nil && known[t].State != Lost {
+			f := w.m.match(m.fine, w.vFine, known[t].Pose, how)
+			if vols[t] = e.judge(m, f); vols[t].State != Lost {
+				return nil
+			}
+		}
+		w.coarse.run(w.vCoarse, e.volume(t))
+		vols[t] = e.search(w, m, how)
+		return nil
+	})
+	if err != nil {
+		return nil, err
+	}
+	return vols, e.secondLook(m, vols, how)
+}
+
+// search matches the volume in w from the identity, and from a fan of turns if
+// that does not lead to a good match.
+func (e *estimator) search(w *workspace, m *model, how effort) Volume {
+	rough := e.roughEffort()
+	c := w.m.match(m.coarse, w.vCoarse, Identity, rough)
+	best := e.refine(w, m, c.pose, how)
+	best.iterations += c.iterations
+	if best.fit >= fanBelow && best.converged {
+		return e.judge(m, best)
+	}
+	// Each start takes a few steps; the most promising go on to the end.
+	quick := rough
+	quick.iterations, quick.thin = 4, true
+	type try struct {
+		f     found
+		score float64
+	}
+	var tries []try
+	for _, p := range fan(m.centre) {
+		f := w.m.match(m.coarse, w.vCoarse, p, quick)
+		tries = append(tries, try{f, e.score(m, f)})
+	}
+	var turned found
+	for range 4 {
+		at := 0
+		for i := range tries {
+			if tries[i].score > tries[at].score {
+				at = i
+			}
+		}
+		f := w.m.match(m.coarse, w.vCoarse, tries[at].f.pose, rough)
+		if e.score(m, f) > e.score(m, turned) {
+			turned = f
+		}
+		tries[at].score = -2
+	}
+	if e.score(m, turned) > 0 && distance(turned.pose, c.pose, m.centre) > farMM {
+		f := e.refine(w, m, turned.pose, how)
+		f.iterations += turned.iterations
+		if e.score(m, f) > e.score(m, best) {
+			best = f
+		}
+	}
+	return e.judge(m, best)
+}
+
+func (e *estimator) roughEffort() effort {
+	return effort{tolerance: coarseTolerance, iterations: coarseMaxIterations, sliceAxis: e.opt.SliceAxis}
+}
+
+// refine matches at the fine level from a coarse pose: most of the way on half
+// of the voxels, the rest as how says.
+func (e *estimator) refine(w *workspace, m *model, start Pose, how effort) found {
+	near := how
+	near.thin, near.tolerance = true, max(how.tolerance, coarseTolerance)
+	a := w.m.match(m.fine, w.vFine, start, near)
+	b := w.m.match(m.fine, w.vFine, a.pose, how)
+	b.iterations += a.iterations
+	return b
+}
+
+// score ranks matches: a good fit over a small overlap is worth less.
+func (e *estimator) score(m *model, f found) float64 {
+	return float64(f.fit * (1 - outside(m.coarse.g, m.coarse.head, f.pose)))
+}
+
+// fan lists starting poses: turns about the vertical axis to 60 degrees and
+// nods and tilts of 25, all combined, about the centre of the head. A match
+// from each catches at least half the distance to the next.
+func fan(centre [3]float64) (poses []Pose) {
+	const degree = math.Pi / 180
+	for _, z := range []float64{0, 20, -20, 40, -40, 60, -60} {
+		for _, x := range []float64{0, 25, -25} {
+			for _, y := range []float64{0, 25, -25} {
+				if x == 0 && y == 0 && z == 0 {
+					continue
+				}
+				poses = append(poses, FromParams([3]float64{}, [3]float64{x * degree, y * degree, z * degree}, centre))
+			}
+		}
+	}
+	return poses
+}
+
+// secondLook tries volumes that are not aligned again, from the poses of their
+// nearest aligned neighbours, and keeps what fits better.
+func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
+	seen := append([]Volume(nil), vols...)
+	return parallel.For(e.ctx, e.workers, e.nt, func(worker, t int) error {
+		if seen[t].State == Aligned {
+			return nil
+		}
+		w := e.scratch[worker]
+		ready := false
+		for _, step := range []int{-1, 1} {
+			s := t + step
+			for s >= 0 && s < e.nt && seen[s].State != Aligned {
+				s += step
+			}
+			if s < 0 || s >= e.nt {
+				continue
+			}
+			if !ready {
+				w.fine.run(w.vFine, e.volume(t))
+				w.coarse.run(w.vCoarse, e.volume(t))
+				ready = true
+			}
+			c := w.m.match(m.coarse, w.vCoarse, seen[s].Pose, e.roughEffort())
+			f := e.refine(w, m, c.pose, how)
+			v := e.judge(m, f)
+			v.Iterations += vols[t].Iterations + c.iterations
+			if v.State == Aligned || v.Fit > vols[t].Fit && v.State != Lost {
+				vols[t] = v
+			}
+		}
+		return nil
+	})
+}
+
+// judge turns the outcome of a match into the state of the volume.
+func (e *estimator) judge(m *model, f found) Volume {
+	v := Volume{Pose: f.pose, Fit: f.fit, Iterations: f.iterations, Outside: outside(e.g, m.mask, f.pose), State: Aligned, SliceResiduals: f.slices, shares: f.shares}
+	say := func(s State, format string, args ...any) {
+		v.State, v.Reason = s, fmt.Sprintf(format, args...)
+	}
+	switch {
+	case !finitePose(f.pose):
+		v.Pose = Identity
+		say(Lost, "the match ran away")
+	case f.points < 10*unknowns:
+		say(Lost, "hardly any of the head is inside the field of view")
+	case !(f.fit >= doubtfulFit):
+		say(Lost, "correlation with the reference %.2f, below %.2f", f.fit, doubtfulFit)
+	case f.fit < alignedFit:
+		say(Doubtful, "correlation with the reference %.2f, below %.2f", f.fit, alignedFit)
+	case v.Outside > mostOutside:
+		say(Doubtful, "%.0f %% of the head is outside the field of view", 100*v.Outside)
+	case !f.converged:
+		say(Doubtful, "no convergence after %d iterations", f.iterations)
+	}
+	return v
+}
+
+func finitePose(p Pose) bool {
+	for _, v := range append(p.Q[:], p.T[:]...) {
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			return false
+		}
+	}
+	return true
+}
+
+// outside is the share of the head that pose p moves out of the field of view,
+// which ends half a voxel past the outermost centres.
+func outside(g Grid, mask []bool, p Pose) float64 {
+	b := mul(mustInvert(g.Affine), mul(p.Matrix(), g.Affine))
+	n, out, i := 0, 0, 0
+	for z := range g.N[2] {
+		for y := range g.N[1] {
+			for x := range g.N[0] {
+				if mask[i] {
+					n++
+					q := applyAffine(&b, float64(x), float64(y), float64(z))
+					for a := range q {
+						if !(q[a] >= -0.5 && q[a] <= float64(g.N[a])-0.5) {
+							out++
+							break
+						}
+					}
+				}
+				i++
+			}
+		}
+	}
+	if n == 0 {
+		return 0
+	}
+	return float64(out) / float64(n)
+}
+
+// average maps the aligned volumes back and averages them, slices that did not
+// count left out; unknown marks voxels for which fewer than half of the volumes
+// had data (where none had, the average takes the values at the field's edge).
+func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unknown []bool, err error) {
+	nv := e.g.voxels()
+	sum, all, count := make([]float64, nv), make([]float64, nv), make([]int32, nv)
+	var use []int
+	for t, v := range vols {
+		if v.State == Aligned {
+			use = append(use, t)
+		}
+	}
+	// Batches: volumes are resampled side by side, then added in their order.
+	res := make([]*Resampler, e.workers)
+	buf := make([][]float32, 2*e.workers)
+	for i := range res {
+		res[i] = NewResampler(e.g.N, 5)
+	}
+	for i := range buf {
+		buf[i] = make([]float32, nv)
+	}
+	for len(use) > 0 {
+		batch := use[:min(len(use), len(buf))]
+		use = use[len(batch):]
+		err := parallel.For(e.ctx, e.workers, len(batch), func(worker, i int) error {
+			t := batch[i]
+			if vols[t].Pose == Identity {
+				copy(buf[i], e.volume(t))
+				return nil
+			}
+			vol := e.volume(t)
+			if patched := e.patch(vol, weak[t]); patched != nil {
+				vol = patched
+			}
+			res[worker].Load(vol)
+			res[worker].Eval(buf[i], PoseMap(e.g, vols[t].Pose))
+			return nil
+		})
+		if err != nil {
+			return nil, nil, err
+		}
+		err = parallel.For(e.ctx, e.workers, e.g.N[2], func(_, k int) error {
+			area := e.g.N[0] * e.g.N[1]
+			for i, t := range batch {
+				b := mul(mustInvert(e.g.Affine), mul(vols[t].Pose.Matrix(), e.g.Affine))
+				weak := weak[t]
+				for v := area * k; v < area*(k+1); v++ {
+					all[v] += float64(buf[i][v])
+					q := applyAffine(&b, float64(v%e.g.N[0]), float64(v/e.g.N[0]%e.g.N[1]), float64(k))
+					in := true
+					for a := range q {
+						in = in && q[a] >= -0.5 && q[a] <= float64(e.g.N[a])-0.5
+					}
+					if in {
+						s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
+						in = !(s > 0 && weak[s-1] || s < len(weak) && weak[s])
+					}
+					if in {
+						sum[v] += float64(buf[i][v])
+						count[v]++
+					}
+				}
+			}
+			return nil
+		})
+		if err != nil {
+			return nil, nil, err
+		}
+	}
+	total := countState(vols, Aligned)
+	image, unknown = make([]float32, nv), make([]bool, nv)
+	for v := range image {
+		if count[v] > 0 {
+			image[v] = float32(sum[v] / float64(count[v]))
+		} else {
+			image[v] = float32(all[v] / float64(total))
+		}
+		unknown[v] = float64(count[v]) < float64(coverage*float64(total))
+	}
+	return image, unknown, nil
+}
+
+// weakBelow: a slice that counts less than half is left out of the average.
+const weakBelow = 0.5
+
+// weakShare: a slice off by less than 2 % of its signal does no harm in an
+// average, whatever its rank among others (in data without noise ranks mean
+// nothing).
+const weakShare = 0.02
+
+// patch returns a copy of the volume in which weak slices are filled from the
+// nearest sound ones on both sides, so that the spline does not ring into their
+// neighbours; nil if nothing is weak.
+func (e *estimator) patch(vol []float32, weak []bool) []float32 {
+	if !slices.Contains(weak, true) {
+		return nil
+	}
+	out := append([]float32(nil), vol...)
+	n, axis := e.g.N, e.opt.SliceAxis
+	step := [3]int{1, n[0], n[0] * n[1]}[axis]
+	for s := range weak {
+		if !weak[s] {
+			continue
+		}
+		lo, hi := s-1, s+1
+		for lo >= 0 && weak[lo] {
+			lo--
+		}
+		for hi < n[axis] && weak[hi] {
+			hi++
+		}
+		switch {
+		case lo < 0 && hi >= n[axis]:
+			return nil // nothing sound to fill from
+		case lo < 0:
+			lo = hi
+		case hi >= n[axis]:
+			hi = lo
+		}
+		u := float32(0)
+		if hi > lo {
+			u = float32(s-lo) / float32(hi-lo)
+		}
+		for i := range out {
+			if i/step%n[axis] == s {
+				a, b := vol[i+(lo-s)*step], vol[i+(hi-s)*step]
+				out[i] = a + float32(u*(b-a))
+			}
+		}
+	}
+	return out
+}
+
+// finish gives lost volumes the pose between their aligned neighbours and puts
+// the outcome together.
+func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimate, error) {
+	posed := e.nt - countState(vols, Lost)
+	if posed < 2 {
+		return nil, &TooFewAligned{Aligned: posed, Volumes: e.nt}
+	}
+	// Lost volumes stand between aligned ones, or, where there are none (an
+	// external reference of another kind), between doubtful ones.
+	from := Aligned
+	if countState(vols, Aligned) == 0 {
+		from = Doubtful
+	}
+	var p Path
+	for t, v := range vols {
+		if v.State == from {
+			p.Times, p.Poses = append(p.Times, float64(t)), append(p.Poses, v.Pose)
+		}
+	}
+	for t := range vols {
+		if vols[t].State == Lost {
+			vols[t].Pose = p.At(float64(t))
+			vols[t].Outside = outside(e.g, m.mask, vols[t].Pose)
+		}
+	}
+	return &Estimate{
+		Volumes: vols, Reference: append([]float32(nil), m.image...), Mask: m.mask, Centre: m.centre,
+		ReferenceIndex: index, Passes: passes,
+		Parameters: []Parameter{
+			{"coarseGaussianMM", coarseSigma},
+			{"fineGaussianMM", e.sigma},
+			{"marginVoxels", fineMargin},
+			{"rimVoxels", rim},
+			{"toleranceMM", fineTolerance},
+			{"maxIterations", maxIterations},
+			{"fanBelowCorrelation", fanBelow},
+			{"alignedFromCorrelation", alignedFit},
+			{"doubtfulFromCorrelation", doubtfulFit},
+			{"mostOutsideShare", mostOutside},
+			{"biweightCut", tukeyCut},
+		},
+	}, nil
+}

@@ -1,0 +1,56 @@
+package realign
+
+// What tests in package realign_test need of the inside.
+
+var Poles = poles
+
+// FilterLine turns one line of samples into coefficients.
+func FilterLine(x []float64, degree int, b Boundary) []float64 {
+	f := newLineFilter(len(x), degree, 3, b)
+	for k, v := range x {
+		for l := range lanes {
+			f.buf[3+k][l] = v
+		}
+	}
+	f.run(len(x))
+	c := make([]float64, len(f.buf))
+	for k := range c {
+		c[k] = f.buf[k][lanes-1]
+	}
+	return c
+}
+
+// Interpolate loads a volume and evaluates value and gradient at points.
+func Interpolate(n [3]int, vol []float32, degree int, b Boundary, pts [][3]float64) (v []float32, g [][3]float32) {
+	s := newSpline(n, degree, b)
+	s.load(vol)
+	for _, p := range pts {
+		w, d := s.gradient(p[0], p[1], p[2])
+		if u := s.value(p[0], p[1], p[2]); u != w {
+			panic("value and gradient disagree")
+		}
+		v, g = append(v, w), append(g, d)
+	}
+	return v, g
+}
+
+// Smooth filters a volume.
+func Smooth(g Grid, sigmaMM float64, stride [3]int, vol []float32) (Grid, []float32) {
+	s := newSmoother(g, sigmaMM, stride)
+	out := make([]float32, s.out[0]*s.out[1]*s.out[2])
+	s.run(out, vol)
+	return s.grid(g), out
+}
+
+var (
+	Otsu        = otsu
+	KeepLargest = keepLargest
+	FillHoles   = fillHoles
+	Dilate      = dilate
+	Median      = median
+	EdgeMargin  = edgeMargin
+	Invert      = invert
+	Mul         = mul
+)
+
+const AlignedFit = alignedFit

@@ -1,0 +1,530 @@
+package realign
+
+import (
+	"math"
+	"slices"
+)
+
+// gainReach scales the polynomial of the gain: a coefficient of 0.1 means 10 %
+// over 80 mm, the radius of a head.
+const gainReach = 80
+
+// turnReach converts a turn to the displacement it causes at the edge of a
+// head, mm per rad.
+const turnReach = 80
+
+// unknowns of the normal equations: shift (3), turn (3), gain (4).
+const unknowns = 10
+
+// found is the outcome of one match.
+type found struct {
+	pose       Pose
+	gain       [4]float64 // V = (gain[0] + gain[1] X/80 + ...) R
+	iterations int
+	converged  bool
+	fit        float64 // correlation with the template inside the head, by weight of slice
+	points     int
+
+	slices []float64 // residual of each slice over the median slice's; nil if the match was not robust
+	shares []float64 // residual of each slice over its signal
+}
+
+// effort says how hard a match tries.
+type effort struct {
+	tolerance  float64 // mm: the match ends when no point of the head moves more
+	iterations int
+	robust     bool // weights by slice and by Tukey's biweight
+	thin       bool // every other voxel only
+	sliceAxis  int
+}
+
+// matcher aligns smoothed volumes with a template. It owns its scratch and
+// belongs to one goroutine.
+type matcher struct {
+	at    [][3]int16   // voxel of the volume
+	v     []float32    // its value there
+	r     []float32    // template at the matching point
+	jac   [][6]float32 // gradient and moment of the template there, per mm and per rad
+	phi   [][3]float32 // scanner coordinates for the gain, from the centre, / gainReach
+	head  []bool       // inside the head
+	slice []int32
+	res   []float32
+	order []float32 // scratch of the median
+}
+
+// select lists the voxels of vol that take part at the pose and evaluates the
+// template and its derivatives at their matching points.
+func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
+	m.at, m.v, m.r, m.jac, m.phi, m.head, m.slice = m.at[:0], m.v[:0], m.r[:0], m.jac[:0], m.phi[:0], m.head[:0], m.slice[:0]
+	n := t.g.N
+	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
+	var lo, hi [3]int
+	for a := range lo {
+		lo[a] = int(math.Ceil(t.margin[a]))
+		hi[a] = int(math.Floor(float64(n[a]-1) - t.margin[a]))
+	}
+	for k := lo[2]; k <= hi[2]; k++ {
+		for j := lo[1]; j <= hi[1]; j++ {
+			i := lo[0]
+			step := 1
+			if e.thin {
+				i += (lo[0] + j + k) & 1
+				step = 2
+			}
+			for ; i <= hi[0]; i += step {
+				y := applyAffine(&b, float64(i), float64(j), float64(k))
+				if !t.inMargin(y) {
+					continue
+				}
+				near := t.nearest(y)
+				if !t.usable[near] {
+					continue
+				}
+				v, g := t.s.gradient(y[0], y[1], y[2])
+				var gw [3]float64
+				for a := range gw {
+					gw[a] = float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])
+				}
+				yw := applyAffine(&t.g.Affine, y[0], y[1], y[2])
+				xw := t.g.world(float64(i), float64(j), float64(k))
+				var phi [3]float32
+				for a := range yw {
+					yw[a] -= t.centre[a]
+					phi[a] = float32((xw[a] - t.centre[a]) / gainReach)
+				}
+				mo := cross(yw, gw)
+				m.at = append(m.at, [3]int16{int16(i), int16(j), int16(k)})
+				m.v = append(m.v, vol[i+n[0]*(j+n[1]*k)])
+				m.r = append(m.r, v)
+				m.jac = append(m.jac, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(mo[0]), float32(mo[1]), float32(mo[2])})
+				m.phi = append(m.phi, phi)
+				m.head = append(m.head, t.head[near])
+				m.slice = append(m.slice, int32([3]int{i, j, k}[e.sliceAxis]))
+			}
+		}
+	}
+}
+
+// revalue evaluates the template anew at another pose, derivatives kept.
+func (m *matcher) revalue(t *template, p Pose) {
+	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
+	for q, at := range m.at {
+		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
+		m.r[q] = t.s.value(y[0], y[1], y[2])
+	}
+}
+
+// extrapolate changes the template's values by J d. jac holds the gradient and
+// moment of the template at the matching point, which moves by the opposite of
+// the twist.
+func (m *matcher) extrapolate(d Twist) {
+	d32 := [6]float32{float32(d.V[0]), float32(d.V[1]), float32(d.V[2]), float32(d.W[0]), float32(d.W[1]), float32(d.W[2])}
+	for q := range m.r {
+		j := &m.jac[q]
+		a := float32(j[0]*d32[0]) + float32(j[1]*d32[1]) + float32(j[2]*d32[2])
+		b := float32(j[3]*d32[3]) + float32(j[4]*d32[4]) + float32(j[5]*d32[5])
+		m.r[q] -= a + b
+	}
+}
+
+// nearMM is how far the pose may move, at the head's edge, before the template
+// is evaluated anew; below, its change is J d. What that leaves out is half the
+// second derivative times d^2: for an image smoothed by 2 mm, d = 0.01 mm, one
+// part in 10^5 of the contrast, which moves a pose by less than 0.1 um.
+const nearMM = 0.01
+
+// farMM is how far the pose may wander, at the head's edge, from where points
+// and derivatives were taken before they are taken anew: a tenth of a
+// millimetre is a thirtieth of a voxel, over which the slope of a smoothed image
+// changes by about a percent.
+const farMM = 0.1
+
+// runaway is a step, in mm at the head's edge, that only a match without any
+// hold takes: nearly a head's length.
+const runaway = 150
+
+// match aligns vol with the template, from a starting pose, by Gauss-Newton
+// (Baker, Matthews 2004, IJCV 56(3):221-255, section 2, for rigid maps; the
+// gain joins the unknowns as a linear appearance, ibid. part 3).
+func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found {
+	f := found{pose: start}
+	m.selectPoints(t, vol, start, e)
+	taken, valued := start, start
+	f.gain[0] = m.ratio()
+	for f.iterations < e.iterations {
+		if f.points = len(m.at); f.points < 10*unknowns {
+			return f // hardly any overlap: fit stays 0
+		}
+		step, ok := m.step(&f, e)
+		f.iterations++
+		if !ok {
+			return f
+		}
+		moved := math.Max(norm(step.V), turnReach*norm(step.W))
+		if !(moved < runaway) {
+			return f
+		}
+		f.pose = f.pose.Compose(Exp(step).centred(t.centre))
+		if moved < e.tolerance {
+			f.converged = true
+			break
+		}
+		switch {
+		case distance(taken, f.pose, t.centre) > farMM:
+			m.selectPoints(t, vol, f.pose, e)
+			taken, valued = f.pose, f.pose
+		case distance(valued, f.pose, t.centre) > nearMM:
+			m.revalue(t, f.pose)
+			valued = f.pose
+		default:
+			m.extrapolate(step)
+		}
+	}
+	var weights []float64
+	m.residuals(&f)
+	if e.robust {
+		f.slices = m.sliceResiduals(t.g.N[e.sliceAxis])
+		f.shares = m.sliceShares(t.g.N[e.sliceAxis])
+		weights = sliceWeights(f.slices)
+	}
+	f.fit = m.correlation(weights)
+	return f
+}
+
+// centred turns a map about the origin into the same map about c.
+func (p Pose) centred(c [3]float64) Pose { return p.about(c, p.T) }
+
+func norm(v [3]float64) float64 {
+	return math.Sqrt(float64(v[0]*v[0]) + float64(v[1]*v[1]) + float64(v[2]*v[2]))
+}
+
+// distance bounds how far two poses are apart at the edge of a head about c.
+func distance(p, q Pose, c [3]float64) float64 {
+	d := p.Inverse().Compose(q)
+	at := d.Apply(c)
+	for i := range at {
+		at[i] -= c[i]
+	}
+	return norm(at) + float64(turnReach*norm(d.Log().W))
+}
+
+// ratio is the one gain that fits the values best.
+func (m *matcher) ratio() float64 {
+	vr, rr := 0.0, 0.0
+	for i, r := range m.r {
+		vr += float64(float64(m.v[i]) * float64(r))
+		rr += float64(float64(r) * float64(r))
+	}
+	if !(rr > 0) {
+		return 1
+	}
+	return vr / rr
+}
+
+// gainAt is the gain at point q.
+func (f *found) gainAt(phi [3]float32) float64 {
+	return f.gain[0] + float64(f.gain[1]*float64(phi[0])) + float64(f.gain[2]*float64(phi[1])) + float64(f.gain[3]*float64(phi[2]))
+}
+
+// residuals evaluates e at the points, with the gain in f.
+func (m *matcher) residuals(f *found) {
+	m.res = m.res[:0]
+	for q := range m.at {
+		m.res = append(m.res, float32(float64(m.v[q])-float64(f.gainAt(m.phi[q])*float64(m.r[q]))))
+	}
+}
+
+// step solves the weighted normal equations once. It updates the gain in f and
+// returns the twist about the centre by which the pose is to move.
+func (m *matcher) step(f *found, e effort) (Twist, bool) {
+	m.residuals(f)
+	var bySlice []float64
+	cut := 0.0
+	if e.robust {
+		bySlice = sliceWeights(m.sliceResiduals(int(slices.Max(m.slice)) + 1))
+		cut = float64(tukeyCut * madScale * float64(m.medianAbs()))
+	}
+	var n normal
+	for q, r32 := range m.res {
+		r := float64(r32)
+		w := 1.0
+		if e.robust {
+			w = bySlice[m.slice[q]]
+			if u := r / cut; cut > 0 {
+				if u = 1 - float64(u*u); u <= 0 {
+					continue
+				}
+				w = float64(w * float64(u*u))
+			}
+		}
+		n.add(&m.jac[q], &m.phi[q], f.gainAt(m.phi[q]), float64(m.r[q]), r, w)
+	}
+	h, g := n.system()
+	d, ok := solve(&h, &g)
+	if !ok {
+		return Twist{}, false
+	}
+	for a := range 4 {
+		f.gain[a] -= d[6+a]
+	}
+	return Twist{V: [3]float64{-d[0], -d[1], -d[2]}, W: [3]float64{-d[3], -d[4], -d[5]}}, true
+}
+
+// normal accumulates the weighted normal equations, upper triangle, rows in
+// the order of the unknowns.
+type normal struct {
+	pp [21]float64   // pose with pose
+	pg [6][4]float64 // pose with gain
+	gg [10]float64   // gain with gain
+	p  [6]float64    // pose with residual
+	g  [4]float64    // gain with residual
+}
+
+// add enters one point: de/dd = gain*jac, de/db = -ref*(1, phi).
+func (n *normal) add(jac *[6]float32, phi *[3]float32, gain, ref, r, w float64) {
+	var j [6]float64
+	for a := range j {
+		j[a] = float64(gain * float64(jac[a]))
+	}
+	f := [4]float64{-ref, -float64(ref * float64(phi[0])), -float64(ref * float64(phi[1])), -float64(ref * float64(phi[2]))}
+	at := 0
+	for a := range j {
+		wj := float64(w * j[a])
+		n.p[a] += float64(wj * r)
+		for b := a; b < 6; b++ {
+			n.pp[at] += float64(wj * j[b])
+			at++
+		}
+		row := &n.pg[a]
+		row[0] += float64(wj * f[0])
+		row[1] += float64(wj * f[1])
+		row[2] += float64(wj * f[2])
+		row[3] += float64(wj * f[3])
+	}
+	at = 0
+	for a := range f {
+		wf := float64(w * f[a])
+		n.g[a] += float64(wf * r)
+		for b := a; b < 4; b++ {
+			n.gg[at] += float64(wf * f[b])
+			at++
+		}
+	}
+}
+
+// system lays the sums out as H d = g.
+func (n *normal) system() (h [unknowns][unknowns]float64, g [unknowns]float64) {
+	at := 0
+	for a := range 6 {
+		g[a] = n.p[a]
+		for b := a; b < 6; b++ {
+			h[a][b] = n.pp[at]
+			at++
+		}
+		for b := range 4 {
+			h[a][6+b] = n.pg[a][b]
+		}
+	}
+	at = 0
+	for a := range 4 {
+		g[6+a] = n.g[a]
+		for b := a; b < 4; b++ {
+			h[6+a][6+b] = n.gg[at]
+			at++
+		}
+	}
+	return h, g
+}
+
+// Tukey's biweight: 95 % efficient for normal residuals at 4.685 scales; a
+// median absolute deviation of normal residuals is 1/1.4826 of their scale
+// (both recomputed in references, section 5.7).
+const (
+	tukeyCut = 4.685
+	madScale = 1.4826
+)
+
+// sliceResiduals gives the rms residual of each of n slices over that of the
+// median slice; 0 for a slice without points.
+func (m *matcher) sliceResiduals(n int) []float64 {
+	sum, count := make([]float64, n), make([]float64, n)
+	for q, r := range m.res {
+		sum[m.slice[q]] += float64(float64(r) * float64(r))
+		count[m.slice[q]]++
+	}
+	var seen []float32
+	for s := range sum {
+		if count[s] > 0 {
+			sum[s] = math.Sqrt(sum[s] / count[s])
+			seen = append(seen, float32(sum[s]))
+		}
+	}
+	mid := float64(median(seen))
+	if !(mid > 0) {
+		return make([]float64, n)
+	}
+	for s := range sum {
+		sum[s] /= mid
+	}
+	return sum
+}
+
+// sliceShares gives the rms residual of each of n slices over the rms of the
+// template there; 0 for a slice without points.
+func (m *matcher) sliceShares(n int) []float64 {
+	share, signal := make([]float64, n), make([]float64, n)
+	for q, r := range m.res {
+		share[m.slice[q]] += float64(float64(r) * float64(r))
+		signal[m.slice[q]] += float64(float64(m.r[q]) * float64(m.r[q]))
+	}
+	for s := range share {
+		if signal[s] > 0 {
+			share[s] = math.Sqrt(share[s] / signal[s])
+		}
+	}
+	return share
+}
+
+// sliceWeights lowers the weight of slices whose residual stands out: with z
+// the slice's rms over the median slice's, w = min(1, (1.5/z)^4). A slice lost
+// to a spike or to motion during its excitation then counts next to nothing,
+// one that is merely noisier keeps most of its weight.
+func sliceWeights(z []float64) []float64 {
+	w := make([]float64, len(z))
+	for s := range w {
+		w[s] = 1
+		if u := 1.5 / z[s]; z[s] > 1.5 {
+			u = float64(u * u)
+			w[s] = float64(u * u)
+		}
+	}
+	return w
+}
+
+// medianAbs is the median absolute residual.
+func (m *matcher) medianAbs() float32 {
+	m.order = m.order[:0]
+	for _, r := range m.res {
+		m.order = append(m.order, float32(math.Abs(float64(r))))
+	}
+	return median(m.order)
+}
+
+// median returns the upper median and reorders v. (Hoare 1961, CACM 4:321.)
+func median(v []float32) float32 {
+	if len(v) == 0 {
+		return 0
+	}
+	lo, hi, k := 0, len(v)-1, len(v)/2
+	for lo < hi {
+		pivot := v[lo+(hi-lo)/2]
+		i, j := lo, hi
+		for i <= j {
+			for v[i] < pivot {
+				i++
+			}
+			for v[j] > pivot {
+				j--
+			}
+			if i <= j {
+				v[i], v[j] = v[j], v[i]
+				i++
+				j--
+			}
+		}
+		switch {
+		case k <= j:
+			hi = j
+		case k >= i:
+			lo = i
+		default:
+			return v[k]
+		}
+	}
+	return v[k]
+}
+
+// correlation is Pearson's, between volume and template over the head, by
+// weight of slice (nil: all alike).
+func (m *matcher) correlation(weights []float64) float64 {
+	weight := func(q int) float64 {
+		if !m.head[q] {
+			return 0
+		}
+		if weights == nil {
+			return 1
+		}
+		return weights[m.slice[q]]
+	}
+	var n, sv, sr float64
+	for q := range m.head {
+		w := weight(q)
+		n += w
+		sv += float64(w * float64(m.v[q]))
+		sr += float64(w * float64(m.r[q]))
+	}
+	if n < 2 {
+		return 0
+	}
+	mv, mr := sv/n, sr/n
+	var vv, rr, vr float64
+	for q := range m.head {
+		w := weight(q)
+		a, b := float64(m.v[q])-mv, float64(m.r[q])-mr
+		vv += float64(float64(w*a) * a)
+		rr += float64(float64(w*b) * b)
+		vr += float64(float64(w*a) * b)
+	}
+	if !(vv > 0 && rr > 0) {
+		return 0
+	}
+	return vr / math.Sqrt(float64(vv*rr))
+}
+
+// solve returns x with H x = g for the upper triangle of a symmetric positive
+// definite H, by Cholesky after scaling the diagonal to one; ok is false where
+// H is not definite to working precision.
+func solve(h *[unknowns][unknowns]float64, g *[unknowns]float64) (x [unknowns]float64, ok bool) {
+	var s [unknowns]float64
+	for a := range s {
+		if !(h[a][a] > 0) {
+			return x, false
+		}
+		s[a] = 1 / math.Sqrt(h[a][a])
+	}
+	var l [unknowns][unknowns]float64
+	for a := range unknowns {
+		for b := 0; b <= a; b++ {
+			v := float64(float64(h[b][a]*s[a]) * s[b])
+			for c := range b {
+				v -= float64(l[a][c] * l[b][c])
+			}
+			if a == b {
+				if !(v > 1e-12) {
+					return x, false
+				}
+				l[a][a] = math.Sqrt(v)
+			} else {
+				l[a][b] = v / l[b][b]
+			}
+		}
+	}
+	for a := range unknowns {
+		v := float64(g[a] * s[a])
+		for c := range a {
+			v -= float64(l[a][c] * x[c])
+		}
+		x[a] = v / l[a][a]
+	}
+	for a := unknowns - 1; a >= 0; a-- {
+		v := x[a]
+		for c := a + 1; c < unknowns; c++ {
+			v -= float64(l[c][a] * x[c])
+		}
+		x[a] = v / l[a][a]
+	}
+	for a := range x {
+		x[a] = float64(x[a] * s[a])
+	}
+	return x, true
+}

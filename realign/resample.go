@@ -1,0 +1,47 @@
+package realign
+
+// Resampler interpolates volumes of one size by B-splines with exact prefilter
+// and the boundary rule [Odd]. It owns its scratch and belongs to one
+// goroutine.
+type Resampler struct {
+	s       *spline
+	x, y, z []float64
+}
+
+// NewResampler prepares for volumes of n voxels. Degree 3 is cubic, 5 quintic;
+// any other panics.
+func NewResampler(n [3]int, degree int) *Resampler {
+	return &Resampler{
+		s: newSpline(n, degree, Odd),
+		x: make([]float64, n[0]), y: make([]float64, n[0]), z: make([]float64, n[0]),
+	}
+}
+
+// Load takes a volume and computes its spline coefficients; vol is not kept.
+func (r *Resampler) Load(vol []float32) { r.s.load(vol) }
+
+// Eval fills dst, of the size of the volume loaded, with values at the places
+// m gives. A point outside the field takes the value of the nearest point on
+// the field's edge (the centre of its outermost voxel), so that every value is
+// finite; how much of the head that concerns is reported as Outside.
+func (r *Resampler) Eval(dst []float32, m Map) {
+	nx, ny, nz := r.s.n[0], r.s.n[1], r.s.n[2]
+	if len(dst) != nx*ny*nz {
+		panic("realign: output and volume differ in size")
+	}
+	for k := range nz {
+		for j := range ny {
+			m.Row(j, k, r.x, r.y, r.z)
+			row := dst[nx*(j+ny*k):][:nx]
+			if r.s.degree == 5 {
+				for i := range row {
+					row[i] = r.s.value5(r.x[i], r.y[i], r.z[i])
+				}
+			} else {
+				for i := range row {
+					row[i] = r.s.value3(r.x[i], r.y[i], r.z[i])
+				}
+			}
+		}
+	}
+}

@@ -1,0 +1,81 @@
+package realign
+
+// template is a reference prepared for matching at one level of smoothing. It
+// is read-only once made.
+type template struct {
+	g      Grid
+	inv    [16]float64 // world mm to voxel index
+	s      *spline     // the smoothed reference
+	usable []bool      // by nearest voxel: the head and a rim, less what the margins and gaps forbid
+	head   []bool      // by nearest voxel: the head
+	centre [3]float64  // world mm
+	margin [3]float64  // voxels left out at each field edge
+}
+
+// newTemplate takes the smoothed reference vol and the head on its grid.
+// unknown marks voxels where the reference is not known (outside the field of
+// most volumes averaged), or is nil.
+func newTemplate(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]float64, centre [3]float64, degree int) *template {
+	t := &template{g: g, inv: mustInvert(g.Affine), head: head, centre: centre, margin: margin}
+	t.s = newSpline(g.N, degree, Odd)
+	t.s.load(vol)
+	t.usable = dilate(head, g.N, rim)
+	if unknown != nil {
+		// A spline and a filter reach about two voxels.
+		for i, u := range dilate(unknown, g.N, 2) {
+			t.usable[i] = t.usable[i] && !u
+		}
+	}
+	return t
+}
+
+// edgeMargin is how many voxels are left out at each end of an axis of n
+// voxels: want, but never so many that fewer than four planes are left. Margins
+// matter because nothing is known past the field: whatever continues the data
+// there bends the outermost planes (numerics, section 0).
+func edgeMargin(n int, want float64) float64 {
+	return max(0, min(want, float64(n-4)/2))
+}
+
+func edgeMargins(n [3]int, want float64) (m [3]float64) {
+	for a := range m {
+		m[a] = edgeMargin(n[a], want)
+	}
+	return m
+}
+
+// inMargin reports whether a voxel coordinate keeps clear of the field's edges.
+func (t *template) inMargin(x [3]float64) bool {
+	for a := range x {
+		if !(x[a] >= t.margin[a] && x[a] <= float64(t.g.N[a]-1)-t.margin[a]) {
+			return false
+		}
+	}
+	return true
+}
+
+// nearest is the flat index of the voxel nearest to a coordinate in the field.
+func (t *template) nearest(x [3]float64) int {
+	i, j, k := int(x[0]+0.5), int(x[1]+0.5), int(x[2]+0.5)
+	return i + t.g.N[0]*(j+t.g.N[1]*k)
+}
+
+// smoothMask carries a head mask to a thinned grid: a voxel is inside if the
+// nearest voxel of the full grid is.
+func thinMask(mask []bool, n [3]int, s *smoother) []bool {
+	out := make([]bool, s.out[0]*s.out[1]*s.out[2])
+	i := 0
+	for z := range s.out[2] {
+		for y := range s.out[1] {
+			for x := range s.out[0] {
+				at := [3]int{x, y, z}
+				for a := range at {
+					at[a] = s.first[a] + at[a]*s.stride[a]
+				}
+				out[i] = mask[at[0]+n[0]*(at[1]+n[1]*at[2])]
+				i++
+			}
+		}
+	}
+	return out
+}
