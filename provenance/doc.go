@@ -59,8 +59,9 @@
 //  4. Parse is strict about what it knows and passes over keys, attributes and
 //     records that it does not know. It never panics, whatever the bytes, and
 //     every refusal is an [*Error] that names the record and the field.
-//  5. Auditing reads nothing outside the output folder and the raw dataset: a
-//     symbolic link that leads out of the output folder is not followed.
+//  5. Auditing follows no symbolic link that leads out of the output folder.
+//     Links of the raw dataset are followed wherever they lead, as annexed
+//     datasets need, but only for paths that a record names as inputs.
 //
 // That nothing in a record identifies a person is for the callers to see to:
 // they copy sidecar fields by an allow-list.
