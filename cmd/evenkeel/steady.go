@@ -79,8 +79,10 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 	for _, p := range found.plans {
 		if p.Runs() {
 			runs++
-			for _, f := range p.Faults {
-				s.log.fault(p.Run.Stem, f) // warnings; those that refuse come with the run's end
+		}
+		for _, f := range p.Faults {
+			if f.Level == fault.Warn { // those that refuse come with the run's end
+				s.log.fault(p.Run.Stem, f)
 			}
 		}
 	}
@@ -125,7 +127,9 @@ func (s *session) ended(run string, o *pipeline.Outcome) {
 		s.log.info("up-to-date", run+": up to date", f)
 	case pipeline.RefusedRun:
 		for _, x := range o.Faults {
-			s.log.fault(run, x)
+			if x.Level == fault.Refuse {
+				s.log.fault(run, x)
+			}
 		}
 		s.log.info("refused", run+": refused", f)
 	case pipeline.Interrupted:

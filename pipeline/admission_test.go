@@ -1,0 +1,132 @@
+package pipeline
+
+import (
+	"context"
+	"errors"
+	"os"
+	"path/filepath"
+	"sync"
+	"sync/atomic"
+	"testing"
+	"time"
+)
+
+// At no time do admitted runs hold more than the budget together, and all are
+// admitted in the end.
+func TestAdmissionKeepsTheBudget(t *testing.T) {
+	const budget = 100
+	a := newAdmission(budget)
+	var held, worst atomic.Int64
+	var wg sync.WaitGroup
+	for i := range 50 {
+		need := int64(10 + 13*i%90)
+		if err := a.acquire(context.Background(), need); err != nil {
+			t.Fatal(err)
+		}
+		now := held.Add(need)
+		for w := worst.Load(); now > w && !worst.CompareAndSwap(w, now); w = worst.Load() {
+		}
+		wg.Add(1)
+		go func() {
+			defer wg.Done()
+			time.Sleep(time.Millisecond)
+			held.Add(-need)
+			a.release(need)
+		}()
+	}
+	wg.Wait()
+	if worst.Load() > budget {
+		t.Errorf("%d held at once, of %d", worst.Load(), budget)
+	}
+	if worst.Load() <= 60 {
+		t.Errorf("at most %d held at once: runs did not run together", worst.Load())
+	}
+}
+
+func TestAdmissionStopsWithTheContext(t *testing.T) {
+	a := newAdmission(10)
+	if err := a.acquire(context.Background(), 10); err != nil {
+		t.Fatal(err)
+	}
+	ctx, cancel := context.WithCancel(context.Background())
+	time.AfterFunc(10*time.Millisecond, cancel)
+	if err := a.acquire(ctx, 1); !errors.Is(err, context.Canceled) {
+		t.Errorf("got %v", err)
+	}
+}
+
+// A unit takes fewer goroutines rather than more memory than there is.
+func TestUnitFitsTheBudget(t *testing.T) {
+	p := sized("a", "a", 100)
+	p.Volumes = 100
+	u := unit{[]*Plan{p}}
+	if w, need := u.fit(8, 1<<40); w != 8 || need != p.Memory(8) {
+		t.Errorf("%d workers, %d bytes", w, need)
+	}
+	if w, need := u.fit(8, p.Memory(3)); w != 3 || need != p.Memory(3) {
+		t.Errorf("%d workers, %d bytes, want 3", w, need)
+	}
+	if p.Memory(2) <= p.Memory(1) || p.Memory(1) < 4*64*100 {
+		t.Errorf("memory %d, %d", p.Memory(1), p.Memory(2))
+	}
+}
+
+func TestParseBytes(t *testing.T) {
+	for v, want := range map[string]int64{"8GiB": 8 << 30, "1MB": 1 << 20, "512m": 512 << 20, "100": 100} {
+		if n, err := ParseBytes("--memory", v); err != nil || n != want {
+			t.Errorf("%s: %d %v", v, n, err)
+		}
+	}
+	for _, v := range []string{"", "0", "-1GiB", "much"} {
+		var usage *UsageError
+		if _, err := ParseBytes("--memory", v); !errors.As(err, &usage) {
+			t.Errorf("%q: %v", v, err)
+		}
+	}
+}
+
+func TestMemAvailable(t *testing.T) {
+	name := filepath.Join(t.TempDir(), "meminfo")
+	os.WriteFile(name, []byte("MemTotal:       24000000 kB\nMemFree:        100 kB\nMemAvailable:   2048 kB\n"), 0o644)
+	if n, ok := memAvailable(name); !ok || n != 2<<20 {
+		t.Error(n, ok)
+	}
+	if _, ok := memAvailable(filepath.Join(t.TempDir(), "none")); ok {
+		t.Error("a missing file told a size")
+	}
+}
+
+// A lock is held by one at a time, waited for, and leaves no file.
+func TestLock(t *testing.T) {
+	name := filepath.Join(t.TempDir(), ".run.lock")
+	first, err := lockFile(context.Background(), name, nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	waited := make(chan struct{})
+	got := make(chan *fileLock)
+	go func() {
+		second, err := lockFile(context.Background(), name, func() { close(waited) })
+		if err != nil {
+			t.Error(err)
+		}
+		got <- second
+	}()
+	<-waited
+	select {
+	case <-got:
+		t.Fatal("two hold one lock")
+	case <-time.After(2 * lockPoll):
+	}
+	first.release()
+	second := <-got
+	ctx, cancel := context.WithCancel(context.Background())
+	time.AfterFunc(10*time.Millisecond, cancel)
+	if _, err := lockFile(ctx, name, nil); !errors.Is(err, context.Canceled) {
+		t.Errorf("waiting did not end with the context: %v", err)
+	}
+	second.release()
+	if _, err := os.Stat(name); !os.IsNotExist(err) {
+		t.Error("the lock's file was left behind")
+	}
+}
