@@ -1,9 +1,6 @@
 package realign
 
-import (
-	"math"
-	"slices"
-)
+import "math"
 
 // gainReach scales the polynomial of the gain: a coefficient of 0.1 means 10 %
 // over 80 mm, the radius of a head.
@@ -41,22 +38,31 @@ type effort struct {
 // matcher aligns smoothed volumes with a template. It owns its scratch and
 // belongs to one goroutine.
 type matcher struct {
-	at    [][3]int16   // voxel of the volume
-	v     []float32    // its value there
-	r     []float32    // template at the matching point
-	jac   [][6]float32 // gradient and moment of the template there, per mm and per rad
-	phi   [][3]float32 // scanner coordinates for the gain, from the centre, / gainReach
-	head  []bool       // inside the head
-	slice []int32
-	res   []float32
+	pts   []point
+	v     []float32 // value of the volume at the point
+	r     []float32 // value of the template
+	res   []float32 // residual
 	order []float32 // scratch of the median
 }
 
-// select lists the voxels of vol that take part at the pose and evaluates the
-// template and its derivatives at their matching points.
+// point is one voxel of the volume with the template at its matching point.
+type point struct {
+	at    [3]int16
+	slice int16
+	head  bool       // inside the head
+	phi   [3]float32 // scanner coordinates for the gain, from the centre, / gainReach
+	jac   [6]float32 // gradient and moment of the template, per mm and per rad
+}
+
+// selectPoints lists the voxels of vol that take part at the pose and evaluates
+// the template and its derivatives at their matching points.
 func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
-	m.at, m.v, m.r, m.jac, m.phi, m.head, m.slice = m.at[:0], m.v[:0], m.r[:0], m.jac[:0], m.phi[:0], m.head[:0], m.slice[:0]
 	n := t.g.N
+	if cap(m.pts) < len(vol) {
+		m.pts = make([]point, 0, len(vol))
+		m.v, m.r, m.res, m.order = make([]float32, 0, len(vol)), make([]float32, 0, len(vol)), make([]float32, 0, len(vol)), make([]float32, 0, len(vol))
+	}
+	m.pts, m.v, m.r = m.pts[:0], m.v[:0], m.r[:0]
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
 	var lo, hi [3]int
 	for a := range lo {
@@ -87,19 +93,17 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				}
 				yw := applyAffine(&t.g.Affine, y[0], y[1], y[2])
 				xw := t.g.world(float64(i), float64(j), float64(k))
-				var phi [3]float32
+				q := point{at: [3]int16{int16(i), int16(j), int16(k)}, head: t.head[near]}
+				q.slice = q.at[e.sliceAxis]
 				for a := range yw {
 					yw[a] -= t.centre[a]
-					phi[a] = float32((xw[a] - t.centre[a]) / gainReach)
+					q.phi[a] = float32((xw[a] - t.centre[a]) * (1.0 / gainReach))
 				}
 				mo := cross(yw, gw)
-				m.at = append(m.at, [3]int16{int16(i), int16(j), int16(k)})
+				q.jac = [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(mo[0]), float32(mo[1]), float32(mo[2])}
+				m.pts = append(m.pts, q)
 				m.v = append(m.v, vol[i+n[0]*(j+n[1]*k)])
 				m.r = append(m.r, v)
-				m.jac = append(m.jac, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(mo[0]), float32(mo[1]), float32(mo[2])})
-				m.phi = append(m.phi, phi)
-				m.head = append(m.head, t.head[near])
-				m.slice = append(m.slice, int32([3]int{i, j, k}[e.sliceAxis]))
 			}
 		}
 	}
@@ -108,7 +112,8 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 // revalue evaluates the template anew at another pose, derivatives kept.
 func (m *matcher) revalue(t *template, p Pose) {
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
-	for q, at := range m.at {
+	for q := range m.pts {
+		at := &m.pts[q].at
 		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
 		m.r[q] = t.s.value(y[0], y[1], y[2])
 	}
@@ -120,7 +125,7 @@ func (m *matcher) revalue(t *template, p Pose) {
 func (m *matcher) extrapolate(d Twist) {
 	d32 := [6]float32{float32(d.V[0]), float32(d.V[1]), float32(d.V[2]), float32(d.W[0]), float32(d.W[1]), float32(d.W[2])}
 	for q := range m.r {
-		j := &m.jac[q]
+		j := &m.pts[q].jac
 		a := float32(j[0]*d32[0]) + float32(j[1]*d32[1]) + float32(j[2]*d32[2])
 		b := float32(j[3]*d32[3]) + float32(j[4]*d32[4]) + float32(j[5]*d32[5])
 		m.r[q] -= a + b
@@ -152,10 +157,10 @@ func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found 
 	taken, valued := start, start
 	f.gain[0] = m.ratio()
 	for f.iterations < e.iterations {
-		if f.points = len(m.at); f.points < 10*unknowns {
+		if f.points = len(m.pts); f.points < 10*unknowns {
 			return f // hardly any overlap: fit stays 0
 		}
-		step, ok := m.step(&f, e)
+		step, ok := m.step(&f, e, t.g.N[e.sliceAxis])
 		f.iterations++
 		if !ok {
 			return f
@@ -222,34 +227,35 @@ func (m *matcher) ratio() float64 {
 }
 
 // gainAt is the gain at point q.
-func (f *found) gainAt(phi [3]float32) float64 {
+func (f *found) gainAt(phi *[3]float32) float64 {
 	return f.gain[0] + float64(f.gain[1]*float64(phi[0])) + float64(f.gain[2]*float64(phi[1])) + float64(f.gain[3]*float64(phi[2]))
 }
 
 // residuals evaluates e at the points, with the gain in f.
 func (m *matcher) residuals(f *found) {
 	m.res = m.res[:0]
-	for q := range m.at {
-		m.res = append(m.res, float32(float64(m.v[q])-float64(f.gainAt(m.phi[q])*float64(m.r[q]))))
+	for q := range m.pts {
+		m.res = append(m.res, float32(float64(m.v[q])-float64(f.gainAt(&m.pts[q].phi)*float64(m.r[q]))))
 	}
 }
 
 // step solves the weighted normal equations once. It updates the gain in f and
-// returns the twist about the centre by which the pose is to move.
-func (m *matcher) step(f *found, e effort) (Twist, bool) {
+// returns the twist about the centre by which the pose is to move. n is the
+// number of slices.
+func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
 	m.residuals(f)
 	var bySlice []float64
 	cut := 0.0
 	if e.robust {
-		bySlice = sliceWeights(m.sliceResiduals(int(slices.Max(m.slice)) + 1))
+		bySlice = sliceWeights(m.sliceResiduals(n))
 		cut = float64(tukeyCut * madScale * float64(m.medianAbs()))
 	}
-	var n normal
+	var sum normal
 	for q, r32 := range m.res {
 		r := float64(r32)
 		w := 1.0
 		if e.robust {
-			w = bySlice[m.slice[q]]
+			w = bySlice[m.pts[q].slice]
 			if u := r / cut; cut > 0 {
 				if u = 1 - float64(u*u); u <= 0 {
 					continue
@@ -257,9 +263,10 @@ func (m *matcher) step(f *found, e effort) (Twist, bool) {
 				w = float64(w * float64(u*u))
 			}
 		}
-		n.add(&m.jac[q], &m.phi[q], f.gainAt(m.phi[q]), float64(m.r[q]), r, w)
+		p := &m.pts[q]
+		sum.add(&p.jac, &p.phi, f.gainAt(&p.phi), float64(m.r[q]), r, w)
 	}
-	h, g := n.system()
+	h, g := sum.system()
 	d, ok := solve(&h, &g)
 	if !ok {
 		return Twist{}, false
@@ -349,8 +356,8 @@ const (
 func (m *matcher) sliceResiduals(n int) []float64 {
 	sum, count := make([]float64, n), make([]float64, n)
 	for q, r := range m.res {
-		sum[m.slice[q]] += float64(float64(r) * float64(r))
-		count[m.slice[q]]++
+		sum[m.pts[q].slice] += float64(float64(r) * float64(r))
+		count[m.pts[q].slice]++
 	}
 	var seen []float32
 	for s := range sum {
@@ -374,8 +381,8 @@ func (m *matcher) sliceResiduals(n int) []float64 {
 func (m *matcher) sliceShares(n int) []float64 {
 	share, signal := make([]float64, n), make([]float64, n)
 	for q, r := range m.res {
-		share[m.slice[q]] += float64(float64(r) * float64(r))
-		signal[m.slice[q]] += float64(float64(m.r[q]) * float64(m.r[q]))
+		share[m.pts[q].slice] += float64(float64(r) * float64(r))
+		signal[m.pts[q].slice] += float64(float64(m.r[q]) * float64(m.r[q]))
 	}
 	for s := range share {
 		if signal[s] > 0 {
@@ -448,16 +455,16 @@ func median(v []float32) float32 {
 // weight of slice (nil: all alike).
 func (m *matcher) correlation(weights []float64) float64 {
 	weight := func(q int) float64 {
-		if !m.head[q] {
+		if !m.pts[q].head {
 			return 0
 		}
 		if weights == nil {
 			return 1
 		}
-		return weights[m.slice[q]]
+		return weights[m.pts[q].slice]
 	}
 	var n, sv, sr float64
-	for q := range m.head {
+	for q := range m.pts {
 		w := weight(q)
 		n += w
 		sv += float64(w * float64(m.v[q]))
@@ -468,7 +475,7 @@ func (m *matcher) correlation(weights []float64) float64 {
 	}
 	mv, mr := sv/n, sr/n
 	var vv, rr, vr float64
-	for q := range m.head {
+	for q := range m.pts {
 		w := weight(q)
 		a, b := float64(m.v[q])-mv, float64(m.r[q])-mr
 		vv += float64(float64(w*a) * a)
