@@ -211,6 +211,9 @@ type source struct {
 	faults []fault.Fault
 	err    error
 	inputs []Input // series, then sidecars root to leaf
+	// echoTime is known also where the image cannot be read: which echo is the
+	// shortest must not depend on which were fetched.
+	echoTime float64
 }
 
 // look reads a run's header and sidecars.
@@ -260,12 +263,15 @@ func look(ds *dataset.Dataset, r dataset.Run) (s *source) {
 	doc, faults := sidecar.Merge(docs)
 	s.faults = append(s.faults, faults...)
 	if s.header == nil {
+		a, _ := doc.Acquisition(sidecar.Geometry{File: r.File})
+		s.echoTime = a.EchoTime
 		return s
 	}
 	g := sidecar.Geometry{File: r.File, SliceDim: s.header.SliceDim()}
 	g.Size[0], g.Size[1], g.Size[2], g.Size[3] = s.header.Size()
 	g.TRSec, _ = s.header.SecondsPerVolume()
 	s.acq, faults = doc.Acquisition(g)
+	s.echoTime = s.acq.EchoTime
 	s.faults = append(s.faults, faults...)
 	return s
 }
@@ -408,13 +414,13 @@ func shortest(echoes []*source) *source {
 	}
 	known := true
 	for _, e := range echoes {
-		known = known && e.acq != nil && e.acq.EchoTime > 0
+		known = known && e.echoTime > 0
 	}
 	best := echoes[0]
 	for _, e := range echoes[1:] {
 		switch {
-		case known && e.acq.EchoTime != best.acq.EchoTime:
-			if e.acq.EchoTime < best.acq.EchoTime {
+		case known && e.echoTime != best.echoTime:
+			if e.echoTime < best.echoTime {
 				best = e
 			}
 		case index(e) < index(best):

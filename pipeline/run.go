@@ -286,6 +286,11 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	if err != nil {
 		return nil, err
 	}
+	// A volume that is the reference itself stands at the identity by
+	// definition; the rounding of its estimate must not have it resampled.
+	if word := p.Settings.Reference.Word; word != "mean" && word != "sbref" && est.ReferenceIndex >= 0 {
+		est.Volumes[est.ReferenceIndex].Pose = realign.Identity
+	}
 	po.est = est
 	return po, nil
 }

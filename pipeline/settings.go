@@ -10,6 +10,7 @@ import (
 	"strings"
 
 	"evenkeel/fault"
+	"evenkeel/provenance"
 )
 
 // Settings holds every choice that can change a byte of the output, and nothing
@@ -289,8 +290,8 @@ func (s Settings) MarshalJSON() ([]byte, error) {
 	return b.Bytes(), nil
 }
 
-// ReadSettings changes s as a settings object says: that of an earlier record, or
-// a hand-written part of one. Reading is strict: an unknown or repeated key, a
+// ReadSettings changes s as a settings object says: that of an earlier record (the
+// record itself will do), or a hand-written part of one. Reading is strict: an unknown or repeated key, a
 // value of the wrong type or anything after the object gives a [*UsageError]
 // that names file and key.
 func (s *Settings) ReadSettings(file string, data []byte) error {
@@ -300,6 +301,10 @@ func (s *Settings) ReadSettings(file string, data []byte) error {
 			where += ": " + key
 		}
 		return &UsageError{Where: where, Message: fmt.Sprintf(format, args...)}
+	}
+	// A whole record stands for the settings in it.
+	if r, err := provenance.Parse(data); err == nil {
+		data = r.Settings
 	}
 	dec := json.NewDecoder(bytes.NewReader(data))
 	dec.UseNumber()

@@ -43,7 +43,7 @@ func settingFlags() []cli.Flag {
 			out = append(out, &cli.StringFlag{Name: c.Option(), Usage: usage, Value: c.Default()})
 		}
 	}
-	return append(out, &cli.StringFlag{Name: "settings", Usage: "the settings object of an earlier record, or a part of one, in `FILE`; options given beside it win"})
+	return append(out, &cli.StringFlag{Name: "settings", Usage: "`FILE`: an earlier record, its settings object, or a part of one; options given beside it win"})
 }
 
 func memoryFlag() cli.Flag {
