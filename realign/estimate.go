@@ -452,6 +452,9 @@ func (e *estimator) roughEffort() effort {
 // refine matches at the fine level from a coarse pose: most of the way on half
 // of the voxels, the rest as how says.
 func (e *estimator) refine(w *workspace, m *model, start Pose, how effort) found {
+	if how.thin {
+		return w.m.match(m.fine, w.vFine, start, how)
+	}
 	near := how
 	near.thin, near.tolerance = true, max(how.tolerance, coarseTolerance)
 	a := w.m.match(m.fine, w.vFine, start, near)

@@ -64,6 +64,10 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 	}
 	m.pts, m.v, m.r = m.pts[:0], m.v[:0], m.r[:0]
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
+	toCentre := t.g.Affine // voxel index to mm from the centre
+	for a := range t.centre {
+		toCentre[4*a+3] -= t.centre[a]
+	}
 	var lo, hi [3]int
 	for a := range lo {
 		lo[a] = int(math.Ceil(t.margin[a]))
@@ -91,13 +95,12 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				for a := range gw {
 					gw[a] = float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])
 				}
-				yw := applyAffine(&t.g.Affine, y[0], y[1], y[2])
-				xw := t.g.world(float64(i), float64(j), float64(k))
+				yw := applyAffine(&toCentre, y[0], y[1], y[2])
+				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
 				q := point{at: [3]int16{int16(i), int16(j), int16(k)}, head: t.head[near]}
 				q.slice = q.at[e.sliceAxis]
-				for a := range yw {
-					yw[a] -= t.centre[a]
-					q.phi[a] = float32((xw[a] - t.centre[a]) * (1.0 / gainReach))
+				for a := range xw {
+					q.phi[a] = float32(xw[a] * (1.0 / gainReach))
 				}
 				mo := cross(yw, gw)
 				q.jac = [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(mo[0]), float32(mo[1]), float32(mo[2])}
