@@ -18,17 +18,6 @@ type member struct {
 
 func (o *object) add(key string, value any) { *o = append(*o, member{key, value}) }
 
-// set replaces the member of that key, or adds it.
-func (o *object) set(key string, value any) {
-	for i := range *o {
-		if (*o)[i].key == key {
-			(*o)[i].value = value
-			return
-		}
-	}
-	o.add(key, value)
-}
-
 func (o object) MarshalJSON() ([]byte, error) {
 	var b bytes.Buffer
 	b.WriteByte('{')

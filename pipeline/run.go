@@ -14,6 +14,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"runtime"
 	"slices"
 	"time"
 
@@ -89,7 +90,6 @@ type posed struct {
 	digest    *digester         // of the pose series
 	reference *digester         // of the sbref, nil if none was used
 	sbref     []float32
-	seconds   float64
 }
 
 // run does the plans of a unit; the result has one outcome a plan. It holds at most one
@@ -106,7 +106,11 @@ func (w *worker) run(ctx context.Context, u unit) []Outcome {
 			order = append(order, i)
 		}
 	}
-	for _, i := range order {
+	for k, i := range order {
+		if k > 0 {
+			// The series of the echo before makes room for the next.
+			runtime.GC()
+		}
 		p := u.plans[i]
 		figures, extra, err := w.one(ctx, p, &shared)
 		out[i] = ended(p, figures, extra, err)

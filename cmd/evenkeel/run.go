@@ -21,8 +21,6 @@ type session struct {
 	stdin          io.Reader
 	stdout, stderr io.Writer
 	log            *logger
-
-	code int // what the command's outcomes come to, when it returns no error
 }
 
 // exit is returned by a command that ran its course with a code of its own; it has

@@ -1,0 +1,116 @@
+package pipeline
+
+import (
+	"encoding/json"
+	"math"
+	"strings"
+	"testing"
+
+	"evenkeel/dataset"
+	"evenkeel/realign"
+)
+
+// fourVolumes: still, moved, lost, moved back; shifts only, so that fd is by hand.
+func fourVolumes() (*Plan, *measures, *realign.Estimate) {
+	at := func(x float64) realign.Pose {
+		return realign.FromParams([3]float64{x, 0, 0}, [3]float64{}, [3]float64{1, 2, 3})
+	}
+	est := &realign.Estimate{Centre: [3]float64{1, 2, 3}, Volumes: []realign.Volume{
+		{Pose: realign.Identity, State: realign.Aligned, Fit: 1},
+		{Pose: at(3), State: realign.Doubtful, Fit: 0.5, Outside: 0.25, Reason: "x"},
+		{Pose: at(2), State: realign.Lost, Fit: 0.1, Outside: 0.9, Reason: "y"},
+		{Pose: at(-1), State: realign.Aligned, Fit: 0.9},
+	}}
+	p := &Plan{Run: dataset.Run{Stem: "s", Dir: "d"}, Volumes: 4, Timing: Timing{Rows: []float64{0.5, 2.5, 4.5, 6.5}}}
+	m := &measures{mask: []bool{true, false}}
+	m.measurePoses(est, 4)
+	m.dvarsRaw = []float64{math.NaN(), 1, 2, 3}
+	m.dvarsSteady = []float64{math.NaN(), 0.5, 0.25, 1.5}
+	m.tsnrRaw, m.tsnrSteady = []float32{100, 1}, []float32{120, 1}
+	m.spikes = [][]float64{{0, math.NaN()}, {1, 2}, {-3, 7.5}, {0, 0}}
+	return p, m, est
+}
+
+// What a lost volume's row says, to the byte: contract.md, "its six parameters are
+// n/a"; and what follows for its neighbours.
+func TestPoseTable(t *testing.T) {
+	p, m, _ := fourVolumes()
+	got := string(poseTable(p, m))
+	want := strings.Join([]string{
+		"time\tshift_x\tshift_y\tshift_z\tturn_x\tturn_y\tturn_z\tfd\trms_ball\tdvars_raw\tdvars_steady\toutside\tfit\tstate",
+		"0.500000\t0.000000\t0.000000\t0.000000\t0.0000000\t0.0000000\t0.0000000\tn/a\tn/a\tn/a\tn/a\t0.000000\t1.000000\taligned",
+		"2.500000\t3.000000\t0.000000\t0.000000\t0.0000000\t0.0000000\t0.0000000\t3.000000\t3.000000\t1.000000\t0.500000\t0.250000\t0.500000\tdoubtful",
+		"4.500000\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\t2.000000\t0.250000\tn/a\tn/a\tlost",
+		"6.500000\t-1.000000\t0.000000\t0.000000\t0.0000000\t0.0000000\t0.0000000\tn/a\tn/a\t3.000000\t1.500000\t0.000000\t0.900000\taligned",
+		""}, "\n")
+	if got != want {
+		t.Errorf("got\n%s\nwant\n%s", got, want)
+	}
+}
+
+// A lost volume enters no average; its matrix stands in the description, numeric.
+func TestFigures(t *testing.T) {
+	p, m, est := fourVolumes()
+	f, err := parseFigures(m.qualityFile(p))
+	if err != nil {
+		t.Fatal(err)
+	}
+	want := Figures{Volumes: 4, Aligned: 2, Doubtful: 1, Lost: 1, MeanFD: 3, MaxFD: 3, MeanRMS: 3,
+		MaxShift:     1, // of aligned volumes only: the doubtful one is at 3
+		MeanDVARSRaw: 1, MeanDVARSSteady: 0.5, MedianTSNRRaw: 100, MedianTSNRSteady: 120}
+	if *f != want {
+		t.Errorf("got %+v\nwant %+v", *f, want)
+	}
+	if use := m.counts(); use[2] || !use[1] {
+		t.Errorf("volumes that count: %v", use)
+	}
+	var q struct {
+		Spikes struct {
+			Max                 float64
+			MaxVolume, MaxSlice int
+		}
+	}
+	if err := json.Unmarshal(m.qualityFile(p), &q); err != nil || q.Spikes.Max != 7.5 || q.Spikes.MaxVolume != 2 || q.Spikes.MaxSlice != 1 {
+		t.Errorf("%+v %v", q, err)
+	}
+	var d struct{ Matrices [][4][4]float64 }
+	if err := json.Unmarshal(poseDescription(p, est, est.Centre), &d); err != nil || d.Matrices[2][0][3] != 2 {
+		t.Errorf("the matrix of the lost volume: %v %v", d.Matrices, err)
+	}
+}
+
+func TestLimits(t *testing.T) {
+	f := &Figures{MeanFD: 0.2, MaxFD: 1, MaxShift: math.NaN(), Lost: 2}
+	x := func(v float64) *float64 { return &v }
+	n := func(v int) *int { return &v }
+	for i, c := range []struct {
+		l    Limits
+		want int
+	}{
+		{Limits{}, 0},
+		{Limits{MeanFD: x(0.2), MaxFD: x(1), Lost: n(2)}, 0}, // on the limit is inside
+		{Limits{MeanFD: x(0.19)}, 1},
+		{Limits{MaxFD: x(0.99), MeanFD: x(0)}, 2},
+		{Limits{MaxShift: x(0)}, 0}, // undefined
+		{Limits{Lost: n(1)}, 1},
+	} {
+		if got := c.l.Outside(f); len(got) != c.want {
+			t.Errorf("case %d: %v", i, got)
+		}
+	}
+}
+
+// NaN is null in JSON and comes back; objects keep their order.
+func TestJSONParts(t *testing.T) {
+	o := object{{"b", num(math.NaN())}, {"a", num(math.Copysign(0, -1))}, {"c", []num{1.5, num(math.Inf(1))}}}
+	if got := string(o.file()); got != "{\n  \"b\": null,\n  \"a\": 0,\n  \"c\": [1.5,null]\n}\n" {
+		t.Errorf("got %q", got)
+	}
+	back := num(7)
+	if err := json.Unmarshal([]byte("null"), &back); err != nil || !math.IsNaN(float64(back)) {
+		t.Errorf("null came back as %v (%v)", back, err)
+	}
+	if v := rounded(1.23456789, 3); v != 1.235 {
+		t.Error(v)
+	}
+}
