@@ -26,10 +26,9 @@ func URI(name, path string) string {
 //
 // The standard wants every dataset name that a BIDS URI uses to be a key of
 // DatasetLinks. Where the raw dataset is, is told by RawLink, or else by its
-// DOI. With neither there is nothing true to say: then DatasetLinks is left
-// out, and so must be every URI of the raw dataset, since it could not be
-// resolved: ask [Derivative.SourceURI]. The records still name each raw file,
-// by its path in the raw dataset and its digest.
+// DOI. With neither, the value is [Unlinked], a name that says no more than that
+// the place is not told: the URIs of the raw files are then still the same bytes
+// wherever the output lies, and an audit must be told the place.
 type Derivative struct {
 	Name                      string // "" = one made from SourceName
 	SourceName, SourceVersion string // of the raw dataset; "" = not known
@@ -39,22 +38,18 @@ type Derivative struct {
 	RawLink string
 }
 
-// link is the value of DatasetLinks.raw, or "".
-func (d Derivative) link() string {
-	if d.RawLink != "" {
-		return d.RawLink
-	}
-	return d.SourceDOI
-}
+// Unlinked stands in DatasetLinks for a raw dataset whose place is not told.
+const Unlinked = "urn:evenkeel:place-not-told"
 
-// SourceURI gives the BIDS URI of a file of the raw dataset for a field such
-// as Sources; ok is false when this dataset cannot say where the raw one is,
-// and the URI must be left out.
-func (d Derivative) SourceURI(rel string) (uri string, ok bool) {
-	if d.link() == "" {
-		return "", false
+// link is the value of DatasetLinks.raw.
+func (d Derivative) link() string {
+	switch {
+	case d.RawLink != "":
+		return d.RawLink
+	case d.SourceDOI != "":
+		return d.SourceDOI
 	}
-	return URI(RawName, rel), true
+	return Unlinked
 }
 
 type generator struct {
@@ -95,9 +90,7 @@ func (d Derivative) DescriptionJSON() []byte {
 	if s := (source{URL: d.RawLink, DOI: d.SourceDOI, Version: d.SourceVersion}); s != (source{}) {
 		description.SourceDatasets = []source{s}
 	}
-	if d.link() != "" {
-		description.DatasetLinks = map[string]string{RawName: d.link()}
-	}
+	description.DatasetLinks = map[string]string{RawName: d.link()}
 	var b bytes.Buffer
 	enc := json.NewEncoder(&b)
 	enc.SetEscapeHTML(false)

@@ -26,7 +26,7 @@ var Outputs = []Output{
 	{Desc: "steady", Suffix: "reference", Exts: []string{".nii.gz", ".json"},
 		Content: "the volume that every other was aligned to"},
 	{Desc: "head", Suffix: "mask", Exts: []string{".nii.gz", ".json"}, Named: true,
-		Content: "the voxels that motion was estimated from (1 inside, 0 outside)"},
+		Content: "the head, 1 inside; motion is estimated from it and a rim, figures are taken over it"},
 	{Desc: "steady", Suffix: "pose", Exts: []string{".tsv", ".json"},
 		Content: "the head's position at each volume, one row a volume; the .json describes every column, with its unit"},
 	{Desc: "shots", Suffix: "pose", Exts: []string{".tsv", ".json"}, Later: true,

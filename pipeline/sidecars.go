@@ -94,7 +94,7 @@ func (p *Plan) referenceSidecar() []byte {
 
 func (p *Plan) maskSidecar() []byte {
 	var o object
-	o.add("Description", "Voxels of the reference that belong to the head: 1 inside, 0 outside. Used for estimation and for the figures.")
+	o.add("Description", "The head in the reference: 1 inside, 0 outside. Motion is estimated from these voxels and a rim of two around them, less two planes at each edge of the field of view (fewer in a thin slab); figures are taken over these.")
 	o.add("Type", "Brain")
 	o.add("Sources", []string{dataset.URI("", p.Output("reference"))})
 	o.add("SpatialReference", dataset.URI("", p.Output("reference")))
