@@ -165,7 +165,8 @@ func TestEveryFault(t *testing.T) {
 		delete(cases, k.ID)
 		t.Run(k.ID, func(t *testing.T) {
 			if c.exempt != "" {
-				t.Skip(c.exempt)
+				t.Log(c.exempt)
+				return
 			}
 			t.Parallel()
 			dir := filepath.Join(t.TempDir(), "raw")
