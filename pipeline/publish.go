@@ -22,6 +22,7 @@ import (
 	"hash"
 	"io"
 	"io/fs"
+	"math/rand/v2"
 	"os"
 	"path/filepath"
 	"strings"
@@ -29,12 +30,22 @@ import (
 	"evenkeel/provenance"
 )
 
-// hiddenMark stands between a file's final name and the process that writes it.
-const hiddenMark = ".partial-"
+// hiddenDigits is how many digits a hidden name has after the final one. With the
+// dot in front that is the room that package dataset leaves when it judges
+// whether a stem is too long.
+const hiddenDigits = 10
 
+// hiddenName is a name that no other process picks, on this machine or another that
+// sees the same folder: process numbers repeat from machine to machine.
 func hiddenName(final string) string {
 	dir, base := filepath.Split(final)
-	return filepath.Join(dir, fmt.Sprintf(".%s%s%d", base, hiddenMark, os.Getpid()))
+	return filepath.Join(dir, fmt.Sprintf(".%s%0*d", base, hiddenDigits, rand.Int64N(1e10)))
+}
+
+// isHidden reports whether name is a hidden name of base.
+func isHidden(name, base string) bool {
+	digits, ok := strings.CutPrefix(name, "."+base)
+	return ok && len(digits) == hiddenDigits && strings.Trim(digits, "0123456789") == ""
 }
 
 // A publisher holds the files of one run until all are whole.
@@ -179,7 +190,7 @@ func sweep(out string, outputs []Output) {
 		}
 		for _, e := range entries {
 			for _, base := range bases {
-				if strings.HasPrefix(e.Name(), "."+base+hiddenMark) {
+				if isHidden(e.Name(), base) {
 					os.Remove(filepath.Join(dir, e.Name()))
 				}
 			}
@@ -194,7 +205,6 @@ func replaceFile(name, rel string, data []byte) error {
 		return nil
 	}
 	hidden := hiddenName(name)
-	os.Remove(hidden) // of a dead process that had our number
 	f, err := os.OpenFile(hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
 	if err != nil {
 		return creating(rel, err)

@@ -114,11 +114,11 @@ func TestWritingBreaksOff(t *testing.T) {
 // Hidden files of dead processes go, those of other runs and everything else stay.
 func TestSweep(t *testing.T) {
 	dir := t.TempDir()
-	for _, name := range []string{".x_bold.json.partial-123", ".x_bold.json.partial-9999999", ".xy_bold.json.partial-123", "x_bold.json", ".x.lock", ".x_bold.json"} {
+	for _, name := range []string{".x_bold.json0123456789", filepath.Base(hiddenName("x_bold.json")), ".xy_bold.json0123456789", "x_bold.json", ".x.lock", ".x_bold.json", ".x_bold.json123", ".x_bold.json01234567890"} {
 		os.WriteFile(filepath.Join(dir, name), nil, 0o644)
 	}
 	sweep(dir, []Output{{"", "x_bold.json"}})
-	if got := strings.Join(listing(t, dir), " "); got != ".x.lock .x_bold.json .xy_bold.json.partial-123 x_bold.json" {
+	if got := strings.Join(listing(t, dir), " "); got != ".x.lock .x_bold.json .x_bold.json01234567890 .x_bold.json123 .xy_bold.json0123456789 x_bold.json" {
 		t.Errorf("left: %s", got)
 	}
 }

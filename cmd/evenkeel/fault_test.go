@@ -196,6 +196,16 @@ func TestEveryFault(t *testing.T) {
 			if slices.ContainsFunc(outputs(out), func(f string) bool { return strings.HasPrefix(filepath.Base(f), ".sub") }) {
 				t.Errorf("hidden files were left: %v", outputs(out))
 			}
+			if _, err := os.Stat(out); k.ID == "not-raw" && err == nil {
+				t.Error("a derivative of a derivative was begun")
+			}
+			if k.ID == "three-dimensional" {
+				// No slices to move, but a volume that takes as long as it takes is no instant.
+				side := mustRead(t, filepath.Join(out, theRun+"_desc-steady_bold.json"))
+				if !bytes.Contains(side, []byte(`"SlicesAtOneInstant": false`)) {
+					t.Errorf("three-dimensional: %s", side)
+				}
+			}
 			if strings.Contains(stdout+stderr, "Ahab") {
 				t.Error("a private value was repeated")
 			}
