@@ -214,7 +214,7 @@ func TestSimulateAddsRicianNoiseOnTop(t *testing.T) {
 // multiply-add available (GOAMD64=v3, arm64) or not.
 const sampleDigest = "4a5a02650ebe7511d6179df1f06096cb81daa2ec344b582dcdca5a20faeb9632"
 
-func TestBytesDoNotDependOnWorkersOrMachine(t *testing.T) {
+func TestSameBytes(t *testing.T) {
 	h := sha256.New()
 	for axis := range 3 {
 		s := sampleScan(axis)

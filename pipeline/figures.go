@@ -101,7 +101,7 @@ func (m *measures) look(ctx context.Context, data []float32, nt, workers int) (d
 	nv := len(m.mask)
 	dvars = undefined(nt)
 	if !m.empty() {
-		if dvars, err = quality.DVARS(ctx, data, nv, nt, m.mask, workers); err != nil {
+		if dvars, err = quality.DVARS(ctx, data, nv, nt, m.mask, m.counts(), workers); err != nil {
 			return nil, nil, err
 		}
 	}

@@ -37,7 +37,7 @@ func TestPoseTable(t *testing.T) {
 	p, m, _ := fourVolumes()
 	got := string(poseTable(p, m))
 	want := strings.Join([]string{
-		"time\tshift_x\tshift_y\tshift_z\tturn_x\tturn_y\tturn_z\tfd\trms_ball\tdvars_raw\tdvars_steady\toutside\tfit\tstate",
+		strings.ReplaceAll("time shift_x shift_y shift_z turn_x turn_y turn_z fd rms_ball dvars_raw dvars_steady outside fit state", " ", "\t"),
 		"0.500000\t0.000000\t0.000000\t0.000000\t0.0000000\t0.0000000\t0.0000000\tn/a\tn/a\tn/a\tn/a\t0.000000\t1.000000\taligned",
 		"2.500000\t3.000000\t0.000000\t0.000000\t0.0000000\t0.0000000\t0.0000000\t3.000000\t3.000000\t1.000000\t0.500000\t0.250000\t0.500000\tdoubtful",
 		"4.500000\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\tn/a\t2.000000\t0.250000\tn/a\tn/a\tlost",

@@ -14,7 +14,6 @@ import (
 	"testing"
 
 	"evenkeel/dataset"
-	"evenkeel/realign"
 )
 
 func listing(t *testing.T, dir string) (out []string) {
@@ -178,21 +177,6 @@ func TestPanicBecomesAnOutcome(t *testing.T) {
 	}
 	if got := listing(t, filepath.Join(w.out, "sub-01/func")); len(got) > 0 {
 		t.Errorf("left: %v", got)
-	}
-}
-
-// Every output that is named is written, and by hand-checked numbers the centroid of a
-// mask is where its voxels are.
-func TestCentroid(t *testing.T) {
-	g := realign.Grid{N: [3]int{3, 2, 2}, Affine: [16]float64{-2, 0, 0, 10, 0, 3, 0, 20, 0, 0, 4, 30, 0, 0, 0, 1}}
-	mask := make([]bool, 12)
-	mask[0] = true           // (0,0,0)
-	mask[2+3*(1+2*1)] = true // (2,1,1)
-	if c := centroid(g, mask); c != [3]float64{8, 21.5, 32} {
-		t.Errorf("got %v", c)
-	}
-	if c := centroid(g, make([]bool, 12)); c != [3]float64{8, 21.5, 32} { // the middle of the field
-		t.Errorf("empty mask: %v", c)
 	}
 }
 

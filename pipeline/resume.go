@@ -72,14 +72,8 @@ func upToDate(out string, p *Plan) *Figures {
 		if in.sha256 != "" {
 			continue
 		}
-		f, err := os.Open(p.Dataset.Path(in.Path))
-		if err != nil {
-			return nil
-		}
-		d := newDigester()
-		_, err = d.readFrom(f)
-		f.Close()
-		if err != nil || d.file("", "").SHA256 != inputs[i].SHA256 {
+		sum, _, err := provenance.DigestFile(p.Dataset.Path(in.Path))
+		if err != nil || sum != inputs[i].SHA256 {
 			return nil
 		}
 	}

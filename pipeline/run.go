@@ -4,12 +4,9 @@ package pipeline
 
 import (
 	"context"
-	"crypto/sha256"
-	"encoding/hex"
 	"encoding/json"
 	"errors"
 	"fmt"
-	"hash"
 	"io"
 	"math"
 	"os"
@@ -41,35 +38,16 @@ type worker struct {
 	stage   func(p *Plan, stage string)
 }
 
-// A digester takes the SHA-256 of everything that passes.
-type digester struct {
-	h hash.Hash
-	n int64
-}
-
-func newDigester() *digester { return &digester{h: sha256.New()} }
-
-func (d *digester) Write(b []byte) (int, error) {
-	d.n += int64(len(b))
-	return d.h.Write(b)
-}
-
-func (d *digester) readFrom(r io.Reader) (int64, error) { return io.Copy(d, r) }
-
-func (d *digester) file(role, path string) provenance.File {
-	return provenance.File{Role: role, Path: path, SHA256: hex.EncodeToString(d.h.Sum(nil)), Bytes: d.n}
-}
-
 // loaded is a series in memory with the digest of the bytes it was decoded from.
 type loaded struct {
 	data   []float32
 	nt     int
-	digest *digester
+	digest *provenance.Digester
 }
 
 // load reads a series; errors are faults (*Refused), or IOError.
 func load(p *Plan, rel string, skip int) (*loaded, error) {
-	d := newDigester()
+	d := &provenance.Digester{}
 	_, s, err := nifti.ReadSeries(p.Dataset.Path(rel), d, skip)
 	// A file that changed under us explains whatever else is wrong with it.
 	if faults := p.changed(); len(faults) > 0 {
@@ -86,9 +64,9 @@ func load(p *Plan, rel string, skip int) (*loaded, error) {
 
 // posed is what the pose series gave: shared by the echoes, not changed by them.
 type posed struct {
-	est       *realign.Estimate // nil with motion none
-	digest    *digester         // of the pose series
-	reference *digester         // of the sbref, nil if none was used
+	est       *realign.Estimate    // nil with motion none
+	digest    *provenance.Digester // of the pose series
+	reference *provenance.Digester // of the sbref, nil if none was used
 	sbref     []float32
 }
 
@@ -263,7 +241,7 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	case "middle":
 		opt.Reference = realign.Middle
 	case "sbref":
-		d := newDigester()
+		d := &provenance.Digester{}
 		_, ref, err := nifti.ReadSeries(p.Dataset.Path(p.Pose.SBRef), d, 0)
 		if f, isFault := imageFault(p.Pose.SBRef, err); isFault {
 			return nil, &Refused{[]fault.Fault{f}}
@@ -290,11 +268,6 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	if err != nil {
 		return nil, err
 	}
-	// A volume that is the reference itself stands at the identity by
-	// definition; the rounding of its estimate must not have it resampled.
-	if word := p.Settings.Reference.Word; word != "mean" && word != "sbref" && est.ReferenceIndex >= 0 {
-		est.Volumes[est.ReferenceIndex].Pose = realign.Identity
-	}
 	po.est = est
 	return po, nil
 }
@@ -319,7 +292,7 @@ func (w *worker) standard(p *Plan, po *posed, s *loaded) (ref []float32, mask []
 		ref = meanVolume(s.data, nv, s.nt)
 	}
 	mask = realign.HeadMask(p.Grid, ref)
-	return ref, mask, centroid(p.Grid, mask)
+	return ref, mask, realign.Centroid(p.Grid, mask)
 }
 
 // meanVolume averages volumes in their order.
@@ -333,39 +306,6 @@ func meanVolume(data []float32, nv, nt int) []float32 {
 		out[v] = float32(sum / float64(nt))
 	}
 	return out
-}
-
-// centroid is the mean world position of the mask's voxels (of the whole field when the mask is empty).
-func centroid(g realign.Grid, mask []bool) [3]float64 {
-	var sum [3]float64
-	n := 0.0
-	i := 0
-	for z := range g.N[2] {
-		for y := range g.N[1] {
-			for x := range g.N[0] {
-				if mask[i] {
-					sum[0] += float64(x)
-					sum[1] += float64(y)
-					sum[2] += float64(z)
-					n++
-				}
-				i++
-			}
-		}
-	}
-	for a := range sum {
-		if n > 0 {
-			sum[a] /= n
-		} else {
-			sum[a] = float64(g.N[a]-1) / 2
-		}
-	}
-	var c [3]float64
-	for a := range c {
-		r := g.Affine[4*a:]
-		c[a] = float64(r[0]*sum[0]) + float64(r[1]*sum[1]) + float64(r[2]*sum[2]) + r[3]
-	}
-	return c
 }
 
 // correctTime moves every slice to the run's instant, in place.
@@ -414,11 +354,11 @@ func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
 	for _, in := range p.Inputs {
 		switch in.Role {
 		case "series":
-			out = append(out, s.digest.file(in.Role, in.Path))
+			out = append(out, s.digest.File(in.Role, in.Path))
 		case "pose-series":
-			out = append(out, po.digest.file(in.Role, in.Path))
+			out = append(out, po.digest.File(in.Role, in.Path))
 		case "reference-series":
-			out = append(out, po.reference.file(in.Role, in.Path))
+			out = append(out, po.reference.File(in.Role, in.Path))
 		default:
 			out = append(out, provenance.File{Role: in.Role, Path: in.Path, SHA256: in.sha256, Bytes: in.stamp.size})
 		}

@@ -17,11 +17,15 @@ const sumBlock = 4096
 // volumes (Smyser et al. 2010, Cerebral Cortex 20(12):2852-2862; Power et al.
 // 2012, NeuroImage 59(3):2142-2154).
 //
-// Volume t is data[t*nv:(t+1)*nv]; mask has nv values, nil takes every voxel.
-// The first value is NaN; all are if mask is empty or the mean is not above
-// zero. At most workers goroutines are used. The only error is that of ctx.
-func DVARS(ctx context.Context, data []float32, nv, nt int, mask []bool, workers int) ([]float64, error) {
+// Volume t is data[t*nv:(t+1)*nv]; mask has nv values, nil takes every voxel;
+// use, of nt values, marks the volumes that the mean is taken over, nil all.
+// Differences are given for every volume. The first value is NaN; all are if
+// mask is empty or the mean is not above zero. At most workers goroutines are used. The only error is that of ctx.
+func DVARS(ctx context.Context, data []float32, nv, nt int, mask, use []bool, workers int) ([]float64, error) {
 	checkSeries("DVARS", data, nv, nt)
+	if use != nil && len(use) != nt {
+		panic(fmt.Sprintf("quality: DVARS: %d marks for %d volumes", len(use), nt))
+	}
 	voxels := inside("DVARS", mask, nv)
 	level := make([]float64, nt)  // sum of the values
 	change := make([]float64, nt) // sum of squared differences
@@ -49,12 +53,15 @@ func DVARS(ctx context.Context, data []float32, nv, nt int, mask []bool, workers
 	if err != nil {
 		return nil, err
 	}
-	var total float64
-	for _, l := range level {
-		total += l
+	var total, used float64
+	for t, l := range level {
+		if use == nil || use[t] {
+			total += l
+			used++
+		}
 	}
 	n := float64(len(voxels))
-	mean := total / (n * float64(nt))
+	mean := total / (n * used)
 	dvars := make([]float64, nt)
 	for t := range dvars {
 		dvars[t] = math.NaN()

@@ -51,7 +51,7 @@ func TestDVARSGolden(t *testing.T) {
 	for _, c := range g.Cases {
 		data, nv, nt := transpose(c.Y)
 		before := slices.Clone(data)
-		got, err := DVARS(ctx, data, nv, nt, nil, 2)
+		got, err := DVARS(ctx, data, nv, nt, nil, nil, 2)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -69,7 +69,7 @@ func TestDVARSGolden(t *testing.T) {
 		}
 		near(t, c.Name+", plain", got, floats(c.DvarsPlain), oracle)
 	}
-	got, err := DVARS(ctx, g.ruleData(), g.Rule.NV, g.Rule.NT, nil, 1)
+	got, err := DVARS(ctx, g.ruleData(), g.Rule.NV, g.Rule.NT, nil, nil, 1)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -96,8 +96,8 @@ func TestDVARSMask(t *testing.T) {
 			data[i] = float32(math.NaN())
 		}
 	}
-	want, _ := DVARS(ctx, packed, n, nt, nil, 1)
-	got, err := DVARS(ctx, data, nv, nt, mask, 1)
+	want, _ := DVARS(ctx, packed, n, nt, nil, nil, 1)
+	got, err := DVARS(ctx, data, nv, nt, mask, nil, 1)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -108,8 +108,8 @@ func TestDVARSMask(t *testing.T) {
 		t.Error("nothing measured")
 	}
 	for _, v := range slices.Concat(
-		first(DVARS(ctx, data, nv, nt, make([]bool, nv), 1)), // empty mask
-		first(DVARS(ctx, make([]float32, 12), 3, 4, nil, 1)), // mean of zero
+		first(DVARS(ctx, data, nv, nt, make([]bool, nv), nil, 1)), // empty mask
+		first(DVARS(ctx, make([]float32, 12), 3, 4, nil, nil, 1)), // mean of zero
 	) {
 		if !math.IsNaN(v) {
 			t.Errorf("undefined, but %v", v)
@@ -221,7 +221,7 @@ func TestWorkersDoNotMatter(t *testing.T) {
 		}
 		run := func(workers int) (res result) {
 			res.ts = make([]float32, nv)
-			res.dv = first(DVARS(ctx, data, nv, nt, mask, workers))
+			res.dv = first(DVARS(ctx, data, nv, nt, mask, nil, workers))
 			if err := TSNR(ctx, res.ts, data, nv, nt, nil, workers); err != nil {
 				t.Fatal(err)
 			}
@@ -242,7 +242,7 @@ func TestCancelled(t *testing.T) {
 	stop, cancel := context.WithCancel(ctx)
 	cancel()
 	data := make([]float32, 8*6)
-	_, e1 := DVARS(stop, data, 8, 6, nil, 1)
+	_, e1 := DVARS(stop, data, 8, 6, nil, nil, 1)
 	_, e2 := SliceSpikes(stop, data, 2, 2, 2, 6, 2, nil, 1)
 	_, e3 := SliceSpikes(stop, data[:16], 2, 2, 2, 2, 2, nil, 1)
 	for i, err := range []error{e1, e2, e3, TSNR(stop, make([]float32, 8), data, 8, 6, nil, 1)} {
@@ -254,8 +254,8 @@ func TestCancelled(t *testing.T) {
 
 func TestWrongLengthsPanic(t *testing.T) {
 	d, m := make([]float32, 12), make([]bool, 3)
-	mustPanic(t, "DVARS data", func() { DVARS(ctx, d, 5, 2, nil, 1) })
-	mustPanic(t, "DVARS mask", func() { DVARS(ctx, d, 4, 3, m, 1) })
+	mustPanic(t, "DVARS data", func() { DVARS(ctx, d, 5, 2, nil, nil, 1) })
+	mustPanic(t, "DVARS mask", func() { DVARS(ctx, d, 4, 3, m, nil, 1) })
 	mustPanic(t, "TSNR dst", func() { TSNR(ctx, make([]float32, 3), d, 4, 3, nil, 1) })
 	mustPanic(t, "TSNR use", func() { TSNR(ctx, make([]float32, 4), d, 4, 3, make([]bool, 4), 1) })
 	mustPanic(t, "SliceSpikes axis", func() { SliceSpikes(ctx, d, 2, 2, 1, 3, 3, nil, 1) })
@@ -274,7 +274,7 @@ func TestUnitsDoNotMatter(t *testing.T) {
 		for i, x := range data {
 			scaled[i] = k * x
 		}
-		if a, b := first(DVARS(ctx, data, nv, nt, nil, 1)), first(DVARS(ctx, scaled, nv, nt, nil, 1)); !slices.EqualFunc(a, b, func(a, b float64) bool { return a == b || math.IsNaN(a) && math.IsNaN(b) }) {
+		if a, b := first(DVARS(ctx, data, nv, nt, nil, nil, 1)), first(DVARS(ctx, scaled, nv, nt, nil, nil, 1)); !slices.EqualFunc(a, b, func(a, b float64) bool { return a == b || math.IsNaN(a) && math.IsNaN(b) }) {
 			t.Fatalf("DVARS %v, scaled %v", a, b)
 		}
 		a, b := make([]float32, nv), make([]float32, nv)
@@ -340,7 +340,7 @@ func TestRealSeries(t *testing.T) {
 			mask[v] = b != 0
 		}
 		name := filepath.Base(image)
-		got, err := DVARS(ctx, data, want.NV, want.NT, mask, 2)
+		got, err := DVARS(ctx, data, want.NV, want.NT, mask, nil, 2)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -362,13 +362,28 @@ func TestRealSeries(t *testing.T) {
 
 // 4 voxels in 3 volumes: differences of 2, -2, 1 and -1 have a root mean square
 // of sqrt(10/4), here in percent of the mean of 107.5.
+// The scale leaves out the volumes that do not count; the differences do not.
+func TestDVARSScale(t *testing.T) {
+	data := []float32{100, 100, 102, 102, 9000, 9000, 98, 98} // volume 2 is lost
+	got, err := DVARS(context.Background(), data, 2, 4, nil, []bool{true, true, false, true}, 1)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for i, want := range []float64{math.NaN(), 2, 8898, 8902} { // mean of 100, 102 and 98 is 100
+		if math.Abs(got[i]-want) > 1e-9 || math.IsNaN(got[i]) != math.IsNaN(want) {
+			t.Errorf("volume %d: %g, want %g", i, got[i], want)
+		}
+	}
+	mustPanic(t, "DVARS use", func() { DVARS(context.Background(), data, 2, 4, nil, []bool{true}, 1) })
+}
+
 func ExampleDVARS() {
 	series := []float32{
 		100, 200, 50, 80,
 		102, 198, 51, 79,
 		102, 198, 51, 79,
 	}
-	dvars, err := DVARS(context.Background(), series, 4, 3, nil, 1)
+	dvars, err := DVARS(context.Background(), series, 4, 3, nil, nil, 1)
 	fmt.Printf("%.4f %v\n", dvars, err)
 	// Output: [NaN 1.4708 0.0000] <nil>
 }
@@ -390,7 +405,7 @@ func BenchmarkTSNR(b *testing.B) {
 	benchmark(b, func(d []float32, nv, nt int, m []bool, dst []float32) { TSNR(ctx, dst, d, nv, nt, nil, 1) })
 }
 func BenchmarkDVARS(b *testing.B) {
-	benchmark(b, func(d []float32, nv, nt int, m []bool, _ []float32) { DVARS(ctx, d, nv, nt, m, 1) })
+	benchmark(b, func(d []float32, nv, nt int, m []bool, _ []float32) { DVARS(ctx, d, nv, nt, m, nil, 1) })
 }
 func BenchmarkSliceSpikes(b *testing.B) {
 	benchmark(b, func(d []float32, nv, nt int, m []bool, _ []float32) { SliceSpikes(ctx, d, 64, 64, 36, nt, 2, m, 1) })

@@ -195,7 +195,7 @@ func (e *estimator) newModel(image []float32, unknown []bool, degree int) *model
 	for i, u := range unknown {
 		m.mask[i] = m.mask[i] && !u
 	}
-	m.centre = centroid(e.g, m.mask)
+	m.centre = Centroid(e.g, m.mask)
 	w := e.scratch[0]
 	v := make([]float32, e.g.voxels())
 	w.fine.run(v, image)
@@ -235,6 +235,11 @@ func (e *estimator) against(image []float32, index int) (*Estimate, error) {
 	vols, err := e.pass(m, nil, e.fineEffort())
 	if err != nil {
 		return nil, err
+	}
+	if index >= 0 {
+		// The reference stands at its own pose by definition; what rounding
+		// leaves must not have it resampled.
+		vols[index].Pose = Identity
 	}
 	return e.finish(m, vols, index, 1)
 }

@@ -171,9 +171,9 @@ func dilate(mask []bool, n [3]int, layers int) []bool {
 	return out
 }
 
-// centroid returns the mean world position of a mask's voxels, mm; the centre
+// Centroid returns the mean world position of a mask's voxels, mm; the centre
 // of the field for an empty mask.
-func centroid(g Grid, mask []bool) [3]float64 {
+func Centroid(g Grid, mask []bool) [3]float64 {
 	var s [3]float64
 	count := 0.0
 	i := 0

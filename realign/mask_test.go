@@ -88,3 +88,17 @@ func TestMedianAgainstSorting(t *testing.T) {
 		t.Error("an empty list")
 	}
 }
+
+// By hand.
+func TestCentroid(t *testing.T) {
+	g := realign.Grid{N: [3]int{3, 2, 2}, Affine: [16]float64{-2, 0, 0, 10, 0, 3, 0, 20, 0, 0, 4, 30, 0, 0, 0, 1}}
+	mask := make([]bool, 12)
+	mask[0] = true           // (0,0,0)
+	mask[2+3*(1+2*1)] = true // (2,1,1)
+	if c := realign.Centroid(g, mask); c != [3]float64{8, 21.5, 32} {
+		t.Errorf("got %v", c)
+	}
+	if c := realign.Centroid(g, make([]bool, 12)); c != [3]float64{8, 21.5, 32} { // the middle of the field
+		t.Errorf("empty mask: %v", c)
+	}
+}
