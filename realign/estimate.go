@@ -30,6 +30,10 @@ type Volume struct {
 	// residual after alignment over that of the median slice; 0 for a slice with
 	// nothing to compare, nil if no match ended.
 	SliceResiduals []float64
+	// Gain says how bright the volume is against the reference: at a scanner
+	// point x the factor is Gain[0] + (Gain[1] X + Gain[2] Y + Gain[3] Z)/80, with
+	// (X, Y, Z) = x - Centre in mm. 1, 0, 0, 0 for a lost volume.
+	Gain [4]float64
 
 	shares []float64 // residual of each slice over its signal
 }
@@ -63,6 +67,8 @@ type Estimate struct {
 	ReferenceIndex int        // the volume at whose pose the reference stands; -1 for an external one
 	Passes         int        // how often every volume was matched
 	Parameters     []Parameter
+
+	unknown []bool // voxels the reference has no data for; nil: none
 }
 
 // Parameter is one constant that an estimate used, for the record.
@@ -187,11 +193,12 @@ type model struct {
 	mask         []bool
 	centre       [3]float64
 	fine, coarse *template
+	unknown      []bool
 }
 
 // newModel prepares a reference; unknown marks voxels it has no data for.
 func (e *estimator) newModel(image []float32, unknown []bool, degree int) *model {
-	m := &model{image: image, mask: HeadMask(e.g, image)}
+	m := &model{image: image, mask: HeadMask(e.g, image), unknown: unknown}
 	for i, u := range unknown {
 		m.mask[i] = m.mask[i] && !u
 	}
@@ -528,7 +535,7 @@ func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 
 // judge turns the outcome of a match into the state of the volume.
 func (e *estimator) judge(m *model, f found) Volume {
-	v := Volume{Pose: f.pose, Fit: f.fit, Iterations: f.iterations, Outside: outside(e.g, m.mask, f.pose), State: Aligned, SliceResiduals: f.slices, shares: f.shares}
+	v := Volume{Pose: f.pose, Fit: f.fit, Iterations: f.iterations, Outside: outside(e.g, m.mask, f.pose), State: Aligned, SliceResiduals: f.slices, shares: f.shares, Gain: f.gain}
 	say := func(s State, format string, args ...any) {
 		v.State, v.Reason = s, fmt.Sprintf(format, args...)
 	}
@@ -741,13 +748,14 @@ func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimat
 	}
 	for t := range vols {
 		if vols[t].State == Lost {
+			vols[t].Gain = [4]float64{1}
 			vols[t].Pose = p.At(float64(t))
 			vols[t].Outside = outside(e.g, m.mask, vols[t].Pose)
 		}
 	}
 	return &Estimate{
 		Volumes: vols, Reference: append([]float32(nil), m.image...), Mask: m.mask, Centre: m.centre,
-		ReferenceIndex: index, Passes: passes,
+		ReferenceIndex: index, Passes: passes, unknown: m.unknown,
 		Parameters: []Parameter{
 			{"coarseGaussianMM", coarseSigma},
 			{"fineGaussianMM", e.sigma},

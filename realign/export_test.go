@@ -1,5 +1,11 @@
 package realign
 
+import (
+	"context"
+
+	"evenkeel/slicetime"
+)
+
 // What tests in package realign_test need of the inside.
 
 var Poles = poles
@@ -54,3 +60,36 @@ var (
 )
 
 const AlignedFit = alignedFit
+
+// RebuildOn gives the path with its reference rebuilt from another recording of
+// the same run (noise-free, say).
+func RebuildOn(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, p *PathEstimate, workers int) *PathEstimate {
+	nv := g.voxels()
+	e := &pathEstimator{
+		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: workers, volume: func(t int) []float32 { return data[t*nv:][:nv] }},
+		schedule:  s, est: est, shots: s.Shots(),
+	}
+	e.lay()
+	copy(e.poses, p.Path.Poses)
+	e.image = append([]float32(nil), est.Reference...)
+	e.setTemplate(e.image)
+	e.region = dilate(est.Mask, g.N, regionRim)
+	if err := e.rebuild(2); err != nil {
+		panic(err)
+	}
+	q := *p
+	q.Reference = e.image
+	return &q
+}
+
+var NewBand = func(n int) band { return make(band, n) }
+
+const BandWidth = bandWidth
+
+type Band = band
+
+func (m band) Add(i, j int, v float64) { m.add(i, j, v) }
+func (m band) Cholesky() bool          { return m.cholesky() }
+func (m band) Solve(b []float64)       { m.solve(b) }
+func (m band) InverseBand() band       { return m.inverseBand() }
+func (m band) LogDiagonal() float64    { return m.logDiagonal() }

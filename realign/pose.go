@@ -2,6 +2,7 @@ package realign
 
 import (
 	"math"
+	"sort"
 
 	"evenkeel/internal/detmath"
 )
@@ -281,10 +282,7 @@ func (p Path) At(t float64) Pose {
 	if n == 0 {
 		return Identity
 	}
-	i := 0
-	for i < n && p.Times[i] <= t {
-		i++
-	}
+	i := sort.Search(n, func(i int) bool { return p.Times[i] > t })
 	switch i {
 	case 0:
 		return p.Poses[0]

@@ -1,0 +1,695 @@
+package realign
+
+import (
+	"context"
+	"fmt"
+	"math"
+
+	"evenkeel/internal/detmath"
+	"evenkeel/internal/parallel"
+	"evenkeel/slicetime"
+)
+
+// PathEstimate is a pose for every excitation of a run.
+type PathEstimate struct {
+	// Path holds one pose per excitation ("slot"), in order of time: slot
+	// n*Shots + s is shot s of volume n, at n TR + the shot's time (s).
+	Path  Path
+	Shots int   // excitations a volume
+	Shot  []int // shot of each slice, by slice index
+
+	Reference []float32  // the reference, rebuilt from the path
+	Mask      []bool     // the head in it
+	Centre    [3]float64 // centre of rotation, world mm: that of the volume poses
+
+	// Gains holds, per volume, how bright it is against the reference: at a
+	// scanner point x the factor is g[0] + (g[1] X + g[2] Y + g[3] Z)/80,
+	// (X, Y, Z) = x - Centre in mm.
+	Gains [][4]float64
+	// Expected is, per volume, the expected error of its slots' poses: the root
+	// mean square displacement over the head, mm, under the posterior.
+	// NaN where there is no path.
+	Expected []float64
+	// Used is false where the data could not support a path; Reason says why, and
+	// Path holds the volume poses, at the middle of each volume.
+	Used   bool
+	Reason string
+
+	Sigma          float64 // noise, in units of the images: scale of the residuals
+	VolumeResidual float64 // rms residual of the weighted pixels, one pose a volume, over Sigma
+	PathResidual   float64 // the same along the path
+	Explained      float64 // share of the variance inside the head that the template explains
+	StrengthShift  float64 // of the prior, per mm^2
+	StrengthTurn   float64 // per rad^2
+	Passes         int
+	Iterations     int
+	Parameters     []Parameter
+}
+
+// Constants of the path, each with its reason.
+const (
+	pathPasses = 3 // passes over the data, each with a template of its own: further ones changed poses by less than the noise
+	// pathIterations of one pass, at most: the first starts 0.1 to 0.5 mm off,
+	// where the slope of the template changes by a few percent.
+	pathFirstIterations = 4
+	pathNextIterations  = 2
+	pathRim             = 1    // voxels around the head that take part: past them an unfiltered template is flat
+	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
+	// fewestData: a path is only worth its name where most slots see the head.
+	fewestData = 0.5
+	// regionRim: the template is rebuilt in the head and this many voxels
+	// around it: the rim that takes part and the reach of a spline.
+	regionRim = pathRim + 3
+	// A slot whose residual is within corruptScale of the usual one is merely out
+	// of place: half a millimetre on a head of tSNR 100. It then counts as if its
+	// scale were at most pullScale of the usual one.
+	corruptScale = 6
+	pullScale    = 1.2
+	// slotPoints: with fewer pixels in a slot its scale cannot be told.
+	slotPoints = 50
+)
+
+// EstimatePath refines the volume poses of est to one pose per excitation.
+// data and g are as for [EstimateVolumes]; est is what that returned; s says
+// when each slice is excited. It fails only with the error of ctx.
+//
+// Maximum likelihood on unfiltered slices against a template (noise in the
+// pixels is then white), with the prior described in this package's chain: a
+// penalised likelihood in the manner of a smoothing spline (Green, Silverman
+// 1994, Nonparametric Regression and Generalized Linear Models; from memory).
+func EstimatePath(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
+	nv := g.voxels()
+	if len(data) != nv*nt || len(est.Volumes) != nt {
+		panic("realign: series, grid and estimate differ in size")
+	}
+	e := &pathEstimator{
+		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: max(1, workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }},
+		schedule:  s, est: est,
+	}
+	return e.run()
+}
+
+// pathEstimator holds what the passes share.
+type pathEstimator struct {
+	estimator
+	schedule slicetime.Schedule
+	est      *Estimate
+	shots    []slicetime.Shot
+	shotOf   []int // by slice
+	times    []float64
+	p        []params // the path
+	at       []params // the path and the offsets of the shots: where slots are measured
+	poses    []Pose   // of at
+	chain    *chain
+	t        *template // unsmoothed
+	image    []float32
+	region   []bool
+	weak     [][]bool
+	thin     bool      // every other pixel only
+	sigma    float64   // noise as seen so far
+	scale    []float64 // residual scale of each slot, 0: no data
+	explain  [2]float64
+	work     []*slotWork
+}
+
+// slotWork is the scratch of one worker.
+type slotWork struct {
+	e    []float32
+	j    [][6]float32
+	res  []float32
+	sumE float64
+}
+
+func (e *pathEstimator) run() (*PathEstimate, error) {
+	out := &PathEstimate{
+		Reference: e.est.Reference, Mask: e.est.Mask, Centre: e.est.Centre,
+		Gains: make([][4]float64, e.nt), Expected: make([]float64, e.nt),
+	}
+	for n, v := range e.est.Volumes {
+		out.Gains[n] = v.Gain
+	}
+	fallBack := func(why string) *PathEstimate {
+		p := FromVolumes(e.g, e.schedule, e.est, why)
+		p.Passes, p.Iterations = out.Passes, out.Iterations
+		return p
+	}
+	if len(e.schedule.Times) != e.g.N[e.schedule.Axis] {
+		return fallBack("no slice times, so no instant is known for a slice"), nil
+	}
+	e.shots = e.schedule.Shots()
+	if len(e.shots) < 2 {
+		return fallBack("all slices are excited at one instant: one pose a volume is the path"), nil
+	}
+	if e.nt*len(e.shots) < 6 {
+		return fallBack("too few excitations for a path"), nil
+	}
+	e.lay()
+	e.image = append([]float32(nil), e.est.Reference...)
+	e.setTemplate(e.image)
+	e.region = dilate(e.est.Mask, e.g.N, regionRim)
+	c := newChain(e.times, len(e.shots))
+	e.chain = c
+	slots := make([]slotData, len(e.times))
+	e.thin = true
+	if err := e.measure(slots, true); err != nil {
+		return nil, err
+	}
+	seen := 0
+	for _, s := range e.scale {
+		if s > 0 {
+			seen++
+		}
+	}
+	if float64(seen) < float64(fewestData*float64(len(slots))) {
+		return fallBack(fmt.Sprintf("only %d of %d excitations see enough of the head", seen, len(slots))), nil
+	}
+	before, sigma := e.misfit()
+	e.sigma = sigma
+	for pass := range pathPasses {
+		// The first pass ends with a template that is still to change: half of the
+		// pixels will do.
+		e.thin = pass == 0
+		iterations := pathFirstIterations
+		if pass > 0 {
+			iterations = pathNextIterations
+		}
+		for range iterations {
+			if err := e.measure(slots, false); err != nil {
+				return nil, err
+			}
+			moved, _ := c.update(slots, e.p)
+			e.setPoses(c.offset)
+			out.Iterations++
+			_, e.sigma = e.misfit()
+			if moved < pathTolerance {
+				break
+			}
+		}
+		if pass == 0 {
+			moved, err := e.relocate(slots)
+			if err != nil {
+				return nil, err
+			}
+			if moved {
+				c.reweight(e.p)
+				if err := e.measure(slots, false); err != nil {
+					return nil, err
+				}
+				c.update(slots, e.p)
+				e.setPoses(c.offset)
+				out.Iterations++
+			}
+		}
+		out.Passes++
+		// The next template takes the offsets up.
+		clear(c.offset)
+		e.setPoses(nil)
+		// One projection sharpens most, a second the rest; more change nothing.
+		projections := 1
+		if pass == pathPasses-1 {
+			projections = 2
+		}
+		if err := e.rebuild(projections); err != nil {
+			return nil, err
+		}
+	}
+	// The verdict, at the last template.
+	if err := e.measure(slots, false); err != nil {
+		return nil, err
+	}
+	after, _ := e.misfit()
+	if _, ok := c.step(slots, e.p); !ok {
+		return fallBack("the equations of the path have no solution"), nil
+	}
+	e.expect(c, slots, out.Expected)
+	out.Sigma, out.VolumeResidual, out.PathResidual = sigma, before/sigma, after/sigma
+	if e.explain[1] > 0 {
+		out.Explained = 1 - e.explain[0]/e.explain[1]
+	}
+	out.StrengthShift, out.StrengthTurn = c.lt, c.lr
+	if after > float64(harm*before) {
+		return fallBack(fmt.Sprintf("residuals along the path are larger than with one pose a volume (%.3g against %.3g)", after, before)), nil
+	}
+	out.Used = true
+	out.Path = Path{Times: e.times, Poses: e.poses}
+	out.Shots, out.Shot = len(e.shots), e.shotOf
+	out.Reference = e.image
+	return out, nil
+}
+
+// harm: a path whose weighted residuals exceed those of the volume poses by
+// more than a percent has lost its way.
+const harm = 1.01
+
+// FromVolumes is the path of one pose a volume: what [EstimatePath] falls back to,
+// and what combines with [PathEstimate.Joint] where no path is wanted. why is
+// kept as the Reason.
+func FromVolumes(g Grid, s slicetime.Schedule, est *Estimate, why string) *PathEstimate {
+	out := &PathEstimate{
+		Reference: est.Reference, Mask: est.Mask, Centre: est.Centre, Reason: why,
+		Gains: make([][4]float64, len(est.Volumes)), Expected: make([]float64, len(est.Volumes)),
+		Path: volumePath(s, est), Shots: 1, Shot: make([]int, g.N[s.Axis]),
+	}
+	for n, v := range est.Volumes {
+		out.Gains[n] = v.Gain
+		out.Expected[n] = math.NaN()
+	}
+	return out
+}
+
+// volumePath is the path of one pose a volume, at the middle of its slices.
+func volumePath(s slicetime.Schedule, est *Estimate) Path {
+	mid := 0.0
+	if len(s.Times) > 0 {
+		mid = s.Middle()
+	}
+	var p Path
+	for n, v := range est.Volumes {
+		p.Times = append(p.Times, float64(float64(n)*s.TR)+mid)
+		p.Poses = append(p.Poses, v.Pose)
+	}
+	return p
+}
+
+// Slot is the pose of a slice of volume n.
+func (p *PathEstimate) Slot(n, slice int) Pose { return p.Path.Poses[n*p.Shots+p.Shot[slice]] }
+
+// At is the pose for volume n at time t (s): that of the path there, or, where
+// there is one pose a volume, that one.
+func (p *PathEstimate) At(n int, t float64) Pose {
+	if !p.Used {
+		return p.Path.Poses[n]
+	}
+	return p.Path.At(t)
+}
+
+// lay sets out the slots in order of time and starts them on the volume poses,
+// interpolated.
+func (e *pathEstimator) lay() {
+	e.shotOf = make([]int, e.g.N[e.schedule.Axis])
+	for s, shot := range e.shots {
+		for _, k := range shot.Slices {
+			e.shotOf[k] = s
+		}
+	}
+	start := volumePath(e.schedule, e.est)
+	for n := range e.nt {
+		for _, shot := range e.shots {
+			t := float64(float64(n)*e.schedule.TR) + shot.Time
+			e.times = append(e.times, t)
+			e.p = append(e.p, e.toParams(start.At(t)))
+		}
+	}
+	e.poses = make([]Pose, len(e.p))
+	e.scale = make([]float64, len(e.p))
+	e.at = make([]params, len(e.p))
+	e.setPoses(nil)
+	e.weak = e.weakSlices(e.est.Volumes, -1)
+	e.work = make([]*slotWork, e.workers)
+	for i := range e.work {
+		e.work[i] = &slotWork{}
+	}
+}
+
+// toParams and fromParams: shift and rotation vector about the centre.
+func (e *pathEstimator) toParams(p Pose) (q params) {
+	at := p.Apply(e.est.Centre)
+	w := Pose{Q: p.Q}.Log().W
+	for k := range 3 {
+		q[k], q[3+k] = at[k]-e.est.Centre[k], w[k]
+	}
+	return q
+}
+
+func (e *pathEstimator) fromParams(q params) Pose {
+	r := Exp(Twist{W: [3]float64{q[3], q[4], q[5]}})
+	return r.about(e.est.Centre, [3]float64{q[0], q[1], q[2]})
+}
+
+// setPoses brings the poses up to date, with the offsets of the shots or without.
+func (e *pathEstimator) setPoses(offset []params) {
+	for s := range e.p {
+		e.at[s] = e.p[s]
+		if offset != nil {
+			for k, v := range offset[s%len(offset)] {
+				e.at[s][k] += v
+			}
+		}
+		e.poses[s] = e.fromParams(e.at[s])
+	}
+}
+
+func (e *pathEstimator) setTemplate(image []float32) {
+	e.t = newTemplate(e.g, image, e.est.Mask, e.est.unknown, pathRim, edgeMargins(e.g.N, fineMargin), e.est.Centre, 5)
+}
+
+// jacobian is K = d(twist about the centre)/d(params): the twist's shift is
+// R' dt, its turn Jr(w) dw, Jr = I - (1-cos a)/a^2 [w]x + (a-sin a)/a^3 [w]x^2
+// (Chirikjian 2011, Stochastic Models, Information Theory, and Lie Groups 2,
+// eq. 10.86; from memory, tested against differences).
+func jacobian(p Pose, q params) (rt, jr [9]float64) {
+	r := p.rotation()
+	for i := range 3 {
+		for j := range 3 {
+			rt[3*i+j] = r[3*j+i]
+		}
+	}
+	w := [3]float64{q[3], q[4], q[5]}
+	a2 := float64(w[0]*w[0]) + float64(w[1]*w[1]) + float64(w[2]*w[2])
+	b, c := 0.5-a2/24, 1.0/6-a2/120
+	if a2 > 1e-4 {
+		a := math.Sqrt(a2)
+		s, cs := detmath.Sincos(a)
+		b, c = (1-cs)/a2, (a-s)/float64(a2*a)
+	}
+	k := [9]float64{0, -w[2], w[1], w[2], 0, -w[0], -w[1], w[0], 0}
+	for i := range 3 {
+		for j := range 3 {
+			kk := 0.0
+			for m := range 3 {
+				kk += float64(k[3*i+m] * k[3*m+j])
+			}
+			v := float64(c*kk) - float64(b*k[3*i+j])
+			if i == j {
+				v++
+			}
+			jr[3*i+j] = v
+		}
+	}
+	return rt, jr
+}
+
+// measure evaluates, for every slot, gradient and Hessian of the log likelihood
+// at the present path and template. plain uses the volume poses themselves
+// and only sets scales.
+func (e *pathEstimator) measure(slots []slotData, plain bool) error {
+	explain := make([][2]float64, e.nt)
+	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
+		for s, shot := range e.shots {
+			i := n*len(e.shots) + s
+			slots[i], e.scale[i] = slotData{}, 0
+			if e.est.Volumes[n].State == Lost {
+				continue
+			}
+			pose := e.poses[i]
+			if plain {
+				pose = e.est.Volumes[n].Pose
+			}
+			ex := e.slot(e.work[worker], n, i, shot.Slices, pose, &slots[i])
+			explain[n][0] += ex[0]
+			explain[n][1] += ex[1]
+		}
+		return nil
+	})
+	e.explain = [2]float64{}
+	for _, x := range explain {
+		e.explain[0] += x[0]
+		e.explain[1] += x[1]
+	}
+	return err
+}
+
+// slot gathers the pixels of one excitation of volume n.
+func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+	t := e.t
+	w.e, w.j, w.res = w.e[:0], w.j[:0], w.res[:0]
+	vol := e.volume(n)
+	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
+	toCentre := t.g.Affine
+	for a := range t.centre {
+		toCentre[4*a+3] -= t.centre[a]
+	}
+	var mean, square, count, left float64
+	gain := e.est.Volumes[n].Gain
+	for _, k := range slices {
+		if e.weak[n][k] {
+			continue
+		}
+		lo, hi, ok := e.within(k)
+		if !ok {
+			continue
+		}
+		for z := lo[2]; z <= hi[2]; z++ {
+			for y := lo[1]; y <= hi[1]; y++ {
+				row := t.g.N[0] * (y + t.g.N[1]*z)
+				x, step := lo[0], 1
+				if e.thin {
+					x, step = x+(x+y+z)&1, 2
+				}
+				for ; x <= hi[0]; x += step {
+					at := applyAffine(&b, float64(x), float64(y), float64(z))
+					if !t.inMargin(at) {
+						continue
+					}
+					near := t.nearest(at)
+					if !t.usable[near] {
+						continue
+					}
+					v, g := t.s.gradient(at[0], at[1], at[2])
+					xw := applyAffine(&toCentre, float64(x), float64(y), float64(z))
+					gn := gainOf(&gain, xw)
+					val := float64(vol[row+x])
+					r := val - float64(gn*float64(v))
+					var gw [3]float64
+					for a := range gw {
+						gw[a] = float64(gn * (float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])))
+					}
+					m := cross(applyAffine(&toCentre, at[0], at[1], at[2]), gw)
+					w.e = append(w.e, float32(r))
+					w.j = append(w.j, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(m[0]), float32(m[1]), float32(m[2])})
+					w.res = append(w.res, float32(math.Abs(r)))
+					if t.head[near] {
+						mean += val
+						square += float64(val * val)
+						left += float64(r * r)
+						count++
+					}
+				}
+			}
+		}
+	}
+	if count > 0 {
+		explain = [2]float64{left, square - float64(mean*mean)/count}
+	}
+	if len(w.e) < slotPoints {
+		return explain
+	}
+	scale := float64(madScale * float64(median(w.res)))
+	// Values that are exact (no noise at all) must not divide by zero.
+	scale = max(scale, float64(1e-5*math.Sqrt(square/max(count, 1))), 1e-30)
+	e.scale[i] = scale
+	var h [21]float64
+	var g [6]float64
+	cut := float64(tukeyCut * scale)
+	for q, r32 := range w.e {
+		r := float64(r32)
+		u := r / cut
+		if u = 1 - float64(u*u); u <= 0 {
+			continue
+		}
+		wt := float64(u * u)
+		j := &w.j[q]
+		at := 0
+		for a := range 6 {
+			wj := float64(wt * float64(j[a]))
+			g[a] -= float64(wj * r)
+			for c := a; c < 6; c++ {
+				h[at] += float64(wj * float64(j[c]))
+				at++
+			}
+		}
+	}
+	// A slot that fits badly because its pose is still off must pull with full
+	// force, or the path stays where it is; one that fits so badly that it must be
+	// corrupt counts by its own scale.
+	if e.sigma > 0 && scale < float64(corruptScale*e.sigma) {
+		scale = min(scale, float64(pullScale*e.sigma))
+	}
+	toPathParams(&h, &g, pose, e.at[i], 1/float64(scale*scale), out)
+	return explain
+}
+
+// toPathParams carries H and g from twists to the parameters of the path.
+func toPathParams(h *[21]float64, g *[6]float64, pose Pose, q params, scale float64, out *slotData) {
+	rt, jr := jacobian(pose, q)
+	var full, k, hk [6][6]float64
+	at := 0
+	for a := range 6 {
+		for b := a; b < 6; b++ {
+			full[a][b], full[b][a] = h[at], h[at]
+			at++
+		}
+	}
+	for a := range 3 {
+		for b := range 3 {
+			k[a][b], k[3+a][3+b] = rt[3*a+b], jr[3*a+b]
+		}
+	}
+	for a := range 6 {
+		for b := range 6 {
+			for c := range 6 {
+				hk[a][b] += float64(full[a][c] * k[c][b])
+			}
+		}
+	}
+	at = 0
+	for a := range 6 {
+		out.g[a] = 0
+		for c := range 6 {
+			out.g[a] += float64(k[c][a] * g[c])
+		}
+		out.g[a] *= scale
+		for b := a; b < 6; b++ {
+			v := 0.0
+			for c := range 6 {
+				v += float64(k[c][a] * hk[c][b])
+			}
+			out.h[at] = float64(v * scale)
+			at++
+		}
+	}
+}
+
+func gainOf(gain *[4]float64, fromCentre [3]float64) float64 {
+	return gain[0] + (float64(gain[1]*fromCentre[0])+float64(gain[2]*fromCentre[1])+float64(gain[3]*fromCentre[2]))*(1.0/gainReach)
+}
+
+// within gives the voxel ranges of slice k inside the margins.
+func (e *pathEstimator) within(k int) (lo, hi [3]int, ok bool) {
+	for a := range lo {
+		lo[a] = int(math.Ceil(e.t.margin[a]))
+		hi[a] = int(math.Floor(float64(e.g.N[a]-1) - e.t.margin[a]))
+	}
+	axis := e.schedule.Axis
+	ok = k >= lo[axis] && k <= hi[axis]
+	lo[axis], hi[axis] = k, k
+	return lo, hi, ok
+}
+
+// relocate mends what reweighting cannot: a jerk placed between the wrong two
+// slots. A slot on its wrong side fits badly where it is and well at its
+// neighbour's pose; it is moved there. It reports whether any slot was.
+func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
+	any := false
+	for range relocations {
+		if err := e.measure(slots, false); err != nil {
+			return false, err
+		}
+		usual, _ := e.usualScale()
+		per := len(e.shots)
+		to := make([]int, len(e.p)) // the slot whose pose is taken over, or the slot itself
+		err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
+			for s, shot := range e.shots {
+				i := n*per + s
+				to[i] = i
+				best := e.scale[i]
+				if !(best > float64(misplaced*usual[s])) {
+					continue
+				}
+				best = float64(best * 0.9)
+				was := e.scale[i]
+				for _, j := range []int{i - 1, i + 1} {
+					if j < 0 || j >= len(e.p) {
+						continue
+					}
+					var d slotData
+					e.slot(e.work[worker], n, i, shot.Slices, e.poses[j], &d)
+					if e.scale[i] > 0 && e.scale[i] < best {
+						best, to[i] = e.scale[i], j
+					}
+				}
+				e.scale[i] = was
+			}
+			return nil
+		})
+		if err != nil {
+			return false, err
+		}
+		moved := false
+		old := append([]params(nil), e.p...)
+		for i, j := range to {
+			if i != j {
+				e.p[i] = old[j]
+				moved = true
+			}
+		}
+		if !moved {
+			break
+		}
+		any = true
+		e.setPoses(e.chain.offset)
+	}
+	return any, nil
+}
+
+const (
+	// misplaced: a slot whose residual is a third above its fellows' is looked at.
+	misplaced   = 1.3
+	relocations = 4 // a jerk can be that many slots off
+)
+
+// misfit gives the rms over slots of the residual scale, and its median: the
+// noise.
+func (e *pathEstimator) misfit() (rms, sigma float64) {
+	var seen []float32
+	sum := 0.0
+	for _, s := range e.scale {
+		if s > 0 {
+			seen = append(seen, float32(s))
+			sum += float64(s * s)
+		}
+	}
+	if len(seen) == 0 {
+		return 0, 1
+	}
+	return math.Sqrt(sum / float64(len(seen))), max(float64(median(seen)), 1e-30)
+}
+
+// expect fills the expected pose error of each volume from the posterior that
+// c.m holds the factor of: with covariance C of (t, r) at a slot, the mean square
+// displacement over the head is tr Ct + tr(Cr (tr(S) I - S)), S the second
+// moments of the head about its centre.
+func (e *pathEstimator) expect(c *chain, slots []slotData, out []float64) {
+	var s [3][3]float64
+	count := 0.0
+	i := 0
+	for z := range e.g.N[2] {
+		for y := range e.g.N[1] {
+			for x := range e.g.N[0] {
+				if e.est.Mask[i] {
+					p := e.g.world(float64(x), float64(y), float64(z))
+					for a := range 3 {
+						for b := range 3 {
+							s[a][b] += float64((p[a] - e.est.Centre[a]) * (p[b] - e.est.Centre[b]))
+						}
+					}
+					count++
+				}
+				i++
+			}
+		}
+	}
+	if count == 0 {
+		return
+	}
+	trace := s[0][0] + s[1][1] + s[2][2]
+	z := c.m.inverseBand()
+	for n := range e.nt {
+		sum := 0.0
+		for k := range e.shots {
+			base := poseUnknowns * (n*len(e.shots) + k)
+			for a := range 3 {
+				sum += z[base+a][bandWidth]
+				for b := range 3 {
+					hi, lo := base+3+max(a, b), base+3+min(a, b)
+					v := -s[a][b]
+					if a == b {
+						v += trace
+					}
+					sum += float64(z[hi][bandWidth+lo-hi]*v) / count
+				}
+			}
+		}
+		out[n] = math.Sqrt(max(0, sum/float64(len(e.shots))))
+	}
+}
