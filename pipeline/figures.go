@@ -72,13 +72,14 @@ func (m *measures) counts() []bool {
 	return use
 }
 
-func (m *measures) empty() bool {
+// headVoxels is how many voxels the head has.
+func (m *measures) headVoxels() (n int) {
 	for _, in := range m.mask {
 		if in {
-			return false
+			n++
 		}
 	}
-	return true
+	return n
 }
 
 // measureRaw and measureSteady look at the series before and after.
@@ -100,7 +101,7 @@ func (m *measures) measureSteady(ctx context.Context, data []float32, nt, worker
 func (m *measures) look(ctx context.Context, data []float32, nt, workers int) (dvars []float64, tsnr []float32, err error) {
 	nv := len(m.mask)
 	dvars = undefined(nt)
-	if !m.empty() {
+	if m.headVoxels() > 0 {
 		if dvars, err = quality.DVARS(ctx, data, nv, nt, m.mask, m.counts(), workers); err != nil {
 			return nil, nil, err
 		}
@@ -108,17 +109,6 @@ func (m *measures) look(ctx context.Context, data []float32, nt, workers int) (d
 	tsnr = make([]float32, nv)
 	err = quality.TSNR(ctx, tsnr, data, nv, nt, m.counts(), workers)
 	return dvars, tsnr, err
-}
-
-// inside gathers a map's values over the head, in voxel order.
-func (m *measures) inside(vol []float32) []float64 {
-	var out []float64
-	for i, in := range m.mask {
-		if in {
-			out = append(out, float64(vol[i]))
-		}
-	}
-	return out
 }
 
 // withoutLost leaves out the differences that a lost volume has a part in.
@@ -135,11 +125,23 @@ func (m *measures) withoutLost(v []float64) []float64 {
 	return out
 }
 
+// betweenAligned keeps the differences between two aligned volumes.
+func (m *measures) betweenAligned(v []float64) []float64 {
+	out := append([]float64{}, v...)
+	for n := range out {
+		if n == 0 || m.states[n] != string(realign.Aligned) || m.states[n-1] != string(realign.Aligned) {
+			out[n] = math.NaN()
+		}
+	}
+	return out
+}
+
 // Figures are the numbers of a run that limits, the table of all runs and people look
 // at. They are read back from its quality file, so that a run that is up to date has them too.
 type Figures struct {
 	Volumes, Aligned, Doubtful, Lost int
 	MeanFD, MaxFD                    float64 // mm; NaN where undefined, as all below
+	MeanFDAligned                    float64 // mm; between aligned volumes only
 	MeanRMS                          float64 // mm
 	MaxShift                         float64 // mm, over aligned volumes
 	MeanDVARSRaw, MeanDVARSSteady    float64 // %
@@ -167,12 +169,11 @@ func (m *measures) qualityFile(p *Plan) []byte {
 		f.add("Source", d.Source)
 		o.add(name, append(f, extra...))
 	}
-	summary := func(v []float64, digits int) []member {
-		s := quality.Summarise(v)
+	summary := func(s quality.Summary, digits int) []member {
 		return []member{{"Mean", rounded(s.Mean, digits)}, {"Median", rounded(s.Median, digits)}, {"Max", rounded(s.Max, digits)}, {"N", s.N}}
 	}
 	series := func(name string, v, summarised []float64, digits int) {
-		figure(name, append(summary(summarised, digits), member{"Volumes", roundedAll(v, digits)})...)
+		figure(name, append(summary(quality.Summarise(summarised), digits), member{"Volumes", roundedAll(v, digits)})...)
 	}
 	count := func(state realign.State) int {
 		n := 0
@@ -189,14 +190,15 @@ func (m *measures) qualityFile(p *Plan) []byte {
 	value("volumes_doubtful", count(realign.Doubtful))
 	value("volumes_lost", count(realign.Lost))
 	value("max_shift", rounded(m.maxShift(), digitsMM))
+	value("mean_fd_aligned", rounded(quality.Summarise(m.betweenAligned(m.fd)).Mean, digitsMM))
 	series("fd", m.fd, m.fd, digitsMM)
 	series("rms_ball", m.rms, m.rms, digitsMM)
 	series("dvars_raw", m.dvarsRaw, m.withoutLost(m.dvarsRaw), digitsShare)
 	series("dvars_steady", m.dvarsSteady, m.withoutLost(m.dvarsSteady), digitsShare)
 	series("outside", m.outside, m.outside, digitsShare)
 	series("fit", m.fit, m.fit, digitsShare)
-	figure("tsnr_raw", summary(m.inside(m.tsnrRaw), 4)...)
-	figure("tsnr_steady", summary(m.inside(m.tsnrSteady), 4)...)
+	figure("tsnr_raw", summary(quality.SummariseInside(m.tsnrRaw, m.mask), 4)...)
+	figure("tsnr_steady", summary(quality.SummariseInside(m.tsnrSteady, m.mask), 4)...)
 	rows := make([][]num, len(m.spikes))
 	worst := math.NaN()
 	at := [2]int{-1, -1}
@@ -256,8 +258,9 @@ func parseFigures(data []byte) (*Figures, error) {
 	return &Figures{
 		Volumes: count("volumes"), Aligned: count("volumes_aligned"), Doubtful: count("volumes_doubtful"), Lost: count("volumes_lost"),
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
-		MeanRMS:  float64(q["rms_ball"].Mean),
-		MaxShift: float64(q["max_shift"].Value), MeanDVARSRaw: float64(q["dvars_raw"].Mean), MeanDVARSSteady: float64(q["dvars_steady"].Mean),
+		MeanFDAligned: float64(q["mean_fd_aligned"].Value),
+		MeanRMS:       float64(q["rms_ball"].Mean),
+		MaxShift:      float64(q["max_shift"].Value), MeanDVARSRaw: float64(q["dvars_raw"].Mean), MeanDVARSSteady: float64(q["dvars_steady"].Mean),
 		MedianTSNRRaw: float64(q["tsnr_raw"].Median), MedianTSNRSteady: float64(q["tsnr_steady"].Median),
 	}, nil
 }
@@ -269,20 +272,30 @@ type Limits struct {
 	Lost                    *int
 }
 
-// Outside says which limits the figures are outside of, in words. A figure that is
+// A Breach is a limit that a run is outside of.
+type Breach struct {
+	Column string // of runs.tsv
+	Words  string
+}
+
+// Outside says which limits the figures are outside of. A figure that is
 // undefined is outside no limit.
-func (l Limits) Outside(f *Figures) []string {
-	var out []string
-	check := func(name string, limit *float64, v float64) {
+func (l Limits) Outside(f *Figures) []Breach {
+	var out []Breach
+	check := func(column, name string, limit *float64, v float64) {
 		if limit != nil && v > *limit {
-			out = append(out, fmt.Sprintf("%s %s mm is above the limit %s mm", name, decimal(v, 4), strconv.FormatFloat(*limit, 'g', -1, 64)))
+			out = append(out, Breach{column, fmt.Sprintf("%s %s mm is above the limit %s mm", name, decimal(v, 4), strconv.FormatFloat(*limit, 'g', -1, 64))})
 		}
 	}
-	check("mean FD", l.MeanFD, f.MeanFD)
-	check("largest FD", l.MaxFD, f.MaxFD)
-	check("longest shift", l.MaxShift, f.MaxShift)
+	check("mean_fd", "mean FD", l.MeanFD, f.MeanFD)
+	check("max_fd", "largest FD", l.MaxFD, f.MaxFD)
+	check("max_shift", "longest shift", l.MaxShift, f.MaxShift)
 	if l.Lost != nil && f.Lost > *l.Lost {
-		out = append(out, fmt.Sprintf("%d volumes lost, above the limit %d", f.Lost, *l.Lost))
+		what := "volumes"
+		if f.Lost == 1 {
+			what = "volume"
+		}
+		out = append(out, Breach{"lost", fmt.Sprintf("%d %s lost, above the limit %d", f.Lost, what, *l.Lost)})
 	}
 	return out
 }

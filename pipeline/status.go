@@ -14,6 +14,7 @@ import (
 	"evenkeel/dataset"
 	"evenkeel/fault"
 	"evenkeel/internal/parallel"
+	"evenkeel/slicetime"
 )
 
 // Exit codes, from the sysexits table where it has one.
@@ -62,16 +63,21 @@ func (e *UsageError) Error() string {
 
 // NothingSelected means that the dataset has no run that the selection keeps.
 type NothingSelected struct {
-	Root  string
-	Runs  int    // runs of the dataset before the selection
-	Asked string // the selection in words, "" when there was none
+	Root    string
+	Runs    int    // runs of the dataset before the selection
+	LeftOut int    // images of the selection that are no magnitudes, and so no runs
+	Asked   string // the selection in words, "" when there was none
 }
 
 func (e *NothingSelected) Error() string {
-	if e.Runs == 0 {
-		return fmt.Sprintf("%s: holds no BOLD run (sub-*/[ses-*/]func/*_bold.nii[.gz])", e.Root)
+	left := ""
+	if e.LeftOut > 0 {
+		left = fmt.Sprintf("; %d images of other parts than the magnitude were left out (part-left-out)", e.LeftOut)
 	}
-	return fmt.Sprintf("%s: none of its %d runs matches %s; leave options out, or see evenkeel survey %s for what there is", e.Root, e.Runs, e.Asked, e.Root)
+	if e.Runs == 0 {
+		return fmt.Sprintf("%s: holds no BOLD run (sub-*/[ses-*/]func/*_bold.nii[.gz])%s", e.Root, left)
+	}
+	return fmt.Sprintf("%s: none of its %d runs matches %s; leave options out, or see evenkeel survey %s for what there is%s", e.Root, e.Runs, e.Asked, e.Root, left)
 }
 
 // A CreateError means that the output cannot be created.
@@ -180,7 +186,8 @@ type Outcome struct {
 	Faults  []fault.Fault // all of the run's faults, those found while running included
 	Err     error         // what failed, nil unless Failed
 	Figures *Figures      // nil unless Done or UpToDate
-	Outside []string      // limits that the run is outside of, in words
+	Outside []Breach      // limits that the run is outside of
+	Older   bool          // refused or failed, while OUT still holds the outputs of an earlier time
 }
 
 // codeOf gives the exit code that an error of any kind stands for.
@@ -193,11 +200,14 @@ func codeOf(err error) int {
 		bug      *BugError
 		panicked *parallel.Panic
 		refused  *Refused
+		argument *slicetime.ArgumentError
 	)
 	switch {
 	case err == nil:
 		return ExitDone
-	case errors.As(err, &bug), errors.As(err, &panicked):
+	case errors.As(err, &bug), errors.As(err, &panicked), errors.As(err, &argument):
+		// Arguments are settled before a run starts: one that does not fit is
+		// a mistake of ours.
 		return ExitBug
 	case errors.As(err, &usage):
 		return ExitUsage

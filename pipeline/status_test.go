@@ -15,7 +15,7 @@ import (
 
 func outcome(s State, err error) Outcome { return Outcome{State: s, Err: err} }
 
-// The precedence of the contract: 70, 74, 73, 75, 65, 3, 4; usage and missing input
+// The precedence that README promises: 70, 74, 73, 75, 65, 3, 4; usage and missing input
 // mean that nothing was started.
 func TestExitCode(t *testing.T) {
 	var (
@@ -26,7 +26,7 @@ func TestExitCode(t *testing.T) {
 		create  = outcome(Failed, &CreateError{Path: "x", Err: syscall.EACCES})
 		bug     = outcome(Failed, &BugError{Run: "x", Value: "y"})
 		stopped = outcome(Interrupted, nil)
-		outside = Outcome{State: Done, Outside: []string{"mean FD"}}
+		outside = Outcome{State: Done, Outside: []Breach{{Column: "mean_fd", Words: "mean FD"}}}
 	)
 	for i, c := range []struct {
 		err  error

@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"os"
 	"path"
@@ -44,6 +45,7 @@ type Event struct {
 	Kind    EventKind
 	Plan    *Plan
 	Stage   string   // with RunStage
+	Why     string   // with RunStarted: why a run that OUT holds something of is computed again, "" for a new one
 	Outcome *Outcome // with RunEnded
 }
 
@@ -58,9 +60,19 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	if err := CheckOut(ds.Root, job.Out); err != nil {
 		return nil, err
 	}
+	// Once and for all: folders are walked, and a walk does not enter a link.
+	out, err := dataset.RealPath(job.Out)
+	if err != nil {
+		return nil, creating(job.Out, err)
+	}
+	job.Out = out
 	outcomes := make([]Outcome, len(plans))
 	observe := serial(job.Observe)
 	end := func(i int, o Outcome) {
+		if o.State == RefusedRun || o.State == Failed {
+			_, err := os.Stat(filepath.Join(job.Out, filepath.FromSlash(o.Plan.Output("record"))))
+			o.Older = err == nil
+		}
 		outcomes[i] = o
 		observe(Event{Kind: RunEnded, Plan: o.Plan, Outcome: &outcomes[i]})
 	}
@@ -196,9 +208,9 @@ func serial(observe func(Event)) func(Event) {
 	}
 }
 
-// guarded does a unit under its lock. A panic becomes the outcome of every run of
-// the unit: it must not reach the goroutine's end, where it would take all
-// other runs with it.
+// guarded does a unit under its lock. A panic outside a single run (those see to
+// their own) becomes the outcome of every run of the unit: it must not reach the
+// goroutine's end, where it would take all other runs with it.
 func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Event)) (out []Outcome) {
 	defer func() {
 		if v := recover(); v != nil {
@@ -208,16 +220,24 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 		}
 	}()
 	failed := func(err error) []Outcome {
-		return u.all(func(p *Plan) Outcome { return ended(p, nil, nil, err) })
+		return u.all(func(p *Plan) Outcome { return ended(p, nil, err) })
 	}
 	first := u.plans[0]
 	dir := filepath.Join(job.Out, filepath.FromSlash(first.Run.Dir))
 	if err := os.MkdirAll(dir, 0o755); err != nil {
-		return failed(creating(first.Run.Dir, err))
+		return failed(creating(dir, err))
 	}
 	lock, err := lockFile(ctx, filepath.Join(dir, fmt.Sprintf(".%s.lock", path.Base(first.Run.Group))), func() {
 		observe(Event{Kind: RunWaiting, Plan: first})
 	})
+	if create := (*CreateError)(nil); errors.As(err, &create) {
+		// A folder that cannot be written holds no work under way: where
+		// nothing needs to be written, that is no matter.
+		if out, ok := u.standing(ctx, job); ok {
+			return out
+		}
+		return failed(&CreateError{Path: dir, Err: fmt.Errorf("no file can be made in it: %w", cause(create.Err))})
+	}
 	if err != nil {
 		return failed(err)
 	}
@@ -227,19 +247,35 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 	var todo unit
 	for i, p := range u.plans {
 		sweep(job.Out, p.Outputs)
-		if !job.Redo {
-			if f := upToDate(job.Out, p); f != nil {
-				out[i] = Outcome{Plan: p, State: UpToDate, Faults: p.Faults, Figures: f}
-				continue
-			}
+		st, err := standing(ctx, job.Out, p, job.Redo)
+		switch {
+		case err != nil:
+			out[i] = ended(p, nil, err)
+			continue
+		case st.Figures != nil:
+			out[i] = Outcome{Plan: p, State: UpToDate, Faults: p.Faults, Figures: st.Figures}
+			continue
 		}
-		observe(Event{Kind: RunStarted, Plan: p})
+		observe(Event{Kind: RunStarted, Plan: p, Why: st.Why})
 		todo.plans = append(todo.plans, p)
 	}
 	for _, o := range w.run(ctx, todo) {
 		out[slices.Index(u.plans, o.Plan)] = o
 	}
 	return out
+}
+
+// standing gives the outcomes of a unit every run of which is up to date; ok is false if
+// one is not.
+func (u unit) standing(ctx context.Context, job Job) (out []Outcome, ok bool) {
+	for _, p := range u.plans {
+		s, err := standing(ctx, job.Out, p, job.Redo)
+		if err != nil || s.Figures == nil {
+			return nil, false
+		}
+		out = append(out, Outcome{Plan: p, State: UpToDate, Faults: p.Faults, Figures: s.Figures})
+	}
+	return out, true
 }
 
 func (u unit) all(outcome func(*Plan) Outcome) []Outcome {

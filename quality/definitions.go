@@ -18,7 +18,7 @@ type Definition struct {
 // Level is one word that a figure can take, and what it means.
 type Level struct{ Value, Description string }
 
-// The radii of the contract. They are used by the definitions below and by
+// The radii. They are used by the definitions below and by
 // whoever computes the figures.
 const (
 	// FDRadiusMM makes turns into lengths in framewise displacement (Power et al. 2012).
@@ -78,6 +78,8 @@ var definitions = []Definition{
 		Description: "As tsnr_raw, of the corrected series."},
 	{Name: "spikes", Unit: "1", Source: own,
 		Description: fmt.Sprintf("Spike score of each volume and slice of the raw series. d is the mean over the head's voxels of the slice of the distance from the median of the four volumes nearest in time; the score is (d - median of d) / (1.4826 median absolute deviation of d), both over the volumes of the slice. In stationary noise it is near to standard normal. Undefined for slices with fewer than %d voxels of the head and for series of fewer than %d volumes.", MinSpikeVoxels, MinSpikeVolumes)},
+	{Name: "mean_fd_aligned", Unit: "mm", Source: power,
+		Description: "Mean of fd over the volumes that are aligned and follow an aligned one: what a doubtful pose says of itself is left out."},
 	{Name: "max_shift", Unit: "mm", Source: own,
 		Description: "Length of the longest shift (shift_x, shift_y, shift_z) of any aligned volume."},
 	{Name: "volumes", Unit: "1", Source: own,

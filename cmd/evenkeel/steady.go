@@ -26,8 +26,9 @@ func (s *session) steadyCommand() *cli.Command {
 			"into OUT. Runs that are complete and up to date are skipped, so the same command\n"+
 			"again goes on where it was interrupted. Results do not depend on --jobs, --memory\n"+
 			"or the machine.", "evenkeel steady voyage voyage-steady --task watch --limit-mean-fd 0.3",
-			pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput,
-			pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt),
+			codes(pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput,
+				pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt).
+				but(pipeline.ExitOutside, "everything is done, but a run is outside a limit given")),
 		Flags: slices.Concat(selectionFlags(), settingFlags(), limitFlags(), []cli.Flag{
 			&cli.StringFlag{Name: "jobs", Usage: "`N` runs at once", DefaultText: "chosen from cores and runs"},
 			memoryFlag(),
@@ -67,7 +68,11 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 		return err
 	}
 	if c.Bool("plan") {
-		if err := found.writeText(s.stdout); err != nil {
+		standings, err := pipeline.Standings(c.Context, found.plans, out, job.Redo, pipeline.Cores())
+		if err != nil {
+			return err
+		}
+		if err := found.writeText(s.stdout, standings); err != nil {
 			return &pipeline.IOError{Path: "standard output", Err: err}
 		}
 		return &exit{found.code()}
@@ -106,7 +111,11 @@ func (s *session) observe(e pipeline.Event) {
 	case pipeline.RunWaiting:
 		s.log.info("waiting", run+": another process holds this run, waiting for it", fields{"run": run})
 	case pipeline.RunStarted:
-		s.log.info("started", run+": "+e.Plan.What(), fields{"run": run, "file": e.Plan.Run.File})
+		again := ""
+		if e.Why != "" {
+			again = "again (" + e.Why + "): "
+		}
+		s.log.info("started", run+": "+again+e.Plan.What(), fields{"run": run, "file": e.Plan.Run.File, "why": e.Why})
 	case pipeline.RunStage:
 		s.log.step(1)
 		if s.log.json {
@@ -142,8 +151,11 @@ func (s *session) ended(run string, o *pipeline.Outcome) {
 			s.log.error("failed", run+": "+o.Err.Error(), f)
 		}
 	}
-	for _, text := range o.Outside {
-		s.log.error("outside-limit", run+": "+text, fields{"run": run})
+	for _, b := range o.Outside {
+		s.log.error("outside-limit", run+": "+b.Words, fields{"run": run})
+	}
+	if o.Older {
+		s.log.warn("older-outputs", run+": outputs of an earlier time are still in OUT and stay as they are; evenkeel audit tells whether they fit the data as they are", fields{"run": run})
 	}
 }
 

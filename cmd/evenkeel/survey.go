@@ -2,9 +2,11 @@ package main
 
 import (
 	"encoding/json"
+	"errors"
 	"fmt"
 	"io"
 	"slices"
+	"strconv"
 	"strings"
 
 	"github.com/urfave/cli/v2"
@@ -21,9 +23,15 @@ func (s *session) surveyCommand() *cli.Command {
 		ArgsUsage: "DATASET",
 		Description: describe("Reads headers and sidecars only and writes nothing. One line a run: size, repetition\n"+
 			"time, slice schedule, phase-encode axis and its direction in the body, what steady\n"+
-			"would do; then every fault of the run. The exit code is the one that steady would\n"+
-			"return for its refusals.", "evenkeel survey voyage --subject alder --json",
-			pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt),
+			"would do; then every fault of the run. Words count slices from 1 in the order of the\n"+
+			"array index (ascending: rising index, which need not be upward in the body); numbers\n"+
+			"in tables, faults and options count from 0. The exit code is the one that steady\n"+
+			"would return for its refusals.", "evenkeel survey voyage --subject alder --json",
+			codes(pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt).
+				but(pipeline.ExitDone, "steady would process every selected run").
+				but(pipeline.ExitSome, "steady would refuse some runs, or could not read them").
+				but(pipeline.ExitData, "steady would refuse every selected run").
+				but(pipeline.ExitInterrupt, "interrupted: run the same command again")),
 		Flags: slices.Concat(selectionFlags(), settingFlags(), []cli.Flag{memoryFlag(),
 			&cli.BoolFlag{Name: "json", Usage: "the same as one JSON document"}}),
 		Action: func(c *cli.Context) error {
@@ -42,7 +50,7 @@ func (s *session) surveyCommand() *cli.Command {
 			if c.Bool("json") {
 				err = found.writeJSON(s.stdout)
 			} else {
-				err = found.writeText(s.stdout)
+				err = found.writeText(s.stdout, nil)
 			}
 			if err != nil {
 				return &pipeline.IOError{Path: "standard output", Err: err}
@@ -72,6 +80,12 @@ func (s *session) survey(c *cli.Context, root string, req pipeline.Request) (*su
 		s.log.warn("notice", n.String(), fields{"notice": n})
 	}
 	f.plans, err = pipeline.Survey(c.Context, ds, req)
+	if nothing := (*pipeline.NothingSelected)(nil); errors.As(err, &nothing) {
+		// What was left out may be all there is.
+		for _, x := range f.leftOut {
+			s.log.fault("", x)
+		}
+	}
 	return f, err
 }
 
@@ -96,12 +110,24 @@ func (f *surveyed) code() int {
 	return pipeline.ExitCode(nil, outcomes, f.hidden())
 }
 
-// writeText writes a line a run, its faults below it.
-func (f *surveyed) writeText(w io.Writer) error {
+// writeText writes a line a run, its faults below it. standings, if not nil, add how each run
+// stands in OUT.
+func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing) error {
 	head := []string{"run", "size", "TR", "slices", "phase", "steady"}
+	if standings != nil {
+		head = append(head, "in OUT")
+	}
 	rows := [][]string{head}
-	for _, p := range f.plans {
-		rows = append(rows, []string{p.Run.Stem, p.Size(), repetition(p), shortSchedule(p), phase(p), p.Short()})
+	for i, p := range f.plans {
+		row := []string{p.Run.Stem, p.Size(), repetition(p), shortSchedule(p), phase(p), p.Short()}
+		switch {
+		case standings == nil:
+		case p.Runs():
+			row = append(row, standings[i].String())
+		default:
+			row = append(row, "-")
+		}
+		rows = append(rows, row)
 	}
 	width := make([]int, len(head))
 	for _, r := range rows {
@@ -252,7 +278,10 @@ func describeRun(p *pipeline.Plan) surveyRun {
 		r.Entities[e.Key] = e.Label
 	}
 	if p.Header != nil {
-		g := &surveyGeometry{VoxelMM: p.VoxelMM()}
+		g := &surveyGeometry{}
+		for i, v := range p.VoxelMM() {
+			g.VoxelMM[i] = single(v)
+		}
 		g.Size[0], g.Size[1], g.Size[2], g.Size[3] = p.Header.Size()
 		for i, v := range p.Grid.Affine {
 			g.Affine[i/4][i%4] = v
@@ -301,6 +330,13 @@ func describeRun(p *pipeline.Plan) surveyRun {
 		}
 	}
 	return r
+}
+
+// single is the shortest decimal that stands for v in single precision, which is all
+// that most headers hold.
+func single(v float64) float64 {
+	s, _ := strconv.ParseFloat(strconv.FormatFloat(v, 'g', -1, 32), 64)
+	return s
 }
 
 func finite(v float64) bool { return v-v == 0 }
