@@ -24,7 +24,7 @@ var rooms = map[string][]string{
 	"nifti":             {},
 	"provenance":        {},
 	"slicetime":         {},
-	"realign":           {},
+	"realign":           {"slicetime"},
 	"quality":           {"realign", "slicetime"},
 	"phantom":           {"nifti"},
 	"fault":             nil,

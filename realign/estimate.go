@@ -91,15 +91,15 @@ func (e *TooFewAligned) Error() string {
 const (
 	// coarseSigma: a Gaussian of 8 mm leaves structures of the size of the head,
 	// so that a start 30 mm or 40 degrees off still slopes towards the match
-	// (numerics, section 1e).
+	// (found by simulation).
 	coarseSigma = 8.0
 	// fineShare of the largest voxel edge, at most fineMost mm: 2 mm at 3.8 mm
 	// voxels removes the spectrum that quintic splines cannot follow, at under
-	// 2 % of the precision (numerics, sections 1a and 1b).
+	// 2 % of the precision (found by simulation).
 	fineShare = 0.55
 	fineMost  = 3.0
 	// fineMargin: with an averaged template two planes are left out at each
-	// field edge, in the volume and in the template (numerics, section 1d).
+	// field edge, in the volume and in the template (found by simulation).
 	fineMargin = 2.0
 	// coarseMargin: coarse planes are further apart, and rough is enough.
 	coarseMargin = 1.0
@@ -280,7 +280,7 @@ func (e *estimator) againstMean() (*Estimate, error) {
 	for range 3 {
 		// The average stands at the pose of the first aligned volume.
 		if first = firstAligned(vols); first < 0 {
-			return nil, &TooFewAligned{Aligned: 0, Volumes: e.nt}
+			return nil, &TooFewAligned{Aligned: e.nt - countState(vols, Lost), Volumes: e.nt}
 		}
 		back := vols[first].Pose.Inverse()
 		used := make([]bool, e.nt)
@@ -308,9 +308,18 @@ func (e *estimator) againstMean() (*Estimate, error) {
 		}
 		vols, weak = next, nextWeak
 		if clean {
-			break
+			return e.finish(m, vols, first, passes)
 		}
 	}
+	// Whatever still does not fit stays out of the reference that is given.
+	if firstAligned(vols) < 0 {
+		return nil, &TooFewAligned{Aligned: e.nt - countState(vols, Lost), Volumes: e.nt}
+	}
+	image, unknown, err := e.average(vols, weak)
+	if err != nil {
+		return nil, err
+	}
+	m = e.newModel(image, unknown, 5)
 	return e.finish(m, vols, first, passes)
 }
 
@@ -757,17 +766,17 @@ func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimat
 		Volumes: vols, Reference: append([]float32(nil), m.image...), Mask: m.mask, Centre: m.centre,
 		ReferenceIndex: index, Passes: passes, unknown: m.unknown,
 		Parameters: []Parameter{
-			{"coarseGaussianMM", coarseSigma},
-			{"fineGaussianMM", e.sigma},
-			{"marginVoxels", fineMargin},
-			{"rimVoxels", rim},
-			{"toleranceMM", fineTolerance},
-			{"maxIterations", maxIterations},
-			{"fanBelowCorrelation", fanBelow},
-			{"alignedFromCorrelation", alignedFit},
-			{"doubtfulFromCorrelation", doubtfulFit},
-			{"mostOutsideShare", mostOutside},
-			{"biweightCut", tukeyCut},
+			{"coarse_gaussian_mm", coarseSigma},
+			{"fine_gaussian_mm", e.sigma},
+			{"margin_voxels", fineMargin},
+			{"rim_voxels", rim},
+			{"tolerance_mm", fineTolerance},
+			{"max_iterations", maxIterations},
+			{"fan_below_correlation", fanBelow},
+			{"aligned_from_correlation", alignedFit},
+			{"doubtful_from_correlation", doubtfulFit},
+			{"most_outside_share", mostOutside},
+			{"biweight_cut", tukeyCut},
 		},
 	}, nil
 }

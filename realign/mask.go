@@ -1,16 +1,18 @@
 package realign
 
-// HeadMask finds the head in a volume: voxels above half of Otsu's threshold
-// (Otsu 1979, IEEE Trans. SMC 9(1):62-66) of the lightly smoothed volume, of
-// which the largest face-connected piece is kept and its holes are filled. Half
-// of the threshold, because Otsu's lies midway between air and tissue and would
-// leave out the dark parts of a shaded head; a Nyquist ghost, usually below a
-// tenth of the head, stays outside.
+// HeadMask finds the head in a volume: voxels above the middle between the air
+// and Otsu's threshold (Otsu 1979, IEEE Trans. SMC 9(1):62-66) of the lightly
+// smoothed volume, of which the largest face-connected piece is kept and its holes
+// are filled. The middle, because Otsu's threshold lies midway between air and
+// tissue and would leave out the dark parts of a shaded head; a Nyquist ghost,
+// usually below a tenth of the head, stays outside. The air, the mean of what is
+// below the threshold, need not be at zero.
 func HeadMask(g Grid, vol []float32) []bool {
 	s := newSmoother(g, maskSmoothing(g), [3]int{1, 1, 1})
 	v := make([]float32, g.voxels())
 	s.run(v, vol)
-	t := float32(otsu(v) / 2)
+	split, air := otsu(v)
+	t := float32((split + air) / 2)
 	mask := make([]bool, len(v))
 	for i, x := range v {
 		mask[i] = x > t
@@ -28,25 +30,25 @@ func maskSmoothing(g Grid) float64 {
 // otsu returns the threshold that splits the values into two classes of least
 // variance inside, over 256 equal bins from the least to the greatest value;
 // where a gap between the classes makes many thresholds equally good, the middle
-// of the gap.
-func otsu(v []float32) float64 {
+// of the gap. below is the mean of the lower class.
+func otsu(v []float32) (split, below float64) {
 	const bins = 256
 	lo, hi := v[0], v[0]
 	for _, x := range v {
 		lo, hi = min(lo, x), max(hi, x)
 	}
 	if !(hi > lo) {
-		return float64(hi)
+		return float64(hi), float64(hi)
 	}
 	var h [bins]int
 	scale := float64(bins) / float64(hi-lo)
 	for _, x := range v {
 		h[min(bins-1, int(float64(float64(x-lo)*scale)))]++
 	}
-	total, sum := 0.0, 0.0
+	total, weight := 0.0, 0.0
 	for i, n := range h {
 		total += float64(n)
-		sum += float64(float64(i) * float64(n))
+		weight += float64(float64(i) * float64(n))
 	}
 	best, at, last := -1.0, 0, 0
 	n0, s0 := 0.0, 0.0
@@ -57,7 +59,7 @@ func otsu(v []float32) float64 {
 		if n0 == 0 || n1 == 0 {
 			continue
 		}
-		d := s0/n0 - (sum-s0)/n1
+		d := s0/n0 - (weight-s0)/n1
 		// Otsu 1979, eq. 14: variance between the classes.
 		switch b := float64(float64(float64(n0*n1)*d) * d); {
 		case b > best:
@@ -66,7 +68,15 @@ func otsu(v []float32) float64 {
 			last = i
 		}
 	}
-	return float64(lo) + float64(at+last+2)/(2*scale)
+	split = float64(lo) + float64(at+last+2)/(2*scale)
+	sum, count := 0.0, 0.0
+	for _, x := range v {
+		if float64(x) < split {
+			sum += float64(x)
+			count++
+		}
+	}
+	return split, sum / count
 }
 
 // neighbours calls fn with the index of every face neighbour of voxel i.

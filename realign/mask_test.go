@@ -13,10 +13,10 @@ func TestOtsuSplitsTwoClasses(t *testing.T) {
 	for i := range 1000 {
 		v = append(v, float32(10+i%5), float32(500+i%50))
 	}
-	if got := realign.Otsu(v); got < 200 || got > 320 {
+	if got, air := realign.Otsu(v); got < 200 || got > 320 || air != 12 {
 		t.Errorf("threshold %g between classes at 10..14 and 500..549", got)
 	}
-	if got := realign.Otsu([]float32{3, 3, 3}); got != 3 {
+	if got, _ := realign.Otsu([]float32{3, 3, 3}); got != 3 {
 		t.Errorf("a constant volume: %g", got)
 	}
 }
@@ -68,6 +68,27 @@ func TestHeadMaskFindsTheHead(t *testing.T) {
 	}
 	if in > 0 || out > 0 {
 		t.Errorf("%d voxels of the head left out, %d far outside taken in", in, out)
+	}
+}
+
+// Air need not be at zero: the mask of a head on any background is the same.
+func TestHeadMaskOnBackground(t *testing.T) {
+	data := scan(t, small, []realign.Pose{realign.Identity}, 9, nil)
+	want := realign.HeadMask(small, data)
+	for _, level := range []float32{5000, -5000} {
+		moved := slices.Clone(data)
+		for i := range moved {
+			moved[i] += level
+		}
+		differ := 0
+		for i, in := range realign.HeadMask(small, moved) {
+			if in != want[i] {
+				differ++
+			}
+		}
+		if differ > len(want)/1000 { // float32 at 5000 rounds to half a thousandth
+			t.Errorf("air at %g: %d voxels differ", level, differ)
+		}
 	}
 }
 

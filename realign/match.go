@@ -47,8 +47,8 @@ type matcher struct {
 
 // point is one voxel of the volume with the template at its matching point.
 type point struct {
-	at    [3]int16
-	slice int16
+	at    [3]int32
+	slice int32
 	head  bool       // inside the head
 	phi   [3]float32 // scanner coordinates for the gain, from the centre, / gainReach
 	jac   [6]float32 // gradient and moment of the template, per mm and per rad
@@ -97,7 +97,7 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				}
 				yw := applyAffine(&toCentre, y[0], y[1], y[2])
 				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
-				q := point{at: [3]int16{int16(i), int16(j), int16(k)}, head: t.head[near]}
+				q := point{at: [3]int32{int32(i), int32(j), int32(k)}, head: t.head[near]}
 				q.slice = q.at[e.sliceAxis]
 				for a := range xw {
 					q.phi[a] = float32(xw[a] * (1.0 / gainReach))

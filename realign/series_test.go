@@ -28,7 +28,9 @@ func realSeries(t *testing.T, name string) (realign.Grid, []float32, int) {
 // A volunteer who moves on purpose (README of the series): volumes 2 to 4 are
 // turned by 20 to 55 degrees about the vertical axis, 6 and 7 nod partly out of
 // the field, the others move by millimetres. An independent aligner found turns
-// of 22-39, 52-56 and 13-36 degrees in volumes 2, 3 and 4 (numerics, section 5).
+// of 22-39, 52-56 and 13-36 degrees in volumes 2, 3 and 4, against volume 0, with a
+// residual that is flat over several degrees, as the head turned while the volumes
+// were taken: 4 degrees more are allowed on either side.
 func TestVolunteerWhoMoves(t *testing.T) {
 	for _, task := range []string{"interleavedup", "interleaveddown", "sequentialup", "sequentialdown"} {
 		g, data, nt := realSeries(t, "sub-01/func/sub-01_task-"+task+"_bold.nii.gz")
@@ -46,7 +48,7 @@ func TestVolunteerWhoMoves(t *testing.T) {
 				t.Logf("%s: volume %d fit %.3f, correlation of the images %.3f", task, n, v.Fit, c)
 			}
 		}
-		for n, within := range map[int][2]float64{2: {20, 42}, 3: {48, 60}, 4: {12, 42}} {
+		for n, within := range map[int][2]float64{2: {18, 43}, 3: {48, 60}, 4: {9, 40}} {
 			_, turn := est.Volumes[n].Pose.Params(est.Centre)
 			if z := math.Abs(turn[2]) / degree; z < within[0] || z > within[1] || est.Volumes[n].State == realign.Lost {
 				t.Errorf("%s: volume %d (%s) is turned by %.1f degrees, expected %g to %g", task, n, est.Volumes[n].State, z, within[0], within[1])

@@ -7,7 +7,7 @@ type Boundary int
 
 const (
 	// Odd continues f(-k) = 2 f(0) - f(k): a ramp stays a ramp, so that the
-	// outermost slices are not bent (numerics: with the mirror, the end slices
+	// outermost slices are not bent (found by simulation: with the mirror, the end slices
 	// of a head cut by the field cost 20 um of bias).
 	Odd Boundary = iota
 	// Mirror continues f(-k) = f(k), whole-sample symmetric. It is the rule of
@@ -111,10 +111,7 @@ func (f *lineFilter) pole(c [][lanes]float64, z float64) {
 	for k := 1; math.Abs(zk) > 1e-18; k++ {
 		i, s := k%period, sign
 		if i >= n {
-			i, s = period-i, float64(sign*sign)
-			if f.boundary == Odd {
-				s = 1 // odd about the far end as well: s[-k] = -s[k] = s[period-k]
-			}
+			i, s = period-i, 1 // also where odd: s[-k] = -s[k] = s[period-k]
 		}
 		w := float64(zk * s)
 		for l := range lanes {

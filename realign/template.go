@@ -32,7 +32,7 @@ func newTemplate(g Grid, vol []float32, head, unknown []bool, rim int, margin [3
 // edgeMargin is how many voxels are left out at each end of an axis of n
 // voxels: want, but never so many that fewer than four planes are left. Margins
 // matter because nothing is known past the field: whatever continues the data
-// there bends the outermost planes (numerics, section 0).
+// there bends the outermost planes (found by simulation).
 func edgeMargin(n int, want float64) float64 {
 	return max(0, min(want, float64(n-4)/2))
 }
@@ -60,7 +60,7 @@ func (t *template) nearest(x [3]float64) int {
 	return i + t.g.N[0]*(j+t.g.N[1]*k)
 }
 
-// smoothMask carries a head mask to a thinned grid: a voxel is inside if the
+// thinMask carries a head mask to a thinned grid: a voxel is inside if the
 // nearest voxel of the full grid is.
 func thinMask(mask []bool, n [3]int, s *smoother) []bool {
 	out := make([]bool, s.out[0]*s.out[1]*s.out[2])
