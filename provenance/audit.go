@@ -24,13 +24,6 @@ type Checked struct {
 	InputsUnseen int `json:"inputs_unseen"` // inputs not looked for, the raw dataset not being given
 }
 
-// Audit checks every record in out against the files it names, and against the
-// raw files below raw ("" = not available: counted in InputsUnseen). It is
-// [Auditor.Audit] with one worker and no version to compare.
-func Audit(out, raw string) ([]Finding, Checked, error) {
-	return Auditor{Out: out, Raw: raw}.Audit(context.Background())
-}
-
 // Auditor checks an output folder.
 type Auditor struct {
 	Out     string // the output folder
@@ -74,7 +67,9 @@ func (a Auditor) Audit(ctx context.Context) ([]Finding, Checked, error) {
 	if err := w.walk(ctx, root.FS()); err != nil {
 		return nil, Checked{}, err
 	}
-	w.read()
+	if err := w.read(ctx); err != nil {
+		return nil, Checked{}, err
+	}
 	w.strangers()
 	if err := w.compare(ctx, out, raw); err != nil {
 		return nil, Checked{}, err
@@ -147,13 +142,16 @@ func bidsFolder(name string) bool {
 	return name == "func" || (strings.HasPrefix(name, "sub-") || strings.HasPrefix(name, "ses-")) && !strings.Contains(name, "_")
 }
 
-// read reads the records.
-func (w *auditWork) read() {
+// read reads the records. The error is that of ctx.
+func (w *auditWork) read(ctx context.Context) error {
 	for i := range w.folders {
 		f := &w.folders[i]
 		for _, name := range f.files {
 			if !strings.HasSuffix(name, "_prov.json") {
 				continue
+			}
+			if err := ctx.Err(); err != nil {
+				return err
 			}
 			w.checked.Records++
 			r := auditRecord{path: path.Join(f.dir, name), stem: strings.TrimSuffix(name, "_prov.json")}
@@ -175,6 +173,7 @@ func (w *auditWork) read() {
 			}
 		}
 	}
+	return nil
 }
 
 // readRecord returns nil after a finding if the record cannot be understood.
@@ -347,36 +346,4 @@ func (w *auditWork) compare(ctx context.Context, out, raw folder) error {
 		}
 	}
 	return nil
-}
-
-// UpToDate tells whether every output that a record names is present below out
-// with its recorded size; if not, the finding says what is first amiss. Nothing
-// is read: for digests there is [Audit]. Whether inputs, settings and version
-// are still those of the record is for the caller to compare.
-func UpToDate(out string, rec *Record) (bool, Finding) {
-	root, err := os.OpenRoot(out)
-	if err != nil {
-		return false, Finding{Kind: Unreadable, File: ".", Found: reason(err), Expected: "a folder"}
-	}
-	defer root.Close()
-	return sizes(outFolder(root), rec.Outputs)
-}
-
-// InputsPresent tells likewise whether every input that a record names is
-// present below raw with its recorded size.
-func InputsPresent(raw string, rec *Record) (bool, Finding) {
-	ok, f := sizes(rawFolder(raw), rec.Inputs)
-	if !ok {
-		f.Kind = "input-" + f.Kind
-	}
-	return ok, f
-}
-
-func sizes(d folder, files []File) (bool, Finding) {
-	for _, f := range files {
-		if kind, found, expected := d.look(f.Path).against(f); kind != "" {
-			return false, Finding{Kind: kind, File: f.Path, Found: found, Expected: expected}
-		}
-	}
-	return true, Finding{}
 }

@@ -53,11 +53,22 @@ func (tr *tree) write(root, path, content string) {
 	}
 }
 
+// audit is an audit by one worker that notes no versions.
+func audit(out, raw string) ([]Finding, Checked, error) {
+	return Auditor{Out: out, Raw: raw}.Audit(context.Background())
+}
+
+// describe digests the file at path (with slashes) below root.
+func describe(role, root, path string) (File, error) {
+	sum, n, err := DigestFile(context.Background(), filepath.Join(root, filepath.FromSlash(path)))
+	return File{Role: role, Path: path, SHA256: sum, Bytes: n}, err
+}
+
 // record writes the record of a run, changed.
 func (tr *tree) record(dir, stem string, change func(*Record)) {
 	tr.t.Helper()
 	file := func(root, role, path string) File {
-		f, err := Describe(role, root, path)
+		f, err := describe(role, root, path)
 		if err != nil {
 			tr.t.Fatal(err)
 		}
@@ -110,13 +121,13 @@ func TestGoodTree(t *testing.T) {
 		{tr.raw, Checked{Records: 3, Outputs: 9, Inputs: 6}},
 		{"", Checked{Records: 3, Outputs: 9, InputsUnseen: 6}},
 	} {
-		findings, checked, err := Audit(tr.out, c.raw)
+		findings, checked, err := audit(tr.out, c.raw)
 		if err != nil || len(findings) > 0 || checked != c.want {
 			t.Errorf("%v, %+v, %v", findings, checked, err)
 		}
 	}
 	// An empty folder is in order too, and says that nothing was checked.
-	findings, checked, err := Audit(t.TempDir(), "")
+	findings, checked, err := audit(t.TempDir(), "")
 	if err != nil || len(findings) > 0 || checked != (Checked{}) {
 		t.Errorf("%v, %+v, %v", findings, checked, err)
 	}
@@ -236,7 +247,7 @@ func TestAuditFindsTheBreak(t *testing.T) {
 		}, nil},
 		"listed twice": {func(tr *tree) {
 			tr.record("sub-01/func", "sub-01_task-harbour_run-2", func(r *Record) {
-				f, err := Describe("mask", tr.out, one+mask)
+				f, err := describe("mask", tr.out, one+mask)
 				tr.do(err)
 				r.Outputs = append(r.Outputs, f)
 			})
@@ -269,9 +280,9 @@ func TestAuditFindsTheBreak(t *testing.T) {
 		"one path in both datasets, changed in one": {func(tr *tree) {
 			tr.write(tr.raw, "dataset_description.json", "{ }")
 			tr.record("sub-01/func", "sub-01_task-harbour", func(r *Record) {
-				in, err := Describe("description", tr.raw, "dataset_description.json")
+				in, err := describe("description", tr.raw, "dataset_description.json")
 				tr.do(err)
-				out, err := Describe("description", tr.out, "dataset_description.json")
+				out, err := describe("description", tr.out, "dataset_description.json")
 				tr.do(err)
 				r.Inputs, r.Outputs = append(r.Inputs, in), append(r.Outputs, out)
 			})
@@ -331,7 +342,7 @@ func TestAuditFindsTheBreak(t *testing.T) {
 func TestAuditVersionNotAsked(t *testing.T) {
 	tr := goodTree(t)
 	tr.record("sub-01/func", "sub-01_task-harbour", func(r *Record) { r.Software.Version = "0.0.9" })
-	if findings, _, err := Audit(tr.out, tr.raw); err != nil || len(findings) > 0 {
+	if findings, _, err := audit(tr.out, tr.raw); err != nil || len(findings) > 0 {
 		t.Errorf("%v, %v", findings, err)
 	}
 }
@@ -342,7 +353,7 @@ func TestAuditThroughALink(t *testing.T) {
 	link := filepath.Join(t.TempDir(), "link")
 	tr.do(os.Symlink(tr.out, link))
 	tr.do(os.Remove(filepath.Join(tr.out, one+pose)))
-	findings, checked, err := Audit(link, "")
+	findings, checked, err := audit(link, "")
 	if err != nil || len(findings) != 1 || checked.Records != 3 {
 		t.Errorf("%v, %+v, %v", findings, checked, err)
 	}
@@ -355,7 +366,7 @@ func TestAuditCannotBeMade(t *testing.T) {
 		{filepath.Join(tr.out, "runs.tsv"), ""},
 		{tr.out, filepath.Join(tr.out, "none")},
 	} {
-		if findings, checked, err := Audit(c[0], c[1]); err == nil || findings != nil || checked != (Checked{}) {
+		if findings, checked, err := audit(c[0], c[1]); err == nil || findings != nil || checked != (Checked{}) {
 			t.Errorf("%v: %v, %+v", c, findings, checked)
 		}
 	}
@@ -412,42 +423,8 @@ func TestFindingsAreSortedAndWritten(t *testing.T) {
 	}
 }
 
-func TestUpToDate(t *testing.T) {
-	tr := goodTree(t)
-	rec, err := ReadFile(filepath.Join(tr.out, one+RecordSuffix))
-	if err != nil {
-		t.Fatal(err)
-	}
-	if ok, why := UpToDate(tr.out, rec); !ok {
-		t.Errorf("a good run: %v", why)
-	}
-	if ok, why := InputsPresent(tr.raw, rec); !ok {
-		t.Errorf("good inputs: %v", why)
-	}
-	tr.write(tr.out, one+pose, "tide\n") // same size: nothing is read
-	if ok, why := UpToDate(tr.out, rec); !ok {
-		t.Errorf("same size: %v", why)
-	}
-	tr.write(tr.out, one+pose, "ti")
-	ok, why := UpToDate(tr.out, rec)
-	if want := (Finding{Kind: Changed, File: one + pose, Found: "2 bytes", Expected: "5 bytes"}); ok || why != want {
-		t.Errorf("%v, %v", ok, why)
-	}
-	tr.do(os.Remove(filepath.Join(tr.out, one+series)))
-	if ok, why := UpToDate(tr.out, rec); ok || why.Kind != Missing || why.File != one+series {
-		t.Errorf("%v, %v", ok, why)
-	}
-	if ok, why := UpToDate(filepath.Join(tr.out, "none"), rec); ok || why.Kind != Unreadable {
-		t.Errorf("%v, %v", ok, why)
-	}
-	tr.do(os.Remove(filepath.Join(tr.raw, "task-harbour_bold.json")))
-	if ok, why := InputsPresent(tr.raw, rec); ok || why.Kind != InputMissing || why.File != "task-harbour_bold.json" {
-		t.Errorf("%v, %v", ok, why)
-	}
-}
-
 // An output that was touched after its record was written.
-func ExampleAudit() {
+func ExampleAuditor() {
 	out, err := os.MkdirTemp("", "lantern")
 	if err != nil {
 		fmt.Println(err)
@@ -456,13 +433,13 @@ func ExampleAudit() {
 	defer os.RemoveAll(out)
 	const name = "sub-01_desc-steady_pose.tsv"
 	os.WriteFile(filepath.Join(out, name), []byte("time\n"), 0o644)
-	pose, _ := Describe("pose-table", out, name)
+	pose, _ := describe("pose-table", out, name)
 	r := &Record{Run: "sub-01", Outputs: []File{pose}, Software: Software{Name: "evenkeel", Version: "0.1.0"}}
 	data, _ := r.Marshal()
 	os.WriteFile(filepath.Join(out, "sub-01"+RecordSuffix), data, 0o644)
 
 	os.WriteFile(filepath.Join(out, name), []byte("time\t\n"), 0o644)
-	findings, checked, err := Audit(out, "")
+	findings, checked, err := Auditor{Out: out}.Audit(context.Background())
 	for _, f := range findings {
 		fmt.Println(f)
 	}

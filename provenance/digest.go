@@ -9,7 +9,6 @@ import (
 	"io"
 	"io/fs"
 	"os"
-	"path/filepath"
 )
 
 // Digester takes the SHA-256 and the number of the bytes written to it. Put it
@@ -49,8 +48,9 @@ func (d *Digester) File(role, path string) File {
 }
 
 // DigestFile returns the SHA-256 and the size of a file. Anything but a regular
-// file (after links are followed) is an error; so is whatever reading meets.
-func DigestFile(path string) (sum string, bytes int64, err error) {
+// file (after links are followed) is an error; so is whatever reading meets, and
+// the end of ctx.
+func DigestFile(ctx context.Context, path string) (sum string, bytes int64, err error) {
 	info, err := os.Stat(path)
 	if err != nil {
 		return "", 0, err
@@ -63,16 +63,7 @@ func DigestFile(path string) (sum string, bytes int64, err error) {
 		return "", 0, err
 	}
 	defer f.Close()
-	return digest(context.Background(), f)
-}
-
-// Describe digests the file at path (with slashes) below root.
-func Describe(role, root, path string) (File, error) {
-	sum, n, err := DigestFile(filepath.Join(root, filepath.FromSlash(path)))
-	if err != nil {
-		return File{}, err
-	}
-	return File{Role: role, Path: path, SHA256: sum, Bytes: n}, nil
+	return digest(ctx, f)
 }
 
 // digest reads r to its end, unless ctx is cancelled before.

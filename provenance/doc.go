@@ -43,8 +43,8 @@
 //	prov:startTime, prov:endTime, evenkeel:architecture, evenkeel:cpuFeature,
 //	evenkeel:stageSeconds
 //
-// Nothing else holds a time, a machine or anything that changes between runs.
-// [Record.WithoutLog] leaves them out.
+// Nothing else holds a time, a machine or anything that changes between runs:
+// they are the field [Record.Log].
 //
 // # Guarantees
 //

@@ -86,15 +86,6 @@ func (r *Record) ID() string {
 	return hex.EncodeToString(h.Sum(nil))[:32]
 }
 
-// WithoutLog returns the record without its log part: equal for every
-// computation of the same inputs with the same settings and version. The lists
-// are shared with r.
-func (r *Record) WithoutLog() *Record {
-	c := *r
-	c.Log = Log{}
-	return &c
-}
-
 const (
 	// format is the version of the document's layout; a reader refuses a higher one.
 	format = 1

@@ -207,20 +207,23 @@ func TestLogPart(t *testing.T) {
 	if a.ID() != b.ID() {
 		t.Error("the log is in the identifier")
 	}
-	wa, err := a.WithoutLog().Marshal()
+	wa, err := withoutLog(a).Marshal()
 	if err != nil {
 		t.Fatal(err)
 	}
-	wb, err := b.WithoutLog().Marshal()
+	wb, err := withoutLog(b).Marshal()
 	if err != nil {
 		t.Fatal(err)
 	}
 	if !bytes.Equal(wa, wb) {
-		t.Error("WithoutLog leaves some of the log")
+		t.Error("records differ beside their log")
 	}
-	if a.Log.Architecture == "" {
-		t.Error("WithoutLog changed its record")
-	}
+}
+
+func withoutLog(r *Record) *Record {
+	c := *r
+	c.Log = Log{}
+	return &c
 }
 
 // Every file, and the order of files, is in the identifier.
