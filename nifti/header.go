@@ -84,6 +84,20 @@ func (h *Header) SecondsPerVolume() (sec float64, known bool) {
 	return h.Pixdim[4] / n, known && h.Dim[0] >= 4
 }
 
+// SetSecondsPerVolume stores sec in pixdim[4], in the header's unit of time
+// (seconds where it names none, as [Header.SecondsPerVolume] reads it).
+func (h *Header) SetSecondsPerVolume(sec float64) {
+	n, _ := h.perSecond()
+	h.Pixdim[4] = sec * n
+}
+
+// SecondsPerSlice gives slice_duration in seconds, the unit as for
+// SecondsPerVolume. The value is not judged.
+func (h *Header) SecondsPerSlice() float64 {
+	n, _ := h.perSecond()
+	return h.SliceDuration / n
+}
+
 // SliceDim returns the slice axis of dim_info: 0 none, 1..3 = i, j, k.
 func (h *Header) SliceDim() int { return int(h.DimInfo>>4) & 3 }
 

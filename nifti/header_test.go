@@ -264,3 +264,24 @@ func TestScaling(t *testing.T) {
 		}
 	}
 }
+
+// What is set is what is read, in every unit (nifti1.h, NIFTI_UNITS_*), and nothing
+// but pixdim[4] changes.
+func TestSetSecondsPerVolume(t *testing.T) {
+	for units, stored := range map[int32]float64{0: 2.5, 8: 2.5, 16: 2500, 24: 2.5e6, 2 | 16: 2500} {
+		h := Header{XYZTUnits: units, SliceDuration: stored}
+		h.Dim[0] = 4
+		h.SetSecondsPerVolume(2.5)
+		want := Header{XYZTUnits: units, SliceDuration: stored}
+		want.Dim[0], want.Pixdim[4] = 4, stored
+		if h != want {
+			t.Errorf("units %d: stored %g, want %g", units, h.Pixdim[4], stored)
+		}
+		if sec, _ := h.SecondsPerVolume(); sec != 2.5 {
+			t.Errorf("units %d: read back as %g s", units, sec)
+		}
+		if sec := h.SecondsPerSlice(); sec != 2.5 {
+			t.Errorf("units %d: slices of %g s", units, sec)
+		}
+	}
+}
