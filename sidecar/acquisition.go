@@ -24,8 +24,11 @@ type Acquisition struct {
 	SliceTimes    []float64 // by increasing slice index along SliceAxis; nil if there are none
 	// SliceAxis is 0, 1, 2 = i, j, k: of SliceEncodingDirection, without it of
 	// dim_info, without both k as BIDS has it.
-	SliceAxis        int
-	DelayTime        float64 // the pause in each repetition time, 0 if none is given
+	SliceAxis int
+	DelayTime float64 // the pause in each repetition time, 0 if none is given
+	// FrameDuration is FrameAcquisitionDuration, how long one volume takes to
+	// acquire; given with VolumeOnsets only, 0 if it is not.
+	FrameDuration    float64
 	PhaseAxis        int     // 0,1,2; -1 unknown
 	PhaseSign        int     // +1, -1; 0 unknown
 	TotalReadoutTime float64 // 0 unknown or not plausible
@@ -138,7 +141,7 @@ func (r *reading) echo() {
 }
 
 // longestEcho is where the standard's validator warns that EchoTime is probably
-// in milliseconds (references 2.1).
+// in milliseconds (BIDS schema 1.11.1, rules/checks).
 const longestEcho = 1.0
 
 func (r *reading) task() {

@@ -220,7 +220,7 @@ func TestNoFaults(t *testing.T) {
 	}
 }
 
-// The legal combinations of timing fields (references 2.1, BIDS MRI page). Each
+// The legal combinations of timing fields (BIDS 1.11.1, MRI page). Each
 // letter is a table row there; a combination is legal if it is in no conflict.
 func TestLegalCombinations(t *testing.T) {
 	fields := [][2]string{
@@ -271,6 +271,18 @@ func TestAcceptableFaultsKeepTheBestReading(t *testing.T) {
 	acq, _ = read(harbour, with([2]string{"RepetitionTime", ""}, [2]string{"VolumeTiming", "[0.1, 2.1, 4.1, 6.1, 8.1, 10.1]"}))
 	if acq.UnequalOnsets || acq.RepetitionTime != 2 || acq.VolumeOnsets[0] != 0.1 {
 		t.Errorf("even onsets: %+v", acq)
+	}
+}
+
+// The duration of one volume is believed where onsets stand in place of a repetition time, and nowhere else.
+func TestFrameDuration(t *testing.T) {
+	duration := [2]string{"FrameAcquisitionDuration", "1.8"}
+	onsets := [2]string{"VolumeTiming", "[0, 2, 4, 6, 8.5, 10.5]"}
+	if acq, _ := read(harbour, with([2]string{"RepetitionTime", ""}, onsets, duration)); acq.FrameDuration != 1.8 {
+		t.Errorf("with onsets: %v", acq.FrameDuration)
+	}
+	if acq, _ := read(harbour, with(duration)); acq.FrameDuration != 0 {
+		t.Errorf("with a repetition time: %v", acq.FrameDuration)
 	}
 }
 

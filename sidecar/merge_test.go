@@ -70,7 +70,7 @@ func TestBrokenRoot(t *testing.T) {
 	}
 }
 
-// BIDS 1.11.1, MRI page, SliceEncodingDirection (references 2.1): 4 slices, k-,
+// BIDS 1.11.1, MRI page, SliceEncodingDirection: 4 slices, k-,
 // [0, 0.5, 1.0, 1.5] puts slices k=0..3 at 1.5, 1.0, 0.5, 0 s.
 func TestReversalExample(t *testing.T) {
 	for word, want := range map[string][]float64{"k-": {1.5, 1, 0.5, 0}, "k": {0, 0.5, 1, 1.5}} {

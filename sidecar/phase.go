@@ -7,10 +7,10 @@ import (
 
 const (
 	// sameReadout is the relative difference up to which rounding may explain
-	// TotalReadoutTime against the echo spacing (contract: 1 %).
+	// TotalReadoutTime against the echo spacing: files print either to three digits or more.
 	sameReadout = 0.01
 	// longestReadout is where the standard's validator warns that TotalReadoutTime
-	// is probably in milliseconds (references 2.1).
+	// is probably in milliseconds (BIDS schema 1.11.1, rules/checks).
 	longestReadout = 10.0
 )
 
@@ -68,7 +68,7 @@ func (r *reading) readout() {
 	if ok && finite(lines) && lines >= 2 && lines == math.Trunc(lines) {
 		r.use("ReconMatrixPE")
 		want := float64(spacing * (lines - 1))
-		if math.Abs(total-want) > float64(sameReadout*want)+rounding*want {
+		if math.Abs(total-want) > float64(sameReadout*want)+float64(rounding*want) {
 			r.warn(key, "readout-mismatch",
 				fmt.Sprintf("%s s, while EffectiveEchoSpacing %s s (%s) x (ReconMatrixPE %s - 1) is %s s", totalRaw, spacingRaw, r.fileOf("EffectiveEchoSpacing"), showNumber(linesRaw), show(want)),
 				"the same within 1 %", remedy)

@@ -18,7 +18,7 @@ const (
 	sameInstant = 2e-5
 	// fastestSlice is how near two single-shot excitations can follow each other:
 	// pulse, echo time and half a readout of 20 ms or more at 3 T (common practice,
-	// references section 7, from memory).
+	// from memory).
 	fastestSlice = 0.020
 	// A list in milliseconds exceeds the repetition time in seconds by a factor of
 	// 1000 times the share of the volume that its last slice begins after. At ten

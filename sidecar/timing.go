@@ -236,6 +236,7 @@ func (r *reading) frameDuration() {
 			"a volume that ends before the next begins", "correct the one that is wrong; both are in seconds (divide milliseconds by 1000)")
 	default:
 		r.use(key)
+		r.acq.FrameDuration = d
 	}
 }
 
