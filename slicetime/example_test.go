@@ -33,7 +33,7 @@ func ExampleCorrect() {
 	}
 	fmt.Printf("corrected %.2f\n", data[nz*at:nz*at+nz])
 	// Output:
-	// multiband 2 (slices 2 apart), sequential ascending within each band of 2, 2 shots, 1 s apart, no pause between volumes
+	// multiband 2 (slices 2 apart), sequential ascending within each block of 2 slices, 2 shots, 1 s apart, no pause between volumes
 	// wanted    1001.56, at 0.5 s of each volume
 	// sampled   [1000.00 1003.09 1000.00 1003.09]
 	// corrected [1001.56 1001.56 1001.56 1001.56]

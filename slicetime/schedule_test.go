@@ -100,8 +100,8 @@ func TestWords(t *testing.T) {
 		{"uneven by more than rounding", []float64{0, .01, .024, .034}, .05, "sequential ascending, 4 shots, unevenly 0.01 to 0.014 s apart, 0.016 s from the last shot to the next volume's first"},
 		{"late start", []float64{.05, .55, 1.05, 1.55}, 2, "sequential ascending, 4 shots, 0.5 s apart, no pause between volumes"},
 		{"overlapping", []float64{0, .5, 1, 1.5}, 1.6, "sequential ascending, 4 shots, 0.5 s apart, the volumes overlapping by 0.4 s"},
-		{"multiband 3 interleaved", []float64{0, .4, .2, .6, 0, .4, .2, .6, 0, .4, .2, .6}, .8, "multiband 3 (slices 4 apart), interleaved ascending within each band of 4, odd slices first (1st, 3rd), 4 shots, 0.2 s apart, no pause between volumes"},
-		{"multiband 2 down", []float64{.4, .2, 0, .4, .2, 0}, .7, "multiband 2 (slices 3 apart), sequential descending within each band of 3, 3 shots, 0.2 s apart, then a pause of 0.1 s"},
+		{"multiband 3 interleaved", []float64{0, .4, .2, .6, 0, .4, .2, .6, 0, .4, .2, .6}, .8, "multiband 3 (slices 4 apart), interleaved ascending within each block of 4 slices, odd slices first (1st, 3rd), 4 shots, 0.2 s apart, no pause between volumes"},
+		{"multiband 2 down", []float64{.4, .2, 0, .4, .2, 0}, .7, "multiband 2 (slices 3 apart), sequential descending within each block of 3 slices, 3 shots, 0.2 s apart, then a pause of 0.1 s"},
 		{"neighbours together", []float64{0, 0, .5, .5, 1, 1}, 1.5, "multiband 2, irregular (the first shot takes slices 1, 2), 3 shots, 0.5 s apart, no pause between volumes"},
 		{"shots differ", []float64{0, 0, .5, 1, 1}, 1.5, "irregular: 1 to 2 slices in a shot, 3 shots, 0.5 s apart, no pause between volumes"},
 		{"padded", []float64{nan, 0, .2, .1, nan}, .3, "interleaved ascending, even slices first (2nd, 4th), 3 shots, 0.1 s apart, no pause between volumes, 2 of 5 slices without a time"},
@@ -132,7 +132,7 @@ func TestWordsOfRealSeries(t *testing.T) {
 		"sub-02_task-axial_bold.json":               "interleaved ascending, odd slices first (1st, 3rd, 5th, ...), 35 shots, about 0.07169 s apart, then a pause of 0.4908 s",
 		"sub-02_task-coronal_bold.json":             "interleaved ascending, even slices first (2nd, 4th, 6th, ...), 36 shots, about 0.06971 s apart, then a pause of 0.4903 s",
 		"sub-phantomA_task-static_bold.json":        "interleaved ascending, odd slices first (1st, 3rd, 5th, ...), 8 shots, 0.1875 s apart, no pause between volumes",
-		"sub-phantomB_task-static_bold.json":        "multiband 2 (slices 3 apart), interleaved ascending within each band of 3, even slices first (2nd), 3 shots, 0.16 s apart, then a pause of 0.02 s",
+		"sub-phantomB_task-static_bold.json":        "multiband 2 (slices 3 apart), interleaved ascending within each block of 3 slices, even slices first (2nd), 3 shots, 0.16 s apart, then a pause of 0.02 s",
 		"sub-phantomC_task-static_dir-AP_bold.json": "interleaved ascending, odd slices first (1st, 3rd, 5th), 5 shots, about 0.4831 s apart, no pause between volumes",
 	}
 	found := 0

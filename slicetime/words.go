@@ -11,7 +11,7 @@ import (
 //
 //	sequential ascending, 15 shots, 0.3333 s apart, no pause between volumes
 //	interleaved ascending, even slices first (2nd, 4th, 6th, ...), 36 shots, about 0.06971 s apart, then a pause of 0.4903 s
-//	multiband 2 (slices 3 apart), interleaved ascending within each band of 3, even slices first (2nd), 3 shots, 0.16 s apart, ...
+//	multiband 2 (slices 3 apart), interleaved ascending within each block of 3 slices, even slices first (2nd), 3 shots, 0.16 s apart, ...
 //
 // Slices are counted from 1 in the order of the slice index, so that ascending
 // means rising index. The gap between shots is called "about" where the list
@@ -72,7 +72,7 @@ func order(shots []Shot) []string {
 	case bands == 1:
 	case bands > 1 && apart == len(shots):
 		parts = append(parts, fmt.Sprintf("multiband %d (slices %d apart)", bands, apart))
-		within = fmt.Sprintf(" within each band of %d", apart)
+		within = fmt.Sprintf(" within each block of %d slices", apart)
 	case bands > 1:
 		few := make([]string, 0, len(shots[0].Slices))
 		for _, i := range shots[0].Slices {
