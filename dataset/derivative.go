@@ -112,7 +112,9 @@ func (d Derivative) ReadmeText() []byte {
 ==================
 
 Written by evenkeel%s. In each series every voxel of a volume refers to one instant and
-to one head position: slice timing and head motion are corrected together.
+to one head position, as far as the settings asked for it: moving slices in time and
+moving volumes to the reference are done one after the other. Each record says in which
+order, and whether either was left out.
 %s
 FOR RESEARCH ONLY. Not a medical device; not for diagnosis or treatment.
 PRIVACY. Images of a head can identify a person. Share this folder under the same
@@ -140,13 +142,21 @@ same sub-*/[ses-*/]func folder as the raw file.
 	b.WriteString(`
 Files of the dataset
 --------------------
-runs.tsv
-    one row a run: its state, what refused it if it was refused, and its main figures
+runs.tsv, runs.json
+    one row a run: its state, what refused it if it was refused, and its main figures;
+    the .json describes every column, with its unit
 dataset_description.json
     what made this dataset, and where the raw one is if that can be told without naming
     folders outside both (otherwise: evenkeel audit --dataset DIR)
 .bidsignore
     the files above that BIDS has no name for yet
+
+Time axis
+---------
+Volume n stands at StartTime + n RepetitionTime (the .json of the series) from the start of
+the first raw volume, which raw events are counted from too. So use the raw events and
+take StartTime into account, or use the events table of this folder (if it was asked
+for), whose onsets are on the time axis of the series already. Never both.
 
 A run is complete when its record (_prov.json) is there: it is written last, and names
 every other file with its digest. "evenkeel audit" checks them. Missing values in tables
@@ -179,17 +189,17 @@ func oneLine(s string) string { return strings.Join(strings.Fields(s), " ") }
 // None is given for 2 and 3 when the folder that holds both is the root of the
 // file system or one of home folders, because the names in it are people's.
 func RawLinkFor(out, root string) string {
-	o, err := realPath(out)
+	o, err := RealPath(out)
 	if err != nil {
 		return ""
 	}
-	r, err := realPath(root)
+	r, err := RealPath(root)
 	if err != nil {
 		return ""
 	}
 	home, err := os.UserHomeDir()
 	if err == nil {
-		home, err = realPath(home)
+		home, err = RealPath(home)
 	}
 	if err != nil {
 		home = ""
@@ -241,8 +251,9 @@ func holdsHomes(dir, home string) bool {
 	return home != "" && dir != home && inside(dir, home)
 }
 
-// realPath resolves links in the part of a path that exists.
-func realPath(p string) (string, error) {
+// RealPath resolves links in the part of a path that exists, so that two names of
+// one folder compare equal.
+func RealPath(p string) (string, error) {
 	abs, err := filepath.Abs(p)
 	if err != nil {
 		return "", err
