@@ -96,6 +96,48 @@ func TestMemAvailable(t *testing.T) {
 	}
 }
 
+// What a control group leaves: the own group or a parent of it, whichever leaves least,
+// less what is in use but for idle file pages; the layouts are those of the kernel's documents.
+func TestGroupFree(t *testing.T) {
+	for name, c := range map[string]struct {
+		proc  string
+		files map[string]string
+		want  int64
+		ok    bool
+	}{
+		"version 2, a job below a limited parent": {"0::/slurm/job_7/step_0\n", map[string]string{
+			"slurm/job_7/step_0/memory.max": "max\n",
+			"slurm/job_7/memory.max":        "1000000\n",
+			"slurm/job_7/memory.current":    "300000\n",
+			"slurm/job_7/memory.stat":       "anon 100\ninactive_file 200000\nactive_file 5\n",
+			"slurm/memory.max":              "9000000\n",
+		}, 900000, true},
+		"version 2, the parent leaves less": {"0::/a/b\n", map[string]string{
+			"a/b/memory.max": "1000\n", "a/memory.max": "5000\n", "a/memory.current": "4500\n"}, 500, true},
+		"version 1": {"11:cpu,cpuacct:/x\n4:memory:/slurm/uid_1/job_2\n0::/x\n", map[string]string{
+			"memory/slurm/uid_1/job_2/memory.limit_in_bytes": "2000\n",
+			"memory/slurm/uid_1/job_2/memory.usage_in_bytes": "1500\n",
+			"memory/slurm/uid_1/job_2/memory.stat":           "inactive_file 1\ntotal_inactive_file 250\n",
+			"memory/memory.limit_in_bytes":                   "9223372036854771712\n"}, 750, true},
+		"the path of the host, seen from inside": {"0::/../../kubepods/pod9\n", map[string]string{"memory.max": "4096\n"}, 4096, true},
+		"used up":                                {"0::/a\n", map[string]string{"a/memory.max": "10\n", "a/memory.current": "20\n"}, 0, true},
+		"no limit":                               {"0::/a\n", map[string]string{"a/memory.max": "max\n"}, 0, false},
+		"nothing":                                {"", nil, 0, false},
+	} {
+		dir := t.TempDir()
+		proc, mount := filepath.Join(dir, "cgroup"), filepath.Join(dir, "mount")
+		os.WriteFile(proc, []byte(c.proc), 0o644)
+		for file, text := range c.files {
+			full := filepath.Join(mount, file)
+			os.MkdirAll(filepath.Dir(full), 0o755)
+			os.WriteFile(full, []byte(text), 0o644)
+		}
+		if n, ok := groupFree(proc, mount); n != c.want || ok != c.ok {
+			t.Errorf("%s: %d %v, want %d %v", name, n, ok, c.want, c.ok)
+		}
+	}
+}
+
 // A lock is held by one at a time, waited for, and leaves no file.
 func TestLock(t *testing.T) {
 	name := filepath.Join(t.TempDir(), ".run.lock")

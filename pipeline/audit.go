@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"context"
 	"errors"
 	"io/fs"
 	"os"
@@ -13,7 +14,10 @@ import (
 // raw files in raw; with raw "" they are looked for where out's DatasetLinks say.
 // The raw dataset that was used is returned, "" if none could be found. A raw that
 // was given and is not there is a [*dataset.NotFound], and so is a missing out.
-func Audit(out, raw string) ([]provenance.Finding, provenance.Checked, string, error) {
+// Findings that are no differences ([provenance.Finding.Difference]) are among
+// the findings. done, if not nil, is told how many files of how many are
+// digested. When ctx ends, so does the audit, with the error of ctx.
+func Audit(ctx context.Context, out, raw string, done func(done, of int)) ([]provenance.Finding, provenance.Checked, string, error) {
 	if err := isFolder(out); err != nil {
 		return nil, provenance.Checked{}, "", &dataset.NotFound{Root: out, Err: err}
 	}
@@ -24,7 +28,10 @@ func Audit(out, raw string) ([]provenance.Finding, provenance.Checked, string, e
 	} else {
 		raw = linkedRaw(out)
 	}
-	findings, checked, err := provenance.Audit(out, raw)
+	findings, checked, err := provenance.Auditor{Out: out, Raw: raw, Version: Version, Workers: Cores(), Done: done}.Audit(ctx)
+	if ctx.Err() != nil {
+		return nil, checked, raw, ctx.Err()
+	}
 	if err != nil {
 		return findings, checked, raw, &IOError{Path: out, Step: "auditing", Err: err}
 	}

@@ -31,8 +31,7 @@ func fourVolumes() (*Plan, *measures, *realign.Estimate) {
 	return p, m, est
 }
 
-// What a lost volume's row says, to the byte: contract.md, "its six parameters are
-// n/a"; and what follows for its neighbours.
+// What a lost volume's row says, to the byte: its six parameters are n/a; and what follows for its neighbours.
 func TestPoseTable(t *testing.T) {
 	p, m, _ := fourVolumes()
 	got := string(poseTable(p, m))

@@ -134,7 +134,11 @@ func (p *Plan) Memory(workers int) int64 {
 		}
 		work = max(work, slicetime.WorkBytes(nx, ny, nz, p.Volumes, p.Schedule.Axis, workers, kernel))
 	}
-	return nv*(4*int64(p.Volumes)+fixedPerVoxel) + work + runOverhead
+	fixed := int64(fixedPerVoxel)
+	if p.Settings.Reference.Word == "sbref" {
+		fixed += 4 // read beside the series that is matched to it
+	}
+	return nv*(4*int64(p.Volumes)+fixed) + work + runOverhead
 }
 
 // Request says which runs are wanted and how they are to be processed.
@@ -162,7 +166,7 @@ func Survey(ctx context.Context, ds *dataset.Dataset, req Request) ([]*Plan, err
 	}
 	runs := ds.Select(req.Filter)
 	if len(runs) == 0 {
-		return nil, &NothingSelected{Root: ds.Root, Runs: len(ds.Runs), Asked: req.Asked}
+		return nil, &NothingSelected{Root: ds.Root, Runs: len(ds.Runs), LeftOut: len(ds.SelectLeftOut(req.Filter)), Asked: req.Asked}
 	}
 	// One source per file: echoes are looked at once, however many of them
 	// were selected.
@@ -274,8 +278,28 @@ func look(ds *dataset.Dataset, r dataset.Run) (s *source) {
 	g.TRSec, _ = s.header.SecondsPerVolume()
 	s.acq, faults = doc.Acquisition(g)
 	s.echoTime = s.acq.EchoTime
+	for i := range faults {
+		if faults[i].ID == "slice-times-missing" {
+			faults[i].Remedy += s.headerSchedule()
+		}
+	}
 	s.faults = append(s.faults, faults...)
 	return s
+}
+
+// headerSchedule says what the header's slice fields would mean, for a run whose
+// sidecar gives no slice times; "" if they mean nothing. They are never used: no
+// code can express slices taken together, and many files carry one nobody checked.
+func (s *source) headerSchedule() string {
+	h := s.header
+	var size [3]int
+	size[0], size[1], size[2], _ = h.Size()
+	times, err := slicetime.FromSliceCode(int(h.SliceCode), size[s.acq.SliceAxis], int(h.SliceStart), int(h.SliceEnd), h.SecondsPerSlice())
+	if err != nil {
+		return ""
+	}
+	words := slicetime.Schedule{Times: times, Axis: s.acq.SliceAxis, TR: s.acq.RepetitionTime}.Words()
+	return fmt.Sprintf("; the header's slice_code %d would mean: %s (not used; many files carry a code nobody checked)", h.SliceCode, words)
 }
 
 var errTooLarge = errors.New("too large")
@@ -448,6 +472,10 @@ func (p *Plan) holdAgainstPose(pose *source) []fault.Fault {
 			out = append(out, fault.New("image-size", p.Run.File, "dim", fmt.Sprint(a),
 				fmt.Sprintf("%v, as in the shortest echo %s", b, pose.run.File),
 				"convert the echoes again; all echoes of one run have one size"))
+		} else if !sameAffine(p.Header.Affine(), pose.header.Affine(), [3]int{ax, ay, az}) {
+			out = append(out, fault.New("image-affine", p.Run.File, "sform or qform", "another grid in the world",
+				"that of the shortest echo "+pose.run.File,
+				"convert the echoes again; all echoes of one run stand on one grid"))
 		}
 	}
 	return out
@@ -469,8 +497,11 @@ func (p *Plan) settleTiming(nt int, found []fault.Fault) error {
 	equal := len(times) > 0 && slices.Max(times) == slices.Min(times)
 	usable := len(times) > 0 && len(times) == p.Grid.N[a.SliceAxis]
 	middle := (a.RepetitionTime - a.DelayTime) / 2 // of a volume whose slices have no times
-	if len(times) > 0 {
+	switch {
+	case len(times) > 0:
 		middle = p.Schedule.Middle()
+	case a.FrameDuration > 0:
+		middle = a.FrameDuration / 2
 	}
 	t.Temporal = set.Time != "none" && usable && !equal && !a.ThreeDimensional
 	// An acquisition in three dimensions takes as long as its volume does: it
@@ -496,9 +527,9 @@ func (p *Plan) settleTiming(nt int, found []fault.Fault) error {
 	}
 	t.StartTime = onset(set.Skip) + t.Origin
 	// The instant a row of the pose table stands for.
-	at := t.Origin
-	if set.Time == "none" {
-		at = middle
+	at := middle
+	if t.Temporal {
+		at = t.Origin
 	}
 	t.Rows = make([]float64, p.Volumes)
 	for n := range t.Rows {
@@ -571,7 +602,10 @@ func (p *Plan) findReference() []fault.Fault {
 		}
 		return nil
 	}
-	nx, ny, nz, _ := h.Size()
+	nx, ny, nz, nt := h.Size()
+	if nt > 1 {
+		return []fault.Fault{fault.New("image-size", ref, "dim[4]", fmt.Sprintf("%d volumes", nt), "one volume, to be the reference", remedy)}
+	}
 	want := p.Grid
 	if p.poseHeader != nil {
 		want.Affine = p.poseHeader.Affine()
@@ -599,10 +633,10 @@ func sameAffine(a, b [16]float64, n [3]int) bool {
 				}
 			}
 			for i := range 4 {
-				d[axis] += (a[4*axis+i] - b[4*axis+i]) * c[i]
+				d[axis] += float64((a[4*axis+i] - b[4*axis+i]) * c[i])
 			}
 		}
-		if d[0]*d[0]+d[1]*d[1]+d[2]*d[2] > gridTolerance*gridTolerance {
+		if float64(d[0]*d[0])+float64(d[1]*d[1])+float64(d[2]*d[2]) > gridTolerance*gridTolerance {
 			return false
 		}
 	}

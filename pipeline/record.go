@@ -113,9 +113,9 @@ func (p *Plan) stages(m *measures, po *posed) []provenance.Stage {
 		add("time", par, object{{"shots", len(p.Schedule.Shots())}, {"order", p.Schedule.Words()}})
 	}
 	if po.est != nil {
-		add("space", object{{"spline", p.Settings.Space}, {"order", p.Settings.Order}}, object{{"interpolations", 1}})
+		add("space", object{{"spline", p.Settings.Space}, {"order", p.Settings.Order}}, object{{"spatial_interpolations", 1}})
 	}
-	add("measure", object{{"head_voxels", len(m.inside(m.tsnrRaw))}}, object{{"max_shift", rounded(m.maxShift(), digitsMM)}})
+	add("measure", object{{"head_voxels", m.headVoxels()}}, object{{"max_shift", rounded(m.maxShift(), digitsMM)}})
 	return out
 }
 

@@ -12,6 +12,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"runtime/debug"
 	"slices"
 	"time"
 
@@ -45,10 +46,13 @@ type loaded struct {
 	digest *provenance.Digester
 }
 
-// load reads a series; errors are faults (*Refused), or IOError.
-func load(p *Plan, rel string, skip int) (*loaded, error) {
+// load reads a series; errors are faults (*Refused), IOError, or that of ctx.
+func load(ctx context.Context, p *Plan, rel string, skip int) (*loaded, error) {
 	d := &provenance.Digester{}
-	_, s, err := nifti.ReadSeries(p.Dataset.Path(rel), d, skip)
+	_, s, err := nifti.ReadSeries(p.Dataset.Path(rel), tap{ctx, d}, skip)
+	if ctx.Err() != nil {
+		return nil, ctx.Err()
+	}
 	// A file that changed under us explains whatever else is wrong with it.
 	if faults := p.changed(); len(faults) > 0 {
 		return nil, &Refused{faults}
@@ -62,16 +66,29 @@ func load(p *Plan, rel string, skip int) (*loaded, error) {
 	return &loaded{s.Data, s.NT, d}, nil
 }
 
+// A tap digests what is read, and ends the reading when ctx ends.
+type tap struct {
+	ctx context.Context
+	d   *provenance.Digester
+}
+
+func (t tap) Write(b []byte) (int, error) {
+	if err := t.ctx.Err(); err != nil {
+		return 0, err
+	}
+	return t.d.Write(b)
+}
+
 // posed is what the pose series gave: shared by the echoes, not changed by them.
 type posed struct {
 	est       *realign.Estimate    // nil with motion none
 	digest    *provenance.Digester // of the pose series
 	reference *provenance.Digester // of the sbref, nil if none was used
-	sbref     []float32
 }
 
 // run does the plans of a unit; the result has one outcome a plan. It holds at most one
-// series at a time, the pose series first, so that no file is read twice.
+// series at a time, the pose series first, so that no file is read twice. A run that
+// panics fails alone: what its companions have published stands.
 func (w *worker) run(ctx context.Context, u unit) []Outcome {
 	out := make([]Outcome, len(u.plans))
 	var shared *posed
@@ -86,19 +103,30 @@ func (w *worker) run(ctx context.Context, u unit) []Outcome {
 	}
 	for k, i := range order {
 		if k > 0 {
-			// The series of the echo before makes room for the next.
-			runtime.GC()
+			makeRoom() // for the next echo
 		}
-		p := u.plans[i]
-		figures, extra, err := w.one(ctx, p, &shared)
-		out[i] = ended(p, figures, extra, err)
+		out[i] = w.recovered(ctx, u.plans[i], &shared)
 	}
 	return out
 }
 
+// makeRoom gives back the memory of a series that nothing refers to any more,
+// before the next is read: the plan allows for one.
+func makeRoom() { runtime.GC() }
+
+func (w *worker) recovered(ctx context.Context, p *Plan, shared **posed) (o Outcome) {
+	defer func() {
+		if v := recover(); v != nil {
+			o = Outcome{Plan: p, State: Failed, Faults: p.Faults, Err: asBug(p.Run.Stem, v, debug.Stack())}
+		}
+	}()
+	figures, err := w.one(ctx, p, shared)
+	return ended(p, figures, err)
+}
+
 // ended turns how a run ended into its outcome.
-func ended(p *Plan, figures *Figures, extra []fault.Fault, err error) Outcome {
-	o := Outcome{Plan: p, Faults: append(append([]fault.Fault{}, p.Faults...), extra...)}
+func ended(p *Plan, figures *Figures, err error) Outcome {
+	o := Outcome{Plan: p, Faults: slices.Clone(p.Faults)}
 	var refused *Refused
 	switch {
 	case err == nil:
@@ -115,7 +143,7 @@ func ended(p *Plan, figures *Figures, extra []fault.Fault, err error) Outcome {
 }
 
 // one does one run.
-func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, []fault.Fault, error) {
+func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, error) {
 	rec := &recorder{started: time.Now(), seconds: map[string]float64{}}
 	stage := func(name string) func() {
 		if err := ctx.Err(); err == nil && w.stage != nil {
@@ -125,50 +153,53 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, []
 		return func() { rec.seconds[name] += time.Since(t).Seconds() }
 	}
 	if faults := p.changed(); len(faults) > 0 {
-		return nil, nil, &Refused{faults}
+		return nil, &Refused{faults}
 	}
 
 	// Read, and estimate on the raw series of the shortest echo.
 	var s *loaded
 	if *shared == nil {
 		end := stage("read")
-		first, err := load(p, p.Pose.File, p.Settings.Skip)
+		first, err := load(ctx, p, p.Pose.File, p.Settings.Skip)
 		if err != nil {
-			return nil, nil, err
+			return nil, err
 		}
 		end()
 		end = stage("estimate")
 		po, err := w.estimate(ctx, p, first)
 		if err != nil {
-			return nil, nil, err
+			return nil, err
 		}
 		end()
 		*shared = po
 		if p.Pose.File == p.Run.File {
 			s = first
+		} else {
+			first.data = nil
+			makeRoom()
 		}
 	}
 	if s == nil {
 		end := stage("read")
 		var err error
-		if s, err = load(p, p.Run.File, p.Settings.Skip); err != nil {
-			return nil, nil, err
+		if s, err = load(ctx, p, p.Run.File, p.Settings.Skip); err != nil {
+			return nil, err
 		}
 		end()
 	}
 	if err := ctx.Err(); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	nt := s.nt
 	po := *shared
 
-	reference, mask, centre := w.standard(p, po, s)
+	reference, mask, centre := p.standard(po, s)
 	m := &measures{mask: mask}
 	m.measurePoses(po.est, nt)
 
 	end := stage("measure-raw")
 	if err := m.measureRaw(ctx, p, s.data, nt, w.workers); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	end()
 	steps := []string{"time", "space"}
@@ -184,46 +215,46 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, []
 			err = w.resample(ctx, p, po.est, s.data, nt)
 		}
 		if err != nil {
-			return nil, nil, err
+			return nil, err
 		}
 		end()
 	}
 	end = stage("measure-steady")
 	if err := m.measureSteady(ctx, s.data, nt, w.workers); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	end()
 
 	end = stage("write")
 	inputs, err := p.inputFiles(s, po)
 	if err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	// The last look at the inputs: what was read is what the record names.
 	if faults := p.changed(); len(faults) > 0 {
-		return nil, nil, &Refused{faults}
+		return nil, &Refused{faults}
 	}
 	pub := &publisher{out: w.out}
 	defer pub.discard()
 	if err := p.writeData(ctx, pub, s.data, nt, reference, mask, centre, m, po.est); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	end()
 	if err := p.writeRecord(pub, rec, inputs, m, po); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	if err := ctx.Err(); err != nil {
-		return nil, nil, err // before the first rename, or not at all
+		return nil, err // before the first rename, or not at all
 	}
 	old, _ := readRecord(filepath.Join(w.out, filepath.FromSlash(p.Output("record"))))
 	if err := pub.publish(oldOutputs(p, old)); err != nil {
-		return nil, nil, err
+		return nil, err
 	}
 	figures, err := parseFigures(m.qualityFile(p))
 	if err != nil {
 		panic("pipeline: our own quality file cannot be read back: " + err.Error())
 	}
-	return figures, nil, nil
+	return figures, nil
 }
 
 // estimate finds the poses of the pose series, on the raw data.
@@ -242,15 +273,18 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 		opt.Reference = realign.Middle
 	case "sbref":
 		d := &provenance.Digester{}
-		_, ref, err := nifti.ReadSeries(p.Dataset.Path(p.Pose.SBRef), d, 0)
+		_, ref, err := nifti.ReadSeries(p.Dataset.Path(p.Pose.SBRef), tap{ctx, d}, 0)
+		if ctx.Err() != nil {
+			return nil, ctx.Err()
+		}
 		if f, isFault := imageFault(p.Pose.SBRef, err); isFault {
 			return nil, &Refused{[]fault.Fault{f}}
 		}
 		if err != nil {
 			return nil, &IOError{Path: p.Pose.SBRef, Step: "reading", Err: err}
 		}
-		po.reference, po.sbref = d, ref.Volume(0)
-		opt.Reference, opt.External = realign.External, po.sbref
+		po.reference = d
+		opt.Reference, opt.External = realign.External, ref.Volume(0) // the only one, as planned
 	default:
 		opt.Reference, opt.Index = realign.Index, r.Index
 	}
@@ -273,11 +307,9 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 }
 
 // standard gives the reference volume, the head mask and its centroid.
-func (w *worker) standard(p *Plan, po *posed, s *loaded) (ref []float32, mask []bool, centre [3]float64) {
+func (p *Plan) standard(po *posed, s *loaded) (ref []float32, mask []bool, centre [3]float64) {
 	if po.est != nil {
-		// The reference may be a volume of the series itself, which is about
-		// to be changed in place.
-		return slices.Clone(po.est.Reference), po.est.Mask, po.est.Centre
+		return po.est.Reference, po.est.Mask, po.est.Centre // copies of its own, never parts of the series
 	}
 	nv := len(s.data) / s.nt
 	pick := func(t int) []float32 { return append([]float32{}, s.data[t*nv:(t+1)*nv]...) }
@@ -474,11 +506,7 @@ func (p *Plan) correctVolumeTime(h *nifti.Header) {
 	if p.Timing.TR <= 0 || math.Abs(sec-p.Timing.TR) <= volumeTimeTolerance {
 		return
 	}
-	perSecond := map[int32]float64{16: 1e3, 24: 1e6}[p.Header.XYZTUnits&0x38]
-	if perSecond == 0 {
-		perSecond = 1
-	}
-	h.Pixdim[4] = p.Timing.TR * perSecond
+	h.SetSecondsPerVolume(p.Timing.TR)
 }
 
 // oldOutputs names the files of an earlier record of this very run that no

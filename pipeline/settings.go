@@ -11,6 +11,7 @@ import (
 
 	"evenkeel/fault"
 	"evenkeel/provenance"
+	"evenkeel/slicetime"
 )
 
 // Settings holds every choice that can change a byte of the output, and nothing
@@ -32,7 +33,7 @@ type Settings struct {
 	Events     bool     // also write the events table on the output's time axis
 }
 
-// DefaultSettings returns the defaults of the contract.
+// DefaultSettings returns what holds when nothing is given.
 func DefaultSettings() Settings {
 	return Settings{
 		Time:       "fourier",
@@ -117,9 +118,9 @@ var Choices = []Choice{
 			return s.TimeOrigin.Seconds
 		}},
 	{Key: "sinc_reach", Values: "N", kind: "a whole number",
-		Help: "samples on each side of the sinc kernel",
+		Help: fmt.Sprintf("samples on each side of the sinc kernel, 1 to %d", slicetime.MaxReach),
 		parse: func(s *Settings, v []string) error {
-			return parseInt(&s.SincReach, last(v), 1, 64)
+			return parseInt(&s.SincReach, last(v), 1, slicetime.MaxReach)
 		},
 		value: func(s Settings) any { return s.SincReach }},
 	word("motion", []string{"volume", "none"}, map[string]string{"path": "one pose along continuous time"},
@@ -142,7 +143,7 @@ var Choices = []Choice{
 	word("order", []string{"time-first", "space-first"}, map[string]string{"joint": "time and space interpolated together"},
 		"which interpolation comes first", func(s *Settings) *string { return &s.Order }),
 	{Key: "skip", Values: "N", kind: "a whole number",
-		Help: "leading volumes left out of the output and the estimate",
+		Help: "leading volumes left out of the output and the estimate: those before the magnetisation is steady, which show as spikes and high DVARS at the start",
 		parse: func(s *Settings, v []string) error {
 			return parseInt(&s.Skip, last(v), 0, math.MaxInt32)
 		},
@@ -166,7 +167,7 @@ var Choices = []Choice{
 		},
 		value: func(s Settings) any { return append([]string{}, s.Accept...) }},
 	{Key: "events", Switch: true, kind: "true or false",
-		Help: "also write each run's events table with onsets moved to the output's time axis",
+		Help: "also write each run's events table with onsets moved to the output's time axis; whoever uses it must not add StartTime again",
 		parse: func(s *Settings, v []string) error {
 			b, err := strconv.ParseBool(last(v))
 			if err != nil {

@@ -9,11 +9,13 @@ import (
 
 	"github.com/google/go-cmp/cmp"
 	"pgregory.net/rapid"
+
+	"evenkeel/slicetime"
 )
 
-// The defaults, as contract.md's table of options gives them ("until then" values
+// The defaults, as README's table of options and the help give them (values
 // for those whose final default comes with a later version).
-func TestDefaultsOfTheContract(t *testing.T) {
+func TestDefaults(t *testing.T) {
 	want := `{"time":"fourier","time_origin":"middle","sinc_reach":8,"motion":"volume","reference":"mean","space":"quintic","order":"time-first","skip":0,"store":"float32","accept":[],"events":false}`
 	got, err := json.Marshal(DefaultSettings())
 	if err != nil || string(got) != want {
@@ -58,7 +60,7 @@ func TestSettingsReadBack(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		s := Settings{
 			Time:      rapid.SampledFrom([]string{"fourier", "sinc", "none"}).Draw(t, "time"),
-			SincReach: rapid.IntRange(1, 64).Draw(t, "reach"),
+			SincReach: rapid.IntRange(1, slicetime.MaxReach).Draw(t, "reach"),
 			Motion:    rapid.SampledFrom([]string{"volume", "none"}).Draw(t, "motion"),
 			Space:     rapid.SampledFrom([]string{"quintic", "cubic"}).Draw(t, "space"),
 			Order:     rapid.SampledFrom([]string{"time-first", "space-first"}).Draw(t, "order"),
@@ -136,7 +138,7 @@ func TestSettingsRefused(t *testing.T) {
 
 func TestOptionsRefused(t *testing.T) {
 	for _, c := range [][2]string{{"time", "fourrier"}, {"time_origin", "NaN"}, {"time_origin", "inf"}, {"time_origin", "-1"},
-		{"motion", "path"}, {"order", "joint"}, {"reference", "-1"}, {"sinc_reach", "65"}, {"skip", "x"}, {"accept", "nothing"}, {"store", ""}} {
+		{"motion", "path"}, {"order", "joint"}, {"reference", "-1"}, {"sinc_reach", "33"}, {"skip", "x"}, {"accept", "nothing"}, {"store", ""}} {
 		s := DefaultSettings()
 		var usage *UsageError
 		if err := s.Set(c[0], c[1]); !errors.As(err, &usage) || !strings.HasPrefix(err.Error(), "--"+strings.ReplaceAll(c[0], "_", "-")) {

@@ -26,9 +26,11 @@ func ParseShard(v string) (Shard, error) {
 // Pick returns the plans of this part, in their order. The echoes of one run
 // stay together. Parts are balanced by the voxels of their runs: the largest
 // unit goes to the part with the least so far (Graham 1969, SIAM J. Appl. Math.
-// 17(2):416-429: at most 4/3 of the best possible). Sizes come from the images'
-// headers and ties are broken by name, so that the parts are the same on every
-// machine, whatever is installed or free there.
+// 17(2):416-429: the largest part is at most 4/3 of what the best division has).
+// Sizes come from the images' headers and ties are broken by name: the parts are
+// the same on every machine that sees the same files. An image whose header cannot
+// be read (not fetched there, say) counts as one voxel, so that machines on which
+// different files are missing may divide differently.
 func (s Shard) Pick(plans []*Plan) []*Plan {
 	if s.N <= 1 {
 		return plans

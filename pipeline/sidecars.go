@@ -37,6 +37,11 @@ func (p *Plan) steadySidecar() []byte {
 	}
 	if t.Onsets != nil && t.TR == 0 {
 		o.add("VolumeTiming", nums(t.Onsets))
+		// Onsets are complete only with the duration of a volume or the times
+		// of its slices (BIDS, "Timing parameters").
+		if a.FrameDuration > 0 {
+			o.add("FrameAcquisitionDuration", num(a.FrameDuration))
+		}
 	} else if t.TR > 0 {
 		o.add("RepetitionTime", num(t.TR))
 	}
@@ -48,7 +53,8 @@ func (p *Plan) steadySidecar() []byte {
 	if p.Settings.Skip > 0 {
 		o.add("NumberOfVolumesDiscardedByUser", p.Settings.Skip)
 	}
-	if len(a.SliceTimes) > 0 && !t.AtOneInstant {
+	needed := t.Onsets != nil && t.TR == 0 && a.FrameDuration == 0
+	if len(a.SliceTimes) > 0 && (!t.AtOneInstant || needed) {
 		// By increasing slice index, whatever direction the raw sidecar gave.
 		o.add("SliceTiming", nums(a.SliceTimes))
 		o.add("SliceEncodingDirection", string("ijk"[a.SliceAxis]))
@@ -95,7 +101,6 @@ func (p *Plan) referenceSidecar() []byte {
 func (p *Plan) maskSidecar() []byte {
 	var o object
 	o.add("Description", "The head in the reference: 1 inside, 0 outside. Motion is estimated from these voxels and a rim of two around them, less two planes at each edge of the field of view (fewer in a thin slab); figures are taken over these.")
-	o.add("Type", "Brain")
 	o.add("Sources", []string{dataset.URI("", p.Output("reference"))})
 	o.add("SpatialReference", dataset.URI("", p.Output("reference")))
 	return o.file()

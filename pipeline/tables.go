@@ -88,11 +88,7 @@ func poseDescription(p *Plan, est *realign.Estimate, centre [3]float64) []byte {
 		}
 		d.add("Source", c.Source)
 		if len(c.Levels) > 0 {
-			var levels object
-			for _, l := range c.Levels {
-				levels.add(l.Value, l.Description)
-			}
-			d.add("Levels", levels)
+			d.add("Levels", levelsObject(c.Levels))
 		}
 		o.add(c.Name, d)
 	}
@@ -111,6 +107,13 @@ func poseDescription(p *Plan, est *realign.Estimate, centre [3]float64) []byte {
 	o.add("Matrices", mats)
 	o.add("MatricesDescription", "For each volume the 4x4 matrix, by rows, that takes a point of the reference (world mm, x to the right, y to the front, z to the top) to where that point was in that volume. "+matricesNote(est))
 	return o.file()
+}
+
+func levelsObject(levels []quality.Level) (o object) {
+	for _, l := range levels {
+		o.add(l.Value, l.Description)
+	}
+	return o
 }
 
 func matricesNote(est *realign.Estimate) string {

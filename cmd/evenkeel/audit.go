@@ -1,6 +1,7 @@
 package main
 
 import (
+	"context"
 	"encoding/json"
 	"fmt"
 	"strings"
@@ -17,8 +18,14 @@ func (s *session) auditCommand() *cli.Command {
 		Usage:     "check every record against the files it names",
 		ArgsUsage: "OUT",
 		Description: describe("Digests every file that a record in OUT names and says which are missing or changed.\n"+
-			"The raw files are found through OUT's DatasetLinks, or with --dataset.", "evenkeel audit voyage-steady --dataset voyage",
-			pipeline.ExitDone, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO),
+			"The raw files are found through OUT's DatasetLinks, or with --dataset. A record of\n"+
+			"another version is noted and is no difference.", "evenkeel audit voyage-steady --dataset voyage",
+			codes(pipeline.ExitDone, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt).
+				but(pipeline.ExitDone, "every file looked for is what its record says").
+				but(pipeline.ExitOutside, "a difference was found").
+				but(pipeline.ExitUsage, "the command line is wrong; nothing was started").
+				but(pipeline.ExitNoInput, "OUT or the raw dataset given is missing or unreadable, or OUT holds no record").
+				but(pipeline.ExitInterrupt, "interrupted: run the same command again")),
 		Flags: []cli.Flag{
 			&cli.StringFlag{Name: "dataset", Usage: "the raw dataset, in `DIR`"},
 			&cli.BoolFlag{Name: "json", Usage: "the findings as one JSON document"},
@@ -32,13 +39,19 @@ func (s *session) auditCommand() *cli.Command {
 			if c.Bool("replay") {
 				return &pipeline.UsageError{Where: "--replay", Message: "comes with a later version; without it, digests are checked"}
 			}
-			return s.audit(args[0], c.String("dataset"), c.Bool("json"))
+			return s.audit(c.Context, args[0], c.String("dataset"), c.Bool("json"))
 		},
 	}
 }
 
-func (s *session) audit(out, raw string, asJSON bool) error {
-	findings, checked, raw, err := pipeline.Audit(out, raw)
+func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error {
+	findings, checked, raw, err := pipeline.Audit(ctx, out, raw, func(done, of int) {
+		if done == 1 {
+			s.log.startProgress(of)
+		}
+		s.log.step(1)
+	})
+	s.log.stopProgress()
 	if err != nil {
 		return err
 	}
@@ -60,16 +73,9 @@ func (s *session) audit(out, raw string, asJSON bool) error {
 		b.Write(append(data, '\n'))
 	} else {
 		for _, f := range findings {
-			fmt.Fprintf(&b, "%s: %s", f.Kind, f.File)
-			if f.Found != "" {
-				fmt.Fprintf(&b, ": found %s", f.Found)
-			}
-			if f.Expected != "" {
-				fmt.Fprintf(&b, ", expected %s", f.Expected)
-			}
-			fmt.Fprintf(&b, " (%s)\n", f.Record)
+			b.WriteString(f.String() + "\n")
 		}
-		fmt.Fprintf(&b, "%s, %s and %s checked: %s\n", counted(checked.Records, "record"), counted(checked.Outputs, "output"), counted(checked.Inputs, "input"), counted(len(findings), "difference"))
+		fmt.Fprintf(&b, "%s, %s and %s checked: %s\n", counted(checked.Records, "record"), counted(checked.Outputs, "output"), counted(checked.Inputs, "input"), counted(provenance.Differences(findings), "difference"))
 	}
 	if _, err := fmt.Fprint(s.stdout, b.String()); err != nil {
 		return &pipeline.IOError{Path: "standard output", Err: err}
@@ -77,7 +83,7 @@ func (s *session) audit(out, raw string, asJSON bool) error {
 	if checked.InputsUnseen > 0 {
 		s.log.warn("inputs-unseen", fmt.Sprintf("%s not checked: the raw dataset was not found; give --dataset DIR", counted(checked.InputsUnseen, "input")), nil)
 	}
-	if len(findings) > 0 {
+	if provenance.Differences(findings) > 0 {
 		return &exit{pipeline.ExitOutside}
 	}
 	return nil

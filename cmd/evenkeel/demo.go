@@ -27,7 +27,11 @@ func (s *session) demoCommand() *cli.Command {
 			"(without OUT: in a new folder under the system's temporary one), runs survey, steady\n"+
 			"and audit on it, and prints what was recovered against what is true. Under a minute.",
 			"evenkeel demo ebb-light",
-			pipeline.ExitDone, pipeline.ExitUsage, pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt),
+			codes(pipeline.ExitDone, pipeline.ExitUsage, pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt).
+				but(pipeline.ExitDone, "the cohort was built, and every command ran and ended with 0").
+				but(pipeline.ExitUsage, "the command line is wrong; nothing was started").
+				but(pipeline.ExitNoCreate, "OUT cannot be created, or is not empty").
+				but(pipeline.ExitInterrupt, "interrupted: run it again with a new OUT")),
 		Action: func(c *cli.Context) error {
 			args, err := arguments(c, "[OUT]")
 			if err != nil {

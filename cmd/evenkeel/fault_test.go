@@ -285,6 +285,7 @@ func TestInputChanged(t *testing.T) {
 	for _, name := range []string{"_bold.nii", "_bold.json"} {
 		dir, out := filepath.Join(t.TempDir(), "raw"), filepath.Join(t.TempDir(), "out")
 		with(func(*sailor) {})(dir)
+		claim(t, out)
 		if err := os.MkdirAll(filepath.Join(out, "sub-01/func"), 0o755); err != nil {
 			t.Fatal(err)
 		}
@@ -345,7 +346,7 @@ func TestMalformedInputs(t *testing.T) {
 		out[i] ^= 0xff
 		return out
 	}
-	// Offsets: references.md 1.1 (nifti1.h).
+	// Offsets: nifti1.h.
 	cases := map[string]func(string){
 		"empty image":              image([]byte{}),
 		"one byte":                 image([]byte{0}),

@@ -143,6 +143,17 @@ func writeDataset(dir string, files ...map[string][]byte) {
 	}
 }
 
+// claim marks a folder as an output of ours, as an earlier invocation does.
+func claim(t *testing.T, out string) {
+	t.Helper()
+	if err := os.MkdirAll(out, 0o755); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.WriteFile(filepath.Join(out, "dataset_description.json"), []byte(`{"GeneratedBy":[{"Name":"evenkeel"}]}`), 0o644); err != nil {
+		t.Fatal(err)
+	}
+}
+
 // run calls the program in this process.
 func run(args ...string) (code int, stdout, stderr string) {
 	var out, err bytes.Buffer

@@ -19,7 +19,8 @@ func (s *session) clusterCommand() *cli.Command {
 func later(name, args, usage string) *cli.Command {
 	return &cli.Command{
 		Name: name, Usage: usage, ArgsUsage: args,
-		Description: describe("Comes with a later version; this one does nothing and says so.", "evenkeel "+name+" "+args, pipeline.ExitUsage),
+		Description: describe("Comes with a later version; this one does nothing and says so.", "evenkeel "+name+" "+args,
+			codes(pipeline.ExitUsage).but(pipeline.ExitUsage, "always: the command comes with a later version")),
 		Action: func(*cli.Context) error {
 			return &pipeline.UsageError{Where: name, Message: "comes with a later version of evenkeel"}
 		},

@@ -18,9 +18,25 @@ import (
 
 // A session is one invocation of the program.
 type session struct {
-	stdin          io.Reader
-	stdout, stderr io.Writer
-	log            *logger
+	stdin  io.Reader
+	stdout *output
+	stderr io.Writer
+	log    *logger
+}
+
+// output is standard output; it remembers what kept it from being written, which the
+// option library and fmt do not tell.
+type output struct {
+	w   io.Writer
+	err error
+}
+
+func (o *output) Write(b []byte) (int, error) {
+	n, err := o.w.Write(b)
+	if err != nil && o.err == nil {
+		o.err = err
+	}
+	return n, err
 }
 
 // exit is returned by a command that ran its course with a code of its own; it has
@@ -32,7 +48,7 @@ func (e *exit) Error() string { return fmt.Sprintf("exit status %d", e.code) }
 // Run executes the command line args (the program's name first) and returns the
 // exit status. It never panics: a mistake of ours is reported in a plain sentence.
 func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
-	s := &session{stdin: stdin, stdout: stdout, stderr: stderr, log: &logger{w: stderr}}
+	s := &session{stdin: stdin, stdout: &output{w: stdout}, stderr: stderr, log: &logger{w: stderr}}
 	defer func() {
 		if v := recover(); v != nil {
 			code = s.fail(&pipeline.BugError{Value: v, Stack: debug.Stack()})
@@ -50,12 +66,15 @@ func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
 	s.log.stopProgress()
 	var own *exit
 	if errors.As(err, &own) {
-		return s.last(own.code)
+		code, err = own.code, nil
 	}
-	if err != nil {
+	switch {
+	case err != nil:
 		return s.fail(err)
+	case s.stdout.err != nil && code != pipeline.ExitBug && code != pipeline.ExitIO:
+		return s.fail(&pipeline.IOError{Path: "standard output", Err: s.stdout.err})
 	}
-	return s.last(pipeline.ExitDone)
+	return s.last(code)
 }
 
 // fail reports an error and returns its code.
@@ -180,7 +199,7 @@ func (s *session) app() *cli.App {
 		Description: "Turns the raw BOLD runs of a BIDS dataset into series in which every voxel of a\n" +
 			"volume refers to one instant and one head position, with the poses, the figures\n" +
 			"and the record of how each was made. Options may stand before and after arguments.\n\n" +
-			research + "\n\nEXAMPLE:\n  evenkeel survey voyage && evenkeel steady voyage voyage-steady\n\n" + exitHelp(),
+			research + "\n\nEXAMPLE:\n  evenkeel survey voyage && evenkeel steady voyage voyage-steady\n\n" + exitHelp(nil),
 		Writer: s.stdout, ErrWriter: s.stderr, Reader: s.stdin,
 		HideVersion: true, HideHelpCommand: false,
 		DisableSliceFlagSeparator: true,
@@ -224,25 +243,43 @@ func globalFlags() []cli.Flag {
 	}
 }
 
-// exitHelp lists exit codes, those given or all, for help.
-func exitHelp(codes ...int) string {
+// exitCodes are those that a command can end with, with what they mean there: "" is
+// what they mean everywhere.
+type exitCodes map[int]string
+
+func codes(list ...int) exitCodes {
+	c := exitCodes{}
+	for _, code := range list {
+		c[code] = ""
+	}
+	return c
+}
+
+// but says what a code means for this command.
+func (c exitCodes) but(code int, meaning string) exitCodes {
+	c[code] = meaning
+	return c
+}
+
+// exitHelp lists exit codes, those given or (nil) all, for help.
+func exitHelp(own exitCodes) string {
 	var b strings.Builder
 	b.WriteString("EXIT CODES:")
 	for _, e := range pipeline.ExitCodes {
-		wanted := len(codes) == 0
-		for _, c := range codes {
-			wanted = wanted || c == e.Code
+		meaning, wanted := own[e.Code]
+		if meaning == "" {
+			meaning = e.Meaning
 		}
-		if wanted {
-			fmt.Fprintf(&b, "\n  %2d  %s", e.Code, e.Meaning)
+		if wanted || own == nil {
+			fmt.Fprintf(&b, "\n  %2d  %s", e.Code, meaning)
 		}
 	}
 	return b.String()
 }
 
 // describe joins the parts of a command's help.
-func describe(text, example string, codes ...int) string {
-	return text + "\n\nEXAMPLE:\n  " + example + "\n\n" + exitHelp(codes...)
+func describe(text, example string, own exitCodes) string {
+	return text + "\n\nEXAMPLE:\n  " + example + "\n\n" + exitHelp(own)
 }
 
 // arguments takes a fixed number of arguments, named for the message.

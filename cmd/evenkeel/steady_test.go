@@ -131,7 +131,7 @@ func TestWhatACorrectedRunSays(t *testing.T) {
 	}
 
 	table := strings.Split(strings.TrimSuffix(string(mustRead(t, filepath.Join(out, theRun+"_desc-steady_pose.tsv"))), "\n"), "\n")
-	// contract.md, the columns of the pose table
+	// the columns that scripts may rely on
 	head := strings.ReplaceAll("time shift_x shift_y shift_z turn_x turn_y turn_z fd rms_ball dvars_raw dvars_steady outside fit state", " ", "\t")
 	if table[0] != head || len(table) != 1+crewVolumes-2 {
 		t.Fatalf("%d lines, head %q", len(table), table[0])
@@ -357,9 +357,7 @@ func TestOutCannotBeCreated(t *testing.T) {
 	}
 	// The folder of one run only.
 	out := filepath.Join(t.TempDir(), "out")
-	if err := os.MkdirAll(out, 0o755); err != nil {
-		t.Fatal(err)
-	}
+	claim(t, out)
 	if err := os.WriteFile(filepath.Join(out, "sub-01"), nil, 0o644); err != nil {
 		t.Fatal(err)
 	}
@@ -457,7 +455,7 @@ func TestRealSeries(t *testing.T) {
 	if code != 3 || strings.Count(stdout, " done ") != 6 || strings.Count(stdout, " refused      volumes-few\n") != 6 {
 		t.Error(dump(code, stdout, stderr))
 	}
-	// Bounds of issue 2's targets: the scanner's field drifts, so not zero.
+	// A phantom at rest; the scanner's field drifts, so not zero.
 	for stem, limit := range map[string]float64{"sub-phantomA/func/sub-phantomA_task-static": 0.06, "sub-phantomB/func/sub-phantomB_task-static": 0.10} {
 		var q struct{ FD struct{ Mean float64 } }
 		if err := json.Unmarshal(mustRead(t, filepath.Join(out, stem+"_desc-steady_quality.json")), &q); err != nil {

@@ -13,10 +13,14 @@ import (
 
 func (s *session) versionCommand() *cli.Command {
 	return &cli.Command{
-		Name:        "version",
-		Usage:       "print version, Go version, module versions and CPU features",
-		Description: describe("Prints what a record says about the software, and the processor's features.", "evenkeel version --json", pipeline.ExitDone, pipeline.ExitUsage),
-		Flags:       []cli.Flag{&cli.BoolFlag{Name: "json", Usage: "as one JSON document"}},
+		Name:  "version",
+		Usage: "print version, Go version, module versions and CPU features",
+		Description: describe("Prints what a record says about the software, and the processor's features.", "evenkeel version --json",
+			codes(pipeline.ExitDone, pipeline.ExitUsage, pipeline.ExitIO).
+				but(pipeline.ExitDone, "printed").
+				but(pipeline.ExitUsage, "the command line is wrong").
+				but(pipeline.ExitIO, "standard output cannot be written (a full disk)")),
+		Flags: []cli.Flag{&cli.BoolFlag{Name: "json", Usage: "as one JSON document"}},
 		Action: func(c *cli.Context) error {
 			if _, err := arguments(c); err != nil {
 				return err
