@@ -5,6 +5,11 @@ import (
 	"errors"
 	"io/fs"
 	"os"
+	"path/filepath"
+	"slices"
+	"strings"
+
+	"github.com/tidwall/gjson"
 
 	"evenkeel/dataset"
 	"evenkeel/provenance"
@@ -26,7 +31,7 @@ func Audit(ctx context.Context, out, raw string, done func(done, of int)) ([]pro
 			return nil, provenance.Checked{}, "", &dataset.NotFound{Root: raw, Err: err}
 		}
 	} else {
-		raw = linkedRaw(out)
+		raw, _ = LinkedRaw(out)
 	}
 	findings, checked, err := provenance.Auditor{Out: out, Raw: raw, Version: Version, Workers: Cores(), Done: done}.Audit(ctx)
 	if ctx.Err() != nil {
@@ -35,8 +40,8 @@ func Audit(ctx context.Context, out, raw string, done func(done, of int)) ([]pro
 	if err != nil {
 		return findings, checked, raw, &IOError{Path: out, Step: "auditing", Err: err}
 	}
-	if checked.Records == 0 && len(findings) == 0 {
-		return nil, checked, raw, &dataset.NotFound{Root: out, Err: errors.New("no record (*_desc-steady_prov.json) in it")}
+	if description, _ := os.ReadFile(filepath.Join(out, descriptionName)); checked.Records == 0 && len(findings) == 0 && !isOurs(description) {
+		return nil, checked, raw, &dataset.NotFound{Root: out, Err: errors.New("no dataset of evenkeel's, and no record (*_desc-steady_prov.json) in it")}
 	}
 	return findings, checked, raw, nil
 }
@@ -52,11 +57,29 @@ func isFolder(name string) error {
 	return nil
 }
 
-// linkedRaw finds the raw dataset through DatasetLinks, "" if it is not there.
-func linkedRaw(out string) string {
+// LinkedRaw finds the raw dataset through DatasetLinks. With raw "", why says in words
+// why there is none: OUT may have been moved, and whatever lies where the link
+// now leads is not to be taken for the data.
+func LinkedRaw(out string) (raw, why string) {
 	raw, ok := dataset.FindRaw(out)
-	if !ok || isFolder(raw) != nil {
-		return ""
+	if !ok {
+		return "", "OUT does not tell where the raw dataset is"
 	}
-	return raw
+	link := raw
+	if data, err := os.ReadFile(filepath.Join(out, descriptionName)); err == nil {
+		if v := gjson.GetBytes(data, "DatasetLinks."+dataset.RawName).String(); v != "" {
+			link = v
+		}
+	}
+	if isFolder(raw) != nil {
+		return "", "the raw dataset is not at " + link
+	}
+	// A raw dataset has a description or, where that was forgotten, subjects.
+	entries, _ := os.ReadDir(raw)
+	if !slices.ContainsFunc(entries, func(e fs.DirEntry) bool {
+		return e.Name() == descriptionName || strings.HasPrefix(e.Name(), "sub-")
+	}) {
+		return "", "the raw dataset is not at " + link
+	}
+	return raw, ""
 }

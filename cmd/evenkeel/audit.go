@@ -81,7 +81,11 @@ func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error
 		return &pipeline.IOError{Path: "standard output", Err: err}
 	}
 	if checked.InputsUnseen > 0 {
-		s.log.warn("inputs-unseen", fmt.Sprintf("%s not checked: the raw dataset was not found; give --dataset DIR", counted(checked.InputsUnseen, "input")), nil)
+		_, why := pipeline.LinkedRaw(out)
+		s.log.warn("inputs-unseen", fmt.Sprintf("%s not checked: %s; give --dataset DIR", counted(checked.InputsUnseen, "input"), why), nil)
+	}
+	if checked.Records == 0 {
+		s.log.warn("no-records", out+" holds no record: nothing could be checked", nil)
 	}
 	if provenance.Differences(findings) > 0 {
 		return &exit{pipeline.ExitOutside}
