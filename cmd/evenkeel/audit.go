@@ -47,7 +47,7 @@ func (s *session) auditCommand() *cli.Command {
 func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error {
 	findings, checked, raw, err := pipeline.Audit(ctx, out, raw, func(done, of int) {
 		if done == 1 {
-			s.log.startProgress(of)
+			s.log.startProgress(float64(of))
 		}
 		s.log.step(1)
 	})

@@ -18,10 +18,11 @@ import (
 
 // A session is one invocation of the program.
 type session struct {
-	stdin  io.Reader
-	stdout *output
-	stderr io.Writer
-	log    *logger
+	stdin   io.Reader
+	stdout  *output
+	stderr  io.Writer
+	log     *logger
+	reached map[*pipeline.Plan]float64 // how far each run is, from 0 to 1
 }
 
 // output is standard output; it remembers what kept it from being written, which the
