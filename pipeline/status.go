@@ -72,7 +72,7 @@ type NothingSelected struct {
 func (e *NothingSelected) Error() string {
 	left := ""
 	if e.LeftOut > 0 {
-		left = fmt.Sprintf("; %d images of other parts than the magnitude were left out (part-left-out)", e.LeftOut)
+		left = fmt.Sprintf("; left out because they are no magnitude images (part-left-out): %d", e.LeftOut)
 	}
 	if e.Runs == 0 {
 		return fmt.Sprintf("%s: holds no BOLD run (sub-*/[ses-*/]func/*_bold.nii[.gz])%s", e.Root, left)

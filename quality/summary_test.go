@@ -38,7 +38,7 @@ func TestSummarise(t *testing.T) {
 	}
 }
 
-// The columns of the pose table, in the order in which the contract names them.
+// The columns of the pose table, in the order that scripts may rely on.
 func TestPoseColumns(t *testing.T) {
 	want := strings.Fields("time shift_x shift_y shift_z turn_x turn_y turn_z fd rms_ball dvars_raw dvars_steady outside fit state")
 	units := strings.Fields("s mm mm mm degree degree degree mm mm % % 1 1")
