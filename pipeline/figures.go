@@ -26,6 +26,7 @@ type measures struct {
 	tsnrRaw     []float32
 	tsnrSteady  []float32
 	mask        []bool
+	path        *realign.PathEstimate // nil where motion was not estimated
 }
 
 func undefined(n int) []float64 {
@@ -37,18 +38,20 @@ func undefined(n int) []float64 {
 }
 
 // measurePoses fills in what follows from the poses alone.
-func (m *measures) measurePoses(est *realign.Estimate, nt int) {
+func (m *measures) measurePoses(po *posed, poses []realign.Pose, nt int) {
 	m.fd, m.rms = undefined(nt), undefined(nt)
 	m.outside, m.fit = undefined(nt), undefined(nt)
 	m.states = make([]string, nt)
 	m.shifts, m.turns = make([][3]float64, nt), make([][3]float64, nt)
+	est := po.est
 	if est == nil {
 		return
 	}
+	m.path = po.path
 	params := make([][]float64, nt)
 	for n, v := range est.Volumes {
 		m.states[n] = string(v.State)
-		m.shifts[n], m.turns[n] = v.Pose.Params(est.Centre)
+		m.shifts[n], m.turns[n] = poses[n].Params(est.Centre)
 		if v.State != realign.Lost {
 			params[n] = append(append([]float64{}, m.shifts[n][:]...), m.turns[n][:]...)
 			m.fit[n] = v.Fit
@@ -58,7 +61,7 @@ func (m *measures) measurePoses(est *realign.Estimate, nt int) {
 	copy(m.fd, quality.FramewiseDisplacement(params, quality.FDRadiusMM))
 	for n := 1; n < nt; n++ {
 		if params[n] != nil && params[n-1] != nil {
-			m.rms[n] = quality.RMSDeviation(est.Volumes[n].Pose.Matrix(), est.Volumes[n-1].Pose.Matrix(), est.Centre, quality.BallRadiusMM)
+			m.rms[n] = quality.RMSDeviation(poses[n].Matrix(), poses[n-1].Matrix(), est.Centre, quality.BallRadiusMM)
 		}
 	}
 }
@@ -197,6 +200,12 @@ func (m *measures) qualityFile(p *Plan) []byte {
 	series("dvars_steady", m.dvarsSteady, m.withoutLost(m.dvarsSteady), digitsShare)
 	series("outside", m.outside, m.outside, digitsShare)
 	series("fit", m.fit, m.fit, digitsShare)
+	if m.path != nil && m.path.Used {
+		series("expected_error", m.path.Expected, m.path.Expected, digitsMM)
+		value("residual_volume", rounded(m.path.VolumeResidual, digitsShare))
+		value("residual_path", rounded(m.path.PathResidual, digitsShare))
+		value("explained", rounded(m.path.Explained, digitsShare))
+	}
 	figure("tsnr_raw", summary(quality.SummariseInside(m.tsnrRaw, m.mask), 4)...)
 	figure("tsnr_steady", summary(quality.SummariseInside(m.tsnrSteady, m.mask), 4)...)
 	rows := make([][]num, len(m.spikes))

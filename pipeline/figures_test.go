@@ -8,10 +8,11 @@ import (
 
 	"evenkeel/dataset"
 	"evenkeel/realign"
+	"evenkeel/slicetime"
 )
 
 // fourVolumes: still, moved, lost, moved back; shifts only, so that fd is by hand.
-func fourVolumes() (*Plan, *measures, *realign.Estimate) {
+func fourVolumes() (*Plan, *measures, *posed) {
 	at := func(x float64) realign.Pose {
 		return realign.FromParams([3]float64{x, 0, 0}, [3]float64{}, [3]float64{1, 2, 3})
 	}
@@ -23,12 +24,13 @@ func fourVolumes() (*Plan, *measures, *realign.Estimate) {
 	}}
 	p := &Plan{Run: dataset.Run{Stem: "s", Dir: "d"}, Volumes: 4, Timing: Timing{Rows: []float64{0.5, 2.5, 4.5, 6.5}}}
 	m := &measures{mask: []bool{true, false}}
-	m.measurePoses(est, 4)
+	po := &posed{est: est, path: realign.FromVolumes(realign.Grid{N: [3]int{1, 1, 2}}, slicetime.Schedule{Axis: 2, TR: 2}, est, "")}
+	m.measurePoses(po, p.rowPoses(po), 4)
 	m.dvarsRaw = []float64{math.NaN(), 1, 2, 3}
 	m.dvarsSteady = []float64{math.NaN(), 0.5, 0.25, 1.5}
 	m.tsnrRaw, m.tsnrSteady = []float32{100, 1}, []float32{120, 1}
 	m.spikes = [][]float64{{0, math.NaN()}, {1, 2}, {-3, 7.5}, {0, 0}}
-	return p, m, est
+	return p, m, po
 }
 
 // What a lost volume's row says, to the byte: its six parameters are n/a; and what follows for its neighbours.
@@ -49,7 +51,7 @@ func TestPoseTable(t *testing.T) {
 
 // A lost volume enters no average; its matrix stands in the description, numeric.
 func TestFigures(t *testing.T) {
-	p, m, est := fourVolumes()
+	p, m, po := fourVolumes()
 	f, err := parseFigures(m.qualityFile(p))
 	if err != nil {
 		t.Fatal(err)
@@ -73,7 +75,7 @@ func TestFigures(t *testing.T) {
 		t.Errorf("%+v %v", q, err)
 	}
 	var d struct{ Matrices [][4][4]float64 }
-	if err := json.Unmarshal(poseDescription(p, est, est.Centre), &d); err != nil || d.Matrices[2][0][3] != 2 {
+	if err := json.Unmarshal(poseDescription(p, po, po.est.Centre), &d); err != nil || d.Matrices[2][0][3] != 2 {
 		t.Errorf("the matrix of the lost volume: %v %v", d.Matrices, err)
 	}
 }

@@ -682,10 +682,15 @@ func outputsOf(p *Plan) []Output {
 		o("mask-sidecar", "head", "mask", ".json"),
 		o("pose-table", "steady", "pose", ".tsv"),
 		o("pose-description", "steady", "pose", ".json"),
+	}
+	if p.Settings.Motion == "path" {
+		out = append(out, o("shots-table", "shots", "pose", ".tsv"), o("shots-description", "shots", "pose", ".json"))
+	}
+	out = append(out,
 		o("quality", "steady", "quality", ".json"),
 		o("raw-tsnr", "raw", "tsnr", ".nii.gz"),
 		o("steady-tsnr", "steady", "tsnr", ".nii.gz"),
-	}
+	)
 	if p.Settings.Events && p.Run.Events != "" {
 		out = append(out, o("events", "steady", "events", ".tsv"))
 	}
@@ -715,11 +720,15 @@ func (p *Plan) What() string {
 	if p.Settings.Motion == "none" {
 		parts = append(parts, "no motion correction")
 	} else {
-		m := "a pose a volume against " + p.Settings.Reference.String()
+		m := "a pose a volume against "
+		if p.Settings.Motion == "path" {
+			m = "a pose an excitation against "
+		}
+		m += p.Settings.Reference.String()
 		if p.Pose.File != p.Run.File {
 			m += " on echo " + func() string { l, _ := p.Pose.Entities.Get("echo"); return l }()
 		}
-		parts = append(parts, m, p.Settings.Space)
+		parts = append(parts, m, p.Settings.Space, p.Settings.Order)
 	}
 	return strings.Join(parts, ", ")
 }

@@ -103,6 +103,13 @@ func (p *Plan) stages(m *measures, po *posed) []provenance.Stage {
 		}
 		ref := object{{"reference_index", po.est.ReferenceIndex}, {"passes", po.est.Passes}, {"volumes", vols}}
 		add("estimate", par, ref)
+		if p.Settings.Motion == "path" {
+			par := object{}
+			for _, c := range po.path.Parameters {
+				par.add(c.Name, num(c.Value))
+			}
+			add("path", par, po.pathOutcome())
+		}
 	}
 	if t.Temporal {
 		par := object{{"kernel", p.Settings.Time}, {"origin", num(t.Origin)}, {"repetition_time", num(t.TR)},

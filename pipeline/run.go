@@ -25,7 +25,7 @@ import (
 )
 
 // Stages of a run, in the order of the work. Observers count them.
-var Stages = []string{"read", "estimate", "measure-raw", "time", "space", "measure-steady", "write"}
+var Stages = []string{"read", "estimate", "measure-raw", "time", "space", "joint", "measure-steady", "write"}
 
 // A unit is worked on as a whole: its echoes share one pose.
 type unit struct {
@@ -81,9 +81,10 @@ func (t tap) Write(b []byte) (int, error) {
 
 // posed is what the pose series gave: shared by the echoes, not changed by them.
 type posed struct {
-	est       *realign.Estimate    // nil with motion none
-	digest    *provenance.Digester // of the pose series
-	reference *provenance.Digester // of the sbref, nil if none was used
+	est       *realign.Estimate     // nil with motion none
+	path      *realign.PathEstimate // nil with motion none; holds the volume poses where there is no path
+	digest    *provenance.Digester  // of the pose series
+	reference *provenance.Digester  // of the sbref, nil if none was used
 }
 
 // run does the plans of a unit; the result has one outcome a plan. It holds at most one
@@ -195,7 +196,7 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 
 	reference, mask, centre := p.standard(po, s)
 	m := &measures{mask: mask}
-	m.measurePoses(po.est, nt)
+	m.measurePoses(po, p.rowPoses(po), nt)
 
 	end := stage("measure-raw")
 	if err := m.measureRaw(ctx, p, s.data, nt, w.workers); err != nil {
@@ -203,16 +204,22 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 	}
 	end()
 	steps := []string{"time", "space"}
-	if p.Settings.Order == "space-first" {
+	switch p.Settings.Order {
+	case "space-first":
 		steps = []string{"space", "time"}
+	case "joint":
+		steps = []string{"joint"}
 	}
 	for _, step := range steps {
 		end := stage(step)
 		var err error
-		if step == "time" {
+		switch step {
+		case "joint":
+			err = w.joint(ctx, p, po, s.data, nt)
+		case "time":
 			err = w.correctTime(ctx, p, s.data, nt)
-		} else {
-			err = w.resample(ctx, p, po.est, s.data, nt)
+		default:
+			err = w.resample(ctx, p, po, s.data, nt)
 		}
 		if err != nil {
 			return nil, err
@@ -236,7 +243,7 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 	}
 	pub := &publisher{out: w.out}
 	defer pub.discard()
-	if err := p.writeData(ctx, pub, s.data, nt, reference, mask, centre, m, po.est); err != nil {
+	if err := p.writeData(ctx, pub, s.data, nt, reference, mask, centre, m, po); err != nil {
 		return nil, err
 	}
 	end()
@@ -303,12 +310,15 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 		return nil, err
 	}
 	po.est = est
-	return po, nil
+	return po, w.estimatePath(ctx, p, g, s, po)
 }
 
 // standard gives the reference volume, the head mask and its centroid.
 func (p *Plan) standard(po *posed, s *loaded) (ref []float32, mask []bool, centre [3]float64) {
 	if po.est != nil {
+		if p.Settings.Reference.Word == "mean" {
+			return po.path.Reference, po.est.Mask, po.est.Centre // sharper, along a path
+		}
 		return po.est.Reference, po.est.Mask, po.est.Centre // copies of its own, never parts of the series
 	}
 	nv := len(s.data) / s.nt
@@ -345,37 +355,35 @@ func (w *worker) correctTime(ctx context.Context, p *Plan, data []float32, nt in
 	if !p.Timing.Temporal {
 		return ctx.Err()
 	}
-	opt := slicetime.Options{Kernel: slicetime.Fourier, Reach: p.Settings.SincReach}
-	if p.Settings.Time == "sinc" {
-		opt.Kernel = slicetime.Sinc
-	}
 	n := p.Grid.N
-	return slicetime.Correct(ctx, data, n[0], n[1], n[2], nt, p.Schedule, p.Timing.Origin, opt, w.workers)
+	return slicetime.Correct(ctx, data, n[0], n[1], n[2], nt, p.Schedule, p.Timing.Origin, p.Settings.kernel(), w.workers)
 }
 
 // resample brings every volume to the reference, in place, each volume once. A
 // volume that stands there already is left as it is, bit for bit.
-func (w *worker) resample(ctx context.Context, p *Plan, est *realign.Estimate, data []float32, nt int) error {
-	if est == nil {
+func (w *worker) resample(ctx context.Context, p *Plan, po *posed, data []float32, nt int) error {
+	if po.est == nil {
 		return ctx.Err()
 	}
-	degree := 5
-	if p.Settings.Space == "cubic" {
-		degree = 3
-	}
+	poses := p.rowPoses(po)
 	nv := len(data) / nt
 	rs := make([]*realign.Resampler, max(1, w.workers))
 	return parallel.For(ctx, w.workers, nt, func(worker, t int) error {
-		pose := est.Volumes[t].Pose
-		if pose == realign.Identity {
+		bySlice := po.path.Used && p.Settings.Order == "space-first"
+		if poses[t] == realign.Identity && !bySlice {
 			return nil
 		}
 		if rs[worker] == nil {
-			rs[worker] = realign.NewResampler(p.Grid.N, degree)
+			rs[worker] = realign.NewResampler(p.Grid.N, p.Settings.degree())
+		}
+		from := realign.PoseMap(p.Grid, poses[t])
+		if bySlice {
+			// Slices that have not been moved in time yet stand at poses of their own.
+			from = realign.SlotMap(p.Grid, p.Schedule.Axis, func(k int) realign.Pose { return po.path.Slot(t, k) })
 		}
 		vol := data[t*nv : (t+1)*nv]
 		rs[worker].Load(vol)
-		rs[worker].Eval(vol, realign.PoseMap(p.Grid, pose))
+		rs[worker].Eval(vol, from)
 		return nil
 	})
 }
@@ -399,7 +407,7 @@ func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
 }
 
 // writeData writes every file of the run but its record, under hidden names.
-func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, est *realign.Estimate) error {
+func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
 	t := p.Timing
 	nv := len(ref)
 	lo, hi := extent(data)
@@ -457,7 +465,11 @@ func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt
 		case "pose-table":
 			fill = text(poseTable(p, m))
 		case "pose-description":
-			fill = text(poseDescription(p, est, centre))
+			fill = text(poseDescription(p, po, centre))
+		case "shots-table":
+			fill = text(shotsTable(p, po))
+		case "shots-description":
+			fill = text(shotsDescription(p, po))
 		case "quality":
 			fill = text(m.qualityFile(p))
 		case "raw-tsnr":

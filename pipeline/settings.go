@@ -23,10 +23,10 @@ type Settings struct {
 	Time       string   // temporal interpolation: fourier, sinc, none
 	TimeOrigin Origin   // the instant inside each volume that every slice is moved to
 	SincReach  int      // samples on each side of the sinc kernel
-	Motion     string   // volume, none
+	Motion     string   // path, volume, none
 	Reference  Standard // what every volume is aligned to
 	Space      string   // quintic, cubic
-	Order      string   // time-first, space-first
+	Order      string   // joint, time-first, space-first
 	Skip       int      // leading volumes left out
 	Store      string   // float32, int16
 	Accept     []string // fault identifiers, sorted, without repeats
@@ -39,10 +39,10 @@ func DefaultSettings() Settings {
 		Time:       "fourier",
 		TimeOrigin: Origin{Word: "middle"},
 		SincReach:  8,
-		Motion:     "volume",
+		Motion:     "path",
 		Reference:  Standard{Word: "mean"},
 		Space:      "quintic",
-		Order:      "time-first",
+		Order:      "joint",
 		Store:      "float32",
 	}
 }
@@ -76,9 +76,7 @@ type Choice struct {
 	// Switch is true for a setting that is on or off.
 	Switch bool
 
-	words []string // for a setting that is one of a few words
-	// later maps words that a later version will know to what they will mean.
-	later map[string]string
+	words []string                        // for a setting that is one of a few words
 	parse func(*Settings, []string) error // from option values
 	value func(Settings) any              // as it stands in the JSON object
 	kind  string                          // what a JSON value may be: "string", "integer", "string or number" ...
@@ -102,7 +100,7 @@ func (c Choice) Default() string {
 
 // Choices lists every setting in the order in which help and the record show them.
 var Choices = []Choice{
-	word("time", []string{"fourier", "sinc", "none"}, nil,
+	word("time", []string{"fourier", "sinc", "none"},
 		"temporal interpolation of the slices", func(s *Settings) *string { return &s.Time }),
 	{Key: "time_origin", Values: "middle|start|SECONDS", kind: "a word or a number of seconds",
 		Help: "the instant inside each volume that every slice is moved to; middle is halfway between the earliest and the latest slice time",
@@ -123,8 +121,8 @@ var Choices = []Choice{
 			return parseInt(&s.SincReach, last(v), 1, slicetime.MaxReach)
 		},
 		value: func(s Settings) any { return s.SincReach }},
-	word("motion", []string{"volume", "none"}, map[string]string{"path": "one pose along continuous time"},
-		"one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion }),
+	word("motion", []string{"path", "volume", "none"},
+		"a pose for every excitation, one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion }),
 	{Key: "reference", Values: "mean|first|middle|sbref|INDEX", kind: "a word or the index of a volume",
 		Help: "what every volume is aligned to; mean is the average of the aligned volumes, standing at the pose of the first of them; INDEX counts from 0 after the volumes skipped",
 		parse: func(s *Settings, v []string) error {
@@ -138,17 +136,17 @@ var Choices = []Choice{
 			}
 			return s.Reference.Index
 		}},
-	word("space", []string{"quintic", "cubic"}, nil,
+	word("space", []string{"quintic", "cubic"},
 		"degree of the B-spline of the one spatial resampling", func(s *Settings) *string { return &s.Space }),
-	word("order", []string{"time-first", "space-first"}, map[string]string{"joint": "time and space interpolated together"},
-		"which interpolation comes first", func(s *Settings) *string { return &s.Order }),
+	word("order", []string{"joint", "time-first", "space-first"},
+		"joint takes the predicted anatomy out before it interpolates in time; otherwise, which interpolation comes first", func(s *Settings) *string { return &s.Order }),
 	{Key: "skip", Values: "N", kind: "a whole number",
 		Help: "leading volumes left out of the output and the estimate: those before the magnetisation is steady, which show as spikes and high DVARS at the start",
 		parse: func(s *Settings, v []string) error {
 			return parseInt(&s.Skip, last(v), 0, math.MaxInt32)
 		},
 		value: func(s Settings) any { return s.Skip }},
-	word("store", []string{"float32", "int16"}, nil,
+	word("store", []string{"float32", "int16"},
 		"voxel type written; int16 carries scl_slope and scl_inter", func(s *Settings) *string { return &s.Store }),
 	{Key: "accept", Values: "FAULT", Repeat: true, kind: "a list of fault identifiers",
 		Help: "process a run in spite of that fault; recorded. One of: " + strings.Join(acceptable(), ", "),
@@ -179,15 +177,11 @@ var Choices = []Choice{
 		value: func(s Settings) any { return s.Events }},
 }
 
-// word declares a setting that is one of a few words. Words of later are known
-// but not there yet; they are refused with a sentence that says so.
-func word(key string, words []string, later map[string]string, help string, field func(*Settings) *string) Choice {
-	return Choice{Key: key, Values: strings.Join(words, "|"), Help: help, words: words, later: later, kind: "one of " + strings.Join(words, ", "),
+// word declares a setting that is one of a few words.
+func word(key string, words []string, help string, field func(*Settings) *string) Choice {
+	return Choice{Key: key, Values: strings.Join(words, "|"), Help: help, words: words, kind: "one of " + strings.Join(words, ", "),
 		parse: func(s *Settings, v []string) error {
 			w := last(v)
-			if what, ok := later[w]; ok {
-				return fmt.Errorf("%s (%s) comes with a later version, until then choose %s", w, what, strings.Join(words, " or "))
-			}
 			if !slices.Contains(words, w) {
 				return fmt.Errorf("found %q, expected %s%s", w, strings.Join(words, ", "), DidYouMean(w, words))
 			}

@@ -3,8 +3,6 @@ package pipeline
 import (
 	"bytes"
 	"math"
-	"strconv"
-	"strings"
 
 	"evenkeel/quality"
 	"evenkeel/realign"
@@ -15,16 +13,6 @@ const rotationOrder = "R = Rz(turn_z) Ry(turn_y) Rx(turn_x), right-handed about 
 // poseTable writes one row a volume. Columns and their order are those of
 // quality.PoseColumns; a column that has no cell here is a mistake of ours.
 func poseTable(p *Plan, m *measures) []byte {
-	fixed := func(v float64, digits int) string {
-		if math.IsNaN(v) || math.IsInf(v, 0) {
-			return "n/a"
-		}
-		s := strconv.FormatFloat(v, 'f', digits, 64)
-		if strings.Trim(s, "-0.") == "" {
-			s = strings.TrimPrefix(s, "-") // no negative zero
-		}
-		return s
-	}
 	// Six parameters are n/a where a volume was lost or motion not estimated.
 	pose := func(n int, v float64, digits int) string {
 		if m.states[n] == "" || m.states[n] == string(realign.Lost) {
@@ -77,7 +65,7 @@ func poseTable(p *Plan, m *measures) []byte {
 func degrees(rad float64) float64 { return rad * (180 / math.Pi) }
 
 // poseDescription is the table's data dictionary, with the exact poses.
-func poseDescription(p *Plan, est *realign.Estimate, centre [3]float64) []byte {
+func poseDescription(p *Plan, po *posed, centre [3]float64) []byte {
 	var o object
 	for _, c := range quality.PoseColumns() {
 		d := object{{"Description", c.Description}}
@@ -95,17 +83,18 @@ func poseDescription(p *Plan, est *realign.Estimate, centre [3]float64) []byte {
 	o.add("RotationCentre", nums(centre[:]))
 	o.add("RotationOrder", rotationOrder)
 	mats := make([][4][]num, p.Volumes)
+	poses := p.rowPoses(po)
 	for n := range mats {
 		m := realign.Identity.Matrix()
-		if est != nil {
-			m = est.Volumes[n].Pose.Matrix()
+		if po.est != nil {
+			m = poses[n].Matrix()
 		}
 		for r := range 4 {
 			mats[n][r] = nums(m[4*r : 4*r+4])
 		}
 	}
 	o.add("Matrices", mats)
-	o.add("MatricesDescription", "For each volume the 4x4 matrix, by rows, that takes a point of the reference (world mm, x to the right, y to the front, z to the top) to where that point was in that volume. "+matricesNote(est))
+	o.add("MatricesDescription", "For each volume the 4x4 matrix, by rows, that takes a point of the reference (world mm, x to the right, y to the front, z to the top) to where that point was in that volume. "+matricesNote(po))
 	return o.file()
 }
 
@@ -116,9 +105,12 @@ func levelsObject(levels []quality.Level) (o object) {
 	return o
 }
 
-func matricesNote(est *realign.Estimate) string {
-	if est == nil {
+func matricesNote(po *posed) string {
+	switch {
+	case po.est == nil:
 		return "Motion was not estimated: all are the identity."
+	case po.path.Used:
+		return "It is the pose at the row's time. That of a lost volume follows from the path around it."
 	}
 	return "The matrix of a lost volume is interpolated between its aligned neighbours."
 }

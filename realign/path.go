@@ -54,6 +54,7 @@ const (
 	pathFirstIterations = 4
 	pathNextIterations  = 2
 	pathRim             = 1    // voxels around the head that take part: past them an unfiltered template is flat
+	lastProjections     = 2    // of the last pass; more sharpen no further
 	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
 	// fewestData: a path is only worth its name where most slots see the head.
 	fewestData = 0.5
@@ -207,7 +208,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		// One projection sharpens most, a second the rest; more change nothing.
 		projections := 1
 		if pass == pathPasses-1 {
-			projections = 2
+			projections = lastProjections
 		}
 		if err := e.rebuild(projections); err != nil {
 			return nil, err
@@ -234,6 +235,17 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	out.Path = Path{Times: e.times, Poses: e.poses}
 	out.Shots, out.Shot = len(e.shots), e.shotOf
 	out.Reference = e.image
+	out.Parameters = []Parameter{
+		{"passes", pathPasses},
+		{"first_iterations", pathFirstIterations},
+		{"next_iterations", pathNextIterations},
+		{"tolerance_mm", pathTolerance},
+		{"projections", lastProjections},
+		{"margin_voxels", fineMargin},
+		{"rim_voxels", pathRim},
+		{"degrees_of_freedom", freedom},
+		{"biweight_cut", tukeyCut},
+	}
 	return out, nil
 }
 
@@ -692,4 +704,46 @@ func (e *pathEstimator) expect(c *chain, slots []slotData, out []float64) {
 		}
 		out[n] = math.Sqrt(max(0, sum/float64(len(e.shots))))
 	}
+}
+
+// Rebuilt returns p with its reference built anew from another series of the
+// same acquisition (another echo, say): mapped back along the path and sharpened,
+// as [EstimatePath] does with its own. data, nt and s are as there, est is the
+// estimate that p came from. The gains stay those of p. It fails only with the
+// error of ctx.
+func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
+	nv := g.voxels()
+	if len(data) != nv*nt || len(est.Volumes) != nt {
+		panic("realign: series, grid and estimate differ in size")
+	}
+	e := &pathEstimator{
+		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: max(1, workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }},
+		schedule:  s, est: est, shotOf: p.Shot, poses: p.Path.Poses,
+		shots: make([]slicetime.Shot, p.Shots), scale: make([]float64, nt*p.Shots),
+	}
+	e.weak = e.weakSlices(est.Volumes, -1)
+	e.region = dilate(est.Mask, g.N, regionRim)
+	// Outside the region, and where nothing reaches, the plain mean.
+	start := *est
+	start.Reference = make([]float32, nv)
+	for i := range start.Reference {
+		sum, count := 0.0, 0.0
+		for n := range nt {
+			if est.Volumes[n].State == Aligned {
+				sum += float64(data[n*nv+i])
+				count++
+			}
+		}
+		if count > 0 {
+			start.Reference[i] = float32(sum / count)
+		}
+	}
+	e.est = &start
+	e.setTemplate(start.Reference)
+	if err := e.rebuild(lastProjections); err != nil {
+		return nil, err
+	}
+	q := *p
+	q.Reference = e.image
+	return &q, nil
 }
