@@ -139,6 +139,23 @@ func (m *measures) betweenAligned(v []float64) []float64 {
 	return out
 }
 
+// raisedFactor is how many times dvars_raw the dvars_steady of a volume must be to be
+// pointed out: ours. Interpolation alone lowers it, so that above 1 already asks for a reason; the rest keeps
+// noise out (see TestRaised).
+const raisedFactor = 1.5
+
+// raised names the aligned volumes, after an aligned one, whose change grew a lot by
+// the correction: interpolation in time spreads a jerk over its neighbours.
+func (m *measures) raised() []int {
+	out := []int{}
+	for n := 1; n < len(m.states); n++ {
+		if m.states[n] == string(realign.Aligned) && m.states[n-1] == string(realign.Aligned) && m.dvarsSteady[n] > raisedFactor*m.dvarsRaw[n] {
+			out = append(out, n)
+		}
+	}
+	return out
+}
+
 // Figures are the numbers of a run that limits, the table of all runs and people look
 // at. They are read back from its quality file, so that a run that is up to date has them too.
 type Figures struct {
@@ -149,6 +166,7 @@ type Figures struct {
 	MaxShift                         float64 // mm, over aligned volumes
 	MeanDVARSRaw, MeanDVARSSteady    float64 // %
 	MedianTSNRRaw, MedianTSNRSteady  float64
+	Raised                           []int // aligned volumes whose DVARS the correction raised a lot
 }
 
 // Digits after the decimal point, in tables and figures.
@@ -198,6 +216,8 @@ func (m *measures) qualityFile(p *Plan) []byte {
 	series("rms_ball", m.rms, m.rms, digitsMM)
 	series("dvars_raw", m.dvarsRaw, m.withoutLost(m.dvarsRaw), digitsShare)
 	series("dvars_steady", m.dvarsSteady, m.withoutLost(m.dvarsSteady), digitsShare)
+	raised := m.raised()
+	figure("dvars_raised", member{"Value", len(raised)}, member{"Volumes", raised})
 	series("outside", m.outside, m.outside, digitsShare)
 	series("fit", m.fit, m.fit, digitsShare)
 	if m.path != nil && m.path.Used {
@@ -264,7 +284,14 @@ func parseFigures(data []byte) (*Figures, error) {
 		}
 	}
 	count := func(name string) int { return int(q[name].Value) }
+	var raised struct {
+		List struct{ Volumes []int } `json:"dvars_raised"`
+	}
+	if err := json.Unmarshal(data, &raised); err != nil {
+		return nil, err
+	}
 	return &Figures{
+		Raised:  raised.List.Volumes,
 		Volumes: count("volumes"), Aligned: count("volumes_aligned"), Doubtful: count("volumes_doubtful"), Lost: count("volumes_lost"),
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
 		MeanFDAligned: float64(q["mean_fd_aligned"].Value),

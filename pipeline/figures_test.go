@@ -3,10 +3,15 @@ package pipeline
 import (
 	"encoding/json"
 	"math"
+	"slices"
 	"strings"
 	"testing"
 
+	"github.com/google/go-cmp/cmp"
+	"github.com/google/go-cmp/cmp/cmpopts"
+
 	"evenkeel/dataset"
+	"evenkeel/quality"
 	"evenkeel/realign"
 	"evenkeel/slicetime"
 )
@@ -59,8 +64,10 @@ func TestFigures(t *testing.T) {
 	want := Figures{Volumes: 4, Aligned: 2, Doubtful: 1, Lost: 1, MeanFD: 3, MaxFD: 3, MeanRMS: 3,
 		MaxShift:     1, // of aligned volumes only: the doubtful one is at 3
 		MeanDVARSRaw: 1, MeanDVARSSteady: 0.5, MedianTSNRRaw: 100, MedianTSNRSteady: 120}
-	if *f != want {
-		t.Errorf("got %+v\nwant %+v", *f, want)
+	want.MeanFDAligned = math.NaN() // no aligned volume follows another
+	want.Raised = []int{}
+	if d := cmp.Diff(want, *f, cmpopts.EquateNaNs()); d != "" {
+		t.Error(d)
 	}
 	if use := m.counts(); use[2] || !use[1] {
 		t.Errorf("volumes that count: %v", use)
@@ -77,6 +84,20 @@ func TestFigures(t *testing.T) {
 	var d struct{ Matrices [][4][4]float64 }
 	if err := json.Unmarshal(poseDescription(p, po, po.est.Centre), &d); err != nil || d.Matrices[2][0][3] != 2 {
 		t.Errorf("the matrix of the lost volume: %v %v", d.Matrices, err)
+	}
+}
+
+// Differences between aligned volumes only; and those that the correction raised.
+func TestRaised(t *testing.T) {
+	m := &measures{states: strings.Fields("aligned aligned aligned doubtful aligned aligned lost aligned aligned aligned"),
+		fd:          []float64{math.NaN(), 1, 3, 50, 50, 5, math.NaN(), math.NaN(), 7, 9},
+		dvarsRaw:    []float64{math.NaN(), 2, 2, 2, 2, 2, 2, 2, 2, 2},
+		dvarsSteady: []float64{math.NaN(), 3, 3.01, 9, 9, 1, 9, 9, math.NaN(), 4}}
+	if got := m.raised(); !slices.Equal(got, []int{2, 9}) {
+		t.Errorf("raised %v", got)
+	}
+	if got := quality.Summarise(m.betweenAligned(m.fd)).Mean; got != 5 {
+		t.Errorf("mean FD between aligned volumes %g, want 5", got)
 	}
 }
 

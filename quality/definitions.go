@@ -88,6 +88,8 @@ var definitions = []Definition{
 		Description: fmt.Sprintf("Spike score of each volume and slice of the raw series. d is the mean over the head's voxels of the slice of the distance from the median of the four volumes nearest in time; the score is (d - median of d) / (1.4826 median absolute deviation of d), both over the volumes of the slice. In stationary noise it is near to standard normal. Undefined for slices with fewer than %d voxels of the head and for series of fewer than %d volumes.", MinSpikeVoxels, MinSpikeVolumes)},
 	{Name: "mean_fd_aligned", Unit: "mm", Source: power,
 		Description: "Mean of fd over the volumes that are aligned and follow an aligned one: what a doubtful pose says of itself is left out."},
+	{Name: "dvars_raised", Unit: "1", Source: own,
+		Description: "Number of aligned volumes after an aligned one whose dvars_steady is more than 1.5 times their dvars_raw, and which they are (from 0). Interpolation lowers DVARS; where it raises it, interpolation in time has mixed the neighbours of a jerk, and those volumes are best left out of an analysis."},
 	{Name: "max_shift", Unit: "mm", Source: own,
 		Description: "Length of the longest shift (shift_x, shift_y, shift_z) of any aligned volume."},
 	{Name: "volumes", Unit: "1", Source: own,

@@ -36,7 +36,7 @@ func (l *logger) startProgress(total float64) {
 	}
 	columns := func() int {
 		n, _, err := term.GetSize(int(f.Fd()))
-		if err != nil {
+		if err != nil || n <= 0 {
 			return 80
 		}
 		return n

@@ -100,7 +100,9 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 	if err != nil && !errors.Is(err, context.Canceled) {
 		s.log.error("failed", err.Error(), nil)
 	}
-	s.log.info("summary", summary(outcomes), nil)
+	if len(outcomes) > 0 || err == nil {
+		s.log.info("summary", summary(outcomes), nil)
+	}
 	return &exit{pipeline.ExitCode(err, outcomes, found.hidden())}
 }
 
@@ -127,7 +129,7 @@ func (s *session) observe(e pipeline.Event) {
 }
 
 // stageShares is roughly what part of a run's time each stage takes: measured on 64x64x36x200 on
-// two cores. A stage that is not named here takes what is left, shared evenly.
+// two cores.
 var stageShares = map[string]float64{"read": 0.05, "estimate": 0.70, "measure-raw": 0.03, "time": 0.05, "space": 0.10, "measure-steady": 0.01, "write": 0.06}
 
 // advance moves the bar when a run enters a stage, by the stages before it; with stage ""
@@ -137,6 +139,9 @@ func (s *session) advance(p *pipeline.Plan, stage string) {
 	if i := slices.Index(pipeline.Stages, stage); i >= 0 {
 		at = 0
 		for _, before := range pipeline.Stages[:i] {
+			if stage == "joint" && (before == "time" || before == "space") {
+				continue // it stands for both
+			}
 			at += stageShares[before]
 		}
 	}
@@ -175,6 +180,10 @@ func (s *session) ended(run string, o *pipeline.Outcome) {
 			s.log.error("failed", run+": "+o.Err.Error(), f)
 		}
 	}
+	if f := o.Figures; f != nil && len(f.Raised) > 0 {
+		s.log.warn("dvars-raised", fmt.Sprintf("%s: DVARS rose to more than 1.5 times in %s %s: interpolation in time mixes the neighbours of a jerk; leave these volumes out, or compare with another --order",
+			run, plural(len(f.Raised), "volume"), list(f.Raised, 12)), fields{"run": run, "volumes": f.Raised})
+	}
 	for _, b := range o.Outside {
 		s.log.error("outside-limit", run+": "+b.Words, fields{"run": run})
 	}
@@ -194,7 +203,7 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 		line := fmt.Sprintf("%-*s  %-11s", width, o.Plan.Run.Stem, o.State)
 		switch f := o.Figures; {
 		case f != nil:
-			line += fmt.Sprintf("  %d volumes, FD mean %s max %s mm, %d doubtful, %d lost", f.Volumes, millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
+			line += fmt.Sprintf("  %s, FD mean %s max %s mm, %d doubtful, %d lost", counted(f.Volumes, "volume"), millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
 			if len(o.Outside) > 0 {
 				line += ", outside a limit"
 			}
@@ -211,6 +220,27 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 	}
 	_, err := io.WriteString(w, b.String())
 	return err
+}
+
+// plural gives the word without its number.
+func plural(n int, what string) string {
+	if n != 1 {
+		what += "s"
+	}
+	return what
+}
+
+// list writes at most that many numbers.
+func list(v []int, most int) string {
+	var parts []string
+	for i, n := range v {
+		if i == most {
+			parts = append(parts, fmt.Sprintf("and %d more", len(v)-most))
+			break
+		}
+		parts = append(parts, strconv.Itoa(n))
+	}
+	return strings.Join(parts, ", ")
 }
 
 func millimetres(v float64) string {
