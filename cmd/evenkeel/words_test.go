@@ -1,0 +1,68 @@
+package main
+
+import (
+	"bytes"
+	"context"
+	"path/filepath"
+	"strings"
+	"testing"
+
+	"evenkeel/dataset"
+	"evenkeel/pipeline"
+)
+
+// ended gives what the log says of a run's end.
+func ended(o pipeline.Outcome) string {
+	var b bytes.Buffer
+	s := &session{log: &logger{w: &b}}
+	o.Plan = &pipeline.Plan{}
+	s.ended("sub-01", &o)
+	return b.String()
+}
+
+func TestRaisedDVARSIsSaid(t *testing.T) {
+	got := ended(pipeline.Outcome{State: pipeline.Done, Figures: &pipeline.Figures{Raised: []int{12, 14}}})
+	if !strings.Contains(got, "in volumes 12, 14: interpolation in time mixes the neighbours of a jerk") {
+		t.Error(got)
+	}
+	if got := ended(pipeline.Outcome{State: pipeline.Done, Figures: &pipeline.Figures{}}); strings.Contains(got, "DVARS") {
+		t.Error(got)
+	}
+	if got := list([]int{1, 2, 3, 4}, 2); got != "1, 2, and 2 more" {
+		t.Error(got)
+	}
+}
+
+// A run that was selected and not done has a row that says so; done again, it loses it.
+func TestInterruptedRunsHaveRows(t *testing.T) {
+	dir := crewDataset(t, func(*sailor) {})
+	ds, err := dataset.Open(dir)
+	if err != nil {
+		t.Fatal(err)
+	}
+	plans, err := pipeline.Survey(context.Background(), ds, pipeline.Request{Settings: pipeline.DefaultSettings()})
+	if err != nil {
+		t.Fatal(err)
+	}
+	out := filepath.Join(t.TempDir(), "out")
+	ctx, cancel := context.WithCancel(context.Background())
+	outcomes, err := pipeline.Steady(ctx, ds, plans, pipeline.Job{Out: out, Observe: func(e pipeline.Event) {
+		if e.Stage == "measure-raw" {
+			cancel()
+		}
+	}})
+	cancel()
+	if got := pipeline.ExitCode(err, outcomes, false); got != pipeline.ExitInterrupt {
+		t.Fatalf("exit %d", got)
+	}
+	table := func() string { return string(mustRead(t, filepath.Join(out, "runs.tsv"))) }
+	if got := table(); !strings.Contains(got, "\n"+theStem+"\t"+theRun+"_bold.nii\tinterrupted\tn/a\tn/a\t") {
+		t.Error(got)
+	}
+	if code, stdout, stderr := run("steady", dir, out, "--quiet"); code != 0 {
+		t.Fatal(dump(code, stdout, stderr))
+	}
+	if got := table(); strings.Contains(got, "interrupted") || !strings.Contains(got, "\tdone\t") {
+		t.Error(got)
+	}
+}
