@@ -2,10 +2,12 @@ package realign_test
 
 import (
 	"context"
+	"slices"
 	"testing"
 
 	"evenkeel/phantom"
 	"evenkeel/realign"
+	"evenkeel/slicetime"
 )
 
 // benchRun is a walking head, 64x64x36 at 3.3x3.3x3.6 mm, tSNR 100.
@@ -63,4 +65,29 @@ func BenchmarkResample(b *testing.B) {
 			}
 		})
 	}
+}
+
+func BenchmarkPath(b *testing.B) {
+	const nt = 20
+	g, data := benchRun(b, nt)
+	est := estimate(b, g, data, realign.Options{SliceAxis: 2, Workers: 1})
+	s := slicetime.Schedule{Times: phantom.Interleaved(36, 2), Axis: 2, TR: 2}
+	var path *realign.PathEstimate
+	b.Run("estimate", func(b *testing.B) {
+		for b.Loop() {
+			var err error
+			if path, err = realign.EstimatePath(context.Background(), g, data, nt, s, est, 1); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.ReportMetric(float64(b.Elapsed().Milliseconds())/float64(b.N*nt), "ms/volume")
+	})
+	b.Run("joint", func(b *testing.B) {
+		for b.Loop() {
+			if err := path.Joint(context.Background(), g, slices.Clone(data), nt, s, true, s.Middle(), slicetime.Options{}, make([]bool, nt), 5, 1); err != nil {
+				b.Fatal(err)
+			}
+		}
+		b.ReportMetric(float64(b.Elapsed().Milliseconds())/float64(b.N*nt), "ms/volume")
+	})
 }

@@ -48,7 +48,7 @@ type PathEstimate struct {
 
 // Constants of the path, each with its reason.
 const (
-	pathPasses = 3 // passes over the data, each with a template of its own: further ones changed poses by less than the noise
+	pathPasses = 2 // passes over the data, each with a template of its own: a third changed poses by less than the noise
 	// pathIterations of one pass, at most: the first starts 0.1 to 0.5 mm off,
 	// where the slope of the template changes by a few percent.
 	pathFirstIterations = 4
