@@ -13,7 +13,7 @@ var Table = []Kind{
 	{ID: "volume-spacing", Level: Refuse, TimingOnly: true,
 		When: "VolumeTiming with unequal intervals, where no kernel for them is offered"},
 	{ID: "timing-conflict", Level: Refuse,
-		When: "RepetitionTime together with VolumeTiming, or VolumeTiming not increasing or of the wrong length, or without SliceTiming and FrameAcquisitionDuration"},
+		When: "RepetitionTime together with VolumeTiming, or VolumeTiming not increasing or of the wrong length, or without SliceTiming and FrameAcquisitionDuration; or --time-origin beyond the run's repetition time"},
 	{ID: "slice-times-missing", Level: Refuse, TimingOnly: true,
 		When: "2-D acquisition without SliceTiming; never guessed"},
 	{ID: "slice-times-count", Level: Refuse,

@@ -155,8 +155,7 @@ type Request struct {
 // run, in the order of the runs' file names, with the selected shard only.
 //
 // It fails with [*NothingSelected] when nothing matches, with [*UsageError] when
-// a setting cannot apply to a run that could otherwise be processed, and with
-// the context's error. Faults of runs are in their plans.
+// settings contradict each other, and with the context's error. Faults of runs are in their plans.
 func Survey(ctx context.Context, ds *dataset.Dataset, req Request) ([]*Plan, error) {
 	if err := req.Settings.Check(); err != nil {
 		return nil, err
@@ -404,9 +403,7 @@ func settle(ds *dataset.Dataset, s *source, echoes []*source, req Request) (*Pla
 		nx, ny, nz, nt := p.Header.Size()
 		p.Grid = realign.Grid{N: [3]int{nx, ny, nz}, Affine: p.Header.Affine()}
 		p.Volumes = max(0, nt-set.Skip)
-		if err := p.settleTiming(nt, found); err != nil {
-			return nil, err
-		}
+		found = append(found, p.settleTiming(nt)...)
 		found = append(found, p.fewVolumes(nt)...)
 		found = append(found, p.findReference()...)
 		if need := p.Memory(1); req.Memory > 0 && need > req.Memory {
@@ -481,8 +478,9 @@ func (p *Plan) holdAgainstPose(pose *source) []fault.Fault {
 	return out
 }
 
-// settleTiming fills in the schedule and the time axis of the output.
-func (p *Plan) settleTiming(nt int, found []fault.Fault) error {
+// settleTiming fills in the schedule and the time axis of the output. It raises
+// timing-conflict for an instant asked for that lies in no volume of this run; others may have longer ones.
+func (p *Plan) settleTiming(nt int) (faults []fault.Fault) {
 	a, set := p.Acq, p.Settings
 	t := &p.Timing
 	t.TR = a.RepetitionTime
@@ -518,12 +516,14 @@ func (p *Plan) settleTiming(nt int, found []fault.Fault) error {
 		t.Origin = 0
 	default:
 		t.Origin = set.TimeOrigin.Seconds
-		if a.RepetitionTime > 0 && t.Origin > a.RepetitionTime && len(set.refusing(found)) == 0 {
-			return &UsageError{Where: "--time-origin", Message: fmt.Sprintf("%g s lies outside the volumes of %s, whose repetition time is %g s", t.Origin, p.Run.File, a.RepetitionTime)}
+		if a.RepetitionTime > 0 && t.Origin > a.RepetitionTime {
+			faults = append(faults, fault.New("timing-conflict", p.Run.File, "--time-origin", fmt.Sprintf("%g s", t.Origin),
+				fmt.Sprintf("an instant within a volume, from 0 to its repetition time of %g s", a.RepetitionTime),
+				"give --time-origin middle or an earlier instant, or leave this run out"))
 		}
 	}
 	if p.Volumes == 0 {
-		return nil
+		return faults
 	}
 	t.StartTime = onset(set.Skip) + t.Origin
 	// The instant a row of the pose table stands for.
@@ -541,11 +541,7 @@ func (p *Plan) settleTiming(nt int, found []fault.Fault) error {
 			t.Onsets[n] = onset(set.Skip + n)
 		}
 	}
-	return nil
-}
-
-func (s Settings) refusing(faults []fault.Fault) []fault.Fault {
-	return slices.DeleteFunc(s.weigh(faults), func(f fault.Fault) bool { return f.Level != fault.Refuse })
+	return faults
 }
 
 // fewVolumes raises volumes-few for what was asked of the run.

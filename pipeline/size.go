@@ -19,6 +19,10 @@ func Bytes(n int64) string { return units.BytesSize(float64(n)) }
 // ParseBytes reads a size such as 8GiB, 8GB, 512m; units are powers of 1024, as
 // is usual for memory. It returns a [*UsageError].
 func ParseBytes(option, v string) (int64, error) {
+	// "8Gi", as in the units of containers, is 8GiB.
+	if s := strings.ToLower(v); strings.HasSuffix(s, "i") && len(s) > 1 && strings.ContainsRune("kmgtp", rune(s[len(s)-2])) {
+		v += "B"
+	}
 	n, err := units.RAMInBytes(v)
 	if err != nil || n <= 0 {
 		return 0, &UsageError{Where: option, Message: "found " + strconv.Quote(v) + ", expected a size such as 8GiB"}

@@ -16,6 +16,7 @@ import (
 
 type commandLine struct {
 	args        []string // for the option library
+	command     string   // its name, "" if there is none
 	json, quiet bool     // known before the library has looked, for errors about the line itself
 }
 
@@ -56,6 +57,9 @@ func normalise(app *cli.App, args []string) (commandLine, error) {
 		if t == "--" {
 			rest = append(rest, tokens[i+1:]...)
 			break
+		}
+		if (t == "--version" || t == "-version") && command == nil {
+			t = "version"
 		}
 		if t == "-h" || t == "--help" || t == "-help" {
 			help = true
@@ -98,6 +102,7 @@ func normalise(app *cli.App, args []string) (commandLine, error) {
 			if command = app.Command(t); command == nil {
 				return line, usage(t, "is no command%s; one of %s", pipeline.DidYouMean(t, commandNames(app)), strings.Join(commandNames(app), ", "))
 			}
+			line.command = command.Name
 			continue
 		}
 		rest = append(rest, t)

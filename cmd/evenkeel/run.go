@@ -22,6 +22,7 @@ type session struct {
 	stdout  *output
 	stderr  io.Writer
 	log     *logger
+	command string                     // its name, "" if the line has none
 	reached map[*pipeline.Plan]float64 // how far each run is, from 0 to 1
 }
 
@@ -57,7 +58,7 @@ func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
 	}()
 	app := s.app()
 	line, err := normalise(app, args)
-	s.log.json, s.log.quiet = line.json, line.quiet
+	s.log.json, s.log.quiet, s.command = line.json, line.quiet, line.command
 	if err != nil {
 		return s.fail(err)
 	}
@@ -88,7 +89,11 @@ func (s *session) fail(err error) int {
 	switch {
 	case errors.As(err, &usage):
 		s.log.error("usage", err.Error(), nil)
-		s.log.hint("see evenkeel help")
+		help := "evenkeel help"
+		if s.command != "" {
+			help = "evenkeel " + s.command + " --help"
+		}
+		s.log.hint("see " + help)
 	case errors.As(err, &bug):
 		s.log.bug(bug)
 	case code == pipeline.ExitInterrupt:
