@@ -135,8 +135,8 @@ func (t tree) follow(rel, expected string) (real string, f *flaw) {
 	case err == nil && t.owns(real):
 		return real, nil
 	case err == nil:
-		return "", &flaw{outside: true, found: "a link that leads out of the dataset and is not followed", expected: expected,
-			remedy: "put a copy into the dataset, or name the dataset it belongs to"}
+		return "", &flaw{outside: true, found: "a link to something outside the dataset, which is not followed, whether or not a file is there", expected: expected,
+			remedy: "replace the link by a copy, or give the dataset that the file belongs to"}
 	case !errors.Is(err, fs.ErrNotExist):
 		// A circle of links, or a folder on the way that may not be entered.
 		return "", &flaw{found: "a link that cannot be followed: " + reason(err), expected: expected, remedy: "repair the link"}

@@ -255,7 +255,7 @@ func TestAnnexLinks(t *testing.T) {
 		for task, found := range map[string]string{
 			"there": "", "plain": "",
 			"unfetched": "annexed content that has not been fetched", "pointer": "pointer to content", "circle": "cannot be followed", "folder": "a folder",
-			"pipe": "", "out": "leads out of the dataset", "device": "leads out of the dataset", "nojson": "annexed content that has not been fetched",
+			"pipe": "", "out": "a link to something outside the dataset", "device": "a link to something outside the dataset", "nojson": "annexed content that has not been fetched",
 		} {
 			r := run(t, d, "sub-01_task-"+task)
 			if task == "pipe" {

@@ -57,7 +57,7 @@ var Table = []Kind{
 	{ID: "image-values", Level: Refuse,
 		When: "malformed, truncated or unsupported image, or values that are not finite, with what exactly"},
 	{ID: "image-absent", Level: Refuse,
-		When: "a dangling link: an annexed file that has not been fetched"},
+		When: "a link to a file that is not there (an annexed file that has not been fetched) or that lies outside the dataset"},
 	{ID: "image-twice", Level: Refuse,
 		When: "both .nii and .nii.gz of one run"},
 	{ID: "input-changed", Level: Refuse,

@@ -3,7 +3,10 @@ package pipeline
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strings"
+
+	"evenkeel/fault"
 )
 
 // Direction is the phase-encode axis of a run, in the words of its array and of
@@ -60,6 +63,10 @@ func (p *Plan) ScheduleWords() string {
 		return ""
 	case p.Acq.ThreeDimensional:
 		return "three-dimensional"
+	case len(p.Schedule.Times) == 0 && slices.ContainsFunc(p.Faults, func(f fault.Fault) bool {
+		return f.Level == fault.Refuse && strings.HasPrefix(f.Field, "SliceTiming") && f.ID != "slice-times-missing"
+	}):
+		return "unusable slice times"
 	case len(p.Schedule.Times) == 0:
 		return "no slice times"
 	case len(p.Schedule.Times) != p.Grid.N[p.Schedule.Axis]:
@@ -82,7 +89,7 @@ func (p *Plan) Size() string {
 	return fmt.Sprintf("%dx%dx%dx%d", nx, ny, nz, nt)
 }
 
-// Short says in one or two words what steady does: "fourier+volume".
+// Short says in one or two words what steady does: "fourier+volume", "motion only".
 func (p *Plan) Short() string {
 	if !p.Runs() {
 		return "refused"
@@ -90,6 +97,9 @@ func (p *Plan) Short() string {
 	var parts []string
 	if p.Timing.Temporal {
 		parts = append(parts, p.Settings.Time)
+	}
+	if p.Settings.Motion != "none" && len(parts) == 0 {
+		return "motion only"
 	}
 	if p.Settings.Motion != "none" {
 		parts = append(parts, p.Settings.Motion)

@@ -377,9 +377,6 @@ func settle(ds *dataset.Dataset, s *source, echoes []*source, req Request) (*Pla
 		Inputs: slices.Clone(s.inputs),
 	}
 	found := slices.Clone(s.faults)
-	if ds.Derivative {
-		found = append([]fault.Fault{notRaw("dataset_description.json")}, found...)
-	}
 	pose := s
 	if set.Motion != "none" && len(echoes) > 1 {
 		pose = shortest(echoes)
@@ -417,6 +414,9 @@ func settle(ds *dataset.Dataset, s *source, echoes []*source, req Request) (*Pla
 		found = append(found, *p.Run.EventsFault)
 	case p.Run.Events != "":
 		found = append(found, p.readEvents()...)
+	}
+	if ds.Derivative {
+		found = []fault.Fault{notRaw("dataset_description.json")}
 	}
 	p.Faults = set.weigh(found)
 	p.Outputs = outputsOf(p)

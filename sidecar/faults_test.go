@@ -48,7 +48,7 @@ var faultCases = []struct {
 
 	// VolumeTiming
 	{"unequal intervals", with([2]string{"RepetitionTime", ""}, [2]string{"VolumeTiming", "[0, 2, 4, 6, 8.5, 10.5]"}), nil, "volume-spacing", "VolumeTiming",
-		[]string{"intervals from 2 to 2.5 s (the longest before volume 5 of 6)", "without temporal interpolation"}},
+		[]string{"intervals from 2 to 2.5 s (the longest before volume 5 of 6)", "--time none"}},
 	{"a slow drift of intervals", with([2]string{"RepetitionTime", ""}, [2]string{"VolumeTiming", "[0, 2.0000, 4.0009, 6.0027, 8.0054, 10.0090]"}), nil, "volume-spacing", "VolumeTiming", nil},
 	{"both", with([2]string{"VolumeTiming", "[0, 2, 4, 6, 8, 10]"}), nil, "timing-conflict", "VolumeTiming", []string{"VolumeTiming (" + leafName + ") together with RepetitionTime"}},
 	{"not increasing", with([2]string{"RepetitionTime", ""}, [2]string{"VolumeTiming", "[0, 2, 2.0, 6, 8, 10]"}), nil, "timing-conflict", "VolumeTiming", []string{"onset 3 is 2.0, after 2"}},

@@ -52,7 +52,7 @@ func (r *reading) sliceAxis() {
 	if dim := r.geo.SliceDim; !r.acq.ThreeDimensional && dim >= 1 && dim <= 3 && header != axis {
 		r.refuse(key, "slice-axis-conflict",
 			fmt.Sprintf("%q, while dim_info of %s has slices along %s", word, r.geo.File, axisNames[header]),
-			"one slice axis", "correct the one that is wrong; to go on with the sidecar's axis, accept slice-axis-conflict")
+			"one slice axis", "correct the one that is wrong; to go on with the sidecar's axis, give --accept slice-axis-conflict")
 	}
 }
 
@@ -76,7 +76,7 @@ func (r *reading) sliceTimes() {
 		r.multibandValue()
 		if !r.timesWanted {
 			r.refuse(key, "slice-times-missing", "a 2-D series without SliceTiming"+r.misspelt(key), "the time of every slice",
-				"add SliceTiming from the scanner's own files, or process the run without temporal interpolation; it is never guessed from an order")
+				"add SliceTiming from the scanner's own files, or give --time none; it is never guessed from an order")
 		}
 		return
 	}

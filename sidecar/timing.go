@@ -130,9 +130,9 @@ func (r *reading) holdAgainstHeader(key, found string, tr float64) {
 	if !(h > 0) || !finite(h) || math.Abs(tr-h) <= sameTR+rounding {
 		return
 	}
-	remedy := "correct the one that is wrong; to go on with the sidecar's value, accept tr-mismatch"
+	remedy := "correct the one that is wrong; to go on with the sidecar's value, give --accept tr-mismatch"
 	if math.Abs(h/tr/1000-1) <= thousandfold {
-		remedy = "the header looks like milliseconds marked as seconds: correct its xyzt_units, or accept tr-mismatch to go on with the sidecar's value"
+		remedy = "the header looks like milliseconds marked as seconds: correct its xyzt_units, or give --accept tr-mismatch to go on with the sidecar's value"
 	}
 	r.refuse(key, "tr-mismatch", fmt.Sprintf("%s, while pixdim[4] of %s is %s s", found, r.geo.File, show(h)),
 		fmt.Sprintf("the same within %s s", show(sameTR)), remedy)
@@ -213,7 +213,7 @@ func (r *reading) volumeTiming() {
 			r.refuse(key, "volume-spacing",
 				fmt.Sprintf("intervals from %s to %s s (the longest before volume %d of %d)", show(shortest), show(longest), longestAt+1, len(onsets)),
 				fmt.Sprintf("onsets evenly spaced within %s s", show(equalOnsets)),
-				"process the run without temporal interpolation: no kernel for unequal spacing is offered")
+				"give --time none: no kernel for unequal spacing is offered")
 		}
 	}
 	r.use(key)

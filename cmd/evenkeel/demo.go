@@ -47,7 +47,8 @@ func (s *session) demoCommand() *cli.Command {
 }
 
 func (s *session) demo(ctx context.Context, dir string) error {
-	if dir == "" {
+	temporary := dir == ""
+	if temporary {
 		var err error
 		if dir, err = os.MkdirTemp("", "evenkeel-demo-"); err != nil {
 			return &pipeline.CreateError{Path: os.TempDir(), Err: err}
@@ -105,6 +106,9 @@ func (s *session) demo(ctx context.Context, dir string) error {
 		return &pipeline.IOError{Path: out, Err: err}
 	}
 	s.say("\nEverything is in %s\n", dir)
+	if temporary {
+		s.say("Nothing else needs that folder; remove it when you have seen enough.\n")
+	}
 	return nil
 }
 

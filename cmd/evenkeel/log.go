@@ -75,7 +75,17 @@ func (l *logger) fault(run string, f fault.Fault) {
 	if f.Level == fault.Refuse {
 		say = l.error
 	}
-	say("fault", f.Error(), fields{"run": run, "fault": f})
+	text := f.Error()
+	if accepted(f) {
+		text = "accepted: " + text
+	}
+	say("fault", text, fields{"run": run, "fault": f})
+}
+
+// accepted tells whether a fault would refuse its run, had the user not named it with --accept.
+func accepted(f fault.Fault) bool {
+	k, _ := fault.Lookup(f.ID)
+	return k.Level == fault.Refuse && f.Level == fault.Warn
 }
 
 // bug reports a mistake of ours in a plain sentence. The stack goes with it only in

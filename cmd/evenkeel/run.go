@@ -245,7 +245,7 @@ func commandNames(app *cli.App) []string {
 func globalFlags() []cli.Flag {
 	return []cli.Flag{
 		&cli.StringFlag{Name: "log", Usage: "log on standard error as `text|json`, JSON being one object a line", Value: "text"},
-		&cli.BoolFlag{Name: "quiet", Usage: "say nothing but results and errors"},
+		&cli.BoolFlag{Name: "quiet", Usage: "say nothing but results and errors: warnings are hidden too"},
 	}
 }
 

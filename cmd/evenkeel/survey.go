@@ -76,6 +76,9 @@ func (s *session) survey(c *cli.Context, root string, req pipeline.Request) (*su
 		return nil, err
 	}
 	f := &surveyed{ds: ds, root: root, leftOut: ds.SelectLeftOut(req.Filter), notices: ds.SelectNotices(req.Filter)}
+	if ds.Derivative {
+		f.notices = nil // its own files are no slips of a raw dataset's
+	}
 	for _, n := range f.notices {
 		s.log.warn("notice", n.String(), fields{"notice": n})
 	}
@@ -153,7 +156,11 @@ func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing) error {
 			fmt.Fprintf(&b, "  %v\n", p.Err)
 		}
 		for _, x := range p.Faults {
-			fmt.Fprintf(&b, "  %s (%s)\n", x.Error(), x.Level)
+			level := string(x.Level)
+			if accepted(x) {
+				level = "accepted"
+			}
+			fmt.Fprintf(&b, "  %s (%s)\n", x.Error(), level)
 		}
 	}
 	for _, x := range f.leftOut {
