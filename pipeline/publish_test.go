@@ -5,15 +5,19 @@ import (
 	"crypto/sha256"
 	"encoding/hex"
 	"errors"
+	"fmt"
 	"io"
 	"io/fs"
 	"os"
 	"path/filepath"
+	"strconv"
 	"strings"
 	"syscall"
 	"testing"
 
 	"evenkeel/dataset"
+	"evenkeel/provenance"
+	"evenkeel/slicetime"
 )
 
 func listing(t *testing.T, dir string) (out []string) {
@@ -177,6 +181,35 @@ func TestPanicBecomesAnOutcome(t *testing.T) {
 	}
 	if got := listing(t, filepath.Join(w.out, "sub-01/func")); len(got) > 0 {
 		t.Errorf("left: %v", got)
+	}
+}
+
+// What is read is digested, and reading ends with the context: the reader passes the tap's error on.
+func TestReadingEndsWithTheContext(t *testing.T) {
+	ctx, cancel := context.WithCancel(context.Background())
+	w := tap{ctx, &provenance.Digester{}}
+	if n, err := w.Write([]byte("abc")); n != 3 || err != nil || w.d.Bytes() != 3 {
+		t.Error(n, err)
+	}
+	cancel()
+	if n, err := w.Write([]byte("abc")); n != 0 || !errors.Is(err, context.Canceled) || w.d.Bytes() != 3 {
+		t.Error(n, err)
+	}
+	err := fmt.Errorf("nifti: reading x: %w", context.Canceled)
+	if o := ended(&Plan{}, nil, &IOError{Path: "x", Err: err}); o.State != Interrupted {
+		t.Errorf("%+v", o)
+	}
+}
+
+// Arguments that do not fit are ours to prevent.
+func TestArgumentErrorIsABug(t *testing.T) {
+	err := (slicetime.Options{Kernel: slicetime.Sinc, Reach: slicetime.MaxReach + 1}).Check()
+	if err == nil || codeOf(err) != ExitBug {
+		t.Errorf("%v: %d", err, codeOf(err))
+	}
+	set := DefaultSettings()
+	if set.Set("sinc_reach", strconv.Itoa(slicetime.MaxReach)) != nil || set.Set("sinc_reach", strconv.Itoa(slicetime.MaxReach+1)) == nil {
+		t.Error("the option's limit is not the kernel's")
 	}
 }
 

@@ -65,13 +65,15 @@ func TestEchoesOnOtherGrids(t *testing.T) {
 // When only another echo is written, the series that the pose comes from is given back
 // before that echo is read: the plan allows for one series.
 func TestOneSeriesAtATime(t *testing.T) {
-	const volumes = 600
+	const volumes = 200
 	dir := echoes(t, func(e int, s *sailor) {
 		s.header.Dim[4] = volumes
 		s.data = slices.Repeat(s.data, volumes/crewVolumes)
 	})
 	series := 4 * volumes * crewSize[0] * crewSize[1] * crewSize[2]
 	set := pipeline.DefaultSettings()
+	set.Motion, set.Order = "volume", "time-first" // matched once, one pose a volume: quicker
+	set.Reference = pipeline.Standard{Word: "first"}
 	ds, plans := plansOf(t, dir, dataset.Filter{"echo": {"2"}}, set)
 	held := func() int {
 		var m runtime.MemStats
@@ -99,7 +101,7 @@ func TestPanicInOneEcho(t *testing.T) {
 	ds, plans := plansOf(t, dir, nil, pipeline.DefaultSettings())
 	out := filepath.Join(t.TempDir(), "out")
 	outcomes, err := pipeline.Steady(context.Background(), ds, plans, pipeline.Job{Out: out, Observe: func(e pipeline.Event) {
-		if e.Stage == "space" && e.Plan == plans[1] {
+		if e.Stage == "measure-steady" && e.Plan == plans[1] {
 			panic("a hole below the waterline")
 		}
 	}})

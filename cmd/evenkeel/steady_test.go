@@ -15,9 +15,12 @@ import (
 	"testing"
 	"time"
 
+	"evenkeel/fault"
 	"evenkeel/nifti"
 	"evenkeel/phantom"
 	"evenkeel/quality"
+	"evenkeel/sidecar"
+	"evenkeel/slicetime"
 )
 
 // process runs steady on a dataset and wants exit 0.
@@ -302,6 +305,130 @@ func TestSBRef(t *testing.T) {
 	}
 	if code, stdout, stderr := run("survey", dir, "--reference", "sbref"); code != 65 || !strings.Contains(stdout, "reference-missing") {
 		t.Error(dump(code, stdout, stderr))
+	}
+}
+
+// A reference of several volumes is refused before anything is started.
+func TestSBRefOfSeveralVolumes(t *testing.T) {
+	dir := crewDataset(t, func(*sailor) {})
+	if err := os.WriteFile(filepath.Join(dir, theRun+"_sbref.nii"), newSailor().volumes(2).image(), 0o644); err != nil {
+		t.Fatal(err)
+	}
+	if code, stdout, stderr := run("survey", dir, "--reference", "sbref"); code != 65 || !strings.Contains(stdout, "image-size: "+theRun+"_sbref.nii: dim[4]: found 2 volumes, expected one") {
+		t.Error(dump(code, stdout, stderr))
+	}
+}
+
+// The longest reach that the options take is one that the kernel has.
+func TestLongestReach(t *testing.T) {
+	process(t, crewDataset(t, func(*sailor) {}), "--time", "sinc", "--sinc-reach", strconv.Itoa(slicetime.MaxReach))
+}
+
+// Onsets stay complete in the output: with FrameAcquisitionDuration where the run had it, else
+// with the slice times; what we write, we can read (BIDS, "Timing parameters").
+func TestOnsetsStayComplete(t *testing.T) {
+	for name, change := range map[string]func(*sailor){
+		"duration":    func(s *sailor) { s.sidecar["FrameAcquisitionDuration"] = 1.9; delete(s.sidecar, "SliceTiming") },
+		"both":        func(s *sailor) { s.sidecar["FrameAcquisitionDuration"] = 1.9 },
+		"slice times": func(*sailor) {},
+		"one instant": func(s *sailor) { s.sidecar["SliceTiming"] = make([]float64, crewSize[2]) },
+		"three dimensions": func(s *sailor) {
+			s.sidecar["FrameAcquisitionDuration"] = 1.9
+			s.sidecar["MRAcquisitionType"] = "3D"
+			delete(s.sidecar, "SliceTiming")
+		},
+	} {
+		dir := crewDataset(t, func(s *sailor) {
+			delete(s.sidecar, "RepetitionTime")
+			s.sidecar["VolumeTiming"] = []float64{0, 2, 5, 7, 9, 11, 14, 16}
+			s.header.Pixdim[4] = 0
+			change(s)
+		})
+		out := process(t, dir, "--time", "none")
+		side := theRun + "_desc-steady_bold.json"
+		doc, faults := sidecar.Merge([]sidecar.Source{{Name: side, Data: mustRead(t, filepath.Join(out, side))}})
+		g := sidecar.Geometry{File: theRun + "_desc-steady_bold.nii.gz", Size: [4]int{crewSize[0], crewSize[1], crewSize[2], crewVolumes}}
+		acq, more := doc.Acquisition(g)
+		for _, f := range append(faults, more...) {
+			if f.ID == "timing-conflict" || f.Level == fault.Refuse && f.ID != "volume-spacing" && f.ID != "slice-times-missing" {
+				t.Errorf("%s: %s", name, f.Error())
+			}
+		}
+		if had := name != "slice times" && name != "one instant"; had != (acq.FrameDuration == 1.9) {
+			t.Errorf("%s: duration %g", name, acq.FrameDuration)
+		}
+		if first := strings.Split(string(mustRead(t, filepath.Join(out, theRun+"_desc-steady_pose.tsv"))), "\n")[1]; name == "three dimensions" && !strings.HasPrefix(first, "0.950000\t") {
+			t.Errorf("%s: the first row is %q, not at the middle of 1.9 s", name, first)
+		}
+	}
+}
+
+// Where nothing is moved in time, the rows of the pose table stand at the middle of each volume,
+// whatever --time says.
+func TestRowsOfThreeDimensionalRuns(t *testing.T) {
+	dir := crewDataset(t, func(s *sailor) {
+		s.sidecar["MRAcquisitionType"] = "3D"
+		s.sidecar["DelayTime"] = 0.5
+		delete(s.sidecar, "SliceTiming")
+	})
+	for _, kernel := range []string{"fourier", "none"} {
+		table := string(mustRead(t, filepath.Join(process(t, dir, "--time", kernel), theRun+"_desc-steady_pose.tsv")))
+		if !strings.Contains(table, "\n0.750000\t") || !strings.Contains(table, "\n2.750000\t") { // (2 - 0.5) / 2
+			t.Errorf("--time %s: %s", kernel, table)
+		}
+	}
+}
+
+// runs.json describes every column of runs.tsv, and nothing else.
+func TestRunsAreDescribed(t *testing.T) {
+	out := process(t, crewDataset(t, func(*sailor) {}))
+	head, _, _ := strings.Cut(string(mustRead(t, filepath.Join(out, "runs.tsv"))), "\n")
+	var described map[string]struct {
+		Description, Units string
+		Levels             map[string]string
+	}
+	if err := json.Unmarshal(mustRead(t, filepath.Join(out, "runs.json")), &described); err != nil {
+		t.Fatal(err)
+	}
+	columns := strings.Split(head, "\t")
+	for _, c := range columns {
+		if d := described[c]; d.Description == "" || d.Units == "" {
+			t.Errorf("column %s: %+v", c, d)
+		}
+	}
+	if len(described) != len(columns) || described["mean_fd"].Units != "mm" || described["state"].Levels["refused"] == "" {
+		t.Errorf("%d descriptions for %d columns: %+v", len(described), len(columns), described)
+	}
+}
+
+// The header's slice fields are told where the sidecar gives no times, and never used.
+func TestHeaderScheduleIsTold(t *testing.T) {
+	for _, c := range []struct {
+		change func(*sailor)
+		words  string
+	}{
+		{func(*sailor) {}, "the header's slice_code 3 would mean: interleaved ascending, odd slices first (1st, 3rd, 5th, ...), 16 shots, 0.125 s apart, no pause between volumes (not used"},
+		{func(s *sailor) {
+			s.header.XYZTUnits = 2 | 16
+			s.header.Pixdim[4] *= 1000
+			s.header.SliceDuration *= 1000
+		}, "16 shots, 0.125 s apart"},
+		{func(s *sailor) { s.header.SliceCode = 0 }, ""},
+	} {
+		dir := crewDataset(t, func(s *sailor) { delete(s.sidecar, "SliceTiming"); c.change(s) })
+		code, stdout, stderr := run("survey", dir)
+		if code != 65 || !strings.Contains(stdout, "slice-times-missing: ") || !strings.Contains(stdout, c.words) || (c.words == "") == strings.Contains(stdout, "slice_code") {
+			t.Error(dump(code, stdout, stderr))
+		}
+	}
+}
+
+// Sizes of voxels are printed as the header holds them: in single precision.
+func TestSingle(t *testing.T) {
+	for v, want := range map[float64]float64{3.3750000000016875: 3.375, 3: 3, 2.0999999046325684: 2.1} {
+		if got := single(v); got != want {
+			t.Errorf("%v: %v, want %v", v, got, want)
+		}
 	}
 }
 
