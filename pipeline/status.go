@@ -40,7 +40,7 @@ var ExitCodes = []struct {
 	{ExitSome, "some runs were refused or failed; all others are complete"},
 	{ExitOutside, "everything is done, but a run is outside a limit given, or audit found a difference"},
 	{ExitUsage, "the command line or settings file is wrong; nothing was started"},
-	{ExitData, "no selected run could be processed: every one was refused for its data"},
+	{ExitData, "no selected run could be processed: every one was refused, for its data or because it needs more than --memory"},
 	{ExitNoInput, "the dataset is missing or unreadable, or nothing in it matches the selection"},
 	{ExitBug, "a bug: please report"},
 	{ExitNoCreate, "the output cannot be created"},

@@ -39,7 +39,7 @@ const (
 // pose table, as they stand there, then the figures of a whole run.
 var definitions = []Definition{
 	{Name: "time", Unit: "s", Source: own,
-		Description: "The instant the row holds for, counted from the start of the first volume of the raw file."},
+		Description: "The instant the row holds for, counted from the start of the first volume of the raw file: the one that the volume's slices were moved to or, where none was moved, the one halfway between its first and its last slice (of a three-dimensional acquisition, its middle)."},
 	{Name: "shift_x", Unit: "mm", Source: own,
 		Description: "Shift of the head along the world's x axis (to the right): x_volume = R (x_reference - c) + c + shift, c being RotationCentre."},
 	{Name: "shift_y", Unit: "mm", Source: own,
@@ -57,7 +57,7 @@ var definitions = []Definition{
 	{Name: "rms_ball", Unit: "mm", Source: jenkinson,
 		Description: fmt.Sprintf("Root mean square displacement against the volume before, over a solid ball of %d mm about RotationCentre. Undefined where fd is.", BallRadiusMM)},
 	{Name: "dvars_raw", Unit: "%", Source: smyser,
-		Description: "Root mean square over the head of the change since the volume before, in the raw series, in percent of the mean over head and volumes. Undefined in the first volume."},
+		Description: "Root mean square over the head of the change since the volume before, in the raw series, in percent of the mean over head and volumes. Undefined in the first volume. A lost volume is left out of that mean, and the differences that it has a part in are left out of Mean, Median and Max."},
 	{Name: "dvars_steady", Unit: "%", Source: smyser,
 		Description: "As dvars_raw, in the corrected series."},
 	{Name: "outside", Unit: "1", Source: own,

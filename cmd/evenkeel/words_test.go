@@ -3,7 +3,10 @@ package main
 import (
 	"bytes"
 	"context"
+	"fmt"
 	"path/filepath"
+	"regexp"
+	"slices"
 	"strings"
 	"testing"
 
@@ -64,5 +67,23 @@ func TestInterruptedRunsHaveRows(t *testing.T) {
 	}
 	if got := table(); strings.Contains(got, "interrupted") || !strings.Contains(got, "\tdone\t") {
 		t.Error(got)
+	}
+}
+
+// README explains every exit code that the program declares, and no other.
+func TestReadmeHasEveryExitCode(t *testing.T) {
+	var want, got []string
+	for _, e := range pipeline.ExitCodes {
+		want = append(want, fmt.Sprint(e.Code))
+	}
+	_, table, _ := strings.Cut(string(mustRead(t, "../../README.md")), "## Exit codes")
+	table, _, _ = strings.Cut(table, "##")
+	for _, line := range strings.Split(table, "\n") {
+		if m := regexp.MustCompile(`^\| (\d+) \| \S`).FindStringSubmatch(line); m != nil {
+			got = append(got, m[1])
+		}
+	}
+	if !slices.Equal(got, want) {
+		t.Errorf("README %v, program %v", got, want)
 	}
 }
