@@ -154,7 +154,8 @@ dataset_description.json
 Time axis
 ---------
 Volume n stands at StartTime + n RepetitionTime (the .json of the series) from the start of
-the first raw volume, which raw events are counted from too. So use the raw events and
+the first raw volume, which raw events are counted from too. Where slices were not moved
+in time (SlicesAtOneInstant is false) that is the start of the volume. So use the raw events and
 take StartTime into account, or use the events table of this folder (if it was asked
 for), whose onsets are on the time axis of the series already. Never both.
 
