@@ -25,6 +25,11 @@ func TestScripts(t *testing.T) {
 		},
 		Setup: func(e *testscript.Env) error {
 			e.Setenv("TMPDIR", e.WorkDir)
+			examples, err := filepath.Abs("../../examples")
+			e.Setenv("EXAMPLES", examples)
+			if err != nil {
+				return err
+			}
 			return nil
 		},
 	})
