@@ -8,10 +8,12 @@ import (
 	"os"
 	"os/signal"
 	"runtime/debug"
+	"strconv"
 	"strings"
 	"syscall"
 
 	"github.com/urfave/cli/v2"
+	"golang.org/x/term"
 
 	"evenkeel/pipeline"
 )
@@ -39,6 +41,23 @@ func (o *output) Write(b []byte) (int, error) {
 		o.err = err
 	}
 	return n, err
+}
+
+// columns is the width of the terminal that standard output is, 0 if it is none: what is piped
+// or kept in a file is not shortened. COLUMNS, if it is set, wins (POSIX, "Environment Variables").
+func (s *session) columns() int {
+	f, ok := s.stdout.w.(*os.File)
+	if !ok || !term.IsTerminal(int(f.Fd())) {
+		return 0
+	}
+	if n, err := strconv.Atoi(os.Getenv("COLUMNS")); err == nil && n > 0 {
+		return n
+	}
+	n, _, err := term.GetSize(int(f.Fd()))
+	if err != nil || n <= 0 {
+		return 80
+	}
+	return n
 }
 
 // exit is returned by a command that ran its course with a code of its own; it has

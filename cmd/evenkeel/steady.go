@@ -72,7 +72,7 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 		if err != nil {
 			return err
 		}
-		if err := found.writeText(s.stdout, standings); err != nil {
+		if err := found.writeText(s.stdout, standings, s.columns()); err != nil {
 			return &pipeline.IOError{Path: "standard output", Err: err}
 		}
 		return &exit{found.code()}

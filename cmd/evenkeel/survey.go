@@ -8,6 +8,7 @@ import (
 	"slices"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 
 	"github.com/urfave/cli/v2"
 
@@ -50,7 +51,7 @@ func (s *session) surveyCommand() *cli.Command {
 			if c.Bool("json") {
 				err = found.writeJSON(s.stdout)
 			} else {
-				err = found.writeText(s.stdout, nil)
+				err = found.writeText(s.stdout, nil, s.columns())
 			}
 			if err != nil {
 				return &pipeline.IOError{Path: "standard output", Err: err}
@@ -114,8 +115,8 @@ func (f *surveyed) code() int {
 }
 
 // writeText writes a line a run, its faults below it. standings, if not nil, add how each run
-// stands in OUT.
-func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing) error {
+// stands in OUT. With columns above 0, no line is longer: rows are shortened, faults go on below.
+func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing, columns int) error {
 	head := []string{"run", "size", "TR", "slices", "phase", "steady"}
 	if standings != nil {
 		head = append(head, "in OUT")
@@ -132,13 +133,20 @@ func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing) error {
 		}
 		rows = append(rows, row)
 	}
-	width := make([]int, len(head))
-	for _, r := range rows {
-		for i, cell := range r {
-			width[i] = max(width[i], len(cell))
+	width := fit(rows, columns)
+	var b strings.Builder
+	under := func(indent, text string) {
+		lines := []string{text}
+		if columns > 0 {
+			lines = wrap(text, max(20, columns-len(indent)-2))
+		}
+		for i, l := range lines {
+			if i > 0 {
+				l = "  " + l
+			}
+			b.WriteString(indent + l + "\n")
 		}
 	}
-	var b strings.Builder
 	for n, r := range rows {
 		var line strings.Builder
 		for i, cell := range r {
@@ -153,21 +161,71 @@ func (f *surveyed) writeText(w io.Writer, standings []pipeline.Standing) error {
 		}
 		p := f.plans[n-1]
 		if p.Err != nil {
-			fmt.Fprintf(&b, "  %v\n", p.Err)
+			under("  ", p.Err.Error())
 		}
 		for _, x := range p.Faults {
 			level := string(x.Level)
 			if accepted(x) {
 				level = "accepted"
 			}
-			fmt.Fprintf(&b, "  %s (%s)\n", x.Error(), level)
+			under("  ", fmt.Sprintf("%s (%s)", x.Error(), level))
 		}
 	}
 	for _, x := range f.leftOut {
-		fmt.Fprintf(&b, "%s (%s)\n", x.Error(), x.Level)
+		under("", fmt.Sprintf("%s (%s)", x.Error(), x.Level))
 	}
 	_, err := io.WriteString(w, b.String())
 	return err
+}
+
+// fit returns the width of every column of a table, columns being two apart; with columns above 0
+// it first shortens cells, in the widest columns, so that a row fits, down to
+// a few letters each.
+func fit(rows [][]string, columns int) []int {
+	width := make([]int, len(rows[0]))
+	total := 2 * (len(width) - 1)
+	for i := range width {
+		for _, r := range rows {
+			width[i] = max(width[i], utf8.RuneCountInString(r[i]))
+		}
+		total += width[i]
+	}
+	if columns <= 0 {
+		return width
+	}
+	// widest gives the widest column, -1 if that is no wider than least.
+	widest := func(from, least int) int {
+		at := -1
+		for i := from; i < len(width); i++ {
+			if width[i] > least && (at < 0 || width[i] > width[at]) {
+				at = i
+			}
+		}
+		return at
+	}
+	for ; total > columns; total-- {
+		i := widest(1, 12) // the run's name is shortened last
+		if i < 0 {
+			i = widest(0, 6)
+		}
+		if i < 0 {
+			break
+		}
+		width[i]--
+	}
+	for _, r := range rows {
+		for i, cell := range r {
+			if letters := []rune(cell); len(letters) > width[i] {
+				// The end of a run's name tells runs apart, elsewhere the beginning says most.
+				if i == 0 {
+					r[i] = "…" + string(letters[len(letters)-width[i]+1:])
+				} else {
+					r[i] = string(letters[:width[i]-1]) + "…"
+				}
+			}
+		}
+	}
+	return width
 }
 
 func repetition(p *pipeline.Plan) string {

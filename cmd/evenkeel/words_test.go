@@ -9,6 +9,9 @@ import (
 	"slices"
 	"strings"
 	"testing"
+	"unicode/utf8"
+
+	"github.com/google/go-cmp/cmp"
 
 	"evenkeel/dataset"
 	"evenkeel/pipeline"
@@ -85,5 +88,38 @@ func TestReadmeHasEveryExitCode(t *testing.T) {
 	}
 	if !slices.Equal(got, want) {
 		t.Errorf("README %v, program %v", got, want)
+	}
+}
+
+// On a terminal no row is longer than it; elsewhere nothing is shortened.
+func TestRowsFitTheTerminal(t *testing.T) {
+	table := func() [][]string {
+		return [][]string{
+			{"run", "size", "TR", "slices", "phase", "steady", "in OUT"},
+			{"sub-07_ses-outbound_task-watch_run-2", "64x64x36x200", "2 s", "multiband 3, interleaved ascending", "j- A>P", "fourier+path", "again: time fourier -> sinc"},
+			{"sub-07_ses-outbound_task-watch_run-3", "64x64x36x200", "2 s", "-", "j- A>P", "fourier+path", "new"},
+		}
+	}
+	for _, columns := range []int{80, 120, 60} {
+		rows := table()
+		total := -2
+		for i, w := range fit(rows, columns) {
+			total += w + 2
+			for _, r := range rows {
+				if n := utf8.RuneCountInString(r[i]); n > w {
+					t.Errorf("%d columns: %q is wider than %d", columns, r[i], w)
+				}
+			}
+		}
+		if total > columns {
+			t.Errorf("%d columns: rows of %d", columns, total)
+		}
+		if !strings.HasSuffix(rows[1][0], "run-2") || rows[1][0] == rows[2][0] {
+			t.Errorf("%d columns: runs look alike: %q", columns, rows[1][0])
+		}
+	}
+	rows := table()
+	if fit(rows, 0); !cmp.Equal(rows, table()) {
+		t.Error("shortened without a terminal")
 	}
 }
