@@ -123,6 +123,9 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	if budget <= 0 {
 		budget = DefaultMemory()
 	}
+	// Nearly all memory is a few large series: letting the heap double before it
+	// is collected, as is usual, would cost as much again for nothing.
+	defer debug.SetGCPercent(debug.SetGCPercent(heapGrowth))
 	defer debug.SetMemoryLimit(debug.SetMemoryLimit(max(budget, memoryFloor)))
 
 	admit := newAdmission(budget)
@@ -160,6 +163,9 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	}
 	return outcomes, nil
 }
+
+// heapGrowth is by how many percent the heap may grow before it is collected.
+const heapGrowth = 10
 
 // memoryFloor keeps a tiny --memory from making the collector run all the time:
 // the program itself needs about this much.

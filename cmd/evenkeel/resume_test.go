@@ -75,11 +75,15 @@ func TestInterruptedAtEveryStage(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	plans, err := pipeline.Survey(context.Background(), ds, pipeline.Request{Settings: pipeline.DefaultSettings()})
-	if err != nil {
-		t.Fatal(err)
-	}
 	for _, stage := range pipeline.Stages {
+		settings := pipeline.DefaultSettings()
+		if stage == "time" || stage == "space" { // those of the other orders
+			settings.Order = "time-first"
+		}
+		plans, err := pipeline.Survey(context.Background(), ds, pipeline.Request{Settings: settings})
+		if err != nil {
+			t.Fatal(err)
+		}
 		out := filepath.Join(t.TempDir(), "out")
 		ctx, cancel := context.WithCancel(context.Background())
 		outcomes, err := pipeline.Steady(ctx, ds, plans, pipeline.Job{Out: out, Observe: func(e pipeline.Event) {

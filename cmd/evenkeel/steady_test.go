@@ -75,11 +75,11 @@ func TestPassThrough(t *testing.T) {
 	}
 }
 
-// With --reference first, the first volume is the standard: its own pose is the identity,
-// and without a change in time its voxels stay bit for bit.
+// With --reference first and one pose a volume, the first volume is the standard: its own
+// pose is the identity, and without a change in time its voxels stay bit for bit.
 func TestFirstVolumeStaysPut(t *testing.T) {
 	dir := crewDataset(t, func(*sailor) {})
-	out := process(t, dir, "--time", "none", "--reference", "first")
+	out := process(t, dir, "--time", "none", "--reference", "first", "--motion", "volume", "--order", "time-first")
 	_, rd := series(t, filepath.Join(dir, theRun+"_bold.nii"))
 	_, d := series(t, filepath.Join(out, theRun+"_desc-steady_bold.nii.gz"))
 	nv := len(d) / crewVolumes
