@@ -22,6 +22,7 @@ type Checked struct {
 	Outputs      int `json:"outputs"`       // outputs held against their record
 	Inputs       int `json:"inputs"`        // inputs held against their record
 	InputsUnseen int `json:"inputs_unseen"` // inputs not looked for, the raw dataset not being given
+	Unlisted     int `json:"unlisted"`      // files beside records that none of them lists
 }
 
 // Auditor checks an output folder.
@@ -36,8 +37,8 @@ type Auditor struct {
 }
 
 // Audit finds every *_prov.json below Out, reads it, and compares each file it
-// names in size and digest. It looks for files beside a record that bear its
-// run's name and that no record lists, and for corrected series without a
+// names in size and digest. It looks for files beside a record that no
+// record lists, whatever their name, and for corrected series without a
 // record. Files and folders whose name begins with a dot are passed over, and
 // no link that leads out of Out is followed, nor any to a folder. A file of the wrong size is not
 // read, and a raw file that many records name is read once.
@@ -217,8 +218,8 @@ func (w *auditWork) readRecord(p string) *Record {
 	return r
 }
 
-// strangers finds series without a record, and files that bear a run's name and
-// that no record lists.
+// strangers finds series without a record, and files beside records that none of
+// them lists.
 func (w *auditWork) strangers() {
 	for _, f := range w.folders {
 		// Whether the record of a stem says what belongs to it. What a broken or
@@ -249,9 +250,15 @@ func (w *auditWork) strangers() {
 					longest = stem
 				}
 			}
-			if r := known[longest]; r != nil && r.rec != nil {
+			switch r := known[longest]; {
+			case r != nil && r.rec != nil:
 				w.find(Unlisted, r.path, p, "a file that the record does not list", "only files of the record under this run's name")
+			case longest == "" && len(f.records) > 0 && f.dir != ".": // files of the dataset are no run's
+				w.find(Unlisted, "", p, "a file that no record lists", "only files of runs, beside their records")
+			default:
+				continue
 			}
+			w.checked.Unlisted++
 		}
 	}
 }

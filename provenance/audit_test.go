@@ -191,9 +191,11 @@ func TestAuditFindsTheBreak(t *testing.T) {
 			{Unlisted, one + rec, one + "_desc-smooth_bold.nii.gz", "a file that the record does not list", "only files of the record under this run's name"}}},
 		"stranger of the longer stem": {func(tr *tree) { tr.write(tr.out, two+"_events.tsv", "") }, []Finding{
 			{Unlisted, two + rec, two + "_events.tsv", "a file that the record does not list", "only files of the record under this run's name"}}},
-		"a file of nobody": {func(tr *tree) { tr.write(tr.out, "sub-01/func/sub-01_task-harbour2_bold.json", "") }, nil},
-		"a hidden file":    {func(tr *tree) { tr.write(tr.out, "sub-01/func/."+filepath.Base(one)+"_desc-steady_prov.json", "x") }, nil},
-		"a hidden folder":  {func(tr *tree) { tr.write(tr.out, "sub-01/.old/x_prov.json", "x") }, nil},
+		"a file of nobody": {func(tr *tree) { tr.write(tr.out, "sub-01/func/sub-01_task-harbour2_bold.json", "") }, []Finding{
+			{Unlisted, "", "sub-01/func/sub-01_task-harbour2_bold.json", "a file that no record lists", "only files of runs, beside their records"}}},
+		"a file of the dataset": {func(tr *tree) { tr.write(tr.out, "notes.txt", "") }, nil},
+		"a hidden file":         {func(tr *tree) { tr.write(tr.out, "sub-01/func/."+filepath.Base(one)+"_desc-steady_prov.json", "x") }, nil},
+		"a hidden folder":       {func(tr *tree) { tr.write(tr.out, "sub-01/.old/x_prov.json", "x") }, nil},
 		"record gone": {remove(two + rec), []Finding{
 			{NoRecord, two + rec, two + series, "no record", filepath.Base(two) + rec}}},
 		"record gone, other stem": {remove(one + rec), []Finding{

@@ -34,7 +34,7 @@ var Kinds = []Kind{
 	{Missing, true, "a file that a record names as written is not there"},
 	{Changed, true, "a file that a record names as written has another size or digest"},
 	{Unreadable, true, "something cannot be read, is not a file, or is a link that leads out of the folder"},
-	{Unlisted, true, "a file beside a record has the name of its run, and no record lists it"},
+	{Unlisted, true, "a file beside a record is listed by none"},
 	{ListedTwice, true, "two records say that they wrote one file"},
 	{NoRecord, true, "a corrected series has no record: it was left by something that did not finish, or the record was removed"},
 	{RecordInvalid, true, "a record cannot be understood, was edited, or has the name of another run"},

@@ -64,8 +64,9 @@ func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error
 			Outputs  int                  `json:"outputs"`
 			Inputs   int                  `json:"inputs"`
 			Unseen   int                  `json:"inputs_unseen"`
+			Unlisted int                  `json:"unlisted"`
 			Findings []provenance.Finding `json:"findings"`
-		}{out, raw, checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, append([]provenance.Finding{}, findings...)}
+		}{out, raw, checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, append([]provenance.Finding{}, findings...)}
 		data, err := json.MarshalIndent(doc, "", "  ")
 		if err != nil {
 			return err
@@ -79,6 +80,9 @@ func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error
 	}
 	if _, err := fmt.Fprint(s.stdout, b.String()); err != nil {
 		return &pipeline.IOError{Path: "standard output", Err: err}
+	}
+	if checked.Unlisted > 0 {
+		s.log.warn("unlisted", fmt.Sprintf("%s beside records that no record names", counted(checked.Unlisted, "file")), nil)
 	}
 	if checked.InputsUnseen > 0 {
 		_, why := pipeline.LinkedRaw(out)
