@@ -93,3 +93,67 @@ func (m band) Cholesky() bool          { return m.cholesky() }
 func (m band) Solve(b []float64)       { m.solve(b) }
 func (m band) InverseBand() band       { return m.inverseBand() }
 func (m band) LogDiagonal() float64    { return m.logDiagonal() }
+
+// What the tests of the path need.
+
+type (
+	Chain    = chain
+	SlotData = slotData
+	Params   = params
+)
+
+var NewChain = newChain
+
+const (
+	PathRelocations = relocations
+	PathUnknowns    = poseUnknowns
+)
+
+// MakeSlot is the quadratic of a slot with Hessian h that wants to move by d:
+// g = h d.
+func MakeSlot(h [poseUnknowns][poseUnknowns]float64, d Params) (s SlotData) {
+	at := 0
+	for a := range poseUnknowns {
+		for b := range poseUnknowns {
+			s.g[a] += h[a][b] * d[b]
+		}
+		for b := a; b < poseUnknowns; b++ {
+			s.h[at] = h[a][b]
+			at++
+		}
+	}
+	return s
+}
+
+func (c *chain) Update(data []slotData, p []params) (moved, evidence float64) {
+	return c.update(data, p)
+}
+func (c *chain) Step(data []slotData, p []params) (delta []float64, evidence float64, ok bool) {
+	evidence, ok = c.step(data, p)
+	return append([]float64(nil), c.delta...), evidence, ok
+}
+func (c *chain) Tune(data []slotData, p []params)  { c.tune(data, p) }
+func (c *chain) Offset() []params                  { return c.offset }
+func (c *chain) Bend() [][3]float64                { return c.bend }
+func (c *chain) Weights() []float64                { return c.w }
+func (c *chain) Strengths() (shift, turn float64)  { return c.lt, c.lr }
+func (c *chain) SetStrengths(shift, turn float64)  { c.lt, c.lr = shift, turn }
+func (s slotData) Moved(d *params) slotData        { return s.moved(d) }
+func (s slotData) Gradient() [poseUnknowns]float64 { return s.g }
+func (c *chain) InverseBand() band                 { return c.m.inverseBand() }
+
+// PathParams and PathPose convert between poses and the parameters of the path.
+func PathParams(centre [3]float64, p Pose) Params {
+	e := pathEstimator{est: &Estimate{Centre: centre}}
+	return e.toParams(p)
+}
+
+func PathPose(centre [3]float64, q Params) Pose {
+	e := pathEstimator{est: &Estimate{Centre: centre}}
+	return e.fromParams(q)
+}
+
+// PathJacobian is d(twist about the centre)/d(parameters), the diagonal blocks.
+func PathJacobian(centre [3]float64, q Params) (shift, turn [9]float64) {
+	return jacobian(PathPose(centre, q), q)
+}
