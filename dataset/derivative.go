@@ -127,9 +127,6 @@ same sub-*/[ses-*/]func folder as the raw file.
 
 `, version(d.Version), of)
 	for _, o := range Outputs {
-		if o.Later {
-			continue
-		}
 		for i, ext := range o.Exts {
 			if i > 0 {
 				b.WriteString(", " + ext)

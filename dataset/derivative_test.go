@@ -122,8 +122,10 @@ func TestReadmeText(t *testing.T) {
 			t.Errorf("README lacks %q", want)
 		}
 	}
-	if strings.Contains(text, "shots") {
-		t.Error("README names a file that is not written yet")
+	for _, o := range Outputs {
+		if name := OutputPath(Run{Stem: "STEM"}, o.Desc, o.Suffix, o.Exts[0]); !strings.Contains(text, name) {
+			t.Errorf("README lacks %s", name)
+		}
 	}
 	if m := regexp.MustCompile(`(?m)^.{121,}$`).FindString(text); m != "" {
 		t.Error("long line:", m)

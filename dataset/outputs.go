@@ -13,9 +13,7 @@ type Output struct {
 	// Named is true when BIDS 1.11.1 has a name for such a file. The others are
 	// listed in .bidsignore. A desc on an events table is not among the
 	// standard's derivative names either (schema rules/files/deriv).
-	Named bool
-	// Later marks files that this version does not write yet.
-	Later   bool
+	Named   bool
 	Content string
 }
 

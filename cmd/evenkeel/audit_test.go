@@ -62,7 +62,7 @@ func TestAuditIsInterrupted(t *testing.T) {
 // A record of another version is worth a word and is no difference.
 func TestAuditOfAnotherVersion(t *testing.T) {
 	dir := crewDataset(t, func(*sailor) {})
-	out := process(t, dir)
+	out := process(t, dir, "--motion", "none")
 	name := filepath.Join(out, theRun+"_desc-steady_prov.json")
 	data := bytes.ReplaceAll(mustRead(t, name), []byte(`"`+pipeline.Version+`"`), []byte(`"0.0.1"`))
 	if err := os.WriteFile(name, data, 0o644); err != nil {
@@ -101,10 +101,10 @@ func (full) Write([]byte) (int, error) { return 0, syscall.ENOSPC }
 // A full disk below standard output: 74 from every command that prints, help included.
 func TestStandardOutputIsFull(t *testing.T) {
 	dir := crewDataset(t, func(*sailor) {})
-	out := process(t, dir)
+	out := process(t, dir, "--motion", "none")
 	for _, args := range [][]string{
 		{"version"}, {"version", "--json"}, {"help"}, {"steady", "--help"}, {"survey", dir}, {"survey", dir, "--json"},
-		{"steady", dir, out}, {"steady", dir, out, "--plan"}, {"audit", out, "--dataset", dir},
+		{"steady", dir, out, "--motion", "none"}, {"steady", dir, out, "--plan"}, {"audit", out, "--dataset", dir},
 	} {
 		var stderr bytes.Buffer
 		if code := Run(append([]string{"evenkeel"}, args...), strings.NewReader(""), full{}, &stderr); code != 74 || strings.Count(stderr.String(), "no space left") != 1 {

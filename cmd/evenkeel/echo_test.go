@@ -120,14 +120,16 @@ func TestSteadyConcurrently(t *testing.T) {
 	for _, sub := range []string{"01", "02", "03"} {
 		writeDataset(dir, newSailor().files("sub-"+sub+"/func/sub-"+sub+"_task-watch"))
 	}
-	alone, out := process(t, dir, "--jobs", "1"), filepath.Join(t.TempDir(), "out")
+	alone, out := process(t, dir, "--jobs", "1", "--motion", "volume", "--order", "time-first"), filepath.Join(t.TempDir(), "out")
 	type end struct {
 		outcomes []pipeline.Outcome
 		err      error
 	}
 	ends := make(chan end)
+	set := pipeline.DefaultSettings()
+	set.Motion, set.Order = "volume", "time-first" // quicker
 	for range 2 {
-		ds, plans := plansOf(t, dir, nil, pipeline.DefaultSettings())
+		ds, plans := plansOf(t, dir, nil, set)
 		go func() {
 			o, err := pipeline.Steady(context.Background(), ds, plans, pipeline.Job{Out: out, Jobs: 3, Cores: 2})
 			ends <- end{o, err}

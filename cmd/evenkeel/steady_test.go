@@ -321,7 +321,7 @@ func TestSBRefOfSeveralVolumes(t *testing.T) {
 
 // The longest reach that the options take is one that the kernel has.
 func TestLongestReach(t *testing.T) {
-	process(t, crewDataset(t, func(*sailor) {}), "--time", "sinc", "--sinc-reach", strconv.Itoa(slicetime.MaxReach))
+	process(t, crewDataset(t, func(*sailor) {}), "--motion", "none", "--time", "sinc", "--sinc-reach", strconv.Itoa(slicetime.MaxReach))
 }
 
 // Onsets stay complete in the output: with FrameAcquisitionDuration where the run had it, else
@@ -344,7 +344,7 @@ func TestOnsetsStayComplete(t *testing.T) {
 			s.header.Pixdim[4] = 0
 			change(s)
 		})
-		out := process(t, dir, "--time", "none")
+		out := process(t, dir, "--time", "none", "--motion", "none")
 		side := theRun + "_desc-steady_bold.json"
 		doc, faults := sidecar.Merge([]sidecar.Source{{Name: side, Data: mustRead(t, filepath.Join(out, side))}})
 		g := sidecar.Geometry{File: theRun + "_desc-steady_bold.nii.gz", Size: [4]int{crewSize[0], crewSize[1], crewSize[2], crewVolumes}}
@@ -372,7 +372,7 @@ func TestRowsOfThreeDimensionalRuns(t *testing.T) {
 		delete(s.sidecar, "SliceTiming")
 	})
 	for _, kernel := range []string{"fourier", "none"} {
-		table := string(mustRead(t, filepath.Join(process(t, dir, "--time", kernel), theRun+"_desc-steady_pose.tsv")))
+		table := string(mustRead(t, filepath.Join(process(t, dir, "--time", kernel, "--motion", "none"), theRun+"_desc-steady_pose.tsv")))
 		if !strings.Contains(table, "\n0.750000\t") || !strings.Contains(table, "\n2.750000\t") { // (2 - 0.5) / 2
 			t.Errorf("--time %s: %s", kernel, table)
 		}
@@ -381,7 +381,7 @@ func TestRowsOfThreeDimensionalRuns(t *testing.T) {
 
 // runs.json describes every column of runs.tsv, and nothing else.
 func TestRunsAreDescribed(t *testing.T) {
-	out := process(t, crewDataset(t, func(*sailor) {}))
+	out := process(t, crewDataset(t, func(*sailor) {}), "--motion", "none")
 	head, _, _ := strings.Cut(string(mustRead(t, filepath.Join(out, "runs.tsv"))), "\n")
 	var described map[string]struct {
 		Description, Units string
