@@ -7,7 +7,6 @@ import (
 	"cmp"
 	"context"
 	"errors"
-	"fmt"
 	"io/fs"
 	"os"
 	"path/filepath"
@@ -146,6 +145,7 @@ var runColumns = []runColumn{
 	measured("mean_fd", "Mean", "fd", func(f *Figures) float64 { return f.MeanFD }),
 	measured("max_fd", "Largest value", "fd", func(f *Figures) float64 { return f.MaxFD }),
 	measured("mean_fd_aligned", "", "mean_fd_aligned", func(f *Figures) float64 { return f.MeanFDAligned }),
+	measured("mean_expected_error", "Mean", "expected_error", func(f *Figures) float64 { return f.ExpectedError }),
 	measured("mean_rms_ball", "Mean", "rms_ball", func(f *Figures) float64 { return f.MeanRMS }),
 	measured("max_shift", "", "max_shift", func(f *Figures) float64 { return f.MaxShift }),
 	measured("mean_dvars_raw", "Mean", "dvars_raw", func(f *Figures) float64 { return f.MeanDVARSRaw }),
@@ -222,7 +222,7 @@ func writeRuns(ctx context.Context, out string, outcomes []Outcome) error {
 		if have, rerr := os.ReadFile(name); terr == nil && rerr == nil && bytes.Equal(have, table) {
 			return nil
 		}
-		return &CreateError{Path: out, Err: fmt.Errorf("no file can be made in it: %w", cause(create.Err))}
+		return &CreateError{Path: "a file in " + out, Err: cause(create.Err)}
 	}
 	if err != nil {
 		return err

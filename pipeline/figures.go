@@ -163,6 +163,8 @@ type Figures struct {
 	MeanFD, MaxFD                    float64 // mm; NaN where undefined, as all below
 	MeanFDAligned                    float64 // mm; between aligned volumes only
 	MeanRMS                          float64 // mm
+	ExpectedError                    float64 // mm; of the pose path, NaN without one
+	ResidualVolume, ResidualPath     float64 // in units of the noise, NaN without a path
 	MaxShift                         float64 // mm, over aligned volumes
 	MeanDVARSRaw, MeanDVARSSteady    float64 // %
 	MedianTSNRRaw, MedianTSNRSteady  float64
@@ -284,6 +286,13 @@ func parseFigures(data []byte) (*Figures, error) {
 		}
 	}
 	count := func(name string) int { return int(q[name].Value) }
+	optional := func(name string) struct{ Mean, Value float64 } {
+		f, ok := q[name]
+		if !ok {
+			return struct{ Mean, Value float64 }{math.NaN(), math.NaN()}
+		}
+		return struct{ Mean, Value float64 }{float64(f.Mean), float64(f.Value)}
+	}
 	var raised struct {
 		List struct{ Volumes []int } `json:"dvars_raised"`
 	}
@@ -296,7 +305,8 @@ func parseFigures(data []byte) (*Figures, error) {
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
 		MeanFDAligned: float64(q["mean_fd_aligned"].Value),
 		MeanRMS:       float64(q["rms_ball"].Mean),
-		MaxShift:      float64(q["max_shift"].Value), MeanDVARSRaw: float64(q["dvars_raw"].Mean), MeanDVARSSteady: float64(q["dvars_steady"].Mean),
+		ExpectedError: optional("expected_error").Mean, ResidualVolume: optional("residual_volume").Value, ResidualPath: optional("residual_path").Value,
+		MaxShift: float64(q["max_shift"].Value), MeanDVARSRaw: float64(q["dvars_raw"].Mean), MeanDVARSSteady: float64(q["dvars_steady"].Mean),
 		MedianTSNRRaw: float64(q["tsnr_raw"].Median), MedianTSNRSteady: float64(q["tsnr_steady"].Median),
 	}, nil
 }

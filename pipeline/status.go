@@ -77,6 +77,9 @@ func (e *NothingSelected) Error() string {
 	if e.Runs == 0 {
 		return fmt.Sprintf("%s: holds no BOLD run (sub-*/[ses-*/]func/*_bold.nii[.gz])%s", e.Root, left)
 	}
+	if e.Runs == 1 {
+		return fmt.Sprintf("%s: its only run does not match %s; leave options out, or see evenkeel survey %s for what there is", e.Root, e.Asked, e.Root)
+	}
 	return fmt.Sprintf("%s: none of its %d runs matches %s; leave options out, or see evenkeel survey %s for what there is%s", e.Root, e.Runs, e.Asked, e.Root, left)
 }
 

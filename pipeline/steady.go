@@ -242,7 +242,7 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 		if out, ok := u.standing(ctx, job); ok {
 			return out
 		}
-		return failed(&CreateError{Path: dir, Err: fmt.Errorf("no file can be made in it: %w", cause(create.Err))})
+		return failed(&CreateError{Path: "a file in " + dir, Err: cause(create.Err)})
 	}
 	if err != nil {
 		return failed(err)

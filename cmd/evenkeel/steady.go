@@ -33,7 +33,7 @@ func (s *session) steadyCommand() *cli.Command {
 			&cli.StringFlag{Name: "jobs", Usage: "`N` runs at once", DefaultText: "chosen from cores and runs"},
 			memoryFlag(),
 			&cli.BoolFlag{Name: "redo", Usage: "recompute runs whose record is up to date"},
-			&cli.BoolFlag{Name: "plan", Usage: "print what would be done, write nothing"},
+			&cli.BoolFlag{Name: "plan", Usage: "print what would be done as far as headers and sidecars show, and which runs are up to date or done again and why; write nothing"},
 			&cli.BoolFlag{Name: "no-report", Usage: "leave report.html to a later report (this version writes none yet)"},
 		}),
 		Action: func(c *cli.Context) error {
@@ -204,6 +204,9 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 		switch f := o.Figures; {
 		case f != nil:
 			line += fmt.Sprintf("  %s, FD mean %s max %s mm, %d doubtful, %d lost", counted(f.Volumes, "volume"), millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
+			if !math.IsNaN(f.ExpectedError) {
+				line += fmt.Sprintf(", path residual %.3f -> %.3f, expected error %.0f um", f.ResidualVolume, f.ResidualPath, 1000*f.ExpectedError)
+			}
 			if len(o.Outside) > 0 {
 				line += ", outside a limit"
 			}

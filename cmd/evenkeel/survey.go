@@ -27,7 +27,7 @@ func (s *session) surveyCommand() *cli.Command {
 			"would do; then every fault of the run. Words count slices from 1 in the order of the\n"+
 			"array index (ascending: rising index, which need not be upward in the body); numbers\n"+
 			"in tables, faults and options count from 0. The exit code is the one that steady\n"+
-			"would return for its refusals.", "evenkeel survey voyage --subject alder --json",
+			"would return for the refusals that headers and sidecars show.", "evenkeel survey voyage --subject alder --json",
 			codes(pipeline.ExitDone, pipeline.ExitSome, pipeline.ExitUsage, pipeline.ExitData, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt).
 				but(pipeline.ExitDone, "steady would process every selected run").
 				but(pipeline.ExitSome, "steady would refuse some runs, or could not read them").
