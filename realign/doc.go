@@ -43,6 +43,11 @@
 // smoothing and gain model were chosen by simulation; each constant carries its
 // reason.
 //
+// # Method of EstimatePath and Joint
+//
+// See there; the prior is described in prior.go, the template's rebuilding in
+// rebuild.go.
+//
 // # Guarantees
 //
 //  1. The same input gives the same bits for any number of workers and on any
@@ -54,5 +59,7 @@
 //
 // # Incomplete
 //
-// One pose per volume only; motion within a volume is averaged.
+// A path needs at least half of the excitations to see the head past the margins:
+// slabs of eight slices and fewer keep one pose a volume. Motion locked to the
+// repetition time is taken for misplaced slices.
 package realign
