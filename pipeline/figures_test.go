@@ -65,6 +65,7 @@ func TestFigures(t *testing.T) {
 		MaxShift:     1, // of aligned volumes only: the doubtful one is at 3
 		MeanDVARSRaw: 1, MeanDVARSSteady: 0.5, MedianTSNRRaw: 100, MedianTSNRSteady: 120}
 	want.MeanFDAligned = math.NaN() // no aligned volume follows another
+	want.ExpectedError, want.ResidualVolume, want.ResidualPath = math.NaN(), math.NaN(), math.NaN() // no path
 	want.Raised = []int{}
 	if d := cmp.Diff(want, *f, cmpopts.EquateNaNs()); d != "" {
 		t.Error(d)

@@ -81,7 +81,7 @@ func ExampleDefine() {
 	d := Define("rms_ball")
 	fmt.Printf("%s (%s): %s\n%s\n", d.Name, d.Unit, d.Description, d.Source)
 	// Output:
-	// rms_ball (mm): Root mean square displacement against the volume before, over a solid ball of 80 mm about RotationCentre. Undefined where fd is.
+	// rms_ball (mm): Root mean square displacement against the volume before, over a solid ball of 80 mm radius about RotationCentre. Undefined where fd is.
 	// Jenkinson 1999, technical report TR99MJ1
 }
 
