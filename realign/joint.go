@@ -37,24 +37,21 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 	template := newSpline(g.N, 5, Odd)
 	template.load(p.Reference)
 	inv := mustInvert(g.Affine)
-	toCentre := g.Affine
-	for a := range p.Centre {
-		toCentre[4*a+3] -= p.Centre[a]
-	}
 	err := parallel.For(ctx, workers, nt, func(_, n int) error {
 		vol := data[n*nv:][:nv]
 		back := make([][16]float64, g.N[s.Axis])
 		for k := range back {
 			back[k] = mul(inv, mul(p.Slot(n, k).Inverse().Matrix(), g.Affine))
 		}
-		gain := &p.Gains[n]
+		gain := newGainRows(g, p.Centre, &p.Gains[n])
 		i := 0
 		for z := range g.N[2] {
 			for y := range g.N[1] {
+				base := gain.row(y, z)
 				for x := range g.N[0] {
-					fx, fy, fz := float64(x), float64(y), float64(z)
-					at := applyAffine(&back[[3]int{x, y, z}[s.Axis]], fx, fy, fz)
-					gn := gainOf(gain, applyAffine(&toCentre, fx, fy, fz))
+					fx := float64(x)
+					at := applyAffine(&back[[3]int{x, y, z}[s.Axis]], fx, float64(y), float64(z))
+					gn := base + float64(gain.step*fx)
 					vol[i] -= float32(gn * float64(template.value(at[0], at[1], at[2])))
 					i++
 				}
@@ -89,7 +86,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 			r.load(vol)
 		}
 		m := mul(inv, mul(pose.Matrix(), g.Affine))
-		gain := &p.Gains[n]
+		gain := newGainRows(g, p.Centre, &p.Gains[n])
 		i := 0
 		for z := range g.N[2] {
 			for y := range g.N[1] {
@@ -100,7 +97,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 						at = applyAffine(&m, at[0], at[1], at[2])
 						e = r.value(at[0], at[1], at[2])
 					}
-					gn := gainOf(gain, applyAffine(&toCentre, at[0], at[1], at[2]))
+					gn := gain.at(at)
 					vol[i] = float32(gn*float64(p.Reference[i])) + e
 					i++
 				}

@@ -220,10 +220,8 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 			return nil, err
 		}
 	}
-	// The verdict, at the last template.
-	if err := e.measure(slots, false); err != nil {
-		return nil, err
-	}
+	// The verdict, by the last measurement: the last step moved no pose by enough to
+	// change it.
 	after, _ := e.misfit()
 	if _, ok := c.step(slots, e.p); !ok {
 		return fallBack("the equations of the path have no solution"), nil
@@ -438,7 +436,7 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		toCentre[4*a+3] -= t.centre[a]
 	}
 	var mean, square, count, left float64
-	gain := e.est.Volumes[n].Gain
+	gain := newGainRows(e.g, e.est.Centre, &e.est.Volumes[n].Gain)
 	for _, k := range slices {
 		if e.weak[n][k] {
 			continue
@@ -450,11 +448,17 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		for z := lo[2]; z <= hi[2]; z++ {
 			for y := lo[1]; y <= hi[1]; y++ {
 				row := t.g.N[0] * (y + t.g.N[1]*z)
+				bright := gain.row(y, z)
+				var o [3]float64 // of the row: at = o + b's first column times x
+				for a := range o {
+					o[a] = float64(b[4*a+1]*float64(y)) + float64(b[4*a+2]*float64(z)) + b[4*a+3]
+				}
 				for x := lo[0]; x <= hi[0]; x++ {
 					if e.thin && e.white(x, y, z) {
 						continue
 					}
-					at := applyAffine(&b, float64(x), float64(y), float64(z))
+					fx := float64(x)
+					at := [3]float64{o[0] + float64(b[0]*fx), o[1] + float64(b[4]*fx), o[2] + float64(b[8]*fx)}
 					if !t.inMargin(at) {
 						continue
 					}
@@ -463,8 +467,7 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 						continue
 					}
 					v, g := t.s.gradient(at[0], at[1], at[2])
-					xw := applyAffine(&toCentre, float64(x), float64(y), float64(z))
-					gn := gainOf(&gain, xw)
+					gn := bright + float64(gain.step*fx)
 					val := float64(vol[row+x])
 					r := val - float64(gn*float64(v))
 					var gw [3]float64
@@ -597,9 +600,11 @@ func (e *pathEstimator) within(k int) (lo, hi [3]int, ok bool) {
 // neighbour's pose; it is moved there. It reports whether any slot was.
 func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 	any := false
-	for range relocations {
-		if err := e.measure(slots, false); err != nil {
-			return false, err
+	for round := range relocations {
+		if round > 0 { // the first round goes by the last measurement
+			if err := e.measure(slots, false); err != nil {
+				return false, err
+			}
 		}
 		usual, _ := e.usualScale()
 		per := len(e.shots)

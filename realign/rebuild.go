@@ -16,11 +16,11 @@ type slotMap struct {
 	axis int
 }
 
-// settled: the rounds end when the slice coordinate moves by less, or after
-// mostRounds (each round shrinks the error by the change of pose per slice,
+// settled: the rounds end when the slice coordinate moves by less (over which a
+// pose changes by a ten-thousandth of a millimetre), or after mostRounds (each round shrinks the error by the change of pose per slice,
 // a few percent even for a jerk).
 const (
-	settled    = 1e-4
+	settled    = 1e-3
 	mostRounds = 6
 )
 
@@ -236,10 +236,7 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 	vol := e.volume(n)
 	gain := e.est.Volumes[n].Gain
-	toCentre := e.g.Affine
-	for a := range e.est.Centre {
-		toCentre[4*a+3] -= e.est.Centre[a]
-	}
+	rows := newGainRows(e.g, e.est.Centre, &gain)
 	axis := e.schedule.Axis
 	maps := make([][16]float64, e.g.N[axis])
 	if residual {
@@ -251,9 +248,9 @@ func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 	i := 0
 	for z := range e.g.N[2] {
 		for y := range e.g.N[1] {
+			base := rows.row(y, z)
 			for x := range e.g.N[0] {
-				xw := applyAffine(&toCentre, float64(x), float64(y), float64(z))
-				v := float32(float64(vol[i]) / gainOf(&gain, xw))
+				v := float32(float64(vol[i]) / (base + float64(rows.step*float64(x))))
 				if residual {
 					at := applyAffine(&maps[[3]int{x, y, z}[axis]], float64(x), float64(y), float64(z))
 					if e.t.inField(at) && e.region[e.t.nearest(at)] {
@@ -267,6 +264,33 @@ func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 			}
 		}
 	}
+}
+
+// gainRows evaluates a gain along the rows of a grid, where it is linear.
+type gainRows struct {
+	step, y, z, origin float64
+}
+
+func newGainRows(g Grid, centre [3]float64, gain *[4]float64) gainRows {
+	at := func(i, j, k float64) float64 {
+		p := g.world(i, j, k)
+		for a := range p {
+			p[a] -= centre[a]
+		}
+		return gainOf(gain, p)
+	}
+	o := at(0, 0, 0)
+	return gainRows{step: at(1, 0, 0) - o, y: at(0, 1, 0) - o, z: at(0, 0, 1) - o, origin: o}
+}
+
+// row is the gain at the start of a row; it grows by step with each voxel.
+func (r *gainRows) row(j, k int) float64 {
+	return r.origin + float64(r.y*float64(j)) + float64(r.z*float64(k))
+}
+
+// at is the gain at a voxel coordinate.
+func (r *gainRows) at(x [3]float64) float64 {
+	return r.origin + float64(r.step*x[0]) + float64(r.y*x[1]) + float64(r.z*x[2])
 }
 
 // inField reports whether a voxel coordinate lies within half a voxel of the

@@ -364,20 +364,24 @@ func (s *spline) value5(x, y, z float64) float32 {
 	j, ty := cell(y, s.n[1], 5)
 	k, tz := cell(z, s.n[2], 5)
 	wx, wy, wz := weights5(tx), weights5(ty), weights5(tz)
-	mx, my := s.m[0], s.m[1]
+	// Scalars, because the compiler keeps no array in registers.
+	w0, w1, w2, w3, w4, w5 := wx[0], wx[1], wx[2], wx[3], wx[4], wx[5]
+	mx := s.m[0]
+	area := mx * s.m[1]
+	base := i + mx*j + area*k
 	var sum float32
-	for c := range 6 {
-		base := i + mx*(j+my*(k+c))
+	for c := range wz {
+		rows := s.c[base : base+5*mx+6]
 		var plane float32
-		for b := range 6 {
-			r := s.c[base:][:6]
+		for b := range wy {
+			r := rows[b*mx:][:6]
 			// Two chains of three keep the adder busy; the order is fixed.
-			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1]) + float32(wx[2]*r[2])
-			q := float32(wx[3]*r[3]) + float32(wx[4]*r[4]) + float32(wx[5]*r[5])
+			p := float32(w0*r[0]) + float32(w1*r[1]) + float32(w2*r[2])
+			q := float32(w3*r[3]) + float32(w4*r[4]) + float32(w5*r[5])
 			plane += float32(wy[b] * (p + q))
-			base += mx
 		}
 		sum += float32(wz[c] * plane)
+		base += area
 	}
 	return sum
 }
@@ -419,28 +423,34 @@ func (s *spline) gradient5(x, y, z float64) (v float32, g [3]float32) {
 	k, tz := cell(z, s.n[2], 5)
 	wx, wy, wz := weights5(tx), weights5(ty), weights5(tz)
 	dx, dy, dz := slopes5(tx), slopes5(ty), slopes5(tz)
-	mx, my := s.m[0], s.m[1]
-	for c := range 6 {
-		base := i + mx*(j+my*(k+c))
+	w0, w1, w2, w3, w4, w5 := wx[0], wx[1], wx[2], wx[3], wx[4], wx[5]
+	d0, d1, d2, d3, d4, d5 := dx[0], dx[1], dx[2], dx[3], dx[4], dx[5]
+	mx := s.m[0]
+	area := mx * s.m[1]
+	base := i + mx*j + area*k
+	var gx, gy, gz float32
+	for c := range wz {
+		rows := s.c[base : base+5*mx+6]
 		var pv, px, py float32
-		for b := range 6 {
-			r := s.c[base:][:6]
-			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1]) + float32(wx[2]*r[2])
-			q := float32(wx[3]*r[3]) + float32(wx[4]*r[4]) + float32(wx[5]*r[5])
-			dp := float32(dx[0]*r[0]) + float32(dx[1]*r[1]) + float32(dx[2]*r[2])
-			dq := float32(dx[3]*r[3]) + float32(dx[4]*r[4]) + float32(dx[5]*r[5])
+		for b := range wy {
+			r := rows[b*mx:][:6]
+			r0, r1, r2, r3, r4, r5 := r[0], r[1], r[2], r[3], r[4], r[5]
+			p := float32(w0*r0) + float32(w1*r1) + float32(w2*r2)
+			q := float32(w3*r3) + float32(w4*r4) + float32(w5*r5)
+			dp := float32(d0*r0) + float32(d1*r1) + float32(d2*r2)
+			dq := float32(d3*r3) + float32(d4*r4) + float32(d5*r5)
 			row := p + q
 			pv += float32(wy[b] * row)
 			py += float32(dy[b] * row)
 			px += float32(wy[b] * (dp + dq))
-			base += mx
 		}
 		v += float32(wz[c] * pv)
-		g[0] += float32(wz[c] * px)
-		g[1] += float32(wz[c] * py)
-		g[2] += float32(dz[c] * pv)
+		gx += float32(wz[c] * px)
+		gy += float32(wz[c] * py)
+		gz += float32(dz[c] * pv)
+		base += area
 	}
-	return v, g
+	return v, [3]float32{gx, gy, gz}
 }
 
 func (s *spline) gradient3(x, y, z float64) (v float32, g [3]float32) {
