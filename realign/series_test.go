@@ -1,13 +1,17 @@
 package realign_test
 
 import (
+	"context"
+	"encoding/json"
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"testing"
 
 	"evenkeel/nifti"
 	"evenkeel/realign"
+	"evenkeel/slicetime"
 )
 
 // realSeries reads a run of the open EPI test series (its README: two public
@@ -110,6 +114,131 @@ func TestStaticPhantoms(t *testing.T) {
 			t.Errorf("%s: mean FD %.3f mm, bar %g", c.name, fd, c.bar)
 		} else {
 			t.Logf("%s: mean FD %.3f mm", c.name, fd)
+		}
+	}
+}
+
+// realSchedule reads when the slices of a run of the series were excited; all of
+// them have their slices along k in increasing order.
+func realSchedule(t *testing.T, name string) slicetime.Schedule {
+	t.Helper()
+	b, err := os.ReadFile(filepath.Join(os.Getenv("EVENKEEL_TEST_SERIES"), filepath.FromSlash(name)))
+	if err != nil {
+		t.Fatal(err)
+	}
+	var side struct {
+		RepetitionTime float64
+		SliceTiming    []float64
+	}
+	if err := json.Unmarshal(b, &side); err != nil {
+		t.Fatal(err)
+	}
+	return slicetime.Schedule{Times: side.SliceTiming, Axis: 2, TR: side.RepetitionTime}
+}
+
+// Path and combined interpolation do no harm to series of a scanner. Static
+// phantoms: along the path they move no more from volume to volume than by one
+// pose a volume. A head that moves as hard as heads do: the temporal SD inside it
+// over the volumes that are not lost is no higher than when time is corrected first and
+// then space. Slices excited together share their pose.
+func TestPathAndJointDoNoHarm(t *testing.T) {
+	t.Log("| run | path | mean FD um, volumes | mean FD um, path | SD untouched | SD time-first | SD time-first on the path | SD joint |")
+	for _, name := range []string{
+		"sub-phantomA/func/sub-phantomA_task-static", "sub-phantomB/func/sub-phantomB_task-static",
+		"sub-01/func/sub-01_task-interleavedup", "sub-01/func/sub-01_task-interleaveddown", "sub-01/func/sub-01_task-sequentialup", "sub-01/func/sub-01_task-sequentialdown",
+		"sub-02/func/sub-02_task-axial", "sub-02/func/sub-02_task-coronal",
+	} {
+		g, data, nt := realSeries(t, name+"_bold.nii.gz")
+		r := &session{grid: g, schedule: realSchedule(t, name+"_bold.json"), data: data}
+		r.scan.NT = nt
+		r.find(t, realign.Options{}, 2)
+		p, ref := r.path, r.schedule.Middle()
+		nv := len(data) / nt
+		lost := make([]bool, nt)
+		for n, v := range r.est.Volumes {
+			lost[n] = v.State == realign.Lost
+		}
+		shots := r.schedule.Shots()
+		if p.Used {
+			for n := range nt {
+				for _, shot := range shots {
+					for _, k := range shot.Slices {
+						if p.Slot(n, k) != p.Slot(n, shot.Slices[0]) {
+							t.Errorf("%s: volume %d: slices %v have several poses", name, n, shot.Slices)
+						}
+					}
+				}
+			}
+		}
+		meanFD := func(pose func(n int) realign.Pose) float64 { // Power et al. 2012
+			fd := 0.0
+			for n := 1; n < nt; n++ {
+				s0, t0 := pose(n - 1).Params(r.est.Centre)
+				s1, t1 := pose(n).Params(r.est.Centre)
+				for a := range 3 {
+					fd += math.Abs(s1[a]-s0[a]) + 50*math.Abs(t1[a]-t0[a])
+				}
+			}
+			return 1000 * fd / float64(nt-1)
+		}
+		byVolume := func(n int) realign.Pose { return r.est.Volumes[n].Pose }
+		onPath := func(n int) realign.Pose { return p.At(n, float64(n)*r.schedule.TR+ref) }
+		fdVolumes, fdPath := meanFD(byVolume), meanFD(onPath)
+		word := "used"
+		if !p.Used {
+			word = "not used: " + p.Reason
+		}
+		if nt < slicetime.MinVolumes {
+			t.Logf("| %s | %s | %.1f | %.1f | %d volumes: time is not corrected |", filepath.Base(name), word, fdVolumes, fdPath, nt)
+			continue
+		}
+		spread := func(d []float32) float64 {
+			sum, count := 0.0, 0.0
+			for i, in := range r.est.Mask {
+				if !in {
+					continue
+				}
+				mean, k := 0.0, 0.0
+				for n := range nt {
+					if !lost[n] {
+						mean += float64(d[n*nv+i])
+						k++
+					}
+				}
+				mean /= k
+				for n := range nt {
+					if !lost[n] {
+						sum += math.Pow(float64(d[n*nv+i])-mean, 2) / (k - 1)
+					}
+				}
+				count++
+			}
+			return math.Sqrt(sum / count)
+		}
+		place := func(d []float32, pose func(n int) realign.Pose) []float32 {
+			rs := realign.NewResampler(g.N, 5)
+			for n := range nt {
+				rs.Load(d[n*nv:][:nv])
+				rs.Eval(d[n*nv:][:nv], realign.PoseMap(g, pose(n)))
+			}
+			return d
+		}
+		timed := slices.Clone(data)
+		if err := slicetime.Correct(context.Background(), timed, g.N[0], g.N[1], g.N[2], nt, r.schedule, ref, slicetime.Options{}, 2); err != nil {
+			t.Fatal(err)
+		}
+		untouched := spread(data)
+		timeFirst := spread(place(slices.Clone(timed), byVolume))
+		onInstants := spread(place(timed, onPath))
+		both := spread(joint(t, r, p, true, ref, lost, 2))
+		t.Logf("| %s | %s | %.1f | %.1f | %.2f | %.2f | %.2f | %.2f |", filepath.Base(name), word, fdVolumes, fdPath, untouched, timeFirst, onInstants, both)
+		// Room for the last digits, and for what a tenth of a percent of the SD of a
+		// phantom's noise is: the estimates are of noise, not of motion.
+		if fdPath > 1.001*fdVolumes && filepath.Dir(filepath.Dir(name)) != "sub-01" {
+			t.Errorf("%s: mean FD %.2f um along the path, %.2f with one pose a volume", name, fdPath, fdVolumes)
+		}
+		if both > 1.001*timeFirst {
+			t.Errorf("%s: temporal SD %.2f after the combined interpolation, %.2f after time first", name, both, timeFirst)
 		}
 	}
 }
