@@ -44,6 +44,10 @@ type PathEstimate struct {
 	Passes         int
 	Iterations     int
 	Parameters     []Parameter
+
+	// Progress, if not nil, is told what [PathEstimate.Joint] has done of its work, as with
+	// [Options]. Nothing here sets it.
+	Progress func(share float64)
 }
 
 // Constants of the path, each with its reason.
@@ -58,6 +62,9 @@ const (
 	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
 	// fewestData: a path is only worth its name where most slots see the head.
 	fewestData = 0.5
+	// fewestAligned: an average of one or two volumes fits those volumes whatever
+	// their poses.
+	fewestAligned = 3
 	// regionRim: the template is rebuilt in the head and this many voxels
 	// around it: the rim that takes part and the reach of a spline.
 	regionRim = pathRim + 3
@@ -93,6 +100,7 @@ func EstimatePath(ctx context.Context, g Grid, data []float32, nt int, s sliceti
 		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: max(1, workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }},
 		schedule:  s, est: est,
 	}
+	e.done.tell = est.Progress
 	return e.run()
 }
 
@@ -112,6 +120,7 @@ type pathEstimator struct {
 	image    []float32
 	region   []bool
 	weak     [][]bool
+	voxel    []float32 // weight of each voxel of the template; nil: all alike
 	thin     bool      // every other pixel only
 	sigma    float64   // noise as seen so far
 	scale    []float64 // residual scale of each slot, 0: no data
@@ -121,10 +130,10 @@ type pathEstimator struct {
 
 // slotWork is the scratch of one worker.
 type slotWork struct {
-	e    []float32
-	j    [][6]float32
-	res  []float32
-	sumE float64
+	e   []float32
+	j   [][6]float32
+	wt  []float32
+	res []float32
 }
 
 func (e *pathEstimator) run() (*PathEstimate, error) {
@@ -147,8 +156,8 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	if len(e.shots) < 2 {
 		return fallBack("all slices are excited at one instant: one pose a volume is the path"), nil
 	}
-	if e.nt*len(e.shots) < 6 {
-		return fallBack("too few excitations for a path"), nil
+	if n := countState(e.est.Volumes, Aligned); n < fewestAligned {
+		return fallBack(fmt.Sprintf("%d aligned volumes, and a template needs %d before residuals mean anything", n, fewestAligned)), nil
 	}
 	e.lay()
 	e.image = append([]float32(nil), e.est.Reference...)
@@ -158,6 +167,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	e.chain = c
 	slots := make([]slotData, len(e.times))
 	e.thin = true
+	e.done.phase(0, firstMeasured, e.nt*(1+pathFirstIterations))
 	if err := e.measure(slots, true); err != nil {
 		return nil, err
 	}
@@ -179,6 +189,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		iterations := pathFirstIterations
 		if pass > 0 {
 			iterations = pathNextIterations
+			e.done.phase(firstRebuilt, nextMeasured, e.nt*iterations)
 		}
 		for range iterations {
 			if err := e.measure(slots, false); err != nil {
@@ -215,6 +226,9 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		projections := 1
 		if pass == pathPasses-1 {
 			projections = lastProjections
+			e.done.phase(nextMeasured, 1, e.nt*(1+projections))
+		} else {
+			e.done.phase(firstMeasured, firstRebuilt, e.nt*(1+projections))
 		}
 		if err := e.rebuild(projections); err != nil {
 			return nil, err
@@ -401,6 +415,7 @@ func jacobian(p Pose, q params) (rt, jr [9]float64) {
 func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 	explain := make([][2]float64, e.nt)
 	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
+		defer e.done.piece()
 		for s, shot := range e.shots {
 			i := n*len(e.shots) + s
 			slots[i], e.scale[i] = slotData{}, 0
@@ -428,7 +443,7 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 // slot gathers the pixels of one excitation of volume n.
 func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
 	t := e.t
-	w.e, w.j, w.res = w.e[:0], w.j[:0], w.res[:0]
+	w.e, w.j, w.wt, w.res = w.e[:0], w.j[:0], w.wt[:0], w.res[:0]
 	vol := e.volume(n)
 	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
 	toCentre := t.g.Affine
@@ -478,6 +493,11 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 					w.e = append(w.e, float32(r))
 					w.j = append(w.j, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(m[0]), float32(m[1]), float32(m[2])})
 					w.res = append(w.res, float32(math.Abs(r)))
+					if e.voxel != nil {
+						w.wt = append(w.wt, e.voxel[near])
+					} else {
+						w.wt = append(w.wt, 1)
+					}
 					if t.head[near] {
 						mean += val
 						square += float64(val * val)
@@ -507,7 +527,7 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		if u = 1 - float64(u*u); u <= 0 {
 			continue
 		}
-		wt := float64(u * u)
+		wt := float64(float64(u*u) * float64(w.wt[q]))
 		j := &w.j[q]
 		at := 0
 		for a := range 6 {
@@ -740,6 +760,8 @@ func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt i
 		schedule:  s, est: est, shotOf: p.Shot, poses: p.Path.Poses,
 		shots: make([]slicetime.Shot, p.Shots), scale: make([]float64, nt*p.Shots),
 	}
+	e.done.tell = est.Progress
+	e.done.phase(0, 1, nt*(1+lastProjections))
 	e.weak = e.weakSlices(est.Volumes, -1)
 	e.region = dilate(est.Mask, g.N, regionRim)
 	// Outside the region, and where nothing reaches, the plain mean.
