@@ -56,6 +56,11 @@ type Options struct {
 	External  []float32 // with [External]: a volume on the same grid
 	SliceAxis int       // axis along which slices are stacked: 0, 1, 2
 	Workers   int       // goroutines; results do not depend on it
+
+	// Progress, if not nil, is told roughly what share of the work is done (0 to 1; it may
+	// fall when a pass has to be repeated). It is called from any goroutine, one call at
+	// a time, and delays the work while it runs; results do not depend on it.
+	Progress func(share float64)
 }
 
 // Estimate is the outcome for a run.
@@ -67,6 +72,10 @@ type Estimate struct {
 	ReferenceIndex int        // the volume at whose pose the reference stands; -1 for an external one
 	Passes         int        // how often every volume was matched
 	Parameters     []Parameter
+
+	// Progress, if not nil, is told what [EstimatePath] and [PathEstimate.Rebuilt] have
+	// done of their work, as with [Options]. EstimateVolumes leaves it nil.
+	Progress func(share float64)
 
 	unknown []bool // voxels the reference has no data for; nil: none
 }
@@ -140,6 +149,7 @@ func EstimateVolumes(ctx context.Context, g Grid, data []float32, nt int, opt Op
 		panic("realign: series and grid differ in size")
 	}
 	e := &estimator{ctx: ctx, g: g, nt: nt, opt: opt, workers: max(1, opt.Workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }}
+	e.done.tell = opt.Progress
 	e.prepare()
 	return e.run()
 }
@@ -152,6 +162,7 @@ type estimator struct {
 	opt     Options
 	workers int
 	volume  func(t int) []float32
+	done    progress
 
 	sigma   float64 // mm, fine
 	scratch []*workspace
@@ -239,6 +250,7 @@ func (e *estimator) fineEffort() effort {
 // against aligns all volumes with a given reference, one pass.
 func (e *estimator) against(image []float32, index int) (*Estimate, error) {
 	m := e.newModel(image, nil, 5)
+	e.done.phase(0, 1, e.nt)
 	vols, err := e.pass(m, nil, e.fineEffort())
 	if err != nil {
 		return nil, err
@@ -262,6 +274,7 @@ func (e *estimator) againstMean() (*Estimate, error) {
 	passes, target := 0, 0
 	for _, t := range []int{0, e.nt / 2, e.nt - 1} {
 		m := e.newModel(e.volume(t), nil, 3)
+		e.done.phase(0, roughDone, e.nt)
 		v, err := e.pass(m, nil, rough)
 		if err != nil {
 			return nil, err
@@ -289,11 +302,13 @@ func (e *estimator) againstMean() (*Estimate, error) {
 			used[t] = vols[t].State == Aligned
 		}
 		vols[first].Pose = Identity
+		e.done.phase(roughDone, averageDone, e.nt)
 		image, unknown, err := e.average(vols, weak)
 		if err != nil {
 			return nil, err
 		}
 		m = e.newModel(image, unknown, 5)
+		e.done.phase(averageDone, 1, e.nt)
 		next, err := e.pass(m, vols, e.fineEffort())
 		if err != nil {
 			return nil, err
@@ -402,6 +417,7 @@ func firstAligned(vols []Volume) int {
 func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, error) {
 	vols := make([]Volume, e.nt)
 	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, t int) error {
+		defer e.done.piece()
 		w := e.scratch[worker]
 		w.fine.run(w.vFine, e.volume(t))
 		if known != nil && known[t].State != Lost {
@@ -628,6 +644,7 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 		batch := use[:min(len(use), len(buf))]
 		use = use[len(batch):]
 		err := parallel.For(e.ctx, e.workers, len(batch), func(worker, i int) error {
+			defer e.done.piece()
 			t := batch[i]
 			if vols[t].Pose == Identity {
 				copy(buf[i], e.volume(t))

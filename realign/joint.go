@@ -37,7 +37,10 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 	template := newSpline(g.N, 5, Odd)
 	template.load(p.Reference)
 	inv := mustInvert(g.Affine)
+	done := &progress{tell: p.Progress}
+	done.phase(0, takenOut, nt)
 	err := parallel.For(ctx, workers, nt, func(_, n int) error {
+		defer done.piece()
 		vol := data[n*nv:][:nv]
 		back := make([][16]float64, g.N[s.Axis])
 		for k := range back {
@@ -74,7 +77,9 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		}
 	}
 	res := make([]*spline, workers)
+	done.phase(inTime, 1, nt)
 	return parallel.For(ctx, workers, nt, func(worker, n int) error {
+		defer done.piece()
 		if res[worker] == nil {
 			res[worker] = newSpline(g.N, degree, Odd)
 		}
