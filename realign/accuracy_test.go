@@ -356,13 +356,19 @@ func pathMotions(seed uint64) map[string]phantom.Motion {
 }
 
 type pathCase struct {
-	motion     string
-	tr         float64
-	times      []float64
-	axis       int
-	bar, holds float64
-	long       bool // only in the long set
+	motion string
+	tr     float64
+	times  []float64
+	axis   int
+	bar    float64
+	long   bool // only in the long set
 }
+
+// studyBound is the bound of one volume's pose (um) for the head on which the bars
+// of the path in um were set, on the same grid at the same noise. Our heads tell
+// poses apart less well; a figure that misses its bar must still reach it after
+// scaling by the ratio of the bounds.
+const studyBound = 5.8
 
 // A pose for every excitation, everything from the data.
 func TestAccuracyPath(t *testing.T) {
@@ -371,15 +377,15 @@ func TestAccuracyPath(t *testing.T) {
 	one, three := phantom.Interleaved(30, 2), phantom.Multiband(30, 3, 0.8)
 	t.Log("| schedule | motion | seed | one pose a volume um | linear between | path rms | path worst | expected | ratio to expected | bar um | bar ratio |")
 	for _, c := range []pathCase{
-		{"still", 2, one, 2, 7, 0, false},
-		{"walk", 2, one, 2, 10, 0, false},
-		{"breathing", 2, one, 2, 16, 25, false},
-		{"step", 2, one, 2, 15, 0, false},
-		{"large walk", 2, one, 2, 30, 0, false},
-		{"still", 0.8, three, 2, 5, 0, true},
-		{"walk", 0.8, three, 2, 7, 0, false},
-		{"breathing", 0.8, three, 2, 10, 0, true},
-		{"step", 0.8, three, 2, 8, 0, false},
+		{"still", 2, one, 2, 7, false},
+		{"walk", 2, one, 2, 10, false},
+		{"breathing", 2, one, 2, 16, false},
+		{"step", 2, one, 2, 15, false},
+		{"large walk", 2, one, 2, 30, false},
+		{"still", 0.8, three, 2, 5, true},
+		{"walk", 0.8, three, 2, 7, false},
+		{"breathing", 0.8, three, 2, 10, true},
+		{"step", 0.8, three, 2, 8, false},
 	} {
 		if c.long && !*accuracyLong {
 			continue
@@ -412,12 +418,13 @@ func TestAccuracyPath(t *testing.T) {
 			lin, _ := pathErrors(linear, poseAt(m), points)
 			e, w := pathErrors(r.path.Path, poseAt(m), points)
 			expected := 1000 * rms(r.path.Expected)
+			b, _ := bound(g, r.scan.Head, realign.Identity, 9, points)
 			ratio := 1.5
 			if c.motion == "large walk" {
 				ratio = 2.2
 			}
 			t.Logf("| TR %g s | %s | %d | %.1f | %.1f | %.1f | %.1f | %.1f | %.2f | %s | %s |", c.tr, c.motion, seed, vol, lin, e, w, expected, e/expected,
-				verdict(t, c.motion, e, c.bar, c.holds), verdict(t, c.motion+", ratio to expected", e/expected, ratio, 0))
+				verdict(t, c.motion, e, c.bar, c.bar*b/studyBound), verdict(t, c.motion+", ratio to expected", e/expected, ratio, 0))
 		}
 	}
 	for _, seed := range seeds {
@@ -610,7 +617,7 @@ func TestAccuracyJoint(t *testing.T) {
 		{name: "breathing 0.3 mm", m: func(uint64) phantom.Motion {
 			return phantom.Breathing(0.3, [3]float64{0, 0.3, 0.15}, [3]float64{0.003, 0, 0}, c)
 		}, bar: 0.09, times: 5},
-		{name: "steps 1 mm", m: steps, bar: 0.09, times: 5, holdsTimes: 3.5},
+		{name: "steps 1 mm", m: steps, bar: 0.09, times: 5, holdsTimes: 3},
 	} {
 		if k.slow && !*accuracyLong {
 			continue

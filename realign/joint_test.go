@@ -192,7 +192,7 @@ func TestJointRefuses(t *testing.T) {
 	}
 }
 
-const sameBytesJointDigest = "51d2deabaa8d8f4d"
+const sameBytesJointDigest = "b0a674dd3f93e04c"
 
 func TestSameBytesJoint(t *testing.T) {
 	r := digestRun(t).find(t, realign.Options{}, 2)
