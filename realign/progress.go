@@ -31,16 +31,16 @@ func (p *progress) piece() {
 	p.tell(p.at)
 }
 
-// Shares of the whole at which phases end: measured on real series of 64x64x36x200 and
-// 104x104x72x60. Where a series differs the shares are off, and nothing else.
+// Shares of the whole at which phases end: measured on 40x48x30x60 with one worker. Where
+// a series differs the shares are off, and nothing else.
 const (
-	roughDone   = 0.25 // of EstimateVolumes with a mean: the first pass
-	averageDone = 0.35
+	roughDone   = 0.34 // of EstimateVolumes with a mean: the first pass
+	averageDone = 0.55
 
-	firstMeasured = 0.30 // of EstimatePath: the first pass
-	firstRebuilt  = 0.45
-	nextMeasured  = 0.70
+	firstMeasured = 0.27 // of EstimatePath: the first pass
+	firstRebuilt  = 0.48
+	nextMeasured  = 0.65
 
-	takenOut = 0.40 // of Joint
-	inTime   = 0.55
+	takenOut = 0.42 // of Joint
+	inTime   = 0.50
 )
