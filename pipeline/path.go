@@ -38,9 +38,16 @@ func (w *worker) estimatePath(ctx context.Context, p *Plan, g realign.Grid, s *l
 	case !p.timed():
 		po.path = realign.FromVolumes(g, schedule, po.est, "no slice times, so no instant is known for a slice")
 	default:
-		po.path, err = realign.EstimatePath(ctx, g, s.data, s.nt, schedule, po.est, w.workers)
+		est := *po.est
+		est.Progress = w.within(p, "estimate", volumesShare, 1)
+		po.path, err = realign.EstimatePath(ctx, g, s.data, s.nt, schedule, &est, w.workers)
 	}
 	return err
+}
+
+// followed reports whether volume poses are to be followed with a path.
+func (p *Plan) followed() bool {
+	return p.Settings.Motion == "path" && p.Timing.TR > 0 && p.timed()
 }
 
 // timed reports whether every slice has a time.
@@ -92,14 +99,20 @@ func (w *worker) joint(ctx context.Context, p *Plan, po *posed, data []float32, 
 	}
 	schedule := p.Schedule
 	schedule.TR = p.Timing.TR
-	path := po.path
+	path, from := *po.path, 0.0
 	if !path.Used || p.Pose.File != p.Run.File {
 		// Only a path leaves a sharp reference behind, and only of its own series.
-		var err error
-		if path, err = path.Rebuilt(ctx, p.Grid, data, nt, schedule, po.est, w.workers); err != nil {
+		const rebuilt = 0.68 // of the stage's time, roughly
+		from = rebuilt
+		est := *po.est
+		est.Progress = w.within(p, "joint", 0, rebuilt)
+		again, err := path.Rebuilt(ctx, p.Grid, data, nt, schedule, &est, w.workers)
+		if err != nil {
 			return err
 		}
+		path = *again
 	}
+	path.Progress = w.within(p, "joint", from, 1)
 	return path.Joint(ctx, p.Grid, data, nt, schedule, p.Timing.Temporal, p.instants()[0], p.Settings.kernel(), po.lost(), p.Settings.degree(), w.workers)
 }
 

@@ -37,6 +37,7 @@ type worker struct {
 	out     string
 	workers int // goroutines inside a run
 	stage   func(p *Plan, stage string)
+	share   func(p *Plan, stage string, share float64) // nil: nobody listens
 }
 
 // loaded is a series in memory with the digest of the bytes it was decoded from.
@@ -299,6 +300,11 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	if p.poseHeader != nil {
 		g.Affine = p.poseHeader.Affine()
 	}
+	volumes := 1.0
+	if p.followed() {
+		volumes = volumesShare
+	}
+	opt.Progress = w.within(p, "estimate", 0, volumes)
 	est, err := realign.EstimateVolumes(ctx, g, s.data, s.nt, opt)
 	var few *realign.TooFewAligned
 	if errors.As(err, &few) {
@@ -311,6 +317,18 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	}
 	po.est = est
 	return po, w.estimatePath(ctx, p, g, s, po)
+}
+
+// volumesShare is roughly what part of the time of an estimate with a path goes into the
+// volume poses it starts from.
+const volumesShare = 0.26
+
+// within gives a callback for work that takes a stage from one share to another.
+func (w *worker) within(p *Plan, stage string, from, to float64) func(share float64) {
+	if w.share == nil {
+		return nil
+	}
+	return func(share float64) { w.share(p, stage, from+float64(share*(to-from))) }
 }
 
 // standard gives the reference volume, the head mask and its centroid.

@@ -36,6 +36,7 @@ type EventKind string
 const (
 	RunStarted EventKind = "started"
 	RunStage   EventKind = "stage"
+	RunShare   EventKind = "share"   // part of a stage is done; often
 	RunWaiting EventKind = "waiting" // another process holds the run
 	RunEnded   EventKind = "ended"
 )
@@ -44,7 +45,8 @@ const (
 type Event struct {
 	Kind    EventKind
 	Plan    *Plan
-	Stage   string   // with RunStage
+	Stage   string   // with RunStage and RunShare
+	Share   float64  // with RunShare: roughly what share of the stage is done, 0 to 1; it may fall
 	Why     string   // with RunStarted: why a run that OUT holds something of is computed again, "" for a new one
 	Outcome *Outcome // with RunEnded
 }
@@ -146,6 +148,11 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 			w := &worker{out: job.Out, workers: workers, stage: func(p *Plan, s string) {
 				observe(Event{Kind: RunStage, Plan: p, Stage: s})
 			}}
+			if job.Observe != nil {
+				w.share = func(p *Plan, s string, share float64) {
+					observe(Event{Kind: RunShare, Plan: p, Stage: s, Share: share})
+				}
+			}
 			for i, o := range w.guarded(ctx, u, job, observe) {
 				if o.Figures != nil {
 					o.Outside = job.Limits.Outside(o.Figures)

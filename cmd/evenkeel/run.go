@@ -72,6 +72,7 @@ func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
 	s := &session{stdin: stdin, stdout: &output{w: stdout}, stderr: stderr, log: &logger{w: stderr}}
 	defer func() {
 		if v := recover(); v != nil {
+			s.log.stopProgress()
 			code = s.fail(&pipeline.BugError{Value: v, Stack: debug.Stack()})
 		}
 	}()
