@@ -112,6 +112,9 @@ func (p *Plan) unit() string { return path.Join(p.Run.Dir, p.Run.Group) }
 const (
 	fixedPerVoxel  = 340
 	workerPerVoxel = 110
+	// bytesPerSlot is what a pose path keeps for each excitation: its poses, what the
+	// images say of it (twice), and the rows of the banded equations (twice).
+	bytesPerSlot = 2600
 	// runOverhead stands for the program, tables, compression buffers and
 	// the allocator.
 	runOverhead = 32 << 20
@@ -137,6 +140,9 @@ func (p *Plan) Memory(workers int) int64 {
 	fixed := int64(fixedPerVoxel)
 	if p.Settings.Reference.Word == "sbref" {
 		fixed += 4 // read beside the series that is matched to it
+	}
+	if p.Settings.Motion == "path" && p.timed() {
+		work += bytesPerSlot * int64(p.Volumes) * int64(len(p.Schedule.Shots()))
 	}
 	return nv*(4*int64(p.Volumes)+fixed) + work + runOverhead
 }
