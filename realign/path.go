@@ -36,7 +36,7 @@ type PathEstimate struct {
 	Reason string
 
 	Sigma          float64 // noise, in units of the images: scale of the residuals
-	VolumeResidual float64 // rms residual of the weighted pixels, one pose a volume, over Sigma
+	VolumeResidual float64 // scale of the residuals with one pose a volume, rms over slots, over Sigma
 	PathResidual   float64 // the same along the path
 	Explained      float64 // share of the variance inside the head that the template explains
 	StrengthShift  float64 // of the prior, per mm^2
@@ -53,7 +53,7 @@ type PathEstimate struct {
 // Constants of the path, each with its reason.
 const (
 	pathPasses = 2 // passes over the data, each with a template of its own: a third changed poses by less than the noise
-	// pathIterations of one pass, at most: the first starts 0.1 to 0.5 mm off,
+	// Iterations of a pass, at most: the first starts 0.1 to 0.5 mm off,
 	// where the slope of the template changes by a few percent.
 	pathFirstIterations = 4
 	pathNextIterations  = 2
@@ -263,6 +263,11 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		{"rim_voxels", pathRim},
 		{"degrees_of_freedom", freedom},
 		{"biweight_cut", tukeyCut},
+		{"quietest_share", quietest},
+		{"corrupt_scale", corruptScale},
+		{"pull_scale", pullScale},
+		{"quiet_share", quietShare},
+		{"excess_cost", excessCost},
 	}
 	return out, nil
 }
