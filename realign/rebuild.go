@@ -156,16 +156,19 @@ func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {
 	smooth := make([]float32, len(v))
 	s.run(smooth, v)
 	var inside []float32
+	level := 0.0
 	for i, in := range e.est.Mask {
 		if in {
 			inside = append(inside, smooth[i])
+			level += float64(float64(e.image[i]) * float64(e.image[i]))
 		}
 	}
 	if len(inside) == 0 {
 		return
 	}
 	quiet := float64(quartile(inside))
-	noise := float64(e.sigma * e.sigma)
+	// As quietest: what interpolation leaves in a run without noise is no activity.
+	noise := max(float64(e.sigma*e.sigma), float64(quietest*quietest*float64(level/float64(len(inside)))))
 	e.voxel = make([]float32, len(v))
 	for i := range e.voxel {
 		x := max(0, float64(smooth[i])-float64(quietShare*quiet))
