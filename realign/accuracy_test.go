@@ -595,7 +595,8 @@ func TestAccuracyJoint(t *testing.T) {
 	}
 	steps := func(seed uint64) phantom.Motion {
 		m := walk(seed, 0.01)
-		for i, at := range []float64{9.3, 20.7, 31.2, 40.9, 51.3} {
+		for i := range volumes(30) / 6 { // one in about ten seconds
+			at := 9.3 + 10.4*float64(i) + 0.7*float64(i%3)
 			sg := float64(1 - 2*(i%2))
 			m = phantom.Jerk(m, at, [3]float64{0.5 * sg, 0.6 * sg, 0.3 * sg}, [3]float64{0.006 * sg, 0, 0.004 * sg}, c)
 		}
