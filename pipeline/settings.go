@@ -39,10 +39,10 @@ func DefaultSettings() Settings {
 		Time:       "fourier",
 		TimeOrigin: Origin{Word: "middle"},
 		SincReach:  8,
-		Motion:     "path",
+		Motion:     "volume",
 		Reference:  Standard{Word: "mean"},
 		Space:      "quintic",
-		Order:      "joint",
+		Order:      "time-first",
 		Store:      "float32",
 	}
 }

@@ -15,7 +15,7 @@ import (
 
 // The defaults, as README's table of options and the help give them.
 func TestDefaults(t *testing.T) {
-	want := `{"time":"fourier","time_origin":"middle","sinc_reach":8,"motion":"path","reference":"mean","space":"quintic","order":"joint","skip":0,"store":"float32","accept":[],"events":false}`
+	want := `{"time":"fourier","time_origin":"middle","sinc_reach":8,"motion":"volume","reference":"mean","space":"quintic","order":"time-first","skip":0,"store":"float32","accept":[],"events":false}`
 	got, err := json.Marshal(DefaultSettings())
 	if err != nil || string(got) != want {
 		t.Errorf("got %s (%v)\nwant %s", got, err, want)
