@@ -129,7 +129,7 @@ const (
 	fanBelow = 0.95
 	// alignedFit: of real volumes, those that moved by millimetres and were
 	// matched correctly correlate above 0.9, those turned by tens of degrees
-	// while they were taken, or partly out of the field, stay below 0.85.
+	// while they were taken, or partly out of the field, reach 0.87 at most.
 	alignedFit = 0.90
 	// doubtfulFit: below, the pose found is no better than others nearby.
 	doubtfulFit = 0.5

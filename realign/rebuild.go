@@ -140,7 +140,7 @@ func (e *pathEstimator) rebuild(projections int) error {
 // variance is smoothed by a voxel, for that of a single one is too uncertain.
 const (
 	quietShare = 1.3
-	excessCost = 12 // found by simulation: 22 um became 12.5 with many active spots
+	excessCost = 12 // from a simulation study that preceded this code, where 22 um became 12.5 with many active spots
 )
 
 func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {

@@ -32,9 +32,9 @@ func realSeries(t *testing.T, name string) (realign.Grid, []float32, int) {
 // A volunteer who moves on purpose (README of the series): volumes 2 to 4 are
 // turned by 20 to 55 degrees about the vertical axis, 6 and 7 nod partly out of
 // the field, the others move by millimetres. An independent aligner found turns
-// of 22-39, 52-56 and 13-36 degrees in volumes 2, 3 and 4, against volume 0, with a
-// residual that is flat over several degrees, as the head turned while the volumes
-// were taken: 4 degrees more are allowed on either side.
+// of 22-39, 52-56 and 13-36 degrees in volumes 2, 3 and 4, against volume 0, as
+// best it could: the head turned while the volumes were taken, so no one angle is
+// true. 4 degrees more, a judgement and not a measurement, are allowed on either side.
 func TestVolunteerWhoMoves(t *testing.T) {
 	for _, task := range []string{"interleavedup", "interleaveddown", "sequentialup", "sequentialdown"} {
 		g, data, nt := realSeries(t, "sub-01/func/sub-01_task-"+task+"_bold.nii.gz")
