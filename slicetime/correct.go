@@ -83,11 +83,10 @@ func WorkBytes(nx, ny, nz, nt, axis, workers int, opt Options) int64 {
 	if nt < MinVolumes || axis < 0 || axis > 2 {
 		return 0
 	}
-	e := extensionFor(nt)
-	length := int64(nt + 2*e)
+	length := int64(nt + 2*extension)
 	tables := int64(2*MaxReach+1) * 8
 	if opt.Kernel == Fourier {
-		m := int64(fftLength((nt + 2*e + 1) / 2))
+		m := int64(fftLength((nt + 2*extension + 1) / 2))
 		length = 2 * m
 		tables = 4 * 8 * m
 	}

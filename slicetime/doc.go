@@ -18,8 +18,8 @@
 //     autoregression of order 8 fitted to the voxel itself: forward and backward
 //     least squares (modified covariance; Nuttall 1976, Ulrych and Clayton 1976,
 //     Marple 1980) with a ridge of 1e-2 of the mean diagonal (extend.go). The
-//     outer 16 are led to zero by a half cosine. Series shorter than 20 are
-//     extended by odd reflection, f(-k) = 2 f(0) - f(k), as far as they reach.
+//     outer 16 are led to zero by a half cosine. Series of n < 20 samples take
+//     order n/3, rounded down, and a ridge of 1e-2 (20/n)^2.
 //  3. The extended residual is interpolated at the shifted instants:
 //     [Fourier] multiplies bin k of its transform by exp(+2 pi i k s/N), the
 //     Nyquist bin by cos(pi s) so that the result stays real (fourier.go), or
@@ -51,7 +51,16 @@
 //
 //	ends, 40 volumes     no noise   noise sd 1
 //	either kernel          .07        .94 to .97
-//	ends, 19 volumes       .14       1.5       (odd reflection)
+//	ends, 20 volumes       .09       1.07
+//	ends, 19 volumes       .09       1.00
+//	ends, 16 volumes       .10        .98
+//	ends, 10 volumes       .15        .99
+//	ends,  6 volumes       .23       1.08
+//
+// White noise alone, worst of six shifts to half a sample: no volume's SD grows
+// by more than a tenth at any length (1.08 at 4 volumes, 1.10 at 6, 1.06 at 8),
+// nor, from 9 on, by more than 0.03; that of a series in time never grows (0.98
+// to 1.00).
 //
 // Slice by slice, tones of up to 0.4 cycles a volume come back within 4e-5 of
 // their amplitude and 4e-5 rad (Fourier), or 2.2e-2 and 1.1e-2 rad (Sinc, reach
@@ -101,5 +110,6 @@
 //
 //   - Unequally spaced volumes.
 //   - A shift that changes along the run (slices mapped through a moving head).
-//   - Series shorter than 20 volumes still gain noise at their ends.
+//   - Series of up to 8 volumes gain up to a tenth of noise at their ends, and
+//     their prediction follows a signal less well than that of longer ones.
 package slicetime

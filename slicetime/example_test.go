@@ -66,5 +66,5 @@ func ExampleShifter_Shift() {
 	s := slicetime.NewShifter(len(late), (0-0.5)/2, slicetime.Options{})
 	fmt.Printf("%.2f\n", s.Shift(nil, late))
 	// Output:
-	// [8.94 12.12 10.92 12.60 12.40 12.95]
+	// [9.80 11.79 11.04 12.64 12.18 13.46]
 }

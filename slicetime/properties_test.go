@@ -25,7 +25,7 @@ func drawOptions(t *rapid.T) Options {
 	return Options{}
 }
 
-// Lengths on both sides of every boundary: the least, around arLeast, transform lengths.
+// Lengths on both sides of every boundary: the least, around arFull, transform lengths.
 func drawLength(t *rapid.T) int {
 	return rapid.OneOf(rapid.IntRange(MinVolumes, 24), rapid.IntRange(25, 130)).Draw(t, "n")
 }
@@ -239,7 +239,7 @@ func TestProperty10Whole(t *testing.T) {
 
 func TestProperty11Prediction(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
-		n := rapid.IntRange(arLeast, 90).Draw(t, "n")
+		n := rapid.IntRange(MinVolumes, 90).Draw(t, "n")
 		rate := rapid.Float64Range(.5, 2).Draw(t, "rate")
 		x := make([]float32, n)
 		for i, v := range drawSeries(t, n) {

@@ -32,6 +32,27 @@ func TestShots(t *testing.T) {
 	}
 }
 
+// A slice whose time is not a number is in no shot, wherever it stands in the
+// list, and takes none of the others with it. What needs an instant for every
+// slice refuses such a schedule: see "time" in TestCorrectRefuses.
+func TestShotsLeaveOutUntimedSlices(t *testing.T) {
+	nan := math.NaN()
+	for _, c := range []struct {
+		times []float64
+		want  []Shot
+	}{
+		{[]float64{nan, .5, 0}, []Shot{{0, []int{2}}, {.5, []int{1}}}},
+		{[]float64{.5, nan, 0, nan, .5}, []Shot{{0, []int{2}}, {.5, []int{0, 4}}}},
+		{[]float64{.5, 0, nan}, []Shot{{0, []int{1}}, {.5, []int{0}}}},
+		{[]float64{nan, 1, nan, nan}, []Shot{{1, []int{1}}}},
+		{[]float64{nan, nan}, nil},
+	} {
+		if d := cmp.Diff(c.want, (Schedule{Times: c.times}).Shots()); d != "" {
+			t.Errorf("%v: %s", c.times, d)
+		}
+	}
+}
+
 func TestMiddle(t *testing.T) {
 	for _, c := range []struct {
 		times []float64

@@ -85,16 +85,13 @@ def autoregression(r, q=8, ridge=1e-2):
     return np.linalg.lstsq(A, b, rcond=None)[0]
 
 def extended(r):
-    n = len(r)
-    if n < 20:
-        e = min(32, n - 1); left = 2 * r[0] - r[1:e + 1]; right = 2 * r[-1] - r[::-1][1:e + 1]
-    else:
-        e = 32; a = autoregression(r); top = 2 * abs(r).max()
-        def run(x):
-            x = list(x)
-            for _ in range(e): x.append(float(np.clip(np.dot(a, x[:-9:-1]), -top, top)))
-            return np.array(x[-e:])
-        right = run(r); left = run(r[::-1])
+    n = len(r); e = 32; top = 2 * abs(r).max()
+    a = autoregression(r) if n >= 20 else autoregression(r, max(1, n // 3), 1e-2 * (20 / n) ** 2); q = len(a)
+    def run(x):
+        x = list(x)
+        for _ in range(e): x.append(float(np.clip(np.dot(a, x[:-q - 1:-1]), -top, top)))
+        return np.array(x[-e:])
+    right = run(r); left = run(r[::-1])
     h = e // 2; w = np.ones(e); w[e - h:] = .5 + .5 * np.cos(np.pi * np.arange(1, h + 1) / (h + 1))
     return e, np.concatenate([(left * w)[::-1], r, right * w])
 
@@ -121,7 +118,7 @@ def moved(x, shift, kernel, reach=8):
 
 def whole(rng):
     cases = []
-    for n in (4, 5, 7, 19, 20, 21, 40, 76, 99):
+    for n in (4, 5, 6, 7, 10, 16, 19, 20, 21, 40, 76, 99):
         t = np.arange(n)
         slow = np.cumsum(rng.normal(0, 1, n)); signals = {
             "walk": 1000 + 4 * slow, "noise": 500 + 10 * rng.normal(0, 1, n),
