@@ -64,16 +64,13 @@ const AlignedFit = alignedFit
 // RebuildOn gives the path with its reference rebuilt from another recording of
 // the same run (noise-free, say).
 func RebuildOn(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, p *PathEstimate, workers int) *PathEstimate {
-	nv := g.voxels()
-	e := &pathEstimator{
-		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: workers, volume: func(t int) []float32 { return data[t*nv:][:nv] }},
-		schedule:  s, est: est, shots: s.Shots(),
-	}
+	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
+	e.shots = s.Shots()
 	e.lay()
 	copy(e.poses, p.Path.Poses)
 	e.image = append([]float32(nil), est.Reference...)
 	e.setTemplate(e.image)
-	e.region = dilate(est.Mask, g.N, regionRim)
+	e.sliceScale, e.spoilt = nil, p.spoilt
 	if err := e.rebuild(2); err != nil {
 		panic(err)
 	}

@@ -11,7 +11,7 @@ import (
 // instant and one head position without interpolating anatomy in time:
 //
 //  1. E(x) = I(x) - g T(M^-1 x): from every slice, at its own pose, what the
-//     template predicts of it is taken out, at the volume's brightness.
+//     template predicts of it is taken out, at the brightness of its instant.
 //  2. E is moved from each slice's time to the instant t: a scanner voxel's E is
 //     free of the anatomy that motion drags through it, so it may be interpolated.
 //  3. out(X) = g T(X) + E(M(n TR + t) X): E is mapped to the reference by the
@@ -34,6 +34,13 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		panic("realign: series, grid and marks differ in size")
 	}
 	workers = max(1, workers)
+	// Brightness goes through time by the kernel that the slices go through.
+	taken := constant(p.Gains, g.N[s.Axis])
+	given := taken
+	if move {
+		taken = gainsAt(p.Gains, lost, s, s.Times, opt)
+		given = gainsAt(p.Gains, lost, s, []float64{t}, opt)
+	}
 	template := newSpline(g.N, 5, Odd)
 	template.load(p.Reference)
 	inv := mustInvert(g.Affine)
@@ -46,16 +53,18 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		for k := range back {
 			back[k] = mul(inv, mul(p.Slot(n, k).Inverse().Matrix(), g.Affine))
 		}
-		gain := newGainRows(g, p.Centre, &p.Gains[n])
+		gain := make([]gainRows, len(back))
+		for k := range gain {
+			gain[k] = newGainRows(g, p.Centre, &taken[n][k])
+		}
 		i := 0
 		for z := range g.N[2] {
 			for y := range g.N[1] {
-				base := gain.row(y, z)
 				for x := range g.N[0] {
-					fx := float64(x)
-					at := applyAffine(&back[[3]int{x, y, z}[s.Axis]], fx, float64(y), float64(z))
-					gn := base + float64(gain.step*fx)
-					vol[i] -= float32(gn * float64(template.value(at[0], at[1], at[2])))
+					k := [3]int{x, y, z}[s.Axis]
+					v := [3]float64{float64(x), float64(y), float64(z)}
+					at := applyAffine(&back[k], v[0], v[1], v[2])
+					vol[i] -= float32(gain[k].at(v) * float64(template.value(at[0], at[1], at[2])))
 					i++
 				}
 			}
@@ -91,7 +100,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 			r.load(vol)
 		}
 		m := mul(inv, mul(pose.Matrix(), g.Affine))
-		gain := newGainRows(g, p.Centre, &p.Gains[n])
+		gain := newGainRows(g, p.Centre, &given[n][0])
 		i := 0
 		for z := range g.N[2] {
 			for y := range g.N[1] {

@@ -95,19 +95,19 @@ func TestJointOfAStillHeadIsCorrect(t *testing.T) {
 func TestJointFollowsThePathAndTheGain(t *testing.T) {
 	g := medium
 	m := phantom.Walk(5, 2, 0.03, 0.05, [3]float64{})
-	r := record(t, g, 2, 8, 2, phantom.Interleaved(24, 2), m, 0)
-	// A gain of each volume, as of a magnetisation that settles, and shading that
-	// stands still.
+	const nt = 12
+	r := record(t, g, 2, nt, 2, phantom.Interleaved(24, 2), m, 0)
+	// A brightness that drifts and sways, and shading that stands still.
 	r.scan.Gain = func(tt float64, x [3]float64) float64 {
-		return 1 + 0.05*math.Sin(2*math.Floor(tt/2)) + 0.03*x[1]/80
+		return 1 + 0.005*tt + 0.02*math.Sin(0.5*tt) + 0.03*x[1]/80
 	}
 	r.simulate(t)
 	r.find(t, realign.Options{}, 2)
-	nv := len(r.data) / 8
+	nv := len(r.data) / nt
 	for _, ref := range []float64{0, 1.3} {
 		out := joint(t, r, r.path, true, ref, nil, 2)
 		sum, count, plain := 0.0, 0.0, 0.0
-		for n := range 8 {
+		for n := 1; n < nt-1; n++ { // nobody knows how brightness went on past the ends
 			u := 2*float64(n) + ref
 			pose := r.path.At(n, u)
 			i := 0
@@ -192,7 +192,7 @@ func TestJointRefuses(t *testing.T) {
 	}
 }
 
-const sameBytesJointDigest = "b0a674dd3f93e04c"
+const sameBytesJointDigest = "f290d5587ffb53b9"
 
 func TestSameBytesJoint(t *testing.T) {
 	r := digestRun(t).find(t, realign.Options{}, 2)

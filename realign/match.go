@@ -33,6 +33,7 @@ type effort struct {
 	robust     bool // weights by slice and by Tukey's biweight
 	thin       bool // every other voxel only
 	sliceAxis  int
+	skip       []bool // slices that take no part; nil: all do
 }
 
 // matcher aligns smoothed volumes with a template. It owns its scratch and
@@ -49,6 +50,8 @@ type matcher struct {
 type point struct {
 	at    [3]int32
 	slice int32
+	near  int32      // voxel of the template nearest to the matching point
+	w     float32    // weight of that voxel
 	head  bool       // inside the head
 	phi   [3]float32 // scanner coordinates for the gain, from the centre, / gainReach
 	jac   [6]float32 // gradient and moment of the template, per mm and per rad
@@ -75,13 +78,13 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 	}
 	for k := lo[2]; k <= hi[2]; k++ {
 		for j := lo[1]; j <= hi[1]; j++ {
-			i := lo[0]
-			step := 1
-			if e.thin {
-				i += (lo[0] + j + k) & 1
-				step = 2
-			}
-			for ; i <= hi[0]; i += step {
+			for i := lo[0]; i <= hi[0]; i++ {
+				if e.thin && white(n, i, j, k) {
+					continue
+				}
+				if e.skip != nil && e.skip[[3]int{i, j, k}[e.sliceAxis]] {
+					continue
+				}
 				y := applyAffine(&b, float64(i), float64(j), float64(k))
 				if !t.inMargin(y) {
 					continue
@@ -97,7 +100,10 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				}
 				yw := applyAffine(&toCentre, y[0], y[1], y[2])
 				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
-				q := point{at: [3]int32{int32(i), int32(j), int32(k)}, head: t.head[near]}
+				q := point{at: [3]int32{int32(i), int32(j), int32(k)}, near: int32(near), w: 1, head: t.head[near]}
+				if t.weight != nil {
+					q.w = t.weight[near]
+				}
 				q.slice = q.at[e.sliceAxis]
 				for a := range xw {
 					q.phi[a] = float32(xw[a] * (1.0 / gainReach))
@@ -110,6 +116,13 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 			}
 		}
 	}
+}
+
+// white says which voxels thinning leaves out: those of one colour of a
+// chessboard that is its own mirror image, so that an array written the other way
+// round gives the same poses.
+func white(n [3]int, x, y, z int) bool {
+	return (min(x, n[0]-1-x)+min(y, n[1]-1-y)+min(z, n[2]-1-z))&1 != 0
 }
 
 // revalue evaluates the template anew at another pose, derivatives kept.
@@ -147,6 +160,11 @@ const nearMM = 0.01
 // changes by about a percent.
 const farMM = 0.1
 
+// settling: with few planes a match can go to and fro between two poses, each
+// of which takes in a voxel that leads to the other. After so many iterations,
+// which suffice from any start within capture range, the voxels stay as they are.
+const settling = 15
+
 // runaway is a step, in mm at the head's edge, that only a match without any
 // hold takes: nearly a head's length.
 const runaway = 150
@@ -178,7 +196,7 @@ func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found 
 			break
 		}
 		switch {
-		case distance(taken, f.pose, t.centre) > farMM:
+		case distance(taken, f.pose, t.centre) > farMM && f.iterations < settling:
 			m.selectPoints(t, vol, f.pose, e)
 			taken, valued = f.pose, f.pose
 		case distance(valued, f.pose, t.centre) > nearMM:
@@ -258,7 +276,7 @@ func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
 		r := float64(r32)
 		w := 1.0
 		if e.robust {
-			w = bySlice[m.pts[q].slice]
+			w = float64(bySlice[m.pts[q].slice] * float64(m.pts[q].w))
 			if u := r / cut; cut > 0 {
 				if u = 1 - float64(u*u); u <= 0 {
 					continue

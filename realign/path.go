@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"slices"
 
 	"evenkeel/internal/detmath"
 	"evenkeel/internal/parallel"
@@ -35,9 +36,15 @@ type PathEstimate struct {
 	Used   bool
 	Reason string
 
-	Sigma          float64 // noise, in units of the images: scale of the residuals
-	VolumeResidual float64 // scale of the residuals with one pose a volume, rms over slots, over Sigma
-	PathResidual   float64 // the same along the path
+	spoilt [][]bool // by volume and slice: left out of the reference
+
+	Sigma    float64 // noise, in units of the images: scale of the residuals
+	Evidence float64 // of the path, at the last step: log, up to a constant
+	LastStep float64 // the last change of a slot's pose, at most, mm at 80 mm
+	// Residuals of pixels that took no part in finding the path, over Sigma: their scale,
+	// rms over slots, with one pose a volume and along the path.
+	VolumeResidual float64
+	PathResidual   float64
 	Explained      float64 // share of the variance inside the head that the template explains
 	StrengthShift  float64 // of the prior, per mm^2
 	StrengthTurn   float64 // per rad^2
@@ -52,12 +59,16 @@ type PathEstimate struct {
 
 // Constants of the path, each with its reason.
 const (
-	pathPasses = 2 // passes over the data, each with a template of its own: a third changed poses by less than the noise
+	pathPasses  = 2    // passes over the data, each with a template of its own: a third changes poses by less than the noise ...
+	mostPasses  = 4    // ... unless the second still moved some slot by
+	settledStep = 0.05 // mm, three times the uncertainty of one
+	mostSpoilt  = 3
 	// Iterations of a pass, at most: the first starts 0.1 to 0.5 mm off,
 	// where the slope of the template changes by a few percent.
 	pathFirstIterations = 4
 	pathNextIterations  = 2
 	pathRim             = 1    // voxels around the head that take part: past them an unfiltered template is flat
+	pathMargin          = 2.0  // planes left out at each field edge: slices are not smoothed, and a spline is bent there
 	lastProjections     = 2    // of the last pass; more sharpen no further
 	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
 	// fewestData: a path is only worth its name where most slots see the head.
@@ -73,7 +84,8 @@ const (
 	// scale were at most pullScale of the usual one.
 	corruptScale = 6
 	pullScale    = 1.2
-	// slotPoints: with fewer pixels in a slot its scale cannot be told.
+	// slotPoints: with fewer pixels in a slot (half as many of every other pixel) its
+	// scale cannot be told.
 	slotPoints = 50
 	// quietest: pixels count as if their noise were at least this share of the
 	// signal. What interpolation leaves is a few ten-thousandths of the signal and
@@ -96,17 +108,22 @@ func EstimatePath(ctx context.Context, g Grid, data []float32, nt int, s sliceti
 	if len(data) != nv*nt || len(est.Volumes) != nt {
 		panic("realign: series, grid and estimate differ in size")
 	}
-	e := &pathEstimator{
-		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: max(1, workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }},
-		schedule:  s, est: est,
-	}
-	e.done.tell = est.Progress
+	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
 	return e.run()
+}
+
+func newPathEstimator(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) *pathEstimator {
+	e := &pathEstimator{estimator: newEstimator(ctx, g, data, nt, Options{SliceAxis: s.Axis, Workers: workers}), schedule: s, est: est}
+	e.done.tell = est.Progress
+	e.weak = e.weakSlices(est.Volumes, -1)
+	e.gains = est.sliceGains(g, s)
+	e.region = dilate(est.Mask, g.N, regionRim)
+	return e
 }
 
 // pathEstimator holds what the passes share.
 type pathEstimator struct {
-	estimator
+	*estimator
 	schedule slicetime.Schedule
 	est      *Estimate
 	shots    []slicetime.Shot
@@ -119,13 +136,19 @@ type pathEstimator struct {
 	t        *template // unsmoothed
 	image    []float32
 	region   []bool
-	weak     [][]bool
-	voxel    []float32 // weight of each voxel of the template; nil: all alike
-	thin     bool      // every other pixel only
-	sigma    float64   // noise as seen so far
-	scale    []float64 // residual scale of each slot, 0: no data
-	explain  [2]float64
-	work     []*slotWork
+	weak     [][]bool       // by volume and slice: as the volume match found
+	spoilt   [][]bool       // left out of the template; nil: not judged yet
+	gains    [][][4]float64 // by volume and slice
+	voxel    []float32      // weight of each voxel of the template; nil: all alike
+	thin     bool           // every other pixel only
+	others   bool           // with thin: the other half of them
+	sigma    float64        // noise as seen so far
+	scale    []float64      // residual scale of each slot, 0: no data
+	// sliceScale is the same by volume and slice.
+	sliceScale []float64
+	signal     float64 // rms in the head
+	explain    [2]float64
+	work       []*slotWork
 }
 
 // slotWork is the scratch of one worker.
@@ -134,6 +157,8 @@ type slotWork struct {
 	j   [][6]float32
 	wt  []float32
 	res []float32
+	// pred is the prediction that e is what is left of.
+	pred []float32
 }
 
 func (e *pathEstimator) run() (*PathEstimate, error) {
@@ -149,10 +174,17 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		p.Passes, p.Iterations = out.Passes, out.Iterations
 		return p
 	}
-	if len(e.schedule.Times) != e.g.N[e.schedule.Axis] {
-		return fallBack("no slice times, so no instant is known for a slice"), nil
-	}
 	e.shots = e.schedule.Shots()
+	timed := 0
+	for _, s := range e.shots {
+		timed += len(s.Slices)
+	}
+	switch n := e.g.N[e.schedule.Axis]; {
+	case timed == 0:
+		return fallBack("no slice times, so no instant is known for a slice"), nil
+	case timed != n || len(e.schedule.Times) != n:
+		return fallBack(fmt.Sprintf("times are known for %d of %d slices", timed, n)), nil
+	}
 	if len(e.shots) < 2 {
 		return fallBack("all slices are excited at one instant: one pose a volume is the path"), nil
 	}
@@ -162,7 +194,6 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	e.lay()
 	e.image = append([]float32(nil), e.est.Reference...)
 	e.setTemplate(e.image)
-	e.region = dilate(e.est.Mask, e.g.N, regionRim)
 	c := newChain(e.times, len(e.shots))
 	e.chain = c
 	slots := make([]slotData, len(e.times))
@@ -171,18 +202,17 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	if err := e.measure(slots, true); err != nil {
 		return nil, err
 	}
-	seen := 0
+	seen, posed := 0, (e.nt-countState(e.est.Volumes, Lost))*len(e.shots)
 	for _, s := range e.scale {
 		if s > 0 {
 			seen++
 		}
 	}
-	if float64(seen) < float64(fewestData*float64(len(slots))) {
-		return fallBack(fmt.Sprintf("only %d of %d excitations see enough of the head", seen, len(slots))), nil
+	if float64(seen) < float64(fewestData*float64(posed)) {
+		return fallBack(fmt.Sprintf("only %d of the %d excitations of volumes that are not lost see enough of the head", seen, posed)), nil
 	}
-	before, sigma := e.misfit()
-	e.sigma = sigma
-	for pass := range pathPasses {
+	e.sigma = e.noise()
+	for pass := 0; ; pass++ {
 		// The first pass ends with a template that is still to change: half of the
 		// pixels will do.
 		e.thin = pass == 0
@@ -190,16 +220,18 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		if pass > 0 {
 			iterations = pathNextIterations
 			e.done.phase(firstRebuilt, nextMeasured, e.nt*iterations)
+			// With the new template motion may show that the first one hid.
+			c.afresh = true
 		}
 		for range iterations {
 			if err := e.measure(slots, false); err != nil {
 				return nil, err
 			}
-			moved, _ := c.update(slots, e.p)
+			out.LastStep, out.Evidence = c.update(slots, e.p)
 			e.setPoses(c.offset)
 			out.Iterations++
-			_, e.sigma = e.misfit()
-			if moved < pathTolerance {
+			e.sigma = e.noise()
+			if out.LastStep < pathTolerance {
 				break
 			}
 		}
@@ -222,9 +254,18 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		// The next template takes the offsets up.
 		clear(c.offset)
 		e.setPoses(nil)
+		if pass == 0 {
+			if err := e.holdAgainst(out); err != nil {
+				return nil, err
+			}
+			if allowed := harm + harmLeaning/float64(countState(e.est.Volumes, Aligned)); out.PathResidual > float64(allowed*out.VolumeResidual) {
+				return fallBack(fmt.Sprintf("pixels that took no part fit worse along the path than with one pose a volume (residuals of %.3g against %.3g)", out.PathResidual, out.VolumeResidual)), nil
+			}
+		}
+		last := pass+1 >= pathPasses && (out.LastStep < settledStep || pass+1 >= mostPasses)
 		// One projection sharpens most, a second the rest; more change nothing.
 		projections := 1
-		if pass == pathPasses-1 {
+		if last {
 			projections = lastProjections
 			e.done.phase(nextMeasured, 1, e.nt*(1+projections))
 		} else {
@@ -233,33 +274,31 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		if err := e.rebuild(projections); err != nil {
 			return nil, err
 		}
+		if last {
+			break
+		}
 	}
-	// The verdict, by the last measurement: the last step moved no pose by enough to
-	// change it.
-	after, _ := e.misfit()
 	if _, ok := c.step(slots, e.p); !ok {
 		return fallBack("the equations of the path have no solution"), nil
 	}
 	e.expect(c, slots, out.Expected)
-	out.Sigma, out.VolumeResidual, out.PathResidual = sigma, before/sigma, after/sigma
+	e.holdEnds(out.Expected)
+	out.Sigma = e.sigma
 	if e.explain[1] > 0 {
 		out.Explained = 1 - e.explain[0]/e.explain[1]
 	}
 	out.StrengthShift, out.StrengthTurn = c.lt, c.lr
-	if after > float64(harm*before) {
-		return fallBack(fmt.Sprintf("residuals along the path are larger than with one pose a volume (%.3g against %.3g)", after, before)), nil
-	}
 	out.Used = true
 	out.Path = Path{Times: e.times, Poses: e.poses}
 	out.Shots, out.Shot = len(e.shots), e.shotOf
-	out.Reference = e.image
+	out.Reference, out.spoilt = e.image, e.spoilt
 	out.Parameters = []Parameter{
 		{"passes", pathPasses},
 		{"first_iterations", pathFirstIterations},
 		{"next_iterations", pathNextIterations},
 		{"tolerance_mm", pathTolerance},
 		{"projections", lastProjections},
-		{"margin_voxels", fineMargin},
+		{"margin_voxels", pathMargin},
 		{"rim_voxels", pathRim},
 		{"degrees_of_freedom", freedom},
 		{"biweight_cut", tukeyCut},
@@ -272,9 +311,72 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	return out, nil
 }
 
-// harm: a path whose weighted residuals exceed those of the volume poses by
-// more than a percent has lost its way.
-const harm = 1.01
+// harm: a path that predicts pixels it has not seen worse than the volume poses do,
+// by more than chance (a thousandth or two over all slots of a run) has lost its way.
+// The template was averaged at the volume poses and leans to them, the more the
+// fewer volumes it is of.
+const (
+	harm        = 1.003
+	harmLeaning = 0.1 // over the number of volumes, in addition
+)
+
+// holdAgainst compares the path with one pose a volume on the pixels that took no
+// part in finding the path: each residual scale, rms over the slots, in units of
+// the noise. A slot counts at most mostSpoilt, or a few corrupt ones would be all
+// that is compared.
+func (e *pathEstimator) holdAgainst(out *PathEstimate) error {
+	idle := make([]slotData, len(e.p))
+	scale, slicesOf := slices.Clone(e.scale), slices.Clone(e.sliceScale)
+	explain := e.explain
+	// What interpolation leaves in a run without noise says nothing about poses.
+	floor := float64(quietest * e.signal)
+	unit := float64(e.sigma*e.sigma) + float64(floor*floor)
+	e.others = true
+	for _, plain := range []bool{true, false} {
+		if err := e.measure(idle, plain); err != nil {
+			return err
+		}
+		sum, n := 0.0, 0.0
+		for _, s := range e.scale {
+			if s > 0 {
+				sum += min((float64(s*s)+float64(floor*floor))/unit, mostSpoilt*mostSpoilt)
+				n++
+			}
+		}
+		r := math.Sqrt(sum / max(n, 1))
+		if plain {
+			out.VolumeResidual = r
+		} else {
+			out.PathResidual = r
+		}
+	}
+	e.others = false
+	e.scale, e.sliceScale, e.explain = scale, slicesOf, explain
+	return nil
+}
+
+// holdEnds gives lost volumes before the first and after the last that has data
+// the nearest pose that is supported, where the prior would go on in a straight line,
+// and takes from lost volumes the expected error: it is that of a guess.
+func (e *pathEstimator) holdEnds(expected []float64) {
+	per := len(e.shots)
+	first, last := e.nt, -1
+	for n, v := range e.est.Volumes {
+		if v.State == Lost {
+			expected[n] = math.NaN()
+			continue
+		}
+		first, last = min(first, n), n
+	}
+	for i := range e.poses {
+		switch {
+		case i < first*per:
+			e.p[i], e.poses[i] = e.p[first*per], e.poses[first*per]
+		case i >= (last+1)*per:
+			e.p[i], e.poses[i] = e.p[last*per+per-1], e.poses[last*per+per-1]
+		}
+	}
+}
 
 // FromVolumes is the path of one pose a volume: what [EstimatePath] falls back to,
 // and what combines with [PathEstimate.Joint] where no path is wanted. why is
@@ -337,9 +439,10 @@ func (e *pathEstimator) lay() {
 	}
 	e.poses = make([]Pose, len(e.p))
 	e.scale = make([]float64, len(e.p))
+	e.sliceScale = make([]float64, e.nt*e.g.N[e.schedule.Axis])
+	e.signal = math.Sqrt(meanSquare(e.est.Reference, e.est.Mask))
 	e.at = make([]params, len(e.p))
 	e.setPoses(nil)
-	e.weak = e.weakSlices(e.est.Volumes, -1)
 	e.work = make([]*slotWork, e.workers)
 	for i := range e.work {
 		e.work[i] = &slotWork{}
@@ -375,7 +478,7 @@ func (e *pathEstimator) setPoses(offset []params) {
 }
 
 func (e *pathEstimator) setTemplate(image []float32) {
-	e.t = newTemplate(e.g, image, e.est.Mask, e.est.unknown, pathRim, edgeMargins(e.g.N, fineMargin), e.est.Centre, 5)
+	e.t = newTemplate(e.g, image, e.est.Mask, e.est.unknown, pathRim, edgeMargins(e.g.N, pathMargin), e.est.Centre, 5)
 }
 
 // jacobian is K = d(twist about the centre)/d(params): the twist's shift is
@@ -448,7 +551,7 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 // slot gathers the pixels of one excitation of volume n.
 func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
 	t := e.t
-	w.e, w.j, w.wt, w.res = w.e[:0], w.j[:0], w.wt[:0], w.res[:0]
+	w.e, w.j, w.wt, w.res, w.pred = w.e[:0], w.j[:0], w.wt[:0], w.res[:0], w.pred[:0]
 	vol := e.volume(n)
 	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
 	toCentre := t.g.Affine
@@ -456,15 +559,16 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		toCentre[4*a+3] -= t.centre[a]
 	}
 	var mean, square, count, left float64
-	gain := newGainRows(e.g, e.est.Centre, &e.est.Volumes[n].Gain)
+	rows := e.gainRows(n)
+	nz := e.g.N[e.schedule.Axis]
 	for _, k := range slices {
-		if e.weak[n][k] {
-			continue
-		}
+		first := len(w.res)
+		e.sliceScale[n*nz+k] = 0
 		lo, hi, ok := e.within(k)
 		if !ok {
 			continue
 		}
+		gain := &rows[k]
 		for z := lo[2]; z <= hi[2]; z++ {
 			for y := lo[1]; y <= hi[1]; y++ {
 				row := t.g.N[0] * (y + t.g.N[1]*z)
@@ -474,7 +578,7 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 					o[a] = float64(b[4*a+1]*float64(y)) + float64(b[4*a+2]*float64(z)) + b[4*a+3]
 				}
 				for x := lo[0]; x <= hi[0]; x++ {
-					if e.thin && e.white(x, y, z) {
+					if e.thin && white(e.g.N, x, y, z) == !e.others {
 						continue
 					}
 					fx := float64(x)
@@ -489,13 +593,15 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 					v, g := t.s.gradient(at[0], at[1], at[2])
 					gn := bright + float64(gain.step*fx)
 					val := float64(vol[row+x])
-					r := val - float64(gn*float64(v))
+					pred := float64(gn * float64(v))
+					r := val - pred
 					var gw [3]float64
 					for a := range gw {
 						gw[a] = float64(gn * (float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])))
 					}
 					m := cross(applyAffine(&toCentre, at[0], at[1], at[2]), gw)
 					w.e = append(w.e, float32(r))
+					w.pred = append(w.pred, float32(pred))
 					w.j = append(w.j, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(m[0]), float32(m[1]), float32(m[2])})
 					w.res = append(w.res, float32(math.Abs(r)))
 					if e.voxel != nil {
@@ -512,19 +618,25 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 				}
 			}
 		}
+		if seen := w.res[first:]; len(seen) >= e.fewest() {
+			e.sliceScale[n*nz+k] = float64(madScale * float64(median(seen)))
+		}
 	}
+	level := e.signal
 	if count > 0 {
 		explain = [2]float64{left, square - float64(mean*mean)/count}
+		level = math.Sqrt(square / count)
 	}
-	if len(w.e) < slotPoints {
+	if len(w.e) < e.fewest() {
 		return explain
 	}
 	scale := float64(madScale * float64(median(w.res)))
 	// Values that are exact (no noise at all) must not divide by zero.
-	scale = max(scale, float64(1e-5*math.Sqrt(square/max(count, 1))), 1e-30)
+	scale = max(scale, float64(1e-5*level), 1e-30)
 	e.scale[i] = scale
 	var h [21]float64
-	var g [6]float64
+	var g, jt [6]float64
+	var tt, tr float64
 	cut := float64(tukeyCut * scale)
 	for q, r32 := range w.e {
 		r := float64(r32)
@@ -534,14 +646,39 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		}
 		wt := float64(float64(u*u) * float64(w.wt[q]))
 		j := &w.j[q]
+		p := float64(w.pred[q])
+		wp := float64(wt * p)
+		tt += float64(wp * p)
+		tr += float64(wp * r)
 		at := 0
 		for a := range 6 {
 			wj := float64(wt * float64(j[a]))
 			g[a] -= float64(wj * r)
+			jt[a] += float64(wj * p)
 			for c := a; c < 6; c++ {
 				h[at] += float64(wj * float64(j[c]))
 				at++
 			}
+		}
+	}
+	// The brightness of the excitation is unknown too: it is fitted along with the
+	// pose and eliminated (the Schur complement of its row). A scanner that breathes
+	// within a volume would otherwise pass for motion.
+	if tt > 0 {
+		at := 0
+		for a := range 6 {
+			g[a] += float64(jt[a]*tr) / tt
+			for c := a; c < 6; c++ {
+				h[at] -= float64(jt[a]*jt[c]) / tt
+				at++
+			}
+		}
+		// What brightness explains is no misfit.
+		if c := tr / tt; math.Abs(c)*level > float64(0.05*scale) {
+			for q, p := range w.pred {
+				w.res[q] = float32(math.Abs(float64(w.e[q]) - float64(c*float64(p))))
+			}
+			e.scale[i] = max(min(scale, float64(madScale*float64(median(w.res)))), float64(1e-5*level), 1e-30)
 		}
 	}
 	// A slot that fits badly because its pose is still off must pull with full
@@ -550,9 +687,17 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 	if e.sigma > 0 && scale < float64(corruptScale*e.sigma) {
 		scale = min(scale, float64(pullScale*e.sigma))
 	}
-	scale = max(scale, float64(quietest*math.Sqrt(square/max(count, 1))))
+	scale = max(scale, float64(quietest*level))
 	toPathParams(&h, &g, pose, e.at[i], 1/float64(scale*scale), out)
 	return explain
+}
+
+// fewest is the number of pixels without which a scale cannot be told.
+func (e *pathEstimator) fewest() int {
+	if e.thin {
+		return slotPoints / 2
+	}
+	return slotPoints
 }
 
 // toPathParams carries H and g from twists to the parameters of the path.
@@ -596,18 +741,6 @@ func toPathParams(h *[21]float64, g *[6]float64, pose Pose, q params, scale floa
 	}
 }
 
-func gainOf(gain *[4]float64, fromCentre [3]float64) float64 {
-	return gain[0] + (float64(gain[1]*fromCentre[0])+float64(gain[2]*fromCentre[1])+float64(gain[3]*fromCentre[2]))*(1.0/gainReach)
-}
-
-// white says which pixels thin leaves out: those of one colour of a chessboard
-// that is its own mirror image, so that an array written the other way round
-// gives the same path.
-func (e *pathEstimator) white(x, y, z int) bool {
-	n := &e.g.N
-	return (min(x, n[0]-1-x)+min(y, n[1]-1-y)+min(z, n[2]-1-z))&1 != 0
-}
-
 // within gives the voxel ranges of slice k inside the margins.
 func (e *pathEstimator) within(k int) (lo, hi [3]int, ok bool) {
 	for a := range lo {
@@ -615,7 +748,7 @@ func (e *pathEstimator) within(k int) (lo, hi [3]int, ok bool) {
 		hi[a] = int(math.Floor(float64(e.g.N[a]-1) - e.t.margin[a]))
 	}
 	axis := e.schedule.Axis
-	ok = k >= lo[axis] && k <= hi[axis]
+	ok = k >= lo[axis] && k <= hi[axis] && (e.nearPadding == nil || !e.nearPadding[k])
 	lo[axis], hi[axis] = k, k
 	return lo, hi, ok
 }
@@ -631,8 +764,8 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 				return false, err
 			}
 		}
-		usual, _ := e.usualScale()
-		per := len(e.shots)
+		usual := e.usualScale(e.scale, len(e.shots))
+		per, nz := len(e.shots), e.g.N[e.schedule.Axis]
 		to := make([]int, len(e.p)) // the slot whose pose is taken over, or the slot itself
 		err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
 			for s, shot := range e.shots {
@@ -644,6 +777,7 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 				}
 				best = float64(best * 0.9)
 				was := e.scale[i]
+				wasSlices := slices.Clone(e.sliceScale[n*nz:][:nz])
 				for _, j := range []int{i - 1, i + 1} {
 					if j < 0 || j >= len(e.p) {
 						continue
@@ -655,6 +789,7 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 					}
 				}
 				e.scale[i] = was
+				copy(e.sliceScale[n*nz:], wasSlices)
 			}
 			return nil
 		})
@@ -684,21 +819,18 @@ const (
 	relocations = 4 // a jerk can be that many slots off
 )
 
-// misfit gives the rms over slots of the residual scale, and its median: the
-// noise.
-func (e *pathEstimator) misfit() (rms, sigma float64) {
+// noise is the median over the slots of the residual scale.
+func (e *pathEstimator) noise() float64 {
 	var seen []float32
-	sum := 0.0
 	for _, s := range e.scale {
 		if s > 0 {
 			seen = append(seen, float32(s))
-			sum += float64(s * s)
 		}
 	}
 	if len(seen) == 0 {
-		return 0, 1
+		return 1
 	}
-	return math.Sqrt(sum / float64(len(seen))), max(float64(median(seen)), 1e-30)
+	return max(float64(median(seen)), 1e-30)
 }
 
 // expect fills the expected pose error of each volume from the posterior that
@@ -760,15 +892,10 @@ func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt i
 	if len(data) != nv*nt || len(est.Volumes) != nt {
 		panic("realign: series, grid and estimate differ in size")
 	}
-	e := &pathEstimator{
-		estimator: estimator{ctx: ctx, g: g, nt: nt, opt: Options{SliceAxis: s.Axis}, workers: max(1, workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }},
-		schedule:  s, est: est, shotOf: p.Shot, poses: p.Path.Poses,
-		shots: make([]slicetime.Shot, p.Shots), scale: make([]float64, nt*p.Shots),
-	}
-	e.done.tell = est.Progress
+	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
+	e.shotOf, e.poses, e.spoilt = p.Shot, p.Path.Poses, p.spoilt
+	e.shots, e.scale = make([]slicetime.Shot, p.Shots), make([]float64, nt*p.Shots)
 	e.done.phase(0, 1, nt*(1+lastProjections))
-	e.weak = e.weakSlices(est.Volumes, -1)
-	e.region = dilate(est.Mask, g.N, regionRim)
 	// Outside the region, and where nothing reaches, the plain mean.
 	start := *est
 	start.Reference = make([]float32, nv)

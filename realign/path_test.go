@@ -460,11 +460,11 @@ func TestPathWithLostVolumes(t *testing.T) {
 	if e > 1.6*clean { // a tenth fewer data, and two ends more
 		t.Errorf("the others: %.1f um, without a lost volume %.1f um", e, clean)
 	}
-	if !(r.path.Expected[4] > 1.3*r.path.Expected[2]) { // a smooth path is still held from both sides
-		t.Errorf("expected error %.4f mm at the lost volume, %.4f elsewhere", r.path.Expected[4], r.path.Expected[2])
+	if !math.IsNaN(r.path.Expected[4]) { // it would be that of a guess
+		t.Errorf("expected error %.4f mm at the lost volume, want none", r.path.Expected[4])
 	}
-	if w > 3000*r.path.Expected[4] {
-		t.Errorf("the lost volume is %.1f um off, expected %.1f", w, 1000*r.path.Expected[4])
+	if w > 5000*r.path.Expected[2] { // a smooth path is still held from both sides
+		t.Errorf("the lost volume is %.1f um off, others are expected to be %.1f", w, 1000*r.path.Expected[2])
 	}
 }
 
@@ -586,7 +586,7 @@ func pathDigest(p *realign.PathEstimate) string {
 }
 
 // As sameBytesDigest: recorded on amd64, the same everywhere.
-const sameBytesPathDigest = "22425a7a9f7b91b9"
+const sameBytesPathDigest = "517c048354bfe543"
 
 // digestRun is small: an emulator runs it too. It jerks, so that slots are moved
 // about, and one slice is corrupt.

@@ -2,6 +2,7 @@ package realign
 
 import (
 	"math"
+	"slices"
 
 	"evenkeel/internal/detmath"
 )
@@ -69,17 +70,25 @@ type chain struct {
 	m      band
 	delta  []float64
 	fresh  bool // strengths have never been tuned
+	afresh bool // strengths are to be sought from the soft end too, at the next update
 }
 
 func newChain(times []float64, period int) *chain {
 	n := len(times)
 	c := &chain{period: period, offset: make([]params, period), bend: make([][3]float64, n), w: make([]float64, n), lt: startShift, lr: startTurn, m: make(band, poseUnknowns*n), delta: make([]float64, poseUnknowns*n), fresh: true}
-	mean := 1.0
+	// In units of the usual gap, that between the excitations of a volume: strengths
+	// then mean the same with a pause between volumes and without.
+	usual := 1.0
 	if n > 1 {
-		mean = (times[n-1] - times[0]) / float64(n-1)
+		var gaps []float64
+		for s := 1; s < n; s++ {
+			gaps = append(gaps, times[s]-times[s-1])
+		}
+		slices.Sort(gaps)
+		usual = max(gaps[len(gaps)/2], 1e-6)
 	}
 	// Ties cannot occur between slots; the floor is for clocks that round.
-	gap := func(s int) float64 { return max(times[s+1]-times[s], 1e-3*mean) / mean }
+	gap := func(s int) float64 { return max(times[s+1]-times[s], float64(1e-3*usual)) / usual }
 	for s := 1; s < n-1; s++ {
 		a, b := gap(s-1), gap(s)
 		k := 1 / math.Sqrt((a+b)/2)
@@ -185,6 +194,23 @@ func (c *chain) step(data []slotData, p []params) (evidence float64, ok bool) {
 	return evidence, true
 }
 
+// tuneFromSoft seeks the strengths once more from the soft end and keeps what is more
+// probable: where a path is all but straight the evidence is flat, and a search
+// from there does not find its way to motion that a better template shows.
+func (c *chain) tuneFromSoft(data []slotData, p []params) {
+	stiff, ok := c.step(data, p)
+	lt, lr := c.lt, c.lr
+	best := [2]float64{lt, lr}
+	for _, start := range [][2]float64{{softShift, softTurn}, {lt, softTurn}, {softShift, lr}} {
+		c.lt, c.lr = start[0], start[1]
+		c.tune(data, p)
+		if e, fine := c.step(data, p); fine && (!ok || e > stiff) {
+			stiff, ok, best = e, true, [2]float64{c.lt, c.lr}
+		}
+	}
+	c.lt, c.lr = best[0], best[1]
+}
+
 // tune moves the strengths to the greatest evidence, by coordinate steps of
 // ever smaller factors, from where they are.
 func (c *chain) tune(data []slotData, p []params) {
@@ -228,9 +254,14 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 		if !c.fresh || round > 0 {
 			c.tune(local, p)
 		}
+		if c.afresh {
+			c.tuneFromSoft(local, p)
+			c.afresh = false
+		}
 		for range reweights {
 			e, fine := c.step(local, p)
 			if !fine {
+				clear(c.delta) // what is left there is no change of the path
 				break
 			}
 			ok, evidence = true, e

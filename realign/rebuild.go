@@ -1,8 +1,6 @@
 package realign
 
 import (
-	"slices"
-
 	"evenkeel/internal/parallel"
 )
 
@@ -85,9 +83,14 @@ func SlotMap(g Grid, axis int, pose func(slice int) Pose) Map { return newSlotMa
 // sharpens what averaging has blurred. Voxels outside the region keep the first
 // reference.
 func (e *pathEstimator) rebuild(projections int) error {
+	// With a reference of another kind no volume may be aligned: doubtful ones then.
+	from := Aligned
+	if countState(e.est.Volumes, Aligned) == 0 {
+		from = Doubtful
+	}
 	var use []int
 	for n, v := range e.est.Volumes {
-		if v.State == Aligned {
+		if v.State == from {
 			use = append(use, n)
 		}
 	}
@@ -97,16 +100,12 @@ func (e *pathEstimator) rebuild(projections int) error {
 			at = append(at, i)
 		}
 	}
-	weak := make([][]bool, e.nt)
-	usual, _ := e.usualScale()
-	for _, n := range use {
-		weak[n] = slices.Clone(e.weak[n])
-		for k, s := range e.shotOf {
-			// A slice whose residual stands out far more than its fellows'.
-			if u := usual[s]; u > 0 && e.scale[n*len(e.shots)+s] > float64(spoiltScale*u) {
-				weak[n][k] = true
-			}
-		}
+	if e.sliceScale != nil {
+		e.judgeSlices()
+	}
+	weak := e.spoilt
+	if weak == nil {
+		weak = e.weak
 	}
 	image := append([]float32(nil), e.est.Reference...)
 	for round := range projections + 1 {
@@ -133,16 +132,8 @@ func (e *pathEstimator) rebuild(projections int) error {
 	return nil
 }
 
-// Voxels that change of themselves (activation, vessels, eyes) pull at the poses;
-// they are recognised by what the template leaves of them varying more than
-// elsewhere, and count less: with s^2 the noise and x the excess of the variance over
-// quietShare times its lower quartile in the head, by s^2 / (s^2 + excessCost x). The
-// variance is smoothed by a voxel, for that of a single one is too uncertain.
-const (
-	quietShare = 1.3
-	excessCost = 12 // from a simulation study that preceded this code, where 22 um became 12.5 with many active spots
-)
-
+// weigh sets the weights of the template's voxels by what varies there of
+// itself.
 func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {
 	v := make([]float32, e.g.voxels())
 	for q, i := range at {
@@ -151,65 +142,56 @@ func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {
 			v[i] = float32((float64(square[q]) - float64(m*m)) * n / (n - 1))
 		}
 	}
-	edge := e.g.edges()
-	s := newSmoother(e.g, max(edge[0], edge[1], edge[2]), [3]int{1, 1, 1})
-	smooth := make([]float32, len(v))
-	s.run(smooth, v)
-	var inside []float32
-	level := 0.0
-	for i, in := range e.est.Mask {
-		if in {
-			inside = append(inside, smooth[i])
-			level += float64(float64(e.image[i]) * float64(e.image[i]))
-		}
-	}
-	if len(inside) == 0 {
-		return
-	}
-	quiet := float64(quartile(inside))
-	// As quietest: what interpolation leaves in a run without noise is no activity.
-	noise := max(float64(e.sigma*e.sigma), float64(quietest*quietest*float64(level/float64(len(inside)))))
-	e.voxel = make([]float32, len(v))
-	for i := range e.voxel {
-		x := max(0, float64(smooth[i])-float64(quietShare*quiet))
-		e.voxel[i] = float32(noise / (noise + float64(excessCost*x)))
-	}
-}
-
-// quartile returns the lower quartile and reorders v.
-func quartile(v []float32) float32 {
-	slices.Sort(v)
-	return v[len(v)/4]
+	e.voxel, _ = quietWeights(e.g, v, e.est.Mask, meanSquare(e.image, e.est.Mask), float64(e.sigma*e.sigma))
 }
 
 // spoiltScale: as z > 1.78 in the volume's match, where a slice loses half of
 // its weight.
 const spoiltScale = 1.8
 
-// usualScale is the median residual scale of each shot over the volumes.
-func (e *pathEstimator) usualScale() (usual []float64, any bool) {
-	usual = make([]float64, len(e.shots))
+// judgeSlices marks the slices that stay out of the template: those whose
+// residual along the path stands out far more than in other volumes, and where
+// the path sees nothing those that the volume match found weak. (What stood out
+// there may only have been at a pose of its own.)
+func (e *pathEstimator) judgeSlices() {
+	n := e.g.N[e.schedule.Axis]
+	usual := e.usualScale(e.sliceScale, n)
+	e.spoilt = make([][]bool, e.nt)
+	for t := range e.spoilt {
+		e.spoilt[t] = make([]bool, n)
+		for k := range n {
+			if v := e.sliceScale[t*n+k]; v > 0 {
+				e.spoilt[t][k] = v > float64(spoiltScale*usual[k])
+			} else {
+				e.spoilt[t][k] = e.weak[t][k]
+			}
+		}
+	}
+}
+
+// usualScale is the median over the volumes of each of n scales a volume.
+func (e *pathEstimator) usualScale(scale []float64, n int) []float64 {
+	usual := make([]float64, n)
 	for s := range usual {
 		var seen []float32
-		for n := range e.nt {
-			if v := e.scale[n*len(e.shots)+s]; v > 0 {
+		for t := range e.nt {
+			if v := scale[t*n+s]; v > 0 {
 				seen = append(seen, float32(v))
 			}
 		}
 		usual[s] = float64(median(seen))
-		any = any || len(seen) > 0
 	}
-	return usual, any
+	return usual
 }
 
-// backMap averages, at the voxels listed, the volumes (or, with residual, what
+// backMap averages, at the voxels listed and by edgeWeight, the volumes (or, with residual, what
 // the template fails to predict of them) mapped back along the path.
 func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (mean, square []float32, count []int32, err error) {
 	degree := 5
 	if residual {
 		degree = 3
 	}
-	sum, sum2 := make([]float64, len(at)), make([]float64, len(at))
+	sum, sum2, full := make([]float64, len(at)), make([]float64, len(at)), make([]float64, len(at))
 	count = make([]int32, len(at))
 	type scratch struct {
 		s   *spline
@@ -217,9 +199,9 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 	}
 	work := make([]*scratch, e.workers)
 	val := make([][]float32, 2*e.workers)
-	in := make([][]bool, len(val))
+	weight := make([][]float32, len(val)) // 0: nothing known
 	for i := range val {
-		val[i], in[i] = make([]float32, len(at)), make([]bool, len(at))
+		val[i], weight[i] = make([]float32, len(at)), make([]float32, len(at))
 	}
 	n0, n1 := e.g.N[0], e.g.N[1]
 	axis := e.schedule.Axis
@@ -242,15 +224,15 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 			m := newSlotMap(e.g, axis, func(k int) Pose { return e.poses[n*len(e.shots)+e.shotOf[k]] })
 			for q, i := range at {
 				v := m.at(float64(i%n0), float64(i/n0%n1), float64(i/(n0*n1)))
-				ok := true
-				for a := range v {
-					ok = ok && v[a] >= -0.5 && v[a] <= float64(e.g.N[a])-0.5
-				}
+				deep := e.g.depth(v)
+				ok := deep >= -0.5
 				if ok {
 					s := int(v[axis] + 1)
 					ok = !(s > 0 && weak[n][s-1] || s < len(weak[n]) && weak[n][s])
 				}
-				if in[b][q] = ok; ok {
+				weight[b][q] = 0
+				if ok {
+					weight[b][q] = float32(edgeWeight(deep))
 					val[b][q] = w.s.value(v[0], v[1], v[2])
 				}
 			}
@@ -263,10 +245,11 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 		err = parallel.For(e.ctx, e.workers, (len(at)+block-1)/block, func(_, k int) error {
 			for b := range batch {
 				for q := k * block; q < min(len(at), (k+1)*block); q++ {
-					if in[b][q] {
+					if w := float64(weight[b][q]); w > 0 {
 						v := float64(val[b][q])
-						sum[q] += v
-						sum2[q] += float64(v * v)
+						sum[q] += float64(w * v)
+						sum2[q] += float64(float64(w*v) * v)
+						full[q] += w
 						count[q]++
 					}
 				}
@@ -279,7 +262,7 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 	}
 	mean, square = make([]float32, len(at)), make([]float32, len(at))
 	for q := range mean {
-		if n := float64(count[q]); n > 0 {
+		if n := full[q]; n > 0 {
 			mean[q], square[q] = float32(sum[q]/n), float32(sum2[q]/n)
 		}
 	}
@@ -290,9 +273,8 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 // prediction with residual (0 where nothing is predicted).
 func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 	vol := e.volume(n)
-	gain := e.est.Volumes[n].Gain
-	rows := newGainRows(e.g, e.est.Centre, &gain)
 	axis := e.schedule.Axis
+	rows := e.gainRows(n)
 	maps := make([][16]float64, e.g.N[axis])
 	if residual {
 		inv := e.t.inv
@@ -303,11 +285,12 @@ func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 	i := 0
 	for z := range e.g.N[2] {
 		for y := range e.g.N[1] {
-			base := rows.row(y, z)
 			for x := range e.g.N[0] {
-				v := float32(float64(vol[i]) / (base + float64(rows.step*float64(x))))
+				k := [3]int{x, y, z}[axis]
+				p := [3]float64{float64(x), float64(y), float64(z)}
+				v := float32(float64(vol[i]) / rows[k].at(p))
 				if residual {
-					at := applyAffine(&maps[[3]int{x, y, z}[axis]], float64(x), float64(y), float64(z))
+					at := applyAffine(&maps[k], p[0], p[1], p[2])
 					if e.t.inField(at) && e.region[e.t.nearest(at)] {
 						v -= e.t.s.value(at[0], at[1], at[2])
 					} else {
@@ -321,31 +304,13 @@ func (e *pathEstimator) level(dst []float32, n int, residual bool) {
 	}
 }
 
-// gainRows evaluates a gain along the rows of a grid, where it is linear.
-type gainRows struct {
-	step, y, z, origin float64
-}
-
-func newGainRows(g Grid, centre [3]float64, gain *[4]float64) gainRows {
-	at := func(i, j, k float64) float64 {
-		p := g.world(i, j, k)
-		for a := range p {
-			p[a] -= centre[a]
-		}
-		return gainOf(gain, p)
+// gainRows is the gain of volume n, by slice.
+func (e *pathEstimator) gainRows(n int) []gainRows {
+	out := make([]gainRows, e.g.N[e.schedule.Axis])
+	for k := range out {
+		out[k] = newGainRows(e.g, e.est.Centre, &e.gains[n][k])
 	}
-	o := at(0, 0, 0)
-	return gainRows{step: at(1, 0, 0) - o, y: at(0, 1, 0) - o, z: at(0, 0, 1) - o, origin: o}
-}
-
-// row is the gain at the start of a row; it grows by step with each voxel.
-func (r *gainRows) row(j, k int) float64 {
-	return r.origin + float64(r.y*float64(j)) + float64(r.z*float64(k))
-}
-
-// at is the gain at a voxel coordinate.
-func (r *gainRows) at(x [3]float64) float64 {
-	return r.origin + float64(r.step*x[0]) + float64(r.y*x[1]) + float64(r.z*x[2])
+	return out
 }
 
 // inField reports whether a voxel coordinate lies within half a voxel of the

@@ -237,8 +237,14 @@ func TestPathAndJointDoNoHarm(t *testing.T) {
 		if fdPath > 1.001*fdVolumes && filepath.Dir(filepath.Dir(name)) != "sub-01" {
 			t.Errorf("%s: mean FD %.2f um along the path, %.2f with one pose a volume", name, fdPath, fdVolumes)
 		}
-		if both > 1.001*timeFirst {
-			t.Errorf("%s: temporal SD %.2f after the combined interpolation, %.2f after time first", name, both, timeFirst)
+		// A head that moves comes out no noisier than time first; a still object, where
+		// noise is all there is, no noisier than it was.
+		limit, what := timeFirst, "after time first"
+		if filepath.Dir(filepath.Dir(name)) != "sub-01" {
+			limit, what = untouched, "untouched"
+		}
+		if both > 1.001*limit {
+			t.Errorf("%s: temporal SD %.2f after the combined interpolation, %.2f %s", name, both, limit, what)
 		}
 	}
 }

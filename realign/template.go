@@ -8,6 +8,7 @@ type template struct {
 	s      *spline     // the smoothed reference
 	usable []bool      // by nearest voxel: the head and a rim, less what the margins and gaps forbid
 	head   []bool      // by nearest voxel: the head
+	weight []float32   // by nearest voxel: what it counts in a robust match; nil: all alike
 	centre [3]float64  // world mm
 	margin [3]float64  // voxels left out at each field edge
 }
