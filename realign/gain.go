@@ -11,7 +11,8 @@ import (
 // (X, Y, Z) = x - the centre, in mm.
 
 func gainOf(gain *[4]float64, fromCentre [3]float64) float64 {
-	return gain[0] + (float64(gain[1]*fromCentre[0])+float64(gain[2]*fromCentre[1])+float64(gain[3]*fromCentre[2]))*(1.0/gainReach)
+	s := float64(gain[1]*fromCentre[0]) + float64(gain[2]*fromCentre[1]) + float64(gain[3]*fromCentre[2])
+	return gain[0] + float64(s*(1.0/gainReach))
 }
 
 // gainsAt carries the gains of volumes, which hold for the middle of the schedule,
