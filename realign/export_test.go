@@ -71,7 +71,7 @@ func RebuildOn(ctx context.Context, g Grid, data []float32, nt int, s slicetime.
 	e.image = append([]float32(nil), est.Reference...)
 	e.setTemplate(e.image)
 	e.sliceScale, e.spoilt = nil, p.spoilt
-	if err := e.rebuild(2); err != nil {
+	if err := e.rebuild(2, false); err != nil {
 		panic(err)
 	}
 	q := *p

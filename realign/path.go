@@ -62,7 +62,7 @@ const (
 	pathPasses  = 2    // passes over the data, each with a template of its own: a third changes poses by less than the noise ...
 	mostPasses  = 4    // ... unless the second still moved some slot by
 	settledStep = 0.05 // mm, three times the uncertainty of one
-	mostSpoilt  = 3
+	mostSpoilt  = 3    // as the noise: what a corrupt slot counts in the comparison with volume poses, at most
 	// Iterations of a pass, at most: the first starts 0.1 to 0.5 mm off,
 	// where the slope of the template changes by a few percent.
 	pathFirstIterations = 4
@@ -71,6 +71,7 @@ const (
 	pathMargin          = 2.0  // planes left out at each field edge: slices are not smoothed, and a spline is bent there
 	lastProjections     = 2    // of the last pass; more sharpen no further
 	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
+	draftTolerance      = 0.01 // mm, of the first pass, whose template moves poses by more
 	// fewestData: a path is only worth its name where most slots see the head.
 	fewestData = 0.5
 	// fewestAligned: an average of one or two volumes fits those volumes whatever
@@ -231,7 +232,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 			e.setPoses(c.offset)
 			out.Iterations++
 			e.sigma = e.noise()
-			if out.LastStep < pathTolerance {
+			if out.LastStep < pathTolerance || pass == 0 && out.LastStep < draftTolerance {
 				break
 			}
 		}
@@ -267,11 +268,11 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		projections := 1
 		if last {
 			projections = lastProjections
-			e.done.phase(nextMeasured, 1, e.nt*(1+projections))
+			e.done.phase(nextMeasured, 1, rebuildPieces(e.nt, projections, !last))
 		} else {
-			e.done.phase(firstMeasured, firstRebuilt, e.nt*(1+projections))
+			e.done.phase(firstMeasured, firstRebuilt, rebuildPieces(e.nt, projections, !last))
 		}
-		if err := e.rebuild(projections); err != nil {
+		if err := e.rebuild(projections, !last); err != nil {
 			return nil, err
 		}
 		if last {
@@ -297,6 +298,10 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		{"first_iterations", pathFirstIterations},
 		{"next_iterations", pathNextIterations},
 		{"tolerance_mm", pathTolerance},
+		{"draft_tolerance_mm", draftTolerance},
+		{"settled_step_mm", settledStep},
+		{"most_passes", mostPasses},
+		{"enough_volumes", enoughVolumes},
 		{"projections", lastProjections},
 		{"margin_voxels", pathMargin},
 		{"rim_voxels", pathRim},
@@ -895,7 +900,7 @@ func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt i
 	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
 	e.shotOf, e.poses, e.spoilt = p.Shot, p.Path.Poses, p.spoilt
 	e.shots, e.scale = make([]slicetime.Shot, p.Shots), make([]float64, nt*p.Shots)
-	e.done.phase(0, 1, nt*(1+lastProjections))
+	e.done.phase(0, 1, rebuildPieces(nt, lastProjections, false))
 	// Outside the region, and where nothing reaches, the plain mean.
 	start := *est
 	start.Reference = make([]float32, nv)
@@ -913,7 +918,7 @@ func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt i
 	}
 	e.est = &start
 	e.setTemplate(start.Reference)
-	if err := e.rebuild(lastProjections); err != nil {
+	if err := e.rebuild(lastProjections, false); err != nil {
 		return nil, err
 	}
 	q := *p

@@ -31,9 +31,10 @@ func newSlotMap(g Grid, axis int, pose func(slice int) Pose) *slotMap {
 	return s
 }
 
-// at returns where voxel (x, y, z) of the reference lies in the volume.
-func (s *slotMap) at(x, y, z float64) (v [3]float64) {
-	k := [3]float64{x, y, z}[s.axis]
+// at returns where voxel (x, y, z) of the reference lies in the volume; guess is
+// roughly its slice coordinate there.
+func (s *slotMap) at(x, y, z, guess float64) (v [3]float64) {
+	k := guess
 	for range mostRounds {
 		v = s.through(k, x, y, z)
 		d := v[s.axis] - k
@@ -44,6 +45,12 @@ func (s *slotMap) at(x, y, z float64) (v [3]float64) {
 	}
 	return v
 }
+
+// guess carries from one voxel to its neighbour how far the slice coordinate moved.
+type guess struct{ moved float64 }
+
+func (g *guess) next(k float64) float64 { return k + g.moved }
+func (g *guess) was(k, found float64)   { g.moved = found - k }
 
 // through maps by the slices around slice coordinate k.
 func (s *slotMap) through(k, x, y, z float64) [3]float64 {
@@ -65,8 +72,11 @@ func (s *slotMap) through(k, x, y, z float64) [3]float64 {
 
 // Row makes a slotMap a [Map].
 func (s *slotMap) Row(j, k int, x, y, z []float64) {
+	var g guess
 	for i := range x {
-		v := s.at(float64(i), float64(j), float64(k))
+		at := [3]float64{float64(i), float64(j), float64(k)}
+		v := s.at(at[0], at[1], at[2], g.next(at[s.axis]))
+		g.was(at[s.axis], v[s.axis])
 		x[i], y[i], z[i] = v[0], v[1], v[2]
 	}
 }
@@ -82,7 +92,11 @@ func SlotMap(g Grid, axis int, pose func(slice int) Pose) Map { return newSlotMa
 // CVGIP: Graphical Models and Image Processing 53(3):231-239, eq. 3), which
 // sharpens what averaging has blurred. Voxels outside the region keep the first
 // reference.
-func (e *pathEstimator) rebuild(projections int) error {
+//
+// The mean is over all volumes, or over enough of them where the template is still
+// to be made anew (draft); what it fails to predict is alike in all, so enough of
+// them tell.
+func (e *pathEstimator) rebuild(projections int, draft bool) error {
 	// With a reference of another kind no volume may be aligned: doubtful ones then.
 	from := Aligned
 	if countState(e.est.Volumes, Aligned) == 0 {
@@ -109,12 +123,16 @@ func (e *pathEstimator) rebuild(projections int) error {
 	}
 	image := append([]float32(nil), e.est.Reference...)
 	for round := range projections + 1 {
-		mean, square, count, err := e.backMap(use, at, weak, round > 0)
+		from := use
+		if round > 0 || draft {
+			from = spread(use, enoughVolumes)
+		}
+		mean, square, count, err := e.backMap(from, at, weak, round > 0)
 		if err != nil {
 			return err
 		}
 		for q, i := range at {
-			if float64(count[q]) < float64(coverage*float64(len(use))) || count[q] == 0 {
+			if float64(count[q]) < float64(coverage*float64(len(from))) || count[q] == 0 {
 				continue
 			}
 			if round > 0 {
@@ -130,6 +148,30 @@ func (e *pathEstimator) rebuild(projections int) error {
 		}
 	}
 	return nil
+}
+
+// enoughVolumes: a mean over so many adds under a percent to the noise of a residual.
+const enoughVolumes = 64
+
+// spread takes at most so many of a list, evenly.
+func spread(of []int, most int) []int {
+	if len(of) <= most {
+		return of
+	}
+	out := make([]int, most)
+	for i := range out {
+		out[i] = of[(2*i+1)*len(of)/(2*most)]
+	}
+	return out
+}
+
+// rebuildPieces is how many volumes a rebuild goes through.
+func rebuildPieces(nt, projections int, draft bool) int {
+	some := min(nt, enoughVolumes)
+	if draft {
+		return some * (1 + projections)
+	}
+	return nt + some*projections
 }
 
 // weigh sets the weights of the template's voxels by what varies there of
@@ -222,8 +264,11 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 			}
 			w.s.load(vol)
 			m := newSlotMap(e.g, axis, func(k int) Pose { return e.poses[n*len(e.shots)+e.shotOf[k]] })
+			var g guess
 			for q, i := range at {
-				v := m.at(float64(i%n0), float64(i/n0%n1), float64(i/(n0*n1)))
+				x := [3]float64{float64(i % n0), float64(i / n0 % n1), float64(i / (n0 * n1))}
+				v := m.at(x[0], x[1], x[2], g.next(x[axis]))
+				g.was(x[axis], v[axis])
 				deep := e.g.depth(v)
 				ok := deep >= -0.5
 				if ok {
