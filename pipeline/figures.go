@@ -165,6 +165,7 @@ type Figures struct {
 	MeanRMS                          float64 // mm
 	ExpectedError                    float64 // mm; of the pose path, NaN without one
 	ResidualVolume, ResidualPath     float64 // in units of the noise, NaN without a path
+	Explained                        float64 // share of the variance in the head, NaN without a path
 	MaxShift                         float64 // mm, over aligned volumes
 	MeanDVARSRaw, MeanDVARSSteady    float64 // %
 	MedianTSNRRaw, MedianTSNRSteady  float64
@@ -305,7 +306,7 @@ func parseFigures(data []byte) (*Figures, error) {
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
 		MeanFDAligned: float64(q["mean_fd_aligned"].Value),
 		MeanRMS:       float64(q["rms_ball"].Mean),
-		ExpectedError: optional("expected_error").Mean, ResidualVolume: optional("residual_volume").Value, ResidualPath: optional("residual_path").Value,
+		ExpectedError: optional("expected_error").Mean, ResidualVolume: optional("residual_volume").Value, ResidualPath: optional("residual_path").Value, Explained: optional("explained").Value,
 		MaxShift: float64(q["max_shift"].Value), MeanDVARSRaw: float64(q["dvars_raw"].Mean), MeanDVARSSteady: float64(q["dvars_steady"].Mean),
 		MedianTSNRRaw: float64(q["tsnr_raw"].Median), MedianTSNRSteady: float64(q["tsnr_steady"].Median),
 	}, nil

@@ -64,8 +64,8 @@ func TestFigures(t *testing.T) {
 	want := Figures{Volumes: 4, Aligned: 2, Doubtful: 1, Lost: 1, MeanFD: 3, MaxFD: 3, MeanRMS: 3,
 		MaxShift:     1, // of aligned volumes only: the doubtful one is at 3
 		MeanDVARSRaw: 1, MeanDVARSSteady: 0.5, MedianTSNRRaw: 100, MedianTSNRSteady: 120}
-	want.MeanFDAligned = math.NaN()                                                                 // no aligned volume follows another
-	want.ExpectedError, want.ResidualVolume, want.ResidualPath = math.NaN(), math.NaN(), math.NaN() // no path
+	want.MeanFDAligned = math.NaN()                                                                                             // no aligned volume follows another
+	want.ExpectedError, want.ResidualVolume, want.ResidualPath, want.Explained = math.NaN(), math.NaN(), math.NaN(), math.NaN() // no path
 	want.Raised = []int{}
 	if d := cmp.Diff(want, *f, cmpopts.EquateNaNs()); d != "" {
 		t.Error(d)

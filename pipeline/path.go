@@ -210,6 +210,8 @@ func (po *posed) pathOutcome() object {
 	o.add("residual_one_pose_a_volume", rounded(x.VolumeResidual, 6))
 	o.add("residual_along_path", rounded(x.PathResidual, 6))
 	o.add("explained", rounded(x.Explained, 6))
+	o.add("log_evidence", rounded(x.Evidence, 3))
+	o.add("last_step_mm", rounded(x.LastStep, digitsMM))
 	o.add("prior_strength_shift", num(x.StrengthShift))
 	o.add("prior_strength_turn", num(x.StrengthTurn))
 	o.add("expected_error_mm", roundedAll(x.Expected, digitsMM))

@@ -39,10 +39,10 @@ func DefaultSettings() Settings {
 		Time:       "fourier",
 		TimeOrigin: Origin{Word: "middle"},
 		SincReach:  8,
-		Motion:     "volume",
+		Motion:     "path",
 		Reference:  Standard{Word: "mean"},
 		Space:      "quintic",
-		Order:      "time-first",
+		Order:      "joint",
 		Store:      "float32",
 	}
 }

@@ -15,7 +15,7 @@ import (
 
 // The defaults, as README's table of options and the help give them.
 func TestDefaults(t *testing.T) {
-	want := `{"time":"fourier","time_origin":"middle","sinc_reach":8,"motion":"volume","reference":"mean","space":"quintic","order":"time-first","skip":0,"store":"float32","accept":[],"events":false}`
+	want := `{"time":"fourier","time_origin":"middle","sinc_reach":8,"motion":"path","reference":"mean","space":"quintic","order":"joint","skip":0,"store":"float32","accept":[],"events":false}`
 	got, err := json.Marshal(DefaultSettings())
 	if err != nil || string(got) != want {
 		t.Errorf("got %s (%v)\nwant %s", got, err, want)
@@ -60,9 +60,9 @@ func TestSettingsReadBack(t *testing.T) {
 		s := Settings{
 			Time:      rapid.SampledFrom([]string{"fourier", "sinc", "none"}).Draw(t, "time"),
 			SincReach: rapid.IntRange(1, slicetime.MaxReach).Draw(t, "reach"),
-			Motion:    rapid.SampledFrom([]string{"volume", "none"}).Draw(t, "motion"),
+			Motion:    rapid.SampledFrom([]string{"path", "volume", "none"}).Draw(t, "motion"),
 			Space:     rapid.SampledFrom([]string{"quintic", "cubic"}).Draw(t, "space"),
-			Order:     rapid.SampledFrom([]string{"time-first", "space-first"}).Draw(t, "order"),
+			Order:     rapid.SampledFrom([]string{"joint", "time-first", "space-first"}).Draw(t, "order"),
 			Skip:      rapid.IntRange(0, 1000).Draw(t, "skip"),
 			Store:     rapid.SampledFrom([]string{"float32", "int16"}).Draw(t, "store"),
 			Events:    rapid.Bool().Draw(t, "events"),

@@ -73,9 +73,9 @@ var definitions = []Definition{
 		}},
 
 	{Name: "expected_error", Unit: "mm", Source: own,
-		Description: "Expected error of the poses of a volume's excitations, from the posterior of the pose path: root mean square displacement over the head."},
+		Description: "Expected error of the poses of a volume's excitations, from the posterior of the pose path, for noise that is independent from pixel to pixel: root mean square displacement over the head. Undefined for a lost volume."},
 	{Name: "residual_volume", Unit: "1", Source: own,
-		Description: "Scale of the residuals of slices against the predicted slices with one pose a volume, root mean square over excitations, in units of the noise."},
+		Description: "Scale of the residuals of slices against the predicted slices with one pose a volume, in pixels that took no part in finding the path: root mean square over excitations, each counting at most 3, in units of the noise."},
 	{Name: "residual_path", Unit: "1", Source: own,
 		Description: "As residual_volume, along the pose path."},
 	{Name: "explained", Unit: "1", Source: own,

@@ -77,8 +77,8 @@ func TestInterruptedAtEveryStage(t *testing.T) {
 	}
 	for _, stage := range pipeline.Stages {
 		settings := pipeline.DefaultSettings()
-		if stage == "joint" { // that of another order
-			settings.Motion, settings.Order = "path", "joint"
+		if stage == "time" || stage == "space" { // those of another order
+			settings.Order = "time-first"
 		}
 		plans, err := pipeline.Survey(context.Background(), ds, pipeline.Request{Settings: settings})
 		if err != nil {

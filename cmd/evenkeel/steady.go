@@ -216,7 +216,7 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 		case f != nil:
 			line += fmt.Sprintf("  %s, FD mean %s max %s mm, %d doubtful, %d lost", counted(f.Volumes, "volume"), millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
 			if !math.IsNaN(f.ExpectedError) {
-				line += fmt.Sprintf(", path residual %.3f -> %.3f, expected error %.0f um", f.ResidualVolume, f.ResidualPath, 1000*f.ExpectedError)
+				line += fmt.Sprintf(", path residual %.3f -> %.3f, explained %.2f %%, expected error %.0f um", f.ResidualVolume, f.ResidualPath, 100*f.Explained, 1000*f.ExpectedError)
 			}
 			if len(o.Outside) > 0 {
 				line += ", outside a limit"
