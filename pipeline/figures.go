@@ -166,6 +166,7 @@ type Figures struct {
 	ExpectedError                    float64 // mm; of the pose path, NaN without one
 	ResidualVolume, ResidualPath     float64 // in units of the noise, NaN without a path
 	Explained                        float64 // share of the variance in the head, NaN without a path
+	NoPath                           string  // why there is no path where one was asked for, or ""
 	MaxShift                         float64 // mm, over aligned volumes
 	MeanDVARSRaw, MeanDVARSSteady    float64 // %
 	MedianTSNRRaw, MedianTSNRSteady  float64
@@ -228,6 +229,13 @@ func (m *measures) qualityFile(p *Plan) []byte {
 		value("residual_volume", rounded(m.path.VolumeResidual, digitsShare))
 		value("residual_path", rounded(m.path.PathResidual, digitsShare))
 		value("explained", rounded(m.path.Explained, digitsShare))
+	}
+	if p.Settings.Motion == "path" && m.path != nil {
+		if m.path.Used {
+			figure("pose_path", member{"State", "used"})
+		} else {
+			figure("pose_path", member{"State", "not used"}, member{"Reason", m.path.Reason})
+		}
 	}
 	figure("tsnr_raw", summary(quality.SummariseInside(m.tsnrRaw, m.mask), 4)...)
 	figure("tsnr_steady", summary(quality.SummariseInside(m.tsnrSteady, m.mask), 4)...)
@@ -295,13 +303,14 @@ func parseFigures(data []byte) (*Figures, error) {
 		return struct{ Mean, Value float64 }{float64(f.Mean), float64(f.Value)}
 	}
 	var raised struct {
-		List struct{ Volumes []int } `json:"dvars_raised"`
+		List   struct{ Volumes []int } `json:"dvars_raised"`
+		NoPath struct{ Reason string } `json:"pose_path"`
 	}
 	if err := json.Unmarshal(data, &raised); err != nil {
 		return nil, err
 	}
 	return &Figures{
-		Raised:  raised.List.Volumes,
+		Raised: raised.List.Volumes, NoPath: raised.NoPath.Reason,
 		Volumes: count("volumes"), Aligned: count("volumes_aligned"), Doubtful: count("volumes_doubtful"), Lost: count("volumes_lost"),
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
 		MeanFDAligned: float64(q["mean_fd_aligned"].Value),

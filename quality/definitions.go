@@ -80,6 +80,12 @@ var definitions = []Definition{
 		Description: "As residual_volume, along the pose path."},
 	{Name: "explained", Unit: "1", Source: own,
 		Description: "Share of the variance of the slices' pixels inside the head that the predicted slices explain."},
+	{Name: "pose_path", Source: own,
+		Description: "Whether the poses are those of every excitation, where these were asked for; if not, Reason says why.",
+		Levels: []Level{
+			{"used", "A pose was found for every excitation."},
+			{"not used", "One pose a volume stands."},
+		}},
 	{Name: "tsnr_raw", Unit: "1", Source: krueger,
 		Description: "Temporal signal to noise of the raw series: per voxel, the mean in time over the standard deviation in time (n-1, no detrending), lost volumes left out; 0 where the standard deviation is zero. Summarised over the head."},
 	{Name: "tsnr_steady", Unit: "1", Source: krueger,

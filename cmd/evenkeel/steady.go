@@ -218,6 +218,9 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 			if !math.IsNaN(f.ExpectedError) {
 				line += fmt.Sprintf(", path residual %.3f -> %.3f, explained %.2f %%, expected error %.0f um", f.ResidualVolume, f.ResidualPath, 100*f.Explained, 1000*f.ExpectedError)
 			}
+			if f.NoPath != "" {
+				line += ", one pose a volume: " + f.NoPath
+			}
 			if len(o.Outside) > 0 {
 				line += ", outside a limit"
 			}
