@@ -42,7 +42,7 @@ func DefaultSettings() Settings {
 		Motion:     "path",
 		Reference:  Standard{Word: "mean"},
 		Space:      "quintic",
-		Order:      "joint",
+		Order:      orderFor("path"),
 		Store:      "float32",
 	}
 }
@@ -121,8 +121,7 @@ var Choices = []Choice{
 			return parseInt(&s.SincReach, last(v), 1, slicetime.MaxReach)
 		},
 		value: func(s Settings) any { return s.SincReach }},
-	word("motion", []string{"path", "volume", "none"},
-		"a pose for every excitation, one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion }),
+	motion(),
 	{Key: "reference", Values: "mean|first|middle|sbref|INDEX", kind: "a word or the index of a volume",
 		Help: "what every volume is aligned to; mean is the average of the aligned volumes, standing at the pose of the first of them; INDEX counts from 0 after the volumes skipped",
 		parse: func(s *Settings, v []string) error {
@@ -139,7 +138,7 @@ var Choices = []Choice{
 	word("space", []string{"quintic", "cubic"},
 		"degree of the B-spline of the one spatial resampling", func(s *Settings) *string { return &s.Space }),
 	word("order", []string{"joint", "time-first", "space-first"},
-		"joint takes the predicted anatomy out before it interpolates in time; otherwise, which interpolation comes first", func(s *Settings) *string { return &s.Order }),
+		"joint takes the predicted anatomy out before it interpolates in time (it needs the poses of a path to be worth its time: without --motion path the default is time-first); otherwise, which interpolation comes first", func(s *Settings) *string { return &s.Order }),
 	{Key: "skip", Values: "N", kind: "a whole number",
 		Help: "leading volumes left out of the output and the estimate: those before the magnetisation is steady, which show as spikes and high DVARS at the start",
 		parse: func(s *Settings, v []string) error {
@@ -175,6 +174,33 @@ var Choices = []Choice{
 			return nil
 		},
 		value: func(s Settings) any { return s.Events }},
+}
+
+// orderFor is the order unless one is given: anatomy can only be predicted slice by
+// slice along a path.
+func orderFor(motion string) string {
+	if motion == "path" {
+		return "joint"
+	}
+	return "time-first"
+}
+
+// motion declares the setting motion, which the default of order follows.
+func motion() Choice {
+	c := word("motion", []string{"path", "volume", "none"},
+		"a pose for every excitation, one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion })
+	set := c.parse
+	c.parse = func(s *Settings, v []string) error {
+		was := s.Motion
+		if err := set(s, v); err != nil {
+			return err
+		}
+		if s.Order == orderFor(was) {
+			s.Order = orderFor(s.Motion)
+		}
+		return nil
+	}
+	return c
 }
 
 // word declares a setting that is one of a few words.
@@ -307,8 +333,7 @@ func (s *Settings) ReadSettings(file string, data []byte) error {
 	if err != nil || tok != json.Delim('{') {
 		return bad("", "is not a JSON object of settings")
 	}
-	seen := map[string]bool{}
-	next := *s
+	given := make([][]string, len(Choices)) // by choice; nil: not in the file
 	for dec.More() {
 		tok, err := dec.Token()
 		if err != nil {
@@ -323,10 +348,9 @@ func (s *Settings) ReadSettings(file string, data []byte) error {
 			}
 			return bad(key, "no setting has this name%s", DidYouMean(key, keys))
 		}
-		if seen[key] {
+		if given[i] != nil {
 			return bad(key, "is given twice")
 		}
-		seen[key] = true
 		var v any
 		if err := dec.Decode(&v); err != nil {
 			return bad(key, "is not valid JSON: %v", err)
@@ -335,19 +359,25 @@ func (s *Settings) ReadSettings(file string, data []byte) error {
 		if !ok {
 			return bad(key, "found %s, expected %s", jsonWord(v), Choices[i].kind)
 		}
-		if len(words) == 0 { // an empty list: as if nothing had been given
-			next.Accept = nil
-			continue
-		}
-		if err := Choices[i].parse(&next, words); err != nil {
-			return bad(key, "%v", err)
-		}
+		given[i] = append([]string{}, words...)
 	}
 	if _, err := dec.Token(); err != nil {
 		return bad("", "is not valid JSON: %v", err)
 	}
 	if dec.More() {
 		return bad("", "holds more than one JSON value")
+	}
+	next := *s
+	for i, words := range given { // in the declared order, whatever that of the file
+		switch {
+		case words == nil:
+		case len(words) == 0: // an empty list: as if nothing had been given
+			next.Accept = nil
+		default:
+			if err := Choices[i].parse(&next, words); err != nil {
+				return bad(Choices[i].Key, "%v", err)
+			}
+		}
 	}
 	*s = next
 	return nil

@@ -172,3 +172,30 @@ func TestEditDistance(t *testing.T) {
 		}
 	}
 }
+
+// The default of order follows motion, whichever is read first; what is given stays.
+func TestOrderFollowsMotion(t *testing.T) {
+	for _, c := range []struct{ file, want string }{
+		{`{"motion":"volume"}`, "time-first"},
+		{`{"motion":"none"}`, "time-first"},
+		{`{"motion":"path"}`, "joint"},
+		{`{"motion":"volume","order":"joint"}`, "joint"},
+		{`{"order":"joint","motion":"volume"}`, "joint"},
+		{`{"order":"space-first","motion":"volume"}`, "space-first"},
+		{`{"order":"time-first"}`, "time-first"},
+	} {
+		s := DefaultSettings()
+		if err := s.ReadSettings("s.json", []byte(c.file)); err != nil || s.Order != c.want {
+			t.Errorf("%s: order %s (%v), want %s", c.file, s.Order, err, c.want)
+		}
+	}
+	s := DefaultSettings()
+	for _, kv := range [][2]string{{"order", "space-first"}, {"motion", "volume"}} {
+		if err := s.Set(kv[0], kv[1]); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if s.Order != "space-first" {
+		t.Errorf("order given and lost: %s", s.Order)
+	}
+}
