@@ -361,13 +361,15 @@ func TestReferences(t *testing.T) {
 
 // The same run on a grid with axes swapped and flipped, and on an oblique one:
 // the poses are properties of the world, not of the array, up to one offset
-// common to the run, which is where the average stands. Bar: 0.3 um.
+// common to the run, which is where the average stands. Bar: 0.3 um, and 0.05 um where
+// the same samples stand in another order: what thinning leaves out must not depend
+// on where an axis starts.
 func TestPosesDoNotDependOnTheArray(t *testing.T) {
 	g := axial([3]int{44, 52, 28}, [3]float64{4.2, 4, 4.6})
 	poses := randomPoses(12, 5, 1.5, 1.5)
 	data := scan(t, g, poses, 0, nil)
 	base := estimate(t, g, data, realign.Options{SliceAxis: 2, Workers: 2})
-	compare := func(name string, est *realign.Estimate, world realign.Pose) {
+	compare := func(name string, est *realign.Estimate, world realign.Pose, bar float64) {
 		t.Helper()
 		var got []realign.Volume
 		var want []realign.Pose
@@ -377,7 +379,7 @@ func TestPosesDoNotDependOnTheArray(t *testing.T) {
 		}
 		e := poseErrors(got, want)
 		t.Logf("%s: %.3f um", name, e)
-		if worst(e) > 0.3 {
+		if worst(e) > bar {
 			t.Errorf("%s: poses moved by %.3f um", name, e)
 		}
 	}
@@ -422,19 +424,19 @@ func TestPosesDoNotDependOnTheArray(t *testing.T) {
 				}
 			}
 		}
-		compare(c.name, estimate(t, h, moved, realign.Options{SliceAxis: slices.Index(c.perm[:], 2), Workers: 2}), realign.Identity)
+		compare(c.name, estimate(t, h, moved, realign.Options{SliceAxis: slices.Index(c.perm[:], 2), Workers: 2}), realign.Identity, 0.05)
 	}
 	// A rigid change of the world.
 	world := realign.FromParams([3]float64{20, -35, 12}, [3]float64{0.4, -0.3, 0.5}, [3]float64{})
 	h := realign.Grid{N: g.N, Affine: realign.Mul(world.Matrix(), g.Affine)}
-	compare("oblique", estimate(t, h, data, realign.Options{SliceAxis: 2, Workers: 2}), world)
+	compare("oblique", estimate(t, h, data, realign.Options{SliceAxis: 2, Workers: 2}), world, 0.3)
 	// Brightness, and the order of the volumes (against a named volume, as the
 	// mean stands at the first).
 	scaled := make([]float32, len(data))
 	for i, v := range data {
 		scaled[i] = 8 * v
 	}
-	compare("eight times as bright", estimate(t, g, scaled, realign.Options{SliceAxis: 2, Workers: 2}), realign.Identity)
+	compare("eight times as bright", estimate(t, g, scaled, realign.Options{SliceAxis: 2, Workers: 2}), realign.Identity, 0.05)
 	var reversed []float32
 	for n := range poses {
 		reversed = append(reversed, data[(4-n)*nv:][:nv]...)
@@ -442,7 +444,7 @@ func TestPosesDoNotDependOnTheArray(t *testing.T) {
 	base = estimate(t, g, data, realign.Options{Reference: realign.Index, Index: 1, SliceAxis: 2, Workers: 2})
 	back := estimate(t, g, reversed, realign.Options{Reference: realign.Index, Index: 3, SliceAxis: 2, Workers: 2})
 	slices.Reverse(back.Volumes)
-	compare("reversed", back, realign.Identity)
+	compare("reversed", back, realign.Identity, 0.05)
 }
 
 // digestOf hashes everything an estimate gives out.

@@ -57,9 +57,32 @@ var (
 	EdgeMargin  = edgeMargin
 	Invert      = invert
 	Mul         = mul
+	White       = white
 )
 
 const AlignedFit = alignedFit
+
+// PaddedSlices finds padding in a series.
+func PaddedSlices(g Grid, axis int, data []float32) []bool {
+	nv := g.voxels()
+	return paddedSlices(g, axis, len(data)/nv, func(t int) []float32 { return data[t*nv:][:nv] })
+}
+
+// RoughMatches matches volumes with one of them as the first pass does, from the
+// identity, and tells iterations and whether each converged.
+func RoughMatches(g Grid, data []float32, axis int) (iterations []int, converged []bool) {
+	nv := g.voxels()
+	e := newEstimator(context.Background(), g, data, len(data)/nv, Options{SliceAxis: axis, Workers: 1})
+	e.prepare()
+	m := e.newModel(e.volume(0), nil, 3)
+	w := e.scratch[0]
+	for t := range e.nt {
+		w.fine.run(w.vFine, e.volume(t))
+		f := w.m.match(m.fine, w.vFine, Identity, e.fineEffort())
+		iterations, converged = append(iterations, f.iterations), append(converged, f.converged)
+	}
+	return iterations, converged
+}
 
 // RebuildOn gives the path with its reference rebuilt from another recording of
 // the same run (noise-free, say).

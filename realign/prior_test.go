@@ -411,3 +411,41 @@ func TestGapIsBridged(t *testing.T) {
 		t.Errorf("off by %g mm", d)
 	}
 }
+
+// Offsets tell shots from each other; what they share is where the reference stands
+// and is none of theirs, however unequally the shots see.
+func TestOffsetsHaveNoMean(t *testing.T) {
+	times := clocks(10)["even"]
+	r := rand.New(rand.NewPCG(13, 14))
+	var off [12]realign.Params
+	var h [12][6][6]float64
+	for s := range off {
+		h[s] = precision(0.01*(1+5*r.Float64()), 0.2)
+		for k := range off[s] {
+			off[s][k] = 0.02 * r.NormFloat64() / []float64{1, 80}[k/3]
+		}
+	}
+	c := realign.NewChain(times, 12)
+	p := make([]realign.Params, len(times))
+	for range 3 {
+		data := make([]realign.SlotData, len(times))
+		for s := range data {
+			d := wander(times[s])
+			for k := range d {
+				d[k] += off[s%12][k] - p[s][k] - c.Offset()[s%12][k]
+			}
+			data[s] = realign.MakeSlot(h[s%12], d)
+		}
+		c.Update(data, p)
+	}
+	for k := range 6 {
+		sum, most := 0.0, 0.0
+		for _, o := range c.Offset() {
+			sum += o[k]
+			most = max(most, math.Abs(o[k]))
+		}
+		if math.Abs(sum) > 1e-9*most || most == 0 {
+			t.Errorf("component %d: offsets up to %g have the sum %g", k, most, sum)
+		}
+	}
+}
