@@ -1,10 +1,12 @@
 package realign
 
 import (
+	"context"
 	"math"
 	"slices"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/parallel"
 )
 
 // A path is a chain of slots, one for each excitation of the run in order of
@@ -69,8 +71,9 @@ type chain struct {
 	lr     float64
 	m      band
 	delta  []float64
-	fresh  bool // strengths have never been tuned
-	afresh bool // strengths are to be sought from the soft end too, at the next update
+	twin   *chain // scratch: the same chain at other strengths
+	fresh  bool   // strengths have never been tuned
+	afresh bool   // strengths are to be sought from the soft end too, at the next update
 }
 
 func newChain(times []float64, period int) *chain {
@@ -221,19 +224,39 @@ func (c *chain) tune(data []slotData, p []params) {
 			return
 		}
 	}
+	// Up and down are tried side by side, whatever the number of workers.
+	if c.twin == nil {
+		c.twin = &chain{bend: c.bend, w: c.w, m: make(band, len(c.m)), delta: make([]float64, len(c.delta))}
+	}
+	side := [2]*chain{c, c.twin}
 	for _, factor := range []float64{10, 3.2, 1.8} {
 		for moved := true; moved; {
 			moved = false
-			for _, dir := range [][2]float64{{factor, 1}, {1 / factor, 1}, {1, factor}, {1, 1 / factor}} {
+			for _, up := range [][2]float64{{factor, 1}, {1, factor}} {
 				lt, lr := c.lt, c.lr
-				c.lt, c.lr = min(mostShift, float64(lt*dir[0])), min(mostTurn, float64(lr*dir[1]))
-				if c.lt != lt || c.lr != lr {
-					if e, ok := c.step(data, p); ok && e > best {
-						best, moved = e, true
-						continue
+				evidence := [2]float64{math.Inf(-1), math.Inf(-1)}
+				c.lt, c.lr = min(mostShift, float64(lt*up[0])), min(mostTurn, float64(lr*up[1]))
+				c.twin.lt, c.twin.lr = lt/up[0], lr/up[1]
+				capped := c.lt == lt && c.lr == lr
+				// It cannot fail: neither half does, and nothing cancels.
+				_ = parallel.For(context.Background(), len(side), len(side), func(_, i int) error {
+					if i == 0 && capped {
+						return nil
 					}
+					if e, ok := side[i].step(data, p); ok {
+						evidence[i] = e
+					}
+					return nil
+				})
+				switch {
+				case evidence[0] > best && evidence[0] >= evidence[1]:
+					best, moved = evidence[0], true
+				case evidence[1] > best:
+					best, moved = evidence[1], true
+					c.lt, c.lr = c.twin.lt, c.twin.lr
+				default:
+					c.lt, c.lr = lt, lr
 				}
-				c.lt, c.lr = lt, lr
 			}
 		}
 	}
