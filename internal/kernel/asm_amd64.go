@@ -21,3 +21,28 @@ func value5(v *float32, c *float32, mx int, area int, base *int32, tx *float32, 
 //
 //go:noescape
 func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx int, area int, base *int32, tx *float32, ty *float32, tz *float32, n int, table *float32)
+
+// widen is the assembly of widenPlain; n is a multiple of 4.
+//
+//go:noescape
+func widen(a *float64, b *float64, row *float32, w *float32, n int)
+
+// gramBlock is the assembly of gramBlockPlain; n is a multiple of 4.
+//
+//go:noescape
+func gramBlock(sum *float64, a *float64, b *float64, tiles int, n int)
+
+// residual is the assembly of residualPlain.
+//
+//go:noescape
+func residual(r *float32, v *float32, t *float32, p1 *float32, p2 *float32, p3 *float32, n int, gain *float32, masks *int32)
+
+// tukey is the assembly of tukeyPlain.
+//
+//go:noescape
+func tukey(w *float32, r *float32, n int, inverse float32, masks *int32)
+
+// abs is the assembly of absPlain.
+//
+//go:noescape
+func abs(dst *float32, src *float32, n int, masks *int32)

@@ -849,3 +849,258 @@ next:
 end:
 	VZEROUPPER
 	RET
+
+// func widen(a *float64, b *float64, row *float32, w *float32, n int)
+// Requires: AVX
+TEXT ·widen(SB), NOSPLIT, $0-40
+	MOVQ   a+0(FP), AX
+	MOVQ   b+8(FP), CX
+	MOVQ   row+16(FP), DX
+	MOVQ   w+24(FP), BX
+	MOVQ   n+32(FP), SI
+	XORQ   DI, DI
+	VXORPS X0, X0, X0
+
+points:
+	CMPQ      DI, SI
+	JGE       points_end
+	VMOVUPS   (BX)(DI*4), X2
+	VCMPPS    $0x04, X0, X2, X1
+	VANDPS    (DX)(DI*4), X1, X1
+	VCVTPS2PD X1, Y1
+	VCVTPS2PD X2, Y2
+	VMOVUPD   Y1, (CX)(DI*8)
+	VMULPD    Y1, Y2, Y2
+	VMOVUPD   Y2, (AX)(DI*8)
+	ADDQ      $0x00000004, DI
+	JMP       points
+
+points_end:
+	VZEROUPPER
+	RET
+
+// func gramBlock(sum *float64, a *float64, b *float64, tiles int, n int)
+// Requires: AVX
+TEXT ·gramBlock(SB), NOSPLIT, $0-40
+	MOVQ sum+0(FP), AX
+	MOVQ a+8(FP), CX
+	MOVQ b+16(FP), DX
+	MOVQ tiles+24(FP), BX
+	MOVQ n+32(FP), SI
+
+rows:
+	MOVQ DX, R8
+	MOVQ BX, DI
+
+columns:
+	VMOVUPD (AX), Y0
+	VMOVUPD 32(AX), Y1
+	VMOVUPD 64(AX), Y2
+	VMOVUPD 96(AX), Y3
+	VMOVUPD 128(AX), Y4
+	VMOVUPD 160(AX), Y5
+	VMOVUPD 192(AX), Y6
+	VMOVUPD 224(AX), Y7
+	VMOVUPD 256(AX), Y8
+	XORQ    R9, R9
+
+block:
+	CMPQ    R9, SI
+	JGE     block_end
+	VMOVUPD (CX)(R9*8), Y9
+	VMOVUPD 512(CX)(R9*8), Y10
+	VMOVUPD 1024(CX)(R9*8), Y11
+	VMOVUPD (R8)(R9*8), Y12
+	VMULPD  Y9, Y12, Y13
+	VADDPD  Y13, Y0, Y0
+	VMULPD  Y10, Y12, Y13
+	VADDPD  Y13, Y3, Y3
+	VMULPD  Y11, Y12, Y12
+	VADDPD  Y12, Y6, Y6
+	VMOVUPD 512(R8)(R9*8), Y12
+	VMULPD  Y9, Y12, Y13
+	VADDPD  Y13, Y1, Y1
+	VMULPD  Y10, Y12, Y13
+	VADDPD  Y13, Y4, Y4
+	VMULPD  Y11, Y12, Y12
+	VADDPD  Y12, Y7, Y7
+	VMOVUPD 1024(R8)(R9*8), Y12
+	VMULPD  Y9, Y12, Y9
+	VADDPD  Y9, Y2, Y2
+	VMULPD  Y10, Y12, Y9
+	VADDPD  Y9, Y5, Y5
+	VMULPD  Y11, Y12, Y9
+	VADDPD  Y9, Y8, Y8
+	ADDQ    $0x00000004, R9
+	JMP     block
+
+block_end:
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VMOVUPD Y2, 64(AX)
+	VMOVUPD Y3, 96(AX)
+	VMOVUPD Y4, 128(AX)
+	VMOVUPD Y5, 160(AX)
+	VMOVUPD Y6, 192(AX)
+	VMOVUPD Y7, 224(AX)
+	VMOVUPD Y8, 256(AX)
+	ADDQ    $0x00000120, AX
+	ADDQ    $0x00000600, R8
+	DECQ    DI
+	JNZ     columns
+	ADDQ    $0x00000600, CX
+	ADDQ    $0x00000600, DX
+	DECQ    BX
+	JNZ     rows
+	VZEROUPPER
+	RET
+
+// func residual(r *float32, v *float32, t *float32, p1 *float32, p2 *float32, p3 *float32, n int, gain *float32, masks *int32)
+// Requires: AVX
+TEXT ·residual(SB), NOSPLIT, $0-72
+	MOVQ         v+8(FP), AX
+	MOVQ         t+16(FP), CX
+	MOVQ         p1+24(FP), DX
+	MOVQ         p2+32(FP), BX
+	MOVQ         p3+40(FP), SI
+	MOVQ         gain+56(FP), DI
+	VBROADCASTSS (DI), Y0
+	VBROADCASTSS 4(DI), Y1
+	VBROADCASTSS 8(DI), Y2
+	VBROADCASTSS 12(DI), Y3
+	MOVQ         r+0(FP), DI
+	MOVQ         n+48(FP), R8
+	MOVQ         masks+64(FP), R9
+	XORQ         R10, R10
+	MOVQ         R8, R11
+	ANDQ         $-8, R11
+
+eight:
+	CMPQ    R10, R11
+	JGE     eight_end
+	VMOVUPS (DX)(R10*4), Y4
+	VMULPS  Y4, Y1, Y4
+	VADDPS  Y4, Y0, Y4
+	VMOVUPS (BX)(R10*4), Y5
+	VMULPS  Y5, Y2, Y5
+	VADDPS  Y5, Y4, Y4
+	VMOVUPS (SI)(R10*4), Y5
+	VMULPS  Y5, Y3, Y5
+	VADDPS  Y5, Y4, Y4
+	VMOVUPS (CX)(R10*4), Y5
+	VMULPS  Y5, Y4, Y4
+	VMOVUPS (AX)(R10*4), Y5
+	VSUBPS  Y4, Y5, Y5
+	VMOVUPS Y5, (DI)(R10*4)
+	ADDQ    $0x00000008, R10
+	JMP     eight
+
+eight_end:
+	SUBQ       R11, R8
+	JZ         done
+	NEGQ       R8
+	VMOVUPS    32(R9)(R8*4), Y4
+	VMASKMOVPS (DX)(R10*4), Y4, Y5
+	VMULPS     Y5, Y1, Y5
+	VADDPS     Y5, Y0, Y5
+	VMASKMOVPS (BX)(R10*4), Y4, Y0
+	VMULPS     Y0, Y2, Y0
+	VADDPS     Y0, Y5, Y5
+	VMASKMOVPS (SI)(R10*4), Y4, Y0
+	VMULPS     Y0, Y3, Y0
+	VADDPS     Y0, Y5, Y5
+	VMASKMOVPS (CX)(R10*4), Y4, Y0
+	VMULPS     Y0, Y5, Y5
+	VMASKMOVPS (AX)(R10*4), Y4, Y0
+	VSUBPS     Y5, Y0, Y0
+	VMASKMOVPS Y0, Y4, (DI)(R10*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func tukey(w *float32, r *float32, n int, inverse float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·tukey(SB), NOSPLIT, $0-40
+	MOVQ         w+0(FP), AX
+	MOVQ         r+8(FP), CX
+	VBROADCASTSS inverse+24(FP), Y0
+	VPCMPEQD     Y1, Y1, Y1
+	VPSLLD       $0x19, Y1, Y1
+	VPSRLD       $0x02, Y1, Y1
+	VXORPS       Y2, Y2, Y2
+	MOVQ         w+0(FP), DX
+	MOVQ         n+16(FP), BX
+	MOVQ         masks+32(FP), SI
+	XORQ         DI, DI
+	MOVQ         BX, R8
+	ANDQ         $-8, R8
+
+eight:
+	CMPQ    DI, R8
+	JGE     eight_end
+	VMOVUPS (CX)(DI*4), Y3
+	VMULPS  Y3, Y0, Y3
+	VMULPS  Y3, Y3, Y3
+	VSUBPS  Y3, Y1, Y3
+	VMAXPS  Y2, Y3, Y3
+	VMULPS  Y3, Y3, Y3
+	VMOVUPS (AX)(DI*4), Y4
+	VMULPS  Y4, Y3, Y3
+	VMOVUPS Y3, (DX)(DI*4)
+	ADDQ    $0x00000008, DI
+	JMP     eight
+
+eight_end:
+	SUBQ       R8, BX
+	JZ         done
+	NEGQ       BX
+	VMOVUPS    32(SI)(BX*4), Y3
+	VMASKMOVPS (CX)(DI*4), Y3, Y4
+	VMULPS     Y4, Y0, Y4
+	VMULPS     Y4, Y4, Y4
+	VSUBPS     Y4, Y1, Y4
+	VMAXPS     Y2, Y4, Y4
+	VMULPS     Y4, Y4, Y4
+	VMASKMOVPS (AX)(DI*4), Y3, Y0
+	VMULPS     Y0, Y4, Y4
+	VMASKMOVPS Y4, Y3, (DX)(DI*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func abs(dst *float32, src *float32, n int, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·abs(SB), NOSPLIT, $0-32
+	MOVQ     src+8(FP), AX
+	VPCMPEQD Y0, Y0, Y0
+	VPSRLD   $0x01, Y0, Y0
+	MOVQ     dst+0(FP), CX
+	MOVQ     n+16(FP), DX
+	MOVQ     masks+24(FP), BX
+	XORQ     SI, SI
+	MOVQ     DX, DI
+	ANDQ     $-8, DI
+
+eight:
+	CMPQ    SI, DI
+	JGE     eight_end
+	VMOVUPS (AX)(SI*4), Y1
+	VANDPS  Y0, Y1, Y1
+	VMOVUPS Y1, (CX)(SI*4)
+	ADDQ    $0x00000008, SI
+	JMP     eight
+
+eight_end:
+	SUBQ       DI, DX
+	JZ         done
+	NEGQ       DX
+	VMOVUPS    32(BX)(DX*4), Y1
+	VMASKMOVPS (AX)(SI*4), Y1, Y2
+	VANDPS     Y0, Y2, Y2
+	VMASKMOVPS Y2, Y1, (CX)(SI*4)
+
+done:
+	VZEROUPPER
+	RET

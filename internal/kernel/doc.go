@@ -6,7 +6,8 @@
 // ends in the plain twin of its assembly, with the same lanes and the same order of
 // sums, and products are rounded before they are added (no fused multiply-add:
 // the conversions in float32(a*b) + c see to that under GOAMD64=v3 and on arm64
-// too). So results hang on no processor, nor on how work is cut into calls.
+// too). So results hang on no processor, nor, but for [Gram], on how work is cut into
+// calls.
 //
 // Which twin runs is decided once, by the processor; EVENKEEL_PLAIN=1 in the
 // environment forces plain Go.

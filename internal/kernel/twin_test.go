@@ -42,6 +42,9 @@ func digest(rows ...[]float32) string {
 	for _, r := range rows {
 		for _, v := range r {
 			u := math.Float32bits(v)
+			if v != v {
+				u = 0x7fc00000 // what a NaN holds besides is the processor's affair
+			}
 			b = [4]byte{byte(u), byte(u >> 8), byte(u >> 16), byte(u >> 24)}
 			h.Write(b[:])
 		}

@@ -43,6 +43,8 @@ var g *build.Context
 func generate() (map[string][]byte, error) {
 	g = build.NewContext()
 	points()
+	gram()
+	rows()
 
 	f, err := g.Result()
 	if err != nil {

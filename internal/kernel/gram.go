@@ -1,0 +1,100 @@
+package kernel
+
+// MostRows is the largest number of rows of [Gram].
+const MostRows = 12
+
+// gramBlock points are widened at a time: all rows twice then fit the fastest cache.
+const gramPoints = 64
+
+// Gram adds weighted products of rows to sum: for a <= b, in the order (0,0),
+// (0,1) ... (0,m-1), (1,1) ..., the sum over i of w[i] rows[a][i] rows[b][i].
+// Rows, at most MostRows, and w are of one length; sum holds m (m+1)/2 values.
+//
+// A point of weight zero does not count, whatever its rows hold. Arithmetic is in
+// float64, point i in lane i mod 4; lanes join as (0 + 2) + (1 + 3). What comes out
+// so hangs on the length of the call, though not on the processor.
+func Gram(sum []float64, rows [][]float32, w []float32) {
+	m, n := len(rows), len(w)
+	check(m <= MostRows && len(sum) == m*(m+1)/2, "too many rows, or sums of another number of rows")
+	for _, r := range rows {
+		check(len(r) == n, "rows and weights differ in length")
+	}
+	tiles := (m + 2) / 3
+	var a, b [MostRows * gramPoints]float64
+	var acc [MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64
+	var tail [2][gramPoints]float32
+	for from := 0; from < n; from += gramPoints {
+		k := min(gramPoints, n-from)
+		weights := w[from : from+k]
+		wide := (k + 3) &^ 3
+		if k < wide {
+			// The missing points weigh nothing.
+			weights = tail[0][:wide]
+			copy(weights, w[from:])
+		}
+		for r, row := range rows {
+			row = row[from : from+k]
+			if k < wide {
+				copy(tail[1][:wide], row)
+				row = tail[1][:wide]
+			}
+			if useAssembly {
+				widen(&a[gramPoints*r], &b[gramPoints*r], &row[0], &weights[0], wide)
+			} else {
+				widenPlain(a[gramPoints*r:][:wide], b[gramPoints*r:][:wide], row, weights)
+			}
+		}
+		if m == 0 {
+			continue
+		}
+		if useAssembly {
+			gramBlock(&acc[0][0][0], &a[0], &b[0], tiles, wide)
+		} else {
+			gramBlockPlain(&acc, &a, &b, tiles, wide)
+		}
+	}
+	at := 0
+	for r := range m {
+		for c := r; c < m; c++ {
+			// Tiles of 3x3 pairs, in the order of the upper triangle.
+			i, j := r/3, c/3
+			s := &acc[i*tiles-i*(i-1)/2+j-i][3*(r%3)+c%3]
+			sum[at] += (s[0] + s[2]) + (s[1] + s[3])
+			at++
+		}
+	}
+}
+
+func widenPlain(a, b []float64, row, w []float32) {
+	a, b, row = a[:len(w)], b[:len(w)], row[:len(w)]
+	for i, v := range w {
+		r := row[i]
+		if v == 0 {
+			r = 0
+		}
+		b[i] = float64(r)
+		a[i] = float64(v) * float64(r)
+	}
+}
+
+func gramBlockPlain(acc *[MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64, a, b *[MostRows * gramPoints]float64, tiles, n int) {
+	at := 0
+	for i := range tiles {
+		for j := i; j < tiles; j++ {
+			for k := range 9 {
+				x, y := a[gramPoints*(3*i+k/3):][:n], b[gramPoints*(3*j+k%3):][:n]
+				s := &acc[at][k]
+				s0, s1, s2, s3 := s[0], s[1], s[2], s[3]
+				for len(x) >= 4 && len(y) >= 4 {
+					s0 += float64(x[0] * y[0])
+					s1 += float64(x[1] * y[1])
+					s2 += float64(x[2] * y[2])
+					s3 += float64(x[3] * y[3])
+					x, y = x[4:], y[4:]
+				}
+				*s = [4]float64{s0, s1, s2, s3}
+			}
+			at++
+		}
+	}
+}
