@@ -120,9 +120,22 @@ func (c *converter) convert(dst []float32, b []byte) int {
 
 // firstNotFinite returns the index of the first NaN or infinity, or -1.
 func firstNotFinite(v []float32) int {
-	for i, x := range v {
-		if x-x != 0 { // NaN for both
-			return i
+	// An exponent of all ones, plus one, is the sign bit.
+	const exponent, one = 0x7f800000, 0x00800000
+	from := 0
+	for ; from+8 <= len(v); from += 8 {
+		d := v[from : from+8 : from+8]
+		any := uint32(0)
+		for i := range 8 {
+			any |= math.Float32bits(d[i])&exponent + one
+		}
+		if any>>31 != 0 {
+			break
+		}
+	}
+	for i, x := range v[from:] {
+		if math.Float32bits(x)&exponent == exponent {
+			return from + i
 		}
 	}
 	return -1

@@ -10,25 +10,41 @@ import (
 )
 
 // Writer writes one-file images, little-endian, as plain bytes or as one gzip
-// member without name and time: the bytes depend on header and voxels alone.
-// It belongs to one goroutine, and compresses on as many cores as there are. A
-// Writer that is given up needs no Close.
+// member without name and time: the bytes depend on header and voxels alone, and
+// are those that a [VolumeWriter] writes. It belongs to one goroutine, and
+// compresses on as many cores as there are. A Writer that is given up needs no
+// Close.
 type Writer struct {
+	frame
+	d   *deflater
+	buf []byte // the piece under way
+	t   int    // volumes written
+	err error
+}
+
+// A frame is what stands around the voxels, and how they are stored.
+type frame struct {
 	h            *Header // as a reader will see it
-	w            io.Writer
-	gz           *deflater // nil for plain bytes
-	buf          []byte    // voxels not yet handed on
+	begin        []byte  // header and empty flag
 	slope, inter float64
-	t            int // volumes written
-	err          error
 }
 
 // NewWriter begins an image with the header h (VoxOffset is set by us) and an empty
 // extension flag. Scaling is that of h, and must be none for float types. h must be one that
 // this package would read (see [Open]) and fit its Version; else an [*Error]
 // without a file says which field does not. Nothing is written to w before the
-// first 1 MiB has come together, or Close.
+// first volume, or Close.
 func NewWriter(w io.Writer, h *Header, compress bool) (*Writer, error) {
+	f, err := newFrame(h)
+	if err != nil {
+		return nil, err
+	}
+	room := max(len(f.begin), min(blockBytes, f.volumeBytes()))
+	return &Writer{frame: *f, d: newDeflater(w, compress, level(f.h.Datatype)), buf: append(make([]byte, 0, room), f.begin...)}, nil
+}
+
+// newFrame checks h and fixes what is written of it.
+func newFrame(h *Header) (*frame, error) {
 	d := *h
 	d.BigEndian = false
 	d.VoxOffset = d.minOffset()
@@ -57,11 +73,27 @@ func NewWriter(w io.Writer, h *Header, compress bool) (*Writer, error) {
 	case wanted && d.SclSlope != 0 && got.SclSlope == 0:
 		return nil, &Error{Kind: KindHeader, Field: "scl_slope", Found: fmt.Sprint(h.SclSlope), Expected: "a number that float32 tells from zero"}
 	}
-	wr := &Writer{h: got, w: w, slope: slope, inter: inter, buf: append(make([]byte, 0, blockBytes), b...)}
-	if compress {
-		wr.gz = newDeflater(w, level(d.Datatype))
-	}
-	return wr, nil
+	return &frame{h: got, begin: b, slope: slope, inter: inter}, nil
+}
+
+func (f *frame) volumeBytes() int { return f.h.voxels() * f.h.Datatype.Bytes() }
+
+// notFinite is the complaint about value i of volume t.
+func (f *frame) notFinite(t, i int, v float32) error {
+	nx, ny, _, _ := f.h.Size()
+	return &Error{Kind: KindValues, Field: fmt.Sprintf("voxel (%d,%d,%d), volume %d", i%nx, i/nx%ny, i/nx/ny, t), Found: fmt.Sprint(v), Expected: "a finite number"}
+}
+
+// tooMany is the complaint about a volume that the header does not declare.
+func (f *frame) tooMany() error {
+	_, _, _, nt := f.h.Size()
+	return fmt.Errorf("nifti: a volume more than the %d of the header", nt)
+}
+
+// tooFew is the complaint of Close about volumes that are not there.
+func (f *frame) tooFew(t int) error {
+	_, _, _, nt := f.h.Size()
+	return fmt.Errorf("nifti: %d volumes written of the %d in the header", t, nt)
 }
 
 // level chooses the compression by voxel type; see BenchmarkLevels.
@@ -86,22 +118,24 @@ func (w *Writer) WriteVolume(v []float32) error {
 	if w.err != nil {
 		return w.err
 	}
-	nx, ny, _, nt := w.h.Size()
-	if w.t == nt {
-		return w.fail(fmt.Errorf("nifti: a volume more than the %d of the header", nt))
+	if _, _, _, nt := w.h.Size(); w.t == nt {
+		return w.fail(w.tooMany())
 	}
 	if i := firstNotFinite(v); i >= 0 {
-		return w.fail(&Error{Kind: KindValues, Field: fmt.Sprintf("voxel (%d,%d,%d), volume %d", i%nx, i/nx%ny, i/nx/ny, w.t), Found: fmt.Sprint(v[i]), Expected: "a finite number"})
+		return w.fail(w.notFinite(w.t, i, v[i]))
+	}
+	if w.t == 0 {
+		if err := w.flush(); err != nil { // the header
+			return err
+		}
 	}
 	size := w.h.Datatype.Bytes()
 	for len(v) > 0 {
-		k := min(len(v), (blockBytes-len(w.buf))/size)
+		k := min(len(v), blockBytes/size)
 		w.buf = appendVoxels(w.buf, v[:k], w.h.Datatype, w.slope, w.inter)
 		v = v[k:]
-		if len(w.buf) == blockBytes {
-			if err := w.flush(false); err != nil {
-				return err
-			}
+		if err := w.flush(); err != nil {
+			return err
 		}
 	}
 	w.t++
@@ -109,15 +143,8 @@ func (w *Writer) WriteVolume(v []float32) error {
 }
 
 // flush hands the collected bytes on.
-func (w *Writer) flush(last bool) error {
-	var err error
-	if w.gz != nil {
-		w.buf, err = w.gz.compress(w.buf, last)
-	} else {
-		_, err = w.w.Write(w.buf)
-		w.buf = w.buf[:0]
-	}
-	if err != nil {
+func (w *Writer) flush() (err error) {
+	if w.buf, err = w.d.next(w.buf); err != nil {
 		return w.fail(fmt.Errorf("nifti: writing: %w", err))
 	}
 	return nil
@@ -137,10 +164,10 @@ func (w *Writer) Close() error {
 		return w.err
 	}
 	if _, _, _, nt := w.h.Size(); w.t != nt {
-		return w.fail(fmt.Errorf("nifti: %d volumes written of the %d in the header", w.t, nt))
+		return w.fail(w.tooFew(w.t))
 	}
-	if err := w.flush(true); err != nil {
-		return err
+	if err := w.d.end(); err != nil {
+		return w.fail(fmt.Errorf("nifti: writing: %w", err))
 	}
 	w.err = errClosed
 	return nil

@@ -1,0 +1,5 @@
+//go:build race
+
+package nifti
+
+const raceEnabled = true
