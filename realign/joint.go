@@ -18,8 +18,8 @@ import (
 //     pose at that instant, one spatial interpolation, and the template,
 //     which needs none, is put back.
 //
-// Sudden motion and motion faster than the volumes then do not ring through
-// neighbouring volumes. (Our own combination; the parts are as cited in this
+// Sudden motion and motion faster than the volumes then hardly ring through
+// neighbouring volumes, where the poses are right. (Our own combination; the parts are as cited in this
 // package and in slicetime. Compare the joint space-time interpolation of
 // Roche 2011, IEEE TMI 30(8):1546-1554.)
 //

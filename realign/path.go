@@ -41,6 +41,7 @@ type PathEstimate struct {
 	Sigma    float64 // noise, in units of the images: scale of the residuals
 	Evidence float64 // of the path, at the last step: log, up to a constant
 	LastStep float64 // the last change of a slot's pose, at most, mm at 80 mm
+	Settled  bool    // LastStep is small beside what a slot is uncertain by; if not, Expected is too small
 	// Residuals of pixels that took no part in finding the path, over Sigma: their scale,
 	// rms over slots, with one pose a volume and along the path.
 	VolumeResidual float64
@@ -260,7 +261,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 				return nil, err
 			}
 			if allowed := harm + harmLeaning/float64(countState(e.est.Volumes, Aligned)); out.PathResidual > float64(allowed*out.VolumeResidual) {
-				return fallBack(fmt.Sprintf("pixels that took no part fit worse along the path than with one pose a volume (residuals of %.3g against %.3g)", out.PathResidual, out.VolumeResidual)), nil
+				return fallBack(fmt.Sprintf("pixels kept aside fit worse along the path than with one pose a volume, by more than chance (residuals of %.4g against %.4g, %.2f %% allowed)", out.PathResidual, out.VolumeResidual, 100*(allowed-1))), nil
 			}
 		}
 		last := pass+1 >= pathPasses && (out.LastStep < settledStep || pass+1 >= mostPasses)
@@ -284,7 +285,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	}
 	e.expect(c, slots, out.Expected)
 	e.holdEnds(out.Expected)
-	out.Sigma = e.sigma
+	out.Sigma, out.Settled = e.sigma, out.LastStep < settledStep
 	if e.explain[1] > 0 {
 		out.Explained = 1 - e.explain[0]/e.explain[1]
 	}
