@@ -13,7 +13,8 @@
 //     and [Open] hold every header field that is used against its limits and
 //     the declared size against the file's real size, before any memory is
 //     allocated that depends on them.
-//  2. A [Reader] holds a fixed amount of memory, whatever the header declares.
+//  2. A [Reader] holds a fixed amount of memory, whatever the header declares;
+//     a [Stream] and a [VolumeWriter] that of a fixed number of volumes.
 //  3. A complaint about the content of a file is an [*Error] with its kind, file and
 //     field. A failure of the file system, of the tap or of the writer below
 //     is returned as it came, wrapped, and never as an [*Error].
@@ -21,7 +22,8 @@
 //     the last gzip member, or too few of them, are errors.
 //  5. Voxel values are finite, in what is read and in what is written.
 //  6. What is written depends on header and voxels alone: not on the number of
-//     cores, the time, the file name or how the calls were spread.
+//     cores, the time, the file name or how the calls were spread over time and
+//     goroutines; and is the same from a [Writer] and a [VolumeWriter].
 //  7. The fields that place a voxel in space are kept bit for bit by
 //     [Header.Derived] and [NewWriter].
 //

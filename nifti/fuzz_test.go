@@ -96,7 +96,7 @@ func FuzzReader(f *testing.F) {
 				dst = make([]float32, n)
 			}
 			for err == nil {
-				err = r.volume(dst)
+				err = r.volume(dst, nil)
 			}
 			switch {
 			case err != io.EOF:

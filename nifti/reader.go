@@ -107,21 +107,33 @@ func (r *Reader) ReadVolume(dst []float32) error {
 	if len(dst) != r.h.voxels() {
 		panic("nifti: ReadVolume into a slice that is not one volume long")
 	}
-	return r.volume(dst)
+	return r.volume(dst, nil)
+}
+
+// ReadStored decodes the next volume into v as it is stored, and is otherwise as
+// [Reader.ReadVolume]: v must come from [NewStored] for an image of this size and
+// type (anything else panics).
+func (r *Reader) ReadStored(v *StoredVolume) error {
+	if v.n != r.h.voxels() || v.conv.dt != r.h.Datatype {
+		panic("nifti: ReadStored into a volume of another image")
+	}
+	v.conv = r.conv
+	return r.volume(nil, v)
 }
 
 // SkipVolume reads past the next volume, without looking at its values; io.EOF
 // as for ReadVolume.
-func (r *Reader) SkipVolume() error { return r.volume(nil) }
+func (r *Reader) SkipVolume() error { return r.volume(nil, nil) }
 
-func (r *Reader) volume(dst []float32) error {
+// volume reads the next volume into dst, or v, or past it.
+func (r *Reader) volume(dst []float32, v *StoredVolume) error {
 	if r.err == nil {
-		r.err = r.next(dst)
+		r.err = r.next(dst, v)
 	}
 	return r.err
 }
 
-func (r *Reader) next(dst []float32) error {
+func (r *Reader) next(dst []float32, v *StoredVolume) error {
 	_, _, _, nt := r.h.Size()
 	if err := r.skipToVoxels(); err != nil {
 		return err
@@ -143,6 +155,11 @@ func (r *Reader) next(dst []float32) error {
 		if dst != nil {
 			if i := r.conv.convert(dst[done:done+k], b); i >= 0 {
 				return r.notFinite(done+i, dst[done+i])
+			}
+		}
+		if v != nil {
+			if i, x := v.take(done, b); i >= 0 {
+				return r.notFinite(done+i, x)
 			}
 		}
 		done += k

@@ -1,9 +1,6 @@
 package nifti
 
-import (
-	"fmt"
-	"io"
-)
+import "io"
 
 // Series is a 4-D image: Data[x+NX*(y+NY*(z+NZ*t))].
 type Series struct {
@@ -23,10 +20,7 @@ func (s *Series) Volume(t int) []float32 {
 // volume left gives an [*Error]. Errors and tap are those of [Open] and
 // [Reader.ReadVolume].
 func ReadSeries(path string, tap io.Writer, skip int) (h *Header, s *Series, err error) {
-	if skip < 0 {
-		panic("nifti: ReadSeries with a negative number of volumes to skip")
-	}
-	r, err := Open(path, tap)
+	r, nt, err := openBehind(path, tap, skip)
 	if err != nil {
 		return nil, nil, err
 	}
@@ -36,16 +30,8 @@ func ReadSeries(path string, tap io.Writer, skip int) (h *Header, s *Series, err
 		}
 	}()
 	h = r.Header()
-	nx, ny, nz, nt := h.Size()
-	if skip >= nt {
-		return nil, nil, &Error{Kind: KindSize, File: path, Field: "dim[4]", Found: fmt.Sprintf("%d volumes", nt), Expected: fmt.Sprintf("more than the %d to be left out", skip)}
-	}
-	for range skip {
-		if err := r.SkipVolume(); err != nil {
-			return nil, nil, err
-		}
-	}
-	s = &Series{NX: nx, NY: ny, NZ: nz, NT: nt - skip}
+	nx, ny, nz, _ := h.Size()
+	s = &Series{NX: nx, NY: ny, NZ: nz, NT: nt}
 	s.Data = make([]float32, nx*ny*nz*s.NT)
 	for t := range s.NT {
 		if err := r.ReadVolume(s.Volume(t)); err != nil {

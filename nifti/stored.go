@@ -1,0 +1,219 @@
+package nifti
+
+import (
+	"encoding/binary"
+	"fmt"
+	"io"
+)
+
+// A StoredVolume is one volume in the smallest form that loses nothing: voxels of
+// 8 and 16 bits as they are stored, a quarter and half of their float32 values;
+// of every other type the float32 values that [Reader.ReadVolume] gives. To widen
+// it gives the bits that ReadVolume gives.
+//
+// It may be read by several goroutines at once.
+type StoredVolume struct {
+	conv   converter
+	n      int
+	b8     []byte    // Uint8, Int8
+	b16    []int16   // Int16; Uint16 as the same bits
+	f32    []float32 // all others, scaled
+	wide   []float32 // where 8 or 16 bits can become something not finite: to look
+	index  int
+	origin *Stream // nil if it belongs to the caller
+	out    bool    // handed out by origin
+}
+
+// NewStored returns room for one volume of an image with header h.
+func NewStored(h *Header) *StoredVolume {
+	v := &StoredVolume{conv: newConverter(h), n: h.voxels()}
+	switch h.Datatype.Bytes() {
+	case 1:
+		v.b8 = make([]byte, v.n)
+	case 2:
+		v.b16 = make([]int16, v.n)
+	default:
+		v.f32 = make([]float32, v.n)
+	}
+	return v
+}
+
+// StoredBytes returns the memory of one [StoredVolume] of an image with header h.
+func (h *Header) StoredBytes() int64 {
+	return int64(h.voxels()) * int64(min(h.Datatype.Bytes(), 4))
+}
+
+// Len returns the number of voxels.
+func (v *StoredVolume) Len() int { return v.n }
+
+// Index returns the number of the volume in its [Stream], counted from 0 after
+// those left out.
+func (v *StoredVolume) Index() int { return v.index }
+
+// Int16 returns the stored voxels where the type of the image is [Int16], else
+// nil. They alias v and must not be changed; [Header.Scaling] tells what they
+// mean.
+func (v *StoredVolume) Int16() []int16 {
+	if v.conv.dt != Int16 {
+		return nil
+	}
+	return v.b16
+}
+
+// Float32 returns the values of an image that is held as such (see
+// [StoredVolume]), else nil. They alias v and must not be changed.
+func (v *StoredVolume) Float32() []float32 { return v.f32 }
+
+// Widen gives the len(dst) values from voxel number from on. It allocates nothing.
+// Voxels that are not there panic.
+func (v *StoredVolume) Widen(dst []float32, from int) {
+	if from < 0 || from > v.n || len(dst) > v.n-from {
+		panic("nifti: Widen beyond the volume")
+	}
+	c := &v.conv
+	switch {
+	case v.f32 != nil:
+		copy(dst, v.f32[from:])
+	case v.b8 != nil:
+		c.widen8(dst, v.b8[from:from+len(dst)])
+	case c.dt == Uint16 && c.scaled:
+		for i, x := range v.b16[from : from+len(dst)] {
+			dst[i] = float32(float64(c.slope*float64(uint16(x))) + c.inter)
+		}
+	case c.dt == Uint16:
+		for i, x := range v.b16[from : from+len(dst)] {
+			dst[i] = float32(uint16(x))
+		}
+	case c.scaled:
+		for i, x := range v.b16[from : from+len(dst)] {
+			dst[i] = float32(float64(c.slope*float64(x)) + c.inter)
+		}
+	default:
+		for i, x := range v.b16[from : from+len(dst)] {
+			dst[i] = float32(x)
+		}
+	}
+}
+
+// widen8 is convert for one byte a voxel, without looking at the values.
+func (c *converter) widen8(dst []float32, b []byte) {
+	b = b[:len(dst)]
+	switch c.dt {
+	case Uint8:
+		for i, x := range b {
+			dst[i] = float32(float64(c.slope*float64(x)) + c.inter)
+		}
+	default:
+		for i, x := range b {
+			dst[i] = float32(float64(c.slope*float64(int8(x))) + c.inter)
+		}
+	}
+}
+
+// take stores the voxels in b from voxel number at on; b may be changed. It
+// returns the index, from there, of the first value that is not finite and the
+// value, or -1.
+func (v *StoredVolume) take(at int, b []byte) (int, float32) {
+	n := len(b) / v.conv.dt.Bytes()
+	switch {
+	case v.f32 != nil:
+		dst := v.f32[at : at+n]
+		if i := v.conv.convert(dst, b); i >= 0 {
+			return i, dst[i]
+		}
+		return -1, 0
+	case v.b8 != nil:
+		copy(v.b8[at:], b)
+	default:
+		if v.conv.swap {
+			swapBytes(b, 2)
+		}
+		dst := v.b16[at : at+n]
+		le := binary.LittleEndian
+		// Four at a time out of one load.
+		k := n &^ 3
+		for i := 0; i < k; i += 4 {
+			x, d := le.Uint64(b[2*i:]), dst[i:i+4:i+4]
+			d[0], d[1], d[2], d[3] = int16(x), int16(x>>16), int16(x>>32), int16(x>>48)
+		}
+		for i := k; i < n; i++ {
+			dst[i] = int16(le.Uint16(b[2*i:]))
+		}
+	}
+	if !v.conv.mustCheck {
+		return -1, 0
+	}
+	if len(v.wide) < n {
+		v.wide = make([]float32, n)
+	}
+	v.Widen(v.wide[:n], at)
+	if i := firstNotFinite(v.wide[:n]); i >= 0 {
+		return i, v.wide[i]
+	}
+	return -1, 0
+}
+
+// A StoredSeries is a whole image in memory, in the smallest form that loses
+// nothing; see [StoredVolume]. It may be read by several goroutines at once.
+type StoredSeries struct {
+	NX, NY, NZ, NT int
+	vols           []*StoredVolume
+}
+
+// Volume returns volume t, which stays a part of the series.
+func (s *StoredSeries) Volume(t int) *StoredVolume { return s.vols[t] }
+
+// Widen gives the len(dst) values of volume t from voxel number from on, as
+// [StoredVolume.Widen] does.
+func (s *StoredSeries) Widen(dst []float32, t, from int) { s.vols[t].Widen(dst, from) }
+
+// ReadStored is [ReadSeries] for a series as it is stored.
+func ReadStored(path string, tap io.Writer, skip int) (h *Header, s *StoredSeries, err error) {
+	r, nt, err := openBehind(path, tap, skip)
+	if err != nil {
+		return nil, nil, err
+	}
+	defer func() {
+		if e := r.Close(); e != nil && err == nil {
+			h, s, err = nil, nil, e
+		}
+	}()
+	nx, ny, nz, _ := r.h.Size()
+	s = &StoredSeries{NX: nx, NY: ny, NZ: nz, NT: nt}
+	for t := range nt {
+		v := NewStored(r.h)
+		v.index = t
+		if err := r.ReadStored(v); err != nil {
+			return nil, nil, err
+		}
+		v.wide = nil
+		s.vols = append(s.vols, v)
+	}
+	if err := r.SkipVolume(); err != io.EOF {
+		return nil, nil, err
+	}
+	return r.h, s, nil
+}
+
+// openBehind opens an image and reads past the first skip volumes; nt are left.
+func openBehind(path string, tap io.Writer, skip int) (*Reader, int, error) {
+	if skip < 0 {
+		panic("nifti: a negative number of volumes to skip")
+	}
+	r, err := Open(path, tap)
+	if err != nil {
+		return nil, 0, err
+	}
+	_, _, _, nt := r.h.Size()
+	if skip >= nt {
+		r.Close()
+		return nil, 0, &Error{Kind: KindSize, File: path, Field: "dim[4]", Found: fmt.Sprintf("%d volumes", nt), Expected: fmt.Sprintf("more than the %d to be left out", skip)}
+	}
+	for range skip {
+		if err := r.SkipVolume(); err != nil {
+			r.Close()
+			return nil, 0, err
+		}
+	}
+	return r, nt - skip, nil
+}
