@@ -22,6 +22,41 @@ func value5(v *float32, c *float32, mx int, area int, base *int32, tx *float32, 
 //go:noescape
 func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx int, area int, base *int32, tx *float32, ty *float32, tz *float32, n int, table *float32)
 
+// strip3x32 is the assembly of stripPlain, degree 3, 32 lanes.
+//
+//go:noescape
+func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+
+// strip3x8 is the assembly of stripPlain, degree 3, 8 lanes.
+//
+//go:noescape
+func strip3x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+
+// strip5x32 is the assembly of stripPlain, degree 5, 32 lanes.
+//
+//go:noescape
+func strip5x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+
+// strip5x8 is the assembly of stripPlain, degree 5, 8 lanes.
+//
+//go:noescape
+func strip5x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+
+// gather is the assembly of gatherPlain; n is at least 8.
+//
+//go:noescape
+func gather(t *float32, stride int, rows *float32, offsets *int, n int)
+
+// scatter is the assembly of scatterPlain; n is at least 8.
+//
+//go:noescape
+func scatter(rows *float32, offsets *int, t *float32, stride int, n int)
+
+// reflect is the assembly of reflectPlain.
+//
+//go:noescape
+func reflect(dst *float32, end *float32, inner *float32, n int, masks *int32)
+
 // widen is the assembly of widenPlain; n is a multiple of 4.
 //
 //go:noescape

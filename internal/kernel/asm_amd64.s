@@ -850,6 +850,945 @@ end:
 	VZEROUPPER
 	RET
 
+// func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+// Requires: AVX, AVX2
+TEXT ·strip3x32(SB), NOSPLIT, $0-88
+	MOVQ         dst+0(FP), AX
+	MOVQ         dstStride+8(FP), CX
+	MOVQ         src+16(FP), DX
+	MOVQ         srcStride+24(FP), BX
+	SHLQ         $0x02, CX
+	SHLQ         $0x02, BX
+	MOVQ         work+32(FP), SI
+	MOVQ         n+40(FP), DI
+	MOVQ         factors+48(FP), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	MOVQ         DI, R9
+	DECQ         R9
+	MOVQ         R9, R10
+	IMULQ        CX, R10
+	ADDQ         AX, R10
+	IMULQ        BX, R9
+	ADDQ         DX, R9
+	VBROADCASTSS 4(R8), Y1
+	VMOVUPS      (DX), Y2
+	VMOVUPS      (R9), Y3
+	VMOVUPS      Y2, (AX)
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      Y2, (SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 128(SI)
+	VMOVUPS      32(DX), Y2
+	VMOVUPS      32(R9), Y3
+	VMOVUPS      Y2, 32(AX)
+	VMOVUPS      Y3, 32(R10)
+	VMOVUPS      Y2, 32(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 160(SI)
+	VMOVUPS      64(DX), Y2
+	VMOVUPS      64(R9), Y3
+	VMOVUPS      Y2, 64(AX)
+	VMOVUPS      Y3, 64(R10)
+	VMOVUPS      Y2, 64(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 192(SI)
+	VMOVUPS      96(DX), Y2
+	VMOVUPS      96(R9), Y3
+	VMOVUPS      Y2, 96(AX)
+	VMOVUPS      Y3, 96(R10)
+	VMOVUPS      Y2, 96(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 224(SI)
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	CMPQ         R11, $+0
+	JLE          end
+	VBROADCASTSS (R8), Y1
+	VMOVAPS      Y0, Y2
+	MOVQ         DX, R9
+	ADDQ         BX, R9
+	LEAQ         384(SI), R10
+
+detrend:
+	VMOVUPS      (R9), Y3
+	VSUBPS       (SI), Y3, Y3
+	VMULPS       128(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      32(R9), Y3
+	VSUBPS       32(SI), Y3, Y3
+	VMULPS       160(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 32(R10)
+	VMOVUPS      64(R9), Y3
+	VSUBPS       64(SI), Y3, Y3
+	VMULPS       192(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 64(R10)
+	VMOVUPS      96(R9), Y3
+	VSUBPS       96(SI), Y3, Y3
+	VMULPS       224(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 96(R10)
+	VADDPS       Y0, Y2, Y2
+	ADDQ         BX, R9
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          detrend
+	VBROADCASTSS 12(R8), Y1
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+	VXORPS       Y5, Y5, Y5
+	VXORPS       Y6, Y6, Y6
+	MOVQ         w1+56(FP), DX
+	MOVQ         k1+64(FP), R11
+	LEAQ         384(SI), R10
+	TESTQ        R11, R11
+	JZ           begun1
+
+begin1:
+	VBROADCASTSS (DX), Y2
+	VMULPS       (R10), Y2, Y7
+	VADDPS       Y7, Y3, Y3
+	VMULPS       32(R10), Y2, Y7
+	VADDPS       Y7, Y4, Y4
+	VMULPS       64(R10), Y2, Y7
+	VADDPS       Y7, Y5, Y5
+	VMULPS       96(R10), Y2, Y2
+	VADDPS       Y2, Y6, Y6
+	ADDQ         $+4, DX
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          begin1
+
+begun1:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 384(SI), R10
+
+forward1:
+	VMULPS       Y1, Y3, Y3
+	VADDPS       (R10), Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VMULPS       Y1, Y4, Y4
+	VADDPS       32(R10), Y4, Y4
+	VMOVUPS      Y4, 32(R10)
+	VMULPS       Y1, Y5, Y5
+	VADDPS       64(R10), Y5, Y5
+	VMOVUPS      Y5, 64(R10)
+	VMULPS       Y1, Y6, Y6
+	VADDPS       96(R10), Y6, Y6
+	VMOVUPS      Y6, 96(R10)
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          forward1
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+	VXORPS       Y5, Y5, Y5
+	VXORPS       Y6, Y6, Y6
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	MOVQ         R11, R9
+	IMULQ        CX, R9
+	ADDQ         AX, R9
+	VBROADCASTSS 8(R8), Y2
+
+backward1:
+	SUBQ    $0x00000080, R10
+	VSUBPS  (R10), Y3, Y3
+	VMULPS  Y1, Y3, Y3
+	VMULPS  128(SI), Y2, Y7
+	VADDPS  Y7, Y3, Y7
+	VADDPS  (SI), Y7, Y7
+	VMOVUPS Y7, (R9)
+	VSUBPS  32(R10), Y4, Y4
+	VMULPS  Y1, Y4, Y4
+	VMULPS  160(SI), Y2, Y7
+	VADDPS  Y7, Y4, Y7
+	VADDPS  32(SI), Y7, Y7
+	VMOVUPS Y7, 32(R9)
+	VSUBPS  64(R10), Y5, Y5
+	VMULPS  Y1, Y5, Y5
+	VMULPS  192(SI), Y2, Y7
+	VADDPS  Y7, Y5, Y7
+	VADDPS  64(SI), Y7, Y7
+	VMOVUPS Y7, 64(R9)
+	VSUBPS  96(R10), Y6, Y6
+	VMULPS  Y1, Y6, Y6
+	VMULPS  224(SI), Y2, Y7
+	VADDPS  Y7, Y6, Y7
+	VADDPS  96(SI), Y7, Y7
+	VMOVUPS Y7, 96(R9)
+	VSUBPS  Y0, Y2, Y2
+	SUBQ    CX, R9
+	DECQ    R11
+	JNZ     backward1
+
+end:
+	VZEROUPPER
+	RET
+
+// func strip3x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+// Requires: AVX, AVX2
+TEXT ·strip3x8(SB), NOSPLIT, $0-88
+	MOVQ         dst+0(FP), AX
+	MOVQ         dstStride+8(FP), CX
+	MOVQ         src+16(FP), DX
+	MOVQ         srcStride+24(FP), BX
+	SHLQ         $0x02, CX
+	SHLQ         $0x02, BX
+	MOVQ         work+32(FP), SI
+	MOVQ         n+40(FP), DI
+	MOVQ         factors+48(FP), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	MOVQ         DI, R9
+	DECQ         R9
+	MOVQ         R9, R10
+	IMULQ        CX, R10
+	ADDQ         AX, R10
+	IMULQ        BX, R9
+	ADDQ         DX, R9
+	VBROADCASTSS 4(R8), Y1
+	VMOVUPS      (DX), Y2
+	VMOVUPS      (R9), Y3
+	VMOVUPS      Y2, (AX)
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      Y2, (SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 32(SI)
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	CMPQ         R11, $+0
+	JLE          end
+	VBROADCASTSS (R8), Y1
+	VMOVAPS      Y0, Y2
+	MOVQ         DX, R9
+	ADDQ         BX, R9
+	LEAQ         96(SI), R10
+
+detrend:
+	VMOVUPS      (R9), Y3
+	VSUBPS       (SI), Y3, Y3
+	VMULPS       32(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VADDPS       Y0, Y2, Y2
+	ADDQ         BX, R9
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          detrend
+	VBROADCASTSS 12(R8), Y1
+	VXORPS       Y3, Y3, Y3
+	MOVQ         w1+56(FP), DX
+	MOVQ         k1+64(FP), R11
+	LEAQ         96(SI), R10
+	TESTQ        R11, R11
+	JZ           begun1
+
+begin1:
+	VBROADCASTSS (DX), Y2
+	VMULPS       (R10), Y2, Y2
+	VADDPS       Y2, Y3, Y3
+	ADDQ         $+4, DX
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          begin1
+
+begun1:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 96(SI), R10
+
+forward1:
+	VMULPS       Y1, Y3, Y3
+	VADDPS       (R10), Y3, Y3
+	VMOVUPS      Y3, (R10)
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          forward1
+	VXORPS       Y3, Y3, Y3
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	MOVQ         R11, R9
+	IMULQ        CX, R9
+	ADDQ         AX, R9
+	VBROADCASTSS 8(R8), Y2
+
+backward1:
+	SUBQ    $0x00000020, R10
+	VSUBPS  (R10), Y3, Y3
+	VMULPS  Y1, Y3, Y3
+	VMULPS  32(SI), Y2, Y4
+	VADDPS  Y4, Y3, Y4
+	VADDPS  (SI), Y4, Y4
+	VMOVUPS Y4, (R9)
+	VSUBPS  Y0, Y2, Y2
+	SUBQ    CX, R9
+	DECQ    R11
+	JNZ     backward1
+
+end:
+	VZEROUPPER
+	RET
+
+// func strip5x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+// Requires: AVX, AVX2
+TEXT ·strip5x32(SB), NOSPLIT, $0-88
+	MOVQ         dst+0(FP), AX
+	MOVQ         dstStride+8(FP), CX
+	MOVQ         src+16(FP), DX
+	MOVQ         srcStride+24(FP), BX
+	SHLQ         $0x02, CX
+	SHLQ         $0x02, BX
+	MOVQ         work+32(FP), SI
+	MOVQ         n+40(FP), DI
+	MOVQ         factors+48(FP), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	MOVQ         DI, R9
+	DECQ         R9
+	MOVQ         R9, R10
+	IMULQ        CX, R10
+	ADDQ         AX, R10
+	IMULQ        BX, R9
+	ADDQ         DX, R9
+	VBROADCASTSS 4(R8), Y1
+	VMOVUPS      (DX), Y2
+	VMOVUPS      (R9), Y3
+	VMOVUPS      Y2, (AX)
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      Y2, (SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 128(SI)
+	VMOVUPS      32(DX), Y2
+	VMOVUPS      32(R9), Y3
+	VMOVUPS      Y2, 32(AX)
+	VMOVUPS      Y3, 32(R10)
+	VMOVUPS      Y2, 32(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 160(SI)
+	VMOVUPS      64(DX), Y2
+	VMOVUPS      64(R9), Y3
+	VMOVUPS      Y2, 64(AX)
+	VMOVUPS      Y3, 64(R10)
+	VMOVUPS      Y2, 64(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 192(SI)
+	VMOVUPS      96(DX), Y2
+	VMOVUPS      96(R9), Y3
+	VMOVUPS      Y2, 96(AX)
+	VMOVUPS      Y3, 96(R10)
+	VMOVUPS      Y2, 96(SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 224(SI)
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	CMPQ         R11, $+0
+	JLE          end
+	VBROADCASTSS (R8), Y1
+	VMOVAPS      Y0, Y2
+	MOVQ         DX, R9
+	ADDQ         BX, R9
+	LEAQ         384(SI), R10
+
+detrend:
+	VMOVUPS      (R9), Y3
+	VSUBPS       (SI), Y3, Y3
+	VMULPS       128(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      32(R9), Y3
+	VSUBPS       32(SI), Y3, Y3
+	VMULPS       160(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 32(R10)
+	VMOVUPS      64(R9), Y3
+	VSUBPS       64(SI), Y3, Y3
+	VMULPS       192(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 64(R10)
+	VMOVUPS      96(R9), Y3
+	VSUBPS       96(SI), Y3, Y3
+	VMULPS       224(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 96(R10)
+	VADDPS       Y0, Y2, Y2
+	ADDQ         BX, R9
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          detrend
+	VBROADCASTSS 12(R8), Y1
+	VXORPS       Y2, Y2, Y2
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+	VXORPS       Y5, Y5, Y5
+	MOVQ         w1+56(FP), DX
+	MOVQ         k1+64(FP), R11
+	LEAQ         384(SI), R10
+	TESTQ        R11, R11
+	JZ           begun1
+
+begin1:
+	VBROADCASTSS (DX), Y6
+	VMULPS       (R10), Y6, Y7
+	VADDPS       Y7, Y2, Y2
+	VMULPS       32(R10), Y6, Y7
+	VADDPS       Y7, Y3, Y3
+	VMULPS       64(R10), Y6, Y7
+	VADDPS       Y7, Y4, Y4
+	VMULPS       96(R10), Y6, Y6
+	VADDPS       Y6, Y5, Y5
+	ADDQ         $+4, DX
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          begin1
+
+begun1:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 384(SI), R10
+
+forward1:
+	VMULPS  Y1, Y2, Y2
+	VADDPS  (R10), Y2, Y2
+	VMOVUPS Y2, (R10)
+	VMULPS  Y1, Y3, Y3
+	VADDPS  32(R10), Y3, Y3
+	VMOVUPS Y3, 32(R10)
+	VMULPS  Y1, Y4, Y4
+	VADDPS  64(R10), Y4, Y4
+	VMOVUPS Y4, 64(R10)
+	VMULPS  Y1, Y5, Y5
+	VADDPS  96(R10), Y5, Y5
+	VMOVUPS Y5, 96(R10)
+	ADDQ    $0x00000080, R10
+	DECQ    R11
+	JNZ     forward1
+	VXORPS  Y2, Y2, Y2
+	VXORPS  Y3, Y3, Y3
+	VXORPS  Y4, Y4, Y4
+	VXORPS  Y5, Y5, Y5
+	MOVQ    DI, R11
+	SUBQ    $+2, R11
+
+backward1:
+	SUBQ         $0x00000080, R10
+	VSUBPS       (R10), Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VMOVUPS      Y2, (R10)
+	VSUBPS       32(R10), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 32(R10)
+	VSUBPS       64(R10), Y4, Y4
+	VMULPS       Y1, Y4, Y4
+	VMOVUPS      Y4, 64(R10)
+	VSUBPS       96(R10), Y5, Y5
+	VMULPS       Y1, Y5, Y5
+	VMOVUPS      Y5, 96(R10)
+	DECQ         R11
+	JNZ          backward1
+	VBROADCASTSS 16(R8), Y1
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+	VXORPS       Y5, Y5, Y5
+	VXORPS       Y6, Y6, Y6
+	MOVQ         w2+72(FP), DX
+	MOVQ         k2+80(FP), R11
+	LEAQ         384(SI), R10
+	TESTQ        R11, R11
+	JZ           begun2
+
+begin2:
+	VBROADCASTSS (DX), Y2
+	VMULPS       (R10), Y2, Y7
+	VADDPS       Y7, Y3, Y3
+	VMULPS       32(R10), Y2, Y7
+	VADDPS       Y7, Y4, Y4
+	VMULPS       64(R10), Y2, Y7
+	VADDPS       Y7, Y5, Y5
+	VMULPS       96(R10), Y2, Y2
+	VADDPS       Y2, Y6, Y6
+	ADDQ         $+4, DX
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          begin2
+
+begun2:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 384(SI), R10
+
+forward2:
+	VMULPS       Y1, Y3, Y3
+	VADDPS       (R10), Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VMULPS       Y1, Y4, Y4
+	VADDPS       32(R10), Y4, Y4
+	VMOVUPS      Y4, 32(R10)
+	VMULPS       Y1, Y5, Y5
+	VADDPS       64(R10), Y5, Y5
+	VMOVUPS      Y5, 64(R10)
+	VMULPS       Y1, Y6, Y6
+	VADDPS       96(R10), Y6, Y6
+	VMOVUPS      Y6, 96(R10)
+	ADDQ         $0x00000080, R10
+	DECQ         R11
+	JNZ          forward2
+	VXORPS       Y3, Y3, Y3
+	VXORPS       Y4, Y4, Y4
+	VXORPS       Y5, Y5, Y5
+	VXORPS       Y6, Y6, Y6
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	MOVQ         R11, R9
+	IMULQ        CX, R9
+	ADDQ         AX, R9
+	VBROADCASTSS 8(R8), Y2
+
+backward2:
+	SUBQ    $0x00000080, R10
+	VSUBPS  (R10), Y3, Y3
+	VMULPS  Y1, Y3, Y3
+	VMULPS  128(SI), Y2, Y7
+	VADDPS  Y7, Y3, Y7
+	VADDPS  (SI), Y7, Y7
+	VMOVUPS Y7, (R9)
+	VSUBPS  32(R10), Y4, Y4
+	VMULPS  Y1, Y4, Y4
+	VMULPS  160(SI), Y2, Y7
+	VADDPS  Y7, Y4, Y7
+	VADDPS  32(SI), Y7, Y7
+	VMOVUPS Y7, 32(R9)
+	VSUBPS  64(R10), Y5, Y5
+	VMULPS  Y1, Y5, Y5
+	VMULPS  192(SI), Y2, Y7
+	VADDPS  Y7, Y5, Y7
+	VADDPS  64(SI), Y7, Y7
+	VMOVUPS Y7, 64(R9)
+	VSUBPS  96(R10), Y6, Y6
+	VMULPS  Y1, Y6, Y6
+	VMULPS  224(SI), Y2, Y7
+	VADDPS  Y7, Y6, Y7
+	VADDPS  96(SI), Y7, Y7
+	VMOVUPS Y7, 96(R9)
+	VSUBPS  Y0, Y2, Y2
+	SUBQ    CX, R9
+	DECQ    R11
+	JNZ     backward2
+
+end:
+	VZEROUPPER
+	RET
+
+// func strip5x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
+// Requires: AVX, AVX2
+TEXT ·strip5x8(SB), NOSPLIT, $0-88
+	MOVQ         dst+0(FP), AX
+	MOVQ         dstStride+8(FP), CX
+	MOVQ         src+16(FP), DX
+	MOVQ         srcStride+24(FP), BX
+	SHLQ         $0x02, CX
+	SHLQ         $0x02, BX
+	MOVQ         work+32(FP), SI
+	MOVQ         n+40(FP), DI
+	MOVQ         factors+48(FP), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	MOVQ         DI, R9
+	DECQ         R9
+	MOVQ         R9, R10
+	IMULQ        CX, R10
+	ADDQ         AX, R10
+	IMULQ        BX, R9
+	ADDQ         DX, R9
+	VBROADCASTSS 4(R8), Y1
+	VMOVUPS      (DX), Y2
+	VMOVUPS      (R9), Y3
+	VMOVUPS      Y2, (AX)
+	VMOVUPS      Y3, (R10)
+	VMOVUPS      Y2, (SI)
+	VSUBPS       Y2, Y3, Y3
+	VDIVPS       Y1, Y3, Y3
+	VMOVUPS      Y3, 32(SI)
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	CMPQ         R11, $+0
+	JLE          end
+	VBROADCASTSS (R8), Y1
+	VMOVAPS      Y0, Y2
+	MOVQ         DX, R9
+	ADDQ         BX, R9
+	LEAQ         96(SI), R10
+
+detrend:
+	VMOVUPS      (R9), Y3
+	VSUBPS       (SI), Y3, Y3
+	VMULPS       32(SI), Y2, Y4
+	VSUBPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMOVUPS      Y3, (R10)
+	VADDPS       Y0, Y2, Y2
+	ADDQ         BX, R9
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          detrend
+	VBROADCASTSS 12(R8), Y1
+	VXORPS       Y2, Y2, Y2
+	MOVQ         w1+56(FP), DX
+	MOVQ         k1+64(FP), R11
+	LEAQ         96(SI), R10
+	TESTQ        R11, R11
+	JZ           begun1
+
+begin1:
+	VBROADCASTSS (DX), Y3
+	VMULPS       (R10), Y3, Y3
+	VADDPS       Y3, Y2, Y2
+	ADDQ         $+4, DX
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          begin1
+
+begun1:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 96(SI), R10
+
+forward1:
+	VMULPS  Y1, Y2, Y2
+	VADDPS  (R10), Y2, Y2
+	VMOVUPS Y2, (R10)
+	ADDQ    $0x00000020, R10
+	DECQ    R11
+	JNZ     forward1
+	VXORPS  Y2, Y2, Y2
+	MOVQ    DI, R11
+	SUBQ    $+2, R11
+
+backward1:
+	SUBQ         $0x00000020, R10
+	VSUBPS       (R10), Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VMOVUPS      Y2, (R10)
+	DECQ         R11
+	JNZ          backward1
+	VBROADCASTSS 16(R8), Y1
+	VXORPS       Y3, Y3, Y3
+	MOVQ         w2+72(FP), DX
+	MOVQ         k2+80(FP), R11
+	LEAQ         96(SI), R10
+	TESTQ        R11, R11
+	JZ           begun2
+
+begin2:
+	VBROADCASTSS (DX), Y2
+	VMULPS       (R10), Y2, Y2
+	VADDPS       Y2, Y3, Y3
+	ADDQ         $+4, DX
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          begin2
+
+begun2:
+	MOVQ DI, R11
+	SUBQ $+2, R11
+	LEAQ 96(SI), R10
+
+forward2:
+	VMULPS       Y1, Y3, Y3
+	VADDPS       (R10), Y3, Y3
+	VMOVUPS      Y3, (R10)
+	ADDQ         $0x00000020, R10
+	DECQ         R11
+	JNZ          forward2
+	VXORPS       Y3, Y3, Y3
+	MOVQ         DI, R11
+	SUBQ         $+2, R11
+	MOVQ         R11, R9
+	IMULQ        CX, R9
+	ADDQ         AX, R9
+	VBROADCASTSS 8(R8), Y2
+
+backward2:
+	SUBQ    $0x00000020, R10
+	VSUBPS  (R10), Y3, Y3
+	VMULPS  Y1, Y3, Y3
+	VMULPS  32(SI), Y2, Y4
+	VADDPS  Y4, Y3, Y4
+	VADDPS  (SI), Y4, Y4
+	VMOVUPS Y4, (R9)
+	VSUBPS  Y0, Y2, Y2
+	SUBQ    CX, R9
+	DECQ    R11
+	JNZ     backward2
+
+end:
+	VZEROUPPER
+	RET
+
+// func gather(t *float32, stride int, rows *float32, offsets *int, n int)
+// Requires: AVX, CMOV
+TEXT ·gather(SB), NOSPLIT, $0-40
+	MOVQ t+0(FP), AX
+	MOVQ stride+8(FP), CX
+	MOVQ rows+16(FP), DX
+	MOVQ n+32(FP), BX
+	SHLQ $0x02, CX
+	MOVQ offsets+24(FP), SI
+	MOVQ (SI), DI
+	LEAQ (DX)(DI*4), DI
+	MOVQ 8(SI), R8
+	LEAQ (DX)(R8*4), R8
+	MOVQ 16(SI), R9
+	LEAQ (DX)(R9*4), R9
+	MOVQ 24(SI), R10
+	LEAQ (DX)(R10*4), R10
+	MOVQ 32(SI), R11
+	LEAQ (DX)(R11*4), R11
+	MOVQ 40(SI), R12
+	LEAQ (DX)(R12*4), R12
+	MOVQ 48(SI), R13
+	LEAQ (DX)(R13*4), R13
+	MOVQ 56(SI), SI
+	LEAQ (DX)(SI*4), SI
+
+block:
+	MOVQ        AX, DX
+	VMOVUPS     (DI), X0
+	VINSERTF128 $0x01, (R11), Y0, Y0
+	VMOVUPS     (R8), X1
+	VINSERTF128 $0x01, (R12), Y1, Y1
+	VMOVUPS     (R9), X2
+	VINSERTF128 $0x01, (R13), Y2, Y2
+	VMOVUPS     (R10), X3
+	VINSERTF128 $0x01, (SI), Y3, Y3
+	VUNPCKLPS   Y1, Y0, Y4
+	VUNPCKHPS   Y1, Y0, Y5
+	VUNPCKLPS   Y3, Y2, Y6
+	VUNPCKHPS   Y3, Y2, Y7
+	VUNPCKLPD   Y6, Y4, Y8
+	VUNPCKHPD   Y6, Y4, Y4
+	VUNPCKLPD   Y7, Y5, Y6
+	VUNPCKHPD   Y7, Y5, Y5
+	VMOVUPS     Y8, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y4, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y6, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y5, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     16(DI), X9
+	VINSERTF128 $0x01, 16(R11), Y9, Y9
+	VMOVUPS     16(R8), X10
+	VINSERTF128 $0x01, 16(R12), Y10, Y10
+	VMOVUPS     16(R9), X11
+	VINSERTF128 $0x01, 16(R13), Y11, Y11
+	VMOVUPS     16(R10), X12
+	VINSERTF128 $0x01, 16(SI), Y12, Y12
+	VUNPCKLPS   Y10, Y9, Y4
+	VUNPCKHPS   Y10, Y9, Y5
+	VUNPCKLPS   Y12, Y11, Y6
+	VUNPCKHPS   Y12, Y11, Y7
+	VUNPCKLPD   Y6, Y4, Y8
+	VUNPCKHPD   Y6, Y4, Y4
+	VUNPCKLPD   Y7, Y5, Y6
+	VUNPCKHPD   Y7, Y5, Y5
+	VMOVUPS     Y8, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y4, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y6, (DX)
+	ADDQ        CX, DX
+	VMOVUPS     Y5, (DX)
+	ADDQ        CX, DX
+	SUBQ        $+8, BX
+	JZ          end
+	MOVQ        $0x00000008, R14
+	CMPQ        BX, R14
+	CMOVQLT     BX, R14
+	LEAQ        (DI)(R14*4), DI
+	LEAQ        (R8)(R14*4), R8
+	LEAQ        (R9)(R14*4), R9
+	LEAQ        (R10)(R14*4), R10
+	LEAQ        (R11)(R14*4), R11
+	LEAQ        (R12)(R14*4), R12
+	LEAQ        (R13)(R14*4), R13
+	LEAQ        (SI)(R14*4), SI
+	MOVQ        R14, DX
+	IMULQ       CX, DX
+	ADDQ        DX, AX
+	SUBQ        R14, BX
+	ADDQ        $+8, BX
+	JMP         block
+
+end:
+	VZEROUPPER
+	RET
+
+// func scatter(rows *float32, offsets *int, t *float32, stride int, n int)
+// Requires: AVX, CMOV
+TEXT ·scatter(SB), NOSPLIT, $8-40
+	MOVQ t+16(FP), AX
+	MOVQ stride+24(FP), CX
+	MOVQ rows+0(FP), DX
+	MOVQ n+32(FP), BX
+	SHLQ $0x02, CX
+	MOVQ offsets+8(FP), SI
+	MOVQ (SI), DI
+	LEAQ (DX)(DI*4), DI
+	MOVQ 8(SI), R8
+	LEAQ (DX)(R8*4), R8
+	MOVQ 16(SI), R9
+	LEAQ (DX)(R9*4), R9
+	MOVQ 24(SI), R10
+	LEAQ (DX)(R10*4), R10
+	MOVQ 32(SI), R11
+	LEAQ (DX)(R11*4), R11
+	MOVQ 40(SI), R12
+	LEAQ (DX)(R12*4), R12
+	MOVQ 48(SI), R13
+	LEAQ (DX)(R13*4), R13
+	MOVQ 56(SI), SI
+	LEAQ (DX)(SI*4), SI
+
+block:
+	MOVQ        AX, DX
+	LEAQ        (AX)(CX*4), R14
+	VMOVUPS     (DX), X0
+	VINSERTF128 $0x01, (R14), Y0, Y0
+	VMOVUPS     (DX)(CX*1), X1
+	VINSERTF128 $0x01, (R14)(CX*1), Y1, Y1
+	VMOVUPS     (DX)(CX*2), X2
+	VINSERTF128 $0x01, (R14)(CX*2), Y2, Y2
+	LEAQ        (DX)(CX*2), R15
+	ADDQ        CX, R15
+	LEAQ        (R14)(CX*2), BP
+	ADDQ        CX, BP
+	VMOVUPS     (R15), X3
+	VINSERTF128 $0x01, (BP), Y3, Y3
+	VUNPCKLPS   Y1, Y0, Y4
+	VUNPCKHPS   Y1, Y0, Y5
+	VUNPCKLPS   Y3, Y2, Y6
+	VUNPCKHPS   Y3, Y2, Y7
+	VUNPCKLPD   Y6, Y4, Y8
+	VUNPCKHPD   Y6, Y4, Y4
+	VUNPCKLPD   Y7, Y5, Y6
+	VUNPCKHPD   Y7, Y5, Y5
+	VMOVUPS     Y8, (DI)
+	VMOVUPS     Y4, (R8)
+	VMOVUPS     Y6, (R9)
+	VMOVUPS     Y5, (R10)
+	VMOVUPS     16(DX), X9
+	VINSERTF128 $0x01, 16(R14), Y9, Y9
+	VMOVUPS     16(DX)(CX*1), X10
+	VINSERTF128 $0x01, 16(R14)(CX*1), Y10, Y10
+	VMOVUPS     16(DX)(CX*2), X11
+	VINSERTF128 $0x01, 16(R14)(CX*2), Y11, Y11
+	LEAQ        (DX)(CX*2), DX
+	ADDQ        CX, DX
+	LEAQ        (R14)(CX*2), R14
+	ADDQ        CX, R14
+	VMOVUPS     16(DX), X12
+	VINSERTF128 $0x01, 16(R14), Y12, Y12
+	VUNPCKLPS   Y10, Y9, Y4
+	VUNPCKHPS   Y10, Y9, Y5
+	VUNPCKLPS   Y12, Y11, Y6
+	VUNPCKHPS   Y12, Y11, Y7
+	VUNPCKLPD   Y6, Y4, Y8
+	VUNPCKHPD   Y6, Y4, Y4
+	VUNPCKLPD   Y7, Y5, Y6
+	VUNPCKHPD   Y7, Y5, Y5
+	VMOVUPS     Y8, (R11)
+	VMOVUPS     Y4, (R12)
+	VMOVUPS     Y6, (R13)
+	VMOVUPS     Y5, (SI)
+	SUBQ        $+8, BX
+	JZ          end
+	MOVQ        $0x00000008, R14
+	CMPQ        BX, R14
+	CMOVQLT     BX, R14
+	LEAQ        (DI)(R14*4), DI
+	LEAQ        (R8)(R14*4), R8
+	LEAQ        (R9)(R14*4), R9
+	LEAQ        (R10)(R14*4), R10
+	LEAQ        (R11)(R14*4), R11
+	LEAQ        (R12)(R14*4), R12
+	LEAQ        (R13)(R14*4), R13
+	LEAQ        (SI)(R14*4), SI
+	MOVQ        R14, DX
+	IMULQ       CX, DX
+	ADDQ        DX, AX
+	SUBQ        R14, BX
+	ADDQ        $+8, BX
+	JMP         block
+
+end:
+	VZEROUPPER
+	RET
+
+// func reflect(dst *float32, end *float32, inner *float32, n int, masks *int32)
+// Requires: AVX
+TEXT ·reflect(SB), NOSPLIT, $0-40
+	MOVQ end+8(FP), AX
+	MOVQ inner+16(FP), CX
+	MOVQ dst+0(FP), DX
+	MOVQ n+24(FP), BX
+	MOVQ masks+32(FP), SI
+	XORQ DI, DI
+	MOVQ BX, R8
+	ANDQ $-8, R8
+
+eight:
+	CMPQ    DI, R8
+	JGE     eight_end
+	VMOVUPS (AX)(DI*4), Y0
+	VADDPS  Y0, Y0, Y0
+	VMOVUPS (CX)(DI*4), Y1
+	VSUBPS  Y1, Y0, Y0
+	VMOVUPS Y0, (DX)(DI*4)
+	ADDQ    $0x00000008, DI
+	JMP     eight
+
+eight_end:
+	SUBQ       R8, BX
+	JZ         done
+	NEGQ       BX
+	VMOVUPS    32(SI)(BX*4), Y0
+	VMASKMOVPS (AX)(DI*4), Y0, Y1
+	VADDPS     Y1, Y1, Y1
+	VMASKMOVPS (CX)(DI*4), Y0, Y2
+	VSUBPS     Y2, Y1, Y1
+	VMASKMOVPS Y1, Y0, (DX)(DI*4)
+
+done:
+	VZEROUPPER
+	RET
+
 // func widen(a *float64, b *float64, row *float32, w *float32, n int)
 // Requires: AVX
 TEXT ·widen(SB), NOSPLIT, $0-40

@@ -20,6 +20,34 @@ func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx
 	panic("kernel: no assembly for this processor")
 }
 
+func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func strip3x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func strip5x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func strip5x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func gather(t *float32, stride int, rows *float32, offsets *int, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func scatter(rows *float32, offsets *int, t *float32, stride int, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func reflect(dst *float32, end *float32, inner *float32, n int, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
 func widen(a *float64, b *float64, row *float32, w *float32, n int) {
 	panic("kernel: no assembly for this processor")
 }
