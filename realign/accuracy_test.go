@@ -7,10 +7,13 @@ import (
 	"math"
 	"math/rand/v2"
 	"slices"
+	"strings"
+	"sync"
 	"testing"
 
 	"gonum.org/v1/gonum/mat"
 
+	"evenkeel/internal/parallel"
 	"evenkeel/phantom"
 	"evenkeel/realign"
 	"evenkeel/slicetime"
@@ -83,8 +86,8 @@ func volumePath(vols []realign.Volume, truth []realign.Pose) (p realign.Path, at
 // noise, as rms displacement (um): the inverse of J'J/sd^2 with J the change of
 // the image with the pose, by central differences of the phantom (Robinson,
 // Milanfar 2004, IEEE Trans. Image Processing 13(9):1185-1199; from memory). The
-// second value is that of what our method lets itself see: pixels that stand two
-// planes or more inside the field, in the volume and in the reference, whose head
+// second value is that of what our method lets itself see: pixels that stand a
+// plane or more inside the field, in the volume and in the reference, whose head
 // is cut by the field too; and the brightness, a linear polynomial of the place,
 // is unknown as well.
 func bound(g realign.Grid, h *phantom.Head, pose realign.Pose, sd float64, points [][3]float64) (all, seen float64) {
@@ -95,7 +98,7 @@ func bound(g realign.Grid, h *phantom.Head, pose realign.Pose, sd float64, point
 	inside := func(p [3]float64) bool {
 		v := phantom.Apply(inverse, p)
 		for a := range v {
-			if v[a] < 2 || v[a] > float64(g.N[a]-3) {
+			if v[a] < 1 || v[a] > float64(g.N[a]-2) {
 				return false
 			}
 		}
@@ -174,11 +177,13 @@ func bound(g realign.Grid, h *phantom.Head, pose realign.Pose, sd float64, point
 
 // boundOver is the root mean square of the bound over a few of the poses.
 func boundOver(g realign.Grid, h *phantom.Head, poses []realign.Pose, sd float64, points [][3]float64) (all, seen float64) {
-	var k, u []float64
-	for _, i := range []int{0, len(poses) / 3, 2 * len(poses) / 3} {
-		a, b := bound(g, h, poses[i], sd, points)
-		k, u = append(k, a), append(u, b)
+	at := []int{0, len(poses) / 3, 2 * len(poses) / 3}
+	k, u := make([]float64, len(at)), make([]float64, len(at))
+	var wait sync.WaitGroup
+	for i, n := range at {
+		wait.Go(func() { k[i], u[i] = bound(g, h, poses[n], sd, points) })
 	}
+	wait.Wait()
 	return rms(k), rms(u)
 }
 
@@ -196,18 +201,32 @@ func TestBoundScales(t *testing.T) {
 	}
 }
 
+// fields: one that holds the whole head, 150 mm high, and one that cuts it.
+var fields = []struct {
+	name string
+	g    realign.Grid
+}{
+	{"whole head", axial([3]int{64, 64, 44}, [3]float64{3.3, 3.3, 3.8})},
+	{"cut", standard},
+}
+
 // Noise-free bias.
 func TestAccuracyVolumeBias(t *testing.T) {
 	seeds := bench(t)
-	t.Log("| shift / turn | seed | rms um | worst volume um | bar |")
-	for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.0}, {3, 3, 1.5}, {15, 15, 2.5}} {
-		for _, seed := range seeds {
-			poses := randomPoses(200+seed, 7, c.shift, c.turn)
-			data := scan(t, standard, poses, 0, func(s *phantom.Scan) { s.Head = head(seed) })
-			est := estimate(t, standard, data, realign.Options{})
-			p, at := volumePath(est.Volumes, poses)
-			e, w := pathErrors(p, at, within(head(seed)))
-			t.Logf("| %g mm / %g deg | %d | %.2f | %.2f | %s |", c.shift, c.turn, seed, e, w, verdict(t, "bias", e, c.bar, 0))
+	t.Log("| field | shift / turn | seed | rms um | worst volume um | bar |")
+	for _, f := range fields {
+		for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.0}, {3, 3, 1.5}, {15, 15, 2.5}} {
+			if c.shift == 3 && !*accuracyLong {
+				continue
+			}
+			for _, seed := range seeds {
+				poses := randomPoses(200+seed, 7, c.shift, c.turn)
+				data := scan(t, f.g, poses, 0, func(s *phantom.Scan) { s.Head = head(seed) })
+				est := estimate(t, f.g, data, realign.Options{})
+				p, at := volumePath(est.Volumes, poses)
+				e, w := pathErrors(p, at, within(head(seed)))
+				t.Logf("| %s | %g mm / %g deg | %d | %.2f | %.2f | %s |", f.name, c.shift, c.turn, seed, e, w, verdict(t, "bias", e, c.bar, 0))
+			}
 		}
 	}
 }
@@ -217,19 +236,59 @@ func TestAccuracyVolumeNoise(t *testing.T) {
 	seeds := bench(t)
 	n := volumes(16)
 	t.Logf("%d volumes; a ratio carries about %.0f %%", n, 100/math.Sqrt(12*float64(n)/2))
-	t.Log("| shift / turn | seed | bound um | bound of what is seen | rms um | ratio | ratio to what is seen | bar |")
-	// The field cuts our phantom, 150 mm high, at 122 mm, so the margins cost 7 %
-	// here and more where the head leaves the field: 60 volumes of three seeds gave
-	// 1.09 to 1.19 and 1.27 to 1.38.
-	for _, c := range []struct{ shift, turn, bar, holds float64 }{{1, 1, 1.12, 1.25}, {3, 3, 1.12, 1.25}, {15, 15, 1.25, 1.45}} {
+	t.Log("| field | shift / turn | seed | bound um | bound of what is seen | rms um | ratio | ratio to what is seen | bar |")
+	for _, f := range fields {
+		for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.12}, {3, 3, 1.12}, {15, 15, 1.25}} {
+			if c.shift == 3 && !*accuracyLong {
+				continue
+			}
+			var ratios []float64
+			for _, seed := range seeds {
+				poses := randomPoses(300+seed, n, c.shift, c.turn)
+				data := scan(t, f.g, poses, 9, func(s *phantom.Scan) { s.Head, s.Seed = head(seed), 400+seed })
+				est := estimate(t, f.g, data, realign.Options{})
+				p, at := volumePath(est.Volumes, poses)
+				e, _ := pathErrors(p, at, within(head(seed)))
+				b, u := boundOver(f.g, head(seed), poses, 9, within(head(seed)))
+				t.Logf("| %s | %g mm / %g deg | %d | %.2f | %.2f | %.2f | %.3f | %.3f | %s |", f.name, c.shift, c.turn, seed, b, u, e, e/b, e/u, verdict(t, "", e/b, c.bar, math.Inf(1)))
+				ratios = append(ratios, e/b)
+			}
+			// Single seeds of 60 volumes scatter by 5 %; together they hold the bar.
+			verdict(t, fmt.Sprintf("%s, %g mm, ratio to the bound over %d seeds", f.name, c.shift, len(seeds)), rms(ratios), c.bar, 0)
+		}
+	}
+}
+
+// spots are six active regions of 3 % that rise and fall together.
+func spots() (b []phantom.Blob) {
+	for i := range 6 {
+		a := float64(i) * 2.399963
+		b = append(b, phantom.Blob{
+			Centre: [3]float64{45 * math.Cos(a), 45 * math.Sin(a), -30 + 12*float64(i)}, SD: 8, Amplitude: 0.03,
+			Course: func(t float64) float64 { return math.Sin(0.4 * t) },
+		})
+	}
+	return b
+}
+
+// Regions that are active while the head moves.
+func TestAccuracyVolumeActivation(t *testing.T) {
+	seeds := bench(t)
+	t.Log("| field | seed | at rest um | 3 % in six regions um | bar |")
+	for _, f := range fields[1:] {
 		for _, seed := range seeds {
-			poses := randomPoses(300+seed, n, c.shift, c.turn)
-			data := scan(t, standard, poses, 9, func(s *phantom.Scan) { s.Head, s.Seed = head(seed), 400+seed })
-			est := estimate(t, standard, data, realign.Options{})
-			p, at := volumePath(est.Volumes, poses)
-			e, _ := pathErrors(p, at, within(head(seed)))
-			b, u := boundOver(standard, head(seed), poses, 9, within(head(seed)))
-			t.Logf("| %g mm / %g deg | %d | %.2f | %.2f | %.2f | %.3f | %.3f | %s |", c.shift, c.turn, seed, b, u, e, e/b, e/u, verdict(t, "ratio to the bound", e/b, c.bar, c.holds))
+			poses := randomPoses(300+seed, volumes(24), 1, 1)
+			var e [2]float64
+			for i, b := range [][]phantom.Blob{nil, spots()} {
+				data := scan(t, f.g, poses, 9, func(s *phantom.Scan) { s.Head, s.Seed, s.Blobs = head(seed), 400+seed, b })
+				p, at := volumePath(estimate(t, f.g, data, realign.Options{}).Volumes, poses)
+				e[i], _ = pathErrors(p, at, within(head(seed)))
+			}
+			t.Logf("| %s | %d | %.2f | %.2f | %s |", f.name, seed, e[0], e[1], verdict(t, "with active regions", e[1], 15, 0))
+			// Where voxels that change of themselves count in full, it is a third more.
+			if e[1] > 1.2*e[0] {
+				t.Errorf("active regions: %.2f um, without %.2f um", e[1], e[0])
+			}
 		}
 	}
 }
@@ -357,9 +416,8 @@ func pathMotions(seed uint64) map[string]phantom.Motion {
 
 type pathCase struct {
 	motion string
+	order  string // of the slices
 	tr     float64
-	times  []float64
-	axis   int
 	bar    float64
 	long   bool // only in the long set
 }
@@ -374,18 +432,26 @@ const studyBound = 5.8
 func TestAccuracyPath(t *testing.T) {
 	seeds := bench(t)
 	g := axial([3]int{52, 60, 30}, [3]float64{3.5, 3.5, 4})
-	one, three := phantom.Interleaved(30, 2), phantom.Multiband(30, 3, 0.8)
-	t.Log("| schedule | motion | seed | one pose a volume um | linear between | path rms | path worst | expected | ratio to expected | bar um | bar ratio |")
+	// Slices along the first axis.
+	sagittal := axial([3]int{42, 60, 40}, [3]float64{4, 3.5, 3.5})
+	t.Log("| schedule | motion | seed | one pose a volume um | linear between | path rms | path worst | expected | ratio to expected | bar um | bar ratio | bar um of this head |")
+	bounds := map[string]float64{}
 	for _, c := range []pathCase{
-		{"still", 2, one, 2, 7, false},
-		{"walk", 2, one, 2, 10, false},
-		{"breathing", 2, one, 2, 16, false},
-		{"step", 2, one, 2, 15, false},
-		{"large walk", 2, one, 2, 30, false},
-		{"still", 0.8, three, 2, 5, true},
-		{"walk", 0.8, three, 2, 7, false},
-		{"breathing", 0.8, three, 2, 10, true},
-		{"step", 0.8, three, 2, 8, false},
+		{"still", "interleaved", 2, 7, true},
+		{"walk", "interleaved", 2, 10, true},
+		{"breathing", "interleaved", 2, 16, false},
+		{"step", "interleaved", 2, 15, true},
+		{"large walk", "interleaved", 2, 30, true},
+		{"walk, active", "interleaved", 2, 16, false},
+		{"walk", "ascending", 2, 10, true},
+		{"step", "ascending", 2, 15, true},
+		{"large walk", "ascending", 2, 30, false},
+		{"walk", "sagittal", 2, 10, false},
+		{"step", "sagittal", 2, 15, true},
+		{"still", "3 bands", 0.8, 5, true},
+		{"walk", "3 bands", 0.8, 7, false},
+		{"breathing", "3 bands", 0.8, 10, true},
+		{"step", "3 bands", 0.8, 8, true},
 	} {
 		if c.long && !*accuracyLong {
 			continue
@@ -395,13 +461,26 @@ func TestAccuracyPath(t *testing.T) {
 			if c.tr < 1 {
 				n = volumes(20)
 			}
-			m := pathMotions(seed)[c.motion]
-			r := &session{grid: g, schedule: slicetime.Schedule{Times: c.times, Axis: c.axis, TR: c.tr}}
-			r.scan = phantom.Scan{Head: head(seed), N: g.N, NT: n, Affine: g.Affine, TR: c.tr, SliceAxis: c.axis, SliceTimes: c.times, NoiseSD: 9, Seed: 1000 + seed, Motion: m}
+			g, axis, times := g, 2, phantom.Interleaved(30, 2)
+			switch c.order {
+			case "ascending":
+				times = phantom.Sequential(30, 2)
+			case "sagittal":
+				g, axis, times = sagittal, 0, phantom.Interleaved(42, 2)
+			case "3 bands":
+				times = phantom.Multiband(30, 3, c.tr)
+			}
+			motion, active := strings.CutSuffix(c.motion, ", active")
+			m := pathMotions(seed)[motion]
+			r := &session{grid: g, schedule: slicetime.Schedule{Times: times, Axis: axis, TR: c.tr}}
+			r.scan = phantom.Scan{Head: head(seed), N: g.N, NT: n, Affine: g.Affine, TR: c.tr, SliceAxis: axis, SliceTimes: times, NoiseSD: 9, Seed: 1000 + seed, Motion: m}
+			if active {
+				r.scan.Blobs = spots()
+			}
 			r.simulate(t)
 			r.find(t, realign.Options{}, 2)
 			if !r.path.Used {
-				t.Errorf("%s, TR %g: no path: %s", c.motion, c.tr, r.path.Reason)
+				t.Errorf("%s, %s, TR %g: no path: %s", c.motion, c.order, c.tr, r.path.Reason)
 				continue
 			}
 			points := within(r.scan.Head)
@@ -418,19 +497,23 @@ func TestAccuracyPath(t *testing.T) {
 			lin, _ := pathErrors(linear, poseAt(m), points)
 			e, w := pathErrors(r.path.Path, poseAt(m), points)
 			expected := 1000 * rms(r.path.Expected)
-			b, _ := bound(g, r.scan.Head, realign.Identity, 9, points)
+			key := fmt.Sprintf("%v, seed %d", g.N, seed)
+			if bounds[key] == 0 {
+				bounds[key], _ = bound(g, r.scan.Head, realign.Identity, 9, points)
+				t.Logf("bound of one volume's pose on %s: %.2f um", key, bounds[key])
+			}
+			scaled := c.bar * bounds[key] / studyBound
 			ratio := 1.5
-			if c.motion == "large walk" {
+			if motion == "large walk" {
 				ratio = 2.2
 			}
-			t.Logf("| TR %g s | %s | %d | %.1f | %.1f | %.1f | %.1f | %.1f | %.2f | %s | %s |", c.tr, c.motion, seed, vol, lin, e, w, expected, e/expected,
-				verdict(t, c.motion, e, c.bar, c.bar*b/studyBound), verdict(t, c.motion+", ratio to expected", e/expected, ratio, 0))
+			ratioBar := "-" // what activation does is not expected
+			if !active {
+				ratioBar = verdict(t, c.motion+", ratio to expected", e/expected, ratio, 0)
+			}
+			t.Logf("| TR %g s, %s | %s | %d | %.1f | %.1f | %.1f | %.1f | %.1f | %.2f | %s | %s | %.1f |", c.tr, c.order, c.motion, seed, vol, lin, e, w, expected, e/expected,
+				verdict(t, c.motion+", "+c.order, e, c.bar, scaled), ratioBar, scaled)
 		}
-	}
-	for _, seed := range seeds {
-		h := head(seed)
-		b, _ := bound(g, h, realign.Identity, 9, within(h))
-		t.Logf("bound of one volume's pose on this grid, seed %d: %.2f um", seed, b)
 	}
 }
 
@@ -462,12 +545,20 @@ type judge struct {
 	index   []int     // voxels inside the head
 	base    []float64 // signal there, by index
 	weights [][]float64
-	times   []float64 // instants
+	times   []float64   // instants
+	courses [][]float64 // of the regions at them
 }
 
 // newJudge: the reference's voxel X is the head's point gauge(X).
 func newJudge(g realign.Grid, h *phantom.Head, regions []region, gauge realign.Pose, times []float64) *judge {
 	j := &judge{g: g, regions: regions, times: times, weights: make([][]float64, len(regions))}
+	for _, r := range regions {
+		var c []float64
+		for _, u := range times {
+			c = append(c, r.blob.Course(u))
+		}
+		j.courses = append(j.courses, c)
+	}
 	i := 0
 	for z := range g.N[2] {
 		for y := range g.N[1] {
@@ -492,7 +583,7 @@ func (j *judge) want(n, q int) float64 {
 	v := j.base[q]
 	for b := range j.regions {
 		if w := j.weights[b][q]; w > 0 {
-			v *= 1 + 0.02*j.regions[b].blob.Course(j.times[n])*w
+			v *= 1 + 0.02*j.courses[b][n]*w
 		}
 	}
 	return v
@@ -584,20 +675,16 @@ func gaugeOf(p realign.Path, truth func(float64) realign.Pose) realign.Pose {
 func TestAccuracyJoint(t *testing.T) {
 	seeds := bench(t)
 	c := [3]float64{}
-	const tr = 2.0
 	g := axial([3]int{44, 52, 24}, [3]float64{4, 4, 4.5})
-	times := phantom.Interleaved(24, tr)
-	sch := slicetime.Schedule{Times: times, Axis: 2, TR: tr}
-	ref := sch.Middle()
 	// s is the rms displacement, mm: shifts and turns (at 80 mm) in equal parts.
 	walk := func(seed uint64, s float64) phantom.Motion {
 		return phantom.Walk(1100+seed, s*0.8, s*0.8/80, 0.05, c)
 	}
-	steps := func(seed uint64) phantom.Motion {
+	steps := func(seed uint64, s float64) phantom.Motion {
 		m := walk(seed, 0.01)
-		for i := range volumes(30) / 6 { // one in about ten seconds
+		for i := range volumes(24) / 6 { // one in about ten seconds
 			at := 9.3 + 10.4*float64(i) + 0.7*float64(i%3)
-			sg := float64(1 - 2*(i%2))
+			sg := s * float64(1-2*(i%2))
 			m = phantom.Jerk(m, at, [3]float64{0.5 * sg, 0.6 * sg, 0.3 * sg}, [3]float64{0.006 * sg, 0, 0.004 * sg}, c)
 		}
 		return m
@@ -607,24 +694,35 @@ func TestAccuracyJoint(t *testing.T) {
 	for _, k := range []struct {
 		name               string
 		m                  func(seed uint64) phantom.Motion
-		bar, holds         float64
+		bar                float64
 		times, holdsTimes  float64
 		slow               bool
-		amplitude, delayMS float64
+		amplitude, delayMS float64 // bars; 0: those up to 1 mm
+		tr                 float64 // 0: 2 s, interleaved
 	}{
-		{name: "still", m: func(uint64) phantom.Motion { return nil }, bar: 0.02},
+		{name: "still", m: func(uint64) phantom.Motion { return nil }, bar: 0.02, slow: true},
 		{name: "walk 0.3 mm", m: func(s uint64) phantom.Motion { return walk(s, 0.3) }, bar: 0.055, slow: true},
 		{name: "walk 1 mm", m: func(s uint64) phantom.Motion { return walk(s, 1) }, bar: 0.08},
 		{name: "breathing 0.3 mm", m: func(uint64) phantom.Motion {
 			return phantom.Breathing(0.3, [3]float64{0, 0.3, 0.15}, [3]float64{0.003, 0, 0}, c)
 		}, bar: 0.09, times: 5},
-		{name: "steps 1 mm", m: steps, bar: 0.09, times: 5, holdsTimes: 3},
+		{name: "steps 1 mm", m: func(s uint64) phantom.Motion { return steps(s, 1) }, bar: 0.09, times: 5, holdsTimes: 3},
+		{name: "walk 3 mm", m: func(s uint64) phantom.Motion { return walk(s, 3) }, bar: 0.15, amplitude: 3.5, delayMS: 80, slow: true},
+		{name: "steps 3 mm", m: func(s uint64) phantom.Motion { return steps(s, 3) }, bar: 0.15, amplitude: 3.5, delayMS: 80, slow: true},
+		{name: "breathing 0.3 mm, TR 0.8 s", m: func(uint64) phantom.Motion {
+			return phantom.Breathing(0.3, [3]float64{0, 0.3, 0.15}, [3]float64{0.003, 0, 0}, c)
+		}, bar: 0.09, tr: 0.8, slow: true},
 	} {
 		if k.slow && !*accuracyLong {
 			continue
 		}
 		for _, seed := range seeds {
-			nt := volumes(30)
+			nt, tr, times := volumes(24), 2.0, phantom.Interleaved(24, 2)
+			if k.tr > 0 {
+				nt, tr, times = volumes(60), k.tr, phantom.Multiband(24, 3, k.tr)
+			}
+			sch := slicetime.Schedule{Times: times, Axis: 2, TR: tr}
+			ref := sch.Middle()
 			var blobs []phantom.Blob
 			for _, r := range regions() {
 				blobs = append(blobs, r.blob)
@@ -659,10 +757,14 @@ func TestAccuracyJoint(t *testing.T) {
 				return data
 			}
 			place := func(data []float32, where func(n int) realign.Map) []float32 {
-				rs := realign.NewResampler(g.N, 5)
-				for n := range nt {
+				err := parallel.For(ctx, 2, nt, func(_, n int) error {
+					rs := realign.NewResampler(g.N, 5)
 					rs.Load(data[n*nv:][:nv])
 					rs.Eval(data[n*nv:][:nv], where(n))
+					return nil
+				})
+				if err != nil {
+					t.Fatal(err)
 				}
 				return data
 			}
@@ -674,8 +776,11 @@ func TestAccuracyJoint(t *testing.T) {
 			}
 			tf, _, _ := onVolumes.grade(place(slices.Clone(timed), byVolume))
 			sf, _, _ := onVolumes.grade(correct(place(slices.Clone(r.data), byVolume)))
-			tp, _, _ := onPath.grade(place(timed, onInstant))
-			sp, _, _ := onPath.grade(correct(place(slices.Clone(r.data), bySlice)))
+			tp, sp := math.NaN(), math.NaN() // only to tell what does it
+			if *accuracyLong {
+				tp, _, _ = onPath.grade(place(timed, onInstant))
+				sp, _, _ = onPath.grade(correct(place(slices.Clone(r.data), bySlice)))
+			}
 			e, amplitude, delay := onPath.grade(joint(t, r, p, true, ref, nil, 2))
 			factor := min(tf, sf) / e
 			factorBar := "-"
@@ -688,9 +793,12 @@ func TestAccuracyJoint(t *testing.T) {
 					t.Errorf("%s: %.2f times below the better usual order, bar %g", k.name, factor, floor)
 				}
 			}
-			verdict(t, k.name+", amplitude %", amplitude, 1.5, 0)
-			verdict(t, k.name+", delay ms", delay, 40, 0)
-			t.Logf("| %s | %d | %.3f | %.3f | %.3f | %.3f | %.4f | %.1f | %.2f | %.1f | %s | %s |", k.name, seed, tf, sf, tp, sp, e, factor, amplitude, delay, verdict(t, k.name, e, k.bar, k.holds), factorBar)
+			if k.amplitude == 0 {
+				k.amplitude, k.delayMS = 1.5, 40
+			}
+			verdict(t, k.name+", amplitude %", amplitude, k.amplitude, 0)
+			verdict(t, k.name+", delay ms", delay, k.delayMS, 0)
+			t.Logf("| %s | %d | %.3f | %.3f | %.3f | %.3f | %.4f | %.1f | %.2f | %.1f | %s | %s |", k.name, seed, tf, sf, tp, sp, e, factor, amplitude, delay, verdict(t, k.name, e, k.bar, 0), factorBar)
 		}
 	}
 }

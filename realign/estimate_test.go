@@ -221,6 +221,9 @@ func TestJumps(t *testing.T) {
 // while the head moves, and slices that are lost must cost little: bars of the
 // study, ratio to the clean run with the same noise.
 func TestDisturbances(t *testing.T) {
+	if !testing.Short() {
+		t.Skip("TestAccuracyVolumeDisturbances asks the same, and more; this is for -short")
+	}
 	poses := randomPoses(4, 12, 1, 1)
 	clean := rms(poseErrors(estimate(t, small, scan(t, small, poses, 9, nil), realign.Options{}).Volumes, poses))
 	cases := []struct {

@@ -192,7 +192,7 @@ func TestJointRefuses(t *testing.T) {
 	}
 }
 
-const sameBytesJointDigest = "06b1dab3be118ca4"
+const sameBytesJointDigest = "f290d5587ffb53b9"
 
 func TestSameBytesJoint(t *testing.T) {
 	r := digestRun(t).find(t, realign.Options{}, 2)
@@ -219,7 +219,7 @@ func TestSameBytesJoint(t *testing.T) {
 // interpolation carries it through time as well as plain interpolation in time, to
 // the few thousandths of 900 that poses of a still head leave.
 func TestJointMovesAGlobalSignal(t *testing.T) {
-	const nt, tr = 40, 2.0
+	const nt, tr = 32, 2.0
 	g := axial([3]int{24, 26, 14}, [3]float64{8, 8, 9})
 	for _, f := range []float64{0.05, 0.1, 0.2} {
 		r := record(t, g, 2, nt, tr, phantom.Interleaved(14, tr), nil, 0)

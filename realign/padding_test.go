@@ -11,7 +11,7 @@ import (
 // Slices that hold nothing in any volume, at the ends and within the head, are no
 // data: poses come out nearly as without, and nothing is compared there.
 func TestPaddedSlices(t *testing.T) {
-	const nt = 8
+	const nt = 6
 	g := axial([3]int{38, 44, 32}, [3]float64{4.8, 4.8, 4})
 	r := record(t, g, 2, nt, 2, phantom.Interleaved(32, 2), slowWalk, 9).find(t, realign.Options{}, 2)
 	whole := slices.Clone(r.data)
