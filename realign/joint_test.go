@@ -192,7 +192,7 @@ func TestJointRefuses(t *testing.T) {
 	}
 }
 
-const sameBytesJointDigest = "f290d5587ffb53b9"
+const sameBytesJointDigest = "06b1dab3be118ca4"
 
 func TestSameBytesJoint(t *testing.T) {
 	r := digestRun(t).find(t, realign.Options{}, 2)
