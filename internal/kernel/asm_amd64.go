@@ -22,6 +22,16 @@ func value5(v *float32, c *float32, mx int, area int, base *int32, tx *float32, 
 //go:noescape
 func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx int, area int, base *int32, tx *float32, ty *float32, tz *float32, n int, table *float32)
 
+// affineRow3 is the assembly of affineRow3Plain.
+//
+//go:noescape
+func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32)
+
+// affineRow5 is the assembly of affineRow5Plain.
+//
+//go:noescape
+func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32)
+
 // strip3x32 is the assembly of stripPlain, degree 3, 32 lanes.
 //
 //go:noescape

@@ -20,6 +20,14 @@ func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx
 	panic("kernel: no assembly for this processor")
 }
 
+func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
 func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
 	panic("kernel: no assembly for this processor")
 }

@@ -121,6 +121,7 @@ func BenchmarkGram(b *testing.B) {
 		for _, plain := range []bool{false, true} {
 			b.Run(fmt.Sprintf("%d/%s", m, map[bool]string{false: "asm", true: "plain"}[plain]), func(b *testing.B) {
 				defer SetPlain(SetPlain(plain))
+				per := perItem()
 				for b.Loop() {
 					// In pieces, as slots come.
 					for from := 0; from < n; from += 2000 {
@@ -131,7 +132,7 @@ func BenchmarkGram(b *testing.B) {
 						Gram(sum, part[:m], w[from:from+2000])
 					}
 				}
-				b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N*n), "ns/point")
+				per(b, n, "point")
 			})
 		}
 	}

@@ -236,17 +236,18 @@ func BenchmarkPoints(b *testing.B) {
 		}
 		n := len(s.base)
 		v, gx, gy, gz := make([]float32, n), make([]float32, n), make([]float32, n), make([]float32, n)
-		per := func(b *testing.B) { b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N*n), "ns/point") }
 		if degree == 5 {
 			b.Run("value5/scalar", func(b *testing.B) {
+				per := perItem()
 				for b.Loop() {
 					for i, at := range s.base {
 						v[i] = scalarValue5(s.c, 70, 4900, int(at), float64(s.tx[i]), float64(s.ty[i]), float64(s.tz[i]))
 					}
 				}
-				per(b)
+				per(b, n, "point")
 			})
 			b.Run("gradient5/scalar", func(b *testing.B) {
+				per := perItem()
 				for b.Loop() {
 					for i, at := range s.base {
 						var d [3]float32
@@ -254,13 +255,14 @@ func BenchmarkPoints(b *testing.B) {
 						gx[i], gy[i], gz[i] = d[0], d[1], d[2]
 					}
 				}
-				per(b)
+				per(b, n, "point")
 			})
 		}
 		for _, plain := range []bool{false, true} {
 			name := map[bool]string{false: "asm", true: "plain"}[plain]
 			b.Run(fmt.Sprintf("value%d/%s", degree, name), func(b *testing.B) {
 				defer SetPlain(SetPlain(plain))
+				per := perItem()
 				for b.Loop() {
 					if degree == 5 {
 						Value5(v, s.c, 70, 4900, s.base, s.tx, s.ty, s.tz)
@@ -268,10 +270,11 @@ func BenchmarkPoints(b *testing.B) {
 						Value3(v, s.c, 70, 4900, s.base, s.tx, s.ty, s.tz)
 					}
 				}
-				per(b)
+				per(b, n, "point")
 			})
 			b.Run(fmt.Sprintf("gradient%d/%s", degree, name), func(b *testing.B) {
 				defer SetPlain(SetPlain(plain))
+				per := perItem()
 				for b.Loop() {
 					if degree == 5 {
 						Gradient5(v, gx, gy, gz, s.c, 70, 4900, s.base, s.tx, s.ty, s.tz)
@@ -279,7 +282,7 @@ func BenchmarkPoints(b *testing.B) {
 						Gradient3(v, gx, gy, gz, s.c, 70, 4900, s.base, s.tx, s.ty, s.tz)
 					}
 				}
-				per(b)
+				per(b, n, "point")
 			})
 		}
 	}

@@ -237,10 +237,11 @@ func BenchmarkPrefilter(b *testing.B) {
 			for _, plain := range []bool{false, true} {
 				b.Run(fmt.Sprintf("%dx%d/%d/%s", n[0], n[2], degree, map[bool]string{false: "asm", true: "plain"}[plain]), func(b *testing.B) {
 					defer SetPlain(SetPlain(plain))
+					per := perItem()
 					for b.Loop() {
 						p.Run(c, vol)
 					}
-					b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N*len(vol)), "ns/voxel")
+					per(b, len(vol), "voxel")
 				})
 			}
 		}

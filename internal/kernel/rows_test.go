@@ -127,10 +127,11 @@ func BenchmarkRows(b *testing.B) {
 		} {
 			b.Run(fmt.Sprintf("%s/%s", []string{"residual", "tukey", "abs"}[k], name), func(b *testing.B) {
 				defer SetPlain(SetPlain(plain))
+				per := perItem()
 				for b.Loop() {
 					f()
 				}
-				b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N*n), "ns/value")
+				per(b, n, "value")
 			})
 		}
 	}

@@ -9,18 +9,18 @@ func scalarWeights5(t float64) (w [6]float32) {
 	t4, u4 := float64(t2*t2), float64(u2*u2)
 	w[0] = float32(float64(float64(u4*u) * (1.0 / 120)))
 	w[5] = float32(float64(float64(t4*t) * (1.0 / 120)))
-	w[2] = float32(centre5(t2, t4, t))
-	w[3] = float32(centre5(u2, u4, u))
-	w[1] = float32(side5(t))
-	w[4] = float32(side5(u))
+	w[2] = float32(scalarCentre5(t2, t4, t))
+	w[3] = float32(scalarCentre5(u2, u4, u))
+	w[1] = float32(scalarSide5(t))
+	w[4] = float32(scalarSide5(u))
 	return w
 }
 
-func centre5(x2, x4, x float64) float64 {
+func scalarCentre5(x2, x4, x float64) float64 {
 	return 0.55 - x2/2 + x4/4 - float64(float64(x4*x)*(1.0/12))
 }
 
-func side5(x float64) float64 {
+func scalarSide5(x float64) float64 {
 	r := float64(1.0/24*x) - 1.0/6
 	r = float64(r*x) + 1.0/6
 	r = float64(r*x) + 1.0/6
@@ -33,18 +33,18 @@ func scalarSlopes5(t float64) (w [6]float32) {
 	t2, u2 := float64(t*t), float64(u*u)
 	w[0] = float32(-float64(float64(u2*u2) * (1.0 / 24)))
 	w[5] = float32(float64(float64(t2*t2) * (1.0 / 24)))
-	w[2] = float32(centreSlope5(t, t2))
-	w[3] = float32(-centreSlope5(u, u2))
-	w[1] = float32(sideSlope5(t))
-	w[4] = float32(-sideSlope5(u))
+	w[2] = float32(scalarCentreSlope5(t, t2))
+	w[3] = float32(-scalarCentreSlope5(u, u2))
+	w[1] = float32(scalarSideSlope5(t))
+	w[4] = float32(-scalarSideSlope5(u))
 	return w
 }
 
-func centreSlope5(x, x2 float64) float64 {
+func scalarCentreSlope5(x, x2 float64) float64 {
 	return -x + float64(x2*x) - float64(float64(x2*x2)*(5.0/12))
 }
 
-func sideSlope5(x float64) float64 {
+func scalarSideSlope5(x float64) float64 {
 	r := float64(5.0/24*x) - 4.0/6
 	r = float64(r*x) + 0.5
 	r = float64(r*x) + 1.0/3

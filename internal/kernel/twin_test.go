@@ -127,3 +127,11 @@ func TestSetPlain(t *testing.T) {
 	}
 	SetPlain(was)
 }
+
+// perItem returns what reports the processor time from now on per item of a benchmark.
+func perItem() func(b *testing.B, items int, item string) {
+	from := cpuTime()
+	return func(b *testing.B, items int, item string) {
+		b.ReportMetric(float64(cpuTime()-from)/float64(b.N)/float64(items), "cpu-ns/"+item)
+	}
+}

@@ -43,6 +43,7 @@ var g *build.Context
 func generate() (map[string][]byte, error) {
 	g = build.NewContext()
 	points()
+	affine()
 	prefilter()
 	gram()
 	rows()
