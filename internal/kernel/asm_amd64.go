@@ -22,6 +22,21 @@ func value5(v *float32, c *float32, mx int, area int, base *int32, tx *float32, 
 //go:noescape
 func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx int, area int, base *int32, tx *float32, ty *float32, tz *float32, n int, table *float32)
 
+// symmetric is the assembly of symmetricPlain.
+//
+//go:noescape
+func symmetric(dst *float32, n int, rows **float32, h *float32, reach int, masks *int32)
+
+// combine is the assembly of combinePlain.
+//
+//go:noescape
+func combine(dst *float32, n int, w *float32, src **float32, taps int, add bool, masks *int32)
+
+// combineInt16 is the assembly of combineInt16Plain.
+//
+//go:noescape
+func combineInt16(dst *float32, n int, w *float32, src **int16, taps int, add bool, masks *int32)
+
 // affineRow3 is the assembly of affineRow3Plain.
 //
 //go:noescape

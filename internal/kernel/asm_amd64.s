@@ -850,6 +850,435 @@ end:
 	VZEROUPPER
 	RET
 
+// func symmetric(dst *float32, n int, rows **float32, h *float32, reach int, masks *int32)
+// Requires: AVX
+TEXT ·symmetric(SB), NOSPLIT, $0-48
+	MOVQ dst+0(FP), AX
+	MOVQ n+8(FP), CX
+	MOVQ rows+16(FP), DX
+	MOVQ h+24(FP), BX
+	MOVQ reach+32(FP), SI
+	MOVQ masks+40(FP), DI
+	LEAQ (DX)(SI*8), DX
+	XORQ R8, R8
+	MOVQ CX, R9
+	ANDQ $-32, R9
+
+by32:
+	CMPQ         R8, R9
+	JGE          by32_end
+	MOVQ         (DX), R10
+	VBROADCASTSS (BX), Y0
+	VMOVUPS      (R10)(R8*4), Y1
+	VMULPS       Y0, Y1, Y1
+	VMOVUPS      32(R10)(R8*4), Y2
+	VMULPS       Y0, Y2, Y2
+	VMOVUPS      64(R10)(R8*4), Y3
+	VMULPS       Y0, Y3, Y3
+	VMOVUPS      96(R10)(R8*4), Y4
+	VMULPS       Y0, Y4, Y4
+	XORQ         R12, R12
+
+by32_tap:
+	CMPQ         R12, SI
+	JGE          by32_sum
+	INCQ         R12
+	VBROADCASTSS (BX)(R12*4), Y0
+	MOVQ         (DX)(R12*8), R11
+	NEGQ         R12
+	MOVQ         (DX)(R12*8), R10
+	NEGQ         R12
+	VMOVUPS      (R10)(R8*4), Y5
+	VMOVUPS      (R11)(R8*4), Y6
+	VADDPS       Y6, Y5, Y5
+	VMULPS       Y0, Y5, Y5
+	VADDPS       Y5, Y1, Y1
+	VMOVUPS      32(R10)(R8*4), Y5
+	VMOVUPS      32(R11)(R8*4), Y6
+	VADDPS       Y6, Y5, Y5
+	VMULPS       Y0, Y5, Y5
+	VADDPS       Y5, Y2, Y2
+	VMOVUPS      64(R10)(R8*4), Y5
+	VMOVUPS      64(R11)(R8*4), Y6
+	VADDPS       Y6, Y5, Y5
+	VMULPS       Y0, Y5, Y5
+	VADDPS       Y5, Y3, Y3
+	VMOVUPS      96(R10)(R8*4), Y5
+	VMOVUPS      96(R11)(R8*4), Y6
+	VADDPS       Y6, Y5, Y5
+	VMULPS       Y0, Y5, Y5
+	VADDPS       Y5, Y4, Y4
+	JMP          by32_tap
+
+by32_sum:
+	VMOVUPS Y1, (AX)(R8*4)
+	VMOVUPS Y2, 32(AX)(R8*4)
+	VMOVUPS Y3, 64(AX)(R8*4)
+	VMOVUPS Y4, 96(AX)(R8*4)
+	ADDQ    $0x00000020, R8
+	JMP     by32
+
+by32_end:
+	MOVQ CX, R9
+	ANDQ $-8, R9
+
+by8:
+	CMPQ         R8, R9
+	JGE          by8_end
+	MOVQ         (DX), R10
+	VBROADCASTSS (BX), Y0
+	VMOVUPS      (R10)(R8*4), Y1
+	VMULPS       Y0, Y1, Y1
+	XORQ         R12, R12
+
+by8_tap:
+	CMPQ         R12, SI
+	JGE          by8_sum
+	INCQ         R12
+	VBROADCASTSS (BX)(R12*4), Y0
+	MOVQ         (DX)(R12*8), R11
+	NEGQ         R12
+	MOVQ         (DX)(R12*8), R10
+	NEGQ         R12
+	VMOVUPS      (R10)(R8*4), Y2
+	VMOVUPS      (R11)(R8*4), Y3
+	VADDPS       Y3, Y2, Y2
+	VMULPS       Y0, Y2, Y2
+	VADDPS       Y2, Y1, Y1
+	JMP          by8_tap
+
+by8_sum:
+	VMOVUPS Y1, (AX)(R8*4)
+	ADDQ    $0x00000008, R8
+	JMP     by8
+
+by8_end:
+	SUBQ         R8, CX
+	JZ           done
+	NEGQ         CX
+	VMOVUPS      32(DI)(CX*4), Y0
+	MOVQ         (DX), CX
+	VBROADCASTSS (BX), Y1
+	VMASKMOVPS   (CX)(R8*4), Y0, Y2
+	VMULPS       Y1, Y2, Y2
+	XORQ         R9, R9
+
+rest_tap:
+	CMPQ         R9, SI
+	JGE          rest_sum
+	INCQ         R9
+	VBROADCASTSS (BX)(R9*4), Y1
+	MOVQ         (DX)(R9*8), DI
+	NEGQ         R9
+	MOVQ         (DX)(R9*8), CX
+	NEGQ         R9
+	VMASKMOVPS   (CX)(R8*4), Y0, Y3
+	VMASKMOVPS   (DI)(R8*4), Y0, Y4
+	VADDPS       Y4, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       Y3, Y2, Y2
+	JMP          rest_tap
+
+rest_sum:
+	VMASKMOVPS Y2, Y0, (AX)(R8*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func combine(dst *float32, n int, w *float32, src **float32, taps int, add bool, masks *int32)
+// Requires: AVX
+TEXT ·combine(SB), NOSPLIT, $0-56
+	MOVQ dst+0(FP), AX
+	MOVQ n+8(FP), CX
+	MOVQ w+16(FP), DX
+	MOVQ src+24(FP), BX
+	MOVQ taps+32(FP), SI
+	MOVQ masks+48(FP), DI
+	MOVB add+40(FP), R8
+	XORQ R9, R9
+	MOVQ CX, R12
+	ANDQ $-64, R12
+
+by64:
+	CMPQ    R9, R12
+	JGE     by64_end
+	VXORPS  Y0, Y0, Y0
+	VXORPS  Y1, Y1, Y1
+	VXORPS  Y2, Y2, Y2
+	VXORPS  Y3, Y3, Y3
+	VXORPS  Y4, Y4, Y4
+	VXORPS  Y5, Y5, Y5
+	VXORPS  Y6, Y6, Y6
+	VXORPS  Y7, Y7, Y7
+	TESTB   R8, R8
+	JZ      by64_zero
+	VMOVUPS (AX)(R9*4), Y0
+	VMOVUPS 32(AX)(R9*4), Y1
+	VMOVUPS 64(AX)(R9*4), Y2
+	VMOVUPS 96(AX)(R9*4), Y3
+	VMOVUPS 128(AX)(R9*4), Y4
+	VMOVUPS 160(AX)(R9*4), Y5
+	VMOVUPS 192(AX)(R9*4), Y6
+	VMOVUPS 224(AX)(R9*4), Y7
+
+by64_zero:
+	XORQ R10, R10
+
+by64_tap:
+	CMPQ         R10, SI
+	JGE          by64_tap_end
+	VBROADCASTSS (DX)(R10*4), Y8
+	MOVQ         (BX)(R10*8), R11
+	VMULPS       (R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y0, Y0
+	VMULPS       32(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y1, Y1
+	VMULPS       64(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y2, Y2
+	VMULPS       96(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y3, Y3
+	VMULPS       128(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y4, Y4
+	VMULPS       160(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y5, Y5
+	VMULPS       192(R11)(R9*4), Y8, Y9
+	VADDPS       Y9, Y6, Y6
+	VMULPS       224(R11)(R9*4), Y8, Y8
+	VADDPS       Y8, Y7, Y7
+	ADDQ         $0x00000001, R10
+	JMP          by64_tap
+
+by64_tap_end:
+	VMOVUPS Y0, (AX)(R9*4)
+	VMOVUPS Y1, 32(AX)(R9*4)
+	VMOVUPS Y2, 64(AX)(R9*4)
+	VMOVUPS Y3, 96(AX)(R9*4)
+	VMOVUPS Y4, 128(AX)(R9*4)
+	VMOVUPS Y5, 160(AX)(R9*4)
+	VMOVUPS Y6, 192(AX)(R9*4)
+	VMOVUPS Y7, 224(AX)(R9*4)
+	ADDQ    $0x00000040, R9
+	JMP     by64
+
+by64_end:
+	MOVQ CX, R12
+	ANDQ $-8, R12
+
+by8:
+	CMPQ    R9, R12
+	JGE     by8_end
+	VXORPS  Y0, Y0, Y0
+	TESTB   R8, R8
+	JZ      by8_zero
+	VMOVUPS (AX)(R9*4), Y0
+
+by8_zero:
+	XORQ R10, R10
+
+by8_tap:
+	CMPQ         R10, SI
+	JGE          by8_tap_end
+	VBROADCASTSS (DX)(R10*4), Y1
+	MOVQ         (BX)(R10*8), R11
+	VMULPS       (R11)(R9*4), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	ADDQ         $0x00000001, R10
+	JMP          by8_tap
+
+by8_tap_end:
+	VMOVUPS Y0, (AX)(R9*4)
+	ADDQ    $0x00000008, R9
+	JMP     by8
+
+by8_end:
+	SUBQ       R9, CX
+	JZ         done
+	NEGQ       CX
+	VMOVUPS    32(DI)(CX*4), Y0
+	VXORPS     Y1, Y1, Y1
+	TESTB      R8, R8
+	JZ         rest_zero
+	VMASKMOVPS (AX)(R9*4), Y0, Y1
+
+rest_zero:
+	XORQ R10, R10
+
+rest_tap:
+	CMPQ         R10, SI
+	JGE          rest_tap_end
+	VBROADCASTSS (DX)(R10*4), Y2
+	MOVQ         (BX)(R10*8), R11
+	VMASKMOVPS   (R11)(R9*4), Y0, Y3
+	VMULPS       Y3, Y2, Y3
+	VADDPS       Y3, Y1, Y1
+	ADDQ         $0x00000001, R10
+	JMP          rest_tap
+
+rest_tap_end:
+	VMASKMOVPS Y1, Y0, (AX)(R9*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func combineInt16(dst *float32, n int, w *float32, src **int16, taps int, add bool, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·combineInt16(SB), NOSPLIT, $0-56
+	MOVQ dst+0(FP), AX
+	MOVQ n+8(FP), CX
+	MOVQ w+16(FP), DX
+	MOVQ src+24(FP), BX
+	MOVQ taps+32(FP), SI
+	MOVQ masks+48(FP), DI
+	MOVB add+40(FP), DI
+	XORQ R8, R8
+	MOVQ CX, R11
+	ANDQ $-64, R11
+
+by64:
+	CMPQ    R8, R11
+	JGE     by64_end
+	VXORPS  Y0, Y0, Y0
+	VXORPS  Y1, Y1, Y1
+	VXORPS  Y2, Y2, Y2
+	VXORPS  Y3, Y3, Y3
+	VXORPS  Y4, Y4, Y4
+	VXORPS  Y5, Y5, Y5
+	VXORPS  Y6, Y6, Y6
+	VXORPS  Y7, Y7, Y7
+	TESTB   DI, DI
+	JZ      by64_zero
+	VMOVUPS (AX)(R8*4), Y0
+	VMOVUPS 32(AX)(R8*4), Y1
+	VMOVUPS 64(AX)(R8*4), Y2
+	VMOVUPS 96(AX)(R8*4), Y3
+	VMOVUPS 128(AX)(R8*4), Y4
+	VMOVUPS 160(AX)(R8*4), Y5
+	VMOVUPS 192(AX)(R8*4), Y6
+	VMOVUPS 224(AX)(R8*4), Y7
+
+by64_zero:
+	XORQ R9, R9
+
+by64_tap:
+	CMPQ         R9, SI
+	JGE          by64_tap_end
+	VBROADCASTSS (DX)(R9*4), Y8
+	MOVQ         (BX)(R9*8), R10
+	VPMOVSXWD    (R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y0, Y0
+	VPMOVSXWD    16(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y1, Y1
+	VPMOVSXWD    32(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y2, Y2
+	VPMOVSXWD    48(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y3, Y3
+	VPMOVSXWD    64(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y4, Y4
+	VPMOVSXWD    80(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y5, Y5
+	VPMOVSXWD    96(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y6, Y6
+	VPMOVSXWD    112(R10)(R8*2), Y9
+	VCVTDQ2PS    Y9, Y9
+	VMULPS       Y9, Y8, Y9
+	VADDPS       Y9, Y7, Y7
+	ADDQ         $0x00000001, R9
+	JMP          by64_tap
+
+by64_tap_end:
+	VMOVUPS Y0, (AX)(R8*4)
+	VMOVUPS Y1, 32(AX)(R8*4)
+	VMOVUPS Y2, 64(AX)(R8*4)
+	VMOVUPS Y3, 96(AX)(R8*4)
+	VMOVUPS Y4, 128(AX)(R8*4)
+	VMOVUPS Y5, 160(AX)(R8*4)
+	VMOVUPS Y6, 192(AX)(R8*4)
+	VMOVUPS Y7, 224(AX)(R8*4)
+	ADDQ    $0x00000040, R8
+	JMP     by64
+
+by64_end:
+	MOVQ CX, R11
+	ANDQ $-8, R11
+
+by8:
+	CMPQ    R8, R11
+	JGE     by8_end
+	VXORPS  Y0, Y0, Y0
+	TESTB   DI, DI
+	JZ      by8_zero
+	VMOVUPS (AX)(R8*4), Y0
+
+by8_zero:
+	XORQ R9, R9
+
+by8_tap:
+	CMPQ         R9, SI
+	JGE          by8_tap_end
+	VBROADCASTSS (DX)(R9*4), Y1
+	MOVQ         (BX)(R9*8), R10
+	VPMOVSXWD    (R10)(R8*2), Y2
+	VCVTDQ2PS    Y2, Y2
+	VMULPS       Y2, Y1, Y2
+	VADDPS       Y2, Y0, Y0
+	ADDQ         $0x00000001, R9
+	JMP          by8_tap
+
+by8_tap_end:
+	VMOVUPS Y0, (AX)(R8*4)
+	ADDQ    $0x00000008, R8
+	JMP     by8
+
+by8_end:
+one:
+	CMPQ   R8, CX
+	JGE    one_end
+	VXORPS Y0, Y0, Y0
+	TESTB  DI, DI
+	JZ     rest_zero
+	VMOVSS (AX)(R8*4), X0
+
+rest_zero:
+	XORQ R9, R9
+
+rest_tap:
+	CMPQ         R9, SI
+	JGE          rest_tap_end
+	VBROADCASTSS (DX)(R9*4), Y1
+	MOVQ         (BX)(R9*8), R10
+	MOVWLSX      (R10)(R8*2), R10
+	VXORPS       X10, X10, X10
+	VCVTSI2SSL   R10, X10, X10
+	VMULPS       Y10, Y1, Y10
+	VADDPS       Y10, Y0, Y0
+	ADDQ         $0x00000001, R9
+	JMP          rest_tap
+
+rest_tap_end:
+	VMOVSS X0, (AX)(R8*4)
+	ADDQ   $0x00000001, R8
+	JMP    one
+
+one_end:
+	VZEROUPPER
+	RET
+
 // func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32)
 // Requires: AVX, AVX2
 TEXT ·affineRow3(SB), NOSPLIT, $352-64

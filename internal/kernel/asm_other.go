@@ -20,6 +20,18 @@ func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx
 	panic("kernel: no assembly for this processor")
 }
 
+func symmetric(dst *float32, n int, rows **float32, h *float32, reach int, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func combine(dst *float32, n int, w *float32, src **float32, taps int, add bool, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func combineInt16(dst *float32, n int, w *float32, src **int16, taps int, add bool, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
 func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }

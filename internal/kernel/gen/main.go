@@ -43,6 +43,7 @@ var g *build.Context
 func generate() (map[string][]byte, error) {
 	g = build.NewContext()
 	points()
+	fir()
 	affine()
 	prefilter()
 	gram()
