@@ -2,6 +2,7 @@ package realign
 
 import (
 	"context"
+	"slices"
 
 	"evenkeel/slicetime"
 )
@@ -30,12 +31,18 @@ func FilterLine(x []float64, degree int, b Boundary) []float64 {
 func Interpolate(n [3]int, vol []float32, degree int, b Boundary, pts [][3]float64) (v []float32, g [][3]float32) {
 	s := newSpline(n, degree, b)
 	s.load(vol)
+	var at batch
 	for _, p := range pts {
-		w, d := s.gradient(p[0], p[1], p[2])
-		if u := s.value(p[0], p[1], p[2]); u != w {
-			panic("value and gradient disagree")
-		}
-		v, g = append(v, w), append(g, d)
+		s.add(&at, p[0], p[1], p[2])
+	}
+	s.values(&at)
+	only := slices.Clone(at.v)
+	s.gradients(&at)
+	if !slices.Equal(only, at.v) {
+		panic("value and gradient disagree")
+	}
+	for q := range pts {
+		v, g = append(v, at.v[q]), append(g, [3]float32{at.gx[q], at.gy[q], at.gz[q]})
 	}
 	return v, g
 }

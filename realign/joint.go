@@ -46,7 +46,8 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 	inv := mustInvert(g.Affine)
 	done := &progress{tell: p.Progress}
 	done.phase(0, takenOut, nt)
-	err := parallel.For(ctx, workers, nt, func(_, n int) error {
+	batches := make([]batch, workers)
+	err := parallel.For(ctx, workers, nt, func(worker, n int) error {
 		defer done.piece()
 		vol := data[n*nv:][:nv]
 		back := make([][16]float64, g.N[s.Axis])
@@ -57,14 +58,22 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		for k := range gain {
 			gain[k] = newGainRows(g, p.Centre, &taken[n][k])
 		}
-		i := 0
+		b := &batches[worker]
+		area := g.N[0] * g.N[1]
 		for z := range g.N[2] {
+			b.reset()
 			for y := range g.N[1] {
 				for x := range g.N[0] {
-					k := [3]int{x, y, z}[s.Axis]
+					at := applyAffine(&back[[3]int{x, y, z}[s.Axis]], float64(x), float64(y), float64(z))
+					template.add(b, at[0], at[1], at[2])
+				}
+			}
+			template.values(b)
+			i := 0
+			for y := range g.N[1] {
+				for x := range g.N[0] {
 					v := [3]float64{float64(x), float64(y), float64(z)}
-					at := applyAffine(&back[k], v[0], v[1], v[2])
-					vol[i] -= float32(gain[k].at(v) * float64(template.value(at[0], at[1], at[2])))
+					vol[area*z+i] -= float32(gain[[3]int{x, y, z}[s.Axis]].at(v) * float64(b.v[i]))
 					i++
 				}
 			}
@@ -101,18 +110,28 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		}
 		m := mul(inv, mul(pose.Matrix(), g.Affine))
 		gain := newGainRows(g, p.Centre, &given[n][0])
-		i := 0
+		b := &batches[worker]
+		area := g.N[0] * g.N[1]
 		for z := range g.N[2] {
+			plane := vol[area*z:][:area]
+			b.reset()
+			if !still {
+				for y := range g.N[1] {
+					for x := range g.N[0] {
+						at := applyAffine(&m, float64(x), float64(y), float64(z))
+						r.add(b, at[0], at[1], at[2])
+					}
+				}
+				r.valuesInto(plane, b)
+			}
+			i := 0
 			for y := range g.N[1] {
 				for x := range g.N[0] {
 					at := [3]float64{float64(x), float64(y), float64(z)}
-					e := vol[i]
 					if !still {
 						at = applyAffine(&m, at[0], at[1], at[2])
-						e = r.value(at[0], at[1], at[2])
 					}
-					gn := gain.at(at)
-					vol[i] = float32(gn*float64(p.Reference[i])) + e
+					plane[i] = float32(gain.at(at)*float64(p.Reference[area*z+i])) + plane[i]
 					i++
 				}
 			}

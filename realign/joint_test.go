@@ -192,7 +192,7 @@ func TestJointRefuses(t *testing.T) {
 	}
 }
 
-const sameBytesJointDigest = "06b1dab3be118ca4"
+const sameBytesJointDigest = "c5024f7726b58be2"
 
 func TestSameBytesJoint(t *testing.T) {
 	r := digestRun(t).find(t, realign.Options{}, 2)

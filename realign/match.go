@@ -1,6 +1,10 @@
 package realign
 
-import "math"
+import (
+	"math"
+
+	"evenkeel/internal/kernel"
+)
 
 // gainReach scales the polynomial of the gain: a coefficient of 0.1 means 10 %
 // over 80 mm, the radius of a head.
@@ -39,33 +43,51 @@ type effort struct {
 // matcher aligns smoothed volumes with a template. It owns its scratch and
 // belongs to one goroutine.
 type matcher struct {
-	pts   []point
-	v     []float32 // value of the volume at the point
-	r     []float32 // value of the template
-	res   []float32 // residual
-	order []float32 // scratch of the median
+	points
+	v   []float32 // value of the volume at the point
+	r   []float32 // value of the template
+	res []float32 // residual
+
+	b      batch
+	weight []float32
+	abs    []float32
+	rows   [5][]float32 // rows of the normal equations: brightness and residual, over the gain
 }
 
-// point is one voxel of the volume with the template at its matching point.
-type point struct {
-	at    [3]int32
-	slice int32
-	near  int32      // voxel of the template nearest to the matching point
-	w     float32    // weight of that voxel
-	head  bool       // inside the head
-	phi   [3]float32 // scanner coordinates for the gain, from the centre, / gainReach
-	jac   [6]float32 // gradient and moment of the template, per mm and per rad
+// points are the voxels of a volume that take part in a match, with the template at
+// their matching points.
+type points struct {
+	at    [][3]int32
+	slice []int32
+	near  []int32      // voxel of the template nearest to the matching point
+	w     []float32    // weight of that voxel
+	head  []bool       // inside the head
+	phi   [3][]float32 // scanner coordinates for the gain, from the centre, / gainReach
+	jac   [6][]float32 // gradient and moment of the template, per mm and per rad
+}
+
+func (p *points) reset(room int) {
+	if cap(p.at) < room {
+		p.at, p.slice, p.near = make([][3]int32, 0, room), make([]int32, 0, room), make([]int32, 0, room)
+		p.w, p.head = make([]float32, 0, room), make([]bool, 0, room)
+		for a := range p.phi {
+			p.phi[a] = make([]float32, 0, room)
+		}
+	}
+	p.at, p.slice, p.near, p.w, p.head = p.at[:0], p.slice[:0], p.near[:0], p.w[:0], p.head[:0]
+	for a := range p.phi {
+		p.phi[a] = p.phi[a][:0]
+	}
 }
 
 // selectPoints lists the voxels of vol that take part at the pose and evaluates
 // the template and its derivatives at their matching points.
 func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 	n := t.g.N
-	if cap(m.pts) < len(vol) {
-		m.pts = make([]point, 0, len(vol))
-		m.v, m.r, m.res, m.order = make([]float32, 0, len(vol)), make([]float32, 0, len(vol)), make([]float32, 0, len(vol)), make([]float32, 0, len(vol))
-	}
-	m.pts, m.v, m.r = m.pts[:0], m.v[:0], m.r[:0]
+	m.points.reset(len(vol))
+	m.b.reset()
+	m.b.grow(len(vol))
+	m.v = m.v[:0]
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
 	toCentre := t.g.Affine // voxel index to mm from the centre
 	for a := range t.centre {
@@ -82,7 +104,8 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				if e.thin && white(n, i, j, k) {
 					continue
 				}
-				if e.skip != nil && e.skip[[3]int{i, j, k}[e.sliceAxis]] {
+				slice := [3]int{i, j, k}[e.sliceAxis]
+				if e.skip != nil && e.skip[slice] {
 					continue
 				}
 				y := applyAffine(&b, float64(i), float64(j), float64(k))
@@ -93,29 +116,47 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				if !t.usable[near] {
 					continue
 				}
-				v, g := t.s.gradient(y[0], y[1], y[2])
-				var gw [3]float64
-				for a := range gw {
-					gw[a] = float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])
-				}
-				yw := applyAffine(&toCentre, y[0], y[1], y[2])
-				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
-				q := point{at: [3]int32{int32(i), int32(j), int32(k)}, near: int32(near), w: 1, head: t.head[near]}
+				t.s.add(&m.b, y[0], y[1], y[2])
+				m.at = append(m.at, [3]int32{int32(i), int32(j), int32(k)})
+				m.slice = append(m.slice, int32(slice))
+				m.near = append(m.near, int32(near))
+				m.head = append(m.head, t.head[near])
+				w := float32(1)
 				if t.weight != nil {
-					q.w = t.weight[near]
+					w = t.weight[near]
 				}
-				q.slice = q.at[e.sliceAxis]
+				m.w = append(m.w, w)
+				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
 				for a := range xw {
-					q.phi[a] = float32(xw[a] * (1.0 / gainReach))
+					m.phi[a] = append(m.phi[a], float32(xw[a]*(1.0/gainReach)))
 				}
-				mo := cross(yw, gw)
-				q.jac = [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(mo[0]), float32(mo[1]), float32(mo[2])}
-				m.pts = append(m.pts, q)
 				m.v = append(m.v, vol[i+n[0]*(j+n[1]*k)])
-				m.r = append(m.r, v)
 			}
 		}
 	}
+	t.s.gradients(&m.b)
+	count := len(m.at)
+	m.r = append(m.r[:0], m.b.v...)
+	for a := range m.jac {
+		m.jac[a] = sized(m.jac[a], count)
+	}
+	for q, at := range m.at {
+		g := [3]float64{float64(m.b.gx[q]), float64(m.b.gy[q]), float64(m.b.gz[q])}
+		gw := toWorld(&t.inv, g)
+		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
+		mo := cross(applyAffine(&toCentre, y[0], y[1], y[2]), gw)
+		for a := range 3 {
+			m.jac[a][q], m.jac[3+a][q] = float32(gw[a]), float32(mo[a])
+		}
+	}
+}
+
+// toWorld turns derivatives by voxel into derivatives by mm; inv takes mm to voxels.
+func toWorld(inv *[16]float64, g [3]float64) (w [3]float64) {
+	for a := range w {
+		w[a] = float64(g[0]*inv[a]) + float64(g[1]*inv[4+a]) + float64(g[2]*inv[8+a])
+	}
+	return w
 }
 
 // white says which voxels thinning leaves out: those of one colour of a
@@ -128,22 +169,24 @@ func white(n [3]int, x, y, z int) bool {
 // revalue evaluates the template anew at another pose, derivatives kept.
 func (m *matcher) revalue(t *template, p Pose) {
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
-	for q := range m.pts {
-		at := &m.pts[q].at
+	m.b.reset()
+	for _, at := range m.at {
 		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
-		m.r[q] = t.s.value(y[0], y[1], y[2])
+		t.s.add(&m.b, y[0], y[1], y[2])
 	}
+	t.s.valuesInto(m.r, &m.b)
 }
 
 // extrapolate changes the template's values by J d. jac holds the gradient and
 // moment of the template at the matching point, which moves by the opposite of
 // the twist.
 func (m *matcher) extrapolate(d Twist) {
-	d32 := [6]float32{float32(d.V[0]), float32(d.V[1]), float32(d.V[2]), float32(d.W[0]), float32(d.W[1]), float32(d.W[2])}
+	d0, d1, d2 := float32(d.V[0]), float32(d.V[1]), float32(d.V[2])
+	d3, d4, d5 := float32(d.W[0]), float32(d.W[1]), float32(d.W[2])
+	j0, j1, j2, j3, j4, j5 := m.jac[0], m.jac[1], m.jac[2], m.jac[3], m.jac[4], m.jac[5]
 	for q := range m.r {
-		j := &m.pts[q].jac
-		a := float32(j[0]*d32[0]) + float32(j[1]*d32[1]) + float32(j[2]*d32[2])
-		b := float32(j[3]*d32[3]) + float32(j[4]*d32[4]) + float32(j[5]*d32[5])
+		a := float32(j0[q]*d0) + float32(j1[q]*d1) + float32(j2[q]*d2)
+		b := float32(j3[q]*d3) + float32(j4[q]*d4) + float32(j5[q]*d5)
 		m.r[q] -= a + b
 	}
 }
@@ -178,7 +221,7 @@ func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found 
 	taken, valued := start, start
 	f.gain[0] = m.ratio()
 	for f.iterations < e.iterations {
-		if f.points = len(m.pts); f.points < 10*unknowns {
+		if f.points = len(m.at); f.points < 10*unknowns {
 			return f // hardly any overlap: fit stays 0
 		}
 		step, ok := m.step(&f, e, t.g.N[e.sliceAxis])
@@ -247,47 +290,75 @@ func (m *matcher) ratio() float64 {
 	return vr / rr
 }
 
-// gainAt is the gain at point q.
-func (f *found) gainAt(phi *[3]float32) float64 {
-	return f.gain[0] + float64(f.gain[1]*float64(phi[0])) + float64(f.gain[2]*float64(phi[1])) + float64(f.gain[3]*float64(phi[2]))
-}
-
 // residuals evaluates e at the points, with the gain in f.
 func (m *matcher) residuals(f *found) {
-	m.res = m.res[:0]
-	for q := range m.pts {
-		m.res = append(m.res, float32(float64(m.v[q])-float64(f.gainAt(&m.pts[q].phi)*float64(m.r[q]))))
+	m.res = sized(m.res, len(m.at))
+	kernel.Residual(m.res, m.v, m.r, m.phi[0], m.phi[1], m.phi[2], f.gain32())
+}
+
+func (f *found) gain32() (g [4]float32) {
+	for a := range g {
+		g[a] = float32(f.gain[a])
 	}
+	return g
 }
 
 // step solves the weighted normal equations once. It updates the gain in f and
 // returns the twist about the centre by which the pose is to move. n is the
 // number of slices.
+//
+// With de/dd = gain J and de/db = -r (1, phi), the equations are those of the rows
+// J, -r/gain (1, phi) and e/gain at gain^2 times the weight, which leaves J as it is
+// from step to step.
 func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
 	m.residuals(f)
-	var bySlice []float64
-	cut := 0.0
+	m.weight = sized(m.weight, len(m.at))
 	if e.robust {
-		bySlice = sliceWeights(m.sliceResiduals(n))
-		cut = float64(tukeyCut * madScale * float64(m.medianAbs()))
-	}
-	var sum normal
-	for q, r32 := range m.res {
-		r := float64(r32)
-		w := 1.0
-		if e.robust {
-			w = float64(bySlice[m.pts[q].slice] * float64(m.pts[q].w))
-			if u := r / cut; cut > 0 {
-				if u = 1 - float64(u*u); u <= 0 {
-					continue
-				}
-				w = float64(w * float64(u*u))
-			}
+		bySlice := sliceWeights(m.sliceResiduals(n))
+		for q, s := range m.slice {
+			m.weight[q] = float32(bySlice[s] * float64(m.w[q]))
 		}
-		p := &m.pts[q]
-		sum.add(&p.jac, &p.phi, f.gainAt(&p.phi), float64(m.r[q]), r, w)
+		if cut := float32(tukeyCut * madScale * float64(m.medianAbs())); cut > 0 {
+			kernel.Tukey(m.weight, m.res, cut)
+		}
+	} else {
+		for q := range m.weight {
+			m.weight[q] = 1
+		}
 	}
-	h, g := sum.system()
+	for a := range m.rows {
+		m.rows[a] = sized(m.rows[a], len(m.at))
+	}
+	gain := f.gain32()
+	p0, p1, p2 := m.phi[0], m.phi[1], m.phi[2]
+	r0, r1, r2, r3, r4 := m.rows[0], m.rows[1], m.rows[2], m.rows[3], m.rows[4]
+	for q, r := range m.r {
+		g := gain[0] + float32(gain[1]*p0[q]) + float32(gain[2]*p1[q]) + float32(gain[3]*p2[q])
+		if !(g > faintest) {
+			// Shading so strong that nothing is left there.
+			m.weight[q], r0[q], r1[q], r2[q], r3[q], r4[q] = 0, 0, 0, 0, 0, 0
+			continue
+		}
+		over := 1 / g
+		a := -float32(r * over)
+		r0[q], r1[q], r2[q], r3[q] = a, float32(a*p0[q]), float32(a*p1[q]), float32(a*p2[q])
+		r4[q] = float32(m.res[q] * over)
+		m.weight[q] = float32(m.weight[q] * float32(g*g))
+	}
+	const rows = unknowns + 1
+	var sum [rows * (rows + 1) / 2]float64
+	kernel.Gram(sum[:], [][]float32{m.jac[0], m.jac[1], m.jac[2], m.jac[3], m.jac[4], m.jac[5], r0, r1, r2, r3, r4}, m.weight)
+	var h [unknowns][unknowns]float64
+	var g [unknowns]float64
+	at := 0
+	for a := range unknowns {
+		for b := a; b < unknowns; b++ {
+			h[a][b] = sum[at]
+			at++
+		}
+		g[a] = sum[at]
+		at++
+	}
 	d, ok := solve(&h, &g)
 	if !ok {
 		return Twist{}, false
@@ -298,71 +369,8 @@ func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
 	return Twist{V: [3]float64{-d[0], -d[1], -d[2]}, W: [3]float64{-d[3], -d[4], -d[5]}}, true
 }
 
-// normal accumulates the weighted normal equations, upper triangle, rows in
-// the order of the unknowns.
-type normal struct {
-	pp [21]float64   // pose with pose
-	pg [6][4]float64 // pose with gain
-	gg [10]float64   // gain with gain
-	p  [6]float64    // pose with residual
-	g  [4]float64    // gain with residual
-}
-
-// add enters one point: de/dd = gain*jac, de/db = -ref*(1, phi).
-func (n *normal) add(jac *[6]float32, phi *[3]float32, gain, ref, r, w float64) {
-	var j [6]float64
-	for a := range j {
-		j[a] = float64(gain * float64(jac[a]))
-	}
-	f := [4]float64{-ref, -float64(ref * float64(phi[0])), -float64(ref * float64(phi[1])), -float64(ref * float64(phi[2]))}
-	at := 0
-	for a := range j {
-		wj := float64(w * j[a])
-		n.p[a] += float64(wj * r)
-		for b := a; b < 6; b++ {
-			n.pp[at] += float64(wj * j[b])
-			at++
-		}
-		row := &n.pg[a]
-		row[0] += float64(wj * f[0])
-		row[1] += float64(wj * f[1])
-		row[2] += float64(wj * f[2])
-		row[3] += float64(wj * f[3])
-	}
-	at = 0
-	for a := range f {
-		wf := float64(w * f[a])
-		n.g[a] += float64(wf * r)
-		for b := a; b < 4; b++ {
-			n.gg[at] += float64(wf * f[b])
-			at++
-		}
-	}
-}
-
-// system lays the sums out as H d = g.
-func (n *normal) system() (h [unknowns][unknowns]float64, g [unknowns]float64) {
-	at := 0
-	for a := range 6 {
-		g[a] = n.p[a]
-		for b := a; b < 6; b++ {
-			h[a][b] = n.pp[at]
-			at++
-		}
-		for b := range 4 {
-			h[a][6+b] = n.pg[a][b]
-		}
-	}
-	at = 0
-	for a := range 4 {
-		g[6+a] = n.g[a]
-		for b := a; b < 4; b++ {
-			h[6+a][6+b] = n.gg[at]
-			at++
-		}
-	}
-	return h, g
-}
+// faintest gain that a voxel may have and still count.
+const faintest = 1e-3
 
 // Tukey's biweight: 95 % efficient for normal residuals at 4.685 scales; a
 // median absolute deviation of normal residuals is 1/1.4826 of their scale
@@ -377,8 +385,8 @@ const (
 func (m *matcher) sliceResiduals(n int) []float64 {
 	sum, count := make([]float64, n), make([]float64, n)
 	for q, r := range m.res {
-		sum[m.pts[q].slice] += float64(float64(r) * float64(r))
-		count[m.pts[q].slice]++
+		sum[m.slice[q]] += float64(float64(r) * float64(r))
+		count[m.slice[q]]++
 	}
 	var seen []float32
 	for s := range sum {
@@ -402,8 +410,8 @@ func (m *matcher) sliceResiduals(n int) []float64 {
 func (m *matcher) sliceShares(n int) []float64 {
 	share, signal := make([]float64, n), make([]float64, n)
 	for q, r := range m.res {
-		share[m.pts[q].slice] += float64(float64(r) * float64(r))
-		signal[m.pts[q].slice] += float64(float64(m.r[q]) * float64(m.r[q]))
+		share[m.slice[q]] += float64(float64(r) * float64(r))
+		signal[m.slice[q]] += float64(float64(m.r[q]) * float64(m.r[q]))
 	}
 	for s := range share {
 		if signal[s] > 0 {
@@ -431,11 +439,9 @@ func sliceWeights(z []float64) []float64 {
 
 // medianAbs is the median absolute residual.
 func (m *matcher) medianAbs() float32 {
-	m.order = m.order[:0]
-	for _, r := range m.res {
-		m.order = append(m.order, float32(math.Abs(float64(r))))
-	}
-	return median(m.order)
+	m.abs = sized(m.abs, len(m.res))
+	kernel.Abs(m.abs, m.res)
+	return medianOf(m.abs)
 }
 
 // median returns the upper median and reorders v. (Hoare 1961, CACM 4:321.)
@@ -476,16 +482,16 @@ func median(v []float32) float32 {
 // weight of slice (nil: all alike).
 func (m *matcher) correlation(weights []float64) float64 {
 	weight := func(q int) float64 {
-		if !m.pts[q].head {
+		if !m.head[q] {
 			return 0
 		}
 		if weights == nil {
 			return 1
 		}
-		return weights[m.pts[q].slice]
+		return weights[m.slice[q]]
 	}
 	var n, sv, sr float64
-	for q := range m.pts {
+	for q := range m.at {
 		w := weight(q)
 		n += w
 		sv += float64(w * float64(m.v[q]))
@@ -496,7 +502,7 @@ func (m *matcher) correlation(weights []float64) float64 {
 	}
 	mv, mr := sv/n, sr/n
 	var vv, rr, vr float64
-	for q := range m.pts {
+	for q := range m.at {
 		w := weight(q)
 		a, b := float64(m.v[q])-mv, float64(m.r[q])-mr
 		vv += float64(float64(w*a) * a)

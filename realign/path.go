@@ -7,6 +7,7 @@ import (
 	"slices"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 	"evenkeel/slicetime"
 )
@@ -155,12 +156,16 @@ type pathEstimator struct {
 
 // slotWork is the scratch of one worker.
 type slotWork struct {
-	e   []float32
-	j   [][6]float32
-	wt  []float32
-	res []float32
-	// pred is the prediction that e is what is left of.
-	pred []float32
+	b    batch
+	val  []float32 // pixel
+	near []int32   // voxel of the template
+	gain []float32
+	head []bool
+	wt   []float32
+	res  []float32    // residual
+	abs  []float32    // its size
+	pred []float32    // prediction
+	j    [6][]float32 // derivatives of the prediction by pose
 }
 
 func (e *pathEstimator) run() (*PathEstimate, error) {
@@ -554,27 +559,21 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 	return err
 }
 
-// slot gathers the pixels of one excitation of volume n.
-func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+// gather lists the pixels of one excitation of volume n that take part at a pose;
+// ends tells where the pixels of each slice end.
+func (e *pathEstimator) gather(w *slotWork, n int, slices []int, pose Pose) (ends []int) {
 	t := e.t
-	w.e, w.j, w.wt, w.res, w.pred = w.e[:0], w.j[:0], w.wt[:0], w.res[:0], w.pred[:0]
+	w.b.reset()
+	w.val, w.near, w.gain, w.head, w.wt = w.val[:0], w.near[:0], w.gain[:0], w.head[:0], w.wt[:0]
 	vol := e.volume(n)
 	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
-	toCentre := t.g.Affine
-	for a := range t.centre {
-		toCentre[4*a+3] -= t.centre[a]
-	}
-	var mean, square, count, left float64
-	rows := e.gainRows(n)
-	nz := e.g.N[e.schedule.Axis]
 	for _, k := range slices {
-		first := len(w.res)
-		e.sliceScale[n*nz+k] = 0
 		lo, hi, ok := e.within(k)
 		if !ok {
+			ends = append(ends, len(w.val))
 			continue
 		}
-		gain := &rows[k]
+		gain := newGainRows(e.g, e.est.Centre, &e.gains[n][k])
 		for z := lo[2]; z <= hi[2]; z++ {
 			for y := lo[1]; y <= hi[1]; y++ {
 				row := t.g.N[0] * (y + t.g.N[1]*z)
@@ -596,77 +595,98 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 					if !t.usable[near] {
 						continue
 					}
-					v, g := t.s.gradient(at[0], at[1], at[2])
-					gn := bright + float64(gain.step*fx)
-					val := float64(vol[row+x])
-					pred := float64(gn * float64(v))
-					r := val - pred
-					var gw [3]float64
-					for a := range gw {
-						gw[a] = float64(gn * (float64(float64(g[0])*t.inv[a]) + float64(float64(g[1])*t.inv[4+a]) + float64(float64(g[2])*t.inv[8+a])))
-					}
-					m := cross(applyAffine(&toCentre, at[0], at[1], at[2]), gw)
-					w.e = append(w.e, float32(r))
-					w.pred = append(w.pred, float32(pred))
-					w.j = append(w.j, [6]float32{float32(gw[0]), float32(gw[1]), float32(gw[2]), float32(m[0]), float32(m[1]), float32(m[2])})
-					w.res = append(w.res, float32(math.Abs(r)))
+					t.s.add(&w.b, at[0], at[1], at[2])
+					w.val = append(w.val, vol[row+x])
+					w.near = append(w.near, int32(near))
+					w.gain = append(w.gain, float32(bright+float64(gain.step*fx)))
+					w.head = append(w.head, t.head[near])
+					wt := float32(1)
 					if e.voxel != nil {
-						w.wt = append(w.wt, e.voxel[near])
-					} else {
-						w.wt = append(w.wt, 1)
+						wt = e.voxel[near]
 					}
-					if t.head[near] {
-						mean += val
-						square += float64(val * val)
-						left += float64(r * r)
-						count++
-					}
+					w.wt = append(w.wt, wt)
 				}
 			}
 		}
-		if seen := w.res[first:]; len(seen) >= e.fewest() {
-			e.sliceScale[n*nz+k] = float64(madScale * float64(median(seen)))
+		ends = append(ends, len(w.val))
+	}
+	return ends
+}
+
+// slot evaluates one excitation of volume n.
+func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+	t := e.t
+	ends := e.gather(w, n, slices, pose)
+	t.s.gradients(&w.b)
+	count := len(w.val)
+	w.res, w.abs, w.pred = sized(w.res, count), sized(w.abs, count), sized(w.pred, count)
+	for a := range w.j {
+		w.j[a] = sized(w.j[a], count)
+	}
+	toCentre := t.g.Affine
+	for a := range t.centre {
+		toCentre[4*a+3] -= t.centre[a]
+	}
+	// Where a pixel's point lies follows from its taps, to float32.
+	mx, my := t.s.m[0], t.s.m[1]
+	const first = splinePad - 2 // of the six taps, against the point's own cell
+	var mean, square, inside, left float64
+	for q := range count {
+		g := float64(w.gain[q])
+		pred := float64(g * float64(w.b.v[q]))
+		val := float64(w.val[q])
+		r := val - pred
+		w.pred[q], w.res[q] = float32(pred), float32(r)
+		gw := toWorld(&t.inv, [3]float64{float64(w.b.gx[q]), float64(w.b.gy[q]), float64(w.b.gz[q])})
+		base := int(w.b.base[q])
+		x, y, z := base%mx-first, base/mx%my-first, base/(mx*my)-first
+		m := cross(applyAffine(&toCentre, float64(x)+float64(w.b.tx[q]), float64(y)+float64(w.b.ty[q]), float64(z)+float64(w.b.tz[q])), gw)
+		for a := range 3 {
+			w.j[a][q], w.j[3+a][q] = float32(g*gw[a]), float32(g*m[a])
+		}
+		if w.head[q] {
+			mean += val
+			square += float64(val * val)
+			left += float64(r * r)
+			inside++
 		}
 	}
-	level := e.signal
-	if count > 0 {
-		explain = [2]float64{left, square - float64(mean*mean)/count}
-		level = math.Sqrt(square / count)
+	kernel.Abs(w.abs, w.res)
+	nz := e.g.N[e.schedule.Axis]
+	from := 0
+	for k, end := range ends {
+		e.sliceScale[n*nz+slices[k]] = 0
+		if end-from >= e.fewest() {
+			e.sliceScale[n*nz+slices[k]] = float64(madScale * float64(medianOf(w.abs[from:end])))
+		}
+		from = end
 	}
-	if len(w.e) < e.fewest() {
+	level := e.signal
+	if inside > 0 {
+		explain = [2]float64{left, square - float64(mean*mean)/inside}
+		level = math.Sqrt(square / inside)
+	}
+	if count < e.fewest() {
 		return explain
 	}
-	scale := float64(madScale * float64(median(w.res)))
+	scale := float64(madScale * float64(medianOf(w.abs)))
 	// Values that are exact (no noise at all) must not divide by zero.
 	scale = max(scale, float64(1e-5*level), 1e-30)
 	e.scale[i] = scale
+	kernel.Tukey(w.wt, w.res, float32(tukeyCut*scale))
+	const rows = 8
+	var sum [rows * (rows + 1) / 2]float64
+	kernel.Gram(sum[:], [][]float32{w.j[0], w.j[1], w.j[2], w.j[3], w.j[4], w.j[5], w.pred, w.res}, w.wt)
 	var h [21]float64
 	var g, jt [6]float64
-	var tt, tr float64
-	cut := float64(tukeyCut * scale)
-	for q, r32 := range w.e {
-		r := float64(r32)
-		u := r / cut
-		if u = 1 - float64(u*u); u <= 0 {
-			continue
-		}
-		wt := float64(float64(u*u) * float64(w.wt[q]))
-		j := &w.j[q]
-		p := float64(w.pred[q])
-		wp := float64(wt * p)
-		tt += float64(wp * p)
-		tr += float64(wp * r)
-		at := 0
-		for a := range 6 {
-			wj := float64(wt * float64(j[a]))
-			g[a] -= float64(wj * r)
-			jt[a] += float64(wj * p)
-			for c := a; c < 6; c++ {
-				h[at] += float64(wj * float64(j[c]))
-				at++
-			}
-		}
+	at, to := 0, 0
+	for a := range 6 {
+		to += copy(h[to:], sum[at:at+6-a])
+		at += 6 - a
+		jt[a], g[a] = sum[at], -sum[at+1]
+		at += 2
 	}
+	tt, tr := sum[at], sum[at+1]
 	// The brightness of the excitation is unknown too: it is fitted along with the
 	// pose and eliminated (the Schur complement of its row). A scanner that breathes
 	// within a volume would otherwise pass for motion.
@@ -682,9 +702,9 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 		// What brightness explains is no misfit.
 		if c := tr / tt; math.Abs(c)*level > float64(0.05*scale) {
 			for q, p := range w.pred {
-				w.res[q] = float32(math.Abs(float64(w.e[q]) - float64(c*float64(p))))
+				w.abs[q] = float32(math.Abs(float64(w.res[q]) - float64(c*float64(p))))
 			}
-			e.scale[i] = max(min(scale, float64(madScale*float64(median(w.res)))), float64(1e-5*level), 1e-30)
+			e.scale[i] = max(min(scale, float64(madScale*float64(medianOf(w.abs)))), float64(1e-5*level), 1e-30)
 		}
 	}
 	// A slot that fits badly because its pose is still off must pull with full

@@ -193,10 +193,10 @@ func TestHarmfulPathIsNotUsed(t *testing.T) {
 		r.schedule.Times[i], r.schedule.Times[j] = r.schedule.Times[j], r.schedule.Times[i]
 	})
 	r.find(t, realign.Options{}, 2)
-	if !strings.Contains(r.path.Reason, "took no part") {
+	if !strings.Contains(r.path.Reason, "kept aside") {
 		t.Errorf("with wrong times: used %v, %q", r.path.Used, r.path.Reason)
 	}
-	checkFallBack(t, "wrong times", r, r.path, "took no part")
+	checkFallBack(t, "wrong times", r, r.path, "kept aside")
 }
 
 // What is spoilt does not enter the reference, neither that of the volumes nor that

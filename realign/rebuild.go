@@ -1,6 +1,8 @@
 package realign
 
 import (
+	"math"
+
 	"evenkeel/internal/parallel"
 )
 
@@ -238,6 +240,8 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 	type scratch struct {
 		s   *spline
 		vol []float32
+		b   batch
+		to  []int32 // of each point of b: its place in at
 	}
 	work := make([]*scratch, e.workers)
 	val := make([][]float32, 2*e.workers)
@@ -254,16 +258,19 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 			defer e.done.piece()
 			n := batch[b]
 			if work[worker] == nil {
-				work[worker] = &scratch{newSpline(e.g.N, degree, Odd), make([]float32, e.g.voxels())}
+				work[worker] = &scratch{s: newSpline(e.g.N, degree, Odd), vol: make([]float32, e.g.voxels())}
 			}
 			w := work[worker]
-			e.level(w.vol, n, residual)
+			e.level(w.vol, n, residual, &w.b)
 			vol := w.vol
 			if p := e.patch(vol, weak[n]); p != nil {
 				vol = p
 			}
 			w.s.load(vol)
 			m := newSlotMap(e.g, axis, func(k int) Pose { return e.poses[n*len(e.shots)+e.shotOf[k]] })
+			w.b.reset()
+			w.b.grow(len(at))
+			w.to = w.to[:0]
 			var g guess
 			for q, i := range at {
 				x := [3]float64{float64(i % n0), float64(i / n0 % n1), float64(i / (n0 * n1))}
@@ -278,8 +285,13 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 				weight[b][q] = 0
 				if ok {
 					weight[b][q] = float32(edgeWeight(deep))
-					val[b][q] = w.s.value(v[0], v[1], v[2])
+					w.s.add(&w.b, v[0], v[1], v[2])
+					w.to = append(w.to, int32(q))
 				}
+			}
+			w.s.values(&w.b)
+			for i, q := range w.to {
+				val[b][q] = w.b.v[i]
 			}
 			return nil
 		})
@@ -315,39 +327,58 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 }
 
 // level fills dst with volume n at the brightness of the reference, less the
-// prediction with residual (0 where nothing is predicted).
-func (e *pathEstimator) level(dst []float32, n int, residual bool) {
+// prediction with residual (0 where nothing is predicted). b is scratch.
+func (e *pathEstimator) level(dst []float32, n int, residual bool, b *batch) {
 	vol := e.volume(n)
 	axis := e.schedule.Axis
 	rows := e.gainRows(n)
-	maps := make([][16]float64, e.g.N[axis])
-	if residual {
-		inv := e.t.inv
-		for k := range maps {
-			maps[k] = mul(inv, mul(e.poses[n*len(e.shots)+e.shotOf[k]].Inverse().Matrix(), e.g.Affine))
-		}
-	}
 	i := 0
 	for z := range e.g.N[2] {
 		for y := range e.g.N[1] {
 			for x := range e.g.N[0] {
-				k := [3]int{x, y, z}[axis]
-				p := [3]float64{float64(x), float64(y), float64(z)}
-				v := float32(float64(vol[i]) / rows[k].at(p))
-				if residual {
-					at := applyAffine(&maps[k], p[0], p[1], p[2])
-					if e.t.inField(at) && e.region[e.t.nearest(at)] {
-						v -= e.t.s.value(at[0], at[1], at[2])
-					} else {
-						v = 0
-					}
-				}
-				dst[i] = v
+				gain := rows[[3]int{x, y, z}[axis]].at([3]float64{float64(x), float64(y), float64(z)})
+				dst[i] = float32(float64(vol[i]) / gain)
 				i++
 			}
 		}
 	}
+	if !residual {
+		return
+	}
+	maps := make([][16]float64, e.g.N[axis])
+	for k := range maps {
+		maps[k] = mul(e.t.inv, mul(e.poses[n*len(e.shots)+e.shotOf[k]].Inverse().Matrix(), e.g.Affine))
+	}
+	b.reset()
+	b.grow(len(dst))
+	i = 0
+	for z := range e.g.N[2] {
+		for y := range e.g.N[1] {
+			for x := range e.g.N[0] {
+				at := applyAffine(&maps[[3]int{x, y, z}[axis]], float64(x), float64(y), float64(z))
+				if e.t.inField(at) && e.region[e.t.nearest(at)] {
+					e.t.s.add(b, at[0], at[1], at[2])
+				} else {
+					dst[i] = nothing
+				}
+				i++
+			}
+		}
+	}
+	e.t.s.values(b)
+	next := 0
+	for i, v := range dst {
+		if v == nothing {
+			dst[i] = 0
+			continue
+		}
+		dst[i] = v - b.v[next]
+		next++
+	}
 }
+
+// nothing marks a voxel for which nothing is predicted; no image holds such a value.
+const nothing = -math.MaxFloat32
 
 // gainRows is the gain of volume n, by slice.
 func (e *pathEstimator) gainRows(n int) []gainRows {

@@ -6,6 +6,7 @@ package realign
 type Resampler struct {
 	s       *spline
 	x, y, z []float64
+	b       batch
 }
 
 // NewResampler prepares for volumes of n voxels. Degree 3 is cubic, 5 quintic;
@@ -30,18 +31,14 @@ func (r *Resampler) Eval(dst []float32, m Map) {
 		panic("realign: output and volume differ in size")
 	}
 	for k := range nz {
+		// A plane at a time: enough for the kernels, and little scratch.
+		r.b.reset()
 		for j := range ny {
 			m.Row(j, k, r.x, r.y, r.z)
-			row := dst[nx*(j+ny*k):][:nx]
-			if r.s.degree == 5 {
-				for i := range row {
-					row[i] = r.s.value5(r.x[i], r.y[i], r.z[i])
-				}
-			} else {
-				for i := range row {
-					row[i] = r.s.value3(r.x[i], r.y[i], r.z[i])
-				}
+			for i := range nx {
+				r.s.add(&r.b, r.x[i], r.y[i], r.z[i])
 			}
 		}
+		r.s.valuesInto(dst[nx*ny*k:][:nx*ny], &r.b)
 	}
 }

@@ -1,6 +1,10 @@
 package realign
 
-import "math"
+import (
+	"math"
+
+	"evenkeel/internal/kernel"
+)
 
 // Boundary says how a volume continues past its first and last sample.
 type Boundary int
@@ -191,7 +195,7 @@ func newSpline(n [3]int, degree int, b Boundary) *spline {
 		s.m[a] = n[a] + 2*splinePad
 		s.lines[a] = newLineFilter(n[a], degree, splinePad, b)
 	}
-	s.c = make([]float32, s.m[0]*s.m[1]*s.m[2])
+	s.c = make([]float32, s.m[0]*s.m[1]*s.m[2]+kernel.Slack)
 	return s
 }
 
@@ -272,213 +276,4 @@ func cell(x float64, n, degree int) (first int, t float64) {
 	}
 	i := int(x)
 	return i + splinePad - degree/2, x - float64(i)
-}
-
-// weights5 are the values of the quintic B-spline at the six taps around a
-// point a fraction t past its third tap (products with reciprocals, as divisions
-// would take half of the time of an interpolation): beta5(x) = 11/20 - x^2/2 + x^4/4 -
-// |x|^5/12 for |x| < 1, and so on (Unser 1999). Horner forms in t.
-func weights5(t float64) (w [6]float32) {
-	u := 1 - t
-	t2, u2 := float64(t*t), float64(u*u)
-	t4, u4 := float64(t2*t2), float64(u2*u2)
-	w[0] = float32(float64(float64(u4*u) * (1.0 / 120)))
-	w[5] = float32(float64(float64(t4*t) * (1.0 / 120)))
-	w[2] = float32(centre5(t2, t4, t))
-	w[3] = float32(centre5(u2, u4, u))
-	w[1] = float32(side5(t))
-	w[4] = float32(side5(u))
-	return w
-}
-
-func centre5(x2, x4, x float64) float64 {
-	return 0.55 - x2/2 + x4/4 - float64(float64(x4*x)*(1.0/12))
-}
-
-// side5 is beta5(1+x) for x in [0, 1): 13/60 - 5x/12 + x^2/6 + x^3/6 - x^4/6 + x^5/24.
-func side5(x float64) float64 {
-	r := float64(1.0/24*x) - 1.0/6
-	r = float64(r*x) + 1.0/6
-	r = float64(r*x) + 1.0/6
-	r = float64(r*x) - 5.0/12
-	return float64(r*x) + 13.0/60
-}
-
-// slopes5 are the derivatives of weights5 with respect to the point.
-func slopes5(t float64) (w [6]float32) {
-	u := 1 - t
-	t2, u2 := float64(t*t), float64(u*u)
-	w[0] = float32(-float64(float64(u2*u2) * (1.0 / 24)))
-	w[5] = float32(float64(float64(t2*t2) * (1.0 / 24)))
-	w[2] = float32(centreSlope5(t, t2))
-	w[3] = float32(-centreSlope5(u, u2))
-	w[1] = float32(sideSlope5(t))
-	w[4] = float32(-sideSlope5(u))
-	return w
-}
-
-func centreSlope5(x, x2 float64) float64 {
-	return -x + float64(x2*x) - float64(float64(x2*x2)*(5.0/12))
-}
-
-func sideSlope5(x float64) float64 {
-	r := float64(5.0/24*x) - 4.0/6
-	r = float64(r*x) + 0.5
-	r = float64(r*x) + 1.0/3
-	return float64(r*x) - 5.0/12
-}
-
-// weights3 and slopes3 likewise for the cubic B-spline: 2/3 - x^2 + |x|^3/2 for
-// |x| < 1, (2-|x|)^3/6 for 1 <= |x| < 2.
-func weights3(t float64) (w [4]float32) {
-	u := 1 - t
-	t2, u2 := float64(t*t), float64(u*u)
-	w[0] = float32(float64(float64(u2*u) * (1.0 / 6)))
-	w[1] = float32(2.0/3 - t2 + float64(t2*t)/2)
-	w[2] = float32(2.0/3 - u2 + float64(u2*u)/2)
-	w[3] = float32(float64(float64(t2*t) * (1.0 / 6)))
-	return w
-}
-
-func slopes3(t float64) (w [4]float32) {
-	u := 1 - t
-	t2, u2 := float64(t*t), float64(u*u)
-	w[0] = float32(-u2 / 2)
-	w[1] = float32(-2*t + float64(1.5*t2))
-	w[2] = float32(2*u - float64(1.5*u2))
-	w[3] = float32(t2 / 2)
-	return w
-}
-
-// value interpolates at a voxel coordinate; outside the field it gives the
-// value at the nearest point of the edge.
-func (s *spline) value(x, y, z float64) float32 {
-	if s.degree == 5 {
-		return s.value5(x, y, z)
-	}
-	return s.value3(x, y, z)
-}
-
-func (s *spline) value5(x, y, z float64) float32 {
-	i, tx := cell(x, s.n[0], 5)
-	j, ty := cell(y, s.n[1], 5)
-	k, tz := cell(z, s.n[2], 5)
-	wx, wy, wz := weights5(tx), weights5(ty), weights5(tz)
-	// Scalars, because the compiler keeps no array in registers.
-	w0, w1, w2, w3, w4, w5 := wx[0], wx[1], wx[2], wx[3], wx[4], wx[5]
-	mx := s.m[0]
-	area := mx * s.m[1]
-	base := i + mx*j + area*k
-	var sum float32
-	for c := range wz {
-		rows := s.c[base : base+5*mx+6]
-		var plane float32
-		for b := range wy {
-			r := rows[b*mx:][:6]
-			// Two chains of three keep the adder busy; the order is fixed.
-			p := float32(w0*r[0]) + float32(w1*r[1]) + float32(w2*r[2])
-			q := float32(w3*r[3]) + float32(w4*r[4]) + float32(w5*r[5])
-			plane += float32(wy[b] * (p + q))
-		}
-		sum += float32(wz[c] * plane)
-		base += area
-	}
-	return sum
-}
-
-func (s *spline) value3(x, y, z float64) float32 {
-	i, tx := cell(x, s.n[0], 3)
-	j, ty := cell(y, s.n[1], 3)
-	k, tz := cell(z, s.n[2], 3)
-	wx, wy, wz := weights3(tx), weights3(ty), weights3(tz)
-	mx, my := s.m[0], s.m[1]
-	var sum float32
-	for c := range 4 {
-		base := i + mx*(j+my*(k+c))
-		var plane float32
-		for b := range 4 {
-			r := s.c[base:][:4]
-			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1])
-			q := float32(wx[2]*r[2]) + float32(wx[3]*r[3])
-			plane += float32(wy[b] * (p + q))
-			base += mx
-		}
-		sum += float32(wz[c] * plane)
-	}
-	return sum
-}
-
-// gradient gives the value and its derivatives with respect to the voxel
-// coordinates.
-func (s *spline) gradient(x, y, z float64) (v float32, g [3]float32) {
-	if s.degree == 5 {
-		return s.gradient5(x, y, z)
-	}
-	return s.gradient3(x, y, z)
-}
-
-func (s *spline) gradient5(x, y, z float64) (v float32, g [3]float32) {
-	i, tx := cell(x, s.n[0], 5)
-	j, ty := cell(y, s.n[1], 5)
-	k, tz := cell(z, s.n[2], 5)
-	wx, wy, wz := weights5(tx), weights5(ty), weights5(tz)
-	dx, dy, dz := slopes5(tx), slopes5(ty), slopes5(tz)
-	w0, w1, w2, w3, w4, w5 := wx[0], wx[1], wx[2], wx[3], wx[4], wx[5]
-	d0, d1, d2, d3, d4, d5 := dx[0], dx[1], dx[2], dx[3], dx[4], dx[5]
-	mx := s.m[0]
-	area := mx * s.m[1]
-	base := i + mx*j + area*k
-	var gx, gy, gz float32
-	for c := range wz {
-		rows := s.c[base : base+5*mx+6]
-		var pv, px, py float32
-		for b := range wy {
-			r := rows[b*mx:][:6]
-			r0, r1, r2, r3, r4, r5 := r[0], r[1], r[2], r[3], r[4], r[5]
-			p := float32(w0*r0) + float32(w1*r1) + float32(w2*r2)
-			q := float32(w3*r3) + float32(w4*r4) + float32(w5*r5)
-			dp := float32(d0*r0) + float32(d1*r1) + float32(d2*r2)
-			dq := float32(d3*r3) + float32(d4*r4) + float32(d5*r5)
-			row := p + q
-			pv += float32(wy[b] * row)
-			py += float32(dy[b] * row)
-			px += float32(wy[b] * (dp + dq))
-		}
-		v += float32(wz[c] * pv)
-		gx += float32(wz[c] * px)
-		gy += float32(wz[c] * py)
-		gz += float32(dz[c] * pv)
-		base += area
-	}
-	return v, [3]float32{gx, gy, gz}
-}
-
-func (s *spline) gradient3(x, y, z float64) (v float32, g [3]float32) {
-	i, tx := cell(x, s.n[0], 3)
-	j, ty := cell(y, s.n[1], 3)
-	k, tz := cell(z, s.n[2], 3)
-	wx, wy, wz := weights3(tx), weights3(ty), weights3(tz)
-	dx, dy, dz := slopes3(tx), slopes3(ty), slopes3(tz)
-	mx, my := s.m[0], s.m[1]
-	for c := range 4 {
-		base := i + mx*(j+my*(k+c))
-		var pv, px, py float32
-		for b := range 4 {
-			r := s.c[base:][:4]
-			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1])
-			q := float32(wx[2]*r[2]) + float32(wx[3]*r[3])
-			dp := float32(dx[0]*r[0]) + float32(dx[1]*r[1])
-			dq := float32(dx[2]*r[2]) + float32(dx[3]*r[3])
-			row := p + q
-			pv += float32(wy[b] * row)
-			py += float32(dy[b] * row)
-			px += float32(wy[b] * (dp + dq))
-			base += mx
-		}
-		v += float32(wz[c] * pv)
-		g[0] += float32(wz[c] * px)
-		g[1] += float32(wz[c] * py)
-		g[2] += float32(dz[c] * pv)
-	}
-	return v, g
 }

@@ -95,8 +95,8 @@ func (l *leftovers) add(m *matcher, f *found) {
 	}
 	w := sliceWeights(f.slices)
 	for q, r := range m.res {
-		p := &m.pts[q]
-		if w[p.slice] < weakBelow {
+		near := m.near[q]
+		if w[m.slice[q]] < weakBelow {
 			continue
 		}
 		v := float64(r) / l.unit
@@ -104,9 +104,9 @@ func (l *leftovers) add(m *matcher, f *found) {
 			continue
 		}
 		k := int64(v)
-		l.sum[p.near] += k
-		l.sum2[p.near] += k * k
-		l.count[p.near]++
+		l.sum[near] += k
+		l.sum2[near] += k * k
+		l.count[near]++
 	}
 }
 
