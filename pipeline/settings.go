@@ -42,7 +42,7 @@ func DefaultSettings() Settings {
 		Motion:     "path",
 		Reference:  Standard{Word: "mean"},
 		Space:      "quintic",
-		Order:      orderFor("path"),
+		Order:      orderFor("path", "fourier"),
 		Store:      "float32",
 	}
 }
@@ -100,8 +100,8 @@ func (c Choice) Default() string {
 
 // Choices lists every setting in the order in which help and the record show them.
 var Choices = []Choice{
-	word("time", []string{"fourier", "sinc", "none"},
-		"temporal interpolation of the slices", func(s *Settings) *string { return &s.Time }),
+	ordering(word("time", []string{"fourier", "sinc", "none"},
+		"temporal interpolation of the slices", func(s *Settings) *string { return &s.Time })),
 	{Key: "time_origin", Values: "middle|start|SECONDS", kind: "a word or a number of seconds",
 		Help: "the instant inside each volume that every slice is moved to; middle is halfway between the earliest and the latest slice time",
 		parse: func(s *Settings, v []string) error {
@@ -121,7 +121,8 @@ var Choices = []Choice{
 			return parseInt(&s.SincReach, last(v), 1, slicetime.MaxReach)
 		},
 		value: func(s Settings) any { return s.SincReach }},
-	motion(),
+	ordering(word("motion", []string{"path", "volume", "none"},
+		"a pose for every excitation, one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion })),
 	{Key: "reference", Values: "mean|first|middle|sbref|INDEX", kind: "a word or the index of a volume",
 		Help: "what every volume is aligned to; mean is the average of the aligned volumes, standing at the pose of the first of them; INDEX counts from 0 after the volumes skipped",
 		parse: func(s *Settings, v []string) error {
@@ -138,9 +139,9 @@ var Choices = []Choice{
 	word("space", []string{"quintic", "cubic"},
 		"degree of the B-spline of the one spatial resampling", func(s *Settings) *string { return &s.Space }),
 	word("order", []string{"joint", "time-first", "space-first"},
-		"joint takes the predicted anatomy out before it interpolates in time (it needs the poses of a path to be worth its time: without --motion path the default is time-first); otherwise, which interpolation comes first", func(s *Settings) *string { return &s.Order }),
+		"joint takes the predicted anatomy out, interpolates what is left in time and space, and puts the reference's anatomy back; otherwise, which interpolation comes first. Unless it is given, it is joint with --motion path, and time-first without a path or with --time none. With --time none nothing is moved in time: joint still takes the anatomy from the reference, time-first resamples each volume at one pose, space-first each slice at its own", func(s *Settings) *string { return &s.Order }),
 	{Key: "skip", Values: "N", kind: "a whole number",
-		Help: "leading volumes left out of the output and the estimate: those before the magnetisation is steady, which show as spikes and high DVARS at the start",
+		Help: "leading volumes left out of the output and the estimate: those before the magnetisation is in equilibrium, which show as spikes and high DVARS at the start",
 		parse: func(s *Settings, v []string) error {
 			return parseInt(&s.Skip, last(v), 0, math.MaxInt32)
 		},
@@ -176,27 +177,27 @@ var Choices = []Choice{
 		value: func(s Settings) any { return s.Events }},
 }
 
-// orderFor is the order unless one is given: anatomy can only be predicted slice by
-// slice along a path.
-func orderFor(motion string) string {
-	if motion == "path" {
+// orderFor is the order unless one is given. Anatomy can be predicted slice by slice
+// only along a path, and it is taken out for the sake of interpolation in time: where
+// nothing is moved in time, the voxels are rather those of the volume itself.
+func orderFor(motion, time string) string {
+	if motion == "path" && time != "none" {
 		return "joint"
 	}
 	return "time-first"
 }
 
-// motion declares the setting motion, which the default of order follows.
-func motion() Choice {
-	c := word("motion", []string{"path", "volume", "none"},
-		"a pose for every excitation, one pose a volume, or no motion correction", func(s *Settings) *string { return &s.Motion })
+// ordering makes the default of order follow a setting: an order that is the default
+// before the change becomes the default after it.
+func ordering(c Choice) Choice {
 	set := c.parse
 	c.parse = func(s *Settings, v []string) error {
-		was := s.Motion
+		was := orderFor(s.Motion, s.Time)
 		if err := set(s, v); err != nil {
 			return err
 		}
-		if s.Order == orderFor(was) {
-			s.Order = orderFor(s.Motion)
+		if s.Order == was {
+			s.Order = orderFor(s.Motion, s.Time)
 		}
 		return nil
 	}

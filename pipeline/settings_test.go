@@ -173,8 +173,8 @@ func TestEditDistance(t *testing.T) {
 	}
 }
 
-// The default of order follows motion, whichever is read first; what is given stays.
-func TestOrderFollowsMotion(t *testing.T) {
+// The default of order follows motion and time, whichever is read first; what is given stays.
+func TestOrderFollows(t *testing.T) {
 	for _, c := range []struct{ file, want string }{
 		{`{"motion":"volume"}`, "time-first"},
 		{`{"motion":"none"}`, "time-first"},
@@ -183,6 +183,11 @@ func TestOrderFollowsMotion(t *testing.T) {
 		{`{"order":"joint","motion":"volume"}`, "joint"},
 		{`{"order":"space-first","motion":"volume"}`, "space-first"},
 		{`{"order":"time-first"}`, "time-first"},
+		{`{"time":"none"}`, "time-first"},
+		{`{"time":"none","order":"joint"}`, "joint"},
+		{`{"order":"joint","time":"none"}`, "joint"},
+		{`{"time":"none","motion":"path"}`, "time-first"},
+		{`{"motion":"path","time":"sinc"}`, "joint"},
 	} {
 		s := DefaultSettings()
 		if err := s.ReadSettings("s.json", []byte(c.file)); err != nil || s.Order != c.want {
