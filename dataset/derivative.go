@@ -111,10 +111,17 @@ func (d Derivative) ReadmeText() []byte {
 	fmt.Fprintf(&b, `Steady BOLD series
 ==================
 
-Written by evenkeel%s. In each series every voxel of a volume refers to one instant and
-to one head position, as far as the settings asked for it: moving slices in time and
-moving volumes to the reference are done one after the other. Each record says in which
-order, and whether either was left out.
+Written by evenkeel%s. In each series every voxel of a volume refers to one head
+position and, where slices were moved in time, to one instant, as far as the settings
+asked for it. Each record names the order chosen:
+  joint        the anatomy that the reference predicts of each slice is taken out, what
+               is left is moved in time and mapped to the reference once, and the
+               reference's anatomy is put back: the anatomy of each output voxel comes
+               from the reference, and only the remainder is interpolated
+  time-first   slices are moved in time, then volumes are resampled
+  space-first  the other way round
+"Steady" in the names of files means no more than that: it does not say that volumes
+from before the magnetisation was in equilibrium were removed.
 %s
 FOR RESEARCH ONLY. Not a medical device; not for diagnosis or treatment.
 PRIVACY. Images of a head can identify a person. Share this folder under the same

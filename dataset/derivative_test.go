@@ -117,7 +117,7 @@ func TestIgnoreTextCoversTheUnnamed(t *testing.T) {
 func TestReadmeText(t *testing.T) {
 	text := string(Derivative{SourceName: "Lighthouse\nkeepers", Version: "0.1.0"}.ReadmeText())
 	for _, want := range []string{"RESEARCH ONLY", "PRIVACY", "evenkeel 0.1.0", "Lighthouse keepers", "STEM_desc-steady_bold.nii.gz, .json", "STEM_desc-steady_pose.tsv, .json",
-		"runs.tsv, runs.json", "_prov.json", "n/a", "one after the other", "Never both"} {
+		"runs.tsv, runs.json", "_prov.json", "n/a", "the anatomy of each output voxel comes", "magnetisation was in equilibrium", "no segment of k-space", "Never both"} {
 		if !strings.Contains(text, want) {
 			t.Errorf("README lacks %q", want)
 		}

@@ -20,15 +20,15 @@ type Output struct {
 // Outputs lists every kind of file once; README and .bidsignore follow from it.
 var Outputs = []Output{
 	{Desc: "steady", Suffix: "bold", Exts: []string{".nii.gz", ".json"}, Named: true,
-		Content: "the series: every voxel of a volume stands at one instant and at the head position of the reference"},
+		Content: "the series: at the head position of the reference, and at one instant if slices were moved in time"},
 	{Desc: "steady", Suffix: "reference", Exts: []string{".nii.gz", ".json"},
-		Content: "the volume that every other was aligned to"},
+		Content: "the volume that every other was aligned to; with a pose path it is rebuilt from them"},
 	{Desc: "head", Suffix: "mask", Exts: []string{".nii.gz", ".json"}, Named: true,
 		Content: "the head, 1 inside; motion is estimated from it and a rim, figures are taken over it"},
 	{Desc: "steady", Suffix: "pose", Exts: []string{".tsv", ".json"},
 		Content: "the head's position at each volume, one row a volume; the .json describes every column, with its unit"},
 	{Desc: "shots", Suffix: "pose", Exts: []string{".tsv", ".json"},
-		Content: "the head's position at each excitation, with --motion path"},
+		Content: "the head's position at each excitation, with --motion path; a shot is one excitation, no segment of k-space"},
 	{Desc: "steady", Suffix: "quality", Exts: []string{".json"},
 		Content: "figures of quality before and after, each with its unit and definition"},
 	{Desc: "raw", Suffix: "tsnr", Exts: []string{".nii.gz"},

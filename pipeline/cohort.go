@@ -6,6 +6,7 @@ import (
 	"bytes"
 	"cmp"
 	"context"
+	"encoding/json"
 	"errors"
 	"io/fs"
 	"os"
@@ -152,6 +153,14 @@ var runColumns = []runColumn{
 	measured("mean_dvars_steady", "Mean", "dvars_steady", func(f *Figures) float64 { return f.MeanDVARSSteady }),
 	measured("median_tsnr_raw", "Median over the head", "tsnr_raw", func(f *Figures) float64 { return f.MedianTSNRRaw }),
 	measured("median_tsnr_steady", "Median over the head", "tsnr_steady", func(f *Figures) float64 { return f.MedianTSNRSteady }),
+	words("motion", "The setting motion that the run was done with: path, volume or none.", func(r runRow) string { return r.setting("motion") }),
+	words("order", "The setting order that the run was done with: joint, time-first or space-first.", func(r runRow) string { return r.setting("order") }),
+	words("pose_path", quality.Define("pose_path").Description+" n/a where these were not asked for.", func(r runRow) string {
+		if r.figures == nil {
+			return "n/a"
+		}
+		return cmp.Or(r.figures.PosePath, "n/a")
+	}, quality.Define("pose_path").Levels...),
 	words("outside_limits", "The columns of this row that are above a limit given to the invocation that last had the run to do, with commas between; n/a when none is.",
 		func(r runRow) string { return r.outside }),
 }
@@ -186,7 +195,13 @@ type runRow struct {
 	run, file, state, fault string
 	outside                 string // columns above a limit, with commas; or n/a
 	figures                 *Figures
-	cells                   []string // a row kept from the table as it stood
+	settings                json.RawMessage // of the record
+	cells                   []string        // a row kept from the table as it stood
+}
+
+// setting gives a setting that is a word.
+func (r runRow) setting(key string) string {
+	return cmp.Or(gjson.GetBytes(r.settings, key).String(), "n/a")
 }
 
 func (r runRow) count(get func(*Figures) int) string {
@@ -262,7 +277,7 @@ func runsTable(out string, outcomes []Outcome) ([]byte, error) {
 		if _, ok := rows[r.Run]; ok {
 			return // what keeps the run from being done is what needs attention
 		}
-		row := runRow{run: r.Run, state: string(Done), fault: "n/a", outside: cmp.Or(outside[r.Run], "n/a")}
+		row := runRow{run: r.Run, state: string(Done), fault: "n/a", settings: r.Settings, outside: cmp.Or(outside[r.Run], "n/a")}
 		for _, f := range r.Inputs {
 			if f.Role == "series" {
 				row.file = f.Path

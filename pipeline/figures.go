@@ -139,6 +139,28 @@ func (m *measures) betweenAligned(v []float64) []float64 {
 	return out
 }
 
+// ofAligned keeps the values of aligned volumes.
+func (m *measures) ofAligned(v []float64) []float64 {
+	out := append([]float64{}, v...)
+	for n, s := range m.states {
+		if s != string(realign.Aligned) {
+			out[n] = math.NaN()
+		}
+	}
+	return out
+}
+
+// pathState is the word of pose_path.
+func pathState(x *realign.PathEstimate) string {
+	switch {
+	case !x.Used:
+		return quality.PathNotUsed
+	case !x.Settled:
+		return quality.PathNotSettled
+	}
+	return quality.PathUsed
+}
+
 // raisedFactor is how many times dvars_raw the dvars_steady of a volume must be to be
 // pointed out: ours. Interpolation alone lowers it, so that above 1 already asks for a reason; the rest keeps
 // noise out (see TestRaised).
@@ -163,7 +185,9 @@ type Figures struct {
 	MeanFD, MaxFD                    float64 // mm; NaN where undefined, as all below
 	MeanFDAligned                    float64 // mm; between aligned volumes only
 	MeanRMS                          float64 // mm
-	ExpectedError                    float64 // mm; of the pose path, NaN without one
+	PosePath                         string  // a word of quality's pose_path, "" where no path was asked for
+	LastStep                         float64 // mm; of the pose path, NaN without one
+	ExpectedError                    float64 // mm; of the pose path, over aligned volumes, NaN without one
 	ResidualVolume, ResidualPath     float64 // in units of the noise, NaN without a path
 	Explained                        float64 // share of the variance in the head, NaN without a path
 	NoPath                           string  // why there is no path where one was asked for, or ""
@@ -225,16 +249,17 @@ func (m *measures) qualityFile(p *Plan) []byte {
 	series("outside", m.outside, m.outside, digitsShare)
 	series("fit", m.fit, m.fit, digitsShare)
 	if m.path != nil && m.path.Used {
-		series("expected_error", m.path.Expected, m.path.Expected, digitsMM)
+		series("expected_error", m.path.Expected, m.ofAligned(m.path.Expected), digitsMM)
 		value("residual_volume", rounded(m.path.VolumeResidual, digitsShare))
 		value("residual_path", rounded(m.path.PathResidual, digitsShare))
 		value("explained", rounded(m.path.Explained, digitsShare))
 	}
 	if p.Settings.Motion == "path" && m.path != nil {
+		state := member{"State", pathState(m.path)}
 		if m.path.Used {
-			figure("pose_path", member{"State", "used"})
+			figure("pose_path", state, member{"LastStep", rounded(m.path.LastStep, digitsMM)})
 		} else {
-			figure("pose_path", member{"State", "not used"}, member{"Reason", m.path.Reason})
+			figure("pose_path", state, member{"Reason", m.path.Reason})
 		}
 	}
 	figure("tsnr_raw", summary(quality.SummariseInside(m.tsnrRaw, m.mask), 4)...)
@@ -302,15 +327,19 @@ func parseFigures(data []byte) (*Figures, error) {
 		}
 		return struct{ Mean, Value float64 }{float64(f.Mean), float64(f.Value)}
 	}
-	var raised struct {
-		List   struct{ Volumes []int } `json:"dvars_raised"`
-		NoPath struct{ Reason string } `json:"pose_path"`
+	var more struct {
+		Raised struct{ Volumes []int } `json:"dvars_raised"`
+		Path   struct {
+			State, Reason string
+			LastStep      num
+		} `json:"pose_path"`
 	}
-	if err := json.Unmarshal(data, &raised); err != nil {
+	more.Path.LastStep = num(math.NaN())
+	if err := json.Unmarshal(data, &more); err != nil {
 		return nil, err
 	}
 	return &Figures{
-		Raised: raised.List.Volumes, NoPath: raised.NoPath.Reason,
+		Raised: more.Raised.Volumes, PosePath: more.Path.State, NoPath: more.Path.Reason, LastStep: float64(more.Path.LastStep),
 		Volumes: count("volumes"), Aligned: count("volumes_aligned"), Doubtful: count("volumes_doubtful"), Lost: count("volumes_lost"),
 		MeanFD: float64(q["fd"].Mean), MaxFD: float64(q["fd"].Max),
 		MeanFDAligned: float64(q["mean_fd_aligned"].Value),
@@ -332,6 +361,23 @@ type Limits struct {
 type Breach struct {
 	Column string // of runs.tsv
 	Words  string
+}
+
+// Check holds the limits against the settings: a limit on a figure that no run
+// will have could never be judged. It returns a [*UsageError].
+func (l Limits) Check(set Settings) error {
+	if set.Motion != "none" {
+		return nil
+	}
+	for _, given := range []struct {
+		is     bool
+		option string
+	}{{l.MeanFD != nil, "--limit-mean-fd"}, {l.MaxFD != nil, "--limit-max-fd"}, {l.MaxShift != nil, "--limit-max-shift"}, {l.Lost != nil, "--limit-lost"}} {
+		if given.is {
+			return &UsageError{Where: given.option, Message: "cannot be judged with --motion none, which estimates no pose; leave one of them out"}
+		}
+	}
+	return nil
 }
 
 // Outside says which limits the figures are outside of. A figure that is

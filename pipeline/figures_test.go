@@ -2,6 +2,7 @@ package pipeline
 
 import (
 	"encoding/json"
+	"errors"
 	"math"
 	"slices"
 	"strings"
@@ -13,6 +14,7 @@ import (
 	"evenkeel/dataset"
 	"evenkeel/quality"
 	"evenkeel/realign"
+	"evenkeel/sidecar"
 	"evenkeel/slicetime"
 )
 
@@ -66,6 +68,7 @@ func TestFigures(t *testing.T) {
 		MeanDVARSRaw: 1, MeanDVARSSteady: 0.5, MedianTSNRRaw: 100, MedianTSNRSteady: 120}
 	want.MeanFDAligned = math.NaN()                                                                                             // no aligned volume follows another
 	want.ExpectedError, want.ResidualVolume, want.ResidualPath, want.Explained = math.NaN(), math.NaN(), math.NaN(), math.NaN() // no path
+	want.LastStep = math.NaN()
 	want.Raised = []int{}
 	if d := cmp.Diff(want, *f, cmpopts.EquateNaNs()); d != "" {
 		t.Error(d)
@@ -85,6 +88,67 @@ func TestFigures(t *testing.T) {
 	var d struct{ Matrices [][4][4]float64 }
 	if err := json.Unmarshal(poseDescription(p, po, po.est.Centre), &d); err != nil || d.Matrices[2][0][3] != 2 {
 		t.Errorf("the matrix of the lost volume: %v %v", d.Matrices, err)
+	}
+}
+
+// What became of the path is a figure of its own; a doubtful volume's expected error
+// is listed, and in no summary.
+func TestPathFigures(t *testing.T) {
+	for _, c := range []struct {
+		path realign.PathEstimate
+		want Figures
+	}{
+		{realign.PathEstimate{Used: true, Settled: true, LastStep: 0.01, Expected: []float64{0.02, 9, math.NaN(), 0.04}},
+			Figures{PosePath: "used", LastStep: 0.01, ExpectedError: 0.03}},
+		{realign.PathEstimate{Used: true, LastStep: 0.3, Expected: []float64{0.02, 9, math.NaN(), 0.04}},
+			Figures{PosePath: "not settled", LastStep: 0.3, ExpectedError: 0.03}},
+		{realign.PathEstimate{Reason: "why"}, Figures{PosePath: "not used", NoPath: "why", LastStep: math.NaN(), ExpectedError: math.NaN()}},
+	} {
+		p, m, _ := fourVolumes()
+		p.Settings.Motion = "path"
+		m.path = &c.path
+		data := m.qualityFile(p)
+		f, err := parseFigures(data)
+		if err != nil {
+			t.Fatal(err)
+		}
+		got := Figures{PosePath: f.PosePath, NoPath: f.NoPath, LastStep: f.LastStep, ExpectedError: f.ExpectedError}
+		if d := cmp.Diff(c.want, got, cmpopts.EquateNaNs(), cmpopts.EquateApprox(0, 1e-12)); d != "" {
+			t.Error(d)
+		}
+		if c.path.Used && !strings.Contains(string(data), `"Volumes":[0.02,9,null,0.04]`) {
+			t.Errorf("%s", data)
+		}
+		if ok := slices.ContainsFunc(quality.Define("pose_path").Levels, func(l quality.Level) bool { return l.Value == f.PosePath }); !ok {
+			t.Errorf("%q is no level of pose_path", f.PosePath)
+		}
+	}
+}
+
+// The sidecar says what was done, not what was asked for.
+func TestSidecarsSayWhatWasDone(t *testing.T) {
+	for _, c := range []struct {
+		motion    string
+		path      realign.PathEstimate
+		series    string
+		reference string
+	}{
+		{"path", realign.PathEstimate{Used: true, Settled: true}, "a pose an excitation against mean", "slice by slice along the pose path"},
+		{"path", realign.PathEstimate{Used: true}, "a pose an excitation (not settled) against mean", "slice by slice along the pose path"},
+		{"path", realign.PathEstimate{Reason: "too few"}, "one pose a volume (a pose an excitation was asked for, but: too few) against mean", "by one pose a volume and standing"},
+		{"volume", realign.PathEstimate{Reason: "asked for"}, "a pose a volume against mean", "raw intensities"},
+	} {
+		p, _, po := fourVolumes()
+		p.Settings = DefaultSettings()
+		p.Settings.Motion = c.motion
+		p.Acq = &sidecar.Acquisition{}
+		po.path = &c.path
+		if got := string(p.steadySidecar(po)); !strings.Contains(got, c.series) {
+			t.Errorf("%+v: %s", c, got)
+		}
+		if got := string(p.referenceSidecar(po)); !strings.Contains(got, c.reference) || strings.Contains(got, "raw intensities") == c.path.Used {
+			t.Errorf("%+v: %s", c, got)
+		}
 	}
 }
 
@@ -120,6 +184,23 @@ func TestLimits(t *testing.T) {
 		if got := c.l.Outside(f); len(got) != c.want {
 			t.Errorf("case %d: %v", i, got)
 		}
+	}
+}
+
+// A limit that no run can be held against is refused.
+func TestLimitsNeedPoses(t *testing.T) {
+	v, n := 1.0, 1
+	for _, l := range []Limits{{MeanFD: &v}, {MaxFD: &v}, {MaxShift: &v}, {Lost: &n}} {
+		var usage *UsageError
+		if err := l.Check(Settings{Motion: "none"}); !errors.As(err, &usage) {
+			t.Errorf("%+v: %v", l, err)
+		}
+		if err := l.Check(Settings{Motion: "volume"}); err != nil {
+			t.Error(err)
+		}
+	}
+	if err := (Limits{}).Check(Settings{Motion: "none"}); err != nil {
+		t.Error(err)
 	}
 }
 

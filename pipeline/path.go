@@ -171,7 +171,7 @@ func shotsDescription(p *Plan, po *posed) []byte {
 		o.add(name, object{{"Description", description}, {"Units", unit}, {"Source", source}})
 	}
 	describe("volume", "Index of the output volume, from 0.", "1", "evenkeel")
-	describe("shot", "Index of the excitation within the volume, from 0, in the order of time; slices excited together share it.", "1", "evenkeel")
+	describe("shot", "Index of the shot within the volume, from 0, in the order of time. A shot here is one excitation of a slice, or of all slices taken together (multiband); it is no segment of k-space.", "1", "evenkeel")
 	describe("time", "The instant of the excitation, counted from the start of the first volume of the raw file.", "s", "evenkeel")
 	for _, name := range []string{"shift_x", "shift_y", "shift_z", "turn_x", "turn_y", "turn_z"} {
 		d := quality.Define(name)
@@ -212,6 +212,7 @@ func (po *posed) pathOutcome() object {
 	o.add("explained", rounded(x.Explained, 6))
 	o.add("log_evidence", rounded(x.Evidence, 3))
 	o.add("last_step_mm", rounded(x.LastStep, digitsMM))
+	o.add("settled", x.Settled)
 	o.add("prior_strength_shift", num(x.StrengthShift))
 	o.add("prior_strength_turn", num(x.StrengthTurn))
 	o.add("expected_error_mm", roundedAll(x.Expected, digitsMM))

@@ -90,6 +90,12 @@ func (p *Plan) Refusals() []fault.Fault {
 // Runs reports whether the run will be processed.
 func (p *Plan) Runs() bool { return p.Err == nil && len(p.Refusals()) == 0 }
 
+// LacksEvents reports whether the run will be processed and its events were asked for,
+// and it has none.
+func (p *Plan) LacksEvents() bool {
+	return p.Settings.Events && p.Runs() && p.Run.Events == "" && p.Run.EventsFault == nil
+}
+
 // Output returns the path of the output with that role, "" if there is none.
 func (p *Plan) Output(role string) string {
 	for _, o := range p.Outputs {
@@ -699,7 +705,7 @@ func outputsOf(p *Plan) []Output {
 	return append(out, o("record", "steady", "prov", ".json"))
 }
 
-// What says in a few words what steady does to the run.
+// What says in a few words what steady does to the run: a plan, made before it starts.
 func (p *Plan) What() string {
 	if p.Err != nil {
 		return "cannot be read"
@@ -713,6 +719,29 @@ func (p *Plan) What() string {
 		}
 		return "refused: " + strings.Join(names, ", ")
 	}
+	poses := "a pose a volume"
+	if p.Settings.Motion == "path" {
+		poses = "a pose an excitation"
+	}
+	return p.steps(poses)
+}
+
+// did says what steady has done to the run, once it is known whether the poses are those
+// of a path.
+func (p *Plan) did(po *posed) string {
+	switch {
+	case po.est == nil || p.Settings.Motion != "path":
+		return p.What()
+	case !po.path.Used:
+		return p.steps("one pose a volume (a pose an excitation was asked for, but: " + po.path.Reason + ")")
+	case !po.path.Settled:
+		return p.steps("a pose an excitation (not settled)")
+	}
+	return p.steps("a pose an excitation")
+}
+
+// steps joins the steps of the run, poses being what was estimated.
+func (p *Plan) steps(poses string) string {
 	var parts []string
 	if p.Timing.Temporal {
 		parts = append(parts, fmt.Sprintf("%s to %.4g s", p.Settings.Time, p.Timing.Origin))
@@ -722,11 +751,7 @@ func (p *Plan) What() string {
 	if p.Settings.Motion == "none" {
 		parts = append(parts, "no motion correction")
 	} else {
-		m := "a pose a volume against "
-		if p.Settings.Motion == "path" {
-			m = "a pose an excitation against "
-		}
-		m += p.Settings.Reference.String()
+		m := poses + " against " + p.Settings.Reference.String()
 		if p.Pose.File != p.Run.File {
 			m += " on echo " + func() string { l, _ := p.Pose.Entities.Get("echo"); return l }()
 		}

@@ -172,6 +172,7 @@ func TestPanicBecomesAnOutcome(t *testing.T) {
 	p := &Plan{Run: dataset.Run{Stem: "sub-01_task-x", Dir: "sub-01/func", Group: "sub-01_task-x"}} // no dataset, no header: anything would break
 	p.Inputs = []Input{{Role: "series", Path: "x"}}
 	w := &worker{out: t.TempDir(), workers: 1}
+	w.folders = newFolders(w.out)
 	out := w.guarded(context.Background(), unit{[]*Plan{p}}, Job{Out: w.out}, func(Event) {})
 	if len(out) != 1 || out[0].State != Failed || ExitCode(nil, out, false) != ExitBug {
 		t.Fatalf("%+v", out)
@@ -179,7 +180,7 @@ func TestPanicBecomesAnOutcome(t *testing.T) {
 	if msg := out[0].Err.Error(); !strings.Contains(msg, "sub-01_task-x") || !strings.Contains(msg, "please report") || strings.Contains(msg, "goroutine") {
 		t.Errorf("message: %s", msg)
 	}
-	if got := listing(t, filepath.Join(w.out, "sub-01/func")); len(got) > 0 {
+	if got := listing(t, w.out); len(got) > 0 {
 		t.Errorf("left: %v", got)
 	}
 }

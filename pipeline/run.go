@@ -35,6 +35,7 @@ type unit struct {
 // A worker does units one after another.
 type worker struct {
 	out     string
+	folders *folders
 	workers int // goroutines inside a run
 	stage   func(p *Plan, stage string)
 	share   func(p *Plan, stage string, share float64) // nil: nobody listens
@@ -471,11 +472,11 @@ func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt
 		case "steady-series":
 			fill = image(series, data, nt)
 		case "steady-sidecar":
-			fill = text(p.steadySidecar())
+			fill = text(p.steadySidecar(po))
 		case "reference":
 			fill = image(single(nifti.Float32), ref, 1)
 		case "reference-sidecar":
-			fill = text(p.referenceSidecar())
+			fill = text(p.referenceSidecar(po))
 		case "mask":
 			fill = image(single(nifti.Uint8), inside, 1)
 		case "mask-sidecar":

@@ -23,10 +23,10 @@ func (p *Plan) sources() []string {
 var timingFields = []string{"RepetitionTime", "VolumeTiming", "SliceTiming", "SliceEncodingDirection", "StartTime", "SlicesAtOneInstant", "DelayTime", "FrameAcquisitionDuration"}
 
 // steadySidecar describes the series.
-func (p *Plan) steadySidecar() []byte {
+func (p *Plan) steadySidecar(po *posed) []byte {
 	t, a := p.Timing, p.Acq
 	var o object
-	o.add("Description", "BOLD series: "+p.What())
+	o.add("Description", "BOLD series: "+p.did(po))
 	o.add("Sources", p.sources())
 	o.add("SkullStripped", false)
 	if p.Settings.Motion == "none" {
@@ -72,22 +72,29 @@ func (p *Plan) steadySidecar() []byte {
 	return o.file()
 }
 
-func (p *Plan) referenceSidecar() []byte {
+func (p *Plan) referenceSidecar(po *posed) []byte {
 	var o object
+	how := "; raw intensities, not moved in time."
 	what := map[string]string{
-		"mean":   "Average of the aligned volumes, standing at the pose of the first of them",
+		"mean":   "Average of the aligned volumes, mapped back by one pose a volume and standing at the pose of the first of them",
 		"first":  "The first volume kept",
 		"middle": "The middle volume of those kept",
 		"sbref":  "The run's single-band reference",
 		"":       "The volume chosen among those kept",
 	}[p.Settings.Reference.Word]
-	if p.Settings.Motion == "none" && p.Settings.Reference.Word == "mean" {
-		what = "Average of all volumes kept, as they stand"
+	if p.Settings.Reference.Word == "mean" {
+		switch {
+		case po.est == nil:
+			what = "Average of all volumes kept, as they stand"
+		case po.path.Used:
+			what = "Average of the aligned volumes, standing at the pose of the first of them: in and around the head rebuilt from all of them, slice by slice along the pose path, their differences in brightness taken out, and sharpened by what it failed to predict of them; further out the plain average"
+			how = "; not moved in time."
+		}
 	}
 	if p.Pose.File != p.Run.File {
 		what += ", from the shortest echo"
 	}
-	o.add("Description", what+"; raw intensities, not moved in time.")
+	o.add("Description", what+how)
 	uris := []string{dataset.URI(dataset.RawName, p.Pose.File)}
 	if p.Settings.Reference.Word == "sbref" {
 		uris = []string{dataset.URI(dataset.RawName, p.Pose.SBRef)}
@@ -100,7 +107,7 @@ func (p *Plan) referenceSidecar() []byte {
 
 func (p *Plan) maskSidecar() []byte {
 	var o object
-	o.add("Description", "The head in the reference: 1 inside, 0 outside. Motion is estimated from these voxels and a rim of two around them, less two planes at each edge of the field of view (fewer in a thin slab); figures are taken over these.")
+	o.add("Description", "The head in the reference: 1 inside, 0 outside. Motion is estimated from these voxels and a thin rim around them, without the outermost planes of the field of view (the record says how many of each); figures are taken over these.")
 	o.add("Sources", []string{dataset.URI("", p.Output("reference"))})
 	o.add("SpatialReference", dataset.URI("", p.Output("reference")))
 	return o.file()

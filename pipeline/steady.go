@@ -130,7 +130,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	defer debug.SetGCPercent(debug.SetGCPercent(heapGrowth))
 	defer debug.SetMemoryLimit(debug.SetMemoryLimit(max(budget, memoryFloor)))
 
-	admit := newAdmission(budget)
+	admit, dirs := newAdmission(budget), newFolders(job.Out)
 	var group errgroup.Group
 	group.SetLimit(jobs)
 	for _, u := range units {
@@ -145,7 +145,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 		}
 		group.Go(func() error {
 			defer admit.release(need)
-			w := &worker{out: job.Out, workers: workers, stage: func(p *Plan, s string) {
+			w := &worker{out: job.Out, folders: dirs, workers: workers, stage: func(p *Plan, s string) {
 				observe(Event{Kind: RunStage, Plan: p, Stage: s})
 			}}
 			if job.Observe != nil {
@@ -237,13 +237,14 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 	}
 	first := u.plans[0]
 	dir := filepath.Join(job.Out, filepath.FromSlash(first.Run.Dir))
-	if err := os.MkdirAll(dir, 0o755); err != nil {
-		return failed(creating(dir, err))
-	}
-	lock, err := lockFile(ctx, filepath.Join(dir, fmt.Sprintf(".%s.lock", path.Base(first.Run.Group))), func() {
+	defer w.folders.clear(dir) // after the lock is gone
+	lock, err := w.folders.lock(ctx, dir, fmt.Sprintf(".%s.lock", path.Base(first.Run.Group)), func() {
 		observe(Event{Kind: RunWaiting, Plan: first})
 	})
 	if create := (*CreateError)(nil); errors.As(err, &create) {
+		if create.Path == dir {
+			return failed(err) // the folder itself
+		}
 		// A folder that cannot be written holds no work under way: where
 		// nothing needs to be written, that is no matter.
 		if out, ok := u.standing(ctx, job); ok {

@@ -18,6 +18,13 @@ type Definition struct {
 // Level is one word that a figure can take, and what it means.
 type Level struct{ Value, Description string }
 
+// The words of pose_path.
+const (
+	PathUsed       = "used"
+	PathNotSettled = "not settled"
+	PathNotUsed    = "not used"
+)
+
 // The radii. They are used by the definitions below and by
 // whoever computes the figures.
 const (
@@ -63,7 +70,7 @@ var definitions = []Definition{
 	{Name: "outside", Unit: "1", Source: own,
 		Description: "Share of the head (of the reference) that lay outside the field of view in this volume, from 0 to 1."},
 	{Name: "fit", Unit: "1", Source: own,
-		Description: "Correlation of the volume with the reference inside the head, after alignment."},
+		Description: "Correlation of the volume with the reference inside the head, both lightly smoothed, slices weighted by how well they fit, at the one pose that the volume as a whole was given (not along a pose path)."},
 	{Name: "state", Source: own,
 		Description: "What became of the volume.",
 		Levels: []Level{
@@ -73,29 +80,30 @@ var definitions = []Definition{
 		}},
 
 	{Name: "expected_error", Unit: "mm", Source: own,
-		Description: "Expected error of the poses of a volume's excitations, from the posterior of the pose path, for noise that is independent from pixel to pixel: root mean square displacement over the head. Undefined for a lost volume."},
+		Description: "Expected error of the poses of a volume's excitations, from the posterior of the pose path, for noise that is independent from pixel to pixel: root mean square displacement over the head. Undefined for a lost volume. Mean, Median and Max are over aligned volumes: for a doubtful one the posterior's noise is not what is wrong with it."},
 	{Name: "residual_volume", Unit: "1", Source: own,
-		Description: "Scale of the residuals of slices against the predicted slices with one pose a volume, in pixels that took no part in finding the path: root mean square over excitations, each counting at most 3, in units of the noise."},
+		Description: "Scale of the residuals of slices against the predicted slices with one pose a volume, in pixels that took no part in the path's first pass, after which the two are compared: root mean square over excitations (each is one slice, or the slices taken together), each counting at most 3, in units of the noise."},
 	{Name: "residual_path", Unit: "1", Source: own,
 		Description: "As residual_volume, along the pose path."},
 	{Name: "explained", Unit: "1", Source: own,
 		Description: "Share of the variance of the slices' pixels inside the head that the predicted slices explain."},
 	{Name: "pose_path", Source: own,
-		Description: "Whether the poses are those of every excitation, where these were asked for; if not, Reason says why.",
+		Description: "Whether the poses are those of every excitation, where these were asked for. Reason says why not; LastStep is the last change (mm) of the pose of an excitation, at most.",
 		Levels: []Level{
-			{"used", "A pose was found for every excitation."},
-			{"not used", "One pose a volume stands."},
+			{PathUsed, "A pose was found for every excitation."},
+			{PathNotSettled, "A pose was found for every excitation and stands, but poses were still moving when the search ended: some are off by about LastStep, and expected_error is too small."},
+			{PathNotUsed, "One pose a volume stands, at the middle of the volume; Reason says why."},
 		}},
 	{Name: "tsnr_raw", Unit: "1", Source: krueger,
 		Description: "Temporal signal to noise of the raw series: per voxel, the mean in time over the standard deviation in time (n-1, no detrending), lost volumes left out; 0 where the standard deviation is zero. Summarised over the head."},
 	{Name: "tsnr_steady", Unit: "1", Source: krueger,
 		Description: "As tsnr_raw, of the corrected series."},
 	{Name: "spikes", Unit: "1", Source: own,
-		Description: fmt.Sprintf("Spike score of each volume and slice of the raw series. d is the mean over the head's voxels of the slice of the distance from the median of the four volumes nearest in time; the score is (d - median of d) / (1.4826 median absolute deviation of d), both over the volumes of the slice. In stationary noise it is near to standard normal. Undefined for slices with fewer than %d voxels of the head and for series of fewer than %d volumes.", MinSpikeVoxels, MinSpikeVolumes)},
+		Description: fmt.Sprintf("Spike score of each volume and slice of the raw series. d is the mean over the head's voxels of the slice of the distance from the median of the four volumes nearest in time; the score is (d - median of d) / (1.4826 median absolute deviation of d), both over the volumes of the slice. In stationary noise it is near to standard normal in long runs; in short ones large scores are commoner. Undefined for slices with fewer than %d voxels of the head and for series of fewer than %d volumes.", MinSpikeVoxels, MinSpikeVolumes)},
 	{Name: "mean_fd_aligned", Unit: "mm", Source: power,
 		Description: "Mean of fd over the volumes that are aligned and follow an aligned one: what a doubtful pose says of itself is left out."},
 	{Name: "dvars_raised", Unit: "1", Source: own,
-		Description: "Number of aligned volumes after an aligned one whose dvars_steady is more than 1.5 times their dvars_raw, and which they are (from 0). Interpolation lowers DVARS; where it raises it, interpolation in time has mixed the neighbours of a jerk, and those volumes are best left out of an analysis."},
+		Description: "Number of aligned volumes after an aligned one whose dvars_steady is more than 1.5 times their dvars_raw, and which they are (from 0). Interpolation by itself lowers DVARS. Where the correction raised it, the pose of the volume or of the one before is probably wrong there or, where slices were moved in time, a jerk nearby has probably been spread; look at those volumes before they enter an analysis."},
 	{Name: "max_shift", Unit: "mm", Source: own,
 		Description: "Length of the longest shift (shift_x, shift_y, shift_z) of any aligned volume. Doubtful and lost volumes, which may have moved furthest, are not covered: look at their numbers too."},
 	{Name: "volumes", Unit: "1", Source: own,

@@ -29,7 +29,7 @@ const spikeFloor = 1.0 / (1 << 23)
 
 // SliceSpikes returns how far each slice of each volume stands out from its own
 // course in time: score[t][s], s counted along axis (0, 1 or 2). A spike of the
-// receiver, a lost shot or a jerk inside one excitation strikes some slices of
+// receiver, a lost excitation or a jerk inside one strikes some slices of
 // one volume; motion between volumes raises all of them together.
 //
 // The score is ours, and robust in both of its steps:
@@ -44,8 +44,9 @@ const spikeFloor = 1.0 / (1 << 23)
 //     volumes of the slice, MAD being the median absolute deviation. The
 //     divisor is never less than 2^-23 of the slice's mean magnitude.
 //
-// In stationary noise the scores are near to standard normal, so 5 or more is
-// rare by chance. Scores are finite for finite data, NaN for slices with fewer
+// In stationary noise the scores of a long run are near to standard normal, so 5 or
+// more is rare by chance; in a short run the median absolute deviation is itself
+// uncertain and large scores are commoner. Scores are finite for finite data, NaN for slices with fewer
 // than [MinSpikeVoxels] voxels in mask and for series of fewer than
 // [MinSpikeVolumes] volumes, and 0 for a slice that never changes.
 //

@@ -2,6 +2,15 @@
 // every voxel refers to one instant and one head position.
 package main
 
-import "os"
+import (
+	"os"
+	"os/signal"
+	"syscall"
+)
 
-func main() { os.Exit(Run(os.Args, os.Stdin, os.Stdout, os.Stderr)) }
+func main() {
+	// A reader that has gone away (of the log, say) is an error of that writing and
+	// must not end the work.
+	signal.Ignore(syscall.SIGPIPE)
+	os.Exit(Run(os.Args, os.Stdin, os.Stdout, os.Stderr))
+}

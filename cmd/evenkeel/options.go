@@ -121,10 +121,10 @@ func request(c *cli.Context) (pipeline.Request, error) {
 
 // limits reads the quality limits.
 var limitOptions = []struct{ name, usage string }{
-	{"limit-mean-fd", "a run whose mean framewise displacement is above `MM` makes the exit code 4; doubtful volumes count, lost ones do not"},
-	{"limit-max-fd", "a run whose largest framewise displacement is above `MM` makes the exit code 4; doubtful volumes count, lost ones do not"},
-	{"limit-max-shift", "a run whose longest shift of an aligned volume is above `MM` makes the exit code 4; doubtful volumes are not covered, so look at their number"},
-	{"limit-lost", "a run with more than `N` lost volumes makes the exit code 4"},
+	{"limit-mean-fd", "a run whose mean framewise displacement is above `MM` makes the exit code 4; doubtful volumes count, lost ones do not; not with --motion none"},
+	{"limit-max-fd", "a run whose largest framewise displacement is above `MM` makes the exit code 4; doubtful volumes count, lost ones do not; not with --motion none"},
+	{"limit-max-shift", "a run whose longest shift of an aligned volume is above `MM` makes the exit code 4; doubtful volumes are not covered, so look at their number; not with --motion none"},
+	{"limit-lost", "a run with more than `N` lost volumes makes the exit code 4; not with --motion none"},
 }
 
 func limitFlags() []cli.Flag {

@@ -91,6 +91,10 @@ func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
 		code, err = own.code, nil
 	}
 	switch {
+	case gone(s.stdout.err) && (err == nil || gone(err)) && code != pipeline.ExitBug:
+		// Whoever read wants no more: no news to anybody, but the code says that what was
+		// asked for was not all delivered.
+		return s.last(pipeline.ExitIO)
 	case err != nil:
 		return s.fail(err)
 	case s.stdout.err != nil && code != pipeline.ExitBug && code != pipeline.ExitIO:
@@ -98,6 +102,9 @@ func Run(args []string, stdin io.Reader, stdout, stderr io.Writer) (code int) {
 	}
 	return s.last(code)
 }
+
+// gone reports whether writing failed because the reader has gone away.
+func gone(err error) bool { return errors.Is(err, syscall.EPIPE) }
 
 // fail reports an error and returns its code.
 func (s *session) fail(err error) int {

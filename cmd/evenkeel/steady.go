@@ -14,6 +14,7 @@ import (
 
 	"evenkeel/fault"
 	"evenkeel/pipeline"
+	"evenkeel/quality"
 )
 
 func (s *session) steadyCommand() *cli.Command {
@@ -60,6 +61,9 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 	if job.Limits, err = limits(c); err != nil {
 		return err
 	}
+	if err := job.Limits.Check(req.Settings); err != nil {
+		return err
+	}
 	found, err := s.survey(c, root, req)
 	if err != nil {
 		return err
@@ -97,7 +101,7 @@ func (s *session) steady(c *cli.Context, root, out string) error {
 	if werr := writeOutcomes(s.stdout, outcomes); werr != nil && err == nil {
 		err = &pipeline.IOError{Path: "standard output", Err: werr}
 	}
-	if err != nil && !errors.Is(err, context.Canceled) {
+	if err != nil && !errors.Is(err, context.Canceled) && !gone(err) {
 		s.log.error("failed", err.Error(), nil)
 	}
 	if len(outcomes) > 0 || err == nil {
@@ -192,8 +196,12 @@ func (s *session) ended(run string, o *pipeline.Outcome) {
 		}
 	}
 	if f := o.Figures; f != nil && len(f.Raised) > 0 {
-		s.log.warn("dvars-raised", fmt.Sprintf("%s: DVARS rose to more than 1.5 times in %s %s: interpolation in time mixes the neighbours of a jerk; leave these volumes out, or compare with another --order",
-			run, plural(len(f.Raised), "volume"), list(f.Raised, 12)), fields{"run": run, "volumes": f.Raised})
+		s.log.warn("dvars-raised", fmt.Sprintf("%s: the correction raised DVARS to more than 1.5 times in %s %s: %s; look at these volumes, leave them out, or compare with another --order",
+			run, plural(len(f.Raised), "volume"), list(f.Raised, 12), raisedBy(o.Plan)), fields{"run": run, "volumes": f.Raised})
+	}
+	if f := o.Figures; f != nil && f.PosePath == quality.PathNotSettled {
+		s.log.warn("path-not-settled", fmt.Sprintf("%s: the pose path has not settled: some poses still moved by %s mm at the end, so they are off by about as much there and the expected error is too small; look at the poses, or compare with --motion volume",
+			run, millimetres(f.LastStep)), fields{"run": run, "last_step_mm": f.LastStep})
 	}
 	for _, b := range o.Outside {
 		s.log.error("outside-limit", run+": "+b.Words, fields{"run": run})
@@ -201,6 +209,14 @@ func (s *session) ended(run string, o *pipeline.Outcome) {
 	if o.Older {
 		s.log.warn("older-outputs", run+": outputs of an earlier time are still in OUT and stay as they are; evenkeel audit tells whether they fit the data as they are", fields{"run": run})
 	}
+}
+
+// raisedBy says what probably raised DVARS in some volumes.
+func raisedBy(p *pipeline.Plan) string {
+	if p.Timing.Temporal {
+		return "probably a jerk nearby was spread by the interpolation in time, or a pose is wrong there"
+	}
+	return "probably a pose is wrong there"
 }
 
 // writeOutcomes writes one line a run, in the order of the runs.
@@ -214,15 +230,9 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 		line := fmt.Sprintf("%-*s  %-11s", width, o.Plan.Run.Stem, o.State)
 		switch f := o.Figures; {
 		case f != nil:
-			line += fmt.Sprintf("  %s, FD mean %s max %s mm, %d doubtful, %d lost", counted(f.Volumes, "volume"), millimetres(f.MeanFD), millimetres(f.MaxFD), f.Doubtful, f.Lost)
-			if !math.IsNaN(f.ExpectedError) {
-				line += fmt.Sprintf(", path residual %.3f -> %.3f, explained %.2f %%, expected error %.0f um", f.ResidualVolume, f.ResidualPath, 100*f.Explained, 1000*f.ExpectedError)
-			}
-			if f.NoPath != "" {
-				line += ", one pose a volume: " + f.NoPath
-			}
+			line += "  " + figures(f)
 			if len(o.Outside) > 0 {
-				line += ", outside a limit"
+				line += "; outside a limit"
 			}
 		case o.State == pipeline.RefusedRun:
 			var ids []string
@@ -237,6 +247,27 @@ func writeOutcomes(w io.Writer, outcomes []pipeline.Outcome) error {
 	}
 	_, err := io.WriteString(w, b.String())
 	return err
+}
+
+// figures puts a run's main figures in words.
+func figures(f *pipeline.Figures) string {
+	line := fmt.Sprintf("%s, FD mean %s max %s mm", counted(f.Volumes, "volume"), millimetres(f.MeanFD), millimetres(f.MaxFD))
+	if a := millimetres(f.MeanFDAligned); a != millimetres(f.MeanFD) {
+		line += " (mean over aligned volumes " + a + ")"
+	}
+	line += fmt.Sprintf(", %d doubtful, %d lost", f.Doubtful, f.Lost)
+	switch f.PosePath {
+	case quality.PathUsed, quality.PathNotSettled:
+		line += "; path: "
+		if f.PosePath == quality.PathNotSettled {
+			line += "not settled (last step " + millimetres(f.LastStep) + " mm), "
+		}
+		line += fmt.Sprintf("residuals %.3f times the noise (one pose a volume: %.3f), %.2f %% of variance explained, expected error %s mm",
+			f.ResidualPath, f.ResidualVolume, 100*f.Explained, millimetres(f.ExpectedError))
+	case quality.PathNotUsed:
+		line += "; path not used, one pose a volume: " + f.NoPath
+	}
+	return line
 }
 
 // plural gives the word without its number.

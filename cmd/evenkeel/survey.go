@@ -84,6 +84,11 @@ func (s *session) survey(c *cli.Context, root string, req pipeline.Request) (*su
 		s.log.warn("notice", n.String(), fields{"notice": n})
 	}
 	f.plans, err = pipeline.Survey(c.Context, ds, req)
+	for _, p := range f.plans {
+		if p.LacksEvents() {
+			s.log.warn("no-events", p.Run.Stem+": --events: the run has no events table, so none is written", fields{"run": p.Run.Stem})
+		}
+	}
 	if nothing := (*pipeline.NothingSelected)(nil); errors.As(err, &nothing) {
 		// What was left out may be all there is.
 		for _, x := range f.leftOut {

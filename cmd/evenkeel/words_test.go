@@ -3,7 +3,12 @@ package main
 import (
 	"bytes"
 	"context"
+	"encoding/binary"
+	"errors"
 	"fmt"
+	"io/fs"
+	"math"
+	"os"
 	"path/filepath"
 	"regexp"
 	"slices"
@@ -21,14 +26,21 @@ import (
 func ended(o pipeline.Outcome) string {
 	var b bytes.Buffer
 	s := &session{log: &logger{w: &b}}
-	o.Plan = &pipeline.Plan{}
+	if o.Plan == nil {
+		o.Plan = &pipeline.Plan{Timing: pipeline.Timing{Temporal: true}}
+	}
 	s.ended("sub-01", &o)
 	return b.String()
 }
 
 func TestRaisedDVARSIsSaid(t *testing.T) {
 	got := ended(pipeline.Outcome{State: pipeline.Done, Figures: &pipeline.Figures{Raised: []int{12, 14}}})
-	if !strings.Contains(got, "in volumes 12, 14: interpolation in time mixes the neighbours of a jerk") {
+	if !strings.Contains(got, "in volumes 12, 14: probably a jerk nearby was spread by the interpolation in time") {
+		t.Error(got)
+	}
+	// Where nothing was moved in time, time is not to blame.
+	got = ended(pipeline.Outcome{Plan: &pipeline.Plan{}, State: pipeline.Done, Figures: &pipeline.Figures{Raised: []int{12, 14}}})
+	if !strings.Contains(got, "in volumes 12, 14: probably a pose is wrong there") || strings.Contains(got, "time;") || strings.Contains(got, "in time") {
 		t.Error(got)
 	}
 	if got := ended(pipeline.Outcome{State: pipeline.Done, Figures: &pipeline.Figures{}}); strings.Contains(got, "DVARS") {
@@ -36,6 +48,62 @@ func TestRaisedDVARSIsSaid(t *testing.T) {
 	}
 	if got := list([]int{1, 2, 3, 4}, 2); got != "1, 2, and 2 more" {
 		t.Error(got)
+	}
+}
+
+// A path that has not settled is said in the log and in the closing line.
+func TestUnsettledPathIsSaid(t *testing.T) {
+	f := &pipeline.Figures{PosePath: "not settled", LastStep: 0.213}
+	if got := ended(pipeline.Outcome{State: pipeline.Done, Figures: f}); !strings.Contains(got, "sub-01: the pose path has not settled: some poses still moved by 0.213 mm") {
+		t.Error(got)
+	}
+	if got := figures(f); !strings.Contains(got, "; path: not settled (last step 0.213 mm), residuals") {
+		t.Error(got)
+	}
+	f.PosePath = "used"
+	if got := ended(pipeline.Outcome{State: pipeline.Done, Figures: f}) + figures(f); strings.Contains(got, "settled") {
+		t.Error(got)
+	}
+}
+
+// The closing line, as README shows it: one unit, nothing left out that tells runs apart.
+func TestClosingLine(t *testing.T) {
+	nan := math.NaN()
+	for want, f := range map[string]pipeline.Figures{
+		"200 volumes, FD mean 0.123 max 1.500 mm, 0 doubtful, 0 lost; path: residuals 1.000 times the noise (one pose a volume: 1.029), 99.88 % of variance explained, expected error 0.010 mm": {
+			Volumes: 200, MeanFD: 0.1231, MaxFD: 1.5, MeanFDAligned: 0.1229, PosePath: "used", ResidualPath: 1.0001, ResidualVolume: 1.029, Explained: 0.99881, ExpectedError: 0.0101},
+		"200 volumes, FD mean 0.123 max 1.500 mm (mean over aligned volumes 0.080), 1 doubtful, 0 lost; path not used, one pose a volume: no slice times": {
+			Volumes: 200, MeanFD: 0.1231, MaxFD: 1.5, MeanFDAligned: 0.08, Doubtful: 1, PosePath: "not used", NoPath: "no slice times", ExpectedError: nan},
+		"1 volume, FD mean n/a max n/a mm, 0 doubtful, 0 lost": {Volumes: 1, MeanFD: nan, MaxFD: nan, MeanFDAligned: nan, ExpectedError: nan},
+	} {
+		if got := figures(&f); got != want {
+			t.Errorf("got  %s\nwant %s", got, want)
+		}
+	}
+}
+
+// A run refused for its voxels leaves no folder in OUT; an events table that is not there is
+// said, and keeps no run from being done.
+func TestNothingEmptyIsLeft(t *testing.T) {
+	dir := crewDataset(t, func(*sailor) {})
+	const other = "sub-02/ses-1/func/sub-02_ses-1_task-watch"
+	bad := newSailor().files(other)
+	image := bad[other+"_bold.nii"]
+	binary.LittleEndian.PutUint32(image[len(image)-4:], math.Float32bits(float32(math.NaN())))
+	writeDataset(dir, bad)
+	out := filepath.Join(t.TempDir(), "out")
+	code, stdout, stderr := run("steady", dir, out, "--motion", "none", "--events")
+	if code != 3 || !strings.Contains(stdout, "image-values") || !strings.Contains(stderr, "evenkeel: "+theStem+": --events: the run has no events table") {
+		t.Error(dump(code, stdout, stderr))
+	}
+	if _, err := os.Stat(filepath.Join(out, "sub-02")); !errors.Is(err, fs.ErrNotExist) {
+		t.Errorf("sub-02 in OUT: %v", err)
+	}
+	if !strings.Contains(stdout, " done ") {
+		t.Error(stdout)
+	}
+	if _, _, stderr := run("survey", dir); strings.Contains(stderr, "--events") {
+		t.Error(stderr)
 	}
 }
 
