@@ -5,9 +5,41 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"os"
 
 	"github.com/klauspost/compress/gzip"
+
+	"evenkeel/internal/inflate"
 )
+
+// The decoder is our own, which is faster, unless the environment variable
+// EVENKEEL_INFLATE asks for the one of klauspost/compress ("klauspost"): should
+// they ever differ about a file, that tells whose mistake it is.
+var otherInflate = os.Getenv("EVENKEEL_INFLATE") == "klauspost"
+
+// unzipper decodes one gzip member.
+type unzipper interface {
+	io.Reader
+	Reset(*bufio.Reader) error
+}
+
+// klauspost is the decoder of that name as an unzipper.
+type klauspost struct{ gzip.Reader }
+
+func (k *klauspost) Reset(in *bufio.Reader) error {
+	if err := k.Reader.Reset(in); err != nil {
+		return err
+	}
+	k.Multistream(false)
+	return nil
+}
+
+func newUnzipper() unzipper {
+	if otherInflate {
+		return &klauspost{}
+	}
+	return &inflate.Reader{}
+}
 
 // source is a file as its decoder sees it. It hands every byte to tap and
 // keeps the first error that came from the file or from tap, so that a
@@ -41,7 +73,7 @@ type members struct {
 	file string
 	src  *source
 	in   *bufio.Reader
-	zr   *gzip.Reader
+	zr   unzipper
 	n    int  // members begun
 	open bool // inside a member
 	err  error
@@ -104,14 +136,11 @@ func (m *members) next() error {
 	}
 	m.n++
 	if m.zr == nil {
-		m.zr, err = gzip.NewReader(m.in)
-	} else {
-		err = m.zr.Reset(m.in)
+		m.zr = newUnzipper()
 	}
-	if err != nil {
+	if err := m.zr.Reset(m.in); err != nil {
 		return m.classify(err)
 	}
-	m.zr.Multistream(false)
 	m.open = true
 	return nil
 }
@@ -138,9 +167,9 @@ func (m *members) classify(err error) error {
 	switch {
 	case errors.Is(err, io.EOF), errors.Is(err, io.ErrUnexpectedEOF):
 		e.Field, e.Found, e.Expected = "gzip stream", "a stream that is cut off", "a whole gzip stream"+e.Expected
-	case errors.Is(err, gzip.ErrChecksum):
+	case errors.Is(err, gzip.ErrChecksum), errors.Is(err, inflate.ErrChecksum):
 		e.Field, e.Found, e.Expected = "gzip checksum", "contents that differ from their checksum or length", "the contents that were compressed"+e.Expected
-	case errors.Is(err, gzip.ErrHeader):
+	case errors.Is(err, gzip.ErrHeader), errors.Is(err, inflate.ErrHeader):
 		e.Field, e.Found, e.Expected = "gzip header", "a damaged header", "a gzip header as RFC 1952 has it"+e.Expected
 	default:
 		e.Field, e.Found, e.Expected = "gzip data", "damaged data", "a deflate stream as RFC 1951 has it"+e.Expected

@@ -246,6 +246,38 @@ func TestMalformed(t *testing.T) {
 	}
 }
 
+// The other decoder gives the same complaints, and the same voxels.
+func TestOtherInflate(t *testing.T) {
+	defer func(was bool) { otherInflate = was }(otherInflate)
+	for _, c := range malformed {
+		if !strings.HasSuffix(c.file, ".gz") {
+			continue
+		}
+		path := writeFile(t, c.file, c.make())
+		var said [2]*Error
+		for i, other := range []bool{false, true} {
+			otherInflate = other
+			_, _, err := ReadSeries(path, nil, 0)
+			said[i] = asError(t, err)
+		}
+		if a, b := said[0], said[1]; a.Kind != b.Kind || a.Field != b.Field || a.Found != b.Found || a.Expected != b.Expected {
+			t.Errorf("%s: ours says %v\nthe other %v", c.name, a, b)
+		}
+	}
+	path := writeFile(t, "a.nii.gz", slicesConcat(zip(le1(noise)()[:400]), zip(le1(noise)()[400:])))
+	var got [2]*Series
+	for i, other := range []bool{false, true} {
+		otherInflate = other
+		var err error
+		if _, got[i], err = ReadSeries(path, nil, 0); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if i := sameFloats(got[0].Data, got[1].Data); i >= 0 {
+		t.Errorf("voxel %d differs", i)
+	}
+}
+
 func TestMalformedPairs(t *testing.T) {
 	sound := func() *image {
 		im := sample(1, binary.LittleEndian)
