@@ -135,3 +135,38 @@ func perItem() func(b *testing.B, items int, item string) {
 		b.ReportMetric(float64(cpuTime()-from)/float64(b.N)/float64(items), "cpu-ns/"+item)
 	}
 }
+
+// Kernels with scratch on the stack may make it grow, and move what they were
+// given pointers to.
+func TestStackMoves(t *testing.T) {
+	s := newPoints(3, 5, [3]int{9, 9, 9}, 4)
+	want := s.run()
+	if !Assembly() {
+		t.Log("plain Go only")
+	}
+	for depth := range 60 {
+		done := make(chan [4]float32)
+		go func() { done <- deep(depth, s) }() // a fresh, small stack
+		if got := <-done; got != [4]float32(want[0]) {
+			t.Fatalf("depth %d: %g, want %g", depth, got, want[0])
+		}
+	}
+}
+
+//go:noinline
+func deep(depth int, s *pointSet) [4]float32 {
+	var fill [16]float32
+	if depth > 0 {
+		v := deep(depth-1, s)
+		fill[depth%16]++
+		return v
+	}
+	var v, tx, ty, tz [4]float32
+	var base [4]int32
+	copy(tx[:], s.tx)
+	copy(ty[:], s.ty)
+	copy(tz[:], s.tz)
+	copy(base[:], s.base)
+	Value5(v[:], s.c, s.m[0], s.m[0]*s.m[1], base[:], tx[:], ty[:], tz[:])
+	return v
+}

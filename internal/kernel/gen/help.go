@@ -1,15 +1,13 @@
 package main
 
 import (
-	"github.com/mmcloughlin/avo/attr"
 	. "github.com/mmcloughlin/avo/operand"
 	"github.com/mmcloughlin/avo/reg"
 )
 
-// function starts a function that keeps no pointer and splits no stack.
+// function starts a function that keeps no pointer.
 func function(name, signature, doc string) {
 	g.Function(name)
-	g.Attributes(attr.NOSPLIT)
 	g.Pragma("noescape")
 	g.SignatureExpr(signature)
 	g.Doc(doc)

@@ -38,43 +38,46 @@ func pointKernel(degree int, gradient bool) {
 		g.LEAQ(indexed(area, area, 4), area5)
 	}
 	base := arg("base")
-	fractions := [3]reg.GPVirtual{arg("tx"), arg("ty"), arg("tz")}
-	table := arg("table")
-	work := scratch(6 * 32)
-	i := g.GP64()
+	// Weights come first, for some points in a row: the chain from fraction to
+	// weight to memory and back is long, and nothing waits for it so.
+	const points = 16
+	record := 3 * 32
+	if gradient {
+		record = 6 * 32
+	}
+	work := scratch(points * record)
+	i, stop, rec := g.GP64(), g.GP64(), g.GP64()
 	g.XORQ(i, i)
 
-	next, end := "next", "end"
-	g.Label(next)
-	g.CMPQ(i, onStack("n"))
-	g.JGE(LabelRef(end))
-
-	// Weights and slopes of all taps of an axis at once, by Horner.
-	var wx, dx vec
-	for a := range 3 {
-		t := register(lanes)
-		g.VBROADCASTSS(indexed(fractions[a], i, 4), t)
-		w := horner(t, table, 0, degree, lanes)
-		var d vec
-		if gradient {
-			d = horner(t, table, row*(degree+1), degree-1, lanes)
-		}
-		if a == 0 {
-			wx, dx = w, d
-			// Kept in memory too: the sums need every register.
-			if gradient && degree == 5 {
-				g.VMOVUPS(wx, at(spot(work, 0, 0)))
-				g.VMOVUPS(dx, at(spot(work, 3, 0)))
-				wx, dx = nil, nil
+	g.Label("some")
+	g.MOVQ(onStack("n"), rec)
+	g.CMPQ(i, rec)
+	g.JGE(LabelRef("end"))
+	g.LEAQ(at(i, points), stop)
+	g.CMPQ(stop, rec)
+	g.CMOVQGT(rec, stop)
+	g.MOVQ(work, rec)
+	{
+		table, k := arg("table"), g.GP64()
+		fractions := [3]reg.GPVirtual{arg("tx"), arg("ty"), arg("tz")}
+		g.MOVQ(i, k)
+		g.Label("weights")
+		for a := range 3 {
+			t := register(lanes)
+			g.VBROADCASTSS(indexed(fractions[a], k, 4), t)
+			g.VMOVUPS(horner(t, table, 0, degree, lanes), at(spot(rec, a, 0)))
+			if gradient {
+				g.VMOVUPS(horner(t, table, row*(degree+1), degree-1, lanes), at(spot(rec, a+3, 0)))
 			}
-			continue
 		}
-		g.VMOVUPS(w, at(spot(work, a, 0)))
-		if gradient {
-			g.VMOVUPS(d, at(spot(work, a+3, 0)))
-		}
+		g.ADDQ(U32(uint32(record)), rec)
+		g.INCQ(k)
+		g.CMPQ(k, stop)
+		g.JL(LabelRef("weights"))
 	}
+	g.MOVQ(work, rec)
 
+	g.Label("next")
 	p := g.GP64()
 	g.MOVLQSX(indexed(base, i, 4), p)
 	g.LEAQ(indexed(c, p, 4), p)
@@ -98,7 +101,7 @@ func pointKernel(degree int, gradient bool) {
 	}
 	for y := range taps {
 		w, t := register(lanes), register(lanes)
-		g.VBROADCASTSS(at(spot(work, 1, y)), w)
+		g.VBROADCASTSS(at(spot(rec, 1, y)), w)
 		if !gradient {
 			for z := range taps {
 				if y == 0 {
@@ -109,7 +112,7 @@ func pointKernel(degree int, gradient bool) {
 			}
 		} else {
 			d, r := register(lanes), register(lanes)
-			g.VBROADCASTSS(at(spot(work, 4, y)), d)
+			g.VBROADCASTSS(at(spot(rec, 4, y)), d)
 			for z := range taps {
 				g.VMOVUPS(planes(z), r)
 				if y == 0 {
@@ -130,14 +133,14 @@ func pointKernel(degree int, gradient bool) {
 		w := register(lanes)
 		if gradient {
 			d := register(lanes)
-			g.VBROADCASTSS(at(spot(work, 5, z)), d)
+			g.VBROADCASTSS(at(spot(rec, 5, z)), d)
 			if z == 0 {
 				g.VMULPS(sum[0], d, dz)
 			} else {
 				accumulate(sum[z], d, dz, d)
 			}
 		}
-		g.VBROADCASTSS(at(spot(work, 2, z)), w)
+		g.VBROADCASTSS(at(spot(rec, 2, z)), w)
 		if z == 0 {
 			g.VMULPS(sum[0], w, sum[0])
 			if gradient {
@@ -161,16 +164,14 @@ func pointKernel(degree int, gradient bool) {
 		}
 	}
 	if !gradient {
-		g.VMULPS(wx, sum[0], sum[0])
+		g.VMULPS(at(spot(rec, 0, 0)), sum[0], sum[0])
 		out := total(sum[0], lanes)
 		g.Load(g.Param("v"), p)
 		g.VMOVSS(out, indexed(p, i, 4))
 	} else {
-		if wx == nil {
-			wx, dx = register(lanes), register(lanes)
-			g.VMOVUPS(at(spot(work, 0, 0)), wx)
-			g.VMOVUPS(at(spot(work, 3, 0)), dx)
-		}
+		wx, dx := register(lanes), register(lanes)
+		g.VMOVUPS(at(spot(rec, 0, 0)), wx)
+		g.VMOVUPS(at(spot(rec, 3, 0)), dx)
 		g.VMULPS(dx, sum[0], dx)
 		g.VMULPS(wx, sum[0], sum[0])
 		g.VMULPS(wx, slope[0], slope[0])
@@ -185,9 +186,12 @@ func pointKernel(degree int, gradient bool) {
 			}
 		}
 	}
+	g.ADDQ(U32(uint32(record)), rec)
 	g.INCQ(i)
-	g.JMP(LabelRef(next))
-	g.Label(end)
+	g.CMPQ(i, stop)
+	g.JL(LabelRef("next"))
+	g.JMP(LabelRef("some"))
+	g.Label("end")
 	g.VZEROUPPER()
 	g.RET()
 }
