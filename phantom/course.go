@@ -44,8 +44,8 @@ type Event struct{ Onset, Duration float64 }
 
 // Response is the haemodynamic response to events: the double gamma convolved
 // with each event's boxcar (height 1), evaluated in closed form at any t, and
-// divided by the integral 5/6 of the double gamma, so that a long block settles
-// at 1. An impulse contributes the double gamma itself over 5/6, in 1/s.
+// divided by the integral 4/5 of the double gamma, so that a long block settles
+// at 1. An impulse contributes the double gamma itself over 4/5, in 1/s.
 func Response(events []Event) func(t float64) float64 {
 	events = append([]Event(nil), events...)
 	return func(t float64) float64 {
@@ -57,17 +57,27 @@ func Response(events []Event) func(t float64) float64 {
 				s += DoubleGamma(t - e.Onset)
 			}
 		}
-		return float64(s * (6. / 5))
+		return float64(s * (1 / (1 - dip)))
 	}
 }
 
-// DoubleGamma is h(t) = t^5 e^-t/5! - (1/6) t^15 e^-t/15! (t in s, 0 before 0):
-// after Friston et al. 1998 and Glover 1999, NeuroImage 9:416-429.
+// The response of the invented head: a gamma density that rises and one that dips, the
+// form that Friston et al. 1998 (NeuroImage 7:30-40; from memory) and Glover 1999
+// (NeuroImage 9:416-429) describe. The constants are invented, of whole shape so that
+// the integral has a closed form: it peaks at 5.2 s and dips lowest at 17 s.
+const (
+	riseShape, riseScale = 5, 1.3 // scale in s
+	dipShape, dipScale   = 9, 1.9
+	dip                  = 0.2 // the share that dips
+)
+
+// DoubleGamma is h(t) = g(t; 5, 1.3 s) - 0.2 g(t; 9, 1.9 s) with g(t; n, s) =
+// (t/s)^(n-1) e^(-t/s) / (s (n-1)!), t in s, 0 before 0.
 func DoubleGamma(t float64) float64 {
 	if t <= 0 {
 		return 0
 	}
-	return gammaTerm(5, t) - gammaTerm(15, t)/6
+	return gammaTerm(riseShape-1, t/riseScale)/riseScale - float64(dip/dipScale*gammaTerm(dipShape-1, t/dipScale))
 }
 
 // gammaTerm is t^k e^-t / k!: the density of a gamma variable of shape k+1, and
@@ -87,7 +97,7 @@ func blockResponse(t float64) float64 {
 	if t <= 0 {
 		return 0
 	}
-	below := func(n int) float64 {
+	below := func(n int, t float64) float64 {
 		p := detmath.Exp(-t)
 		s := p
 		for i := 1; i < n; i++ {
@@ -96,5 +106,5 @@ func blockResponse(t float64) float64 {
 		}
 		return s
 	}
-	return (1 - below(6)) - (1-below(16))/6
+	return (1 - below(riseShape, t/riseScale)) - float64(dip*(1-below(dipShape, t/dipScale)))
 }

@@ -175,11 +175,11 @@ func (s *session) compare(p *pipeline.Plan, truth *phantom.TrueRun, r *pipeline.
 		moved = max(moved, distance(scan.Motion(r.Times[n]), at0, points))
 	}
 	s.say("\n  %s\n", truth.Stem)
-	s.say("    true motion        up to %.0f um (rms over the head, against the first volume)\n", 1000*moved)
-	s.say("    pose error         rms %.1f um, largest %.1f um, over %d volumes\n", 1000*math.Sqrt(sum/float64(whole)), 1000*worst, whole)
+	s.say("    true motion        up to %.2f mm (rms over the head, against the first volume)\n", moved)
+	s.say("    pose error         rms %.4f mm, largest %.4f mm, over %d volumes\n", math.Sqrt(sum/float64(whole)), worst, whole)
 	for n, e := range errs {
 		if torn(n) {
-			s.say("    volume %-3d         %.0f um: the jerk falls into it, so it has no one pose\n", n, 1000*e)
+			s.say("    volume %-3d         %.2f mm: the jerk falls into it, so it has no one pose\n", n, e)
 		}
 	}
 	// The reference stands at the pose of the first volume.
@@ -188,13 +188,13 @@ func (s *session) compare(p *pipeline.Plan, truth *phantom.TrueRun, r *pipeline.
 	before := r.PhaseErrors(r.Raw, truth.Tone.Freq, truth.Tone.Phase, weight)
 	after := r.PhaseErrors(r.Steady, truth.Tone.Freq, truth.Tone.Phase, weight)
 	toMS := 1000 / (2 * math.Pi * truth.Tone.Freq)
-	s.say("    activation         %.3f Hz, true phase %.2f degree; -: a slice that left the field of view\n", truth.Tone.Freq, truth.Tone.Phase*180/math.Pi)
+	s.say("    activation         %.3f Hz, true phase %.2f degrees; -: a slice that left the field of view\n", truth.Tone.Freq, truth.Tone.Phase*180/math.Pi)
 	for _, row := range []struct {
 		name string
 		v    []float64
 	}{{"before", before}, {"after", after}} {
 		rms, most := spread(row.v)
-		s.say("    phase error %-6s rms %.2f degree (%.0f ms), largest %.2f degree (%.0f ms); by slice:\n",
+		s.say("    phase error %-6s rms %.2f degrees (%.0f ms), largest %.2f degrees (%.0f ms); by slice:\n",
 			row.name, rms*180/math.Pi, rms*toMS, most*180/math.Pi, most*toMS)
 		for i := 0; i < len(row.v); i += 10 {
 			s.say("     ")
