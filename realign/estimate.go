@@ -719,8 +719,24 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 			for i, t := range batch {
 				b := mul(mustInvert(e.g.Affine), mul(vols[t].Pose.Matrix(), e.g.Affine))
 				weak := weak[t]
+				whole := !slices.Contains(weak, true)
 				for v := area * k; v < area*(k+1); v++ {
 					all[v] += float64(buf[i][v])
+					if x := v % e.g.N[0]; x == 0 && whole && e.g.deepRow(&b, v/e.g.N[0]%e.g.N[1], k) {
+						// A row all of which is seen from well inside counts in full.
+						row := buf[i][v:][:e.g.N[0]]
+						sum, all, full, count := sum[v:][:len(row)], all[v:][:len(row)], full[v:][:len(row)], count[v:][:len(row)]
+						for x, value := range row {
+							if x > 0 {
+								all[x] += float64(value)
+							}
+							sum[x] += float64(value)
+							full[x]++
+							count[x]++
+						}
+						v += e.g.N[0] - 1
+						continue
+					}
 					q := applyAffine(&b, float64(v%e.g.N[0]), float64(v/e.g.N[0]%e.g.N[1]), float64(k))
 					deep := e.g.depth(q)
 					in := deep >= -0.5
@@ -763,6 +779,13 @@ func (g Grid) depth(x [3]float64) float64 {
 		d = min(d, v, float64(g.N[a]-1)-v)
 	}
 	return d
+}
+
+// deepRow reports whether a row of points, mapped by m, lies inside the field by so
+// much that all of it counts in full: its ends do.
+func (g Grid) deepRow(m *[16]float64, j, k int) bool {
+	a, b := applyAffine(m, 0, float64(j), float64(k)), applyAffine(m, float64(g.N[0]-1), float64(j), float64(k))
+	return g.depth(a) >= bentPlanes && g.depth(b) >= bentPlanes
 }
 
 // edgeWeight is what a volume counts in an average at a point so deep inside

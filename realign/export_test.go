@@ -29,8 +29,12 @@ func FilterLine(x []float64, degree int, b Boundary) []float64 {
 
 // Interpolate loads a volume and evaluates value and gradient at points.
 func Interpolate(n [3]int, vol []float32, degree int, b Boundary, pts [][3]float64) (v []float32, g [][3]float32) {
-	s := newSpline(n, degree, b)
-	s.load(vol)
+	s := newSpline(n, degree)
+	if b == Odd {
+		s.load(vol)
+	} else {
+		s.loadExactly(vol, b)
+	}
 	var at batch
 	for _, p := range pts {
 		s.add(&at, p[0], p[1], p[2])

@@ -41,7 +41,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		taken = gainsAt(p.Gains, lost, s, s.Times, opt)
 		given = gainsAt(p.Gains, lost, s, []float64{t}, opt)
 	}
-	template := newSpline(g.N, 5, Odd)
+	template := newSpline(g.N, 5)
 	template.load(p.Reference)
 	inv := mustInvert(g.Affine)
 	done := &progress{tell: p.Progress}
@@ -61,20 +61,36 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		b := &batches[worker]
 		area := g.N[0] * g.N[1]
 		for z := range g.N[2] {
-			b.reset()
-			for y := range g.N[1] {
-				for x := range g.N[0] {
-					at := applyAffine(&back[[3]int{x, y, z}[s.Axis]], float64(x), float64(y), float64(z))
-					template.add(b, at[0], at[1], at[2])
+			if s.Axis == 0 {
+				// Neighbours in a row stand at poses of their own.
+				b.reset()
+				for y := range g.N[1] {
+					for x := range g.N[0] {
+						at := applyAffine(&back[x], float64(x), float64(y), float64(z))
+						template.add(b, at[0], at[1], at[2])
+					}
+				}
+				template.values(b)
+			} else {
+				b.v = sized(b.v, area)
+				for y := range g.N[1] {
+					template.row(b.v[g.N[0]*y:][:g.N[0]], &back[[3]int{0, y, z}[s.Axis]], y, z)
 				}
 			}
-			template.values(b)
-			i := 0
 			for y := range g.N[1] {
-				for x := range g.N[0] {
-					v := [3]float64{float64(x), float64(y), float64(z)}
-					vol[area*z+i] -= float32(gain[[3]int{x, y, z}[s.Axis]].at(v) * float64(b.v[i]))
-					i++
+				row, predicted := vol[area*z+g.N[0]*y:][:g.N[0]], b.v[g.N[0]*y:][:g.N[0]]
+				if s.Axis == 0 {
+					for x, v := range predicted {
+						gn := float32(gain[x].at([3]float64{float64(x), float64(y), float64(z)}))
+						row[x] -= float32(gn * v)
+					}
+					continue
+				}
+				gr := &gain[[3]int{0, y, z}[s.Axis]]
+				bright := gr.row(y, z)
+				for x, v := range predicted {
+					gn := float32(bright + float64(gr.step*float64(x)))
+					row[x] -= float32(gn * v)
 				}
 			}
 		}
@@ -99,7 +115,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 	return parallel.For(ctx, workers, nt, func(worker, n int) error {
 		defer done.piece()
 		if res[worker] == nil {
-			res[worker] = newSpline(g.N, degree, Odd)
+			res[worker] = newSpline(g.N, degree)
 		}
 		r := res[worker]
 		vol := data[n*nv:][:nv]
@@ -110,29 +126,23 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 		}
 		m := mul(inv, mul(pose.Matrix(), g.Affine))
 		gain := newGainRows(g, p.Centre, &given[n][0])
-		b := &batches[worker]
 		area := g.N[0] * g.N[1]
 		for z := range g.N[2] {
 			plane := vol[area*z:][:area]
-			b.reset()
 			if !still {
 				for y := range g.N[1] {
-					for x := range g.N[0] {
-						at := applyAffine(&m, float64(x), float64(y), float64(z))
-						r.add(b, at[0], at[1], at[2])
-					}
+					r.row(plane[g.N[0]*y:][:g.N[0]], &m, y, z)
 				}
-				r.valuesInto(plane, b)
 			}
-			i := 0
 			for y := range g.N[1] {
-				for x := range g.N[0] {
-					at := [3]float64{float64(x), float64(y), float64(z)}
-					if !still {
-						at = applyAffine(&m, at[0], at[1], at[2])
-					}
-					plane[i] = float32(gain.at(at)*float64(p.Reference[area*z+i])) + plane[i]
-					i++
+				// The gain is linear along a row, wherever that lies in the volume.
+				fy, fz := float64(y), float64(z)
+				bright := gain.at(applyAffine(&m, 0, fy, fz))
+				step := gain.at(applyAffine(&m, 1, fy, fz)) - bright
+				row, reference := plane[g.N[0]*y:][:g.N[0]], p.Reference[area*z+g.N[0]*y:][:g.N[0]]
+				for x, v := range reference {
+					gn := float32(bright + float64(step*float64(x)))
+					row[x] += float32(gn * v)
 				}
 			}
 		}

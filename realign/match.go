@@ -98,6 +98,8 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 		lo[a] = int(math.Ceil(t.margin[a]))
 		hi[a] = int(math.Floor(float64(n[a]-1) - t.margin[a]))
 	}
+	forth := mul(t.inv, mul(p.Matrix(), t.g.Affine))
+	lo, hi = t.reached(&forth, lo, hi)
 	for k := lo[2]; k <= hi[2]; k++ {
 		for j := lo[1]; j <= hi[1]; j++ {
 			for i := lo[0]; i <= hi[0]; i++ {

@@ -567,12 +567,14 @@ func (e *pathEstimator) gather(w *slotWork, n int, slices []int, pose Pose) (end
 	w.val, w.near, w.gain, w.head, w.wt = w.val[:0], w.near[:0], w.gain[:0], w.head[:0], w.wt[:0]
 	vol := e.volume(n)
 	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
+	forth := mul(t.inv, mul(pose.Matrix(), t.g.Affine))
 	for _, k := range slices {
 		lo, hi, ok := e.within(k)
 		if !ok {
 			ends = append(ends, len(w.val))
 			continue
 		}
+		lo, hi = t.reached(&forth, lo, hi)
 		gain := newGainRows(e.g, e.est.Centre, &e.gains[n][k])
 		for z := lo[2]; z <= hi[2]; z++ {
 			for y := lo[1]; y <= hi[1]; y++ {

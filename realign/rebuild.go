@@ -258,7 +258,7 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 			defer e.done.piece()
 			n := batch[b]
 			if work[worker] == nil {
-				work[worker] = &scratch{s: newSpline(e.g.N, degree, Odd), vol: make([]float32, e.g.voxels())}
+				work[worker] = &scratch{s: newSpline(e.g.N, degree), vol: make([]float32, e.g.voxels())}
 			}
 			w := work[worker]
 			e.level(w.vol, n, residual, &w.b)
@@ -336,8 +336,8 @@ func (e *pathEstimator) level(dst []float32, n int, residual bool, b *batch) {
 	for z := range e.g.N[2] {
 		for y := range e.g.N[1] {
 			for x := range e.g.N[0] {
-				gain := rows[[3]int{x, y, z}[axis]].at([3]float64{float64(x), float64(y), float64(z)})
-				dst[i] = float32(float64(vol[i]) / gain)
+				r := &rows[[3]int{x, y, z}[axis]]
+				dst[i] = vol[i] / float32(max(r.row(y, z)+float64(r.step*float64(x)), faintest))
 				i++
 			}
 		}

@@ -13,7 +13,7 @@ type Resampler struct {
 // any other panics.
 func NewResampler(n [3]int, degree int) *Resampler {
 	return &Resampler{
-		s: newSpline(n, degree, Odd),
+		s: newSpline(n, degree),
 		x: make([]float64, n[0]), y: make([]float64, n[0]), z: make([]float64, n[0]),
 	}
 }
@@ -29,6 +29,13 @@ func (r *Resampler) Eval(dst []float32, m Map) {
 	nx, ny, nz := r.s.n[0], r.s.n[1], r.s.n[2]
 	if len(dst) != nx*ny*nz {
 		panic("realign: output and volume differ in size")
+	}
+	if affine, ok := m.(affineMap); ok {
+		a := [16]float64(affine)
+		for row := range ny * nz {
+			r.s.row(dst[nx*row:][:nx], &a, row%ny, row/ny)
+		}
+		return
 	}
 	for k := range nz {
 		// A plane at a time: enough for the kernels, and little scratch.

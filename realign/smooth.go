@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/kernel"
 )
 
 // smoother filters volumes of one grid by a Gaussian that is isotropic in mm,
@@ -16,6 +17,9 @@ type smoother struct {
 	kernel  [3][]float32 // half kernels: [0] is the centre
 	a, b    []float32
 	line    []float32
+	full    []float32 // a line before it is thinned
+	past    []float32 // rows past the ends
+	rows    [][]float32
 }
 
 // newSmoother prepares a Gaussian of sigma mm (0: none) on g; every stride-th
@@ -75,9 +79,11 @@ func (s *smoother) run(dst, vol []float32) {
 	if len(vol) != nx*ny*nz || len(dst) != ox*oy*oz {
 		panic("realign: smoother and volume differ in size")
 	}
-	// Along x: one padded line at a time.
+	// Along x: one padded line at a time, of which every stride-th value stays.
 	h := s.kernel[0]
 	r := len(h) - 1
+	s.full = sized(s.full, nx)
+	full := s.full
 	for row := range ny * nz {
 		src := vol[nx*row:][:nx]
 		out := s.a[ox*row:][:ox]
@@ -87,22 +93,13 @@ func (s *smoother) run(dst, vol []float32) {
 			line[r-i] = oddSample(src, -i)
 			line[r+nx-1+i] = oddSample(src, nx-1+i)
 		}
-		if r == 3 && s.stride[0] == 1 {
-			h0, h1, h2, h3 := h[0], h[1], h[2], h[3]
-			for o := range out {
-				l := line[o:][:7]
-				v := float32(h0*l[3]) + float32(h1*(l[2]+l[4]))
-				out[o] = v + float32(h2*(l[1]+l[5])) + float32(h3*(l[0]+l[6]))
-			}
+		if s.stride[0] == 1 {
+			filterLine(out, h, line)
 			continue
 		}
+		filterLine(full, h, line)
 		for o := range out {
-			c := r + s.first[0] + o*s.stride[0]
-			v := float32(h[0] * line[c])
-			for i := 1; i <= r; i++ {
-				v += float32(h[i] * (line[c-i] + line[c+i]))
-			}
-			out[o] = v
+			out[o] = full[s.first[0]+o*s.stride[0]]
 		}
 	}
 	for k := range nz {
@@ -111,47 +108,67 @@ func (s *smoother) run(dst, vol []float32) {
 	s.across(dst, s.b, ox*oy, nz, oz, 2)
 }
 
+// filterLine and filterRows are those of package kernel, for filters of any reach.
+func filterLine(dst, h, line []float32) {
+	if len(h)-1 <= kernel.MostReach {
+		kernel.SymmetricLine(dst, h, line)
+		return
+	}
+	var rows [][]float32
+	for k := range 2*len(h) - 1 {
+		rows = append(rows, line[k:][:len(dst)])
+	}
+	filterRows(dst, h, rows)
+}
+
+func filterRows(dst, h []float32, rows [][]float32) {
+	r := len(h) - 1
+	if r <= kernel.MostReach {
+		kernel.Symmetric(dst, h, rows)
+		return
+	}
+	for i, v := range rows[r] {
+		dst[i] = float32(h[0] * v)
+	}
+	for k := 1; k <= r; k++ {
+		a, b := rows[r-k], rows[r+k]
+		for i := range dst {
+			dst[i] += float32(h[k] * (a[i] + b[i]))
+		}
+	}
+}
+
 // across filters along an axis whose samples are rows of w values: n rows in,
 // m rows out.
 func (s *smoother) across(dst, src []float32, w, n, m, axis int) {
 	h := s.kernel[axis]
-	row := func(k int) []float32 { return src[w*k:][:w] }
-	for o := range m {
-		c := s.first[axis] + o*s.stride[axis]
-		out := dst[w*o:][:w]
-		if len(h) == 4 && c >= 3 && c+3 < n {
-			// The usual reach of the fine filter, away from the ends: one sweep.
-			// The same sums in the same order as below.
-			mid, a1, b1, a2, b2, a3, b3 := row(c), row(c-1), row(c+1), row(c-2), row(c+2), row(c-3), row(c+3)
-			h0, h1, h2, h3 := h[0], h[1], h[2], h[3]
-			for i := range out {
-				v := float32(h0*mid[i]) + float32(h1*a1[i]) + float32(h1*b1[i])
-				v = v + float32(h2*a2[i]) + float32(h2*b2[i])
-				out[i] = v + float32(h3*a3[i]) + float32(h3*b3[i])
-			}
+	r := len(h) - 1
+	// The rows past both ends: f(k) = 2 f(edge) - f(mirrored), with as many turns as
+	// a short axis needs: sign and offset follow from oddWalk.
+	s.past = sized(s.past, 2*r*w)
+	s.rows = sized(s.rows, n+2*r)
+	first, last := src[:w], src[w*(n-1):][:w]
+	for k := range s.rows {
+		at := k - r
+		if at >= 0 && at < n {
+			s.rows[k] = src[w*at:][:w]
 			continue
 		}
-		for i, v := range row(c) {
-			out[i] = float32(h[0] * v)
+		i0, sign, ends := oddWalk(at, n)
+		in := src[w*i0:][:w]
+		q := k
+		if at >= n {
+			q -= n
 		}
-		for t := 1; t < len(h); t++ {
-			for _, k := range [2]int{c - t, c + t} {
-				if k >= 0 && k < n {
-					for i, v := range row(k) {
-						out[i] += float32(h[t] * v)
-					}
-					continue
-				}
-				// f(k) = 2 f(edge) - f(mirrored), with as many turns as a short
-				// axis needs: sign and offset follow from oddWalk.
-				i0, sign, ends := oddWalk(k, n)
-				first, last, in := row(0), row(n-1), row(i0)
-				for i := range out {
-					v := float32(ends[0]*first[i]) + float32(ends[1]*last[i]) + float32(sign*in[i])
-					out[i] += float32(h[t] * v)
-				}
-			}
+		out := s.past[w*q:][:w]
+		for i := range out {
+			out[i] = float32(ends[0]*first[i]) + float32(ends[1]*last[i]) + float32(sign*in[i])
 		}
+		s.rows[k] = out
+	}
+	for o := range m {
+		c := s.first[axis] + o*s.stride[axis]
+		filterRows(dst[w*o:][:w], h, s.rows[c:c+2*r+1])
 	}
 }
 

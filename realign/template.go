@@ -1,5 +1,7 @@
 package realign
 
+import "math"
+
 // template is a reference prepared for matching at one level of smoothing. It
 // is read-only once made.
 type template struct {
@@ -11,6 +13,7 @@ type template struct {
 	weight []float32   // by nearest voxel: what it counts in a robust match; nil: all alike
 	centre [3]float64  // world mm
 	margin [3]float64  // voxels left out at each field edge
+	box    [2][3]int   // first and last usable voxel along each axis
 }
 
 // newTemplate takes the smoothed reference vol and the head on its grid.
@@ -18,7 +21,7 @@ type template struct {
 // most volumes averaged), or is nil.
 func newTemplate(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]float64, centre [3]float64, degree int) *template {
 	t := &template{g: g, inv: mustInvert(g.Affine), head: head, centre: centre, margin: margin}
-	t.s = newSpline(g.N, degree, Odd)
+	t.s = newSpline(g.N, degree)
 	t.s.load(vol)
 	t.usable = dilate(head, g.N, rim)
 	if unknown != nil {
@@ -27,7 +30,52 @@ func newTemplate(g Grid, vol []float32, head, unknown []bool, rim int, margin [3
 			t.usable[i] = t.usable[i] && !u
 		}
 	}
+	t.box = boxOf(t.usable, g.N)
 	return t
+}
+
+// boxOf gives the first and last voxel of a mask along each axis; first > last for
+// an empty one.
+func boxOf(mask []bool, n [3]int) (box [2][3]int) {
+	box[0] = n
+	box[1] = [3]int{-1, -1, -1}
+	i := 0
+	for z := range n[2] {
+		for y := range n[1] {
+			for x := range n[0] {
+				if mask[i] {
+					for a, v := range [3]int{x, y, z} {
+						box[0][a], box[1][a] = min(box[0][a], v), max(box[1][a], v)
+					}
+				}
+				i++
+			}
+		}
+	}
+	return box
+}
+
+// reached narrows a range of voxels of a volume to those whose points can be usable
+// at a pose: forth takes voxels of the template to voxels of the volume.
+func (t *template) reached(forth *[16]float64, lo, hi [3]int) (from, to [3]int) {
+	from, to = hi, lo
+	for corner := range 8 {
+		var v [3]float64
+		for a := range v {
+			v[a] = float64(t.box[0][a]) - 0.5
+			if corner>>a&1 == 1 {
+				v[a] = float64(t.box[1][a]) + 0.5
+			}
+		}
+		p := applyAffine(forth, v[0], v[1], v[2])
+		for a := range p {
+			from[a], to[a] = min(from[a], int(math.Floor(p[a]))), max(to[a], int(math.Ceil(p[a])))
+		}
+	}
+	for a := range from {
+		from[a], to[a] = max(from[a], lo[a]), min(to[a], hi[a])
+	}
+	return from, to
 }
 
 // edgeMargin is how many voxels are left out at each end of an axis of n
