@@ -466,7 +466,7 @@ func (r *Reader) fast(limit int) (ended bool, err error) {
 				}
 			}
 		}
-		// 20 bits or more are in hand.
+		// 56 - 3*litBits bits or more are in hand: a whole code.
 		if e&whatMask == isSecond {
 			e = lit[int(e>>16)+int(hand>>litBits&(1<<(e>>8&15)-1))]
 			if e&isLiteral != 0 {

@@ -15,7 +15,7 @@ import "math/bits"
 // A code longer than the first table's index leads to a second table, whose size
 // is in bits 8-11. Entry 0 is a code that does not exist.
 const (
-	litBits, litSize   = 12, 1<<12 + 1024
+	litBits, litSize   = 11, 1<<11 + 1024
 	distBits, distSize = 9, 1<<9 + 512
 
 	isLiteral = 1 << 7
