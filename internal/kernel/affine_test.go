@@ -202,11 +202,15 @@ func TestSameBytesAffineRow(t *testing.T) {
 	for _, c := range []struct {
 		degree int
 		want   string
-	}{{3, "a0a641f40ddcad43"}, {5, "020d5b5178fa616e"}} {
+	}{{3, "2308e38bba3f51be"}, {5, "2d8b5490ce9e600f"}} {
 		sameBytes(t, c.want, func() [][]float32 {
 			var out [][]float32
 			for seed := range uint64(40) {
-				out = append(out, newAffine(seed, c.degree, [3]int{32, 12, 11}, 3, 33).run()...)
+				a := newAffine(seed, c.degree, [3]int{32, 12, 11}, 3, 33)
+				if seed >= 20 { // on a sample, if the product is rounded
+					a.start[0] = 25 - float64(a.step[0]*float64(seed-15))
+				}
+				out = append(out, a.run()...)
 			}
 			return out
 		})

@@ -19,9 +19,10 @@ func both(tb interface {
 	tb.Helper()
 	var out [2][][]float32
 	for k := range out {
-		was := SetPlain(k == 0)
-		out[k] = f()
-		SetPlain(was)
+		func() {
+			defer SetPlain(SetPlain(k == 0))
+			out[k] = f()
+		}()
 	}
 	for a := range out[0] {
 		if len(out[0][a]) != len(out[1][a]) {
