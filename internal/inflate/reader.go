@@ -627,9 +627,9 @@ func (r *Reader) trailer() error {
 		}
 		v[i] = r.take(32)
 	}
-	// What is in hand goes back.
-	r.pos -= int(r.n >> 3)
-	r.n, r.hand = 0, 0
+	// Of the 56 bits at most that were in hand nothing is left: the trailer has
+	// 64, and need takes bytes one by one.
+	r.hand = 0
 	if _, err := r.br.Discard(r.pos); err != nil {
 		panic("inflate: " + err.Error())
 	}

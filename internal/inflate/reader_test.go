@@ -10,8 +10,10 @@ import (
 	"fmt"
 	"hash/crc32"
 	"io"
+	"math/bits"
 	"math/rand/v2"
 	"runtime"
+	"strings"
 	"testing"
 	"testing/iotest"
 
@@ -279,6 +281,71 @@ func TestRefuses(t *testing.T) {
 		b[len(b)+at] ^= 1
 		if _, err := ours(bytes.NewReader(b), 64, 100); err != ErrChecksum {
 			t.Errorf("trailer byte %d: %v", at, err)
+		}
+	}
+}
+
+// Which lengths make a code; and each entry of those that do leads back to its symbol.
+func TestBuild(t *testing.T) {
+	for name, c := range map[string]struct {
+		lengths []uint8
+		want    bool
+	}{
+		"none":             {make([]uint8, 30), true},
+		"one of one bit":   {[]uint8{0, 0, 1}, true},
+		"one of two bits":  {[]uint8{0, 2, 0}, false},
+		"two of one bit":   {[]uint8{1, 1}, true},
+		"three of one bit": {[]uint8{1, 1, 1}, false},
+		"incomplete":       {[]uint8{1, 3, 3}, false},
+		"incomplete, long": {[]uint8{1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11, 12, 13, 14, 15}, false},
+		"complete, long":   {[]uint8{1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11, 12, 13, 14, 15, 15}, true},
+		"too many, long":   {[]uint8{1, 2, 3, 4, 5, 6, 7, 8, 9, 10, 11, 12, 13, 14, 14, 15}, false},
+	} {
+		var table [litSize]uint32
+		for i := range table {
+			table[i] = 0xffffffff
+		}
+		if got := build(table[:], litBits, c.lengths, litEntry); got != c.want {
+			t.Errorf("%s: %v", name, got)
+			continue
+		}
+		if !c.want {
+			continue
+		}
+		code := map[int]int{} // RFC 1951, 3.2.2, the plain way
+		next := 0
+		for l := 1; l <= maxLen; l++ {
+			next <<= 1
+			for sym, k := range c.lengths {
+				if int(k) == l {
+					code[sym] = next
+					next++
+				}
+			}
+		}
+		for sym, l := range c.lengths {
+			if l == 0 {
+				continue
+			}
+			at := int(bits.Reverse16(uint16(code[sym])) >> (16 - l))
+			e := table[at&(1<<litBits-1)]
+			if e&isLiteral == 0 && e&whatMask == isSecond {
+				e = table[int(e>>16)+at>>litBits&(1<<(e>>8&15)-1)]
+			}
+			if e != uint32(sym)<<16|1<<5|isLiteral|uint32(l) {
+				t.Errorf("%s: symbol %d has entry %08x", name, sym, e)
+			}
+		}
+		if name == "one of one bit" && table[1] != 0 || name == "none" && table[77] != 0 {
+			t.Errorf("%s: a code that does not exist has an entry", name)
+		}
+	}
+	// More symbols than there are.
+	for _, b := range [][]byte{{5 | 30<<3&0xff, 0, 0}, {5, 30, 0}} {
+		_, err := ours(bytes.NewReader(member(0, nil, b, nil)), 64, 100)
+		var c *CorruptError
+		if !errors.As(err, &c) || !strings.Contains(c.What, "literals and lengths and") {
+			t.Errorf("% x: %v", b, err)
 		}
 	}
 }
