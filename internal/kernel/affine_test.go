@@ -231,28 +231,31 @@ func FuzzAffineRow(f *testing.F) {
 	})
 }
 
-// BenchmarkAffineRow resamples a volume turned by 0.015 rad and shifted.
+// BenchmarkAffineRow resamples a volume shifted and turned by a little and by as much
+// as a head turns in a bad run: the more a row climbs, the shorter its runs of cells.
 func BenchmarkAffineRow(b *testing.B) {
 	n := [3]int{64, 64, 36}
 	for _, degree := range []int{3, 5} {
-		a := newAffine(1, degree, n, 3, n[0])
-		dst := make([]float32, n[0])
-		for _, plain := range []bool{false, true} {
-			b.Run(fmt.Sprintf("%d/%s", degree, map[bool]string{false: "asm", true: "plain"}[plain]), func(b *testing.B) {
-				defer SetPlain(SetPlain(plain))
-				per := perItem()
-				for b.Loop() {
-					for k := range n[2] {
-						for j := range n[1] {
-							y, z := float64(j), float64(k)
-							a.start = [3]float64{0.3 - 0.015*y + 0.004*z, 0.4 + y - 0.015*z, -0.2 + 0.015*y + z}
-							a.step = [3]float64{0.9998, 0.015, -0.01}
-							a.into(dst)
+		for _, turn := range []float64{0.003, 0.015} {
+			a := newAffine(1, degree, n, 3, n[0])
+			dst := make([]float32, n[0])
+			for _, plain := range []bool{false, true} {
+				b.Run(fmt.Sprintf("%d/%g/%s", degree, turn, map[bool]string{false: "asm", true: "plain"}[plain]), func(b *testing.B) {
+					defer SetPlain(SetPlain(plain))
+					per := perItem()
+					for b.Loop() {
+						for k := range n[2] {
+							for j := range n[1] {
+								y, z := float64(j), float64(k)
+								a.start = [3]float64{0.3 - turn*y + turn/4*z, 0.4 + y - turn*z, -0.2 + turn*y + z}
+								a.step = [3]float64{0.9998, turn, -turn * 2 / 3}
+								a.into(dst)
+							}
 						}
 					}
-				}
-				per(b, n[0]*n[1]*n[2], "output")
-			})
+					per(b, n[0]*n[1]*n[2], "output")
+				})
+			}
 		}
 	}
 }
