@@ -172,7 +172,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 }
 
 // heapGrowth is by how many percent the heap may grow before it is collected.
-const heapGrowth = 10
+const heapGrowth = 3
 
 // memoryFloor keeps a tiny --memory from making the collector run all the time:
 // the program itself needs about this much.

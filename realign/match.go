@@ -84,9 +84,9 @@ func (p *points) reset(room int) {
 // the template and its derivatives at their matching points.
 func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 	n := t.g.N
-	m.points.reset(len(vol))
+	m.points.reset(t.room)
 	m.b.reset()
-	m.b.grow(len(vol))
+	m.b.grow(t.room)
 	m.v = m.v[:0]
 	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
 	toCentre := t.g.Affine // voxel index to mm from the centre

@@ -14,6 +14,7 @@ type template struct {
 	centre [3]float64  // world mm
 	margin [3]float64  // voxels left out at each field edge
 	box    [2][3]int   // first and last usable voxel along each axis
+	room   int         // usable voxels and some more: how many points a volume may have
 }
 
 // newTemplate takes the smoothed reference vol and the head on its grid.
@@ -31,6 +32,12 @@ func newTemplate(g Grid, vol []float32, head, unknown []bool, rim int, margin [3
 		}
 	}
 	t.box = boxOf(t.usable, g.N)
+	for _, u := range t.usable {
+		if u {
+			t.room++
+		}
+	}
+	t.room += t.room / 8
 	return t
 }
 
