@@ -245,7 +245,7 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 	}
 	pub := &publisher{out: w.out}
 	defer pub.discard()
-	if err := p.writeData(ctx, pub, s.data, nt, reference, mask, centre, m, po); err != nil {
+	if err := p.writeData(ctx, w.workers, pub, s.data, nt, reference, mask, centre, m, po); err != nil {
 		return nil, err
 	}
 	end()
@@ -426,7 +426,7 @@ func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
 }
 
 // writeData writes every file of the run but its record, under hidden names.
-func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
+func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
 	t := p.Timing
 	nv := len(ref)
 	lo, hi := extent(data)
@@ -446,21 +446,12 @@ func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt
 			inside[i] = 1
 		}
 	}
-	image := func(h *nifti.Header, data []float32, nt int) func(io.Writer) error {
+	image := func(h *nifti.Header, data []float32) func(io.Writer) error {
 		return func(w io.Writer) error {
-			nw, err := nifti.NewWriter(w, h, true)
-			if err != nil {
-				return err
-			}
-			for n := range nt {
-				if err := ctx.Err(); err != nil {
-					return err
-				}
-				if err := nw.WriteVolume(data[n*nv : (n+1)*nv]); err != nil {
-					return err
-				}
-			}
-			return nw.Close()
+			return nifti.WriteVolumes(ctx, w, h, true, workers, func(_, n int, dst []float32) error {
+				copy(dst, data[n*nv:(n+1)*nv])
+				return nil
+			})
 		}
 	}
 	text := func(b []byte) func(io.Writer) error {
@@ -470,15 +461,15 @@ func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt
 		var fill func(io.Writer) error
 		switch o.Role {
 		case "steady-series":
-			fill = image(series, data, nt)
+			fill = image(series, data)
 		case "steady-sidecar":
 			fill = text(p.steadySidecar(po))
 		case "reference":
-			fill = image(single(nifti.Float32), ref, 1)
+			fill = image(single(nifti.Float32), ref)
 		case "reference-sidecar":
 			fill = text(p.referenceSidecar(po))
 		case "mask":
-			fill = image(single(nifti.Uint8), inside, 1)
+			fill = image(single(nifti.Uint8), inside)
 		case "mask-sidecar":
 			fill = text(p.maskSidecar())
 		case "pose-table":
@@ -492,9 +483,9 @@ func (p *Plan) writeData(ctx context.Context, pub *publisher, data []float32, nt
 		case "quality":
 			fill = text(m.qualityFile(p))
 		case "raw-tsnr":
-			fill = image(single(nifti.Float32), m.tsnrRaw, 1)
+			fill = image(single(nifti.Float32), m.tsnrRaw)
 		case "steady-tsnr":
-			fill = image(single(nifti.Float32), m.tsnrSteady, 1)
+			fill = image(single(nifti.Float32), m.tsnrSteady)
 		case "events":
 			moved, faults := moveEvents(p.Run.Events, p.events, t.StartTime)
 			if len(faults) > 0 {
