@@ -178,7 +178,7 @@ func runsDescription() []byte {
 			if c.of == "" {
 				d.add("Description", def.Description)
 			} else {
-				d.add("Description", c.of+" of "+c.figure+", over what it is defined for. "+c.figure+": "+def.Description)
+				d.add("Description", c.of+" of "+c.figure+", over the values that its summary covers. "+c.figure+": "+def.Description)
 			}
 			d.add("Units", def.Unit)
 			d.add("Source", def.Source)
