@@ -94,7 +94,9 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 		toCentre[4*a+3] -= t.centre[a]
 	}
 	var lo, hi [3]int
+	var perVoxel [3]float64 // of phi, along a row
 	for a := range lo {
+		perVoxel[a] = float64(toCentre[4*a] * (1.0 / gainReach))
 		lo[a] = int(math.Ceil(t.margin[a]))
 		hi[a] = int(math.Floor(float64(n[a]-1) - t.margin[a]))
 	}
@@ -102,6 +104,12 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 	lo, hi = t.reached(&forth, lo, hi)
 	for k := lo[2]; k <= hi[2]; k++ {
 		for j := lo[1]; j <= hi[1]; j++ {
+			// Along a row everything is its start and a step for each voxel.
+			row := vol[n[0]*(j+n[1]*k):][:n[0]]
+			o, xo := applyAffine(&b, 0, float64(j), float64(k)), applyAffine(&toCentre, 0, float64(j), float64(k))
+			for a := range xo {
+				xo[a] = float64(xo[a] * (1.0 / gainReach))
+			}
 			for i := lo[0]; i <= hi[0]; i++ {
 				if e.thin && white(n, i, j, k) {
 					continue
@@ -110,7 +118,8 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				if e.skip != nil && e.skip[slice] {
 					continue
 				}
-				y := applyAffine(&b, float64(i), float64(j), float64(k))
+				fi := float64(i)
+				y := [3]float64{o[0] + float64(b[0]*fi), o[1] + float64(b[4]*fi), o[2] + float64(b[8]*fi)}
 				if !t.inMargin(y) {
 					continue
 				}
@@ -128,11 +137,10 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 					w = t.weight[near]
 				}
 				m.w = append(m.w, w)
-				xw := applyAffine(&toCentre, float64(i), float64(j), float64(k))
-				for a := range xw {
-					m.phi[a] = append(m.phi[a], float32(xw[a]*(1.0/gainReach)))
+				for a := range xo {
+					m.phi[a] = append(m.phi[a], float32(xo[a]+float64(perVoxel[a]*fi)))
 				}
-				m.v = append(m.v, vol[i+n[0]*(j+n[1]*k)])
+				m.v = append(m.v, row[i])
 			}
 		}
 	}
