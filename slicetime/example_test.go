@@ -33,7 +33,7 @@ func ExampleCorrect() {
 	}
 	fmt.Printf("corrected %.2f\n", data[nz*at:nz*at+nz])
 	// Output:
-	// multiband 2 (slices 2 apart), sequential ascending within each block of 2 slices, 2 shots, 1 s apart, no pause between volumes
+	// multiband 2 (slices 2 apart), sequential ascending within each block of 2 slices, 2 excitations, 1 s apart, no pause between volumes
 	// wanted    1001.56, at 0.5 s of each volume
 	// sampled   [1000.00 1003.09 1000.00 1003.09]
 	// corrected [1001.56 1001.56 1001.56 1001.56]
@@ -52,12 +52,12 @@ func ExampleFromSliceCode() {
 		fmt.Printf("%d %.1f %s\n", code, times, slicetime.Schedule{Times: times, Axis: 2}.Words())
 	}
 	// Output:
-	// 1 [NaN 0.0 0.1 0.2 0.3 0.4 NaN] sequential ascending, 5 shots, 0.1 s apart, 2 of 7 slices without a time
-	// 2 [NaN 0.4 0.3 0.2 0.1 0.0 NaN] sequential descending, 5 shots, 0.1 s apart, 2 of 7 slices without a time
-	// 3 [NaN 0.0 0.3 0.1 0.4 0.2 NaN] interleaved ascending, even slices first (2nd, 4th, 6th), 5 shots, 0.1 s apart, 2 of 7 slices without a time
-	// 4 [NaN 0.2 0.4 0.1 0.3 0.0 NaN] interleaved descending, even slices first (6th, 4th, 2nd), 5 shots, 0.1 s apart, 2 of 7 slices without a time
-	// 5 [NaN 0.2 0.0 0.3 0.1 0.4 NaN] interleaved ascending, odd slices first (3rd, 5th), 5 shots, 0.1 s apart, 2 of 7 slices without a time
-	// 6 [NaN 0.4 0.1 0.3 0.0 0.2 NaN] interleaved descending, odd slices first (5th, 3rd), 5 shots, 0.1 s apart, 2 of 7 slices without a time
+	// 1 [NaN 0.0 0.1 0.2 0.3 0.4 NaN] sequential ascending, 5 excitations, 0.1 s apart, 2 of 7 slices without a time
+	// 2 [NaN 0.4 0.3 0.2 0.1 0.0 NaN] sequential descending, 5 excitations, 0.1 s apart, 2 of 7 slices without a time
+	// 3 [NaN 0.0 0.3 0.1 0.4 0.2 NaN] interleaved ascending, even slices first (2nd, 4th, 6th), 5 excitations, 0.1 s apart, 2 of 7 slices without a time
+	// 4 [NaN 0.2 0.4 0.1 0.3 0.0 NaN] interleaved descending, even slices first (6th, 4th, 2nd), 5 excitations, 0.1 s apart, 2 of 7 slices without a time
+	// 5 [NaN 0.2 0.0 0.3 0.1 0.4 NaN] interleaved ascending, odd slices first (3rd, 5th), 5 excitations, 0.1 s apart, 2 of 7 slices without a time
+	// 6 [NaN 0.4 0.1 0.3 0.0 0.2 NaN] interleaved descending, odd slices first (5th, 3rd), 5 excitations, 0.1 s apart, 2 of 7 slices without a time
 }
 
 func ExampleShifter_Shift() {

@@ -9,9 +9,9 @@ import (
 
 // Words describes the schedule for people, in one line without a full stop:
 //
-//	sequential ascending, 15 shots, 0.3333 s apart, no pause between volumes
-//	interleaved ascending, even slices first (2nd, 4th, 6th, ...), 36 shots, about 0.06971 s apart, then a pause of 0.4903 s
-//	multiband 2 (slices 3 apart), interleaved ascending within each block of 3 slices, even slices first (2nd), 3 shots, 0.16 s apart, ...
+//	sequential ascending, 15 excitations, 0.3333 s apart, no pause between volumes
+//	interleaved ascending, even slices first (2nd, 4th, 6th, ...), 36 excitations, about 0.06971 s apart, then a pause of 0.4903 s
+//	multiband 2 (slices 3 apart), interleaved ascending within each block of 3 slices, even slices first (2nd), 3 excitations, 0.16 s apart, ...
 //
 // Slices are counted from 1 in the order of the slice index, so that ascending
 // means rising index. The gap between shots is called "about" where the list
@@ -43,7 +43,7 @@ func (s Schedule) Words() string {
 		parts = append(parts, fmt.Sprintf("all %d slices at one instant%s", n-untimed, at(shots[0].Time)))
 	default:
 		parts = append(parts, order(shots)...)
-		parts = append(parts, fmt.Sprintf("%d shots", len(shots)), s.pace(shots))
+		parts = append(parts, fmt.Sprintf("%d excitations", len(shots)), s.pace(shots))
 	}
 	if untimed > 0 {
 		parts = append(parts, fmt.Sprintf("%d of %d slices without a time", untimed, n))

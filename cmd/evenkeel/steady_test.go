@@ -407,12 +407,12 @@ func TestHeaderScheduleIsTold(t *testing.T) {
 		change func(*sailor)
 		words  string
 	}{
-		{func(*sailor) {}, "the header's slice_code 3 would mean: interleaved ascending, odd slices first (1st, 3rd, 5th, ...), 16 shots, 0.125 s apart, no pause between volumes (not used"},
+		{func(*sailor) {}, "the header's slice_code 3 would mean: interleaved ascending, odd slices first (1st, 3rd, 5th, ...), 16 excitations, 0.125 s apart, no pause between volumes (not used"},
 		{func(s *sailor) {
 			s.header.XYZTUnits = 2 | 16
 			s.header.Pixdim[4] *= 1000
 			s.header.SliceDuration *= 1000
-		}, "16 shots, 0.125 s apart"},
+		}, "16 excitations, 0.125 s apart"},
 		{func(s *sailor) { s.header.SliceCode = 0 }, ""},
 	} {
 		dir := crewDataset(t, func(s *sailor) { delete(s.sidecar, "SliceTiming"); c.change(s) })
