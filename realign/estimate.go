@@ -738,14 +738,16 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 						continue
 					}
 					q := applyAffine(&b, float64(v%e.g.N[0]), float64(v/e.g.N[0]%e.g.N[1]), float64(k))
-					deep := e.g.depth(q)
-					in := deep >= -0.5
+					w, in := 1.0, true
+					if !e.g.wellInside(&q) {
+						deep := e.g.depth(q)
+						w, in = edgeWeight(deep), deep >= -0.5
+					}
 					if in {
 						s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
 						in = !(s > 0 && weak[s-1] || s < len(weak) && weak[s])
 					}
 					if in {
-						w := edgeWeight(deep)
 						sum[v] += float64(w * float64(buf[i][v]))
 						full[v] += w
 						count[v]++
@@ -771,6 +773,14 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 	return image, unknown, nil
 }
 
+// wellInside reports whether a voxel coordinate keeps clear of the planes at the
+// field's ends that a spline bends: what most points do.
+func (g *Grid) wellInside(x *[3]float64) bool {
+	return x[0] >= bentPlanes && x[0] <= float64(g.N[0]-1)-bentPlanes &&
+		x[1] >= bentPlanes && x[1] <= float64(g.N[1]-1)-bentPlanes &&
+		x[2] >= bentPlanes && x[2] <= float64(g.N[2]-1)-bentPlanes
+}
+
 // depth is how far a voxel coordinate lies inside the outermost voxel centres,
 // in voxels; below 0 it lies outside.
 func (g Grid) depth(x [3]float64) float64 {
@@ -785,7 +795,7 @@ func (g Grid) depth(x [3]float64) float64 {
 // much that all of it counts in full: its ends do.
 func (g Grid) deepRow(m *[16]float64, j, k int) bool {
 	a, b := applyAffine(m, 0, float64(j), float64(k)), applyAffine(m, float64(g.N[0]-1), float64(j), float64(k))
-	return g.depth(a) >= bentPlanes && g.depth(b) >= bentPlanes
+	return g.wellInside(&a) && g.wellInside(&b)
 }
 
 // edgeWeight is what a volume counts in an average at a point so deep inside

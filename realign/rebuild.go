@@ -276,15 +276,18 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 				x := [3]float64{float64(i % n0), float64(i / n0 % n1), float64(i / (n0 * n1))}
 				v := m.at(x[0], x[1], x[2], g.next(x[axis]))
 				g.was(x[axis], v[axis])
-				deep := e.g.depth(v)
-				ok := deep >= -0.5
+				counts, ok := 1.0, true
+				if !e.g.wellInside(&v) {
+					deep := e.g.depth(v)
+					counts, ok = edgeWeight(deep), deep >= -0.5
+				}
 				if ok {
 					s := int(v[axis] + 1)
 					ok = !(s > 0 && weak[n][s-1] || s < len(weak[n]) && weak[n][s])
 				}
 				weight[b][q] = 0
 				if ok {
-					weight[b][q] = float32(edgeWeight(deep))
+					weight[b][q] = float32(counts)
 					w.s.add(&w.b, v[0], v[1], v[2])
 					w.to = append(w.to, int32(q))
 				}
