@@ -120,14 +120,10 @@ func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
 				}
 				fi := float64(i)
 				y := [3]float64{o[0] + float64(b[0]*fi), o[1] + float64(b[4]*fi), o[2] + float64(b[8]*fi)}
-				if !t.inMargin(y) {
+				near, ok := t.see(&m.b, &y)
+				if !ok {
 					continue
 				}
-				near := t.nearest(y)
-				if !t.usable[near] {
-					continue
-				}
-				t.s.add(&m.b, y[0], y[1], y[2])
 				m.at = append(m.at, [3]int32{int32(i), int32(j), int32(k)})
 				m.slice = append(m.slice, int32(slice))
 				m.near = append(m.near, int32(near))

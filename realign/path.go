@@ -590,14 +590,10 @@ func (e *pathEstimator) gather(w *slotWork, n int, slices []int, pose Pose) (end
 					}
 					fx := float64(x)
 					at := [3]float64{o[0] + float64(b[0]*fx), o[1] + float64(b[4]*fx), o[2] + float64(b[8]*fx)}
-					if !t.inMargin(at) {
+					near, ok := t.see(&w.b, &at)
+					if !ok {
 						continue
 					}
-					near := t.nearest(at)
-					if !t.usable[near] {
-						continue
-					}
-					t.s.add(&w.b, at[0], at[1], at[2])
 					w.val = append(w.val, vol[row+x])
 					w.near = append(w.near, int32(near))
 					w.gain = append(w.gain, float32(bright+float64(gain.step*fx)))

@@ -270,7 +270,11 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 	local := make([]slotData, len(data))
 	shift := make([]params, c.period) // change of the offsets
 	ok := false
-	for round := range retunes + 1 {
+	again := retunes
+	if !c.fresh && !c.afresh {
+		again = 1 // jerks have been found; strengths and weights only follow
+	}
+	for round := range again + 1 {
 		for s := range data {
 			local[s] = data[s].moved(&shift[s%c.period])
 		}
@@ -295,7 +299,7 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 			}
 			c.reweight(next)
 		}
-		if round < retunes {
+		if round < again {
 			c.offsets(data, shift)
 		}
 		if c.fresh && round == 0 {
