@@ -338,7 +338,14 @@ func (p *Plan) standard(po *posed, s *loaded) (ref []float32, mask []bool, centr
 		if p.Settings.Reference.Word == "mean" {
 			return po.path.Reference, po.est.Mask, po.est.Centre // sharper, along a path
 		}
-		return po.est.Reference, po.est.Mask, po.est.Centre // copies of its own, never parts of the series
+		ref = po.est.Reference // a copy of its own, never part of the series
+		if k := po.est.Scale; k != 1 {
+			ref = append([]float32{}, ref...)
+			for i := range ref {
+				ref[i] /= k // a power of two: what was given comes back bit for bit
+			}
+		}
+		return ref, po.est.Mask, po.est.Centre
 	}
 	nv := len(s.data) / s.nt
 	pick := func(t int) []float32 { return append([]float32{}, s.data[t*nv:(t+1)*nv]...) }

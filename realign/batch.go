@@ -70,7 +70,7 @@ func sized[T any](v []T, n int) []T {
 	return v[:n]
 }
 
-// median returns the upper median of values of at least zero, by their bits, which
+// medianOf returns the upper median of values of at least zero, by their bits, which
 // are in the order of the values: eleven, eleven and ten of them at a time. It
 // changes nothing. 0 for no values.
 func medianOf(v []float32) float32 {

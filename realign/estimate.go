@@ -72,6 +72,10 @@ type Estimate struct {
 	ReferenceIndex int        // the volume at whose pose the reference stands; -1 for an external one
 	Passes         int        // how often every volume was matched
 	Parameters     []Parameter
+	// Scale is what an external reference was multiplied by to be about as bright as
+	// the series: a power of two. Reference and the gains are those after it. 1 for
+	// any other reference.
+	Scale float32
 
 	// Progress, if not nil, is told what [EstimatePath] and [PathEstimate.Rebuilt] have
 	// done of their work, as with [Options]. EstimateVolumes leaves it nil.
@@ -179,9 +183,9 @@ type estimator struct {
 
 	padded, nearPadding []bool // slices; nil: none
 
-	sigma   float64 // mm, fine
-	scratch []*workspace
-	coarse  Grid
+	smoothing float64 // mm, of the fine level
+	scratch   []*workspace
+	coarse    Grid
 }
 
 // workspace is what one worker owns.
@@ -193,7 +197,7 @@ type workspace struct {
 
 func (e *estimator) prepare() {
 	edge := e.g.edges()
-	e.sigma = min(fineMost, fineShare*max(edge[0], edge[1], edge[2]))
+	e.smoothing = min(fineMost, fineShare*max(edge[0], edge[1], edge[2]))
 	// Coarse samples stand about 8 mm apart, one sigma, but no axis is thinned
 	// to fewer than 8 planes.
 	var stride [3]int
@@ -203,7 +207,7 @@ func (e *estimator) prepare() {
 	e.scratch = make([]*workspace, e.workers)
 	for i := range e.scratch {
 		w := &workspace{
-			fine:   newSmoother(e.g, e.sigma, [3]int{1, 1, 1}),
+			fine:   newSmoother(e.g, e.smoothing, [3]int{1, 1, 1}),
 			coarse: newSmoother(e.g, coarseSigma, stride),
 		}
 		w.vFine = make([]float32, e.g.voxels())
@@ -247,7 +251,16 @@ func (e *estimator) run() (*Estimate, error) {
 		if len(e.opt.External) != e.g.voxels() {
 			panic("realign: external reference and grid differ in size")
 		}
-		return e.against(e.opt.External, -1)
+		k := e.brightness()
+		image := make([]float32, len(e.opt.External))
+		for i, v := range e.opt.External {
+			image[i] = float32(v * k)
+		}
+		est, err := e.against(image, -1)
+		if err == nil {
+			est.Scale = k
+		}
+		return est, err
 	case First:
 		return e.against(e.volume(0), 0)
 	case Middle:
@@ -256,6 +269,38 @@ func (e *estimator) run() (*Estimate, error) {
 		return e.against(e.volume(e.opt.Index), e.opt.Index)
 	}
 	return e.againstMean()
+}
+
+// brightness is the power of two by which an external reference comes nearest to the
+// brightness of the series: thresholds and noise are then in like units, and nothing
+// is rounded.
+func (e *estimator) brightness() float32 {
+	mean := func(v []float32) float64 {
+		sum, n := 0.0, 0.0
+		for i, in := range HeadMask(e.g, v) {
+			if in {
+				sum += float64(v[i])
+				n++
+			}
+		}
+		return sum / max(n, 1)
+	}
+	own, other := mean(e.volume(e.nt/2)), mean(e.opt.External)
+	k := float32(1)
+	if !(own > 0 && other > 0) {
+		return k
+	}
+	for range 60 {
+		switch r := own / float64(other*float64(k)); {
+		case r > math.Sqrt2:
+			k *= 2
+		case r < math.Sqrt2/2:
+			k /= 2
+		default:
+			return k
+		}
+	}
+	return k
 }
 
 // fineEffort is that of the pass whose poses are kept.
@@ -886,11 +931,11 @@ func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimat
 		}
 	}
 	return &Estimate{
-		Volumes: vols, Reference: append([]float32(nil), m.image...), Mask: m.mask, Centre: m.centre,
+		Volumes: vols, Scale: 1, Reference: append([]float32(nil), m.image...), Mask: m.mask, Centre: m.centre,
 		ReferenceIndex: index, Passes: passes, unknown: m.unknown,
 		Parameters: []Parameter{
 			{"coarse_gaussian_mm", coarseSigma},
-			{"fine_gaussian_mm", e.sigma},
+			{"fine_gaussian_mm", e.smoothing},
 			{"margin_voxels", fineMargin},
 			{"rim_voxels", rim},
 			{"tolerance_mm", fineTolerance},

@@ -19,8 +19,8 @@ func gainOf(gain *[4]float64, fromCentre [3]float64) float64 {
 // to the times wanted (s from each volume's start): [volume][time], by the kernel
 // that moves the slices themselves. What the gains are uncertain by is then taken
 // out of a slice and, once that has been moved, put back as it was. Gains of lost
-// volumes lie between those of their neighbours; so does nothing else where the
-// run is too short to be moved.
+// volumes lie between those of their neighbours. A run too short to be moved in time
+// keeps the gains of its volumes.
 func gainsAt(gains [][4]float64, lost []bool, s slicetime.Schedule, times []float64, opt slicetime.Options) [][][4]float64 {
 	nt, n := len(gains), len(times)
 	data := make([]float32, 4*n*nt)
@@ -39,10 +39,13 @@ func gainsAt(gains [][4]float64, lost []bool, s slicetime.Schedule, times []floa
 	for k, t := range times {
 		mirrored.Times[k] = mid - (t - mid)
 	}
-	moved := append([]float32(nil), data...)
-	// It fails for a run too short only: the gains then stay as they are.
-	if err := slicetime.Correct(context.Background(), moved, 4, 1, n, nt, mirrored, mid, opt, 1); err == nil {
-		data = moved
+	if nt >= slicetime.MinVolumes {
+		moved := append([]float32(nil), data...)
+		// It fails for times that no volume of the run is near to (the slices themselves
+		// cannot be moved there either): the gains then stay as they are.
+		if err := slicetime.Correct(context.Background(), moved, 4, 1, n, nt, mirrored, mid, opt, 1); err == nil {
+			data = moved
+		}
 	}
 	at := make([][][4]float64, nt)
 	for v := range at {

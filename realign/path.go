@@ -73,7 +73,7 @@ const (
 	pathMargin          = 2.0  // planes left out at each field edge: slices are not smoothed, and a spline is bent there
 	lastProjections     = 2    // of the last pass; more sharpen no further
 	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
-	draftTolerance      = 0.01 // mm, of the first pass, whose template moves poses by more
+	draftTolerance      = 2e-3 // mm, of the first pass, whose template moves poses by more
 	// fewestData: a path is only worth its name where most slots see the head.
 	fewestData = 0.5
 	// fewestAligned: an average of one or two volumes fits those volumes whatever
@@ -145,7 +145,7 @@ type pathEstimator struct {
 	voxel    []float32      // weight of each voxel of the template; nil: all alike
 	thin     bool           // every other pixel only
 	others   bool           // with thin: the other half of them
-	sigma    float64        // noise as seen so far
+	noise    float64        // as seen so far, in units of the volumes
 	scale    []float64      // residual scale of each slot, 0: no data
 	// sliceScale is the same by volume and slice.
 	sliceScale []float64
@@ -202,6 +202,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	e.image = append([]float32(nil), e.est.Reference...)
 	e.setTemplate(e.image)
 	c := newChain(e.times, len(e.shots))
+	c.ctx, c.workers = e.ctx, e.workers
 	e.chain = c
 	slots := make([]slotData, len(e.times))
 	e.thin = true
@@ -218,7 +219,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	if float64(seen) < float64(fewestData*float64(posed)) {
 		return fallBack(fmt.Sprintf("only %d of the %d excitations of volumes that are not lost see enough of the head", seen, posed)), nil
 	}
-	e.sigma = e.noise()
+	e.noise = e.usualNoise()
 	for pass := 0; ; pass++ {
 		// The first pass ends with a template that is still to change: half of the
 		// pixels will do.
@@ -235,9 +236,12 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 				return nil, err
 			}
 			out.LastStep, out.Evidence = c.update(slots, e.p)
+			if err := e.ctx.Err(); err != nil {
+				return nil, err
+			}
 			e.setPoses(c.offset)
 			out.Iterations++
-			e.sigma = e.noise()
+			e.noise = e.usualNoise()
 			if out.LastStep < pathTolerance || pass == 0 && out.LastStep < draftTolerance {
 				break
 			}
@@ -290,7 +294,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	}
 	e.expect(c, slots, out.Expected)
 	e.holdEnds(out.Expected)
-	out.Sigma, out.Settled = e.sigma, out.LastStep < settledStep
+	out.Sigma, out.Settled = e.noise, out.LastStep < settledStep
 	if e.explain[1] > 0 {
 		out.Explained = 1 - e.explain[0]/e.explain[1]
 	}
@@ -341,7 +345,7 @@ func (e *pathEstimator) holdAgainst(out *PathEstimate) error {
 	explain := e.explain
 	// What interpolation leaves in a run without noise says nothing about poses.
 	floor := float64(quietest * e.signal)
-	unit := float64(e.sigma*e.sigma) + float64(floor*floor)
+	unit := float64(e.noise*e.noise) + float64(floor*floor)
 	e.others = true
 	for _, plain := range []bool{true, false} {
 		if err := e.measure(idle, plain); err != nil {
@@ -451,7 +455,7 @@ func (e *pathEstimator) lay() {
 	e.poses = make([]Pose, len(e.p))
 	e.scale = make([]float64, len(e.p))
 	e.sliceScale = make([]float64, e.nt*e.g.N[e.schedule.Axis])
-	e.signal = math.Sqrt(meanSquare(e.est.Reference, e.est.Mask))
+	e.signal = math.Sqrt(meanSquare(e.est.Reference, e.est.Mask)) * e.usualGain()
 	e.at = make([]params, len(e.p))
 	e.setPoses(nil)
 	e.work = make([]*slotWork, e.workers)
@@ -708,8 +712,8 @@ func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out
 	// A slot that fits badly because its pose is still off must pull with full
 	// force, or the path stays where it is; one that fits so badly that it must be
 	// corrupt counts by its own scale.
-	if e.sigma > 0 && scale < float64(corruptScale*e.sigma) {
-		scale = min(scale, float64(pullScale*e.sigma))
+	if e.noise > 0 && scale < float64(corruptScale*e.noise) {
+		scale = min(scale, float64(pullScale*e.noise))
 	}
 	scale = max(scale, float64(quietest*level))
 	toPathParams(&h, &g, pose, e.at[i], 1/float64(scale*scale), out)
@@ -800,6 +804,7 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 					continue
 				}
 				best = float64(best * 0.9)
+				offset := e.chain.offset[s]
 				was := e.scale[i]
 				wasSlices := slices.Clone(e.sliceScale[n*nz:][:nz])
 				for _, j := range []int{i - 1, i + 1} {
@@ -807,7 +812,11 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 						continue
 					}
 					var d slotData
-					e.slot(e.work[worker], n, i, shot.Slices, e.poses[j], &d)
+					q := e.p[j]
+					for k, v := range offset {
+						q[k] += v
+					}
+					e.slot(e.work[worker], n, i, shot.Slices, e.fromParams(q), &d)
 					if e.scale[i] > 0 && e.scale[i] < best {
 						best, to[i] = e.scale[i], j
 					}
@@ -843,8 +852,24 @@ const (
 	relocations = 4 // a jerk can be that many slots off
 )
 
-// noise is the median over the slots of the residual scale.
-func (e *pathEstimator) noise() float64 {
+// usualGain is the median brightness of the volumes that are not lost, against the
+// reference.
+func (e *pathEstimator) usualGain() float64 {
+	var g []float64
+	for _, v := range e.est.Volumes {
+		if v.State != Lost {
+			g = append(g, v.Gain[0])
+		}
+	}
+	if len(g) == 0 {
+		return 1
+	}
+	slices.Sort(g)
+	return max(g[len(g)/2], faintest)
+}
+
+// usualNoise is the median over the slots of the residual scale.
+func (e *pathEstimator) usualNoise() float64 {
 	var seen []float32
 	for _, s := range e.scale {
 		if s > 0 {
@@ -923,17 +948,23 @@ func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt i
 	// Outside the region, and where nothing reaches, the plain mean.
 	start := *est
 	start.Reference = make([]float32, nv)
-	for i := range start.Reference {
-		sum, count := 0.0, 0.0
-		for n := range nt {
-			if est.Volumes[n].State == Aligned {
-				sum += float64(data[n*nv+i])
-				count++
+	use := est.used()
+	const block = 4096
+	err := parallel.For(ctx, e.workers, (nv+block-1)/block, func(_, k int) error {
+		from, to := k*block, min(nv, (k+1)*block)
+		var sum [block]float64
+		for _, n := range use {
+			for i, v := range data[n*nv+from : n*nv+to] {
+				sum[i] += float64(v)
 			}
 		}
-		if count > 0 {
-			start.Reference[i] = float32(sum / count)
+		for i := from; i < to && len(use) > 0; i++ {
+			start.Reference[i] = float32(sum[i-from] / float64(len(use)))
 		}
+		return nil
+	})
+	if err != nil {
+		return nil, err
 	}
 	e.est = &start
 	e.setTemplate(start.Reference)

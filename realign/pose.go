@@ -236,7 +236,7 @@ func (p Pose) Log() Twist {
 	kv := cross(tw.W, p.T)
 	kkv := cross(tw.W, kv)
 	for i := range tw.V {
-		tw.V[i] = p.T[i] - kv[i]/2 + float64(e*kkv[i])
+		tw.V[i] = p.T[i] - float64(kv[i]/2) + float64(e*kkv[i])
 	}
 	return tw
 }

@@ -63,22 +63,24 @@ const (
 // but the path that is reported, and that the next template is built along, is without
 // them.
 type chain struct {
-	period int
-	offset []params
-	bend   [][3]float64 // of slot s: coefficients of p[s-1], p[s], p[s+1]
-	w      []float64    // Student-t weights
-	lt     float64
-	lr     float64
-	m      band
-	delta  []float64
-	twin   *chain // scratch: the same chain at other strengths
-	fresh  bool   // strengths have never been tuned
-	afresh bool   // strengths are to be sought from the soft end too, at the next update
+	period  int
+	offset  []params
+	bend    [][3]float64 // of slot s: coefficients of p[s-1], p[s], p[s+1]
+	w       []float64    // Student-t weights
+	lt      float64
+	lr      float64
+	m       band
+	delta   []float64
+	twin    *chain // scratch: the same chain at other strengths
+	ctx     context.Context
+	workers int
+	fresh   bool // strengths have never been tuned
+	afresh  bool // strengths are to be sought from the soft end too, at the next update
 }
 
 func newChain(times []float64, period int) *chain {
 	n := len(times)
-	c := &chain{period: period, offset: make([]params, period), bend: make([][3]float64, n), w: make([]float64, n), lt: startShift, lr: startTurn, m: make(band, poseUnknowns*n), delta: make([]float64, poseUnknowns*n), fresh: true}
+	c := &chain{period: period, offset: make([]params, period), bend: make([][3]float64, n), w: make([]float64, n), lt: startShift, lr: startTurn, m: make(band, poseUnknowns*n), delta: make([]float64, poseUnknowns*n), fresh: true, ctx: context.Background(), workers: 1}
 	// In units of the usual gap, that between the excitations of a volume: strengths
 	// then mean the same with a pause between volumes and without.
 	usual := 1.0
@@ -189,11 +191,11 @@ func (c *chain) step(data []slotData, p []params) (evidence float64, ok bool) {
 			for i := range 3 {
 				v += float64(b[i] * c.delta[poseUnknowns*(s-1+i)+k])
 			}
-			evidence -= float64(float64(float64(c.w[s]*c.strength(k))*v)*v) / 2
+			evidence -= float64(float64(float64(float64(c.w[s]*c.strength(k))*v)*v) / 2)
 		}
 	}
 	evidence -= c.m.logDiagonal()
-	evidence += float64(1.5*float64(n-2)) * (detmath.Log(c.lt) + detmath.Log(c.lr))
+	evidence += float64(float64(1.5*float64(n-2)) * (detmath.Log(c.lt) + detmath.Log(c.lr)))
 	return evidence, true
 }
 
@@ -224,7 +226,7 @@ func (c *chain) tune(data []slotData, p []params) {
 			return
 		}
 	}
-	// Up and down are tried side by side, whatever the number of workers.
+	// Up and down are tried side by side.
 	if c.twin == nil {
 		c.twin = &chain{bend: c.bend, w: c.w, m: make(band, len(c.m)), delta: make([]float64, len(c.delta))}
 	}
@@ -238,8 +240,9 @@ func (c *chain) tune(data []slotData, p []params) {
 				c.lt, c.lr = min(mostShift, float64(lt*up[0])), min(mostTurn, float64(lr*up[1]))
 				c.twin.lt, c.twin.lr = lt/up[0], lr/up[1]
 				capped := c.lt == lt && c.lr == lr
-				// It cannot fail: neither half does, and nothing cancels.
-				_ = parallel.For(context.Background(), len(side), len(side), func(_, i int) error {
+				// A half cannot fail. Where ctx has ended nothing is better than what
+				// there is, and the caller notices.
+				_ = parallel.For(c.ctx, min(len(side), c.workers), len(side), func(_, i int) error {
 					if i == 0 && capped {
 						return nil
 					}

@@ -99,17 +99,7 @@ func SlotMap(g Grid, axis int, pose func(slice int) Pose) Map { return newSlotMa
 // to be made anew (draft); what it fails to predict is alike in all, so enough of
 // them tell.
 func (e *pathEstimator) rebuild(projections int, draft bool) error {
-	// With a reference of another kind no volume may be aligned: doubtful ones then.
-	from := Aligned
-	if countState(e.est.Volumes, Aligned) == 0 {
-		from = Doubtful
-	}
-	var use []int
-	for n, v := range e.est.Volumes {
-		if v.State == from {
-			use = append(use, n)
-		}
-	}
+	use := e.est.used()
 	var at []int
 	for i, in := range e.region {
 		if in {
@@ -144,8 +134,10 @@ func (e *pathEstimator) rebuild(projections int, draft bool) error {
 			}
 		}
 		e.image = image
-		e.setTemplate(image)
-		if round == projections {
+		if draft || round < projections {
+			e.setTemplate(image)
+		}
+		if draft && round == projections {
 			e.weigh(at, mean, square, count)
 		}
 	}
@@ -176,6 +168,21 @@ func rebuildPieces(nt, projections int, draft bool) int {
 	return nt + some*projections
 }
 
+// used lists the volumes that averages are of: those aligned, or, where none is (a
+// reference of another kind), those that are doubtful.
+func (e *Estimate) used() (use []int) {
+	from := Aligned
+	if countState(e.Volumes, Aligned) == 0 {
+		from = Doubtful
+	}
+	for n, v := range e.Volumes {
+		if v.State == from {
+			use = append(use, n)
+		}
+	}
+	return use
+}
+
 // weigh sets the weights of the template's voxels by what varies there of
 // itself.
 func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {
@@ -186,7 +193,8 @@ func (e *pathEstimator) weigh(at []int, mean, square []float32, count []int32) {
 			v[i] = float32((float64(square[q]) - float64(m*m)) * n / (n - 1))
 		}
 	}
-	e.voxel, _ = quietWeights(e.g, v, e.est.Mask, meanSquare(e.image, e.est.Mask), float64(e.sigma*e.sigma))
+	noise := e.noise / e.usualGain() // in units of the reference, as the variance
+	e.voxel, _ = quietWeights(e.g, v, e.est.Mask, meanSquare(e.image, e.est.Mask), float64(noise*noise))
 }
 
 // spoiltScale: as z > 1.78 in the volume's match, where a slice loses half of

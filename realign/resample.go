@@ -1,7 +1,7 @@
 package realign
 
 // Resampler interpolates volumes of one size by B-splines with exact prefilter
-// and the boundary rule [Odd]. It owns its scratch and belongs to one
+// and the boundary rule of [kernel.Prefilter]. It owns its scratch and belongs to one
 // goroutine.
 type Resampler struct {
 	s       *spline

@@ -9,7 +9,7 @@ import (
 
 // smoother filters volumes of one grid by a Gaussian that is isotropic in mm,
 // and can thin them out on the way. Past the field's edge samples continue by
-// the rule [Odd]. It owns its scratch and belongs to one goroutine.
+// the rule of [kernel.Prefilter]. It owns its scratch and belongs to one goroutine.
 type smoother struct {
 	in, out [3]int
 	first   [3]int // input index of output 0
@@ -172,7 +172,7 @@ func (s *smoother) across(dst, src []float32, w, n, m, axis int) {
 	}
 }
 
-// oddWalk expresses the sample at an index outside [0, n) under the rule [Odd]:
+// oddWalk expresses the sample at an index outside [0, n) under the rule of [kernel.Prefilter]:
 // ends[0] f(0) + ends[1] f(n-1) + sign f(i).
 func oddWalk(k, n int) (i int, sign float32, ends [2]float32) {
 	sign = 1

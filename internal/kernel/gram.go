@@ -3,7 +3,7 @@ package kernel
 // MostRows is the largest number of rows of [Gram].
 const MostRows = 12
 
-// gramBlock points are widened at a time: all rows twice then fit the fastest cache.
+// gramPoints points are widened at a time: all rows twice then fit the fastest cache.
 const gramPoints = 64
 
 // Gram adds weighted products of rows to sum: for a <= b, in the order (0,0),
