@@ -436,7 +436,6 @@ func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
 func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
 	t := p.Timing
 	nv := len(ref)
-	lo, hi := extent(data)
 	dt := nifti.Float32
 	if p.Settings.Store == "int16" {
 		dt = nifti.Int16
@@ -444,7 +443,7 @@ func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data 
 	series := p.Header.Derived(nt, false, dt, t.AtOneInstant && p.Settings.Time != "none", t.StartTime)
 	p.correctVolumeTime(series)
 	if dt == nifti.Int16 {
-		series.SclSlope, series.SclInter = nifti.Int16Scaling(lo, hi)
+		series.SclSlope, series.SclInter = nifti.Int16Scaling(extent(data))
 	}
 	single := func(dt nifti.Datatype) *nifti.Header { return p.Header.Derived(1, true, dt, true, 0) }
 	inside := make([]float32, nv)
