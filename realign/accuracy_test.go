@@ -216,9 +216,6 @@ func TestAccuracyVolumeBias(t *testing.T) {
 	t.Log("| field | shift / turn | seed | rms um | worst volume um | bar |")
 	for _, f := range fields {
 		for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.0}, {3, 3, 1.5}, {15, 15, 2.5}} {
-			if c.shift == 3 && !*accuracyLong {
-				continue
-			}
 			for _, seed := range seeds {
 				poses := randomPoses(200+seed, 7, c.shift, c.turn)
 				data := scan(t, f.g, poses, 0, func(s *phantom.Scan) { s.Head = head(seed) })
@@ -239,9 +236,6 @@ func TestAccuracyVolumeNoise(t *testing.T) {
 	t.Log("| field | shift / turn | seed | bound um | bound of what is seen | rms um | ratio | ratio to what is seen | bar |")
 	for _, f := range fields {
 		for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.12}, {3, 3, 1.12}, {15, 15, 1.25}} {
-			if c.shift == 3 && !*accuracyLong {
-				continue
-			}
 			var ratios []float64
 			for _, seed := range seeds {
 				poses := randomPoses(300+seed, n, c.shift, c.turn)
@@ -419,13 +413,15 @@ type pathCase struct {
 	order  string // of the slices
 	tr     float64
 	bar    float64
-	long   bool // only in the long set
+	long   bool    // only in the long set
+	holds  float64 // what the long set reaches where that is not the bar
 }
 
 // studyBound is the bound of one volume's pose (um) for the head on which the bars
 // of the path in um were set, on the same grid at the same noise. Our heads tell
-// poses apart less well; a figure that misses its bar must still reach it after
-// scaling by the ratio of the bounds.
+// poses apart less well. Over 60 volumes all bars but those of breathing hold as they
+// are; over the 14 or 20 of the small set a figure that misses its bar must still reach
+// it after scaling by the ratio of the bounds.
 const studyBound = 5.8
 
 // A pose for every excitation, everything from the data.
@@ -437,21 +433,21 @@ func TestAccuracyPath(t *testing.T) {
 	t.Log("| schedule | motion | seed | one pose a volume um | linear between | path rms | path worst | expected | ratio to expected | bar um | bar ratio | bar um of this head |")
 	bounds := map[string]float64{}
 	for _, c := range []pathCase{
-		{"still", "interleaved", 2, 7, true},
-		{"walk", "interleaved", 2, 10, true},
-		{"breathing", "interleaved", 2, 16, false},
-		{"step", "interleaved", 2, 15, true},
-		{"large walk", "interleaved", 2, 30, true},
-		{"walk, active", "interleaved", 2, 16, false},
-		{"walk", "ascending", 2, 10, true},
-		{"step", "ascending", 2, 15, true},
-		{"large walk", "ascending", 2, 30, false},
-		{"walk", "sagittal", 2, 10, false},
-		{"step", "sagittal", 2, 15, true},
-		{"still", "3 bands", 0.8, 5, true},
-		{"walk", "3 bands", 0.8, 7, false},
-		{"breathing", "3 bands", 0.8, 10, true},
-		{"step", "3 bands", 0.8, 8, true},
+		{"still", "interleaved", 2, 7, true, 0},
+		{"walk", "interleaved", 2, 10, true, 0},
+		{"breathing", "interleaved", 2, 16, false, 20},
+		{"step", "interleaved", 2, 15, false, 0},
+		{"large walk", "interleaved", 2, 30, true, 0},
+		{"walk, active", "interleaved", 2, 16, false, 0},
+		{"walk", "ascending", 2, 10, false, 0},
+		{"step", "ascending", 2, 15, true, 0},
+		{"large walk", "ascending", 2, 30, false, 0},
+		{"walk", "sagittal", 2, 10, false, 0},
+		{"step", "sagittal", 2, 15, true, 0},
+		{"still", "3 bands", 0.8, 5, true, 0},
+		{"walk", "3 bands", 0.8, 7, false, 0},
+		{"breathing", "3 bands", 0.8, 10, true, 13},
+		{"step", "3 bands", 0.8, 8, false, 0},
 	} {
 		if c.long && !*accuracyLong {
 			continue
@@ -503,6 +499,10 @@ func TestAccuracyPath(t *testing.T) {
 				t.Logf("bound of one volume's pose on %s: %.2f um", key, bounds[key])
 			}
 			scaled := c.bar * bounds[key] / studyBound
+			holds := c.holds
+			if !*accuracyLong {
+				holds = scaled
+			}
 			ratio := 1.5
 			if motion == "large walk" {
 				ratio = 2.2
@@ -512,7 +512,7 @@ func TestAccuracyPath(t *testing.T) {
 				ratioBar = verdict(t, c.motion+", ratio to expected", e/expected, ratio, 0)
 			}
 			t.Logf("| TR %g s, %s | %s | %d | %.1f | %.1f | %.1f | %.1f | %.1f | %.2f | %s | %s | %.1f |", c.tr, c.order, c.motion, seed, vol, lin, e, w, expected, e/expected,
-				verdict(t, c.motion+", "+c.order, e, c.bar, scaled), ratioBar, scaled)
+				verdict(t, c.motion+", "+c.order, e, c.bar, holds), ratioBar, scaled)
 		}
 	}
 }
@@ -682,7 +682,7 @@ func TestAccuracyJoint(t *testing.T) {
 	}
 	steps := func(seed uint64, s float64) phantom.Motion {
 		m := walk(seed, 0.01)
-		for i := range volumes(24) / 6 { // one in about ten seconds
+		for i := range volumes(30) / 6 { // one in about ten seconds
 			at := 9.3 + 10.4*float64(i) + 0.7*float64(i%3)
 			sg := s * float64(1-2*(i%2))
 			m = phantom.Jerk(m, at, [3]float64{0.5 * sg, 0.6 * sg, 0.3 * sg}, [3]float64{0.006 * sg, 0, 0.004 * sg}, c)
@@ -700,14 +700,14 @@ func TestAccuracyJoint(t *testing.T) {
 		amplitude, delayMS float64 // bars; 0: those up to 1 mm
 		tr                 float64 // 0: 2 s, interleaved
 	}{
-		{name: "still", m: func(uint64) phantom.Motion { return nil }, bar: 0.02, slow: true},
+		{name: "still", m: func(uint64) phantom.Motion { return nil }, bar: 0.02},
 		{name: "walk 0.3 mm", m: func(s uint64) phantom.Motion { return walk(s, 0.3) }, bar: 0.055, slow: true},
 		{name: "walk 1 mm", m: func(s uint64) phantom.Motion { return walk(s, 1) }, bar: 0.08},
 		{name: "breathing 0.3 mm", m: func(uint64) phantom.Motion {
 			return phantom.Breathing(0.3, [3]float64{0, 0.3, 0.15}, [3]float64{0.003, 0, 0}, c)
 		}, bar: 0.09, times: 5},
 		{name: "steps 1 mm", m: func(s uint64) phantom.Motion { return steps(s, 1) }, bar: 0.09, times: 5, holdsTimes: 3},
-		{name: "walk 3 mm", m: func(s uint64) phantom.Motion { return walk(s, 3) }, bar: 0.15, amplitude: 3.5, delayMS: 80, slow: true},
+		{name: "walk 3 mm", m: func(s uint64) phantom.Motion { return walk(s, 3) }, bar: 0.15, amplitude: 3.5, delayMS: 80},
 		{name: "steps 3 mm", m: func(s uint64) phantom.Motion { return steps(s, 3) }, bar: 0.15, amplitude: 3.5, delayMS: 80, slow: true},
 		{name: "breathing 0.3 mm, TR 0.8 s", m: func(uint64) phantom.Motion {
 			return phantom.Breathing(0.3, [3]float64{0, 0.3, 0.15}, [3]float64{0.003, 0, 0}, c)
@@ -717,7 +717,7 @@ func TestAccuracyJoint(t *testing.T) {
 			continue
 		}
 		for _, seed := range seeds {
-			nt, tr, times := volumes(24), 2.0, phantom.Interleaved(24, 2)
+			nt, tr, times := volumes(30), 2.0, phantom.Interleaved(24, 2)
 			if k.tr > 0 {
 				nt, tr, times = volumes(60), k.tr, phantom.Multiband(24, 3, k.tr)
 			}
