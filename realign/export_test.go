@@ -188,3 +188,28 @@ func PathPose(centre [3]float64, q Params) Pose {
 func PathJacobian(centre [3]float64, q Params) (shift, turn [9]float64) {
 	return jacobian(PathPose(centre, q), q)
 }
+
+// HeldOut compares one pose a volume with poses of the slots on held-out pixels, as
+// EstimatePath does.
+func HeldOut(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, poses []Pose) (volumes, path, allowed float64) {
+	e := newPathEstimator(context.Background(), g, data, nt, s, est, 2)
+	e.shots = s.Shots()
+	e.lay()
+	e.setTemplate(est.Reference)
+	e.thin = true
+	must := func(err error) {
+		if err != nil {
+			panic(err)
+		}
+	}
+	must(e.measure(make([]slotData, len(e.p)), true))
+	e.noise = e.usualNoise()
+	var err error
+	volumes, err = e.heldOutVolumes()
+	must(err)
+	copy(e.poses, poses)
+	must(e.rebuild(draftProjections, true))
+	path, err = e.heldOut(false)
+	must(err)
+	return volumes, path, harmAllowed(countState(est.Volumes, Aligned))
+}
