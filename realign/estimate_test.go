@@ -181,7 +181,7 @@ func TestVolumesWithin25Micrometres(t *testing.T) {
 }
 
 // Without noise what is left is bias: interpolation, margins, stopping. The
-// tough bars of the method's own study are 1.0, 1.5 and 2.5 um rms.
+// bars set for the method are 1.0, 1.5 and 2.5 um rms.
 func TestBias(t *testing.T) {
 	for _, c := range []struct{ shift, turn, bar float64 }{{1, 1, 1.0}, {3, 3, 1.5}, {15, 15, 2.5}} {
 		poses := randomPoses(2, 6, c.shift, c.turn)

@@ -8,8 +8,8 @@ import (
 )
 
 // The bars here are those set for the kernels from simulation before this code
-// was written ("tough"), on the signals they were set for; where the better one
-// ("moonshot") is reached with room it is the one asserted. Random numbers are
+// was written ("bar"), on the signals they were set for; where the better one
+// ("aim") is reached with room it is the one asserted. Random numbers are
 // seeded, so that the figures repeat. Run with -v to see them.
 
 // toneError is the relative RMS error in the interior (12 samples trimmed at
@@ -49,13 +49,13 @@ func TestInteriorAccuracy(t *testing.T) {
 		bar  float64
 		why  string
 	}{
-		{Options{}, .08, 3e-4, "moonshot"},
-		{Options{}, .30, 3e-4, "moonshot"},
-		{Options{}, .50, 3e-4, "moonshot"},
-		{Options{}, .60, 3e-4, "moonshot"},
-		{Options{}, .70, 3e-4, "moonshot"},
-		{Options{}, .80, 2e-3, "tough"},
-		{Options{}, .90, 1.2e-2, "tough"},
+		{Options{}, .08, 3e-4, "aim"},
+		{Options{}, .30, 3e-4, "aim"},
+		{Options{}, .50, 3e-4, "aim"},
+		{Options{}, .60, 3e-4, "aim"},
+		{Options{}, .70, 3e-4, "aim"},
+		{Options{}, .80, 2e-3, "bar"},
+		{Options{}, .90, 1.2e-2, "bar"},
 		// The table has 6e-4 6e-4 4e-4 5e-4 9e-4 2.5e-2 for one frequency each; here
 		// frequencies run to one bin above it, which matters on the kernel's slope.
 		{Options{Kernel: Sinc}, .08, 1e-3, "table"},
@@ -114,17 +114,17 @@ func TestEndAccuracy(t *testing.T) {
 		one, three float64
 		why        string
 	}{
-		{Fourier, 40, 0, .09, .06, "tough (odd reflection gives .153, .089)"},
-		{Sinc, 40, 0, .09, .06, "tough"},
-		{Fourier, 40, 1, 1.0, 1.0, "tough: end volumes must not gain noise (odd reflection gives 1.4)"},
-		{Sinc, 40, 1, 1.0, 1.0, "tough"},
+		{Fourier, 40, 0, .09, .06, "bar (odd reflection gives .153, .089)"},
+		{Sinc, 40, 0, .09, .06, "bar"},
+		{Fourier, 40, 1, 1.0, 1.0, "bar: end volumes must not gain noise (odd reflection gives 1.4)"},
+		{Sinc, 40, 1, 1.0, 1.0, "bar"},
 		// Around arFull the rule bends without a step, and below it what is asked
 		// of 40 volumes holds for as long as a dozen samples can tell. By simulation
 		// beforehand (another generator, worst of six shifts): .088 at 19 volumes,
 		// .10 at 16, .15 at 10, .23 at 6; odd reflection .14 at each.
-		{Fourier, 21, 0, .09, .06, "tough"},
-		{Fourier, 20, 0, .09, .06, "tough"},
-		{Fourier, 19, 0, .09, .06, "tough"},
+		{Fourier, 21, 0, .09, .06, "bar"},
+		{Fourier, 20, 0, .09, .06, "bar"},
+		{Fourier, 19, 0, .09, .06, "bar"},
 		{Fourier, 16, 0, .105, .065, "simulated, and a twentieth for the draws"},
 		{Fourier, 10, 0, .16, .095, "simulated, and a twentieth for the draws"},
 		{Fourier, 6, 0, .24, .14, "simulated, and a twentieth for the draws"},
@@ -266,7 +266,7 @@ func TestSinusoidsEverySlice(t *testing.T) {
 	bar := func(k Kernel, f float64) float64 {
 		switch {
 		case k == Fourier && f <= .35:
-			return 1e-3 // tough bar up to 0.7 Nyquist
+			return 1e-3 // bar up to 0.7 Nyquist
 		case k == Fourier:
 			return 2e-3 // at 0.8
 		case f <= .35:
