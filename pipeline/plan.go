@@ -119,8 +119,8 @@ const (
 	fixedPerVoxel  = 340
 	workerPerVoxel = 110
 	// bytesPerSlot is what a pose path keeps for each excitation: its poses, what the
-	// images say of it (twice), and the rows of the banded equations (twice).
-	bytesPerSlot = 2600
+	// images say of it (twice), and the rows of the banded equations (three times).
+	bytesPerSlot = 3500
 	// runOverhead stands for the program, tables, compression buffers and
 	// the allocator.
 	runOverhead = 32 << 20
