@@ -826,7 +826,6 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 					continue
 				}
 				best = float64(best * 0.9)
-				offset := e.chain.offset[s]
 				was := e.scale[i]
 				wasSlices := slices.Clone(e.sliceScale[n*nz:][:nz])
 				for _, j := range []int{i - 1, i + 1} {
@@ -834,11 +833,9 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 						continue
 					}
 					var d slotData
-					q := e.p[j]
-					for k, v := range offset {
-						q[k] += v
-					}
-					e.slot(e.work[worker], n, i, shot.Slices, e.fromParams(q), &d)
+					// The neighbour's pose as it stands, with the offset of its shot: that of
+					// the slot's own has taken up part of the jerk.
+					e.slot(e.work[worker], n, i, shot.Slices, e.poses[j], &d)
 					if e.scale[i] > 0 && e.scale[i] < best {
 						best, to[i] = e.scale[i], j
 					}
