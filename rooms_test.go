@@ -14,8 +14,8 @@ import (
 // rooms says, for each package, which of our own packages its code may import.
 // Imports point one way: the command knows the pipeline, the pipeline knows the
 // file formats and the science, the science knows neither files nor names. The
-// leaves may be known to all: fault (values without behaviour), and the two
-// internal ones (arithmetic and loops).
+// leaves may be known to all: fault (values without behaviour), and the
+// internal ones (arithmetic, loops, kernels, decompression).
 var rooms = map[string][]string{
 	"cmd/evenkeel-bench":  {"nifti"},
 	"cmd/evenkeel":        {"pipeline", "dataset", "provenance", "realign", "quality", "phantom"},

@@ -26,12 +26,14 @@
 //
 //     by Gauss-Newton on the pose M <- M exp(d) and the four gain coefficients
 //     b (receive coils stand still while the head moves, so the gain is a
-//     polynomial in scanner coordinates), weighted by slice and by Tukey's
-//     biweight. The template R is the interpolated one: its noise is lower, and
+//     polynomial in scanner coordinates), weighted by slice, by Tukey's
+//     biweight and, in one more pass where it matters, by how much a voxel varies
+//     of itself (variance.go). The template R is the interpolated one: its noise is lower, and
 //     its interpolation does not depend on the volume's noise.
 //
-//  4. For [Mean]: volumes judged aligned are mapped back and averaged, and every
-//     volume is matched again to the average.
+//  4. For [Mean]: volumes judged aligned are mapped back and averaged, what they
+//     see from near their field's edge weighing less, and every volume is matched
+//     again to the average.
 //
 //  5. Each volume is judged: aligned, doubtful or lost, with the reason.
 //     Volumes that are not aligned get another try from their neighbours' poses.
@@ -60,6 +62,7 @@
 // # Incomplete
 //
 // A path needs at least half of the excitations to see the head past the margins:
-// slabs of eight slices and fewer keep one pose a volume. Motion locked to the
-// repetition time is taken for misplaced slices.
+// most slabs of eight slices and fewer keep one pose a volume. Motion locked to the
+// repetition time is taken for misplaced slices. With voxels of 6 mm the path is
+// further off than it expects (docs/accuracy.md).
 package realign
