@@ -40,7 +40,7 @@ func (w *worker) estimatePath(ctx context.Context, p *Plan, g realign.Grid, s *l
 	default:
 		est := *po.est
 		est.Progress = w.within(p, "estimate", volumesShare, 1)
-		po.path, err = realign.EstimatePath(ctx, g, s.data, s.nt, schedule, &est, w.workers)
+		po.path, err = realign.EstimatePath(ctx, g, realign.Floats(s.data, s.nt), schedule, &est, w.workers)
 	}
 	return err
 }
@@ -106,7 +106,7 @@ func (w *worker) joint(ctx context.Context, p *Plan, po *posed, data []float32, 
 		from = rebuilt
 		est := *po.est
 		est.Progress = w.within(p, "joint", 0, rebuilt)
-		again, err := path.Rebuilt(ctx, p.Grid, data, nt, schedule, &est, w.workers)
+		again, err := path.Rebuilt(ctx, p.Grid, realign.Floats(data, nt), schedule, &est, w.workers)
 		if err != nil {
 			return err
 		}

@@ -306,7 +306,7 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 		volumes = volumesShare
 	}
 	opt.Progress = w.within(p, "estimate", 0, volumes)
-	est, err := realign.EstimateVolumes(ctx, g, s.data, s.nt, opt)
+	est, err := realign.EstimateVolumes(ctx, g, realign.Floats(s.data, s.nt), opt)
 	var few *realign.TooFewAligned
 	if errors.As(err, &few) {
 		return nil, &Refused{[]fault.Fault{fault.New("motion-lost", p.Pose.File, "",

@@ -35,7 +35,7 @@ func BenchmarkEstimate(b *testing.B) {
 		b.Run(ref.name, func(b *testing.B) {
 			b.SetBytes(int64(4 * len(data)))
 			for b.Loop() {
-				if _, err := realign.EstimateVolumes(context.Background(), g, data, nt, realign.Options{Reference: ref.kind, SliceAxis: 2, Workers: 1}); err != nil {
+				if _, err := realign.EstimateVolumes(context.Background(), g, realign.Floats(data, nt), realign.Options{Reference: ref.kind, SliceAxis: 2, Workers: 1}); err != nil {
 					b.Fatal(err)
 				}
 			}
@@ -76,7 +76,7 @@ func BenchmarkPath(b *testing.B) {
 	b.Run("estimate", func(b *testing.B) {
 		for b.Loop() {
 			var err error
-			if path, err = realign.EstimatePath(context.Background(), g, data, nt, s, est, 1); err != nil {
+			if path, err = realign.EstimatePath(context.Background(), g, realign.Floats(data, nt), s, est, 1); err != nil {
 				b.Fatal(err)
 			}
 		}

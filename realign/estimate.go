@@ -150,26 +150,30 @@ const (
 	coverage = 0.5
 )
 
-// EstimateVolumes finds one pose for each of the nt volumes in data
-// (data[t*nv:(t+1)*nv] is volume t on grid g, nv its voxel count). data is not
-// changed. It fails with [*TooFewAligned], or with the error of ctx.
-func EstimateVolumes(ctx context.Context, g Grid, data []float32, nt int, opt Options) (*Estimate, error) {
-	nv := g.voxels()
-	if len(data) != nv*nt || nt < 1 {
-		panic("realign: series and grid differ in size")
+// EstimateVolumes finds one pose for each volume of a series on grid g. It fails with
+// [*TooFewAligned], or with the error of the series or of ctx.
+func EstimateVolumes(ctx context.Context, g Grid, s Series, opt Options) (*Estimate, error) {
+	e, err := newEstimator(ctx, g, s, opt)
+	if err != nil {
+		return nil, err
 	}
-	e := newEstimator(ctx, g, data, nt, opt)
 	e.done.tell = opt.Progress
 	e.prepare()
 	return e.run()
 }
 
-func newEstimator(ctx context.Context, g Grid, data []float32, nt int, opt Options) *estimator {
-	nv := g.voxels()
-	e := &estimator{ctx: ctx, g: g, nt: nt, opt: opt, workers: max(1, opt.Workers), volume: func(t int) []float32 { return data[t*nv:][:nv] }}
-	e.withoutPadding()
-	return e
+func newEstimator(ctx context.Context, g Grid, s Series, opt Options) (*estimator, error) {
+	e := &estimator{ctx: ctx, g: g, nt: s.Len(), opt: opt, workers: max(1, opt.Workers), series: s}
+	return e, e.withoutPadding()
 }
+
+// each goes through the volumes, or through those wanted.
+func (e *estimator) each(want func(t int) bool, f func(worker, t int, vol []float32) error) error {
+	return e.series.Each(e.ctx, e.workers, want, f)
+}
+
+// copyOf returns volume t.
+func (e *estimator) copyOf(t int) ([]float32, error) { return copyOf(e.ctx, e.series, t) }
 
 // estimator holds what the passes of one estimate share.
 type estimator struct {
@@ -178,7 +182,7 @@ type estimator struct {
 	nt      int
 	opt     Options
 	workers int
-	volume  func(t int) []float32
+	series  Series
 	done    progress
 
 	padded, nearPadding []bool // slices; nil: none
@@ -251,7 +255,10 @@ func (e *estimator) run() (*Estimate, error) {
 		if len(e.opt.External) != e.g.voxels() {
 			panic("realign: external reference and grid differ in size")
 		}
-		k := e.brightness()
+		k, err := e.brightness()
+		if err != nil {
+			return nil, err
+		}
 		image := make([]float32, len(e.opt.External))
 		for i, v := range e.opt.External {
 			image[i] = float32(v * k)
@@ -262,11 +269,11 @@ func (e *estimator) run() (*Estimate, error) {
 		}
 		return est, err
 	case First:
-		return e.against(e.volume(0), 0)
+		return e.againstOne(0)
 	case Middle:
-		return e.against(e.volume(e.nt/2), e.nt/2)
+		return e.againstOne(e.nt / 2)
 	case Index:
-		return e.against(e.volume(e.opt.Index), e.opt.Index)
+		return e.againstOne(e.opt.Index)
 	}
 	return e.againstMean()
 }
@@ -274,7 +281,7 @@ func (e *estimator) run() (*Estimate, error) {
 // brightness is the power of two by which an external reference comes nearest to the
 // brightness of the series: thresholds and noise are then in like units, and nothing
 // is rounded.
-func (e *estimator) brightness() float32 {
+func (e *estimator) brightness() (float32, error) {
 	mean := func(v []float32) float64 {
 		sum, n := 0.0, 0.0
 		for i, in := range HeadMask(e.g, v) {
@@ -285,10 +292,14 @@ func (e *estimator) brightness() float32 {
 		}
 		return sum / max(n, 1)
 	}
-	own, other := mean(e.volume(e.nt/2)), mean(e.opt.External)
+	middle, err := e.copyOf(e.nt / 2)
+	if err != nil {
+		return 0, err
+	}
+	own, other := mean(middle), mean(e.opt.External)
 	k := float32(1)
 	if !(own > 0 && other > 0) {
-		return k
+		return k, nil
 	}
 	for range 60 {
 		switch r := own / float64(other*float64(k)); {
@@ -297,15 +308,24 @@ func (e *estimator) brightness() float32 {
 		case r < math.Sqrt2/2:
 			k /= 2
 		default:
-			return k
+			return k, nil
 		}
 	}
-	return k
+	return k, nil
 }
 
 // fineEffort is that of the pass whose poses are kept.
 func (e *estimator) fineEffort() effort {
 	return effort{tolerance: fineTolerance, iterations: maxIterations, robust: true, sliceAxis: e.opt.SliceAxis, skip: e.nearPadding}
+}
+
+// againstOne aligns all volumes with one of them.
+func (e *estimator) againstOne(t int) (*Estimate, error) {
+	image, err := e.copyOf(t)
+	if err != nil {
+		return nil, err
+	}
+	return e.against(image, t)
 }
 
 // against aligns all volumes with a given reference, one pass.
@@ -338,7 +358,11 @@ func (e *estimator) againstMean() (*Estimate, error) {
 	var vols []Volume
 	passes, target := 0, 0
 	for _, t := range []int{0, e.nt / 2, e.nt - 1} {
-		m := e.newModel(e.volume(t), nil, 3)
+		image, err := e.copyOf(t)
+		if err != nil {
+			return nil, err
+		}
+		m := e.newModel(image, nil, 3)
 		e.done.phase(0, roughDone, e.nt)
 		v, _, err := e.pass(m, nil, rough)
 		if err != nil {
@@ -496,10 +520,10 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 	for i := range left {
 		left[i] = newLeftovers(len(m.image), peak)
 	}
-	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, t int) error {
+	err := e.each(nil, func(worker, t int, vol []float32) error {
 		defer e.done.piece()
 		w := e.scratch[worker]
-		w.fine.run(w.vFine, e.volume(t))
+		w.fine.run(w.vFine, vol)
 		if known != nil && known[t].State != Lost {
 			f := w.m.match(m.fine, w.vFine, known[t].Pose, how)
 			if vols[t] = e.judge(m, f); vols[t].State != Lost {
@@ -509,7 +533,7 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 				return nil
 			}
 		}
-		w.coarse.run(w.vCoarse, e.volume(t))
+		w.coarse.run(w.vCoarse, vol)
 		vols[t] = e.search(w, m, how)
 		return nil
 	})
@@ -625,10 +649,11 @@ func fan(centre [3]float64) (poses []Pose) {
 // nearest aligned neighbours, and keeps what fits better.
 func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 	seen := append([]Volume(nil), vols...)
-	return parallel.For(e.ctx, e.workers, e.nt, func(worker, t int) error {
-		if seen[t].State == Aligned {
-			return nil
-		}
+	if countState(seen, Aligned) == e.nt {
+		return nil
+	}
+	again := func(t int) bool { return seen[t].State != Aligned }
+	return e.each(again, func(worker, t int, vol []float32) error {
 		w := e.scratch[worker]
 		ready := false
 		for _, step := range []int{-1, 1} {
@@ -640,8 +665,8 @@ func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 				continue
 			}
 			if !ready {
-				w.fine.run(w.vFine, e.volume(t))
-				w.coarse.run(w.vCoarse, e.volume(t))
+				w.fine.run(w.vFine, vol)
+				w.coarse.run(w.vCoarse, vol)
 				ready = true
 			}
 			c := w.m.match(m.coarse, w.vCoarse, seen[s].Pose, e.roughEffort())
@@ -729,81 +754,67 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 			use = append(use, t)
 		}
 	}
-	// Batches: volumes are resampled side by side, then added in their order.
+	// Volumes are resampled side by side, then added in their order.
 	res := make([]*Resampler, e.workers)
-	buf := make([][]float32, 2*e.workers)
-	for i := range res {
-		res[i] = NewResampler(e.g.N, 5)
-	}
-	for i := range buf {
-		buf[i] = make([]float32, nv)
-	}
-	for len(use) > 0 {
-		batch := use[:min(len(use), len(buf))]
-		use = use[len(batch):]
-		err := parallel.For(e.ctx, e.workers, len(batch), func(worker, i int) error {
-			defer e.done.piece()
-			t := batch[i]
+	buf := make([][]float32, e.workers)
+	inv := mustInvert(e.g.Affine)
+	var turns parallel.Turns
+	err = e.each(isIn(use, e.nt), func(worker, t int, vol []float32) error {
+		defer e.done.piece()
+		return turns.Do(rank(use, t), func() error {
+			if res[worker] == nil {
+				res[worker], buf[worker] = NewResampler(e.g.N, 5), make([]float32, nv)
+			}
 			if vols[t].Pose == Identity {
-				copy(buf[i], e.volume(t))
+				copy(buf[worker], vol)
 				return nil
 			}
-			vol := e.volume(t)
 			if patched := e.patch(vol, weak[t]); patched != nil {
 				vol = patched
 			}
 			res[worker].Load(vol)
-			res[worker].Eval(buf[i], PoseMap(e.g, vols[t].Pose))
+			res[worker].Eval(buf[worker], PoseMap(e.g, vols[t].Pose))
 			return nil
-		})
-		if err != nil {
-			return nil, nil, err
-		}
-		err = parallel.For(e.ctx, e.workers, e.g.N[2], func(_, k int) error {
-			area := e.g.N[0] * e.g.N[1]
-			for i, t := range batch {
-				b := mul(mustInvert(e.g.Affine), mul(vols[t].Pose.Matrix(), e.g.Affine))
-				weak := weak[t]
-				whole := !slices.Contains(weak, true)
-				for v := area * k; v < area*(k+1); v++ {
-					all[v] += float64(buf[i][v])
-					if x := v % e.g.N[0]; x == 0 && whole && e.g.deepRow(&b, v/e.g.N[0]%e.g.N[1], k) {
-						// A row all of which is seen from well inside counts in full.
-						row := buf[i][v:][:e.g.N[0]]
-						sum, all, full, count := sum[v:][:len(row)], all[v:][:len(row)], full[v:][:len(row)], count[v:][:len(row)]
-						for x, value := range row {
-							if x > 0 {
-								all[x] += float64(value)
-							}
-							sum[x] += float64(value)
-							full[x]++
-							count[x]++
-						}
-						v += e.g.N[0] - 1
-						continue
+		}, func() {
+			b := mul(inv, mul(vols[t].Pose.Matrix(), e.g.Affine))
+			weak, vol := weak[t], buf[worker]
+			whole := !slices.Contains(weak, true)
+			for v := 0; v < nv; v++ {
+				x, y, z := v%e.g.N[0], v/e.g.N[0]%e.g.N[1], v/(e.g.N[0]*e.g.N[1])
+				if x == 0 && whole && e.g.deepRow(&b, y, z) {
+					// A row all of which is seen from well inside counts in full.
+					row := vol[v:][:e.g.N[0]]
+					sum, all, full, count := sum[v:][:len(row)], all[v:][:len(row)], full[v:][:len(row)], count[v:][:len(row)]
+					for x, value := range row {
+						all[x] += float64(value)
+						sum[x] += float64(value)
+						full[x]++
+						count[x]++
 					}
-					q := applyAffine(&b, float64(v%e.g.N[0]), float64(v/e.g.N[0]%e.g.N[1]), float64(k))
-					w, in := 1.0, true
-					if !e.g.wellInside(&q) {
-						deep := e.g.depth(q)
-						w, in = edgeWeight(deep), deep >= -0.5
-					}
-					if in {
-						s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
-						in = !(s > 0 && weak[s-1] || s < len(weak) && weak[s])
-					}
-					if in {
-						sum[v] += float64(w * float64(buf[i][v]))
-						full[v] += w
-						count[v]++
-					}
+					v += e.g.N[0] - 1
+					continue
+				}
+				all[v] += float64(vol[v])
+				q := applyAffine(&b, float64(x), float64(y), float64(z))
+				w, in := 1.0, true
+				if !e.g.wellInside(&q) {
+					deep := e.g.depth(q)
+					w, in = edgeWeight(deep), deep >= -0.5
+				}
+				if in {
+					s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
+					in = !(s > 0 && weak[s-1] || s < len(weak) && weak[s])
+				}
+				if in {
+					sum[v] += float64(w * float64(vol[v]))
+					full[v] += w
+					count[v]++
 				}
 			}
-			return nil
 		})
-		if err != nil {
-			return nil, nil, err
-		}
+	})
+	if err != nil {
+		return nil, nil, err
 	}
 	total := countState(vols, Aligned)
 	image, unknown = make([]float32, nv), make([]bool, nv)

@@ -130,7 +130,7 @@ func estimate(tb testing.TB, g realign.Grid, data []float32, opt realign.Options
 		opt.Workers = 2
 		opt.SliceAxis = 2
 	}
-	est, err := realign.EstimateVolumes(context.Background(), g, data, len(data)/nv, opt)
+	est, err := realign.EstimateVolumes(context.Background(), g, realign.Floats(data, len(data)/nv), opt)
 	if err != nil {
 		tb.Fatal(err)
 	}
@@ -303,7 +303,7 @@ func TestTooFewAligned(t *testing.T) {
 		data[i] = 0
 	}
 	for _, ref := range []realign.Reference{realign.Mean, realign.First} {
-		_, err := realign.EstimateVolumes(context.Background(), small, data, 2, realign.Options{Reference: ref, SliceAxis: 2})
+		_, err := realign.EstimateVolumes(context.Background(), small, realign.Floats(data, 2), realign.Options{Reference: ref, SliceAxis: 2})
 		var few *realign.TooFewAligned
 		if !errors.As(err, &few) || few.Aligned != 1 || few.Volumes != 2 {
 			t.Errorf("reference %d: %v", ref, err)
@@ -312,7 +312,7 @@ func TestTooFewAligned(t *testing.T) {
 	for i := range data {
 		data[i] = 0
 	}
-	if _, err := realign.EstimateVolumes(context.Background(), small, data, 2, realign.Options{}); err == nil {
+	if _, err := realign.EstimateVolumes(context.Background(), small, realign.Floats(data, 2), realign.Options{}); err == nil {
 		t.Error("a run of zeros was aligned")
 	}
 }
@@ -498,7 +498,7 @@ func TestCancelled(t *testing.T) {
 	ctx, cancel := context.WithCancel(context.Background())
 	cancel()
 	g := axial([3]int{24, 26, 14}, [3]float64{8, 8, 9})
-	if _, err := realign.EstimateVolumes(ctx, g, scan(t, g, randomPoses(3, 5, 2, 4), 9, nil), 5, realign.Options{}); !errors.Is(err, context.Canceled) {
+	if _, err := realign.EstimateVolumes(ctx, g, realign.Floats(scan(t, g, randomPoses(3, 5, 2, 4), 9, nil), 5), realign.Options{}); !errors.Is(err, context.Canceled) {
 		t.Errorf("got %v", err)
 	}
 }
@@ -541,7 +541,7 @@ func ExampleEstimateVolumes() {
 	if err != nil {
 		panic(err)
 	}
-	est, err := realign.EstimateVolumes(context.Background(), g, data, 2, realign.Options{Reference: realign.First, SliceAxis: 2})
+	est, err := realign.EstimateVolumes(context.Background(), g, realign.Floats(data, 2), realign.Options{Reference: realign.First, SliceAxis: 2})
 	if err != nil {
 		panic(err)
 	}

@@ -76,19 +76,26 @@ const AlignedFit = alignedFit
 // PaddedSlices finds padding in a series.
 func PaddedSlices(g Grid, axis int, data []float32) []bool {
 	nv := g.voxels()
-	return paddedSlices(g, axis, len(data)/nv, func(t int) []float32 { return data[t*nv:][:nv] })
+	dead, err := paddedSlices(context.Background(), g, axis, Floats(data, len(data)/nv))
+	if err != nil {
+		panic(err)
+	}
+	return dead
 }
 
 // RoughMatches matches volumes with one of them as the first pass does, from the
 // identity, and tells iterations and whether each converged.
 func RoughMatches(g Grid, data []float32, axis int) (iterations []int, converged []bool) {
 	nv := g.voxels()
-	e := newEstimator(context.Background(), g, data, len(data)/nv, Options{SliceAxis: axis, Workers: 1})
+	e, err := newEstimator(context.Background(), g, Floats(data, len(data)/nv), Options{SliceAxis: axis, Workers: 1})
+	if err != nil {
+		panic(err)
+	}
 	e.prepare()
-	m := e.newModel(e.volume(0), nil, 3)
+	m := e.newModel(data[:nv], nil, 3)
 	w := e.scratch[0]
 	for t := range e.nt {
-		w.fine.run(w.vFine, e.volume(t))
+		w.fine.run(w.vFine, data[t*nv:][:nv])
 		f := w.m.match(m.fine, w.vFine, Identity, e.fineEffort())
 		iterations, converged = append(iterations, f.iterations), append(converged, f.converged)
 	}
@@ -98,7 +105,10 @@ func RoughMatches(g Grid, data []float32, axis int) (iterations []int, converged
 // RebuildOn gives the path with its reference rebuilt from another recording of
 // the same run (noise-free, say).
 func RebuildOn(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, p *PathEstimate, workers int) *PathEstimate {
-	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
+	e, err := newPathEstimator(ctx, g, Floats(data, nt), s, est, workers)
+	if err != nil {
+		panic(err)
+	}
 	e.shots = s.Shots()
 	e.lay()
 	copy(e.poses, p.Path.Poses)
@@ -192,7 +202,10 @@ func PathJacobian(centre [3]float64, q Params) (shift, turn [9]float64) {
 // HeldOut compares one pose a volume with poses of the slots on held-out pixels, as
 // EstimatePath does.
 func HeldOut(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, poses []Pose) (volumes, path, allowed float64) {
-	e := newPathEstimator(context.Background(), g, data, nt, s, est, 2)
+	e, err := newPathEstimator(context.Background(), g, Floats(data, nt), s, est, 2)
+	if err != nil {
+		panic(err)
+	}
 	e.shots = s.Shots()
 	e.lay()
 	e.setTemplate(est.Reference)
@@ -204,7 +217,7 @@ func HeldOut(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate
 	}
 	must(e.measure(make([]slotData, len(e.p)), true))
 	e.noise = e.usualNoise()
-	var err error
+
 	volumes, err = e.heldOutVolumes()
 	must(err)
 	copy(e.poses, poses)

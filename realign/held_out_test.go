@@ -38,7 +38,7 @@ func TestRebuiltFromDoubtfulVolumesOutsideTheRegion(t *testing.T) {
 	for n := range r.est.Volumes {
 		r.est.Volumes[n].State = realign.Doubtful
 	}
-	q, err := realign.FromVolumes(coarse, r.schedule, r.est, "a test").Rebuilt(context.Background(), coarse, r.data, 5, r.schedule, r.est, 2)
+	q, err := realign.FromVolumes(coarse, r.schedule, r.est, "a test").Rebuilt(context.Background(), coarse, realign.Floats(r.data, 5), r.schedule, r.est, 2)
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -1,5 +1,10 @@
 package realign
 
+import (
+	"context"
+	"slices"
+)
+
 // paddedFrom: a slice of one value beside one that shows at least this share of the
 // widest slice of the head is padding: no head ends so abruptly. (4 mm below
 // the crown a head shows a tenth.)
@@ -7,23 +12,34 @@ const paddedFrom = 0.25
 
 // paddedSlices finds the slices along an axis that hold nothing but one value in
 // every volume though the head goes on there: padding, not air. nil: none.
-func paddedSlices(g Grid, axis, nt int, volume func(t int) []float32) []bool {
+func paddedSlices(ctx context.Context, g Grid, axis int, s Series) ([]bool, error) {
+	// In most runs the first volume tells that there is none.
+	one, err := copyOf(ctx, s, 0)
+	if err != nil {
+		return nil, err
+	}
 	n := g.N[axis]
 	dead := make([]bool, n)
-	any, all := false, true
 	for k := range dead {
-		dead[k] = true
-		for t := 0; t < nt && dead[k]; t++ {
-			dead[k] = flatSlice(g, axis, k, volume(t))
-		}
-		any, all = any || dead[k], all && dead[k]
+		dead[k] = flatSlice(g, axis, k, one)
 	}
-	if !any || all {
-		return nil
+	if slices.Contains(dead, true) {
+		err := s.Each(ctx, 1, nil, func(_, _ int, vol []float32) error {
+			for k := range dead {
+				dead[k] = dead[k] && flatSlice(g, axis, k, vol)
+			}
+			return nil
+		})
+		if err != nil {
+			return nil, err
+		}
+	}
+	if !slices.Contains(dead, true) || !slices.Contains(dead, false) {
+		return nil, nil
 	}
 	area := make([]int, n)
 	widest := 0
-	for i, in := range HeadMask(g, volume(0)) {
+	for i, in := range HeadMask(g, one) {
 		if in {
 			k := [3]int{i % g.N[0], i / g.N[0] % g.N[1], i / (g.N[0] * g.N[1])}[axis]
 			area[k]++
@@ -39,15 +55,13 @@ func paddedSlices(g Grid, axis, nt int, volume func(t int) []float32) []bool {
 		return false
 	}
 	out := make([]bool, n)
-	any = false
 	for k := range out {
 		out[k] = dead[k] && (goesOn(k, -1) || goesOn(k, 1))
-		any = any || out[k]
 	}
-	if !any {
-		return nil
+	if !slices.Contains(out, true) {
+		return nil, nil
 	}
-	return out
+	return out, nil
 }
 
 func flatSlice(g Grid, axis, k int, vol []float32) bool {
@@ -70,9 +84,9 @@ func flatSlice(g Grid, axis, k int, vol []float32) bool {
 // withoutPadding notes padded slices: volumes are then read with them filled from
 // their neighbours, so that filters and splines see no cliff, and nothing is
 // compared or averaged there.
-func (e *estimator) withoutPadding() {
-	if e.padded = paddedSlices(e.g, e.opt.SliceAxis, e.nt, e.volume); e.padded == nil {
-		return
+func (e *estimator) withoutPadding() (err error) {
+	if e.padded, err = paddedSlices(e.ctx, e.g, e.opt.SliceAxis, e.series); e.padded == nil {
+		return err
 	}
 	e.nearPadding = append([]bool(nil), e.padded...)
 	for k, p := range e.padded {
@@ -81,8 +95,8 @@ func (e *estimator) withoutPadding() {
 			e.nearPadding[min(len(e.padded)-1, k+1)] = true
 		}
 	}
-	raw := e.volume
-	e.volume = func(t int) []float32 { return e.patch(raw(t), e.padded) }
+	e.series = patched{e.series, func(vol []float32) []float32 { return e.patch(vol, e.padded) }}
+	return nil
 }
 
 // alongPadding marks the voxels of a reference beside padding.

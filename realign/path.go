@@ -100,29 +100,35 @@ const (
 )
 
 // EstimatePath refines the volume poses of est to one pose per excitation.
-// data and g are as for [EstimateVolumes]; est is what that returned; s says
-// when each slice is excited. It fails only with the error of ctx.
+// series and g are as for [EstimateVolumes]; est is what that returned; s says
+// when each slice is excited. It fails only with the error of the series or of ctx.
 //
 // Maximum likelihood on unfiltered slices against a template (noise in the
 // pixels is then white), with the prior described in this package's chain: a
 // penalised likelihood in the manner of a smoothing spline (Green, Silverman
 // 1994, Nonparametric Regression and Generalized Linear Models; from memory).
-func EstimatePath(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
-	nv := g.voxels()
-	if len(data) != nv*nt || len(est.Volumes) != nt {
-		panic("realign: series, grid and estimate differ in size")
+func EstimatePath(ctx context.Context, g Grid, series Series, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
+	e, err := newPathEstimator(ctx, g, series, s, est, workers)
+	if err != nil {
+		return nil, err
 	}
-	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
 	return e.run()
 }
 
-func newPathEstimator(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) *pathEstimator {
-	e := &pathEstimator{estimator: newEstimator(ctx, g, data, nt, Options{SliceAxis: s.Axis, Workers: workers}), schedule: s, est: est}
+func newPathEstimator(ctx context.Context, g Grid, series Series, s slicetime.Schedule, est *Estimate, workers int) (*pathEstimator, error) {
+	if len(est.Volumes) != series.Len() {
+		panic("realign: series and estimate differ in size")
+	}
+	plain, err := newEstimator(ctx, g, series, Options{SliceAxis: s.Axis, Workers: workers})
+	if err != nil {
+		return nil, err
+	}
+	e := &pathEstimator{estimator: plain, schedule: s, est: est}
 	e.done.tell = est.Progress
 	e.weak = e.weakSlices(est.Volumes, -1)
 	e.gains = est.sliceGains(g, s)
 	e.region = dilate(est.Mask, g.N, regionRim)
-	return e
+	return e, nil
 }
 
 // pathEstimator holds what the passes share.
@@ -559,7 +565,7 @@ func jacobian(p Pose, q params) (rt, jr [9]float64) {
 // and only sets scales.
 func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 	explain := make([][2]float64, e.nt)
-	err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
+	err := e.each(nil, func(worker, n int, vol []float32) error {
 		defer e.done.piece()
 		for s, shot := range e.shots {
 			i := n*len(e.shots) + s
@@ -571,7 +577,7 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 			if plain {
 				pose = e.est.Volumes[n].Pose
 			}
-			ex := e.slot(e.work[worker], n, i, shot.Slices, pose, &slots[i])
+			ex := e.slot(e.work[worker], vol, n, i, shot.Slices, pose, &slots[i])
 			explain[n][0] += ex[0]
 			explain[n][1] += ex[1]
 		}
@@ -587,11 +593,10 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 
 // gather lists the pixels of one excitation of volume n that take part at a pose;
 // ends tells where the pixels of each slice end.
-func (e *pathEstimator) gather(w *slotWork, n int, slices []int, pose Pose) (ends []int) {
+func (e *pathEstimator) gather(w *slotWork, vol []float32, n int, slices []int, pose Pose) (ends []int) {
 	t := e.t
 	w.b.reset()
 	w.val, w.near, w.gain, w.head, w.wt = w.val[:0], w.near[:0], w.gain[:0], w.head[:0], w.wt[:0]
-	vol := e.volume(n)
 	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
 	forth := mul(t.inv, mul(pose.Matrix(), t.g.Affine))
 	for _, k := range slices {
@@ -638,9 +643,9 @@ func (e *pathEstimator) gather(w *slotWork, n int, slices []int, pose Pose) (end
 }
 
 // slot evaluates one excitation of volume n.
-func (e *pathEstimator) slot(w *slotWork, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+func (e *pathEstimator) slot(w *slotWork, vol []float32, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
 	t := e.t
-	ends := e.gather(w, n, slices, pose)
+	ends := e.gather(w, vol, n, slices, pose)
 	t.s.gradients(&w.b)
 	count := len(w.val)
 	w.res, w.abs, w.pred = sized(w.res, count), sized(w.abs, count), sized(w.pred, count)
@@ -817,12 +822,20 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 		usual := e.usualScale(e.scale, len(e.shots))
 		per, nz := len(e.shots), e.g.N[e.schedule.Axis]
 		to := make([]int, len(e.p)) // the slot whose pose is taken over, or the slot itself
-		err := parallel.For(e.ctx, e.workers, e.nt, func(worker, n int) error {
+		looked := func(i int) bool { return e.scale[i] > float64(misplaced*usual[i%per]) }
+		odd := make([]bool, e.nt)
+		for i := range to {
+			to[i] = i
+			odd[i/per] = odd[i/per] || looked(i)
+		}
+		if !slices.Contains(odd, true) {
+			break
+		}
+		err := e.each(func(n int) bool { return odd[n] }, func(worker, n int, vol []float32) error {
 			for s, shot := range e.shots {
 				i := n*per + s
-				to[i] = i
 				best := e.scale[i]
-				if !(best > float64(misplaced*usual[s])) {
+				if !looked(i) {
 					continue
 				}
 				best = float64(best * 0.9)
@@ -835,7 +848,7 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 					var d slotData
 					// The neighbour's pose as it stands, with the offset of its shot: that of
 					// the slot's own has taken up part of the jerk.
-					e.slot(e.work[worker], n, i, shot.Slices, e.poses[j], &d)
+					e.slot(e.work[worker], vol, n, i, shot.Slices, e.poses[j], &d)
 					if e.scale[i] > 0 && e.scale[i] < best {
 						best, to[i] = e.scale[i], j
 					}
@@ -952,38 +965,38 @@ func (e *pathEstimator) expect(c *chain, slots []slotData, out []float64) {
 
 // Rebuilt returns p with its reference built anew from another series of the
 // same acquisition (another echo, say): mapped back along the path and sharpened,
-// as [EstimatePath] does with its own. data, nt and s are as there, est is the
+// as [EstimatePath] does with its own. series and s are as there, est is the
 // estimate that p came from. The gains stay those of p. It fails only with the
-// error of ctx.
-func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
-	nv := g.voxels()
-	if len(data) != nv*nt || len(est.Volumes) != nt {
-		panic("realign: series, grid and estimate differ in size")
+// error of the series or of ctx.
+func (p *PathEstimate) Rebuilt(ctx context.Context, g Grid, series Series, s slicetime.Schedule, est *Estimate, workers int) (*PathEstimate, error) {
+	e, err := newPathEstimator(ctx, g, series, s, est, workers)
+	if err != nil {
+		return nil, err
 	}
-	e := newPathEstimator(ctx, g, data, nt, s, est, workers)
+	nt := e.nt
 	e.shotOf, e.poses, e.spoilt = p.Shot, p.Path.Poses, p.spoilt
 	e.shots, e.scale = make([]slicetime.Shot, p.Shots), make([]float64, nt*p.Shots)
 	e.done.phase(0, 1, rebuildPieces(nt, lastProjections, false))
 	// Outside the region, and where nothing reaches, the plain mean.
 	start := *est
-	start.Reference = make([]float32, nv)
+	start.Reference = make([]float32, g.voxels())
 	use := est.used()
-	const block = 4096
-	err := parallel.For(ctx, e.workers, (nv+block-1)/block, func(_, k int) error {
-		from, to := k*block, min(nv, (k+1)*block)
-		var sum [block]float64
-		for _, n := range use {
-			for i, v := range data[n*nv+from : n*nv+to] {
+	sum := make([]float64, len(start.Reference))
+	var turns parallel.Turns
+	err = series.Each(ctx, e.workers, isIn(use, nt), func(_, n int, vol []float32) error {
+		return turns.Do(rank(use, n), func() error { return nil }, func() {
+			for i, v := range vol {
 				sum[i] += float64(v)
 			}
-		}
-		for i := from; i < to && len(use) > 0; i++ {
-			start.Reference[i] = float32(sum[i-from] / float64(len(use)))
-		}
-		return nil
+		})
 	})
 	if err != nil {
 		return nil, err
+	}
+	for i := range sum {
+		if len(use) > 0 {
+			start.Reference[i] = float32(sum[i] / float64(len(use)))
+		}
 	}
 	e.est = &start
 	e.setTemplate(start.Reference)

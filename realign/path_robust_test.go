@@ -243,7 +243,7 @@ func TestRebuiltFromDoubtfulVolumes(t *testing.T) {
 	r.est = estimate(t, coarse, r.data, realign.Options{})
 	p := realign.FromVolumes(coarse, r.schedule, r.est, "a test")
 	rebuilt := func() []float32 {
-		q, err := p.Rebuilt(context.Background(), coarse, r.data, 5, r.schedule, r.est, 2)
+		q, err := p.Rebuilt(context.Background(), coarse, realign.Floats(r.data, 5), r.schedule, r.est, 2)
 		if err != nil {
 			t.Fatal(err)
 		}

@@ -93,7 +93,7 @@ func (r *session) find(tb testing.TB, opt realign.Options, workers int) *session
 	opt.SliceAxis, opt.Workers = r.schedule.Axis, workers
 	r.est = estimate(tb, r.grid, r.data, opt)
 	var err error
-	if r.path, err = realign.EstimatePath(context.Background(), r.grid, r.data, r.scan.NT, r.schedule, r.est, workers); err != nil {
+	if r.path, err = realign.EstimatePath(context.Background(), r.grid, realign.Floats(r.data, r.scan.NT), r.schedule, r.est, workers); err != nil {
 		tb.Fatal(err)
 	}
 	return r
@@ -277,7 +277,7 @@ func TestFallBacks(t *testing.T) {
 	} {
 		r := record(t, c.g, 2, c.nt, 2, c.times, m, 9)
 		r.est = estimate(t, c.g, r.data, realign.Options{})
-		p, err := realign.EstimatePath(context.Background(), c.g, r.data, c.nt, r.schedule, r.est, 2)
+		p, err := realign.EstimatePath(context.Background(), c.g, realign.Floats(r.data, c.nt), r.schedule, r.est, 2)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -353,7 +353,7 @@ func TestFallBackOfAHeadAtTheEdge(t *testing.T) {
 	g.Affine[11] += 90
 	r := record(t, g, 2, 6, 2, phantom.Interleaved(14, 2), phantom.Walk(1, 0.3, 0.003, 0.05, [3]float64{}), 5)
 	r.est = estimate(t, g, r.data, realign.Options{})
-	p, err := realign.EstimatePath(context.Background(), g, r.data, 6, r.schedule, r.est, 2)
+	p, err := realign.EstimatePath(context.Background(), g, realign.Floats(r.data, 6), r.schedule, r.est, 2)
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -366,7 +366,7 @@ func TestPathCancelled(t *testing.T) {
 	r.est = estimate(t, g, r.data, realign.Options{})
 	ctx, cancel := context.WithCancel(context.Background())
 	cancel()
-	if _, err := realign.EstimatePath(ctx, g, r.data, 4, r.schedule, r.est, 2); !errors.Is(err, context.Canceled) {
+	if _, err := realign.EstimatePath(ctx, g, realign.Floats(r.data, 4), r.schedule, r.est, 2); !errors.Is(err, context.Canceled) {
 		t.Errorf("got %v", err)
 	}
 	p := realign.FromVolumes(g, r.schedule, r.est, "")
@@ -620,7 +620,7 @@ func TestSameBytesPath(t *testing.T) {
 	r.est = estimate(t, r.grid, r.data, realign.Options{})
 	first := ""
 	for _, workers := range []int{1, 2, 5} {
-		p, err := realign.EstimatePath(context.Background(), r.grid, r.data, r.scan.NT, r.schedule, r.est, workers)
+		p, err := realign.EstimatePath(context.Background(), r.grid, realign.Floats(r.data, r.scan.NT), r.schedule, r.est, workers)
 		if err != nil || !p.Used {
 			t.Fatal(err, p.Reason)
 		}

@@ -55,7 +55,7 @@ func TestProgress(t *testing.T) {
 	find := func(progress func(float64)) *realign.PathEstimate {
 		est := *r.est
 		est.Progress = progress
-		p, err := realign.EstimatePath(context.Background(), medium, r.data, nt, r.schedule, &est, 2)
+		p, err := realign.EstimatePath(context.Background(), medium, realign.Floats(r.data, nt), r.schedule, &est, 2)
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -71,7 +71,7 @@ func TestProgress(t *testing.T) {
 	rebuild := func(progress func(float64)) *realign.PathEstimate {
 		est := *r.est
 		est.Progress = progress
-		p, err := path.Rebuilt(context.Background(), medium, r.data, nt, r.schedule, &est, 2)
+		p, err := path.Rebuilt(context.Background(), medium, realign.Floats(r.data, nt), r.schedule, &est, 2)
 		if err != nil {
 			t.Fatal(err)
 		}

@@ -246,30 +246,24 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 	sum, sum2, full := make([]float64, len(at)), make([]float64, len(at)), make([]float64, len(at))
 	count = make([]int32, len(at))
 	type scratch struct {
-		s   *spline
-		vol []float32
-		b   batch
-		to  []int32 // of each point of b: its place in at
+		s           *spline
+		vol         []float32
+		b           batch
+		to          []int32 // of each point of b: its place in at
+		val, weight []float32
 	}
 	work := make([]*scratch, e.workers)
-	val := make([][]float32, 2*e.workers)
-	weight := make([][]float32, len(val)) // 0: nothing known
-	for i := range val {
-		val[i], weight[i] = make([]float32, len(at)), make([]float32, len(at))
-	}
 	n0, n1 := e.g.N[0], e.g.N[1]
 	axis := e.schedule.Axis
-	for rest := use; len(rest) > 0; {
-		batch := rest[:min(len(rest), len(val))]
-		rest = rest[len(batch):]
-		err := parallel.For(e.ctx, e.workers, len(batch), func(worker, b int) error {
-			defer e.done.piece()
-			n := batch[b]
-			if work[worker] == nil {
-				work[worker] = &scratch{s: newSpline(e.g.N, degree), vol: make([]float32, e.g.voxels())}
-			}
-			w := work[worker]
-			e.level(w.vol, n, residual, &w.b)
+	var turns parallel.Turns
+	err = e.each(isIn(use, e.nt), func(worker, n int, raw []float32) error {
+		defer e.done.piece()
+		if work[worker] == nil {
+			work[worker] = &scratch{s: newSpline(e.g.N, degree), vol: make([]float32, e.g.voxels()), val: make([]float32, len(at)), weight: make([]float32, len(at))}
+		}
+		w := work[worker]
+		return turns.Do(rank(use, n), func() error {
+			e.level(w.vol, raw, n, residual, &w.b)
 			vol := w.vol
 			if p := e.patch(vol, weak[n]); p != nil {
 				vol = p
@@ -293,40 +287,31 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 					s := int(v[axis] + 1)
 					ok = !(s > 0 && weak[n][s-1] || s < len(weak[n]) && weak[n][s])
 				}
-				weight[b][q] = 0
+				w.weight[q] = 0 // nothing known
 				if ok {
-					weight[b][q] = float32(counts)
+					w.weight[q] = float32(counts)
 					w.s.add(&w.b, v[0], v[1], v[2])
 					w.to = append(w.to, int32(q))
 				}
 			}
 			w.s.values(&w.b)
 			for i, q := range w.to {
-				val[b][q] = w.b.v[i]
+				w.val[q] = w.b.v[i]
 			}
 			return nil
-		})
-		if err != nil {
-			return nil, nil, nil, err
-		}
-		const block = 4096
-		err = parallel.For(e.ctx, e.workers, (len(at)+block-1)/block, func(_, k int) error {
-			for b := range batch {
-				for q := k * block; q < min(len(at), (k+1)*block); q++ {
-					if w := float64(weight[b][q]); w > 0 {
-						v := float64(val[b][q])
-						sum[q] += float64(w * v)
-						sum2[q] += float64(float64(w*v) * v)
-						full[q] += w
-						count[q]++
-					}
+		}, func() {
+			for q, weight := range w.weight {
+				if w, v := float64(weight), float64(w.val[q]); w > 0 {
+					sum[q] += float64(w * v)
+					sum2[q] += float64(float64(w*v) * v)
+					full[q] += w
+					count[q]++
 				}
 			}
-			return nil
 		})
-		if err != nil {
-			return nil, nil, nil, err
-		}
+	})
+	if err != nil {
+		return nil, nil, nil, err
 	}
 	mean, square = make([]float32, len(at)), make([]float32, len(at))
 	for q := range mean {
@@ -339,8 +324,7 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 
 // level fills dst with volume n at the brightness of the reference, less the
 // prediction with residual (0 where nothing is predicted). b is scratch.
-func (e *pathEstimator) level(dst []float32, n int, residual bool, b *batch) {
-	vol := e.volume(n)
+func (e *pathEstimator) level(dst, vol []float32, n int, residual bool, b *batch) {
 	axis := e.schedule.Axis
 	rows := e.gainRows(n)
 	i := 0

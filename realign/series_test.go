@@ -38,7 +38,7 @@ func realSeries(t *testing.T, name string) (realign.Grid, []float32, int) {
 func TestVolunteerWhoMoves(t *testing.T) {
 	for _, task := range []string{"interleavedup", "interleaveddown", "sequentialup", "sequentialdown"} {
 		g, data, nt := realSeries(t, "sub-01/func/sub-01_task-"+task+"_bold.nii.gz")
-		est, err := realign.EstimateVolumes(t.Context(), g, data, nt, realign.Options{Reference: realign.First, SliceAxis: 2, Workers: 2})
+		est, err := realign.EstimateVolumes(t.Context(), g, realign.Floats(data, nt), realign.Options{Reference: realign.First, SliceAxis: 2, Workers: 2})
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -97,7 +97,7 @@ func TestStaticPhantoms(t *testing.T) {
 		bar  float64 // mm, mean framewise displacement
 	}{{"sub-phantomA", 0.06}, {"sub-phantomB", 0.10}} {
 		g, data, nt := realSeries(t, c.name+"/func/"+c.name+"_task-static_bold.nii.gz")
-		est, err := realign.EstimateVolumes(t.Context(), g, data, nt, realign.Options{SliceAxis: 2, Workers: 2})
+		est, err := realign.EstimateVolumes(t.Context(), g, realign.Floats(data, nt), realign.Options{SliceAxis: 2, Workers: 2})
 		if err != nil {
 			t.Fatal(err)
 		}
