@@ -196,8 +196,29 @@ type estimator struct {
 type workspace struct {
 	fine, coarse   *smoother
 	vFine, vCoarse []float32
+	sFine          *spline // of the volume at hand
+	sCoarse        *spline
 	m              matcher
 }
+
+// load prepares a volume for matching at the fine level, loadCoarse at the coarse one.
+func (w *workspace) load(vol []float32, degree int) {
+	w.fine.run(w.vFine, vol)
+	if w.sFine == nil || w.sFine.degree != degree {
+		w.sFine = newSpline(w.fine.out, degree)
+	}
+	w.sFine.load(w.vFine)
+}
+
+func (w *workspace) loadCoarse(vol []float32) {
+	w.coarse.run(w.vCoarse, vol)
+	if w.sCoarse == nil {
+		w.sCoarse = newSpline(w.coarse.out, coarseDegree)
+	}
+	w.sCoarse.load(w.vCoarse)
+}
+
+const coarseDegree = 3
 
 func (e *estimator) prepare() {
 	edge := e.g.edges()
@@ -226,7 +247,7 @@ type model struct {
 	image        []float32
 	mask         []bool
 	centre       [3]float64
-	fine, coarse *template
+	fine, coarse *target
 	unknown      []bool
 }
 
@@ -241,10 +262,10 @@ func (e *estimator) newModel(image []float32, unknown []bool, degree int) *model
 	w := e.scratch[0]
 	v := make([]float32, e.g.voxels())
 	w.fine.run(v, image)
-	m.fine = newTemplate(e.g, v, m.mask, unknown, rim, edgeMargins(e.g.N, fineMargin), m.centre, degree)
+	m.fine = newTarget(e.g, v, m.mask, unknown, rim, edgeMargins(e.g.N, fineMargin), m.centre, degree)
 	c := make([]float32, len(w.vCoarse))
 	w.coarse.run(c, image)
-	m.coarse = newTemplate(e.coarse, c, thinMask(m.mask, e.g.N, w.coarse), nil, 1, edgeMargins(e.coarse.N, coarseMargin), m.centre, 3)
+	m.coarse = newTarget(e.coarse, c, thinMask(m.mask, e.g.N, w.coarse), nil, 1, edgeMargins(e.coarse.N, coarseMargin), m.centre, coarseDegree)
 	return m
 }
 
@@ -523,9 +544,9 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 	err := e.each(nil, func(worker, t int, vol []float32) error {
 		defer e.done.piece()
 		w := e.scratch[worker]
-		w.fine.run(w.vFine, vol)
+		w.load(vol, m.fine.degree)
 		if known != nil && known[t].State != Lost {
-			f := w.m.match(m.fine, w.vFine, known[t].Pose, how)
+			f := w.m.match(m.fine, w.sFine, known[t].Pose, how)
 			if vols[t] = e.judge(m, f); vols[t].State != Lost {
 				if vols[t].State == Aligned && how.robust && !how.thin {
 					left[worker].add(&w.m, &f)
@@ -533,7 +554,7 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 				return nil
 			}
 		}
-		w.coarse.run(w.vCoarse, vol)
+		w.loadCoarse(vol)
 		vols[t] = e.search(w, m, how)
 		return nil
 	})
@@ -553,7 +574,7 @@ func (e *estimator) quieten(m *model, vols []Volume, left *leftovers, passes int
 	if !restless {
 		return vols, passes, nil
 	}
-	m.fine.weight = weights
+	m.fine.weigh(weights)
 	vols, _, err := e.pass(m, vols, e.fineEffort())
 	return vols, passes + 1, err
 }
@@ -562,7 +583,7 @@ func (e *estimator) quieten(m *model, vols []Volume, left *leftovers, passes int
 // that does not lead to a good match.
 func (e *estimator) search(w *workspace, m *model, how effort) Volume {
 	rough := e.roughEffort()
-	c := w.m.match(m.coarse, w.vCoarse, Identity, rough)
+	c := w.m.match(m.coarse, w.sCoarse, Identity, rough)
 	best := e.refine(w, m, c.pose, how)
 	best.iterations += c.iterations
 	if best.fit >= fanBelow && best.converged {
@@ -577,7 +598,7 @@ func (e *estimator) search(w *workspace, m *model, how effort) Volume {
 	}
 	var tries []try
 	for _, p := range fan(m.centre) {
-		f := w.m.match(m.coarse, w.vCoarse, p, quick)
+		f := w.m.match(m.coarse, w.sCoarse, p, quick)
 		tries = append(tries, try{f, e.score(m, f)})
 	}
 	var turned found
@@ -588,7 +609,7 @@ func (e *estimator) search(w *workspace, m *model, how effort) Volume {
 				at = i
 			}
 		}
-		f := w.m.match(m.coarse, w.vCoarse, tries[at].f.pose, rough)
+		f := w.m.match(m.coarse, w.sCoarse, tries[at].f.pose, rough)
 		if e.score(m, f) > e.score(m, turned) {
 			turned = f
 		}
@@ -612,19 +633,19 @@ func (e *estimator) roughEffort() effort {
 // of the voxels, the rest as how says.
 func (e *estimator) refine(w *workspace, m *model, start Pose, how effort) found {
 	if how.thin {
-		return w.m.match(m.fine, w.vFine, start, how)
+		return w.m.match(m.fine, w.sFine, start, how)
 	}
 	near := how
 	near.thin, near.tolerance = true, max(how.tolerance, coarseTolerance)
-	a := w.m.match(m.fine, w.vFine, start, near)
-	b := w.m.match(m.fine, w.vFine, a.pose, how)
+	a := w.m.match(m.fine, w.sFine, start, near)
+	b := w.m.match(m.fine, w.sFine, a.pose, how)
 	b.iterations += a.iterations
 	return b
 }
 
 // score ranks matches: a good fit over a small overlap is worth less.
 func (e *estimator) score(m *model, f found) float64 {
-	return float64(f.fit * (1 - outside(m.coarse.g, m.coarse.head, f.pose)))
+	return float64(f.fit * (1 - m.coarse.outside(f.pose)))
 }
 
 // fan lists starting poses: turns about the vertical axis to 60 degrees and
@@ -665,11 +686,11 @@ func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 				continue
 			}
 			if !ready {
-				w.fine.run(w.vFine, vol)
-				w.coarse.run(w.vCoarse, vol)
+				w.load(vol, m.fine.degree)
+				w.loadCoarse(vol)
 				ready = true
 			}
-			c := w.m.match(m.coarse, w.vCoarse, seen[s].Pose, e.roughEffort())
+			c := w.m.match(m.coarse, w.sCoarse, seen[s].Pose, e.roughEffort())
 			f := e.refine(w, m, c.pose, how)
 			v := e.judge(m, f)
 			v.Iterations += vols[t].Iterations + c.iterations
@@ -683,7 +704,7 @@ func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 
 // judge turns the outcome of a match into the state of the volume.
 func (e *estimator) judge(m *model, f found) Volume {
-	v := Volume{Pose: f.pose, Fit: f.fit, Iterations: f.iterations, Outside: outside(e.g, m.mask, f.pose), State: Aligned, SliceResiduals: f.slices, shares: f.shares, Gain: f.gain}
+	v := Volume{Pose: f.pose, Fit: f.fit, Iterations: f.iterations, Outside: m.fine.outside(f.pose), State: Aligned, SliceResiduals: f.slices, shares: f.shares, Gain: f.gain}
 	say := func(s State, format string, args ...any) {
 		v.State, v.Reason = s, fmt.Sprintf(format, args...)
 	}
@@ -712,34 +733,6 @@ func finitePose(p Pose) bool {
 		}
 	}
 	return true
-}
-
-// outside is the share of the head that pose p moves out of the field of view,
-// which ends half a voxel past the outermost centres.
-func outside(g Grid, mask []bool, p Pose) float64 {
-	b := mul(mustInvert(g.Affine), mul(p.Matrix(), g.Affine))
-	n, out, i := 0, 0, 0
-	for z := range g.N[2] {
-		for y := range g.N[1] {
-			for x := range g.N[0] {
-				if mask[i] {
-					n++
-					q := applyAffine(&b, float64(x), float64(y), float64(z))
-					for a := range q {
-						if !(q[a] >= -0.5 && q[a] <= float64(g.N[a])-0.5) {
-							out++
-							break
-						}
-					}
-				}
-				i++
-			}
-		}
-	}
-	if n == 0 {
-		return 0
-	}
-	return float64(out) / float64(n)
 }
 
 // average maps the aligned volumes back and averages them, slices that did not
@@ -938,7 +931,7 @@ func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimat
 		if vols[t].State == Lost {
 			vols[t].Gain = [4]float64{1}
 			vols[t].Pose = p.At(float64(t))
-			vols[t].Outside = outside(e.g, m.mask, vols[t].Pose)
+			vols[t].Outside = m.fine.outside(vols[t].Pose)
 		}
 	}
 	return &Estimate{

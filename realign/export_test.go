@@ -95,8 +95,8 @@ func RoughMatches(g Grid, data []float32, axis int) (iterations []int, converged
 	m := e.newModel(data[:nv], nil, 3)
 	w := e.scratch[0]
 	for t := range e.nt {
-		w.fine.run(w.vFine, data[t*nv:][:nv])
-		f := w.m.match(m.fine, w.vFine, Identity, e.fineEffort())
+		w.load(data[t*nv:][:nv], 3)
+		f := w.m.match(m.fine, w.sFine, Identity, e.fineEffort())
 		iterations, converged = append(iterations, f.iterations), append(converged, f.converged)
 	}
 	return iterations, converged

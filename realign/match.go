@@ -20,10 +20,10 @@ const unknowns = 10
 // found is the outcome of one match.
 type found struct {
 	pose       Pose
-	gain       [4]float64 // V = (gain[0] + gain[1] X/80 + ...) R
+	gain       [4]float64 // of the volume, at scanner points: gain[0] + (gain[1] X + ...)/80
 	iterations int
 	converged  bool
-	fit        float64 // correlation with the template inside the head, by weight of slice
+	fit        float64 // correlation with the reference inside the head, by weight of slice
 	points     int
 
 	slices []float64 // residual of each slice over the median slice's; nil if the match was not robust
@@ -32,128 +32,111 @@ type found struct {
 
 // effort says how hard a match tries.
 type effort struct {
-	tolerance  float64 // mm: the match ends when no point of the head moves more
+	tolerance  float64 // mm: the match ends when no point of the head would move more
 	iterations int
 	robust     bool // weights by slice and by Tukey's biweight
-	thin       bool // every other voxel only
+	thin       bool // every fourth row only
 	sliceAxis  int
 	skip       []bool // slices that take no part; nil: all do
 }
 
-// matcher aligns smoothed volumes with a template. It owns its scratch and
-// belongs to one goroutine.
+// matcher aligns volumes with a target. It owns its scratch and belongs to one
+// goroutine.
 type matcher struct {
-	points
-	v   []float32 // value of the volume at the point
-	r   []float32 // value of the template
-	res []float32 // residual
+	t     *target
+	v     []float32 // value of the volume at the points
+	in    []float32 // 1 where the point lies inside the volume's field and its slice takes part
+	slice []int32   // of the volume, nearest to the point
+	flat  []int32   // by row: the one slice that all of it lies in, or -1
+	count int       // points that take part
+	res   []float32 // residual
 
-	b      batch
 	weight []float32
-	abs    []float32
+	some   []float32    // sizes of some residuals
 	rows   [5][]float32 // rows of the normal equations: brightness and residual, over the gain
 }
 
-// points are the voxels of a volume that take part in a match, with the template at
-// their matching points.
-type points struct {
-	at    [][3]int32
-	slice []int32
-	near  []int32      // voxel of the template nearest to the matching point
-	w     []float32    // weight of that voxel
-	head  []bool       // inside the head
-	phi   [3][]float32 // scanner coordinates for the gain, from the centre, / gainReach
-	jac   [6][]float32 // gradient and moment of the template, per mm and per rad
-}
-
-func (p *points) reset(room int) {
-	if cap(p.at) < room {
-		p.at, p.slice, p.near = make([][3]int32, 0, room), make([]int32, 0, room), make([]int32, 0, room)
-		p.w, p.head = make([]float32, 0, room), make([]bool, 0, room)
-		for a := range p.phi {
-			p.phi[a] = make([]float32, 0, room)
+// see evaluates a volume at the matching points of a target; with same, the points that
+// take part stay those of the last time.
+func (m *matcher) see(t *target, s *spline, p Pose, e *effort, same bool) {
+	n := len(t.value)
+	m.t = t
+	m.v, m.in, m.slice, m.res, m.weight = sized(m.v, n), sized(m.in, n), sized(m.slice, n), sized(m.res, n), sized(m.weight, n)
+	m.flat = sized(m.flat, len(t.rows))
+	if !same {
+		m.count = 0
+	}
+	b := mul(t.inv, mul(p.Matrix(), t.g.Affine))
+	step := [3]float64{b[0], b[4], b[8]}
+	slices := t.g.N[e.sliceAxis]
+	for k, r := range t.rows {
+		start := applyAffine(&b, float64(r.x), float64(r.y), float64(r.z))
+		v := m.v[r.at:][:r.n]
+		if t.degree == 5 {
+			kernel.AffineRow5(v, s.c, s.n, splinePad, start, step)
+		} else {
+			kernel.AffineRow3(v, s.c, s.n, splinePad, start, step)
 		}
-	}
-	p.at, p.slice, p.near, p.w, p.head = p.at[:0], p.slice[:0], p.near[:0], p.w[:0], p.head[:0]
-	for a := range p.phi {
-		p.phi[a] = p.phi[a][:0]
-	}
-}
-
-// selectPoints lists the voxels of vol that take part at the pose and evaluates
-// the template and its derivatives at their matching points.
-func (m *matcher) selectPoints(t *template, vol []float32, p Pose, e effort) {
-	n := t.g.N
-	m.points.reset(t.room)
-	m.b.reset()
-	m.b.grow(t.room)
-	m.v = m.v[:0]
-	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
-	toCentre := t.g.Affine // voxel index to mm from the centre
-	for a := range t.centre {
-		toCentre[4*a+3] -= t.centre[a]
-	}
-	var lo, hi [3]int
-	var perVoxel [3]float64 // of phi, along a row
-	for a := range lo {
-		perVoxel[a] = float64(toCentre[4*a] * (1.0 / gainReach))
-		lo[a] = int(math.Ceil(t.margin[a]))
-		hi[a] = int(math.Floor(float64(n[a]-1) - t.margin[a]))
-	}
-	forth := mul(t.inv, mul(p.Matrix(), t.g.Affine))
-	lo, hi = t.reached(&forth, lo, hi)
-	for k := lo[2]; k <= hi[2]; k++ {
-		for j := lo[1]; j <= hi[1]; j++ {
-			// Along a row everything is its start and a step for each voxel.
-			row := vol[n[0]*(j+n[1]*k):][:n[0]]
-			o, xo := applyAffine(&b, 0, float64(j), float64(k)), applyAffine(&toCentre, 0, float64(j), float64(k))
-			for a := range xo {
-				xo[a] = float64(xo[a] * (1.0 / gainReach))
+		if same {
+			continue
+		}
+		in := m.in[r.at:][:r.n]
+		lo, hi := inside(&start, step, r.n, t.g.N, t.margin)
+		m.count += hi - lo
+		clear(in)
+		for i := range in[lo:hi] {
+			in[lo+i] = 1
+		}
+		x, dx := start[e.sliceAxis], step[e.sliceAxis]
+		first, last := sliceAt(x, slices), sliceAt(x+float64(dx*float64(r.n-1)), slices)
+		if first == last {
+			m.flat[k] = first
+			if e.skip != nil && e.skip[first] {
+				clear(in)
+				m.count -= hi - lo
 			}
-			for i := lo[0]; i <= hi[0]; i++ {
-				if e.thin && white(n, i, j, k) {
-					continue
-				}
-				slice := [3]int{i, j, k}[e.sliceAxis]
-				if e.skip != nil && e.skip[slice] {
-					continue
-				}
-				fi := float64(i)
-				y := [3]float64{o[0] + float64(b[0]*fi), o[1] + float64(b[4]*fi), o[2] + float64(b[8]*fi)}
-				near, ok := t.see(&m.b, &y)
-				if !ok {
-					continue
-				}
-				m.at = append(m.at, [3]int32{int32(i), int32(j), int32(k)})
-				m.slice = append(m.slice, int32(slice))
-				m.near = append(m.near, int32(near))
-				m.head = append(m.head, t.head[near])
-				w := float32(1)
-				if t.weight != nil {
-					w = t.weight[near]
-				}
-				m.w = append(m.w, w)
-				for a := range xo {
-					m.phi[a] = append(m.phi[a], float32(xo[a]+float64(perVoxel[a]*fi)))
-				}
-				m.v = append(m.v, row[i])
+			continue
+		}
+		m.flat[k] = -1
+		for i := range r.n {
+			at := sliceAt(x+float64(dx*float64(i)), slices)
+			m.slice[r.at+i] = at
+			if e.skip != nil && e.skip[at] && in[i] > 0 {
+				in[i] = 0
+				m.count--
 			}
 		}
 	}
-	t.s.gradients(&m.b)
-	count := len(m.at)
-	m.r = append(m.r[:0], m.b.v...)
-	for a := range m.jac {
-		m.jac[a] = sized(m.jac[a], count)
-	}
-	for q, at := range m.at {
-		g := [3]float64{float64(m.b.gx[q]), float64(m.b.gy[q]), float64(m.b.gz[q])}
-		gw := toWorld(&t.inv, g)
-		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
-		mo := cross(applyAffine(&toCentre, y[0], y[1], y[2]), gw)
-		for a := range 3 {
-			m.jac[a][q], m.jac[3+a][q] = float32(gw[a]), float32(mo[a])
+}
+
+// bySlice calls f for every stretch of points that lie in one slice of the volume.
+func (m *matcher) bySlice(f func(slice int32, from, to int)) {
+	for k, r := range m.t.rows {
+		if s := m.flat[k]; s >= 0 {
+			f(s, r.at, r.at+r.n)
+			continue
 		}
+		from := r.at
+		for q := r.at + 1; q <= r.at+r.n; q++ {
+			if q == r.at+r.n || m.slice[q] != m.slice[from] {
+				f(m.slice[from], from, q)
+				from = q
+			}
+		}
+	}
+}
+
+// extrapolate changes the volume's values by what the reference says of a step d of
+// the pose: as the reference changes, at the volume's brightness.
+func (m *matcher) extrapolate(d Twist, gain float64) {
+	d0, d1, d2 := float32(d.V[0]*gain), float32(d.V[1]*gain), float32(d.V[2]*gain)
+	d3, d4, d5 := float32(d.W[0]*gain), float32(d.W[1]*gain), float32(d.W[2]*gain)
+	j := &m.t.jac
+	j0, j1, j2, j3, j4, j5 := j[0][:len(m.v)], j[1][:len(m.v)], j[2][:len(m.v)], j[3][:len(m.v)], j[4][:len(m.v)], j[5][:len(m.v)]
+	for q := range m.v {
+		a := float32(j0[q]*d0) + float32(j1[q]*d1) + float32(j2[q]*d2)
+		b := float32(j3[q]*d3) + float32(j4[q]*d4) + float32(j5[q]*d5)
+		m.v[q] += a + b
 	}
 }
 
@@ -172,41 +155,22 @@ func white(n [3]int, x, y, z int) bool {
 	return (min(x, n[0]-1-x)+min(y, n[1]-1-y)+min(z, n[2]-1-z))&1 != 0
 }
 
-// revalue evaluates the template anew at another pose, derivatives kept.
-func (m *matcher) revalue(t *template, p Pose) {
-	b := mul(t.inv, mul(p.Inverse().Matrix(), t.g.Affine))
-	m.b.reset()
-	for _, at := range m.at {
-		y := applyAffine(&b, float64(at[0]), float64(at[1]), float64(at[2]))
-		t.s.add(&m.b, y[0], y[1], y[2])
-	}
-	t.s.valuesInto(m.r, &m.b)
-}
+// shrink is what is left of a step after the next one, at most: 0.015 to 0.03 on heads
+// with noise. (Derivatives are those of the reference itself, and slant makes up for the
+// biweight.)
+const shrink = 0.05
 
-// extrapolate changes the template's values by J d. jac holds the gradient and
-// moment of the template at the matching point, which moves by the opposite of
-// the twist.
-func (m *matcher) extrapolate(d Twist) {
-	d0, d1, d2 := float32(d.V[0]), float32(d.V[1]), float32(d.V[2])
-	d3, d4, d5 := float32(d.W[0]), float32(d.W[1]), float32(d.W[2])
-	j0, j1, j2, j3, j4, j5 := m.jac[0], m.jac[1], m.jac[2], m.jac[3], m.jac[4], m.jac[5]
-	for q := range m.r {
-		a := float32(j0[q]*d0) + float32(j1[q]*d1) + float32(j2[q]*d2)
-		b := float32(j3[q]*d3) + float32(j4[q]*d4) + float32(j5[q]*d5)
-		m.r[q] -= a + b
-	}
-}
+// enough: where what is left of a step is below a tenth of what noise leaves uncertain,
+// another step would mend at most half a percent of the error.
+const enough = 0.1
 
-// nearMM is how far the pose may move, at the head's edge, before the template
+// nearMM is how far the pose may move, at the head's edge, before the volume
 // is evaluated anew; below, its change is J d. What that leaves out is half the
 // second derivative times d^2: for an image smoothed by 2 mm, d = 0.01 mm, one
 // part in 10^5 of the contrast, which moves a pose by less than 0.1 um.
 const nearMM = 0.01
 
-// farMM is how far the pose may wander, at the head's edge, from where points
-// and derivatives were taken before they are taken anew: a tenth of a
-// millimetre is a thirtieth of a voxel, over which the slope of a smoothed image
-// changes by about a percent.
+// farMM is how far apart two poses must be, at the head's edge, to be worth a match each.
 const farMM = 0.1
 
 // settling: with few planes a match can go to and fro between two poses, each
@@ -218,19 +182,24 @@ const settling = 15
 // hold takes: nearly a head's length.
 const runaway = 150
 
-// match aligns vol with the template, from a starting pose, by Gauss-Newton
-// (Baker, Matthews 2004, IJCV 56(3):221-255, section 2, for rigid maps; the
-// gain joins the unknowns as a linear appearance, ibid. part 3).
-func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found {
+// match aligns a volume, given by its spline, with the target, from a starting pose, by
+// Gauss-Newton with derivatives taken once, of the reference at its own voxels: the
+// inverse compositional algorithm (Baker, Matthews 2004, IJCV 56(3):221-255, section
+// 3.2, for rigid maps; the gain joins the unknowns as a linear appearance, ibid. part 3).
+func (m *matcher) match(t *target, s *spline, start Pose, e effort) found {
 	f := found{pose: start}
-	m.selectPoints(t, vol, start, e)
-	taken, valued := start, start
-	f.gain[0] = m.ratio()
+	if e.thin && t.fewer != nil {
+		t = t.fewer
+	}
+	m.see(t, s, start, &e, false)
+	valued := start
+	var gain [4]float64 // in the frame of the reference
+	gain[0] = m.ratio()
 	for f.iterations < e.iterations {
-		if f.points = len(m.at); f.points < 10*unknowns {
+		if f.points = m.count; f.points < 10*unknowns {
 			return f // hardly any overlap: fit stays 0
 		}
-		step, ok := m.step(&f, e, t.g.N[e.sliceAxis])
+		step, size, ok := m.step(&gain, &e)
 		f.iterations++
 		if !ok {
 			return f
@@ -240,30 +209,42 @@ func (m *matcher) match(t *template, vol []float32, start Pose, e effort) found 
 			return f
 		}
 		f.pose = f.pose.Compose(Exp(step).centred(t.centre))
-		if moved < e.tolerance {
+		done := float64(moved*shrink) < e.tolerance || e.robust && float64(size*shrink) < enough
+		if distance(valued, f.pose, t.centre) > nearMM && !done {
+			m.see(t, s, f.pose, &e, f.iterations >= settling)
+			valued = f.pose
+		} else {
+			m.extrapolate(step, gain[0])
+		}
+		if done {
 			f.converged = true
 			break
 		}
-		switch {
-		case distance(taken, f.pose, t.centre) > farMM && f.iterations < settling:
-			m.selectPoints(t, vol, f.pose, e)
-			taken, valued = f.pose, f.pose
-		case distance(valued, f.pose, t.centre) > nearMM:
-			m.revalue(t, f.pose)
-			valued = f.pose
-		default:
-			m.extrapolate(step)
-		}
 	}
+	f.gain = scannerGain(gain, f.pose, t.centre)
 	var weights []float64
-	m.residuals(&f)
+	m.residuals(&gain)
 	if e.robust {
-		f.slices = m.sliceResiduals(t.g.N[e.sliceAxis])
-		f.shares = m.sliceShares(t.g.N[e.sliceAxis])
+		f.slices, f.shares = m.slicesOf(t.g.N[e.sliceAxis])
 		weights = sliceWeights(f.slices)
 	}
 	f.fit = m.correlation(weights)
 	return f
+}
+
+// scannerGain carries a gain that is linear in the frame of the reference, about c, into
+// the scanner's, about the same point: pose takes the one to the other.
+func scannerGain(g [4]float64, pose Pose, c [3]float64) (out [4]float64) {
+	back := pose.Inverse().Apply(c)
+	out[0] = g[0]
+	r := pose.rotation()
+	for a := range 3 {
+		out[0] += float64(g[1+a]*(back[a]-c[a])) * (1.0 / gainReach)
+		for b := range 3 {
+			out[1+a] += float64(r[3*a+b] * g[1+b])
+		}
+	}
+	return out
 }
 
 // centred turns a map about the origin into the same map about c.
@@ -286,9 +267,10 @@ func distance(p, q Pose, c [3]float64) float64 {
 // ratio is the one gain that fits the values best.
 func (m *matcher) ratio() float64 {
 	vr, rr := 0.0, 0.0
-	for i, r := range m.r {
-		vr += float64(float64(m.v[i]) * float64(r))
-		rr += float64(float64(r) * float64(r))
+	for i, r := range m.t.value {
+		u := float64(m.in[i]) * float64(r)
+		vr += float64(float64(m.v[i]) * u)
+		rr += float64(float64(r) * u)
 	}
 	if !(rr > 0) {
 		return 1
@@ -296,64 +278,77 @@ func (m *matcher) ratio() float64 {
 	return vr / rr
 }
 
-// residuals evaluates e at the points, with the gain in f.
-func (m *matcher) residuals(f *found) {
-	m.res = sized(m.res, len(m.at))
-	kernel.Residual(m.res, m.v, m.r, m.phi[0], m.phi[1], m.phi[2], f.gain32())
-}
-
-func (f *found) gain32() (g [4]float32) {
+func narrow(gain *[4]float64) (g [4]float32) {
 	for a := range g {
-		g[a] = float32(f.gain[a])
+		g[a] = float32(gain[a])
 	}
 	return g
 }
 
-// step solves the weighted normal equations once. It updates the gain in f and
-// returns the twist about the centre by which the pose is to move. n is the
-// number of slices.
+// residuals evaluates the residual at the points.
+func (m *matcher) residuals(gain *[4]float64) {
+	t := m.t
+	kernel.Residual(m.res, m.v, t.value, t.phi[0], t.phi[1], t.phi[2], narrow(gain))
+}
+
+// step solves the weighted normal equations once. It updates the gain and returns the
+// twist about the centre by which the pose is to move, and how large that is in units of
+// what noise leaves uncertain, rms over the unknowns (the Newton decrement: Boyd,
+// Vandenberghe 2004, Convex Optimization, eq. 9.30).
 //
-// With de/dd = gain J and de/db = -r (1, phi), the equations are those of the rows
-// J, -r/gain (1, phi) and e/gain at gain^2 times the weight, which leaves J as it is
-// from step to step.
-func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
-	m.residuals(f)
-	m.weight = sized(m.weight, len(m.at))
+// With e = V(p x) - g(x) T(x), de/dd = g J and de/db = -T (1, phi), the equations are
+// those of the rows J, -T/g (1, phi) and e/g at g^2 times the weight, which leaves J as
+// it is from step to step.
+func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, ok bool) {
+	t := m.t
+	m.residuals(gain)
+	copy(m.weight, m.in)
+	longer, scale := 1.0, 0.0
 	if e.robust {
-		bySlice := sliceWeights(m.sliceResiduals(n))
-		for q, s := range m.slice {
-			m.weight[q] = float32(bySlice[s] * float64(m.w[q]))
+		slices, _ := m.slicesOf(t.g.N[e.sliceAxis])
+		bySlice := sliceWeights(slices)
+		m.bySlice(func(s int32, from, to int) {
+			if w := float32(bySlice[s]); w != 1 {
+				for q := from; q < to; q++ {
+					m.weight[q] *= w
+				}
+			}
+		})
+		if t.weight != nil {
+			for q, w := range t.weight {
+				m.weight[q] *= w
+			}
 		}
-		if cut := float32(tukeyCut * madScale * float64(m.medianAbs())); cut > 0 {
+		scale = madScale * float64(m.medianAbs())
+		if cut := float32(tukeyCut * scale); cut > 0 {
+			longer = m.slant(cut)
 			kernel.Tukey(m.weight, m.res, cut)
 		}
-	} else {
-		for q := range m.weight {
-			m.weight[q] = 1
-		}
 	}
+	n := len(m.v)
 	for a := range m.rows {
-		m.rows[a] = sized(m.rows[a], len(m.at))
+		m.rows[a] = sized(m.rows[a], n)
 	}
-	gain := f.gain32()
-	p0, p1, p2 := m.phi[0], m.phi[1], m.phi[2]
-	r0, r1, r2, r3, r4 := m.rows[0], m.rows[1], m.rows[2], m.rows[3], m.rows[4]
-	for q, r := range m.r {
-		g := gain[0] + float32(gain[1]*p0[q]) + float32(gain[2]*p1[q]) + float32(gain[3]*p2[q])
+	g32 := narrow(gain)
+	p0, p1, p2 := t.phi[0][:n], t.phi[1][:n], t.phi[2][:n]
+	r0, r1, r2, r3, r4 := m.rows[0][:n], m.rows[1][:n], m.rows[2][:n], m.rows[3][:n], m.rows[4][:n]
+	res, weight := m.res[:n], m.weight[:n]
+	for q, r := range t.value[:n] {
+		g := g32[0] + float32(g32[1]*p0[q]) + float32(g32[2]*p1[q]) + float32(g32[3]*p2[q])
 		if !(g > faintest) {
 			// Shading so strong that nothing is left there.
-			m.weight[q], r0[q], r1[q], r2[q], r3[q], r4[q] = 0, 0, 0, 0, 0, 0
+			weight[q], r0[q], r1[q], r2[q], r3[q], r4[q] = 0, 0, 0, 0, 0, 0
 			continue
 		}
 		over := 1 / g
 		a := -float32(r * over)
 		r0[q], r1[q], r2[q], r3[q] = a, float32(a*p0[q]), float32(a*p1[q]), float32(a*p2[q])
-		r4[q] = float32(m.res[q] * over)
-		m.weight[q] = float32(m.weight[q] * float32(g*g))
+		r4[q] = float32(res[q] * over)
+		weight[q] = float32(weight[q] * float32(g*g))
 	}
 	const rows = unknowns + 1
 	var sum [rows * (rows + 1) / 2]float64
-	kernel.Gram(sum[:], [][]float32{m.jac[0], m.jac[1], m.jac[2], m.jac[3], m.jac[4], m.jac[5], r0, r1, r2, r3, r4}, m.weight)
+	kernel.Gram(sum[:], [][]float32{t.jac[0], t.jac[1], t.jac[2], t.jac[3], t.jac[4], t.jac[5], r0, r1, r2, r3, r4}, weight)
 	var h [unknowns][unknowns]float64
 	var g [unknowns]float64
 	at := 0
@@ -367,13 +362,48 @@ func (m *matcher) step(f *found, e effort, n int) (Twist, bool) {
 	}
 	d, ok := solve(&h, &g)
 	if !ok {
-		return Twist{}, false
+		return Twist{}, 0, false
 	}
-	for a := range 4 {
-		f.gain[a] -= d[6+a]
+	for a := range d {
+		size += float64(d[a] * g[a])
 	}
-	return Twist{V: [3]float64{-d[0], -d[1], -d[2]}, W: [3]float64{-d[3], -d[4], -d[5]}}, true
+	size = math.Sqrt(max(0, size)/unknowns) / scale
+	for a := range d {
+		d[a] = float64(d[a] * longer)
+	}
+	for a := range gain {
+		gain[a] -= d[6+a]
+	}
+	return Twist{V: [3]float64{-d[0], -d[1], -d[2]}, W: [3]float64{-d[3], -d[4], -d[5]}}, size, true
 }
+
+// slant is how much longer than that of reweighted least squares a step has to be:
+// those equations have the biweight where Newton's have the slope of its influence,
+// which is smaller. With u = 1 - (r/cut)^2 they are u^2 and u (5 u - 4); their means,
+// by weight and squared gradient, stand for them at every point (Huber 1981, Robust
+// Statistics, section 7.8, modified residuals; from memory). For normal residuals it
+// is 1.2. Every eighth point tells.
+func (m *matcher) slant(cut float32) float64 {
+	over := 1 / cut
+	var full, slope float64
+	for q := 0; q < len(m.res); q += 8 {
+		r := float32(m.res[q] * over)
+		u := 1 - float32(r*r)
+		if !(u > 0) {
+			continue
+		}
+		w := float64(m.weight[q]) * float64(m.t.slope[q]) * float64(u)
+		full += float64(w * float64(u))
+		slope += float64(w * (float64(5*float64(u)) - 4))
+	}
+	if !(slope > 0) {
+		return mostSlant
+	}
+	return min(full/slope, mostSlant)
+}
+
+// mostSlant: where residuals are not normal, nothing is gained by leaping.
+const mostSlant = 1.3
 
 // faintest gain that a voxel may have and still count.
 const faintest = 1e-3
@@ -386,45 +416,42 @@ const (
 	madScale = 1.4826
 )
 
-// sliceResiduals gives the rms residual of each of n slices over that of the
-// median slice; 0 for a slice without points.
-func (m *matcher) sliceResiduals(n int) []float64 {
-	sum, count := make([]float64, n), make([]float64, n)
-	for q, r := range m.res {
-		sum[m.slice[q]] += float64(float64(r) * float64(r))
-		count[m.slice[q]]++
-	}
+// slicesOf gives the rms residual of each of n slices of the volume over that of the
+// median slice, and over the rms of the reference there; 0 for a slice without points.
+func (m *matcher) slicesOf(n int) (over, share []float64) {
+	over, share = make([]float64, n), make([]float64, n)
+	signal, count := make([]float64, n), make([]float64, n)
+	m.bySlice(func(s int32, from, to int) {
+		var sum, square, number float64
+		res, value := m.res[from:to], m.t.value[from:to]
+		for q, in := range m.in[from:to] {
+			w, r, t := float64(in), float64(res[q]), float64(value[q])
+			sum += float64(float64(w*r) * r)
+			square += float64(float64(w*t) * t)
+			number += w
+		}
+		over[s] += sum
+		signal[s] += square
+		count[s] += number
+	})
 	var seen []float32
-	for s := range sum {
+	for s := range over {
+		if signal[s] > 0 {
+			share[s] = math.Sqrt(over[s] / signal[s])
+		}
 		if count[s] > 0 {
-			sum[s] = math.Sqrt(sum[s] / count[s])
-			seen = append(seen, float32(sum[s]))
+			over[s] = math.Sqrt(over[s] / count[s])
+			seen = append(seen, float32(over[s]))
 		}
 	}
 	mid := float64(median(seen))
 	if !(mid > 0) {
-		return make([]float64, n)
+		return make([]float64, n), share
 	}
-	for s := range sum {
-		sum[s] /= mid
+	for s := range over {
+		over[s] /= mid
 	}
-	return sum
-}
-
-// sliceShares gives the rms residual of each of n slices over the rms of the
-// template there; 0 for a slice without points.
-func (m *matcher) sliceShares(n int) []float64 {
-	share, signal := make([]float64, n), make([]float64, n)
-	for q, r := range m.res {
-		share[m.slice[q]] += float64(float64(r) * float64(r))
-		signal[m.slice[q]] += float64(float64(m.r[q]) * float64(m.r[q]))
-	}
-	for s := range share {
-		if signal[s] > 0 {
-			share[s] = math.Sqrt(share[s] / signal[s])
-		}
-	}
-	return share
+	return over, share
 }
 
 // sliceWeights lowers the weight of slices whose residual stands out: with z
@@ -443,12 +470,20 @@ func sliceWeights(z []float64) []float64 {
 	return w
 }
 
-// medianAbs is the median absolute residual.
+// medianAbs is the median size of the residuals: of one in a few of them, where there
+// are so many that what it is uncertain by (1.3 / sqrt of their number) is of no account.
 func (m *matcher) medianAbs() float32 {
-	m.abs = sized(m.abs, len(m.res))
-	kernel.Abs(m.abs, m.res)
-	return medianOf(m.abs)
+	m.some = m.some[:0]
+	stride := 1 + len(m.res)/enoughResiduals
+	for q := stride / 2; q < len(m.res); q += stride {
+		if m.in[q] > 0 {
+			m.some = append(m.some, float32(math.Abs(float64(m.res[q]))))
+		}
+	}
+	return medianOf(m.some)
 }
+
+const enoughResiduals = 8000
 
 // median returns the upper median and reorders v. (Hoare 1961, CACM 4:321.)
 func median(v []float32) float32 {
@@ -484,37 +519,51 @@ func median(v []float32) float32 {
 	return v[k]
 }
 
-// correlation is Pearson's, between volume and template over the head, by
+// correlation is Pearson's, between volume and reference over the head, by
 // weight of slice (nil: all alike).
 func (m *matcher) correlation(weights []float64) float64 {
-	weight := func(q int) float64 {
-		if !m.head[q] {
-			return 0
-		}
-		if weights == nil {
-			return 1
-		}
-		return weights[m.slice[q]]
-	}
+	t := m.t
 	var n, sv, sr float64
-	for q := range m.at {
-		w := weight(q)
-		n += w
-		sv += float64(w * float64(m.v[q]))
-		sr += float64(w * float64(m.r[q]))
-	}
+	m.bySlice(func(s int32, from, to int) {
+		w := 1.0
+		if weights != nil {
+			w = weights[s]
+		}
+		var k, a, b float64
+		for q := from; q < to; q++ {
+			if t.inHead[q] && m.in[q] > 0 {
+				k++
+				a += float64(m.v[q])
+				b += float64(t.value[q])
+			}
+		}
+		n += float64(w * k)
+		sv += float64(w * a)
+		sr += float64(w * b)
+	})
 	if n < 2 {
 		return 0
 	}
 	mv, mr := sv/n, sr/n
 	var vv, rr, vr float64
-	for q := range m.at {
-		w := weight(q)
-		a, b := float64(m.v[q])-mv, float64(m.r[q])-mr
-		vv += float64(float64(w*a) * a)
-		rr += float64(float64(w*b) * b)
-		vr += float64(float64(w*a) * b)
-	}
+	m.bySlice(func(s int32, from, to int) {
+		w := 1.0
+		if weights != nil {
+			w = weights[s]
+		}
+		var x, y, z float64
+		for q := from; q < to; q++ {
+			if t.inHead[q] && m.in[q] > 0 {
+				a, b := float64(m.v[q])-mv, float64(t.value[q])-mr
+				x += float64(a * a)
+				y += float64(b * b)
+				z += float64(a * b)
+			}
+		}
+		vv += float64(w * x)
+		rr += float64(w * y)
+		vr += float64(w * z)
+	})
 	if !(vv > 0 && rr > 0) {
 		return 0
 	}

@@ -94,20 +94,22 @@ func (l *leftovers) add(m *matcher, f *found) {
 		return
 	}
 	w := sliceWeights(f.slices)
-	for q, r := range m.res {
-		near := m.near[q]
-		if w[m.slice[q]] < weakBelow {
-			continue
+	over := 1 / l.unit
+	m.bySlice(func(s int32, from, to int) {
+		if w[s] < weakBelow {
+			return
 		}
-		v := float64(r) / l.unit
-		if !(math.Abs(v) < 1<<22) {
-			continue
+		for q := from; q < to; q++ {
+			v := float64(float64(m.res[q]) * over)
+			if m.in[q] == 0 || !(math.Abs(v) < 1<<22) {
+				continue
+			}
+			k, at := int64(v), m.t.voxel[q]
+			l.sum[at] += k
+			l.sum2[at] += k * k
+			l.count[at]++
 		}
-		k := int64(v)
-		l.sum[near] += k
-		l.sum2[near] += k * k
-		l.count[near]++
-	}
+	})
 }
 
 // merge adds what another worker has summed.
