@@ -740,7 +740,9 @@ func finitePose(p Pose) bool {
 func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unknown []bool, err error) {
 	nv := e.g.voxels()
 	nx := e.g.N[0]
-	sum, out, full, count := make([]float64, nv), make([]float64, nv), make([]float64, nv), make([]int32, nv)
+	sum, out := make([]float64, nv), make([]float64, nv)
+	// How much less than all volumes count, and how many do not count at all.
+	lack, missed := make([]float64, nv), make([]int32, nv)
 	var use []int
 	for t, v := range vols {
 		if v.State == Aligned {
@@ -784,11 +786,10 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 					lo, hi = inside(&start, step, nx, e.g.N, [3]float64{bentPlanes, bentPlanes, bentPlanes})
 				}
 				at := nx * row
-				values, sum, full, count := vol[at:][:nx], sum[at:][:nx], full[at:][:nx], count[at:][:nx]
-				for x := lo; x < hi; x++ {
-					sum[x] += float64(values[x])
-					full[x]++
-					count[x]++
+				values, sum, lack, missed := vol[at:][:nx], sum[at:][:nx], lack[at:][:nx], missed[at:][:nx]
+				deeply := sum[lo:hi]
+				for x, v := range values[lo:hi] {
+					deeply[x] += float64(v)
 				}
 				for x := 0; x < nx; x++ {
 					if x == lo && lo < hi {
@@ -805,12 +806,13 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 					}
 					if !in {
 						out[at+x] += float64(values[x])
+						lack[x]++
+						missed[x]++
 						continue
 					}
 					w := edgeWeight(deep)
 					sum[x] += float64(w * float64(values[x]))
-					full[x] += w
-					count[x]++
+					lack[x] += 1 - w
 				}
 			}
 		})
@@ -818,15 +820,14 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 	if err != nil {
 		return nil, nil, err
 	}
-	total := countState(vols, Aligned)
 	image, unknown = make([]float32, nv), make([]bool, nv)
 	for v := range image {
-		if count[v] > 0 {
-			image[v] = float32(sum[v] / full[v])
+		if int(missed[v]) < len(use) {
+			image[v] = float32(sum[v] / (float64(len(use)) - lack[v]))
 		} else {
-			image[v] = float32(out[v] / float64(total)) // nothing but values of the field's edge
+			image[v] = float32(out[v] / float64(len(use))) // nothing but values of the field's edge
 		}
-		unknown[v] = float64(count[v]) < float64(coverage*float64(total))
+		unknown[v] = float64(len(use)-int(missed[v])) < float64(coverage*float64(len(use)))
 	}
 	return image, unknown, nil
 }
