@@ -545,7 +545,7 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 		w := e.scratch[worker]
 		w.load(vol, m.fine.degree)
 		if known != nil && known[t].State != Lost {
-			f := w.m.match(m.fine, w.sFine, known[t].Pose, how)
+			f := e.withoutSpoilt(w, m, vol, w.m.match(m.fine, w.sFine, known[t].Pose, how), how)
 			if vols[t] = e.judge(m, f); vols[t].State != Lost {
 				if vols[t].State == Aligned && how.robust && !how.thin {
 					left[worker].add(&w.m, &f)
@@ -554,7 +554,7 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 			}
 		}
 		w.loadCoarse(vol)
-		vols[t] = e.search(w, m, how)
+		vols[t] = e.judge(m, e.withoutSpoilt(w, m, vol, e.search(w, m, how), how))
 		return nil
 	})
 	if err != nil {
@@ -580,13 +580,13 @@ func (e *estimator) quieten(m *model, vols []Volume, left *leftovers, passes int
 
 // search matches the volume in w from the identity, and from a fan of turns if
 // that does not lead to a good match.
-func (e *estimator) search(w *workspace, m *model, how effort) Volume {
+func (e *estimator) search(w *workspace, m *model, how effort) found {
 	rough := e.roughEffort()
 	c := w.m.match(m.coarse, w.sCoarse, Identity, rough)
 	best := e.refine(w, m, c.pose, how)
 	best.iterations += c.iterations
 	if best.fit >= fanBelow && best.converged {
-		return e.judge(m, best)
+		return best
 	}
 	// Each start takes a few steps; the most promising go on to the end.
 	quick := rough
@@ -621,8 +621,47 @@ func (e *estimator) search(w *workspace, m *model, how effort) Volume {
 			best = f
 		}
 	}
-	return e.judge(m, best)
+	return best
 }
+
+// withoutSpoilt matches a volume once more if some of its slices are spoilt, with those
+// filled from their neighbours, so that filter and spline carry nothing of them
+// to points beside them, and left out.
+func (e *estimator) withoutSpoilt(w *workspace, m *model, vol []float32, f found, how effort) found {
+	if !how.robust || !finitePose(f.pose) {
+		return f
+	}
+	spoilt := make([]bool, len(f.slices))
+	copy(spoilt, how.skip)
+	for s, z := range f.slices {
+		spoilt[s] = spoilt[s] || z > spoiltFrom && f.shares[s] > weakShare
+	}
+	if len(spoilt) == 0 || slices.Equal(spoilt, how.skip) {
+		return f
+	}
+	patched := e.patch(vol, spoilt)
+	if patched == nil {
+		return f
+	}
+	w.load(patched, m.fine.degree)
+	how.skip = spoilt
+	g := w.m.match(m.fine, w.sFine, f.pose, how)
+	g.iterations += f.iterations
+	f.again, g.again = true, true
+	if !g.converged {
+		return f
+	}
+	for s, left := range spoilt {
+		if left {
+			g.slices[s], g.shares[s] = f.slices[s], f.shares[s]
+		}
+	}
+	return g
+}
+
+// spoiltFrom: a slice with a residual above so many times the usual one counts less than
+// a tenth. It is better left out altogether.
+const spoiltFrom = 2.7
 
 func (e *estimator) roughEffort() effort {
 	return effort{tolerance: coarseTolerance, iterations: coarseMaxIterations, sliceAxis: e.opt.SliceAxis}
@@ -690,7 +729,8 @@ func (e *estimator) secondLook(m *model, vols []Volume, how effort) error {
 				ready = true
 			}
 			c := w.m.match(m.coarse, w.sCoarse, seen[s].Pose, e.roughEffort())
-			f := e.refine(w, m, c.pose, how)
+			f := e.withoutSpoilt(w, m, vol, e.refine(w, m, c.pose, how), how)
+			ready = ready && !f.again
 			v := e.judge(m, f)
 			v.Iterations += vols[t].Iterations + c.iterations
 			if v.State == Aligned || v.Fit > vols[t].Fit && v.State != Lost {

@@ -25,6 +25,7 @@ type found struct {
 	converged  bool
 	fit        float64 // correlation with the reference inside the head, by weight of slice
 	points     int
+	again      bool // matched with slices left out: the volume is not as it was loaded
 
 	slices []float64 // residual of each slice over the median slice's; nil if the match was not robust
 	shares []float64 // residual of each slice over its signal
