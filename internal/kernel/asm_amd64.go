@@ -106,3 +106,13 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32)
 //
 //go:noescape
 func abs(dst *float32, src *float32, n int, masks *int32)
+
+// locate is the assembly of locator.plain.
+//
+//go:noescape
+func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int
+
+// cells is the assembly of cellsPlain; n is a multiple of 8.
+//
+//go:noescape
+func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32)

@@ -3167,3 +3167,320 @@ eight_end:
 done:
 	VZEROUPPER
 	RET
+
+// func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int
+// Requires: AVX, AVX2, POPCNT
+TEXT ·locate(SB), $64-120
+	MOVQ first+48(FP), AX
+	MOVQ axes+64(FP), DX
+	MOVQ strides+72(FP), BX
+	MOVQ mask+80(FP), SI
+	MOVQ table+96(FP), DI
+	LEAQ 31(SP), R8
+	ANDQ $-32, R8
+	XORQ R9, R9
+	XORQ R10, R10
+
+next:
+	CMPQ         R9, count+56(FP)
+	JGE          end
+	LEAQ         (AX)(R9*1), R11
+	VXORPS       X0, X0, X0
+	VCVTSI2SDQ   R11, X0, X0
+	VBROADCASTSD X0, Y1
+	VADDPD       (DI), Y1, Y0
+	VADDPD       32(DI), Y1, Y1
+	VBROADCASTSD 24(DX), Y2
+	VMULPD       Y0, Y2, Y2
+	VBROADCASTSD (DX), Y3
+	VADDPD       Y3, Y2, Y2
+	VBROADCASTSD 48(DX), Y3
+	VCMPPD       $0x02, Y2, Y3, Y3
+	VBROADCASTSD 72(DX), Y6
+	VCMPPD       $0x0d, Y2, Y6, Y6
+	VANDPD       Y6, Y3, Y3
+	VBROADCASTSD 32(DX), Y6
+	VMULPD       Y0, Y6, Y6
+	VBROADCASTSD 8(DX), Y7
+	VADDPD       Y7, Y6, Y6
+	VBROADCASTSD 56(DX), Y7
+	VCMPPD       $0x02, Y6, Y7, Y7
+	VANDPD       Y7, Y3, Y3
+	VBROADCASTSD 80(DX), Y7
+	VCMPPD       $0x0d, Y6, Y7, Y7
+	VANDPD       Y7, Y3, Y3
+	VBROADCASTSD 40(DX), Y7
+	VMULPD       Y0, Y7, Y7
+	VBROADCASTSD 16(DX), Y0
+	VADDPD       Y0, Y7, Y7
+	VBROADCASTSD 64(DX), Y0
+	VCMPPD       $0x02, Y7, Y0, Y0
+	VANDPD       Y0, Y3, Y3
+	VBROADCASTSD 88(DX), Y0
+	VCMPPD       $0x0d, Y7, Y0, Y0
+	VANDPD       Y0, Y3, Y3
+	VBROADCASTSD 24(DX), Y0
+	VMULPD       Y1, Y0, Y0
+	VBROADCASTSD (DX), Y8
+	VADDPD       Y8, Y0, Y0
+	VBROADCASTSD 48(DX), Y8
+	VCMPPD       $0x02, Y0, Y8, Y8
+	VBROADCASTSD 72(DX), Y9
+	VCMPPD       $0x0d, Y0, Y9, Y9
+	VANDPD       Y9, Y8, Y8
+	VBROADCASTSD 32(DX), Y9
+	VMULPD       Y1, Y9, Y9
+	VBROADCASTSD 8(DX), Y10
+	VADDPD       Y10, Y9, Y9
+	VBROADCASTSD 56(DX), Y10
+	VCMPPD       $0x02, Y9, Y10, Y10
+	VANDPD       Y10, Y8, Y8
+	VBROADCASTSD 80(DX), Y10
+	VCMPPD       $0x0d, Y9, Y10, Y10
+	VANDPD       Y10, Y8, Y8
+	VBROADCASTSD 40(DX), Y10
+	VMULPD       Y1, Y10, Y10
+	VBROADCASTSD 16(DX), Y1
+	VADDPD       Y1, Y10, Y10
+	VBROADCASTSD 64(DX), Y1
+	VCMPPD       $0x02, Y10, Y1, Y1
+	VANDPD       Y1, Y8, Y8
+	VBROADCASTSD 88(DX), Y1
+	VCMPPD       $0x0d, Y10, Y1, Y1
+	VANDPD       Y1, Y8, Y8
+	VSHUFPS      $0x88, Y8, Y3, Y1
+	VPERMQ       $0xd8, Y1, Y1
+	VMOVMSKPS    Y1, R12
+	MOVQ         count+56(FP), CX
+	SUBQ         R9, CX
+	CMPQ         CX, $0x08
+	JGE          whole
+	MOVQ         $0x00000001, R13
+	SHLQ         CL, R13
+	DECQ         R13
+	ANDL         R13, R12
+
+whole:
+	MOVQ      accept+88(FP), CX
+	TESTQ     CX, CX
+	JZ        chosen
+	VPXOR     X4, X4, X4
+	VMOVQ     (CX)(R9*1), X3
+	VPCMPEQB  X4, X3, X3
+	VPMOVMSKB X3, CX
+	NOTL      CX
+	ANDL      CX, R12
+
+chosen:
+	TESTL        R12, R12
+	JZ           none
+	VMOVUPD      64(DI), Y3
+	VCVTTPD2DQY  Y2, X4
+	VCVTDQ2PD    X4, Y8
+	VSUBPD       Y8, Y2, Y8
+	VCMPPD       $0x02, Y8, Y3, Y2
+	VCVTPD2PSY   Y8, X5
+	VCVTTPD2DQY  Y0, X8
+	VCVTDQ2PD    X8, Y11
+	VSUBPD       Y11, Y0, Y11
+	VCMPPD       $0x02, Y11, Y3, Y0
+	VCVTPD2PSY   Y11, X11
+	VINSERTF128  $0x01, X8, Y4, Y8
+	VINSERTF128  $0x01, X11, Y5, Y11
+	VSHUFPS      $0x88, Y0, Y2, Y0
+	VPERMQ       $0xd8, Y0, Y0
+	VPSUBD       Y0, Y8, Y0
+	VMOVDQA      Y8, Y2
+	VMOVDQA      Y0, Y0
+	VCVTTPD2DQY  Y6, X4
+	VCVTDQ2PD    X4, Y8
+	VSUBPD       Y8, Y6, Y8
+	VCMPPD       $0x02, Y8, Y3, Y6
+	VCVTPD2PSY   Y8, X5
+	VCVTTPD2DQY  Y9, X8
+	VCVTDQ2PD    X8, Y12
+	VSUBPD       Y12, Y9, Y12
+	VCMPPD       $0x02, Y12, Y3, Y9
+	VCVTPD2PSY   Y12, X12
+	VINSERTF128  $0x01, X8, Y4, Y8
+	VINSERTF128  $0x01, X12, Y5, Y12
+	VSHUFPS      $0x88, Y9, Y6, Y6
+	VPERMQ       $0xd8, Y6, Y6
+	VPSUBD       Y6, Y8, Y6
+	VPBROADCASTD (BX), Y9
+	VPMULLD      Y9, Y6, Y6
+	VPADDD       Y6, Y0, Y0
+	VPBROADCASTD 8(BX), Y6
+	VPMULLD      Y6, Y8, Y8
+	VPADDD       Y8, Y2, Y2
+	VCVTTPD2DQY  Y7, X4
+	VCVTDQ2PD    X4, Y6
+	VSUBPD       Y6, Y7, Y6
+	VCMPPD       $0x02, Y6, Y3, Y7
+	VCVTPD2PSY   Y6, X5
+	VCVTTPD2DQY  Y10, X6
+	VCVTDQ2PD    X6, Y8
+	VSUBPD       Y8, Y10, Y8
+	VCMPPD       $0x02, Y8, Y3, Y3
+	VCVTPD2PSY   Y8, X8
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X8, Y5, Y8
+	VSHUFPS      $0x88, Y3, Y7, Y3
+	VPERMQ       $0xd8, Y3, Y3
+	VPSUBD       Y3, Y6, Y3
+	VPBROADCASTD 4(BX), Y7
+	VPMULLD      Y7, Y3, Y3
+	VPADDD       Y3, Y0, Y0
+	VPBROADCASTD 12(BX), Y3
+	VPMULLD      Y3, Y6, Y6
+	VPADDD       Y6, Y2, Y2
+	VPBROADCASTD 16(BX), Y3
+	VPADDD       Y3, Y2, Y2
+	VPAND        Y1, Y0, Y0
+	VMOVDQU      Y0, (R8)
+	MOVL         (R8), CX
+	MOVBLZX      (SI)(CX*1), CX
+	VMOVD        CX, X1
+	MOVL         4(R8), CX
+	VPINSRB      $0x01, (SI)(CX*1), X1, X1
+	MOVL         8(R8), CX
+	VPINSRB      $0x02, (SI)(CX*1), X1, X1
+	MOVL         12(R8), CX
+	VPINSRB      $0x03, (SI)(CX*1), X1, X1
+	MOVL         16(R8), CX
+	VPINSRB      $0x04, (SI)(CX*1), X1, X1
+	MOVL         20(R8), CX
+	VPINSRB      $0x05, (SI)(CX*1), X1, X1
+	MOVL         24(R8), CX
+	VPINSRB      $0x06, (SI)(CX*1), X1, X1
+	MOVL         28(R8), CX
+	VPINSRB      $0x07, (SI)(CX*1), X1, X1
+	VPXOR        X3, X3, X3
+	VPCMPEQB     X3, X1, X1
+	VPMOVMSKB    X1, CX
+	NOTL         CX
+	ANDL         CX, R12
+	JZ           none
+	MOVQ         order+104(FP), CX
+	VPMOVZXBD    (CX)(R12*8), Y1
+	VMOVD        R11, X3
+	VPBROADCASTD X3, Y3
+	VPADDD       96(DI), Y3, Y3
+	MOVQ         base+0(FP), CX
+	VPERMD       Y2, Y1, Y2
+	VMOVDQU      Y2, (CX)(R10*4)
+	MOVQ         near+8(FP), CX
+	VPERMD       Y0, Y1, Y0
+	VMOVDQU      Y0, (CX)(R10*4)
+	MOVQ         index+16(FP), CX
+	VPERMD       Y3, Y1, Y3
+	VMOVDQU      Y3, (CX)(R10*4)
+	MOVQ         tx+24(FP), CX
+	VPERMD       Y11, Y1, Y11
+	VMOVDQU      Y11, (CX)(R10*4)
+	MOVQ         ty+32(FP), CX
+	VPERMD       Y12, Y1, Y12
+	VMOVDQU      Y12, (CX)(R10*4)
+	MOVQ         tz+40(FP), CX
+	VPERMD       Y8, Y1, Y8
+	VMOVDQU      Y8, (CX)(R10*4)
+	POPCNTL      R12, R12
+	ADDQ         R12, R10
+
+none:
+	ADDQ $0x08, R9
+	JMP  next
+
+end:
+	VZEROUPPER
+	MOVQ R10, ret+112(FP)
+	RET
+
+// func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32)
+// Requires: AVX, AVX2
+TEXT ·cells(SB), $0-80
+	MOVQ         base+0(FP), AX
+	MOVQ         n+56(FP), CX
+	MOVQ         limits+64(FP), DX
+	MOVQ         strides+72(FP), BX
+	MOVQ         x+32(FP), SI
+	MOVQ         y+40(FP), DI
+	MOVQ         z+48(FP), R8
+	MOVQ         tx+8(FP), R9
+	MOVQ         ty+16(FP), R10
+	MOVQ         tz+24(FP), R11
+	VXORPD       Y0, Y0, Y0
+	VBROADCASTSD (DX), Y2
+	VBROADCASTSD 8(DX), Y3
+	VBROADCASTSD 16(DX), Y4
+	VPBROADCASTD 8(BX), Y1
+	VPBROADCASTD (BX), Y5
+	VPBROADCASTD 4(BX), Y6
+	XORQ         DX, DX
+
+points:
+	CMPQ        DX, CX
+	JGE         points_end
+	VMOVUPD     (SI)(DX*8), Y7
+	VMAXPD      Y0, Y7, Y7
+	VMINPD      Y2, Y7, Y7
+	VCVTTPD2DQY Y7, X8
+	VCVTDQ2PD   X8, Y10
+	VSUBPD      Y10, Y7, Y7
+	VCVTPD2PSY  Y7, X9
+	VMOVUPD     32(SI)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y2, Y10, Y10
+	VCVTTPD2DQY Y10, X7
+	VCVTDQ2PD   X7, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X7, Y8, Y7
+	VINSERTF128 $0x01, X10, Y9, Y10
+	VMOVUPS     Y10, (R9)(DX*4)
+	VPADDD      Y7, Y1, Y7
+	VMOVUPD     (DI)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y3, Y10, Y10
+	VCVTTPD2DQY Y10, X8
+	VCVTDQ2PD   X8, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X9
+	VMOVUPD     32(DI)(DX*8), Y11
+	VMAXPD      Y0, Y11, Y11
+	VMINPD      Y3, Y11, Y11
+	VCVTTPD2DQY Y11, X10
+	VCVTDQ2PD   X10, Y12
+	VSUBPD      Y12, Y11, Y11
+	VCVTPD2PSY  Y11, X11
+	VINSERTF128 $0x01, X10, Y8, Y10
+	VINSERTF128 $0x01, X11, Y9, Y11
+	VMOVUPS     Y11, (R10)(DX*4)
+	VPMULLD     Y5, Y10, Y10
+	VPADDD      Y10, Y7, Y7
+	VMOVUPD     (R8)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y4, Y10, Y10
+	VCVTTPD2DQY Y10, X8
+	VCVTDQ2PD   X8, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X9
+	VMOVUPD     32(R8)(DX*8), Y11
+	VMAXPD      Y0, Y11, Y11
+	VMINPD      Y4, Y11, Y11
+	VCVTTPD2DQY Y11, X10
+	VCVTDQ2PD   X10, Y12
+	VSUBPD      Y12, Y11, Y11
+	VCVTPD2PSY  Y11, X11
+	VINSERTF128 $0x01, X10, Y8, Y10
+	VINSERTF128 $0x01, X11, Y9, Y11
+	VMOVUPS     Y11, (R11)(DX*4)
+	VPMULLD     Y6, Y10, Y10
+	VPADDD      Y10, Y7, Y7
+	VMOVDQU     Y7, (AX)(DX*4)
+	ADDQ        $0x00000008, DX
+	JMP         points
+
+points_end:
+	VZEROUPPER
+	RET

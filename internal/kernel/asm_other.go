@@ -87,3 +87,11 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32) {
 func abs(dst *float32, src *float32, n int, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
+
+func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int {
+	panic("kernel: no assembly for this processor")
+}
+
+func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32) {
+	panic("kernel: no assembly for this processor")
+}

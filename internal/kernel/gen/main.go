@@ -48,6 +48,8 @@ func generate() (map[string][]byte, error) {
 	prefilter()
 	gram()
 	rows()
+	locate()
+	cells()
 
 	f, err := g.Result()
 	if err != nil {
