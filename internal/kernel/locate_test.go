@@ -117,8 +117,8 @@ func TestLocateAgainstDefinition(t *testing.T) {
 		n := [][3]int{{25, 9, 8}, {1, 1, 1}, {8, 2, 3}, {40, 6, 1}, {64, 30, 20}}[seed%5]
 		c := newRowCase(seed, n, []int{3, 5}[seed%2], n[0]+int(seed%7))
 		switch seed % 20 {
-		case 18: // a hair below halfway: nearest to the cell's corner, though the fraction rounds to a half
-			c.start = [3]float64{0.5 - 1e-12, 0.5 - 1e-12, 1}
+		case 17: // a hair below halfway: nearest to the cell's corner, though the fraction rounds to a half
+			c.start = [3]float64{0.5 - 1e-12, 0.5 - 1e-12, 1.5 - 1e-12}
 			c.step = [3]float64{1, 0, 0}
 		case 19:
 			c.start[seed/20%3] = math.NaN()
@@ -191,6 +191,27 @@ func TestLocateParts(t *testing.T) {
 				if got := append(left[k], right[k][1:]...); digest(got) != digest(whole[k]) {
 					t.Fatalf("seed %d, cut at %d, output %d: %v and %v, whole %v", seed, cut, k, left[k], right[k], whole[k])
 				}
+			}
+		}
+	}
+}
+
+// Points outside, in one register with points inside, look at no voxel.
+func TestLocateStaysInMask(t *testing.T) {
+	n := [3]int{11, 3, 2}
+	for _, front := range []bool{false, true} {
+		f := Field{N: n, Hi: [3]float64{10, 2, 1}, Mask: fenced(t, make([]bool, 11*3*2), front), Pad: 3, Degree: 5}
+		for i := range f.Mask {
+			f.Mask[i] = true
+		}
+		for _, at := range [][2]float64{{0, 0}, {2, 1}} {
+			var s Sites
+			if got := f.Locate(&s, [3]float64{-5, at[0], at[1]}, [3]float64{1, 0, 0}, 0, 21, nil); got != 11 {
+				t.Errorf("%d points, want 11", got)
+			}
+			s.Reset()
+			if got := f.Locate(&s, [3]float64{0, at[0], at[1]}, [3]float64{1e300, 0, 0}, 0, 21, nil); got != 1 {
+				t.Errorf("%d points, want 1", got)
 			}
 		}
 	}
