@@ -95,3 +95,11 @@ func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz
 func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32) {
 	panic("kernel: no assembly for this processor")
 }
+
+func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}

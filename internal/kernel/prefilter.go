@@ -171,9 +171,23 @@ func (f *lineFilter) strips(c []float32, stride, width int, work []float32) {
 
 // strip filters 32 or 8 lines in place.
 func (f *lineFilter) strip(c []float32, stride int, work []float32, lanes int) {
-	check(len(c) >= stride*(f.n-1)+lanes && len(work) >= (f.n+2)*lanes, "strip of another size")
+	f.stripTo(c, stride, c, stride, work, lanes)
+}
+
+// stripTo filters 32 or 8 lines of src, row k at src[srcStride*k:], to dst, which
+// is src or does not overlap it.
+func (f *lineFilter) stripTo(dst []float32, dstStride int, src []float32, srcStride int, work []float32, lanes int) {
+	check(len(dst) >= dstStride*(f.n-1)+lanes && len(src) >= srcStride*(f.n-1)+lanes && len(work) >= (f.n+2)*lanes, "strip of another size")
+	if f.n < 3 {
+		for k := range f.n { // the ends are their own coefficients
+			copy(dst[dstStride*k:][:lanes], src[srcStride*k:][:lanes])
+		}
+		return
+	}
 	if !useAssembly {
-		f.stripPlain(c, stride, work, lanes)
+		for l := 0; l < lanes; l += 8 {
+			f.eightPlain(dst[l:], dstStride, src[l:], srcStride, work)
+		}
 		return
 	}
 	var w [2]*float32
@@ -192,24 +206,18 @@ func (f *lineFilter) strip(c []float32, stride int, work []float32, lanes int) {
 	case f.degree == 3:
 		run = strip3x8
 	}
-	run(&c[0], stride, &c[0], stride, &work[0], f.n, &f.factors[0], w[0], len(f.weights[0]), w[1], len(f.weights[1]))
+	run(&dst[0], dstStride, &src[0], srcStride, &work[0], f.n, &f.factors[0], w[0], len(f.weights[0]), w[1], len(f.weights[1]))
 }
 
-// stripPlain: what is left of a line less the straight one between its ends is odd
+// eightPlain: what is left of a line less the straight one between its ends is odd
 // about both, and the filter, being symmetric, leaves it so. Per pole z: causal c+[k] = s[k] + z c+[k-1],
 // anticausal c[k] = z (c[k+1] - c+[k]), zero at the end (Unser 1999, box 2).
 // The first sample is taken off by itself, before the slope: what an offset would
 // lose by rounding, the filter would amplify.
-func (f *lineFilter) stripPlain(c []float32, stride int, work []float32, lanes int) {
-	for l := 0; l < lanes; l += 8 {
-		f.eightPlain(c[l:], stride, work)
-	}
-}
-
-func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
+func (f *lineFilter) eightPlain(dst []float32, dstStride int, src []float32, srcStride int, work []float32) {
 	n := f.n
 	inner := work[:8*(n-2)] // rows 1 to n-2
-	first, end := *(*[8]float32)(c), (*[8]float32)(c[stride*(n-1):])
+	first, end := *(*[8]float32)(src), *(*[8]float32)(src[srcStride*(n-1):])
 	var slope, u [8]float32
 	for l, v := range first {
 		slope[l] = (end[l] - v) / f.factors[1]
@@ -217,7 +225,7 @@ func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
 	gain := f.factors[0]
 	for k := 1; k <= n-2; k++ {
 		kf := float32(k)
-		s, in := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(c[stride*k:])
+		s, in := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(src[srcStride*k:])
 		for l := range first {
 			s[l] = float32(gain * ((in[l] - first[l]) - float32(slope[l]*kf)))
 		}
@@ -272,9 +280,11 @@ func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
 			r[7] = u7
 		}
 	}
+	copy(dst[:8], first[:])
+	copy(dst[dstStride*(n-1):][:8], end[:])
 	for k := 1; k <= n-2; k++ {
 		kf := float32(k)
-		r, out := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(c[stride*k:])
+		r, out := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(dst[dstStride*k:])
 		for l := range first {
 			out[l] = (r[l] + float32(slope[l]*kf)) + first[l]
 		}

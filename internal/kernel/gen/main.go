@@ -50,6 +50,7 @@ func generate() (map[string][]byte, error) {
 	rows()
 	locate()
 	cells()
+	passes()
 
 	f, err := g.Result()
 	if err != nil {
