@@ -3487,264 +3487,106 @@ points_end:
 
 // func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
 // Requires: AVX, AVX2
-TEXT ·pass3(SB), $0-88
-	MOVQ dst+0(FP), AX
-	MOVQ c+32(FP), DX
-	MOVQ tapStride+48(FP), BX
-	MOVQ axes+64(FP), SI
-	MOVQ table+72(FP), DI
-	MOVQ follow+56(FP), R8
-	SHLQ $0x02, BX
-	LEAQ (BX)(BX*2), R9
-	XORQ R10, R10
+TEXT ·pass3(SB), $64-88
+	MOVQ      dst+0(FP), AX
+	MOVQ      c+32(FP), DX
+	MOVQ      tapStride+48(FP), BX
+	MOVQ      axes+64(FP), SI
+	MOVQ      table+72(FP), DI
+	MOVQ      follow+56(FP), R8
+	SHLQ      $0x02, BX
+	LEAQ      (BX)(BX*2), R9
+	LEAQ      31(SP), R10
+	ANDQ      $-32, R10
+	VXORPS    X0, X0, X0
+	VCVTSD2SS 48(SI), X0, X0
+	VMOVSS    X0, 16(R10)
+	XORQ      R11, R11
 
 row:
-	CMPQ         R10, rows+16(FP)
-	JGE          end
-	VXORPS       X0, X0, X0
-	VCVTSI2SDQ   R10, X0, X0
-	VMULSD       16(SI), X0, X0
-	VADDSD       (SI), X0, X0
-	VBROADCASTSD X0, Y0
-	VMOVUPD      (DI), Y1
-	VMOVUPD      32(DI), Y2
-	VMOVDQU      (R8), Y3
-	XORQ         R11, R11
+	CMPQ R11, rows+16(FP)
+	JGE  end
+	XORQ R12, R12
+
+many:
+	VXORPS     X0, X0, X0
+	VCVTSI2SDQ R11, X0, X0
+	VMULSD     16(SI), X0, X0
+	VADDSD     (SI), X0, X0
+	VXORPS     X2, X2, X2
+	VCVTSI2SDQ R12, X2, X2
+	VMULSD     8(SI), X2, X2
+	VADDSD     X0, X2, X0
+	VMAXSD     24(SI), X0, X0
+	VMINSD     32(SI), X0, X0
+	VROUNDSD   $0x01, X0, X0, X1
+	VSUBSD     X1, X0, X0
+	VCVTSD2SS  X0, X0, X0
+	VMOVSS     X0, (R10)
+	VMOVSD     40(SI), X2
+	VSUBSD     X1, X2, X2
+	VCVTSD2SS  X2, X2, X2
+	VMOVSS     X2, 8(R10)
+	VCVTTSD2SI X1, CX
+	MOVL       (R8), R13
+	ANDL       R12, R13
+	NEGL       R13
+	ADDL       CX, R13
+	MOVL       R13, 12(R10)
+	NEGL       CX
+	VCVTSI2SSL CX, X2, X2
+	VMOVSS     X2, 4(R10)
+	VMOVUPS    (DI), Y0
 
 eight:
-	VXORPD       Y4, Y4, Y4
-	VBROADCASTSD 8(SI), Y5
-	VBROADCASTSD 24(SI), Y6
-	VMOVUPD      64(DI), Y7
-	VMULPD       Y5, Y1, Y8
-	VADDPD       Y7, Y1, Y1
-	VADDPD       Y0, Y8, Y8
-	VMAXPD       Y4, Y8, Y8
-	VMINPD       Y6, Y8, Y8
-	VCVTTPD2DQY  Y8, X10
-	VCVTDQ2PD    X10, Y9
-	VSUBPD       Y9, Y8, Y8
-	VCVTPD2PSY   Y8, X11
-	VMULPD       Y5, Y2, Y5
-	VADDPD       Y7, Y2, Y2
-	VADDPD       Y0, Y5, Y5
-	VMAXPD       Y4, Y5, Y5
-	VMINPD       Y6, Y5, Y5
-	VCVTTPD2DQY  Y5, X6
-	VCVTDQ2PD    X6, Y4
-	VSUBPD       Y4, Y5, Y5
-	VCVTPD2PSY   Y5, X4
-	VINSERTF128  $0x01, X6, Y10, Y5
-	VINSERTF128  $0x01, X4, Y11, Y4
-	VPSUBD       Y3, Y5, Y5
-	VPADDD       32(R8), Y3, Y3
-	VSUBPS       96(DI), Y4, Y4
-	VMULPS       Y4, Y4, Y6
-	VMULPS       128(DI), Y6, Y7
-	VADDPS       160(DI), Y7, Y7
-	VMULPS       192(DI), Y6, Y8
-	VADDPS       224(DI), Y8, Y8
-	VMULPS       Y4, Y8, Y8
-	VSUBPS       Y8, Y7, Y9
-	VADDPS       Y8, Y7, Y7
-	VMULPS       256(DI), Y6, Y8
-	VADDPS       288(DI), Y8, Y8
-	VMULPS       320(DI), Y6, Y6
-	VADDPS       352(DI), Y6, Y6
-	VMULPS       Y4, Y6, Y6
-	VSUBPS       Y6, Y8, Y4
-	VADDPS       Y6, Y8, Y6
-	VPBROADCASTD X5, Y8
-	VPCMPEQD     Y8, Y5, Y8
-	VMOVMSKPS    Y8, R12
-	VMOVD        X5, CX
-	MOVLQSX      CX, CX
-	IMULQ        BX, CX
-	LEAQ         (CX)(R11*4), CX
-	ADDQ         DX, CX
-	VMULPS       (CX), Y9, Y8
-	VMULPS       (CX)(BX*1), Y4, Y12
-	VADDPS       Y12, Y8, Y8
-	VMULPS       (CX)(BX*2), Y6, Y12
-	VMULPS       (CX)(R9*1), Y7, Y13
-	VADDPS       Y13, Y12, Y12
-	VADDPS       Y12, Y8, Y8
-	XORL         $0x000000ff, R12
-	JNZ          more
-
-summed:
-	MOVQ    width+24(FP), CX
-	SUBQ    R11, CX
-	CMPQ    CX, $+8
-	JL      tail
-	VMOVUPS Y8, (AX)(R11*4)
-	ADDQ    $0x08, R11
-	CMPQ    R11, width+24(FP)
-	JL      eight
-
-nextRow:
-	MOVQ dstStride+8(FP), CX
-	LEAQ (AX)(CX*4), AX
-	MOVQ rowStride+40(FP), CX
-	LEAQ (DX)(CX*4), DX
-	INCQ R10
-	JMP  row
-
-tail:
-	MOVQ       masks+80(FP), R12
-	NEGQ       CX
-	VMOVUPS    32(R12)(CX*4), Y0
-	VMASKMOVPS Y8, Y0, (AX)(R11*4)
-	JMP        nextRow
-
-more:
-	MOVQ width+24(FP), CX
-	SUBQ R11, CX
-	CMPQ CX, $+8
-	JGE  all
-	MOVQ $0x00000001, R13
-	SHLQ CL, R13
-	DECQ R13
-	ANDL R13, R12
-	JZ   summed
-
-all:
-	BSFL         R12, R14
-	VMOVD        R14, X10
-	VPBROADCASTD X10, Y12
-	VPERMD       Y5, Y12, Y12
-	VPCMPEQD     Y12, Y5, Y13
-	VMOVD        X12, CX
-	MOVLQSX      CX, CX
-	IMULQ        BX, CX
-	LEAQ         (CX)(R11*4), CX
-	ADDQ         DX, CX
-	VMULPS       (CX), Y9, Y12
-	VMULPS       (CX)(BX*1), Y4, Y14
-	VADDPS       Y14, Y12, Y12
-	VMULPS       (CX)(BX*2), Y6, Y14
-	VMULPS       (CX)(R9*1), Y7, Y15
-	VADDPS       Y15, Y14, Y14
-	VADDPS       Y14, Y12, Y12
-	VBLENDVPS    Y13, Y12, Y8, Y8
-	VMOVMSKPS    Y13, CX
-	NOTL         CX
-	ANDL         CX, R12
-	JNZ          all
-	JMP          summed
-
-end:
-	VZEROUPPER
-	RET
-
-// func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
-// Requires: AVX, AVX2
-TEXT ·pass5(SB), $0-88
-	MOVQ dst+0(FP), AX
-	MOVQ c+32(FP), DX
-	MOVQ tapStride+48(FP), BX
-	MOVQ axes+64(FP), SI
-	MOVQ table+72(FP), DI
-	MOVQ follow+56(FP), R8
-	SHLQ $0x02, BX
-	LEAQ (BX)(BX*2), R9
-	LEAQ (BX)(BX*4), R10
-	XORQ R11, R11
-
-row:
-	CMPQ         R11, rows+16(FP)
-	JGE          end
-	VXORPS       X0, X0, X0
-	VCVTSI2SDQ   R11, X0, X0
-	VMULSD       16(SI), X0, X0
-	VADDSD       (SI), X0, X0
-	VBROADCASTSD X0, Y0
-	VMOVUPD      (DI), Y1
-	VMOVUPD      32(DI), Y2
-	VMOVDQU      (R8), Y3
-	XORQ         R12, R12
-
-eight:
-	VXORPD       Y4, Y4, Y4
-	VBROADCASTSD 8(SI), Y5
-	VBROADCASTSD 24(SI), Y6
-	VMOVUPD      64(DI), Y7
-	VMULPD       Y5, Y1, Y8
-	VADDPD       Y7, Y1, Y1
-	VADDPD       Y0, Y8, Y8
-	VMAXPD       Y4, Y8, Y8
-	VMINPD       Y6, Y8, Y8
-	VCVTTPD2DQY  Y8, X10
-	VCVTDQ2PD    X10, Y9
-	VSUBPD       Y9, Y8, Y8
-	VCVTPD2PSY   Y8, X11
-	VMULPD       Y5, Y2, Y5
-	VADDPD       Y7, Y2, Y2
-	VADDPD       Y0, Y5, Y5
-	VMAXPD       Y4, Y5, Y5
-	VMINPD       Y6, Y5, Y5
-	VCVTTPD2DQY  Y5, X6
-	VCVTDQ2PD    X6, Y4
-	VSUBPD       Y4, Y5, Y5
-	VCVTPD2PSY   Y5, X4
-	VINSERTF128  $0x01, X6, Y10, Y5
-	VINSERTF128  $0x01, X4, Y11, Y4
-	VPSUBD       Y3, Y5, Y5
-	VPADDD       32(R8), Y3, Y3
-	VSUBPS       96(DI), Y4, Y4
-	VMULPS       Y4, Y4, Y6
-	VMULPS       128(DI), Y6, Y7
-	VADDPS       160(DI), Y7, Y7
-	VMULPS       Y6, Y7, Y7
-	VADDPS       192(DI), Y7, Y7
-	VMULPS       224(DI), Y6, Y8
-	VADDPS       256(DI), Y8, Y8
-	VMULPS       Y6, Y8, Y8
-	VADDPS       288(DI), Y8, Y8
-	VMULPS       Y4, Y8, Y8
-	VSUBPS       Y8, Y7, Y9
-	VADDPS       Y8, Y7, Y7
-	VMULPS       320(DI), Y6, Y8
-	VADDPS       352(DI), Y8, Y8
-	VMULPS       Y6, Y8, Y8
-	VADDPS       384(DI), Y8, Y8
-	VMULPS       416(DI), Y6, Y12
-	VADDPS       448(DI), Y12, Y12
-	VMULPS       Y6, Y12, Y12
-	VADDPS       480(DI), Y12, Y12
-	VMULPS       Y4, Y12, Y12
-	VSUBPS       Y12, Y8, Y13
-	VADDPS       Y12, Y8, Y8
-	VMULPS       512(DI), Y6, Y12
-	VADDPS       544(DI), Y12, Y12
-	VMULPS       Y6, Y12, Y12
-	VADDPS       576(DI), Y12, Y12
-	VMULPS       608(DI), Y6, Y14
-	VADDPS       640(DI), Y14, Y14
-	VMULPS       Y6, Y14, Y14
-	VADDPS       672(DI), Y14, Y14
-	VMULPS       Y4, Y14, Y14
-	VSUBPS       Y14, Y12, Y4
-	VADDPS       Y14, Y12, Y6
-	VPBROADCASTD X5, Y12
-	VPCMPEQD     Y12, Y5, Y12
-	VMOVMSKPS    Y12, R13
-	VMOVD        X5, CX
+	VBROADCASTSS 16(R10), Y1
+	VMULPS       Y1, Y0, Y2
+	VBROADCASTSS (R10), Y1
+	VADDPS       Y1, Y2, Y2
+	VANDPS       (R8), Y0, Y3
+	VADDPS       32(DI), Y0, Y0
+	VBROADCASTSS 4(R10), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMAXPS       Y1, Y2, Y2
+	VBROADCASTSS 8(R10), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMINPS       Y1, Y2, Y2
+	VROUNDPS     $0x01, Y2, Y1
+	VSUBPS       Y1, Y2, Y2
+	VCVTTPS2DQ   Y1, Y1
+	VPBROADCASTD 12(R10), Y3
+	VPADDD       Y3, Y1, Y1
+	VSUBPS       64(DI), Y2, Y2
+	VMULPS       Y2, Y2, Y3
+	VMULPS       96(DI), Y3, Y4
+	VADDPS       128(DI), Y4, Y4
+	VMULPS       160(DI), Y3, Y5
+	VADDPS       192(DI), Y5, Y5
+	VMULPS       Y2, Y5, Y5
+	VSUBPS       Y5, Y4, Y6
+	VADDPS       Y5, Y4, Y4
+	VMULPS       224(DI), Y3, Y5
+	VADDPS       256(DI), Y5, Y5
+	VMULPS       288(DI), Y3, Y3
+	VADDPS       320(DI), Y3, Y3
+	VMULPS       Y2, Y3, Y3
+	VSUBPS       Y3, Y5, Y2
+	VADDPS       Y3, Y5, Y3
+	VPBROADCASTD X1, Y5
+	VPCMPEQD     Y5, Y1, Y5
+	VMOVMSKPS    Y5, R13
+	VMOVD        X1, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
 	LEAQ         (CX)(R12*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y9, Y12
-	VMULPS       (CX)(BX*1), Y13, Y14
-	VADDPS       Y14, Y12, Y12
-	VMULPS       (CX)(BX*2), Y4, Y14
-	VADDPS       Y14, Y12, Y12
-	VMULPS       (CX)(R9*1), Y6, Y14
-	VMULPS       (CX)(BX*4), Y8, Y15
-	VADDPS       Y15, Y14, Y14
-	VMULPS       (CX)(R10*1), Y7, Y15
-	VADDPS       Y15, Y14, Y14
-	VADDPS       Y14, Y12, Y12
+	VMULPS       (CX), Y6, Y5
+	VMULPS       (CX)(BX*1), Y2, Y7
+	VADDPS       Y7, Y5, Y5
+	VMULPS       (CX)(BX*2), Y3, Y7
+	VMULPS       (CX)(R9*1), Y4, Y8
+	VADDPS       Y8, Y7, Y7
+	VADDPS       Y7, Y5, Y5
 	XORL         $0x000000ff, R13
 	JNZ          more
 
@@ -3753,10 +3595,13 @@ summed:
 	SUBQ    R12, CX
 	CMPQ    CX, $+8
 	JL      tail
-	VMOVUPS Y12, (AX)(R12*4)
+	VMOVUPS Y5, (AX)(R12*4)
 	ADDQ    $0x08, R12
 	CMPQ    R12, width+24(FP)
-	JL      eight
+	JGE     nextRow
+	TESTQ   $0x0000003f, R12
+	JNZ     eight
+	JMP     many
 
 nextRow:
 	MOVQ dstStride+8(FP), CX
@@ -3770,7 +3615,7 @@ tail:
 	MOVQ       masks+80(FP), R13
 	NEGQ       CX
 	VMOVUPS    32(R13)(CX*4), Y0
-	VMASKMOVPS Y12, Y0, (AX)(R12*4)
+	VMASKMOVPS Y5, Y0, (AX)(R12*4)
 	JMP        nextRow
 
 more:
@@ -3786,30 +3631,227 @@ more:
 
 all:
 	BSFL         R13, R15
-	VMOVD        R15, X10
-	VPBROADCASTD X10, Y14
-	VPERMD       Y5, Y14, Y14
-	VPCMPEQD     Y14, Y5, Y15
-	VMOVD        X14, CX
+	VMOVD        R15, X7
+	VPBROADCASTD X7, Y7
+	VPERMD       Y1, Y7, Y7
+	VPCMPEQD     Y7, Y1, Y8
+	VMOVD        X7, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
 	LEAQ         (CX)(R12*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y9, Y14
-	VMULPS       (CX)(BX*1), Y13, Y16
-	VADDPS       Y16, Y14, Y14
-	VMULPS       (CX)(BX*2), Y4, Y16
-	VADDPS       Y16, Y14, Y14
-	VMULPS       (CX)(R9*1), Y6, Y16
-	VMULPS       (CX)(BX*4), Y8, Y17
-	VADDPS       Y17, Y16, Y16
-	VMULPS       (CX)(R10*1), Y7, Y17
-	VADDPS       Y17, Y16, Y16
-	VADDPS       Y16, Y14, Y14
-	VBLENDVPS    Y15, Y14, Y12, Y12
-	VMOVMSKPS    Y15, CX
+	VMULPS       (CX), Y6, Y7
+	VMULPS       (CX)(BX*1), Y2, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(BX*2), Y3, Y9
+	VMULPS       (CX)(R9*1), Y4, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y7, Y7
+	VBLENDVPS    Y8, Y7, Y5, Y5
+	VMOVMSKPS    Y8, CX
 	NOTL         CX
 	ANDL         CX, R13
+	JNZ          all
+	JMP          summed
+
+end:
+	VZEROUPPER
+	RET
+
+// func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·pass5(SB), $64-88
+	MOVQ      dst+0(FP), AX
+	MOVQ      c+32(FP), DX
+	MOVQ      tapStride+48(FP), BX
+	MOVQ      axes+64(FP), SI
+	MOVQ      table+72(FP), DI
+	MOVQ      follow+56(FP), R8
+	SHLQ      $0x02, BX
+	LEAQ      (BX)(BX*2), R9
+	LEAQ      (BX)(BX*4), R10
+	LEAQ      31(SP), R11
+	ANDQ      $-32, R11
+	VXORPS    X0, X0, X0
+	VCVTSD2SS 48(SI), X0, X0
+	VMOVSS    X0, 16(R11)
+	XORQ      R12, R12
+
+row:
+	CMPQ R12, rows+16(FP)
+	JGE  end
+	XORQ R13, R13
+
+many:
+	VXORPS     X0, X0, X0
+	VCVTSI2SDQ R12, X0, X0
+	VMULSD     16(SI), X0, X0
+	VADDSD     (SI), X0, X0
+	VXORPS     X2, X2, X2
+	VCVTSI2SDQ R13, X2, X2
+	VMULSD     8(SI), X2, X2
+	VADDSD     X0, X2, X0
+	VMAXSD     24(SI), X0, X0
+	VMINSD     32(SI), X0, X0
+	VROUNDSD   $0x01, X0, X0, X1
+	VSUBSD     X1, X0, X0
+	VCVTSD2SS  X0, X0, X0
+	VMOVSS     X0, (R11)
+	VMOVSD     40(SI), X2
+	VSUBSD     X1, X2, X2
+	VCVTSD2SS  X2, X2, X2
+	VMOVSS     X2, 8(R11)
+	VCVTTSD2SI X1, CX
+	MOVL       (R8), R14
+	ANDL       R13, R14
+	NEGL       R14
+	ADDL       CX, R14
+	MOVL       R14, 12(R11)
+	NEGL       CX
+	VCVTSI2SSL CX, X2, X2
+	VMOVSS     X2, 4(R11)
+	VMOVUPS    (DI), Y0
+
+eight:
+	VBROADCASTSS 16(R11), Y1
+	VMULPS       Y1, Y0, Y2
+	VBROADCASTSS (R11), Y1
+	VADDPS       Y1, Y2, Y2
+	VANDPS       (R8), Y0, Y3
+	VADDPS       32(DI), Y0, Y0
+	VBROADCASTSS 4(R11), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMAXPS       Y1, Y2, Y2
+	VBROADCASTSS 8(R11), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMINPS       Y1, Y2, Y2
+	VROUNDPS     $0x01, Y2, Y1
+	VSUBPS       Y1, Y2, Y2
+	VCVTTPS2DQ   Y1, Y1
+	VPBROADCASTD 12(R11), Y3
+	VPADDD       Y3, Y1, Y1
+	VSUBPS       64(DI), Y2, Y2
+	VMULPS       Y2, Y2, Y3
+	VMULPS       96(DI), Y3, Y4
+	VADDPS       128(DI), Y4, Y4
+	VMULPS       Y3, Y4, Y4
+	VADDPS       160(DI), Y4, Y4
+	VMULPS       192(DI), Y3, Y5
+	VADDPS       224(DI), Y5, Y5
+	VMULPS       Y3, Y5, Y5
+	VADDPS       256(DI), Y5, Y5
+	VMULPS       Y2, Y5, Y5
+	VSUBPS       Y5, Y4, Y6
+	VADDPS       Y5, Y4, Y4
+	VMULPS       288(DI), Y3, Y5
+	VADDPS       320(DI), Y5, Y5
+	VMULPS       Y3, Y5, Y5
+	VADDPS       352(DI), Y5, Y5
+	VMULPS       384(DI), Y3, Y7
+	VADDPS       416(DI), Y7, Y7
+	VMULPS       Y3, Y7, Y7
+	VADDPS       448(DI), Y7, Y7
+	VMULPS       Y2, Y7, Y7
+	VSUBPS       Y7, Y5, Y8
+	VADDPS       Y7, Y5, Y5
+	VMULPS       480(DI), Y3, Y7
+	VADDPS       512(DI), Y7, Y7
+	VMULPS       Y3, Y7, Y7
+	VADDPS       544(DI), Y7, Y7
+	VMULPS       576(DI), Y3, Y9
+	VADDPS       608(DI), Y9, Y9
+	VMULPS       Y3, Y9, Y9
+	VADDPS       640(DI), Y9, Y9
+	VMULPS       Y2, Y9, Y9
+	VSUBPS       Y9, Y7, Y2
+	VADDPS       Y9, Y7, Y3
+	VPBROADCASTD X1, Y7
+	VPCMPEQD     Y7, Y1, Y7
+	VMOVMSKPS    Y7, R14
+	VMOVD        X1, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R13*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y7
+	VMULPS       (CX)(BX*1), Y8, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(BX*2), Y2, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(R9*1), Y3, Y9
+	VMULPS       (CX)(BX*4), Y5, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       (CX)(R10*1), Y4, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y7, Y7
+	XORL         $0x000000ff, R14
+	JNZ          more
+
+summed:
+	MOVQ    width+24(FP), CX
+	SUBQ    R13, CX
+	CMPQ    CX, $+8
+	JL      tail
+	VMOVUPS Y7, (AX)(R13*4)
+	ADDQ    $0x08, R13
+	CMPQ    R13, width+24(FP)
+	JGE     nextRow
+	TESTQ   $0x0000003f, R13
+	JNZ     eight
+	JMP     many
+
+nextRow:
+	MOVQ dstStride+8(FP), CX
+	LEAQ (AX)(CX*4), AX
+	MOVQ rowStride+40(FP), CX
+	LEAQ (DX)(CX*4), DX
+	INCQ R12
+	JMP  row
+
+tail:
+	MOVQ       masks+80(FP), R14
+	NEGQ       CX
+	VMOVUPS    32(R14)(CX*4), Y0
+	VMASKMOVPS Y7, Y0, (AX)(R13*4)
+	JMP        nextRow
+
+more:
+	MOVQ width+24(FP), CX
+	SUBQ R13, CX
+	CMPQ CX, $+8
+	JGE  all
+	MOVQ $0x00000001, R15
+	SHLQ CL, R15
+	DECQ R15
+	ANDL R15, R14
+	JZ   summed
+
+all:
+	BSFL         R14, BP
+	VMOVD        BP, X9
+	VPBROADCASTD X9, Y9
+	VPERMD       Y1, Y9, Y9
+	VPCMPEQD     Y9, Y1, Y10
+	VMOVD        X9, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R13*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y9
+	VMULPS       (CX)(BX*1), Y8, Y11
+	VADDPS       Y11, Y9, Y9
+	VMULPS       (CX)(BX*2), Y2, Y11
+	VADDPS       Y11, Y9, Y9
+	VMULPS       (CX)(R9*1), Y3, Y11
+	VMULPS       (CX)(BX*4), Y5, Y12
+	VADDPS       Y12, Y11, Y11
+	VMULPS       (CX)(R10*1), Y4, Y12
+	VADDPS       Y12, Y11, Y11
+	VADDPS       Y11, Y9, Y9
+	VBLENDVPS    Y10, Y9, Y7, Y7
+	VMOVMSKPS    Y10, CX
+	NOTL         CX
+	ANDL         CX, R14
 	JNZ          all
 	JMP          summed
 

@@ -12,7 +12,7 @@ import "math"
 // which moves what is finest along one axis past the limit of the other: at 3
 // degrees no more of an image than the spline loses anyway.
 
-// steepest is by how much of a voxel a pass may slide from row to row, and largest by
+// steepest is by how much of a voxel a pass may slide from row to row, and widest by
 // how much it may stretch: turns of 3 degrees, of voxels of one edge.
 const (
 	steepest = 0.055
@@ -57,10 +57,13 @@ func NewShear(m *[16]float64) (s Shear, ok bool) {
 // Passes resamples volumes of one size in three passes. It owns its scratch and
 // belongs to one goroutine.
 //
-// Splines continue a volume as [Prefilter] does. A point up to a voxel outside the
-// field is interpolated there, so that a pass may see outside what the result does not;
-// from there on it takes the value there. What the caller wants of points
+// Splines continue a volume as [Prefilter] does. A point less than a voxel outside the
+// field is interpolated there, so that a pass may see outside what the result does
+// not; one farther out takes the value there. What else the caller wants of points
 // outside is the caller's affair.
+//
+// Places are rounded to float32 against the first of 64 outputs: some 2^-22 of a
+// voxel.
 type Passes struct {
 	n, m     [3]int
 	pad      int
@@ -83,7 +86,7 @@ func NewPasses(n [3]int, degree int) *Passes {
 	p := &Passes{n: n, degree: degree, pad: degree/2 + 1, row: (n[0] + 7) / 8 * 8, table: &passTables[degree/4]}
 	longest := 0
 	for a := range n {
-		check(n[a] >= 1, "size of the volume")
+		check(n[a] >= 1 && n[a] <= 1<<16, "size of the volume")
 		p.m[a] = n[a] + 2*p.pad
 		p.axes[a] = newLineFilter(n[a], degree)
 		longest = max(longest, n[a])
@@ -100,7 +103,7 @@ func NewPasses(n [3]int, degree int) *Passes {
 func (p *Passes) Scratch() int { return p.row * p.n[1] * p.n[2] }
 
 // Run resamples vol to dst: dst[x, y, z] is the value where s takes (x, y, z). scratch has
-// [Passes.Scratch] elements or more, of any value; no two of the three may overlap.
+// [Passes.Scratch] elements or more, of any value, and overlaps neither; dst may be vol.
 func (p *Passes) Run(dst, vol, scratch []float32, s *Shear) {
 	nx, ny, nz := p.n[0], p.n[1], p.n[2]
 	check(len(dst) == nx*ny*nz && len(vol) == nx*ny*nz && len(scratch) >= p.Scratch(), "volumes of another size, or too little scratch")
@@ -186,22 +189,22 @@ func (p *Passes) pass(dst []float32, dstStride, rows, width int, c []float32, ro
 		reach = p.m[0] + 2*passFront
 	}
 	check(len(dst) >= dstStride*(rows-1)+width && len(c) >= rowStride*(rows-1)+reach, "pass of another size")
-	// Counted from the first tap of a point one voxel before the field, so that no
-	// coordinate is negative.
-	a := [4]float64{axes[0] + 1, axes[1], axes[2], math.Nextafter(float64(n+1), 0)}
-	follow := &passFollow[16]
+	// Counted from the first tap of a point one voxel before the field, so that none
+	// has a number below zero. Start, step, step from row to row; where a start is
+	// farther out than 64 outputs reach; the last place; step against the taps.
+	a := [7]float64{axes[0] + 1, axes[1], axes[2], -72, float64(n + 8), float64(n+1) - 1.0/64, axes[1]}
+	follow := &passFollow[8]
 	if along {
 		c, follow = c[passFront:], &passFollow[0]
+		a[6]--
 	}
 	switch {
 	case useAssembly && p.degree == 5:
 		pass5(&dst[0], dstStride, rows, width, &c[0], rowStride, tapStride, follow, &a[0], &p.table[0], &masks[0])
 	case useAssembly:
 		pass3(&dst[0], dstStride, rows, width, &c[0], rowStride, tapStride, follow, &a[0], &p.table[0], &masks[0])
-	case p.degree == 5:
-		pass5Plain(dst, dstStride, rows, width, c, rowStride, tapStride, along, &a)
 	default:
-		pass3Plain(dst, dstStride, rows, width, c, rowStride, tapStride, along, &a)
+		passPlain(dst, dstStride, rows, width, c, rowStride, tapStride, along, &a, p.degree)
 	}
 }
 
@@ -215,13 +218,13 @@ var (
 )
 
 // passTables are what the assembly reads, per degree.
-const passTableSize = 8*4 + 8*3*2*3
+const passTableSize = 8*3 + 8*3*2*3
 
 var passTables [2][passTableSize]float32
 
-// passFollow says by how much the taps of the next eight outputs go along with the
-// row: 0 to 7, and from there eight at a time; or not at all.
-var passFollow = [32]int32{0, 1, 2, 3, 4, 5, 6, 7, 8, 8, 8, 8, 8, 8, 8, 8}
+// passFollow masks by how much the taps of outputs go along with the row: all, or not
+// at all.
+var passFollow = [16]int32{-1, -1, -1, -1, -1, -1, -1, -1}
 
 func init() {
 	// By the distance t from the cell's corner, as in bsplines5 and bsplines3.
@@ -240,18 +243,14 @@ func init() {
 	for d := range passTables {
 		t := passTables[d][:0]
 		for l := range 8 {
-			u := math.Float64bits(float64(l))
-			t = append(t, math.Float32frombits(uint32(u)), math.Float32frombits(uint32(u>>32)))
-		}
-		u := math.Float64bits(8)
-		for range 4 {
-			t = append(t, math.Float32frombits(uint32(u)), math.Float32frombits(uint32(u>>32)))
+			t = append(t, float32(l))
 		}
 		eight := func(v float32) {
 			for range 8 {
 				t = append(t, v)
 			}
 		}
+		eight(8)
 		eight(half)
 		if d == 1 {
 			for _, p := range passPieces5 {
@@ -282,64 +281,78 @@ func aboutMiddle(by []float64) []float64 {
 	return c
 }
 
-// place is where output i of a row lies: its first tap and the distance from the
-// middle of its cell.
-func place(i int, step, origin, limit float64) (first int, s float32) {
-	u := float64(step*float64(i)) + origin
-	switch {
-	case !(u > 0):
-		u = 0
-	case u > limit:
-		u = limit
+func passPlain(dst []float32, dstStride, rows, width int, c []float32, rowStride, tapStride int, along bool, axes *[7]float64, degree int) {
+	var first [64]int // of an output's taps
+	var s [64]float32 // its distance from the middle of its cell
+	sigma := float32(axes[6])
+	for r := range rows {
+		origin := float64(axes[2]*float64(r)) + axes[0]
+		row := dst[dstStride*r:][:width]
+		for i := 0; i < width; i += 64 {
+			u := float64(axes[1]*float64(i)) + origin
+			u = min(max(u, axes[3]), axes[4])
+			k := math.Floor(u)
+			f, lo, hi := float32(u-k), float32(-k), float32(axes[5]-k)
+			out := row[i:min(i+64, width)]
+			for l := range out {
+				n := float32(l)
+				v := float32(sigma*n) + f
+				if along {
+					v = min(max(v, lo-n), hi-n)
+				} else {
+					v = min(max(v, lo), hi)
+				}
+				cell := int(v)
+				if float32(cell) > v {
+					cell--
+				}
+				s[l] = (v - float32(cell)) - half
+				first[l] = int(k) + cell // a column's
+				if along {
+					first[l] += rowStride*r + l
+				} else {
+					first[l] = first[l]*tapStride + i + l
+				}
+			}
+			if degree == 5 {
+				taps5Plain(out, c, first[:], s[:], tapStride)
+			} else {
+				taps3Plain(out, c, first[:], s[:], tapStride)
+			}
+		}
 	}
-	first = int(u)
-	return first, float32(u-float64(first)) - half
 }
 
-func pass5Plain(dst []float32, dstStride, rows, width int, c []float32, rowStride, tapStride int, along bool, axes *[4]float64) {
+func taps5Plain(out, c []float32, first []int, s []float32, stride int) {
 	a, b, d := &passPieces5[0], &passPieces5[1], &passPieces5[2]
-	for r := range rows {
-		origin := float64(axes[2]*float64(r)) + axes[0]
-		out := dst[dstStride*r:][:width]
-		for i := range out {
-			first, s := place(i, axes[1], origin, axes[3])
-			at := rowStride*r + first
-			if !along {
-				at = i + first*tapStride
-			}
-			q := float32(s * s)
-			e0 := float32(q*(float32(a[0][0]*q)+a[0][1])) + a[0][2]
-			o0 := float32(s * (float32(q*(float32(a[1][0]*q)+a[1][1])) + a[1][2]))
-			e1 := float32(q*(float32(b[0][0]*q)+b[0][1])) + b[0][2]
-			o1 := float32(s * (float32(q*(float32(b[1][0]*q)+b[1][1])) + b[1][2]))
-			e2 := float32(q*(float32(d[0][0]*q)+d[0][1])) + d[0][2]
-			o2 := float32(s * (float32(q*(float32(d[1][0]*q)+d[1][1])) + d[1][2]))
-			lo := float32((e0-o0)*c[at]) + float32((e1-o1)*c[at+tapStride]) + float32((e2-o2)*c[at+2*tapStride])
-			hi := float32((e2+o2)*c[at+3*tapStride]) + float32((e1+o1)*c[at+4*tapStride]) + float32((e0+o0)*c[at+5*tapStride])
-			out[i] = lo + hi
-		}
+	first, s = first[:len(out)], s[:len(out)]
+	for i := range out {
+		at, s := first[i], s[i]
+		q := float32(s * s)
+		e0 := float32(q*(float32(a[0][0]*q)+a[0][1])) + a[0][2]
+		o0 := float32(s * (float32(q*(float32(a[1][0]*q)+a[1][1])) + a[1][2]))
+		e1 := float32(q*(float32(b[0][0]*q)+b[0][1])) + b[0][2]
+		o1 := float32(s * (float32(q*(float32(b[1][0]*q)+b[1][1])) + b[1][2]))
+		e2 := float32(q*(float32(d[0][0]*q)+d[0][1])) + d[0][2]
+		o2 := float32(s * (float32(q*(float32(d[1][0]*q)+d[1][1])) + d[1][2]))
+		lo := float32((e0-o0)*c[at]) + float32((e1-o1)*c[at+stride]) + float32((e2-o2)*c[at+2*stride])
+		hi := float32((e2+o2)*c[at+3*stride]) + float32((e1+o1)*c[at+4*stride]) + float32((e0+o0)*c[at+5*stride])
+		out[i] = lo + hi
 	}
 }
 
-func pass3Plain(dst []float32, dstStride, rows, width int, c []float32, rowStride, tapStride int, along bool, axes *[4]float64) {
+func taps3Plain(out, c []float32, first []int, s []float32, stride int) {
 	a, b := &passPieces3[0], &passPieces3[1]
-	for r := range rows {
-		origin := float64(axes[2]*float64(r)) + axes[0]
-		out := dst[dstStride*r:][:width]
-		for i := range out {
-			first, s := place(i, axes[1], origin, axes[3])
-			at := rowStride*r + first
-			if !along {
-				at = i + first*tapStride
-			}
-			q := float32(s * s)
-			e0 := float32(a[0][0]*q) + a[0][1]
-			o0 := float32(s * (float32(a[1][0]*q) + a[1][1]))
-			e1 := float32(b[0][0]*q) + b[0][1]
-			o1 := float32(s * (float32(b[1][0]*q) + b[1][1]))
-			lo := float32((e0-o0)*c[at]) + float32((e1-o1)*c[at+tapStride])
-			hi := float32((e1+o1)*c[at+2*tapStride]) + float32((e0+o0)*c[at+3*tapStride])
-			out[i] = lo + hi
-		}
+	first, s = first[:len(out)], s[:len(out)]
+	for i := range out {
+		at, s := first[i], s[i]
+		q := float32(s * s)
+		e0 := float32(a[0][0]*q) + a[0][1]
+		o0 := float32(s * (float32(a[1][0]*q) + a[1][1]))
+		e1 := float32(b[0][0]*q) + b[0][1]
+		o1 := float32(s * (float32(b[1][0]*q) + b[1][1]))
+		lo := float32((e0-o0)*c[at]) + float32((e1-o1)*c[at+stride])
+		hi := float32((e1+o1)*c[at+2*stride]) + float32((e0+o0)*c[at+3*stride])
+		out[i] = lo + hi
 	}
 }

@@ -83,11 +83,9 @@ func passes64(vol []float32, n [3]int, degree int, m *[16]float64) []float64 {
 			for k := range line {
 				to := [3]float64{float64(at[0]), float64(at[1]), float64(at[2])}
 				to[a] = float64(k)
-				u := math.Min(math.Max(source(a, to), -1), float64(n[a]))
-				for q := -4; q < n[a]+4; q++ {
-					if w := bspline(degree, u-float64(q)); w != 0 {
-						out[i+stride*k] += w * odd64(line, q)
-					}
+				u := math.Min(math.Max(source(a, to), -1), float64(n[a])-1.0/64)
+				for q := int(math.Floor(u)) - 2; q <= int(math.Floor(u))+3; q++ {
+					out[i+stride*k] += bspline(degree, u-float64(q)) * odd64(line, q)
 				}
 			}
 		}
@@ -97,7 +95,7 @@ func passes64(vol []float32, n [3]int, degree int, m *[16]float64) []float64 {
 	return v
 }
 
-var passSizes = [][3]int{{1, 1, 1}, {2, 1, 3}, {1, 2, 2}, {3, 3, 3}, {4, 5, 2}, {7, 1, 9}, {8, 8, 8}, {9, 17, 5}, {33, 3, 4}, {40, 10, 7}, {5, 40, 30}, {2, 3, 50}}
+var passSizes = [][3]int{{1, 1, 1}, {2, 1, 3}, {1, 2, 2}, {3, 3, 3}, {4, 5, 2}, {7, 1, 9}, {8, 8, 8}, {9, 17, 5}, {33, 3, 4}, {40, 10, 7}, {5, 40, 30}, {2, 3, 50}, {150, 3, 4}}
 
 // Three passes, each with a filter that is within 2e-6 of the largest coefficient (see
 // TestPrefilterAgainstDefinition) and a sum of six or four; a coordinate's fraction is
@@ -146,7 +144,7 @@ func TestPassesTwins(t *testing.T) {
 		var n [3]int
 		var turn, shift [3]float64
 		for k := range n {
-			n[k] = rapid.IntRange(1, 40).Draw(t, "n")
+			n[k] = rapid.IntRange(1, []int{140, 40, 30}[k]).Draw(t, "n")
 			turn[k] = rapid.Float64Range(-0.05, 0.05).Draw(t, "turn")
 			shift[k] = rapid.OneOf(rapid.Float64Range(-2, 2), rapid.Float64Range(-60, 60), rapid.SampledFrom([]float64{0, 1, 1e9, -1e9})).Draw(t, "shift")
 		}
@@ -264,8 +262,8 @@ func TestSameBytesPasses(t *testing.T) {
 	n := [3]int{37, 22, 11}
 	vol := noise(random(4), n[0]*n[1]*n[2])
 	m := turned(n, [3]float64{0.02, -0.03, 0.01}, [3]float64{0.25, 1.5, -0.75})
-	sameBytes(t, "8eef56f129bead1c", passesRun(vol, n, 3, m))
-	sameBytes(t, "9cc659db038f152d", passesRun(vol, n, 5, m))
+	sameBytes(t, "6580d8be8c72a502", passesRun(vol, n, 3, m))
+	sameBytes(t, "e8d54083af5b70ca", passesRun(vol, n, 5, m))
 }
 
 func BenchmarkPasses(b *testing.B) {

@@ -10,11 +10,27 @@ import (
 // Where the parts of kernel.passTable lie, in bytes: rows of eight alike, but for the
 // numbers.
 const (
-	passNumbers64 = 32 * iota // 0 to 7 as float64, two rows
-	_
-	passEight64 // four times 8, as float64
+	passNumbers = 32 * iota // 0 to 7
+	passEight
 	passHalf
 	passPieces // per pair of taps the even and the odd piece, highest power first
+)
+
+// Where the axes have what, in bytes, and the scratch of 64 outputs.
+const (
+	passStart = 8 * iota
+	passStep
+	passRowStep
+	passLowest
+	passHighest
+	passLimit
+	passSlope
+
+	passFraction = 0 // float32
+	passLo       = 4
+	passHi       = 8
+	passCell     = 12 // int32
+	passSigma    = 16 // float32
 )
 
 func passes() {
@@ -36,57 +52,82 @@ func passOf(degree int) {
 		stride5 = g.GP64()
 		g.LEAQ(indexed(stride, stride, 4), stride5)
 	}
+	work := scratch(32)
+	{
+		x := g.XMM()
+		g.VXORPS(x, x, x)
+		g.VCVTSD2SS(at(axes, passSlope), x, x)
+		g.VMOVSS(x, at(work, passSigma))
+	}
 	row, i := g.GP64(), g.GP64()
 	g.XORQ(row, row)
 
 	g.Label("row")
 	g.CMPQ(row, onStack("rows"))
 	g.JGE(LabelRef("end"))
-	origin := g.YMM()
-	{
-		x := g.XMM()
-		g.VXORPS(x, x, x)
-		g.VCVTSI2SDQ(row, x, x)
-		g.VMULSD(at(axes, 16), x, x)
-		g.VADDSD(at(axes, 0), x, x)
-		g.VBROADCASTSD(x, origin)
-	}
-	number := [2]reg.VecVirtual{g.YMM(), g.YMM()}
-	count := g.YMM()
-	for h := range number {
-		g.VMOVUPD(at(table, passNumbers64+32*h), number[h])
-	}
-	g.VMOVDQU(at(follow, 0), count)
 	g.XORQ(i, i)
 
-	g.Label("eight")
-	// Where the next eight lie: first taps as int32, fractions as float32.
-	var cells, fracs [2]reg.VecVirtual
+	// 64 outputs are placed against the first of them.
+	g.Label("many")
 	{
-		zero, step, limit, eight := g.YMM(), g.YMM(), g.YMM(), g.YMM()
-		g.VXORPD(zero, zero, zero)
-		g.VBROADCASTSD(at(axes, 8), step)
-		g.VBROADCASTSD(at(axes, 24), limit)
-		g.VMOVUPD(at(table, passEight64), eight)
-		for h := range 2 {
-			u, f := g.YMM(), g.YMM()
-			cells[h], fracs[h] = g.YMM(), g.YMM()
-			g.VMULPD(step, number[h], u)
-			g.VADDPD(eight, number[h], number[h])
-			g.VADDPD(origin, u, u)
-			g.VMAXPD(zero, u, u) // zero where NaN
-			g.VMINPD(limit, u, u)
-			g.VCVTTPD2DQY(u, cells[h].AsX())
-			g.VCVTDQ2PD(cells[h].AsX(), f)
-			g.VSUBPD(f, u, u)
-			g.VCVTPD2PSY(u, fracs[h].AsX())
-		}
+		u, k, x := g.XMM(), g.XMM(), g.XMM()
+		g.VXORPS(u, u, u)
+		g.VCVTSI2SDQ(row, u, u)
+		g.VMULSD(at(axes, passRowStep), u, u)
+		g.VADDSD(at(axes, passStart), u, u)
+		g.VXORPS(x, x, x)
+		g.VCVTSI2SDQ(i, x, x)
+		g.VMULSD(at(axes, passStep), x, x)
+		g.VADDSD(u, x, u)
+		g.VMAXSD(at(axes, passLowest), u, u)
+		g.VMINSD(at(axes, passHighest), u, u)
+		g.VROUNDSD(U8(1), u, u, k) // down
+		g.VSUBSD(k, u, u)
+		g.VCVTSD2SS(u, u, u)
+		g.VMOVSS(u, at(work, passFraction))
+		g.VMOVSD(at(axes, passLimit), x)
+		g.VSUBSD(k, x, x)
+		g.VCVTSD2SS(x, x, x)
+		g.VMOVSS(x, at(work, passHi))
+		cell := g.GP32()
+		g.VCVTTSD2SI(k, cell)
+		gone := g.GP32()
+		g.MOVL(at(follow, 0), gone)
+		g.ANDL(i.As32(), gone)
+		g.NEGL(gone)
+		g.ADDL(cell, gone)
+		g.MOVL(gone, at(work, passCell))
+		g.NEGL(cell)
+		g.VCVTSI2SSL(cell, x, x)
+		g.VMOVSS(x, at(work, passLo))
 	}
+	number := g.YMM()
+	g.VMOVUPS(at(table, passNumbers), number)
+
+	g.Label("eight")
+	// Where the next eight lie: first taps, less their own numbers where taps follow,
+	// and distances from the middle of a cell.
 	key, s := g.YMM(), g.YMM()
-	g.VINSERTF128(U8(1), cells[1].AsX(), cells[0], key)
-	g.VINSERTF128(U8(1), fracs[1].AsX(), fracs[0], s)
-	g.VPSUBD(count, key, key)
-	g.VPADDD(at(follow, 32), count, count)
+	{
+		bound, floor, gone := g.YMM(), g.YMM(), g.YMM()
+		g.VMULPS(broadcast(at(work, passSigma)), number, s)
+		g.VADDPS(broadcast(at(work, passFraction)), s, s)
+		g.VANDPS(at(follow, 0), number, gone)
+		g.VADDPS(at(table, passEight), number, number)
+		g.VBROADCASTSS(at(work, passLo), bound)
+		g.VSUBPS(gone, bound, bound)
+		g.VMAXPS(bound, s, s)
+		bound = g.YMM()
+		g.VBROADCASTSS(at(work, passHi), bound)
+		g.VSUBPS(gone, bound, bound)
+		g.VMINPS(bound, s, s)
+		g.VROUNDPS(U8(1), s, floor)
+		g.VSUBPS(floor, s, s)
+		g.VCVTTPS2DQ(floor, key)
+		k := g.YMM()
+		g.VPBROADCASTD(at(work, passCell), k)
+		g.VPADDD(k, key, key)
+	}
 
 	// Weights, about the middle of the cell.
 	g.VSUBPS(at(table, passHalf), s, s)
@@ -165,7 +206,10 @@ func passOf(degree int) {
 	g.VMOVUPS(v, indexed(dst, i, 4))
 	g.ADDQ(U8(8), i)
 	g.CMPQ(i, onStack("width"))
-	g.JL(LabelRef("eight"))
+	g.JGE(LabelRef("nextRow"))
+	g.TESTQ(U32(63), i)
+	g.JNZ(LabelRef("eight"))
+	g.JMP(LabelRef("many"))
 	g.Label("nextRow")
 	step := g.GP64()
 	g.MOVQ(onStack("dstStride"), step)
