@@ -20,16 +20,17 @@
 //
 //  3. Fine: both are smoothed by a Gaussian of about half the largest voxel
 //     edge, isotropic in mm so that it commutes with rotation, and matched on the
-//     volume's own voxels:
+//     reference's own voxels:
 //
-//     e(x) = V(x) - (1 + b.phi(x)) R(M^-1 x),  phi = (1, X/80, Y/80, Z/80)
+//     e(x) = V(M x) - (b.phi(x)) R(x),  phi = (1, X/80, Y/80, Z/80)
 //
 //     by Gauss-Newton on the pose M <- M exp(d) and the four gain coefficients
-//     b (receive coils stand still while the head moves, so the gain is a
-//     polynomial in scanner coordinates), weighted by slice, by Tukey's
+//     b (a polynomial of the first degree is one in scanner coordinates as well, where
+//     receive coils stand still while the head moves), weighted by slice, by Tukey's
 //     biweight and, in one more pass where it matters, by how much a voxel varies
-//     of itself (variance.go). The template R is the interpolated one: its noise is lower, and
-//     its interpolation does not depend on the volume's noise.
+//     of itself (variance.go). The derivatives are those of R at its voxels, whatever the
+//     pose, so they are taken once; after the smoothing a quintic spline gives V
+//     between its voxels all but exactly. First a quarter of the rows, then all.
 //
 //  4. For [Mean]: volumes judged aligned are mapped back and averaged, what they
 //     see from near their field's edge weighing less, and every volume is matched
@@ -38,8 +39,8 @@
 //  5. Each volume is judged: aligned, doubtful or lost, with the reason.
 //     Volumes that are not aligned get another try from their neighbours' poses.
 //
-// Sources: Gauss-Newton image alignment after Baker and Matthews 2004, IJCV
-// 56(3):221-255; biweight after Beaton and Tukey 1974, Technometrics 16:147-185
+// Sources: the inverse compositional algorithm of image alignment after Baker and
+// Matthews 2004, IJCV 56(3):221-255; biweight after Beaton and Tukey 1974, Technometrics 16:147-185
 // (from memory); B-splines after Unser 1999, IEEE Signal Processing Magazine
 // 16(6):22-38; threshold after Otsu 1979, IEEE Trans. SMC 9(1):62-66. Margins,
 // smoothing and gain model were chosen by simulation; each constant carries its

@@ -124,9 +124,8 @@ const (
 	// rim: the head's outline, blurred by the filter, holds much of what tells
 	// poses apart; two voxels take it in.
 	rim = 2
-	// fineTolerance ends a match after a step by which no point of the head moved
-	// by more. Steps shrink at least tenfold each, so what is left is below a
-	// twentieth of a micrometre; the best precision that noise allows is about 5.
+	// fineTolerance ends a match when another step would move no point of the head
+	// by more; the best precision that noise allows is about 5 um.
 	fineTolerance   = 5e-4
 	roughTolerance  = 5e-3 // first of two passes: small beside the noise of its single-volume template
 	coarseTolerance = 2e-2
@@ -740,7 +739,10 @@ func finitePose(p Pose) bool {
 // had data (where none had, the average takes the values at the field's edge).
 func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unknown []bool, err error) {
 	nv := e.g.voxels()
-	sum, all, full, count := make([]float64, nv), make([]float64, nv), make([]float64, nv), make([]int32, nv)
+	nx := e.g.N[0]
+	sum, out := make([]float64, nv), make([]float64, nv)
+	// How much less than all volumes count, and how many do not count at all.
+	lack, missed := make([]float64, nv), make([]int32, nv)
 	var use []int
 	for t, v := range vols {
 		if v.State == Aligned {
@@ -770,38 +772,47 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 			return nil
 		}, func() {
 			b := mul(inv, mul(vols[t].Pose.Matrix(), e.g.Affine))
-			weak, vol := weak[t], buf[worker]
-			whole := !slices.Contains(weak, true)
-			for v := 0; v < nv; v++ {
-				x, y, z := v%e.g.N[0], v/e.g.N[0]%e.g.N[1], v/(e.g.N[0]*e.g.N[1])
-				if x == 0 && whole && e.g.deepRow(&b, y, z) {
-					// A row all of which is seen from well inside counts in full.
-					row := vol[v:][:e.g.N[0]]
-					sum, all, full, count := sum[v:][:len(row)], all[v:][:len(row)], full[v:][:len(row)], count[v:][:len(row)]
-					for x, value := range row {
-						all[x] += float64(value)
-						sum[x] += float64(value)
-						full[x]++
-						count[x]++
+			vol := buf[worker]
+			step := [3]float64{b[0], b[4], b[8]}
+			var spoilt []bool
+			if slices.Contains(weak[t], true) {
+				spoilt = weak[t]
+			}
+			for row := range e.g.N[1] * e.g.N[2] {
+				start := applyAffine(&b, 0, float64(row%e.g.N[1]), float64(row/e.g.N[1]))
+				// What is seen from well inside counts in full.
+				lo, hi := 0, 0
+				if spoilt == nil {
+					lo, hi = inside(&start, step, nx, e.g.N, [3]float64{bentPlanes, bentPlanes, bentPlanes})
+				}
+				at := nx * row
+				values, sum, lack, missed := vol[at:][:nx], sum[at:][:nx], lack[at:][:nx], missed[at:][:nx]
+				deeply := sum[lo:hi]
+				for x, v := range values[lo:hi] {
+					deeply[x] += float64(v)
+				}
+				for x := 0; x < nx; x++ {
+					if x == lo && lo < hi {
+						x = hi - 1
+						continue
 					}
-					v += e.g.N[0] - 1
-					continue
-				}
-				all[v] += float64(vol[v])
-				q := applyAffine(&b, float64(x), float64(y), float64(z))
-				w, in := 1.0, true
-				if !e.g.wellInside(&q) {
+					f := float64(x)
+					q := [3]float64{start[0] + float64(step[0]*f), start[1] + float64(step[1]*f), start[2] + float64(step[2]*f)}
 					deep := e.g.depth(q)
-					w, in = edgeWeight(deep), deep >= -0.5
-				}
-				if in {
-					s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
-					in = !(s > 0 && weak[s-1] || s < len(weak) && weak[s])
-				}
-				if in {
-					sum[v] += float64(w * float64(vol[v]))
-					full[v] += w
-					count[v]++
+					in := deep >= -0.5
+					if in && spoilt != nil {
+						s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
+						in = !(s > 0 && spoilt[s-1] || s < len(spoilt) && spoilt[s])
+					}
+					if !in {
+						out[at+x] += float64(values[x])
+						lack[x]++
+						missed[x]++
+						continue
+					}
+					w := edgeWeight(deep)
+					sum[x] += float64(w * float64(values[x]))
+					lack[x] += 1 - w
 				}
 			}
 		})
@@ -809,15 +820,14 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 	if err != nil {
 		return nil, nil, err
 	}
-	total := countState(vols, Aligned)
 	image, unknown = make([]float32, nv), make([]bool, nv)
 	for v := range image {
-		if count[v] > 0 {
-			image[v] = float32(sum[v] / full[v])
+		if int(missed[v]) < len(use) {
+			image[v] = float32(sum[v] / (float64(len(use)) - lack[v]))
 		} else {
-			image[v] = float32(all[v] / float64(total))
+			image[v] = float32(out[v] / float64(len(use))) // nothing but values of the field's edge
 		}
-		unknown[v] = float64(count[v]) < float64(coverage*float64(total))
+		unknown[v] = float64(len(use)-int(missed[v])) < float64(coverage*float64(len(use)))
 	}
 	return image, unknown, nil
 }
@@ -838,13 +848,6 @@ func (g Grid) depth(x [3]float64) float64 {
 		d = min(d, v, float64(g.N[a]-1)-v)
 	}
 	return d
-}
-
-// deepRow reports whether a row of points, mapped by m, lies inside the field by so
-// much that all of it counts in full: its ends do.
-func (g Grid) deepRow(m *[16]float64, j, k int) bool {
-	a, b := applyAffine(m, 0, float64(j), float64(k)), applyAffine(m, float64(g.N[0]-1), float64(j), float64(k))
-	return g.wellInside(&a) && g.wellInside(&b)
 }
 
 // edgeWeight is what a volume counts in an average at a point so deep inside
@@ -943,6 +946,8 @@ func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimat
 			{"margin_voxels", fineMargin},
 			{"rim_voxels", rim},
 			{"tolerance_mm", fineTolerance},
+			{"rest_of_step", shrink},
+			{"rest_over_noise", enough},
 			{"max_iterations", maxIterations},
 			{"fan_below_correlation", fanBelow},
 			{"aligned_from_correlation", alignedFit},

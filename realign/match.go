@@ -52,8 +52,7 @@ type matcher struct {
 	res   []float32 // residual
 
 	weight []float32
-	some   []float32    // sizes of some residuals
-	rows   [5][]float32 // rows of the normal equations: brightness and residual, over the gain
+	some   []float32 // sizes of some residuals
 }
 
 // see evaluates a volume at the matching points of a target; with same, the points that
@@ -296,9 +295,10 @@ func (m *matcher) residuals(gain *[4]float64) {
 // what noise leaves uncertain, rms over the unknowns (the Newton decrement: Boyd,
 // Vandenberghe 2004, Convex Optimization, eq. 9.30).
 //
-// With e = V(p x) - g(x) T(x), de/dd = g J and de/db = -T (1, phi), the equations are
-// those of the rows J, -T/g (1, phi) and e/g at g^2 times the weight, which leaves J as
-// it is from step to step.
+// With e = V(p x) - g(x) T(x), de/dd = g J and de/db = -T (1, phi). In the equations g is
+// that at the centre, so that all rows but e are those of the reference, whatever the
+// volume: a shading of some percent so has steps end some percent short or long, and points
+// weigh by as much more or less, at a cost of its square.
 func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, ok bool) {
 	t := m.t
 	m.residuals(gain)
@@ -325,30 +325,9 @@ func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, 
 			kernel.Tukey(m.weight, m.res, cut)
 		}
 	}
-	n := len(m.v)
-	for a := range m.rows {
-		m.rows[a] = sized(m.rows[a], n)
-	}
-	g32 := narrow(gain)
-	p0, p1, p2 := t.phi[0][:n], t.phi[1][:n], t.phi[2][:n]
-	r0, r1, r2, r3, r4 := m.rows[0][:n], m.rows[1][:n], m.rows[2][:n], m.rows[3][:n], m.rows[4][:n]
-	res, weight := m.res[:n], m.weight[:n]
-	for q, r := range t.value[:n] {
-		g := g32[0] + float32(g32[1]*p0[q]) + float32(g32[2]*p1[q]) + float32(g32[3]*p2[q])
-		if !(g > faintest) {
-			// Shading so strong that nothing is left there.
-			weight[q], r0[q], r1[q], r2[q], r3[q], r4[q] = 0, 0, 0, 0, 0, 0
-			continue
-		}
-		over := 1 / g
-		a := -float32(r * over)
-		r0[q], r1[q], r2[q], r3[q] = a, float32(a*p0[q]), float32(a*p1[q]), float32(a*p2[q])
-		r4[q] = float32(res[q] * over)
-		weight[q] = float32(weight[q] * float32(g*g))
-	}
 	const rows = unknowns + 1
 	var sum [rows * (rows + 1) / 2]float64
-	kernel.Gram(sum[:], [][]float32{t.jac[0], t.jac[1], t.jac[2], t.jac[3], t.jac[4], t.jac[5], r0, r1, r2, r3, r4}, weight)
+	kernel.Gram(sum[:], [][]float32{t.jac[0], t.jac[1], t.jac[2], t.jac[3], t.jac[4], t.jac[5], t.value, t.shade[0], t.shade[1], t.shade[2], m.res}, m.weight)
 	var h [unknowns][unknowns]float64
 	var g [unknowns]float64
 	at := 0
@@ -371,10 +350,14 @@ func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, 
 	for a := range d {
 		d[a] = float64(d[a] * longer)
 	}
+	over := -1 / max(gain[0], faintest)
 	for a := range gain {
-		gain[a] -= d[6+a]
+		gain[a] += d[6+a]
 	}
-	return Twist{V: [3]float64{-d[0], -d[1], -d[2]}, W: [3]float64{-d[3], -d[4], -d[5]}}, size, true
+	for a := range 3 {
+		twist.V[a], twist.W[a] = float64(d[a]*over), float64(d[3+a]*over)
+	}
+	return twist, size, true
 }
 
 // slant is how much longer than that of reweighted least squares a step has to be:

@@ -89,9 +89,15 @@ func (s *smoother) run(dst, vol []float32) {
 		out := s.a[ox*row:][:ox]
 		line := s.line[:nx+2*r]
 		copy(line[r:], src)
-		for i := 1; i <= r; i++ {
-			line[r-i] = oddSample(src, -i)
-			line[r+nx-1+i] = oddSample(src, nx-1+i)
+		if r < nx {
+			first, last := 2*src[0], 2*src[nx-1]
+			for i := 1; i <= r; i++ {
+				line[r-i], line[r+nx-1+i] = first-src[i], last-src[nx-1-i]
+			}
+		} else {
+			for i := 1; i <= r; i++ {
+				line[r-i], line[r+nx-1+i] = oddSample(src, -i), oddSample(src, nx-1+i)
+			}
 		}
 		if s.stride[0] == 1 {
 			filterLine(out, h, line)

@@ -16,6 +16,7 @@ type target struct {
 	value  []float32    // of the reference, smoothed
 	jac    [6][]float32 // gradient and moment of the reference, per mm and per rad
 	phi    [3][]float32 // coordinates for the gain, from the centre, / gainReach
+	shade  [3][]float32 // value times phi
 	slope  []float32    // squared length of the gradient
 	weight []float32    // what a point counts in a robust match; nil: all alike
 	head   []span       // rows of the head, whether they take part or not
@@ -97,7 +98,7 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 		a.jac[k] = make([]float32, count)
 	}
 	for k := range a.phi {
-		a.phi[k] = make([]float32, count)
+		a.phi[k], a.shade[k] = make([]float32, count), make([]float32, count)
 	}
 	a.slope = make([]float32, count)
 	for q, v := range a.voxel {
@@ -108,6 +109,7 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 		for k := range 3 {
 			a.jac[k][q], a.jac[3+k][q] = float32(gw[k]), float32(mo[k])
 			a.phi[k][q] = float32(at[k] * (1.0 / gainReach))
+			a.shade[k][q] = float32(a.value[q] * a.phi[k][q])
 		}
 		a.slope[q] = float32(float64(gw[0]*gw[0]) + float64(gw[1]*gw[1]) + float64(gw[2]*gw[2]))
 	}
@@ -121,7 +123,7 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 func (t *target) thin() {
 	f := *t
 	f.rows, f.voxel, f.value, f.inHead, f.slope = nil, nil, nil, nil, nil
-	f.jac, f.phi = [6][]float32{}, [3][]float32{}
+	f.jac, f.phi, f.shade = [6][]float32{}, [3][]float32{}, [3][]float32{}
 	n := t.g.N
 	for _, r := range t.rows {
 		if (min(r.y, n[1]-1-r.y)+2*min(r.z, n[2]-1-r.z))%4 != 0 {
@@ -139,6 +141,7 @@ func (t *target) thin() {
 		}
 		for k := range t.phi {
 			f.phi[k] = append(f.phi[k], t.phi[k][from:to]...)
+			f.shade[k] = append(f.shade[k], t.shade[k][from:to]...)
 		}
 	}
 	if len(f.voxel) >= fewestPoints {

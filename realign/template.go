@@ -2,7 +2,7 @@ package realign
 
 import "math"
 
-// template is a reference prepared for matching at one level of smoothing. It
+// template is a reference that slices are matched with along a path, pixel by pixel. It
 // is read-only once made.
 type template struct {
 	g      Grid
@@ -10,7 +10,6 @@ type template struct {
 	s      *spline     // the smoothed reference
 	usable []bool      // by nearest voxel: the head and a rim, less what the margins and gaps forbid
 	head   []bool      // by nearest voxel: the head
-	weight []float32   // by nearest voxel: what it counts in a robust match; nil: all alike
 	centre [3]float64  // world mm
 	margin [3]float64  // voxels left out at each field edge
 	box    [2][3]int   // first and last usable voxel along each axis

@@ -82,15 +82,15 @@ func scatter(rows *float32, offsets *int, t *float32, stride int, n int)
 //go:noescape
 func reflect(dst *float32, end *float32, inner *float32, n int, masks *int32)
 
-// widen is the assembly of widenPlain; n is a multiple of 4.
+// weigh is the assembly of weighPlain; n is a multiple of 8.
 //
 //go:noescape
-func widen(a *float64, b *float64, row *float32, w *float32, n int)
+func weigh(a *float32, b *float32, row *float32, w *float32, n int)
 
-// gramBlock is the assembly of gramBlockPlain; n is a multiple of 4.
+// gramBlock is the assembly of gramBlockPlain; n is a multiple of 8.
 //
 //go:noescape
-func gramBlock(sum *float64, a *float64, b *float64, tiles int, n int)
+func gramBlock(sum *float64, a *float32, b *float32, tiles int, n int)
 
 // residual is the assembly of residualPlain.
 //

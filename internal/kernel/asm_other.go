@@ -68,11 +68,11 @@ func reflect(dst *float32, end *float32, inner *float32, n int, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
 
-func widen(a *float64, b *float64, row *float32, w *float32, n int) {
+func weigh(a *float32, b *float32, row *float32, w *float32, n int) {
 	panic("kernel: no assembly for this processor")
 }
 
-func gramBlock(sum *float64, a *float64, b *float64, tiles int, n int) {
+func gramBlock(sum *float64, a *float32, b *float32, tiles int, n int) {
 	panic("kernel: no assembly for this processor")
 }
 

@@ -3,16 +3,21 @@ package kernel
 // MostRows is the largest number of rows of [Gram].
 const MostRows = 12
 
-// gramPoints points are widened at a time: all rows twice then fit the fastest cache.
-const gramPoints = 64
+// gramPoints points are weighed at a time: all rows twice then fit the fastest cache.
+const gramPoints = 128
+
+// gramLanes holds, for each pair of tiles of three rows, four lanes of nine sums.
+type gramLanes [MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64
 
 // Gram adds weighted products of rows to sum: for a <= b, in the order (0,0),
 // (0,1) ... (0,m-1), (1,1) ..., the sum over i of w[i] rows[a][i] rows[b][i].
 // Rows, at most MostRows, and w are of one length; sum holds m (m+1)/2 values.
 //
-// A point of weight zero does not count, whatever its rows hold. Arithmetic is in
-// float64, point i in lane i mod 4; lanes join as (0 + 2) + (1 + 3). What comes out
-// so hangs on the length of the call, though not on the processor.
+// A point of weight zero does not count, whatever its rows hold. Products and the sums of
+// 16 of them (of the points i with the same i mod 8, 128 points at a time) are in float32,
+// what those are added to in float64: lanes 0 to 3, then 4 to 7, to lanes mod 4, which
+// join as (0 + 2) + (1 + 3). What comes out so hangs on the length of the call, though not
+// on the processor.
 func Gram(sum []float64, rows [][]float32, w []float32) {
 	m, n := len(rows), len(w)
 	check(m <= MostRows && len(sum) == m*(m+1)/2, "too many rows, or sums of another number of rows")
@@ -20,13 +25,13 @@ func Gram(sum []float64, rows [][]float32, w []float32) {
 		check(len(r) == n, "rows and weights differ in length")
 	}
 	tiles := (m + 2) / 3
-	var a, b [MostRows * gramPoints]float64
-	var acc [MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64
+	var a, b [MostRows * gramPoints]float32
+	var acc gramLanes
 	var tail [2][gramPoints]float32
 	for from := 0; from < n; from += gramPoints {
 		k := min(gramPoints, n-from)
 		weights := w[from : from+k]
-		wide := (k + 3) &^ 3
+		wide := (k + 7) &^ 7
 		if k < wide {
 			// The missing points weigh nothing.
 			weights = tail[0][:wide]
@@ -39,9 +44,9 @@ func Gram(sum []float64, rows [][]float32, w []float32) {
 				row = tail[1][:wide]
 			}
 			if useAssembly {
-				widen(&a[gramPoints*r], &b[gramPoints*r], &row[0], &weights[0], wide)
+				weigh(&a[gramPoints*r], &b[gramPoints*r], &row[0], &weights[0], wide)
 			} else {
-				widenPlain(a[gramPoints*r:][:wide], b[gramPoints*r:][:wide], row, weights)
+				weighPlain(a[gramPoints*r:][:wide], b[gramPoints*r:][:wide], row, weights)
 			}
 		}
 		if m == 0 {
@@ -65,34 +70,41 @@ func Gram(sum []float64, rows [][]float32, w []float32) {
 	}
 }
 
-func widenPlain(a, b []float64, row, w []float32) {
+func weighPlain(a, b, row, w []float32) {
 	a, b, row = a[:len(w)], b[:len(w)], row[:len(w)]
 	for i, v := range w {
 		r := row[i]
 		if v == 0 {
 			r = 0
 		}
-		b[i] = float64(r)
-		a[i] = float64(v) * float64(r)
+		b[i] = r
+		a[i] = v * r
 	}
 }
 
-func gramBlockPlain(acc *[MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64, a, b *[MostRows * gramPoints]float64, tiles, n int) {
+func gramBlockPlain(acc *gramLanes, a, b *[MostRows * gramPoints]float32, tiles, n int) {
 	at := 0
 	for i := range tiles {
 		for j := i; j < tiles; j++ {
 			for k := range 9 {
 				x, y := a[gramPoints*(3*i+k/3):][:n], b[gramPoints*(3*j+k%3):][:n]
-				s := &acc[at][k]
-				s0, s1, s2, s3 := s[0], s[1], s[2], s[3]
-				for len(x) >= 4 && len(y) >= 4 {
-					s0 += float64(x[0] * y[0])
-					s1 += float64(x[1] * y[1])
-					s2 += float64(x[2] * y[2])
-					s3 += float64(x[3] * y[3])
-					x, y = x[4:], y[4:]
+				var s0, s1, s2, s3, s4, s5, s6, s7 float32
+				for len(x) >= 8 && len(y) >= 8 {
+					s0 += float32(x[0] * y[0])
+					s1 += float32(x[1] * y[1])
+					s2 += float32(x[2] * y[2])
+					s3 += float32(x[3] * y[3])
+					s4 += float32(x[4] * y[4])
+					s5 += float32(x[5] * y[5])
+					s6 += float32(x[6] * y[6])
+					s7 += float32(x[7] * y[7])
+					x, y = x[8:], y[8:]
 				}
-				*s = [4]float64{s0, s1, s2, s3}
+				s := &acc[at][k]
+				s[0] = s[0] + float64(s0) + float64(s4)
+				s[1] = s[1] + float64(s1) + float64(s5)
+				s[2] = s[2] + float64(s2) + float64(s6)
+				s[3] = s[3] + float64(s3) + float64(s7)
 			}
 			at++
 		}

@@ -53,8 +53,9 @@ func TestGramTwins(t *testing.T) {
 	})
 }
 
-// Against compensated sums (Neumaier 1974, ZAMM 54:39-51). In float64 each lane adds n/4 terms: an
-// error of n/4 x 2^-53 of the sum of sizes, 3e-12 at 1e5 points, at the very most.
+// Against compensated sums (Neumaier 1974, ZAMM 54:39-51). Two products and fifteen sums in
+// float32 err by 17 x 2^-24 of the sum of sizes, 1.1e-6, at the very most; they seldom
+// conspire.
 func TestGramAgainstDirect(t *testing.T) {
 	for _, c := range [][2]int{{1, 1}, {2, 3}, {3, 64}, {4, 65}, {7, 127}, {10, 1000}, {11, 999}, {12, 100000}} {
 		rows, w := gramRows(uint64(c[1]), c[0], c[1])
@@ -82,7 +83,7 @@ func TestGramAgainstDirect(t *testing.T) {
 						want = s
 					}
 					want += rest
-					if !(math.Abs(sum[at]-want) <= 3e-12*size) {
+					if !(math.Abs(sum[at]-want) <= 3e-7*size) {
 						t.Errorf("%d rows, %d points, plain %v, (%d,%d): %g, want %g", c[0], c[1], plain, a, b, sum[at], want)
 					}
 					at++
@@ -106,7 +107,7 @@ func TestGramStaysInside(t *testing.T) {
 
 func TestSameBytesGram(t *testing.T) {
 	rows, w := gramRows(3, 11, 1003)
-	sameBytes(t, "b289fbcb109d4957", gramSums(rows, w))
+	sameBytes(t, "a4ec50c5c3e5b9b2", gramSums(rows, w))
 }
 
 func BenchmarkGram(b *testing.B) {

@@ -6,31 +6,28 @@ import (
 )
 
 // gramStride is the distance of rows in the scratch of kernel.Gram, in bytes.
-const gramStride = 64 * 8
+const gramStride = 128 * 4
 
 func gram() {
-	function("widen", "func(a, b *float64, row, w *float32, n int)", "widen is the assembly of widenPlain; n is a multiple of 4.")
+	function("weigh", "func(a, b, row, w *float32, n int)", "weigh is the assembly of weighPlain; n is a multiple of 8.")
 	a, b, row, w, n := arg("a"), arg("b"), arg("row"), arg("w"), arg("n")
 	i := g.GP64()
 	g.XORQ(i, i)
-	zero := g.XMM()
+	zero := g.YMM()
 	g.VXORPS(zero, zero, zero)
-	loop("points", i, 4, n, func() {
-		r, v, mask := g.XMM(), g.XMM(), g.XMM()
+	loop("points", i, 8, n, func() {
+		r, v, mask := g.YMM(), g.YMM(), g.YMM()
 		g.VMOVUPS(indexed(w, i, 4), v)
 		g.VCMPPS(U8(4), zero, v, mask) // not equal, or unordered
 		g.VANDPS(indexed(row, i, 4), mask, r)
-		rd, vd := g.YMM(), g.YMM()
-		g.VCVTPS2PD(r, rd)
-		g.VCVTPS2PD(v, vd)
-		g.VMOVUPD(rd, indexed(b, i, 8))
-		g.VMULPD(rd, vd, vd)
-		g.VMOVUPD(vd, indexed(a, i, 8))
+		g.VMOVUPS(r, indexed(b, i, 4))
+		g.VMULPS(r, v, v)
+		g.VMOVUPS(v, indexed(a, i, 4))
 	})
 	g.VZEROUPPER()
 	g.RET()
 
-	function("gramBlock", "func(sum, a, b *float64, tiles, n int)", "gramBlock is the assembly of gramBlockPlain; n is a multiple of 4.")
+	function("gramBlock", "func(sum *float64, a, b *float32, tiles, n int)", "gramBlock is the assembly of gramBlockPlain; n is a multiple of 8.")
 	sum, a, b := arg("sum"), arg("a"), arg("b")
 	tiles, n := arg("tiles"), arg("n")
 	left := g.GP64()
@@ -42,28 +39,32 @@ func gram() {
 	var acc [9]reg.VecVirtual
 	for k := range acc {
 		acc[k] = g.YMM()
-		g.VMOVUPD(at(sum, 32*k), acc[k])
+		g.VXORPS(acc[k], acc[k], acc[k])
 	}
 	i = g.GP64()
 	g.XORQ(i, i)
-	loop("block", i, 4, n, func() {
+	loop("block", i, 8, n, func() {
 		var x [3]reg.VecVirtual
 		for k := range x {
 			x[k] = g.YMM()
-			g.VMOVUPD(Mem{Base: a, Index: i, Scale: 8, Disp: gramStride * k}, x[k])
+			g.VMOVUPS(Mem{Base: a, Index: i, Scale: 4, Disp: gramStride * k}, x[k])
 		}
 		for c := range 3 {
 			y := g.YMM()
-			g.VMOVUPD(Mem{Base: q, Index: i, Scale: 8, Disp: gramStride * c}, y)
+			g.VMOVUPS(Mem{Base: q, Index: i, Scale: 4, Disp: gramStride * c}, y)
 			for r := range x {
-				t := g.YMM()
-				g.VMULPD(x[r], y, t)
-				g.VADDPD(t, acc[3*r+c], acc[3*r+c])
+				accumulate(x[r], y, acc[3*r+c], g.YMM())
 			}
 		}
 	})
 	for k := range acc {
-		g.VMOVUPD(acc[k], at(sum, 32*k))
+		low, high, half := g.YMM(), g.YMM(), g.XMM()
+		g.VCVTPS2PD(acc[k].(reg.Vec).AsX(), low)
+		g.VEXTRACTF128(U8(1), acc[k], half)
+		g.VCVTPS2PD(half, high)
+		g.VADDPD(at(sum, 32*k), low, low)
+		g.VADDPD(high, low, low)
+		g.VMOVUPD(low, at(sum, 32*k))
 	}
 	g.ADDQ(U32(9*32), sum)
 	g.ADDQ(U32(3*gramStride), q)
