@@ -133,9 +133,18 @@ func (f *faces) fill(dst []float32, n [3]int, axis, side int, m *[16]float64) {
 	b, c := planeAxes[axis][0], planeAxes[axis][1]
 	step := [3]float64{m[4*b+along], m[4*c+along], 0}
 	slope := m[4*axis+along]
+	// The furthest that a line goes, against its first point.
+	furthest := float64(slope * float64(n[along]-1))
+	if side == 0 {
+		furthest = min(furthest, 0)
+	} else {
+		furthest = max(furthest, 0)
+	}
 	for k := range n[2] {
-		for j := range n[across] {
-			at := [3]float64{2: float64(k)}
+		at := [3]float64{2: float64(k)}
+		o := applyAffine(m, at[0], at[1], at[2])
+		first, last := beyond(o[axis]+furthest, m[4*axis+across], limit, side == 1, n[across])
+		for j := first; j < last; j++ {
 			at[across] = float64(j)
 			o := applyAffine(m, at[0], at[1], at[2])
 			from, to := beyond(o[axis], slope, limit, side == 1, n[along])
