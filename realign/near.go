@@ -45,7 +45,7 @@ func (r *Resampler) Near(dst, vol []float32, m Map) bool {
 	for axis := range r.faces {
 		for side := range r.faces[axis].outside {
 			if r.faces[axis].outside[side] {
-				r.faces[axis].fill(dst, n, axis, side, &a)
+				r.faces[axis].fill(dst, n, r.s.degree, axis, side, &a)
 			}
 		}
 	}
@@ -71,7 +71,8 @@ func NearIdentity(m Map) bool {
 type faces struct {
 	outside [2]bool // whether any output lies past the lower, the upper
 	plane   [2][]float32
-	s       *spline // of one of them; the third axis has one sample
+	filter  *kernel.Prefilter
+	c       []float32 // coefficients of one of them
 	line    []float32
 }
 
@@ -108,8 +109,10 @@ func (r *Resampler) takeFaces(vol []float32, m *[16]float64) {
 					row[i] = src[strides[b]*i]
 				}
 			}
-			if f.s == nil {
-				f.s = newSpline([3]int{n[b], n[c], 1}, r.s.degree)
+			if f.filter == nil {
+				f.filter = kernel.NewPrefilter([3]int{n[b], n[c], 1}, r.s.degree, splinePad)
+				m := f.filter.Size()
+				f.c = make([]float32, m[0]*m[1]+kernel.Slack)
 			}
 		}
 	}
@@ -117,8 +120,8 @@ func (r *Resampler) takeFaces(vol []float32, m *[16]float64) {
 
 // fill gives the outputs that lie past one side of an axis the values of the edge
 // there. m says where outputs come from.
-func (f *faces) fill(dst []float32, n [3]int, axis, side int, m *[16]float64) {
-	f.s.load(f.plane[side])
+func (f *faces) fill(dst []float32, n [3]int, degree, axis, side int, m *[16]float64) {
+	f.filter.RunFlat(f.c, f.plane[side])
 	// Lines of outputs along x or, past the ends of x, along y: what is outside
 	// is then long enough to be worth a kernel's while.
 	along, across := 0, 1
@@ -131,7 +134,7 @@ func (f *faces) fill(dst []float32, n [3]int, axis, side int, m *[16]float64) {
 		limit = float64(n[axis]-1) + slightly
 	}
 	b, c := planeAxes[axis][0], planeAxes[axis][1]
-	step := [3]float64{m[4*b+along], m[4*c+along], 0}
+	size, step := [2]int{n[b], n[c]}, [2]float64{m[4*b+along], m[4*c+along]}
 	slope := m[4*axis+along]
 	// The furthest that a line goes, against its first point.
 	furthest := float64(slope * float64(n[along]-1))
@@ -151,14 +154,14 @@ func (f *faces) fill(dst []float32, n [3]int, axis, side int, m *[16]float64) {
 			if from >= to {
 				continue
 			}
-			start := [3]float64{o[b] + float64(step[0]*float64(from)), o[c] + float64(step[1]*float64(from)), 0}
+			start := [2]float64{o[b] + float64(step[0]*float64(from)), o[c] + float64(step[1]*float64(from))}
 			out := dst[strides[across]*j+strides[2]*k:]
 			line := out[from:to:to]
 			if along != 0 {
 				f.line = sized(f.line, to-from)
 				line = f.line
 			}
-			f.s.line(line, start, step)
+			kernel.FlatRow(line, f.c, size, splinePad, start, step, degree)
 			if along != 0 {
 				for i, v := range line {
 					out[strides[along]*(from+i)] = v

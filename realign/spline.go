@@ -39,11 +39,8 @@ func (s *spline) load(vol []float32) {
 // row interpolates along a row of outputs whose source coordinates m gives: those of
 // (0..len(dst)-1, j, k).
 func (s *spline) row(dst []float32, m *[16]float64, j, k int) {
-	s.line(dst, applyAffine(m, 0, float64(j), float64(k)), [3]float64{m[0], m[4], m[8]})
-}
-
-// line interpolates at start + i step.
-func (s *spline) line(dst []float32, start, step [3]float64) {
+	start := applyAffine(m, 0, float64(j), float64(k))
+	step := [3]float64{m[0], m[4], m[8]}
 	if s.degree == 5 {
 		kernel.AffineRow5(dst, s.c, s.n, splinePad, start, step)
 	} else {

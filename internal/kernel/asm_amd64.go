@@ -47,6 +47,16 @@ func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64
 //go:noescape
 func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32)
 
+// flatRow3 is the assembly of flatRow3Plain.
+//
+//go:noescape
+func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+
+// flatRow5 is the assembly of flatRow5Plain.
+//
+//go:noescape
+func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+
 // strip3x32 is the assembly of eightPlain, degree 3, 32 lanes.
 //
 //go:noescape

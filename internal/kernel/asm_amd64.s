@@ -1361,9 +1361,9 @@ TEXT ·affineRow3(SB), $352-64
 	MOVQ dst+0(FP), AX
 	MOVQ c+16(FP), CX
 	MOVQ mx+24(FP), DX
-	MOVQ area+32(FP), BX
-	MOVQ axes+40(FP), SI
-	MOVQ table+48(FP), DI
+	MOVQ axes+40(FP), BX
+	MOVQ table+48(FP), SI
+	MOVQ area+32(FP), DI
 	LEAQ (DX)(DX*2), R8
 	SHLQ $0x02, R8
 	LEAQ 31(SP), R9
@@ -1379,13 +1379,13 @@ next:
 	VXORPS       X1, X1, X1
 	VCVTSI2SDQ   R10, X1, X1
 	VBROADCASTSD X1, Y2
-	VADDPD       352(DI), Y2, Y1
-	VADDPD       384(DI), Y2, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
 	MOVQ         CX, R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD (SI), Y8
-	VBROADCASTSD 24(SI), Y3
-	VBROADCASTSD 48(SI), Y7
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 24(BX), Y3
+	VBROADCASTSD 48(BX), Y7
 	VMULPD       Y3, Y1, Y9
 	VADDPD       Y8, Y9, Y9
 	VMAXPD       Y6, Y9, Y9
@@ -1404,16 +1404,16 @@ next:
 	VCVTPD2PSY   Y3, X3
 	VINSERTF128  $0x01, X6, Y4, Y6
 	VINSERTF128  $0x01, X3, Y5, Y7
-	VPSUBD       320(DI), Y6, Y6
+	VPSUBD       320(SI), Y6, Y6
 	VPBROADCASTD X6, Y3
 	VPCMPEQD     Y3, Y6, Y3
 	VMOVDQA      Y3, Y3
 	VMOVD        X6, R12
 	LEAQ         (R11)(R12*4), R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 8(SI), Y9
-	VBROADCASTSD 32(SI), Y10
-	VBROADCASTSD 56(SI), Y8
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 32(BX), Y10
+	VBROADCASTSD 56(BX), Y8
 	VMULPD       Y10, Y1, Y11
 	VADDPD       Y9, Y11, Y11
 	VMAXPD       Y6, Y11, Y11
@@ -1440,9 +1440,9 @@ next:
 	IMULQ        DX, R12
 	LEAQ         (R11)(R12*4), R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 16(SI), Y9
-	VBROADCASTSD 40(SI), Y10
-	VBROADCASTSD 64(SI), Y8
+	VBROADCASTSD 16(BX), Y9
+	VBROADCASTSD 40(BX), Y10
+	VBROADCASTSD 64(BX), Y8
 	VMULPD       Y10, Y1, Y1
 	VADDPD       Y9, Y1, Y1
 	VMAXPD       Y6, Y1, Y1
@@ -1466,7 +1466,7 @@ next:
 	VPCMPEQD     Y1, Y2, Y1
 	VPAND        Y1, Y3, Y3
 	VMOVD        X2, R12
-	IMULQ        BX, R12
+	IMULQ        DI, R12
 	LEAQ         (R11)(R12*4), R11
 	VMOVMSKPS    Y3, R12
 	NOTL         R12
@@ -1475,63 +1475,63 @@ next:
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMOVUPS      Y3, 224(R9)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VMOVUPS      Y1, 160(R9)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       192(DI), Y1, Y1
+	VMULPS       192(SI), Y1, Y1
 	VMOVUPS      Y1, 128(R9)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       (DI), Y2, Y2
+	VMULPS       (SI), Y2, Y2
 	VSUBPS       Y0, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       288(DI), Y2, Y2
+	VADDPS       288(SI), Y2, Y2
 	VMOVUPS      Y2, 192(R9)
 	VMOVUPS      256(R9), Y1
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMOVUPS      Y3, 96(R9)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VMOVUPS      Y1, 32(R9)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       192(DI), Y1, Y1
+	VMULPS       192(SI), Y1, Y1
 	VMOVUPS      Y1, (R9)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       (DI), Y2, Y2
+	VMULPS       (SI), Y2, Y2
 	VSUBPS       Y0, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       288(DI), Y2, Y2
+	VADDPS       288(SI), Y2, Y2
 	VMOVUPS      Y2, 64(R9)
 	VSUBPS       Y7, Y0, Y1
 	VMULPS       Y7, Y7, Y2
 	VMULPS       Y7, Y2, Y2
-	VMULPS       192(DI), Y2, Y2
+	VMULPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y7, Y3
-	VMULPS       (DI), Y7, Y6
+	VMULPS       (SI), Y7, Y6
 	VSUBPS       Y0, Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VADDPS       288(DI), Y6, Y6
+	VADDPS       288(SI), Y6, Y6
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y1, Y7
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y7, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VXORPS       Y0, Y0, Y0
 	MOVQ         R9, R13
 	MOVQ         $0x00000004, R14
@@ -1575,7 +1575,7 @@ plane:
 	VMULPS  128(R13), Y7, Y7
 	VADDPS  Y7, Y0, Y0
 	ADDQ    $+32, R13
-	LEAQ    (R11)(BX*4), R11
+	LEAQ    (R11)(DI*4), R11
 	DECQ    R14
 	JNZ     plane
 	MOVQ    n+8(FP), R11
@@ -1604,9 +1604,9 @@ TEXT ·affineRow5(SB), $480-64
 	MOVQ dst+0(FP), AX
 	MOVQ c+16(FP), CX
 	MOVQ mx+24(FP), DX
-	MOVQ area+32(FP), BX
-	MOVQ axes+40(FP), SI
-	MOVQ table+48(FP), DI
+	MOVQ axes+40(FP), BX
+	MOVQ table+48(FP), SI
+	MOVQ area+32(FP), DI
 	LEAQ (DX)(DX*2), R8
 	SHLQ $0x02, R8
 	LEAQ (DX)(DX*4), R9
@@ -1624,13 +1624,13 @@ next:
 	VXORPS       X1, X1, X1
 	VCVTSI2SDQ   R11, X1, X1
 	VBROADCASTSD X1, Y2
-	VADDPD       352(DI), Y2, Y1
-	VADDPD       384(DI), Y2, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
 	MOVQ         CX, R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD (SI), Y8
-	VBROADCASTSD 24(SI), Y3
-	VBROADCASTSD 48(SI), Y7
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 24(BX), Y3
+	VBROADCASTSD 48(BX), Y7
 	VMULPD       Y3, Y1, Y9
 	VADDPD       Y8, Y9, Y9
 	VMAXPD       Y6, Y9, Y9
@@ -1649,16 +1649,16 @@ next:
 	VCVTPD2PSY   Y3, X3
 	VINSERTF128  $0x01, X6, Y4, Y6
 	VINSERTF128  $0x01, X3, Y5, Y7
-	VPSUBD       320(DI), Y6, Y6
+	VPSUBD       320(SI), Y6, Y6
 	VPBROADCASTD X6, Y3
 	VPCMPEQD     Y3, Y6, Y3
 	VMOVDQA      Y3, Y3
 	VMOVD        X6, R13
 	LEAQ         (R12)(R13*4), R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 8(SI), Y9
-	VBROADCASTSD 32(SI), Y10
-	VBROADCASTSD 56(SI), Y8
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 32(BX), Y10
+	VBROADCASTSD 56(BX), Y8
 	VMULPD       Y10, Y1, Y11
 	VADDPD       Y9, Y11, Y11
 	VMAXPD       Y6, Y11, Y11
@@ -1685,9 +1685,9 @@ next:
 	IMULQ        DX, R13
 	LEAQ         (R12)(R13*4), R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 16(SI), Y9
-	VBROADCASTSD 40(SI), Y10
-	VBROADCASTSD 64(SI), Y8
+	VBROADCASTSD 16(BX), Y9
+	VBROADCASTSD 40(BX), Y10
+	VBROADCASTSD 64(BX), Y8
 	VMULPD       Y10, Y1, Y1
 	VADDPD       Y9, Y1, Y1
 	VMAXPD       Y6, Y1, Y1
@@ -1711,7 +1711,7 @@ next:
 	VPCMPEQD     Y1, Y2, Y1
 	VPAND        Y1, Y3, Y3
 	VMOVD        X2, R13
-	IMULQ        BX, R13
+	IMULQ        DI, R13
 	LEAQ         (R12)(R13*4), R12
 	VMOVMSKPS    Y3, R13
 	NOTL         R13
@@ -1721,150 +1721,150 @@ next:
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
+	VMULPS       128(SI), Y3, Y3
 	VMOVUPS      Y3, 352(R10)
-	VMULPS       160(DI), Y1, Y3
-	VSUBPS       192(DI), Y3, Y3
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VSUBPS       224(DI), Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       256(DI), Y3, Y3
+	VADDPS       256(SI), Y3, Y3
 	VMOVUPS      Y3, 224(R10)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       64(DI), Y1, Y6
-	VMOVUPS      32(DI), Y1
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
 	VSUBPS       Y6, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VSUBPS       (DI), Y1, Y1
+	VSUBPS       (SI), Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       96(DI), Y1, Y1
+	VADDPS       96(SI), Y1, Y1
 	VMOVUPS      Y1, 256(R10)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
+	VMULPS       128(SI), Y1, Y1
 	VMOVUPS      Y1, 192(R10)
-	VMULPS       160(DI), Y2, Y1
-	VSUBPS       192(DI), Y1, Y1
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VSUBPS       224(DI), Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       256(DI), Y1, Y1
+	VADDPS       256(SI), Y1, Y1
 	VMOVUPS      Y1, 320(R10)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       64(DI), Y2, Y3
-	VMOVUPS      32(DI), Y2
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
 	VSUBPS       Y3, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VSUBPS       (DI), Y2, Y2
+	VSUBPS       (SI), Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       96(DI), Y2, Y2
+	VADDPS       96(SI), Y2, Y2
 	VMOVUPS      Y2, 288(R10)
 	VMOVUPS      384(R10), Y1
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
+	VMULPS       128(SI), Y3, Y3
 	VMOVUPS      Y3, 160(R10)
-	VMULPS       160(DI), Y1, Y3
-	VSUBPS       192(DI), Y3, Y3
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VSUBPS       224(DI), Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       256(DI), Y3, Y3
+	VADDPS       256(SI), Y3, Y3
 	VMOVUPS      Y3, 32(R10)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       64(DI), Y1, Y6
-	VMOVUPS      32(DI), Y1
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
 	VSUBPS       Y6, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VSUBPS       (DI), Y1, Y1
+	VSUBPS       (SI), Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       96(DI), Y1, Y1
+	VADDPS       96(SI), Y1, Y1
 	VMOVUPS      Y1, 64(R10)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
+	VMULPS       128(SI), Y1, Y1
 	VMOVUPS      Y1, (R10)
-	VMULPS       160(DI), Y2, Y1
-	VSUBPS       192(DI), Y1, Y1
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VSUBPS       224(DI), Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       256(DI), Y1, Y1
+	VADDPS       256(SI), Y1, Y1
 	VMOVUPS      Y1, 128(R10)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       64(DI), Y2, Y3
-	VMOVUPS      32(DI), Y2
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
 	VSUBPS       Y3, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VSUBPS       (DI), Y2, Y2
+	VSUBPS       (SI), Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       96(DI), Y2, Y2
+	VADDPS       96(SI), Y2, Y2
 	VMOVUPS      Y2, 96(R10)
 	VSUBPS       Y7, Y0, Y0
 	VMULPS       Y7, Y7, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y7, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
-	VMULPS       160(DI), Y7, Y2
-	VSUBPS       192(DI), Y2, Y2
+	VMULPS       128(SI), Y1, Y1
+	VMULPS       160(SI), Y7, Y2
+	VSUBPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       192(DI), Y2, Y2
+	VADDPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       192(DI), Y2, Y2
+	VADDPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VSUBPS       224(DI), Y2, Y2
+	VSUBPS       224(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       256(DI), Y2, Y2
+	VADDPS       256(SI), Y2, Y2
 	VMULPS       Y7, Y7, Y3
-	VMULPS       64(DI), Y7, Y7
-	VMOVUPS      32(DI), Y6
+	VMULPS       64(SI), Y7, Y7
+	VMOVUPS      32(SI), Y6
 	VSUBPS       Y7, Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VSUBPS       (DI), Y6, Y6
+	VSUBPS       (SI), Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VADDPS       96(DI), Y6, Y6
+	VADDPS       96(SI), Y6, Y6
 	VMULPS       Y0, Y0, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y0, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
-	VMULPS       160(DI), Y0, Y7
-	VSUBPS       192(DI), Y7, Y7
+	VMULPS       128(SI), Y3, Y3
+	VMULPS       160(SI), Y0, Y7
+	VSUBPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       192(DI), Y7, Y7
+	VADDPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       192(DI), Y7, Y7
+	VADDPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VSUBPS       224(DI), Y7, Y7
+	VSUBPS       224(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       256(DI), Y7, Y7
+	VADDPS       256(SI), Y7, Y7
 	VMULPS       Y0, Y0, Y8
-	VMULPS       64(DI), Y0, Y9
-	VMOVUPS      32(DI), Y0
+	VMULPS       64(SI), Y0, Y9
+	VMOVUPS      32(SI), Y0
 	VSUBPS       Y9, Y0, Y0
 	VMULPS       Y8, Y0, Y0
-	VSUBPS       (DI), Y0, Y0
+	VSUBPS       (SI), Y0, Y0
 	VMULPS       Y8, Y0, Y0
-	VADDPS       96(DI), Y0, Y0
+	VADDPS       96(SI), Y0, Y0
 	VXORPS       Y8, Y8, Y8
 	MOVQ         R10, R14
 	MOVQ         $0x00000006, R15
@@ -1951,7 +1951,7 @@ plane:
 	VMULPS  192(R14), Y9, Y9
 	VADDPS  Y9, Y8, Y8
 	ADDQ    $+32, R14
-	LEAQ    (R12)(BX*4), R12
+	LEAQ    (R12)(DI*4), R12
 	DECQ    R15
 	JNZ     plane
 	MOVQ    n+8(FP), R12
@@ -1968,6 +1968,469 @@ tail:
 	VMOVUPS    32(R14)(R12*4), Y0
 	VMASKMOVPS Y8, Y0, (AX)(R11*4)
 	ADDQ       R13, R11
+	JMP        next
+
+end:
+	VZEROUPPER
+	RET
+
+// func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·flatRow3(SB), $352-56
+	MOVQ dst+0(FP), AX
+	MOVQ c+16(FP), CX
+	MOVQ mx+24(FP), DX
+	MOVQ axes+32(FP), BX
+	MOVQ table+40(FP), SI
+	LEAQ (DX)(DX*2), DI
+	SHLQ $0x02, DI
+	LEAQ 31(SP), R8
+	ANDQ $-32, R8
+	XORQ R9, R9
+
+next:
+	CMPQ         R9, n+8(FP)
+	JGE          end
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	VXORPS       X1, X1, X1
+	VCVTSI2SDQ   R9, X1, X1
+	VBROADCASTSD X1, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
+	MOVQ         CX, R10
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 32(BX), Y7
+	VMULPD       Y3, Y1, Y9
+	VADDPD       Y8, Y9, Y9
+	VMAXPD       Y6, Y9, Y9
+	VMINPD       Y7, Y9, Y9
+	VCVTTPD2DQY  Y9, X4
+	VCVTDQ2PD    X4, Y10
+	VSUBPD       Y10, Y9, Y9
+	VCVTPD2PSY   Y9, X5
+	VMULPD       Y3, Y2, Y3
+	VADDPD       Y8, Y3, Y3
+	VMAXPD       Y6, Y3, Y3
+	VMINPD       Y7, Y3, Y3
+	VCVTTPD2DQY  Y3, X6
+	VCVTDQ2PD    X6, Y7
+	VSUBPD       Y7, Y3, Y3
+	VCVTPD2PSY   Y3, X3
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X3, Y5, Y7
+	VPSUBD       320(SI), Y6, Y6
+	VPBROADCASTD X6, Y3
+	VPCMPEQD     Y3, Y6, Y3
+	VMOVDQA      Y3, Y3
+	VMOVD        X6, R11
+	LEAQ         (R10)(R11*4), R10
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 24(BX), Y10
+	VBROADCASTSD 40(BX), Y8
+	VMULPD       Y10, Y1, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X4
+	VCVTDQ2PD    X4, Y11
+	VSUBPD       Y11, Y1, Y1
+	VCVTPD2PSY   Y1, X5
+	VMULPD       Y10, Y2, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X6
+	VCVTDQ2PD    X6, Y2
+	VSUBPD       Y2, Y1, Y1
+	VCVTPD2PSY   Y1, X1
+	VINSERTF128  $0x01, X6, Y4, Y2
+	VINSERTF128  $0x01, X1, Y5, Y1
+	VMOVUPS      Y1, 256(R8)
+	VPBROADCASTD X2, Y1
+	VPCMPEQD     Y1, Y2, Y1
+	VPAND        Y1, Y3, Y3
+	VMOVD        X2, R11
+	IMULQ        DX, R11
+	LEAQ         (R10)(R11*4), R10
+	VMOVMSKPS    Y3, R11
+	NOTL         R11
+	BSFL         R11, R11
+	VMOVUPS      256(R8), Y1
+	VSUBPS       Y1, Y0, Y2
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       192(SI), Y3, Y3
+	VMOVUPS      Y3, 96(R8)
+	VMULPS       Y1, Y1, Y3
+	VMULPS       (SI), Y1, Y1
+	VSUBPS       Y0, Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VADDPS       288(SI), Y1, Y1
+	VMOVUPS      Y1, 32(R8)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       Y2, Y1, Y1
+	VMULPS       192(SI), Y1, Y1
+	VMOVUPS      Y1, (R8)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       (SI), Y2, Y2
+	VSUBPS       Y0, Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VADDPS       288(SI), Y2, Y2
+	VMOVUPS      Y2, 64(R8)
+	VSUBPS       Y7, Y0, Y1
+	VMULPS       Y7, Y7, Y2
+	VMULPS       Y7, Y2, Y2
+	VMULPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y7, Y3
+	VMULPS       (SI), Y7, Y6
+	VSUBPS       Y0, Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VADDPS       288(SI), Y6, Y6
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y1, Y7
+	VMULPS       (SI), Y1, Y1
+	VSUBPS       Y0, Y1, Y1
+	VMULPS       Y7, Y1, Y1
+	VADDPS       288(SI), Y1, Y1
+	VMULPS       (R10), Y3, Y0
+	VMULPS       4(R10), Y6, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       8(R10), Y1, Y7
+	VMULPS       12(R10), Y2, Y8
+	VADDPS       Y8, Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R8), Y0, Y0
+	VMULPS       (R10)(DX*4), Y3, Y7
+	VMULPS       4(R10)(DX*4), Y6, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       8(R10)(DX*4), Y1, Y8
+	VMULPS       12(R10)(DX*4), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       32(R8), Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R10)(DX*8), Y3, Y7
+	VMULPS       4(R10)(DX*8), Y6, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       8(R10)(DX*8), Y1, Y8
+	VMULPS       12(R10)(DX*8), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       64(R8), Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R10)(DI*1), Y3, Y3
+	VMULPS       4(R10)(DI*1), Y6, Y6
+	VADDPS       Y6, Y3, Y3
+	VMULPS       8(R10)(DI*1), Y1, Y1
+	VMULPS       12(R10)(DI*1), Y2, Y2
+	VADDPS       Y2, Y1, Y1
+	VADDPS       Y1, Y3, Y3
+	VMULPS       96(R8), Y3, Y3
+	VADDPS       Y3, Y0, Y0
+	MOVQ         n+8(FP), R10
+	SUBQ         R9, R10
+	CMPQ         R10, $+8
+	JL           tail
+	VMOVUPS      Y0, (AX)(R9*4)
+	ADDQ         R11, R9
+	JMP          next
+
+tail:
+	MOVQ       masks+48(FP), R12
+	NEGQ       R10
+	VMOVUPS    32(R12)(R10*4), Y1
+	VMASKMOVPS Y0, Y1, (AX)(R9*4)
+	ADDQ       R11, R9
+	JMP        next
+
+end:
+	VZEROUPPER
+	RET
+
+// func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·flatRow5(SB), $480-56
+	MOVQ dst+0(FP), AX
+	MOVQ c+16(FP), CX
+	MOVQ mx+24(FP), DX
+	MOVQ axes+32(FP), BX
+	MOVQ table+40(FP), SI
+	LEAQ (DX)(DX*2), DI
+	SHLQ $0x02, DI
+	LEAQ (DX)(DX*4), R8
+	SHLQ $0x02, R8
+	LEAQ 31(SP), R9
+	ANDQ $-32, R9
+	XORQ R10, R10
+
+next:
+	CMPQ         R10, n+8(FP)
+	JGE          end
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	VXORPS       X1, X1, X1
+	VCVTSI2SDQ   R10, X1, X1
+	VBROADCASTSD X1, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
+	MOVQ         CX, R11
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 32(BX), Y7
+	VMULPD       Y3, Y1, Y9
+	VADDPD       Y8, Y9, Y9
+	VMAXPD       Y6, Y9, Y9
+	VMINPD       Y7, Y9, Y9
+	VCVTTPD2DQY  Y9, X4
+	VCVTDQ2PD    X4, Y10
+	VSUBPD       Y10, Y9, Y9
+	VCVTPD2PSY   Y9, X5
+	VMULPD       Y3, Y2, Y3
+	VADDPD       Y8, Y3, Y3
+	VMAXPD       Y6, Y3, Y3
+	VMINPD       Y7, Y3, Y3
+	VCVTTPD2DQY  Y3, X6
+	VCVTDQ2PD    X6, Y7
+	VSUBPD       Y7, Y3, Y3
+	VCVTPD2PSY   Y3, X3
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X3, Y5, Y7
+	VPSUBD       320(SI), Y6, Y6
+	VPBROADCASTD X6, Y3
+	VPCMPEQD     Y3, Y6, Y3
+	VMOVDQA      Y3, Y3
+	VMOVD        X6, R12
+	LEAQ         (R11)(R12*4), R11
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 24(BX), Y10
+	VBROADCASTSD 40(BX), Y8
+	VMULPD       Y10, Y1, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X4
+	VCVTDQ2PD    X4, Y11
+	VSUBPD       Y11, Y1, Y1
+	VCVTPD2PSY   Y1, X5
+	VMULPD       Y10, Y2, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X6
+	VCVTDQ2PD    X6, Y2
+	VSUBPD       Y2, Y1, Y1
+	VCVTPD2PSY   Y1, X1
+	VINSERTF128  $0x01, X6, Y4, Y2
+	VINSERTF128  $0x01, X1, Y5, Y1
+	VMOVUPS      Y1, 384(R9)
+	VPBROADCASTD X2, Y1
+	VPCMPEQD     Y1, Y2, Y1
+	VPAND        Y1, Y3, Y3
+	VMOVD        X2, R12
+	IMULQ        DX, R12
+	LEAQ         (R11)(R12*4), R11
+	VMOVMSKPS    Y3, R12
+	NOTL         R12
+	BSFL         R12, R12
+	VMOVUPS      384(R9), Y1
+	VSUBPS       Y1, Y0, Y2
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y3, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       128(SI), Y3, Y3
+	VMOVUPS      Y3, 160(R9)
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       256(SI), Y3, Y3
+	VMOVUPS      Y3, 32(R9)
+	VMULPS       Y1, Y1, Y3
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
+	VSUBPS       Y6, Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VSUBPS       (SI), Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VADDPS       96(SI), Y1, Y1
+	VMOVUPS      Y1, 64(R9)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       Y1, Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VMULPS       128(SI), Y1, Y1
+	VMOVUPS      Y1, (R9)
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       256(SI), Y1, Y1
+	VMOVUPS      Y1, 128(R9)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
+	VSUBPS       Y3, Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VSUBPS       (SI), Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VADDPS       96(SI), Y2, Y2
+	VMOVUPS      Y2, 96(R9)
+	VSUBPS       Y7, Y0, Y0
+	VMULPS       Y7, Y7, Y1
+	VMULPS       Y1, Y1, Y1
+	VMULPS       Y7, Y1, Y1
+	VMULPS       128(SI), Y1, Y1
+	VMULPS       160(SI), Y7, Y2
+	VSUBPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VSUBPS       224(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       256(SI), Y2, Y2
+	VMULPS       Y7, Y7, Y3
+	VMULPS       64(SI), Y7, Y7
+	VMOVUPS      32(SI), Y6
+	VSUBPS       Y7, Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VSUBPS       (SI), Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VADDPS       96(SI), Y6, Y6
+	VMULPS       Y0, Y0, Y3
+	VMULPS       Y3, Y3, Y3
+	VMULPS       Y0, Y3, Y3
+	VMULPS       128(SI), Y3, Y3
+	VMULPS       160(SI), Y0, Y7
+	VSUBPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VSUBPS       224(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       256(SI), Y7, Y7
+	VMULPS       Y0, Y0, Y8
+	VMULPS       64(SI), Y0, Y9
+	VMOVUPS      32(SI), Y0
+	VSUBPS       Y9, Y0, Y0
+	VMULPS       Y8, Y0, Y0
+	VSUBPS       (SI), Y0, Y0
+	VMULPS       Y8, Y0, Y0
+	VADDPS       96(SI), Y0, Y0
+	VMULPS       (R11), Y3, Y8
+	VMULPS       4(R11), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       8(R11), Y6, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       12(R11), Y0, Y9
+	VMULPS       16(R11), Y7, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       20(R11), Y1, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R9), Y8, Y8
+	VMULPS       (R11)(DX*4), Y3, Y9
+	VMULPS       4(R11)(DX*4), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DX*4), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DX*4), Y0, Y10
+	VMULPS       16(R11)(DX*4), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DX*4), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       32(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(DX*8), Y3, Y9
+	VMULPS       4(R11)(DX*8), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DX*8), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DX*8), Y0, Y10
+	VMULPS       16(R11)(DX*8), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DX*8), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       64(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(DI*1), Y3, Y9
+	VMULPS       4(R11)(DI*1), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DI*1), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DI*1), Y0, Y10
+	VMULPS       16(R11)(DI*1), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DI*1), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       96(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	LEAQ         (R11)(DX*8), R13
+	VMULPS       (R13)(DX*8), Y3, Y9
+	VMULPS       4(R13)(DX*8), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R13)(DX*8), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R13)(DX*8), Y0, Y10
+	VMULPS       16(R13)(DX*8), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R13)(DX*8), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       128(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(R8*1), Y3, Y3
+	VMULPS       4(R11)(R8*1), Y2, Y2
+	VADDPS       Y2, Y3, Y3
+	VMULPS       8(R11)(R8*1), Y6, Y2
+	VADDPS       Y2, Y3, Y3
+	VMULPS       12(R11)(R8*1), Y0, Y0
+	VMULPS       16(R11)(R8*1), Y7, Y2
+	VADDPS       Y2, Y0, Y0
+	VMULPS       20(R11)(R8*1), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	VADDPS       Y0, Y3, Y3
+	VMULPS       160(R9), Y3, Y3
+	VADDPS       Y3, Y8, Y8
+	MOVQ         n+8(FP), R11
+	SUBQ         R10, R11
+	CMPQ         R11, $+8
+	JL           tail
+	VMOVUPS      Y8, (AX)(R10*4)
+	ADDQ         R12, R10
+	JMP          next
+
+tail:
+	MOVQ       masks+48(FP), R13
+	NEGQ       R11
+	VMOVUPS    32(R13)(R11*4), Y0
+	VMASKMOVPS Y8, Y0, (AX)(R10*4)
+	ADDQ       R12, R10
 	JMP        next
 
 end:

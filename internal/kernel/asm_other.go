@@ -40,6 +40,14 @@ func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64
 	panic("kernel: no assembly for this processor")
 }
 
+func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
 func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
 	panic("kernel: no assembly for this processor")
 }

@@ -107,12 +107,29 @@ func (p *Prefilter) Size() [3]int { return p.m }
 // Run writes the coefficients of vol to the first elements of c, padding included.
 // c may be longer (see [Slack]); it must not overlap vol.
 func (p *Prefilter) Run(c, vol []float32) {
+	area, pad := p.m[0]*p.m[1], p.pad
+	check(len(c) >= area*p.m[2], "coefficients of another size")
+	p.planes(c[area*pad:], vol)
+	c = c[:area*p.m[2]]
+	p.axes[2].strips(c[area*pad:], area, area, p.work)
+	pads(c, area, p.n[2], pad)
+}
+
+// RunFlat does the same for a plane, whose third axis has one sample and no padding:
+// c begins with m[0]*m[1] coefficients, m as by [Prefilter.Size].
+func (p *Prefilter) RunFlat(c, plane []float32) {
+	check(p.n[2] == 1 && len(c) >= p.m[0]*p.m[1], "not a plane, or coefficients of another size")
+	p.planes(c, plane)
+}
+
+// planes filters along x and y, and pads there: plane k to c[m[0]*m[1]*k:].
+func (p *Prefilter) planes(c, vol []float32) {
 	nx, ny, nz := p.n[0], p.n[1], p.n[2]
-	mx, my, mz := p.m[0], p.m[1], p.m[2]
+	mx, my := p.m[0], p.m[1]
 	area, pad := mx*my, p.pad
-	check(len(vol) == nx*ny*nz && len(c) >= area*mz, "volume or coefficients of another size")
+	check(len(vol) == nx*ny*nz, "volume of another size")
 	// Along x, lanes are rows.
-	line := func(r int) int { return pad + mx*(pad+r%ny+my*(pad+r/ny)) } // in c
+	line := func(r int) int { return pad + mx*(pad+r%ny+my*(r/ny)) } // in c
 	for r0 := 0; r0 < ny*nz; r0 += stripLanes {
 		lanes := min(stripLanes, (ny*nz-r0+7)/8*8)
 		t := p.t[:mx*lanes]
@@ -135,13 +152,10 @@ func (p *Prefilter) Run(c, vol []float32) {
 		}
 	}
 	for k := range nz {
-		slab := c[area*(pad+k):][:area]
+		slab := c[area*k:][:area]
 		p.axes[1].strips(slab[mx*pad:], mx, mx, p.work)
 		pads(slab, mx, ny, pad)
 	}
-	c = c[:area*mz]
-	p.axes[2].strips(c[area*pad:], area, area, p.work)
-	pads(c, area, nz, pad)
 }
 
 // strips filters, in place, lines that lie across rows: row k at c[stride*k:], of
