@@ -58,6 +58,12 @@ func BenchmarkResample(b *testing.B) {
 				r.Eval(dst, realign.PoseMap(g, p))
 			}
 		})
+		b.Run(map[int]string{3: "cubic-near", 5: "quintic-near"}[degree], func(b *testing.B) {
+			b.SetBytes(int64(4 * nv))
+			for i := 0; b.Loop(); i++ {
+				r.Near(dst, data[i%2*nv:][:nv], realign.PoseMap(g, p))
+			}
+		})
 		b.Run(map[int]string{3: "cubic-prefilter", 5: "quintic-prefilter"}[degree], func(b *testing.B) {
 			b.SetBytes(int64(4 * nv))
 			for i := 0; b.Loop(); i++ {

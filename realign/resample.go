@@ -1,5 +1,7 @@
 package realign
 
+import "evenkeel/internal/kernel"
+
 // Resampler interpolates volumes of one size by B-splines with exact prefilter
 // and the boundary rule of [kernel.Prefilter]. It owns its scratch and belongs to one
 // goroutine.
@@ -7,6 +9,11 @@ type Resampler struct {
 	s       *spline
 	x, y, z []float64
 	b       batch
+
+	// Of Near, made when first wanted.
+	passes  *kernel.Passes
+	faces   [3]faces
+	scratch []float32
 }
 
 // NewResampler prepares for volumes of n voxels. Degree 3 is cubic, 5 quintic;

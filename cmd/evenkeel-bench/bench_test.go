@@ -6,7 +6,9 @@ import (
 	"encoding/json"
 	"io"
 	"os"
+	"os/exec"
 	"path/filepath"
+	"strconv"
 	"strings"
 	"testing"
 
@@ -128,7 +130,10 @@ func TestParse(t *testing.T) {
 	if err != nil || set.times != 3 || set.scriptTimes != 3 || len(set.sizes) != 2 || set.sizes[1] != (size{9, 9, 9, 9}) || len(set.script) != 4 {
 		t.Errorf("%+v, %v", set, err)
 	}
-	for _, bad := range [][]string{{"-sizes", "8x8x8"}, {"-sizes", "8x8x8xo"}, {"-sizes", "8x8x8x1"}, {"-times", "0"}, {"more"}, {"-nonsense"}} {
+	if set, err := parse([]string{"-growth", "100,200,400", "-python", "python3"}, io.Discard); err != nil || len(set.growth) != 3 || set.growth[2] != 400 || set.python != "python3" {
+		t.Errorf("%+v, %v", set, err)
+	}
+	for _, bad := range [][]string{{"-sizes", "8x8x8"}, {"-sizes", "8x8x8xo"}, {"-sizes", "8x8x8x1"}, {"-times", "0"}, {"-growth", "100"}, {"-growth", "200,100"}, {"-growth", "a,b"}, {"-growth", "100,200", "-sizes", ""}, {"more"}, {"-nonsense"}} {
 		if _, err := parse(bad, io.Discard); err == nil {
 			t.Errorf("%v: accepted", bad)
 		}
@@ -147,5 +152,99 @@ func TestOnce(t *testing.T) {
 	}
 	if _, err := b.once(context.Background(), nil, "/bin/sh", "-c", "echo aground >&2; exit 3"); err == nil || !strings.Contains(err.Error(), "aground") {
 		t.Errorf("%v", err)
+	}
+}
+
+// Each way of resampling says what it took and leaves its result; the two agree but for
+// what is told apart.
+func TestResampleOften(t *testing.T) {
+	dir := t.TempDir()
+	s := size{32, 32, 30, 2}
+	var out [2][]float32
+	for i, way := range []string{passesWay, atOnceWay} {
+		var said strings.Builder
+		if err := run(context.Background(), []string{"resample", dir, way, s.String(), "2"}, &said, io.Discard); err != nil {
+			t.Fatal(err)
+		}
+		if v, err := strconv.ParseFloat(strings.TrimSpace(said.String()), 64); err != nil || !(v > 0 && v < 10) {
+			t.Errorf("%s: %q", way, said.String())
+		}
+		var err error
+		if out[i], err = readRaw(filepath.Join(dir, way+".raw"), s[0]*s[1]*s[2]); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if d := apart(out[0], out[1], s); !(d > 1e-4 && d < 0.03) {
+		t.Errorf("apart by %g", d)
+	}
+	vol, _ := resamplingCase(s)
+	if d := apart(vol, out[1], s); !(d > 0.1) {
+		t.Errorf("not moved: apart by %g", d)
+	}
+	for _, bad := range [][]string{{dir, "sideways", s.String(), "2"}, {dir, passesWay, s.String(), "0"}, {dir, passesWay, "8x8", "2"}, {dir, passesWay}} {
+		if err := run(context.Background(), append([]string{"resample"}, bad...), io.Discard, io.Discard); err == nil {
+			t.Errorf("%v: accepted", bad)
+		}
+	}
+}
+
+// The whole section, beside scipy: that it does the same is checked inside.
+func TestResampling(t *testing.T) {
+	python, err := exec.LookPath("python3")
+	if err != nil || exec.Command(python, "-c", "import scipy.ndimage").Run() != nil {
+		t.Skip("no python3 with scipy")
+	}
+	b := &bench{set: &settings{times: 1, python: python}, dir: t.TempDir(), self: built(t), stderr: io.Discard}
+	s := size{40, 36, 33, 2}
+	rows, err := b.resampling(context.Background(), s)
+	if err != nil {
+		t.Fatal(err)
+	}
+	var out strings.Builder
+	writeResampling(&out, s, rows)
+	if len(rows) != len(ways) || !strings.Contains(out.String(), "| passes |") || !strings.HasSuffix(out.String(), "| 1.0 |\n") {
+		t.Error(out.String())
+	}
+	b.set.python = "/bin/false"
+	if _, err := b.resampling(context.Background(), s); err == nil {
+		t.Error("an interpreter that fails passes")
+	}
+}
+
+// built is this command.
+func built(t *testing.T) string {
+	t.Helper()
+	path := filepath.Join(t.TempDir(), "bench")
+	if out, err := exec.Command("go", "build", "-o", path, ".").CombinedOutput(); err != nil {
+		t.Skipf("no go to build with: %v\n%s", err, out)
+	}
+	return path
+}
+
+func TestGrowth(t *testing.T) {
+	v := func(name string, cpu ...float64) variant {
+		r := &row{name: name}
+		for _, c := range cpu {
+			r.costs = append(r.costs, cost{cpu: c})
+		}
+		return variant{row: r}
+	}
+	var out strings.Builder
+	writeGrowth(&out, size{8, 9, 7, 400}, []int{100, 200, 400}, []variant{v(floorRow, 1), v("default", 4, 5, 9), v(floorRow, 2), v("default", 11), v(floorRow, 4), v("default", 22)})
+	want := "\n8x9x7, CPU ms / volume by the number of volumes, and by how much it grows\n\n| what | 100 | 200 | 400 | growth from 100 |\n| --- | --- | --- | --- | --- |\n" +
+		"| floor | 10.00 | 10.00 | 10.00 | +0.0 % |\n| default | 50.00 | 55.00 | 55.00 | +10.0 % |\n"
+	if out.String() != want {
+		t.Errorf("%s\nwant\n%s", out.String(), want)
+	}
+	b := &bench{set: &settings{times: 1, sizes: []size{{9, 8, 7, 1}}, growth: []int{3, 5}, only: []string{ownRow}}, dir: t.TempDir(), self: built(t), stderr: io.Discard}
+	out.Reset()
+	if err := b.growth(context.Background(), &out); err != nil {
+		t.Fatal(err)
+	}
+	if !strings.Contains(out.String(), "9x8x7") || !strings.Contains(out.String(), "| floor-own |") || strings.Contains(out.String(), "default") {
+		t.Error(out.String())
+	}
+	if left, _ := os.ReadDir(b.dir); len(left) != 0 {
+		t.Errorf("left behind: %v", left)
 	}
 }

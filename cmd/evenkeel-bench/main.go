@@ -14,6 +14,7 @@ import (
 	"os/signal"
 	"path/filepath"
 	"runtime"
+	"slices"
 	"strconv"
 	"strings"
 	"syscall"
@@ -42,6 +43,8 @@ type settings struct {
 	script      []string
 	folder      string
 	only        []string
+	python      string
+	growth      []int
 }
 
 // A size is nx, ny, nz, nt.
@@ -65,7 +68,7 @@ func parseSize(text string) (s size, err error) {
 	return s, nil
 }
 
-// run does what args say. The three words below are how the program calls itself, so
+// run does what args say. The words below are how the program calls itself, so
 // that each piece of work has a process of its own to be measured.
 func run(ctx context.Context, args []string, stdout, stderr io.Writer) error {
 	if len(args) > 0 {
@@ -93,6 +96,19 @@ func run(ctx context.Context, args []string, stdout, stderr io.Writer) error {
 				return err
 			}
 			return synthesiseMany(ctx, args[1], n)
+		case "resample":
+			if len(args) != 5 {
+				return errors.New("resample: expected DIR WAY SIZE TIMES")
+			}
+			s, err := parseSize(args[3])
+			if err != nil {
+				return err
+			}
+			n, err := strconv.Atoi(args[4])
+			if err != nil || n < 1 {
+				return fmt.Errorf("resample: found %q, expected a number from 1", args[4])
+			}
+			return resampleOften(args[1], args[2], s, n, stdout)
 		}
 	}
 	set, err := parse(args, stderr)
@@ -110,7 +126,7 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 		fmt.Fprint(stderr, "usage: evenkeel-bench [options]\n\nMeasures the program `evenkeel` on invented runs beside the cost of decoding, widening\nand encoding the same files, alternately, and prints medians and ratios.\n\n")
 		fs.PrintDefaults()
 	}
-	var sizes, script, only string
+	var sizes, script, only, growth string
 	fs.IntVar(&set.times, "times", 5, "how often each thing is measured")
 	fs.IntVar(&set.scriptTimes, "script-times", 0, "how often the script is measured (default: as often as the rest)")
 	fs.StringVar(&sizes, "sizes", "64x64x36x200,104x104x72x400", "runs to invent, `NXxNYxNZxNT` each")
@@ -118,7 +134,9 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 	fs.StringVar(&set.program, "program", "", "the evenkeel to measure (default: built from the module in the current folder)")
 	fs.StringVar(&script, "script", "", "a command to measure beside it; the words IN and OUT become the run and a new .nii.gz")
 	fs.StringVar(&set.folder, "folder", "", "where to put runs and outputs (default: a temporary folder, removed in the end)")
-	fs.StringVar(&only, "only", "", "measure just these rows, by `NAMES` as in the table, with commas")
+	fs.StringVar(&only, "only", "", "measure just these rows, by `NAMES` as in the table, with commas; resampling is all that -python adds")
+	fs.StringVar(&set.python, "python", "", "a Python with numpy and scipy: also measure resampling alone, beside scipy's")
+	fs.StringVar(&growth, "growth", "", "instead of all else, measure how the cost of a volume grows with their number, on the grid of the first\nof the sizes: `COUNTS` of volumes with commas, as 100,200,400,800")
 	if err := fs.Parse(args); err != nil {
 		return nil, err
 	}
@@ -140,6 +158,19 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 			return nil, err
 		}
 		set.sizes = append(set.sizes, s)
+	}
+	for _, text := range strings.Split(growth, ",") {
+		if text == "" {
+			continue
+		}
+		n, err := strconv.Atoi(text)
+		if err != nil || n < 2 || n > 4096 || len(set.growth) > 0 && n <= set.growth[len(set.growth)-1] {
+			return nil, fmt.Errorf("growth: found %q, expected numbers from 2 to 4096, each larger than the one before", text)
+		}
+		set.growth = append(set.growth, n)
+	}
+	if len(set.growth) == 1 || len(set.growth) > 1 && len(set.sizes) == 0 {
+		return nil, errors.New("growth: expected two counts or more, and a size whose grid they have")
 	}
 	set.script = strings.Fields(script)
 	if only != "" {
@@ -171,12 +202,28 @@ func measure(ctx context.Context, set *settings, stdout, stderr io.Writer) (err 
 	}
 	fmt.Fprintf(stdout, "%d cores, %s, %s/%s; medians of %d, alternated\n", runtime.NumCPU(), runtime.Version(), runtime.GOOS, runtime.GOARCH, set.times)
 	b := &bench{set: set, dir: dir, self: self, stderr: stderr}
+	if len(set.growth) > 0 {
+		return b.growth(ctx, stdout)
+	}
+	wants := func(name string) bool { return len(set.only) == 0 || slices.Contains(set.only, name) }
 	for _, s := range set.sizes {
+		if len(set.only) == 1 && wants(resamplingRow) {
+			break
+		}
 		rows, err := b.size(ctx, s)
 		if err != nil {
 			return err
 		}
 		writeTable(stdout, s, rows)
+	}
+	if set.python != "" && wants(resamplingRow) {
+		for _, s := range set.sizes {
+			rows, err := b.resampling(ctx, s)
+			if err != nil {
+				return err
+			}
+			writeResampling(stdout, s, rows)
+		}
 	}
 	if set.survey > 0 {
 		row, err := b.survey(ctx)

@@ -48,6 +48,8 @@ const (
 	floorRow  = "floor"
 	ownRow    = "floor-own"
 	scriptRow = "script"
+
+	resamplingRow = "resampling" // a table of its own
 )
 
 // programs are the ways in which the program is called.
@@ -86,27 +88,32 @@ func (b *bench) once(ctx context.Context, env []string, name string, args ...str
 	return cost{wall, (st.UserTime() + st.SystemTime()).Seconds(), peakBytes(st)}, nil
 }
 
-// size measures everything on one invented run.
-func (b *bench) size(ctx context.Context, s size) ([]*row, error) {
-	root := filepath.Join(b.dir, "raw-"+s.String())
+// oneThread keeps the threads of a numerical library from waiting in loops, which
+// would be counted as work.
+var oneThread = []string{"OPENBLAS_NUM_THREADS=1", "OMP_NUM_THREADS=1", "MKL_NUM_THREADS=1"}
+
+// A variant is one way of processing one run.
+type variant struct {
+	*row
+	size size
+	do   func() (cost, error)
+	n    int // how often
+}
+
+// variants invents a run, to be removed by the caller, and lists what is done with it.
+func (b *bench) variants(ctx context.Context, s size) (all []variant, root string, err error) {
+	root = filepath.Join(b.dir, "raw-"+s.String())
 	fmt.Fprintf(b.stderr, "inventing %v\n", s)
 	if _, err := b.once(ctx, nil, b.self, "synthesise", root, s.String()); err != nil {
-		return nil, err
+		return nil, root, err
 	}
-	defer os.RemoveAll(root)
-	in, out := filepath.Join(root, filepath.FromSlash(runFile)), filepath.Join(b.dir, "out")
-	type variant struct {
-		*row
-		do func() (cost, error)
-		n  int
-	}
-	var all []variant
+	in := filepath.Join(root, filepath.FromSlash(runFile))
 	add := func(name string, n int, do func() (cost, error)) {
 		if len(b.set.only) == 0 || slices.Contains(b.set.only, name) || name == floorRow {
-			all = append(all, variant{&row{name: name}, do, n})
+			all = append(all, variant{&row{name: name}, s, do, n})
 		}
 	}
-	image := out + ".nii.gz"
+	out, image := b.out(), b.out()+".nii.gz"
 	for _, name := range []string{floorRow, ownRow} {
 		add(name, b.set.times, func() (cost, error) { return b.once(ctx, nil, b.self, name, in, image) })
 	}
@@ -130,11 +137,17 @@ func (b *bench) size(ctx context.Context, s size) ([]*row, error) {
 					args[i] = image
 				}
 			}
-			// One thread: threads of a numerical library wait in loops and
-			// would be counted as work.
-			return b.once(ctx, []string{"OPENBLAS_NUM_THREADS=1", "OMP_NUM_THREADS=1", "MKL_NUM_THREADS=1"}, args[0], args[1:]...)
+			return b.once(ctx, oneThread, args[0], args[1:]...)
 		})
 	}
+	return all, root, nil
+}
+
+// out is where a run's output goes, or with .nii.gz after it a single image.
+func (b *bench) out() string { return filepath.Join(b.dir, "out") }
+
+// alternate does everything in turn, as often as it is to be done.
+func (b *bench) alternate(all []variant) error {
 	for i := range b.set.times {
 		for _, v := range all {
 			if i >= v.n {
@@ -142,23 +155,80 @@ func (b *bench) size(ctx context.Context, s size) ([]*row, error) {
 			}
 			c, err := v.do()
 			if err != nil {
-				return nil, err
+				return err
 			}
 			v.costs = append(v.costs, c)
-			fmt.Fprintf(b.stderr, "%v %d/%d %-20s %7.3f s, CPU %7.3f s, %4d MiB\n", s, i+1, v.n, v.name, c.wall, c.cpu, c.peak>>20)
-			if err := os.RemoveAll(out); err != nil {
-				return nil, err
+			fmt.Fprintf(b.stderr, "%v %d/%d %-20s %7.3f s, CPU %7.3f s, %4d MiB\n", v.size, i+1, v.n, v.name, c.wall, c.cpu, c.peak>>20)
+			if err := os.RemoveAll(b.out()); err != nil {
+				return err
 			}
-			if err := os.RemoveAll(image); err != nil {
-				return nil, err
+			if err := os.RemoveAll(b.out() + ".nii.gz"); err != nil {
+				return err
 			}
 		}
+	}
+	return nil
+}
+
+// size measures everything on one invented run.
+func (b *bench) size(ctx context.Context, s size) ([]*row, error) {
+	all, root, err := b.variants(ctx, s)
+	defer os.RemoveAll(root)
+	if err != nil {
+		return nil, err
+	}
+	if err := b.alternate(all); err != nil {
+		return nil, err
 	}
 	var rows []*row
 	for _, v := range all {
 		rows = append(rows, v.row)
 	}
 	return rows, nil
+}
+
+// growth measures everything on runs of one grid and more and more volumes, all in
+// turn, so that a change of load falls on every length.
+func (b *bench) growth(ctx context.Context, stdout io.Writer) error {
+	var all []variant
+	grid := b.set.sizes[0]
+	for _, n := range b.set.growth {
+		grid[3] = n
+		some, root, err := b.variants(ctx, grid)
+		defer os.RemoveAll(root)
+		if err != nil {
+			return err
+		}
+		all = append(all, some...)
+	}
+	if err := b.alternate(all); err != nil {
+		return err
+	}
+	writeGrowth(stdout, grid, b.set.growth, all)
+	return nil
+}
+
+// writeGrowth prints the processor time of a volume by the number of volumes. all has
+// the rows of the first number, then those of the second, and so on.
+func writeGrowth(w io.Writer, s size, counts []int, all []variant) {
+	fmt.Fprintf(w, "\n%dx%dx%d, CPU ms / volume by the number of volumes, and by how much it grows\n\n| what |", s[0], s[1], s[2])
+	for _, n := range counts {
+		fmt.Fprintf(w, " %d |", n)
+	}
+	fmt.Fprintf(w, " growth from %d |\n| --- |%s --- |\n", counts[0], strings.Repeat(" --- |", len(counts)))
+	rows := len(all) / len(counts)
+	for r := range rows {
+		fmt.Fprintf(w, "| %s |", all[r].name)
+		var first, last float64
+		for k, n := range counts {
+			last = 1e3 * all[k*rows+r].median().cpu / float64(n)
+			if k == 0 {
+				first = last
+			}
+			fmt.Fprintf(w, " %.2f |", last)
+		}
+		fmt.Fprintf(w, " %+.1f %% |\n", 100*(last/first-1))
+	}
 }
 
 // survey measures a survey of many small runs.

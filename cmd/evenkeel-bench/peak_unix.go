@@ -19,3 +19,12 @@ func peakBytes(st *os.ProcessState) int64 {
 	}
 	return int64(u.Maxrss) << 10
 }
+
+// processSeconds is the processor time that this process has used.
+func processSeconds() float64 {
+	var u syscall.Rusage
+	if err := syscall.Getrusage(syscall.RUSAGE_SELF, &u); err != nil {
+		return 0
+	}
+	return float64(u.Utime.Nano()+u.Stime.Nano()) / 1e9
+}

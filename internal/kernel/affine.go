@@ -74,6 +74,67 @@ func affineRow(dst, c []float32, n [3]int, pad int, start, step [3]float64, degr
 	}
 }
 
+// FlatRow interpolates in a field of two dimensions as [AffineRow5] does in three, and
+// [AffineRow3] with degree 3. c are coefficients as [Prefilter.RunFlat] leaves them: n samples
+// and pad more at every edge, pad at least degree/2+1, and [Slack] elements.
+func FlatRow(dst, c []float32, n [2]int, pad int, start, step [2]float64, degree int) {
+	mx := n[0] + 2*pad
+	check((degree == 3 || degree == 5) && n[0] > 0 && n[1] > 0 && pad > degree/2 && len(c) >= mx*(n[1]+2*pad)+Slack, "size of the field, or coefficients without padding or slack")
+	if len(dst) == 0 {
+		return
+	}
+	c = c[(pad-degree/2)*(1+mx):]
+	axes := [6]float64{start[0], start[1], step[0], step[1], float64(n[0] - 1), float64(n[1] - 1)}
+	switch {
+	case degree == 5 && useAssembly:
+		flatRow5(&dst[0], len(dst), &c[0], mx, &axes[0], &affineTable[0], &masks[0])
+	case degree == 5:
+		flatRow5Plain(dst, c, mx, &axes)
+	case useAssembly:
+		flatRow3(&dst[0], len(dst), &c[0], mx, &axes[0], &affineTable[0], &masks[0])
+	default:
+		flatRow3Plain(dst, c, mx, &axes)
+	}
+}
+
+func flatRow5Plain(dst, c []float32, mx int, axes *[6]float64) {
+	var wx, wy [6]float32
+	for i := range dst {
+		x, tx := cell(i, axes[0], axes[2], axes[4])
+		y, ty := cell(i, axes[1], axes[3], axes[5])
+		weights5(tx, &wx)
+		weights5(ty, &wy)
+		rows := c[x+mx*y:][:5*mx+6]
+		sum := negZero
+		for y, w := range wy {
+			r := (*[6]float32)(rows[mx*y:])
+			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1]) + float32(wx[2]*r[2])
+			q := float32(wx[3]*r[3]) + float32(wx[4]*r[4]) + float32(wx[5]*r[5])
+			sum += float32(w * (p + q))
+		}
+		dst[i] = sum
+	}
+}
+
+func flatRow3Plain(dst, c []float32, mx int, axes *[6]float64) {
+	var wx, wy [4]float32
+	for i := range dst {
+		x, tx := cell(i, axes[0], axes[2], axes[4])
+		y, ty := cell(i, axes[1], axes[3], axes[5])
+		weights3(tx, &wx)
+		weights3(ty, &wy)
+		rows := c[x+mx*y:][:3*mx+4]
+		sum := negZero
+		for y, w := range wy {
+			r := (*[4]float32)(rows[mx*y:])
+			p := float32(wx[0]*r[0]) + float32(wx[1]*r[1])
+			q := float32(wx[2]*r[2]) + float32(wx[3]*r[3])
+			sum += float32(w * (p + q))
+		}
+		dst[i] = sum
+	}
+}
+
 // cell splits a coordinate, clamped to [0, limit].
 func cell(i int, start, step, limit float64) (first int, t float32) {
 	x := float64(step*float64(i)) + start

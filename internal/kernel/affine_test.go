@@ -259,3 +259,60 @@ func BenchmarkAffineRow(b *testing.B) {
 		}
 	}
 }
+
+// A plane is a field of one sample along z: weights there sum to 1, to the rounding of six
+// terms, at values below 1.
+func TestFlatRow(t *testing.T) {
+	rapid.Check(t, func(t *rapid.T) {
+		degree := rapid.SampledFrom([]int{3, 5}).Draw(t, "degree")
+		n := [3]int{rapid.IntRange(1, 40).Draw(t, "nx"), rapid.IntRange(1, 40).Draw(t, "ny"), 1}
+		const pad = 3
+		p := NewPrefilter(n, degree, pad)
+		m := p.Size()
+		plane := noise(random(rapid.Uint64().Draw(t, "seed")), n[0]*n[1])
+		solid, flat := nan(m[0]*m[1]*m[2]+Slack), nan(m[0]*m[1]+Slack)
+		p.Run(solid, plane)
+		p.RunFlat(flat, plane)
+		for i, v := range flat[:m[0]*m[1]] {
+			if v != solid[m[0]*m[1]*pad+i] {
+				t.Fatalf("coefficient %d: %g, in a field %g", i, v, solid[m[0]*m[1]*pad+i])
+			}
+		}
+		r := random(rapid.Uint64().Draw(t, "line"))
+		var start, step [2]float64
+		for a := range start {
+			start[a], step[a] = r.Float64()*float64(n[a]+4)-2, (r.Float64()-0.5)*0.1
+			if r.IntN(10) == 0 {
+				start[a] = []float64{math.NaN(), math.Inf(1), 1e300, 0}[r.IntN(4)]
+			}
+		}
+		step[r.IntN(2)]++
+		length := r.IntN(50)
+		both(t, func() [][]float32 {
+			got, want := nan(length), nan(length)
+			FlatRow(got, flat, [2]int(n[:2]), pad, start, step, degree)
+			a := affineCase{degree: degree, n: n, pad: pad, c: solid, start: [3]float64{start[0], start[1], 0}, step: [3]float64{step[0], step[1], 0}}
+			a.into(want)
+			for i, w := range want {
+				if !(math.Abs(float64(got[i]-w)) < 4e-6) { // coefficients up to 12 times a value
+					panic(fmt.Sprintf("output %d: %g, in a field %g", i, got[i], w))
+				}
+			}
+			return [][]float32{got}
+		})
+	})
+}
+
+func TestFlatRowStaysInside(t *testing.T) {
+	for _, front := range []bool{false, true} {
+		for _, degree := range []int{3, 5} {
+			n := [2]int{9, 7}
+			c := fenced(t, append(noise(random(1), 15*13), nan(Slack)...), front)
+			for length := 1; length < 20; length++ {
+				dst := fenced(t, make([]float32, length), front)
+				FlatRow(dst, c, n, 3, [2]float64{-3, 5.5}, [2]float64{1, 0.1}, degree)
+				FlatRow(dst, c, n, 3, [2]float64{8, 6}, [2]float64{-1, -0.4}, degree)
+			}
+		}
+	}
+}

@@ -47,22 +47,32 @@ func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64
 //go:noescape
 func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32)
 
-// strip3x32 is the assembly of stripPlain, degree 3, 32 lanes.
+// flatRow3 is the assembly of flatRow3Plain.
+//
+//go:noescape
+func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+
+// flatRow5 is the assembly of flatRow5Plain.
+//
+//go:noescape
+func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+
+// strip3x32 is the assembly of eightPlain, degree 3, 32 lanes.
 //
 //go:noescape
 func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
 
-// strip3x8 is the assembly of stripPlain, degree 3, 8 lanes.
+// strip3x8 is the assembly of eightPlain, degree 3, 8 lanes.
 //
 //go:noescape
 func strip3x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
 
-// strip5x32 is the assembly of stripPlain, degree 5, 32 lanes.
+// strip5x32 is the assembly of eightPlain, degree 5, 32 lanes.
 //
 //go:noescape
 func strip5x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
 
-// strip5x8 is the assembly of stripPlain, degree 5, 8 lanes.
+// strip5x8 is the assembly of eightPlain, degree 5, 8 lanes.
 //
 //go:noescape
 func strip5x8(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)
@@ -106,3 +116,23 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32)
 //
 //go:noescape
 func abs(dst *float32, src *float32, n int, masks *int32)
+
+// locate is the assembly of locator.plain.
+//
+//go:noescape
+func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int
+
+// cells is the assembly of cellsPlain; n is a multiple of 8.
+//
+//go:noescape
+func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32)
+
+// pass3 is the assembly of passPlain, degree 3.
+//
+//go:noescape
+func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+
+// pass5 is the assembly of passPlain, degree 5.
+//
+//go:noescape
+func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)

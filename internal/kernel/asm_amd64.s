@@ -1361,9 +1361,9 @@ TEXT ·affineRow3(SB), $352-64
 	MOVQ dst+0(FP), AX
 	MOVQ c+16(FP), CX
 	MOVQ mx+24(FP), DX
-	MOVQ area+32(FP), BX
-	MOVQ axes+40(FP), SI
-	MOVQ table+48(FP), DI
+	MOVQ axes+40(FP), BX
+	MOVQ table+48(FP), SI
+	MOVQ area+32(FP), DI
 	LEAQ (DX)(DX*2), R8
 	SHLQ $0x02, R8
 	LEAQ 31(SP), R9
@@ -1379,13 +1379,13 @@ next:
 	VXORPS       X1, X1, X1
 	VCVTSI2SDQ   R10, X1, X1
 	VBROADCASTSD X1, Y2
-	VADDPD       352(DI), Y2, Y1
-	VADDPD       384(DI), Y2, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
 	MOVQ         CX, R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD (SI), Y8
-	VBROADCASTSD 24(SI), Y3
-	VBROADCASTSD 48(SI), Y7
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 24(BX), Y3
+	VBROADCASTSD 48(BX), Y7
 	VMULPD       Y3, Y1, Y9
 	VADDPD       Y8, Y9, Y9
 	VMAXPD       Y6, Y9, Y9
@@ -1404,16 +1404,16 @@ next:
 	VCVTPD2PSY   Y3, X3
 	VINSERTF128  $0x01, X6, Y4, Y6
 	VINSERTF128  $0x01, X3, Y5, Y7
-	VPSUBD       320(DI), Y6, Y6
+	VPSUBD       320(SI), Y6, Y6
 	VPBROADCASTD X6, Y3
 	VPCMPEQD     Y3, Y6, Y3
 	VMOVDQA      Y3, Y3
 	VMOVD        X6, R12
 	LEAQ         (R11)(R12*4), R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 8(SI), Y9
-	VBROADCASTSD 32(SI), Y10
-	VBROADCASTSD 56(SI), Y8
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 32(BX), Y10
+	VBROADCASTSD 56(BX), Y8
 	VMULPD       Y10, Y1, Y11
 	VADDPD       Y9, Y11, Y11
 	VMAXPD       Y6, Y11, Y11
@@ -1440,9 +1440,9 @@ next:
 	IMULQ        DX, R12
 	LEAQ         (R11)(R12*4), R11
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 16(SI), Y9
-	VBROADCASTSD 40(SI), Y10
-	VBROADCASTSD 64(SI), Y8
+	VBROADCASTSD 16(BX), Y9
+	VBROADCASTSD 40(BX), Y10
+	VBROADCASTSD 64(BX), Y8
 	VMULPD       Y10, Y1, Y1
 	VADDPD       Y9, Y1, Y1
 	VMAXPD       Y6, Y1, Y1
@@ -1466,7 +1466,7 @@ next:
 	VPCMPEQD     Y1, Y2, Y1
 	VPAND        Y1, Y3, Y3
 	VMOVD        X2, R12
-	IMULQ        BX, R12
+	IMULQ        DI, R12
 	LEAQ         (R11)(R12*4), R11
 	VMOVMSKPS    Y3, R12
 	NOTL         R12
@@ -1475,63 +1475,63 @@ next:
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMOVUPS      Y3, 224(R9)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VMOVUPS      Y1, 160(R9)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       192(DI), Y1, Y1
+	VMULPS       192(SI), Y1, Y1
 	VMOVUPS      Y1, 128(R9)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       (DI), Y2, Y2
+	VMULPS       (SI), Y2, Y2
 	VSUBPS       Y0, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       288(DI), Y2, Y2
+	VADDPS       288(SI), Y2, Y2
 	VMOVUPS      Y2, 192(R9)
 	VMOVUPS      256(R9), Y1
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMOVUPS      Y3, 96(R9)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VMOVUPS      Y1, 32(R9)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       192(DI), Y1, Y1
+	VMULPS       192(SI), Y1, Y1
 	VMOVUPS      Y1, (R9)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       (DI), Y2, Y2
+	VMULPS       (SI), Y2, Y2
 	VSUBPS       Y0, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       288(DI), Y2, Y2
+	VADDPS       288(SI), Y2, Y2
 	VMOVUPS      Y2, 64(R9)
 	VSUBPS       Y7, Y0, Y1
 	VMULPS       Y7, Y7, Y2
 	VMULPS       Y7, Y2, Y2
-	VMULPS       192(DI), Y2, Y2
+	VMULPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y7, Y3
-	VMULPS       (DI), Y7, Y6
+	VMULPS       (SI), Y7, Y6
 	VSUBPS       Y0, Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VADDPS       288(DI), Y6, Y6
+	VADDPS       288(SI), Y6, Y6
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       192(DI), Y3, Y3
+	VMULPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y1, Y7
-	VMULPS       (DI), Y1, Y1
+	VMULPS       (SI), Y1, Y1
 	VSUBPS       Y0, Y1, Y1
 	VMULPS       Y7, Y1, Y1
-	VADDPS       288(DI), Y1, Y1
+	VADDPS       288(SI), Y1, Y1
 	VXORPS       Y0, Y0, Y0
 	MOVQ         R9, R13
 	MOVQ         $0x00000004, R14
@@ -1575,7 +1575,7 @@ plane:
 	VMULPS  128(R13), Y7, Y7
 	VADDPS  Y7, Y0, Y0
 	ADDQ    $+32, R13
-	LEAQ    (R11)(BX*4), R11
+	LEAQ    (R11)(DI*4), R11
 	DECQ    R14
 	JNZ     plane
 	MOVQ    n+8(FP), R11
@@ -1604,9 +1604,9 @@ TEXT ·affineRow5(SB), $480-64
 	MOVQ dst+0(FP), AX
 	MOVQ c+16(FP), CX
 	MOVQ mx+24(FP), DX
-	MOVQ area+32(FP), BX
-	MOVQ axes+40(FP), SI
-	MOVQ table+48(FP), DI
+	MOVQ axes+40(FP), BX
+	MOVQ table+48(FP), SI
+	MOVQ area+32(FP), DI
 	LEAQ (DX)(DX*2), R8
 	SHLQ $0x02, R8
 	LEAQ (DX)(DX*4), R9
@@ -1624,13 +1624,13 @@ next:
 	VXORPS       X1, X1, X1
 	VCVTSI2SDQ   R11, X1, X1
 	VBROADCASTSD X1, Y2
-	VADDPD       352(DI), Y2, Y1
-	VADDPD       384(DI), Y2, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
 	MOVQ         CX, R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD (SI), Y8
-	VBROADCASTSD 24(SI), Y3
-	VBROADCASTSD 48(SI), Y7
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 24(BX), Y3
+	VBROADCASTSD 48(BX), Y7
 	VMULPD       Y3, Y1, Y9
 	VADDPD       Y8, Y9, Y9
 	VMAXPD       Y6, Y9, Y9
@@ -1649,16 +1649,16 @@ next:
 	VCVTPD2PSY   Y3, X3
 	VINSERTF128  $0x01, X6, Y4, Y6
 	VINSERTF128  $0x01, X3, Y5, Y7
-	VPSUBD       320(DI), Y6, Y6
+	VPSUBD       320(SI), Y6, Y6
 	VPBROADCASTD X6, Y3
 	VPCMPEQD     Y3, Y6, Y3
 	VMOVDQA      Y3, Y3
 	VMOVD        X6, R13
 	LEAQ         (R12)(R13*4), R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 8(SI), Y9
-	VBROADCASTSD 32(SI), Y10
-	VBROADCASTSD 56(SI), Y8
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 32(BX), Y10
+	VBROADCASTSD 56(BX), Y8
 	VMULPD       Y10, Y1, Y11
 	VADDPD       Y9, Y11, Y11
 	VMAXPD       Y6, Y11, Y11
@@ -1685,9 +1685,9 @@ next:
 	IMULQ        DX, R13
 	LEAQ         (R12)(R13*4), R12
 	VXORPD       Y6, Y6, Y6
-	VBROADCASTSD 16(SI), Y9
-	VBROADCASTSD 40(SI), Y10
-	VBROADCASTSD 64(SI), Y8
+	VBROADCASTSD 16(BX), Y9
+	VBROADCASTSD 40(BX), Y10
+	VBROADCASTSD 64(BX), Y8
 	VMULPD       Y10, Y1, Y1
 	VADDPD       Y9, Y1, Y1
 	VMAXPD       Y6, Y1, Y1
@@ -1711,7 +1711,7 @@ next:
 	VPCMPEQD     Y1, Y2, Y1
 	VPAND        Y1, Y3, Y3
 	VMOVD        X2, R13
-	IMULQ        BX, R13
+	IMULQ        DI, R13
 	LEAQ         (R12)(R13*4), R12
 	VMOVMSKPS    Y3, R13
 	NOTL         R13
@@ -1721,150 +1721,150 @@ next:
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
+	VMULPS       128(SI), Y3, Y3
 	VMOVUPS      Y3, 352(R10)
-	VMULPS       160(DI), Y1, Y3
-	VSUBPS       192(DI), Y3, Y3
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VSUBPS       224(DI), Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       256(DI), Y3, Y3
+	VADDPS       256(SI), Y3, Y3
 	VMOVUPS      Y3, 224(R10)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       64(DI), Y1, Y6
-	VMOVUPS      32(DI), Y1
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
 	VSUBPS       Y6, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VSUBPS       (DI), Y1, Y1
+	VSUBPS       (SI), Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       96(DI), Y1, Y1
+	VADDPS       96(SI), Y1, Y1
 	VMOVUPS      Y1, 256(R10)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
+	VMULPS       128(SI), Y1, Y1
 	VMOVUPS      Y1, 192(R10)
-	VMULPS       160(DI), Y2, Y1
-	VSUBPS       192(DI), Y1, Y1
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VSUBPS       224(DI), Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       256(DI), Y1, Y1
+	VADDPS       256(SI), Y1, Y1
 	VMOVUPS      Y1, 320(R10)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       64(DI), Y2, Y3
-	VMOVUPS      32(DI), Y2
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
 	VSUBPS       Y3, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VSUBPS       (DI), Y2, Y2
+	VSUBPS       (SI), Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       96(DI), Y2, Y2
+	VADDPS       96(SI), Y2, Y2
 	VMOVUPS      Y2, 288(R10)
 	VMOVUPS      384(R10), Y1
 	VSUBPS       Y1, Y0, Y2
 	VMULPS       Y1, Y1, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
+	VMULPS       128(SI), Y3, Y3
 	VMOVUPS      Y3, 160(R10)
-	VMULPS       160(DI), Y1, Y3
-	VSUBPS       192(DI), Y3, Y3
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       192(DI), Y3, Y3
+	VADDPS       192(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VSUBPS       224(DI), Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
 	VMULPS       Y1, Y3, Y3
-	VADDPS       256(DI), Y3, Y3
+	VADDPS       256(SI), Y3, Y3
 	VMOVUPS      Y3, 32(R10)
 	VMULPS       Y1, Y1, Y3
-	VMULPS       64(DI), Y1, Y6
-	VMOVUPS      32(DI), Y1
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
 	VSUBPS       Y6, Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VSUBPS       (DI), Y1, Y1
+	VSUBPS       (SI), Y1, Y1
 	VMULPS       Y3, Y1, Y1
-	VADDPS       96(DI), Y1, Y1
+	VADDPS       96(SI), Y1, Y1
 	VMOVUPS      Y1, 64(R10)
 	VMULPS       Y2, Y2, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
+	VMULPS       128(SI), Y1, Y1
 	VMOVUPS      Y1, (R10)
-	VMULPS       160(DI), Y2, Y1
-	VSUBPS       192(DI), Y1, Y1
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       192(DI), Y1, Y1
+	VADDPS       192(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VSUBPS       224(DI), Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
 	VMULPS       Y2, Y1, Y1
-	VADDPS       256(DI), Y1, Y1
+	VADDPS       256(SI), Y1, Y1
 	VMOVUPS      Y1, 128(R10)
 	VMULPS       Y2, Y2, Y1
-	VMULPS       64(DI), Y2, Y3
-	VMOVUPS      32(DI), Y2
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
 	VSUBPS       Y3, Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VSUBPS       (DI), Y2, Y2
+	VSUBPS       (SI), Y2, Y2
 	VMULPS       Y1, Y2, Y2
-	VADDPS       96(DI), Y2, Y2
+	VADDPS       96(SI), Y2, Y2
 	VMOVUPS      Y2, 96(R10)
 	VSUBPS       Y7, Y0, Y0
 	VMULPS       Y7, Y7, Y1
 	VMULPS       Y1, Y1, Y1
 	VMULPS       Y7, Y1, Y1
-	VMULPS       128(DI), Y1, Y1
-	VMULPS       160(DI), Y7, Y2
-	VSUBPS       192(DI), Y2, Y2
+	VMULPS       128(SI), Y1, Y1
+	VMULPS       160(SI), Y7, Y2
+	VSUBPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       192(DI), Y2, Y2
+	VADDPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       192(DI), Y2, Y2
+	VADDPS       192(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VSUBPS       224(DI), Y2, Y2
+	VSUBPS       224(SI), Y2, Y2
 	VMULPS       Y7, Y2, Y2
-	VADDPS       256(DI), Y2, Y2
+	VADDPS       256(SI), Y2, Y2
 	VMULPS       Y7, Y7, Y3
-	VMULPS       64(DI), Y7, Y7
-	VMOVUPS      32(DI), Y6
+	VMULPS       64(SI), Y7, Y7
+	VMOVUPS      32(SI), Y6
 	VSUBPS       Y7, Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VSUBPS       (DI), Y6, Y6
+	VSUBPS       (SI), Y6, Y6
 	VMULPS       Y3, Y6, Y6
-	VADDPS       96(DI), Y6, Y6
+	VADDPS       96(SI), Y6, Y6
 	VMULPS       Y0, Y0, Y3
 	VMULPS       Y3, Y3, Y3
 	VMULPS       Y0, Y3, Y3
-	VMULPS       128(DI), Y3, Y3
-	VMULPS       160(DI), Y0, Y7
-	VSUBPS       192(DI), Y7, Y7
+	VMULPS       128(SI), Y3, Y3
+	VMULPS       160(SI), Y0, Y7
+	VSUBPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       192(DI), Y7, Y7
+	VADDPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       192(DI), Y7, Y7
+	VADDPS       192(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VSUBPS       224(DI), Y7, Y7
+	VSUBPS       224(SI), Y7, Y7
 	VMULPS       Y0, Y7, Y7
-	VADDPS       256(DI), Y7, Y7
+	VADDPS       256(SI), Y7, Y7
 	VMULPS       Y0, Y0, Y8
-	VMULPS       64(DI), Y0, Y9
-	VMOVUPS      32(DI), Y0
+	VMULPS       64(SI), Y0, Y9
+	VMOVUPS      32(SI), Y0
 	VSUBPS       Y9, Y0, Y0
 	VMULPS       Y8, Y0, Y0
-	VSUBPS       (DI), Y0, Y0
+	VSUBPS       (SI), Y0, Y0
 	VMULPS       Y8, Y0, Y0
-	VADDPS       96(DI), Y0, Y0
+	VADDPS       96(SI), Y0, Y0
 	VXORPS       Y8, Y8, Y8
 	MOVQ         R10, R14
 	MOVQ         $0x00000006, R15
@@ -1951,7 +1951,7 @@ plane:
 	VMULPS  192(R14), Y9, Y9
 	VADDPS  Y9, Y8, Y8
 	ADDQ    $+32, R14
-	LEAQ    (R12)(BX*4), R12
+	LEAQ    (R12)(DI*4), R12
 	DECQ    R15
 	JNZ     plane
 	MOVQ    n+8(FP), R12
@@ -1968,6 +1968,469 @@ tail:
 	VMOVUPS    32(R14)(R12*4), Y0
 	VMASKMOVPS Y8, Y0, (AX)(R11*4)
 	ADDQ       R13, R11
+	JMP        next
+
+end:
+	VZEROUPPER
+	RET
+
+// func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·flatRow3(SB), $352-56
+	MOVQ dst+0(FP), AX
+	MOVQ c+16(FP), CX
+	MOVQ mx+24(FP), DX
+	MOVQ axes+32(FP), BX
+	MOVQ table+40(FP), SI
+	LEAQ (DX)(DX*2), DI
+	SHLQ $0x02, DI
+	LEAQ 31(SP), R8
+	ANDQ $-32, R8
+	XORQ R9, R9
+
+next:
+	CMPQ         R9, n+8(FP)
+	JGE          end
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	VXORPS       X1, X1, X1
+	VCVTSI2SDQ   R9, X1, X1
+	VBROADCASTSD X1, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
+	MOVQ         CX, R10
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 32(BX), Y7
+	VMULPD       Y3, Y1, Y9
+	VADDPD       Y8, Y9, Y9
+	VMAXPD       Y6, Y9, Y9
+	VMINPD       Y7, Y9, Y9
+	VCVTTPD2DQY  Y9, X4
+	VCVTDQ2PD    X4, Y10
+	VSUBPD       Y10, Y9, Y9
+	VCVTPD2PSY   Y9, X5
+	VMULPD       Y3, Y2, Y3
+	VADDPD       Y8, Y3, Y3
+	VMAXPD       Y6, Y3, Y3
+	VMINPD       Y7, Y3, Y3
+	VCVTTPD2DQY  Y3, X6
+	VCVTDQ2PD    X6, Y7
+	VSUBPD       Y7, Y3, Y3
+	VCVTPD2PSY   Y3, X3
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X3, Y5, Y7
+	VPSUBD       320(SI), Y6, Y6
+	VPBROADCASTD X6, Y3
+	VPCMPEQD     Y3, Y6, Y3
+	VMOVDQA      Y3, Y3
+	VMOVD        X6, R11
+	LEAQ         (R10)(R11*4), R10
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 24(BX), Y10
+	VBROADCASTSD 40(BX), Y8
+	VMULPD       Y10, Y1, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X4
+	VCVTDQ2PD    X4, Y11
+	VSUBPD       Y11, Y1, Y1
+	VCVTPD2PSY   Y1, X5
+	VMULPD       Y10, Y2, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X6
+	VCVTDQ2PD    X6, Y2
+	VSUBPD       Y2, Y1, Y1
+	VCVTPD2PSY   Y1, X1
+	VINSERTF128  $0x01, X6, Y4, Y2
+	VINSERTF128  $0x01, X1, Y5, Y1
+	VMOVUPS      Y1, 256(R8)
+	VPBROADCASTD X2, Y1
+	VPCMPEQD     Y1, Y2, Y1
+	VPAND        Y1, Y3, Y3
+	VMOVD        X2, R11
+	IMULQ        DX, R11
+	LEAQ         (R10)(R11*4), R10
+	VMOVMSKPS    Y3, R11
+	NOTL         R11
+	BSFL         R11, R11
+	VMOVUPS      256(R8), Y1
+	VSUBPS       Y1, Y0, Y2
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       192(SI), Y3, Y3
+	VMOVUPS      Y3, 96(R8)
+	VMULPS       Y1, Y1, Y3
+	VMULPS       (SI), Y1, Y1
+	VSUBPS       Y0, Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VADDPS       288(SI), Y1, Y1
+	VMOVUPS      Y1, 32(R8)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       Y2, Y1, Y1
+	VMULPS       192(SI), Y1, Y1
+	VMOVUPS      Y1, (R8)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       (SI), Y2, Y2
+	VSUBPS       Y0, Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VADDPS       288(SI), Y2, Y2
+	VMOVUPS      Y2, 64(R8)
+	VSUBPS       Y7, Y0, Y1
+	VMULPS       Y7, Y7, Y2
+	VMULPS       Y7, Y2, Y2
+	VMULPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y7, Y3
+	VMULPS       (SI), Y7, Y6
+	VSUBPS       Y0, Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VADDPS       288(SI), Y6, Y6
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y1, Y7
+	VMULPS       (SI), Y1, Y1
+	VSUBPS       Y0, Y1, Y1
+	VMULPS       Y7, Y1, Y1
+	VADDPS       288(SI), Y1, Y1
+	VMULPS       (R10), Y3, Y0
+	VMULPS       4(R10), Y6, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       8(R10), Y1, Y7
+	VMULPS       12(R10), Y2, Y8
+	VADDPS       Y8, Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R8), Y0, Y0
+	VMULPS       (R10)(DX*4), Y3, Y7
+	VMULPS       4(R10)(DX*4), Y6, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       8(R10)(DX*4), Y1, Y8
+	VMULPS       12(R10)(DX*4), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       32(R8), Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R10)(DX*8), Y3, Y7
+	VMULPS       4(R10)(DX*8), Y6, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       8(R10)(DX*8), Y1, Y8
+	VMULPS       12(R10)(DX*8), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y7, Y7
+	VMULPS       64(R8), Y7, Y7
+	VADDPS       Y7, Y0, Y0
+	VMULPS       (R10)(DI*1), Y3, Y3
+	VMULPS       4(R10)(DI*1), Y6, Y6
+	VADDPS       Y6, Y3, Y3
+	VMULPS       8(R10)(DI*1), Y1, Y1
+	VMULPS       12(R10)(DI*1), Y2, Y2
+	VADDPS       Y2, Y1, Y1
+	VADDPS       Y1, Y3, Y3
+	VMULPS       96(R8), Y3, Y3
+	VADDPS       Y3, Y0, Y0
+	MOVQ         n+8(FP), R10
+	SUBQ         R9, R10
+	CMPQ         R10, $+8
+	JL           tail
+	VMOVUPS      Y0, (AX)(R9*4)
+	ADDQ         R11, R9
+	JMP          next
+
+tail:
+	MOVQ       masks+48(FP), R12
+	NEGQ       R10
+	VMOVUPS    32(R12)(R10*4), Y1
+	VMASKMOVPS Y0, Y1, (AX)(R9*4)
+	ADDQ       R11, R9
+	JMP        next
+
+end:
+	VZEROUPPER
+	RET
+
+// func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·flatRow5(SB), $480-56
+	MOVQ dst+0(FP), AX
+	MOVQ c+16(FP), CX
+	MOVQ mx+24(FP), DX
+	MOVQ axes+32(FP), BX
+	MOVQ table+40(FP), SI
+	LEAQ (DX)(DX*2), DI
+	SHLQ $0x02, DI
+	LEAQ (DX)(DX*4), R8
+	SHLQ $0x02, R8
+	LEAQ 31(SP), R9
+	ANDQ $-32, R9
+	XORQ R10, R10
+
+next:
+	CMPQ         R10, n+8(FP)
+	JGE          end
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLD       $0x19, Y0, Y0
+	VPSRLD       $0x02, Y0, Y0
+	VXORPS       X1, X1, X1
+	VCVTSI2SDQ   R10, X1, X1
+	VBROADCASTSD X1, Y2
+	VADDPD       352(SI), Y2, Y1
+	VADDPD       384(SI), Y2, Y2
+	MOVQ         CX, R11
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD (BX), Y8
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 32(BX), Y7
+	VMULPD       Y3, Y1, Y9
+	VADDPD       Y8, Y9, Y9
+	VMAXPD       Y6, Y9, Y9
+	VMINPD       Y7, Y9, Y9
+	VCVTTPD2DQY  Y9, X4
+	VCVTDQ2PD    X4, Y10
+	VSUBPD       Y10, Y9, Y9
+	VCVTPD2PSY   Y9, X5
+	VMULPD       Y3, Y2, Y3
+	VADDPD       Y8, Y3, Y3
+	VMAXPD       Y6, Y3, Y3
+	VMINPD       Y7, Y3, Y3
+	VCVTTPD2DQY  Y3, X6
+	VCVTDQ2PD    X6, Y7
+	VSUBPD       Y7, Y3, Y3
+	VCVTPD2PSY   Y3, X3
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X3, Y5, Y7
+	VPSUBD       320(SI), Y6, Y6
+	VPBROADCASTD X6, Y3
+	VPCMPEQD     Y3, Y6, Y3
+	VMOVDQA      Y3, Y3
+	VMOVD        X6, R12
+	LEAQ         (R11)(R12*4), R11
+	VXORPD       Y6, Y6, Y6
+	VBROADCASTSD 8(BX), Y9
+	VBROADCASTSD 24(BX), Y10
+	VBROADCASTSD 40(BX), Y8
+	VMULPD       Y10, Y1, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X4
+	VCVTDQ2PD    X4, Y11
+	VSUBPD       Y11, Y1, Y1
+	VCVTPD2PSY   Y1, X5
+	VMULPD       Y10, Y2, Y1
+	VADDPD       Y9, Y1, Y1
+	VMAXPD       Y6, Y1, Y1
+	VMINPD       Y8, Y1, Y1
+	VCVTTPD2DQY  Y1, X6
+	VCVTDQ2PD    X6, Y2
+	VSUBPD       Y2, Y1, Y1
+	VCVTPD2PSY   Y1, X1
+	VINSERTF128  $0x01, X6, Y4, Y2
+	VINSERTF128  $0x01, X1, Y5, Y1
+	VMOVUPS      Y1, 384(R9)
+	VPBROADCASTD X2, Y1
+	VPCMPEQD     Y1, Y2, Y1
+	VPAND        Y1, Y3, Y3
+	VMOVD        X2, R12
+	IMULQ        DX, R12
+	LEAQ         (R11)(R12*4), R11
+	VMOVMSKPS    Y3, R12
+	NOTL         R12
+	BSFL         R12, R12
+	VMOVUPS      384(R9), Y1
+	VSUBPS       Y1, Y0, Y2
+	VMULPS       Y1, Y1, Y3
+	VMULPS       Y3, Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VMULPS       128(SI), Y3, Y3
+	VMOVUPS      Y3, 160(R9)
+	VMULPS       160(SI), Y1, Y3
+	VSUBPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       192(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VSUBPS       224(SI), Y3, Y3
+	VMULPS       Y1, Y3, Y3
+	VADDPS       256(SI), Y3, Y3
+	VMOVUPS      Y3, 32(R9)
+	VMULPS       Y1, Y1, Y3
+	VMULPS       64(SI), Y1, Y6
+	VMOVUPS      32(SI), Y1
+	VSUBPS       Y6, Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VSUBPS       (SI), Y1, Y1
+	VMULPS       Y3, Y1, Y1
+	VADDPS       96(SI), Y1, Y1
+	VMOVUPS      Y1, 64(R9)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       Y1, Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VMULPS       128(SI), Y1, Y1
+	VMOVUPS      Y1, (R9)
+	VMULPS       160(SI), Y2, Y1
+	VSUBPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       192(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VSUBPS       224(SI), Y1, Y1
+	VMULPS       Y2, Y1, Y1
+	VADDPS       256(SI), Y1, Y1
+	VMOVUPS      Y1, 128(R9)
+	VMULPS       Y2, Y2, Y1
+	VMULPS       64(SI), Y2, Y3
+	VMOVUPS      32(SI), Y2
+	VSUBPS       Y3, Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VSUBPS       (SI), Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VADDPS       96(SI), Y2, Y2
+	VMOVUPS      Y2, 96(R9)
+	VSUBPS       Y7, Y0, Y0
+	VMULPS       Y7, Y7, Y1
+	VMULPS       Y1, Y1, Y1
+	VMULPS       Y7, Y1, Y1
+	VMULPS       128(SI), Y1, Y1
+	VMULPS       160(SI), Y7, Y2
+	VSUBPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       192(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VSUBPS       224(SI), Y2, Y2
+	VMULPS       Y7, Y2, Y2
+	VADDPS       256(SI), Y2, Y2
+	VMULPS       Y7, Y7, Y3
+	VMULPS       64(SI), Y7, Y7
+	VMOVUPS      32(SI), Y6
+	VSUBPS       Y7, Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VSUBPS       (SI), Y6, Y6
+	VMULPS       Y3, Y6, Y6
+	VADDPS       96(SI), Y6, Y6
+	VMULPS       Y0, Y0, Y3
+	VMULPS       Y3, Y3, Y3
+	VMULPS       Y0, Y3, Y3
+	VMULPS       128(SI), Y3, Y3
+	VMULPS       160(SI), Y0, Y7
+	VSUBPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       192(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VSUBPS       224(SI), Y7, Y7
+	VMULPS       Y0, Y7, Y7
+	VADDPS       256(SI), Y7, Y7
+	VMULPS       Y0, Y0, Y8
+	VMULPS       64(SI), Y0, Y9
+	VMOVUPS      32(SI), Y0
+	VSUBPS       Y9, Y0, Y0
+	VMULPS       Y8, Y0, Y0
+	VSUBPS       (SI), Y0, Y0
+	VMULPS       Y8, Y0, Y0
+	VADDPS       96(SI), Y0, Y0
+	VMULPS       (R11), Y3, Y8
+	VMULPS       4(R11), Y2, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       8(R11), Y6, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       12(R11), Y0, Y9
+	VMULPS       16(R11), Y7, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       20(R11), Y1, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R9), Y8, Y8
+	VMULPS       (R11)(DX*4), Y3, Y9
+	VMULPS       4(R11)(DX*4), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DX*4), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DX*4), Y0, Y10
+	VMULPS       16(R11)(DX*4), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DX*4), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       32(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(DX*8), Y3, Y9
+	VMULPS       4(R11)(DX*8), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DX*8), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DX*8), Y0, Y10
+	VMULPS       16(R11)(DX*8), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DX*8), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       64(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(DI*1), Y3, Y9
+	VMULPS       4(R11)(DI*1), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R11)(DI*1), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R11)(DI*1), Y0, Y10
+	VMULPS       16(R11)(DI*1), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R11)(DI*1), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       96(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	LEAQ         (R11)(DX*8), R13
+	VMULPS       (R13)(DX*8), Y3, Y9
+	VMULPS       4(R13)(DX*8), Y2, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       8(R13)(DX*8), Y6, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       12(R13)(DX*8), Y0, Y10
+	VMULPS       16(R13)(DX*8), Y7, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       20(R13)(DX*8), Y1, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       128(R9), Y9, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (R11)(R8*1), Y3, Y3
+	VMULPS       4(R11)(R8*1), Y2, Y2
+	VADDPS       Y2, Y3, Y3
+	VMULPS       8(R11)(R8*1), Y6, Y2
+	VADDPS       Y2, Y3, Y3
+	VMULPS       12(R11)(R8*1), Y0, Y0
+	VMULPS       16(R11)(R8*1), Y7, Y2
+	VADDPS       Y2, Y0, Y0
+	VMULPS       20(R11)(R8*1), Y1, Y1
+	VADDPS       Y1, Y0, Y0
+	VADDPS       Y0, Y3, Y3
+	VMULPS       160(R9), Y3, Y3
+	VADDPS       Y3, Y8, Y8
+	MOVQ         n+8(FP), R11
+	SUBQ         R10, R11
+	CMPQ         R11, $+8
+	JL           tail
+	VMOVUPS      Y8, (AX)(R10*4)
+	ADDQ         R12, R10
+	JMP          next
+
+tail:
+	MOVQ       masks+48(FP), R13
+	NEGQ       R11
+	VMOVUPS    32(R13)(R11*4), Y0
+	VMASKMOVPS Y8, Y0, (AX)(R10*4)
+	ADDQ       R12, R10
 	JMP        next
 
 end:
@@ -3208,5 +3671,696 @@ eight_end:
 	VMASKMOVPS Y2, Y1, (CX)(SI*4)
 
 done:
+	VZEROUPPER
+	RET
+
+// func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int
+// Requires: AVX, AVX2, POPCNT
+TEXT ·locate(SB), $64-120
+	MOVQ first+48(FP), AX
+	MOVQ axes+64(FP), DX
+	MOVQ strides+72(FP), BX
+	MOVQ mask+80(FP), SI
+	MOVQ table+96(FP), DI
+	LEAQ 31(SP), R8
+	ANDQ $-32, R8
+	XORQ R9, R9
+	XORQ R10, R10
+
+next:
+	CMPQ         R9, count+56(FP)
+	JGE          end
+	LEAQ         (AX)(R9*1), R11
+	VXORPS       X0, X0, X0
+	VCVTSI2SDQ   R11, X0, X0
+	VBROADCASTSD X0, Y1
+	VADDPD       (DI), Y1, Y0
+	VADDPD       32(DI), Y1, Y1
+	VBROADCASTSD 24(DX), Y2
+	VMULPD       Y0, Y2, Y2
+	VBROADCASTSD (DX), Y3
+	VADDPD       Y3, Y2, Y2
+	VBROADCASTSD 48(DX), Y3
+	VCMPPD       $0x02, Y2, Y3, Y3
+	VBROADCASTSD 72(DX), Y6
+	VCMPPD       $0x0d, Y2, Y6, Y6
+	VANDPD       Y6, Y3, Y3
+	VBROADCASTSD 32(DX), Y6
+	VMULPD       Y0, Y6, Y6
+	VBROADCASTSD 8(DX), Y7
+	VADDPD       Y7, Y6, Y6
+	VBROADCASTSD 56(DX), Y7
+	VCMPPD       $0x02, Y6, Y7, Y7
+	VANDPD       Y7, Y3, Y3
+	VBROADCASTSD 80(DX), Y7
+	VCMPPD       $0x0d, Y6, Y7, Y7
+	VANDPD       Y7, Y3, Y3
+	VBROADCASTSD 40(DX), Y7
+	VMULPD       Y0, Y7, Y7
+	VBROADCASTSD 16(DX), Y0
+	VADDPD       Y0, Y7, Y7
+	VBROADCASTSD 64(DX), Y0
+	VCMPPD       $0x02, Y7, Y0, Y0
+	VANDPD       Y0, Y3, Y3
+	VBROADCASTSD 88(DX), Y0
+	VCMPPD       $0x0d, Y7, Y0, Y0
+	VANDPD       Y0, Y3, Y3
+	VBROADCASTSD 24(DX), Y0
+	VMULPD       Y1, Y0, Y0
+	VBROADCASTSD (DX), Y8
+	VADDPD       Y8, Y0, Y0
+	VBROADCASTSD 48(DX), Y8
+	VCMPPD       $0x02, Y0, Y8, Y8
+	VBROADCASTSD 72(DX), Y9
+	VCMPPD       $0x0d, Y0, Y9, Y9
+	VANDPD       Y9, Y8, Y8
+	VBROADCASTSD 32(DX), Y9
+	VMULPD       Y1, Y9, Y9
+	VBROADCASTSD 8(DX), Y10
+	VADDPD       Y10, Y9, Y9
+	VBROADCASTSD 56(DX), Y10
+	VCMPPD       $0x02, Y9, Y10, Y10
+	VANDPD       Y10, Y8, Y8
+	VBROADCASTSD 80(DX), Y10
+	VCMPPD       $0x0d, Y9, Y10, Y10
+	VANDPD       Y10, Y8, Y8
+	VBROADCASTSD 40(DX), Y10
+	VMULPD       Y1, Y10, Y10
+	VBROADCASTSD 16(DX), Y1
+	VADDPD       Y1, Y10, Y10
+	VBROADCASTSD 64(DX), Y1
+	VCMPPD       $0x02, Y10, Y1, Y1
+	VANDPD       Y1, Y8, Y8
+	VBROADCASTSD 88(DX), Y1
+	VCMPPD       $0x0d, Y10, Y1, Y1
+	VANDPD       Y1, Y8, Y8
+	VSHUFPS      $0x88, Y8, Y3, Y1
+	VPERMQ       $0xd8, Y1, Y1
+	VMOVMSKPS    Y1, R12
+	MOVQ         count+56(FP), CX
+	SUBQ         R9, CX
+	CMPQ         CX, $0x08
+	JGE          whole
+	MOVQ         $0x00000001, R13
+	SHLQ         CL, R13
+	DECQ         R13
+	ANDL         R13, R12
+
+whole:
+	MOVQ      accept+88(FP), CX
+	TESTQ     CX, CX
+	JZ        chosen
+	VPXOR     X4, X4, X4
+	VMOVQ     (CX)(R9*1), X3
+	VPCMPEQB  X4, X3, X3
+	VPMOVMSKB X3, CX
+	NOTL      CX
+	ANDL      CX, R12
+
+chosen:
+	TESTL        R12, R12
+	JZ           none
+	VMOVUPD      64(DI), Y3
+	VCVTTPD2DQY  Y2, X4
+	VCVTDQ2PD    X4, Y8
+	VSUBPD       Y8, Y2, Y8
+	VCMPPD       $0x02, Y8, Y3, Y2
+	VCVTPD2PSY   Y8, X5
+	VCVTTPD2DQY  Y0, X8
+	VCVTDQ2PD    X8, Y11
+	VSUBPD       Y11, Y0, Y11
+	VCMPPD       $0x02, Y11, Y3, Y0
+	VCVTPD2PSY   Y11, X11
+	VINSERTF128  $0x01, X8, Y4, Y8
+	VINSERTF128  $0x01, X11, Y5, Y11
+	VSHUFPS      $0x88, Y0, Y2, Y0
+	VPERMQ       $0xd8, Y0, Y0
+	VPSUBD       Y0, Y8, Y0
+	VMOVDQA      Y8, Y2
+	VMOVDQA      Y0, Y0
+	VCVTTPD2DQY  Y6, X4
+	VCVTDQ2PD    X4, Y8
+	VSUBPD       Y8, Y6, Y8
+	VCMPPD       $0x02, Y8, Y3, Y6
+	VCVTPD2PSY   Y8, X5
+	VCVTTPD2DQY  Y9, X8
+	VCVTDQ2PD    X8, Y12
+	VSUBPD       Y12, Y9, Y12
+	VCMPPD       $0x02, Y12, Y3, Y9
+	VCVTPD2PSY   Y12, X12
+	VINSERTF128  $0x01, X8, Y4, Y8
+	VINSERTF128  $0x01, X12, Y5, Y12
+	VSHUFPS      $0x88, Y9, Y6, Y6
+	VPERMQ       $0xd8, Y6, Y6
+	VPSUBD       Y6, Y8, Y6
+	VPBROADCASTD (BX), Y9
+	VPMULLD      Y9, Y6, Y6
+	VPADDD       Y6, Y0, Y0
+	VPBROADCASTD 8(BX), Y6
+	VPMULLD      Y6, Y8, Y8
+	VPADDD       Y8, Y2, Y2
+	VCVTTPD2DQY  Y7, X4
+	VCVTDQ2PD    X4, Y6
+	VSUBPD       Y6, Y7, Y6
+	VCMPPD       $0x02, Y6, Y3, Y7
+	VCVTPD2PSY   Y6, X5
+	VCVTTPD2DQY  Y10, X6
+	VCVTDQ2PD    X6, Y8
+	VSUBPD       Y8, Y10, Y8
+	VCMPPD       $0x02, Y8, Y3, Y3
+	VCVTPD2PSY   Y8, X8
+	VINSERTF128  $0x01, X6, Y4, Y6
+	VINSERTF128  $0x01, X8, Y5, Y8
+	VSHUFPS      $0x88, Y3, Y7, Y3
+	VPERMQ       $0xd8, Y3, Y3
+	VPSUBD       Y3, Y6, Y3
+	VPBROADCASTD 4(BX), Y7
+	VPMULLD      Y7, Y3, Y3
+	VPADDD       Y3, Y0, Y0
+	VPBROADCASTD 12(BX), Y3
+	VPMULLD      Y3, Y6, Y6
+	VPADDD       Y6, Y2, Y2
+	VPBROADCASTD 16(BX), Y3
+	VPADDD       Y3, Y2, Y2
+	VPAND        Y1, Y0, Y0
+	VMOVDQU      Y0, (R8)
+	MOVL         (R8), CX
+	MOVBLZX      (SI)(CX*1), CX
+	VMOVD        CX, X1
+	MOVL         4(R8), CX
+	VPINSRB      $0x01, (SI)(CX*1), X1, X1
+	MOVL         8(R8), CX
+	VPINSRB      $0x02, (SI)(CX*1), X1, X1
+	MOVL         12(R8), CX
+	VPINSRB      $0x03, (SI)(CX*1), X1, X1
+	MOVL         16(R8), CX
+	VPINSRB      $0x04, (SI)(CX*1), X1, X1
+	MOVL         20(R8), CX
+	VPINSRB      $0x05, (SI)(CX*1), X1, X1
+	MOVL         24(R8), CX
+	VPINSRB      $0x06, (SI)(CX*1), X1, X1
+	MOVL         28(R8), CX
+	VPINSRB      $0x07, (SI)(CX*1), X1, X1
+	VPXOR        X3, X3, X3
+	VPCMPEQB     X3, X1, X1
+	VPMOVMSKB    X1, CX
+	NOTL         CX
+	ANDL         CX, R12
+	JZ           none
+	MOVQ         order+104(FP), CX
+	VPMOVZXBD    (CX)(R12*8), Y1
+	VMOVD        R11, X3
+	VPBROADCASTD X3, Y3
+	VPADDD       96(DI), Y3, Y3
+	MOVQ         base+0(FP), CX
+	VPERMD       Y2, Y1, Y2
+	VMOVDQU      Y2, (CX)(R10*4)
+	MOVQ         near+8(FP), CX
+	VPERMD       Y0, Y1, Y0
+	VMOVDQU      Y0, (CX)(R10*4)
+	MOVQ         index+16(FP), CX
+	VPERMD       Y3, Y1, Y3
+	VMOVDQU      Y3, (CX)(R10*4)
+	MOVQ         tx+24(FP), CX
+	VPERMD       Y11, Y1, Y11
+	VMOVDQU      Y11, (CX)(R10*4)
+	MOVQ         ty+32(FP), CX
+	VPERMD       Y12, Y1, Y12
+	VMOVDQU      Y12, (CX)(R10*4)
+	MOVQ         tz+40(FP), CX
+	VPERMD       Y8, Y1, Y8
+	VMOVDQU      Y8, (CX)(R10*4)
+	POPCNTL      R12, R12
+	ADDQ         R12, R10
+
+none:
+	ADDQ $0x08, R9
+	JMP  next
+
+end:
+	VZEROUPPER
+	MOVQ R10, ret+112(FP)
+	RET
+
+// func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32)
+// Requires: AVX, AVX2
+TEXT ·cells(SB), $0-80
+	MOVQ         base+0(FP), AX
+	MOVQ         n+56(FP), CX
+	MOVQ         limits+64(FP), DX
+	MOVQ         strides+72(FP), BX
+	MOVQ         x+32(FP), SI
+	MOVQ         y+40(FP), DI
+	MOVQ         z+48(FP), R8
+	MOVQ         tx+8(FP), R9
+	MOVQ         ty+16(FP), R10
+	MOVQ         tz+24(FP), R11
+	VXORPD       Y0, Y0, Y0
+	VBROADCASTSD (DX), Y2
+	VBROADCASTSD 8(DX), Y3
+	VBROADCASTSD 16(DX), Y4
+	VPBROADCASTD 8(BX), Y1
+	VPBROADCASTD (BX), Y5
+	VPBROADCASTD 4(BX), Y6
+	XORQ         DX, DX
+
+points:
+	CMPQ        DX, CX
+	JGE         points_end
+	VMOVUPD     (SI)(DX*8), Y7
+	VMAXPD      Y0, Y7, Y7
+	VMINPD      Y2, Y7, Y7
+	VCVTTPD2DQY Y7, X8
+	VCVTDQ2PD   X8, Y10
+	VSUBPD      Y10, Y7, Y7
+	VCVTPD2PSY  Y7, X9
+	VMOVUPD     32(SI)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y2, Y10, Y10
+	VCVTTPD2DQY Y10, X7
+	VCVTDQ2PD   X7, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X7, Y8, Y7
+	VINSERTF128 $0x01, X10, Y9, Y10
+	VMOVUPS     Y10, (R9)(DX*4)
+	VPADDD      Y7, Y1, Y7
+	VMOVUPD     (DI)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y3, Y10, Y10
+	VCVTTPD2DQY Y10, X8
+	VCVTDQ2PD   X8, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X9
+	VMOVUPD     32(DI)(DX*8), Y11
+	VMAXPD      Y0, Y11, Y11
+	VMINPD      Y3, Y11, Y11
+	VCVTTPD2DQY Y11, X10
+	VCVTDQ2PD   X10, Y12
+	VSUBPD      Y12, Y11, Y11
+	VCVTPD2PSY  Y11, X11
+	VINSERTF128 $0x01, X10, Y8, Y10
+	VINSERTF128 $0x01, X11, Y9, Y11
+	VMOVUPS     Y11, (R10)(DX*4)
+	VPMULLD     Y5, Y10, Y10
+	VPADDD      Y10, Y7, Y7
+	VMOVUPD     (R8)(DX*8), Y10
+	VMAXPD      Y0, Y10, Y10
+	VMINPD      Y4, Y10, Y10
+	VCVTTPD2DQY Y10, X8
+	VCVTDQ2PD   X8, Y11
+	VSUBPD      Y11, Y10, Y10
+	VCVTPD2PSY  Y10, X9
+	VMOVUPD     32(R8)(DX*8), Y11
+	VMAXPD      Y0, Y11, Y11
+	VMINPD      Y4, Y11, Y11
+	VCVTTPD2DQY Y11, X10
+	VCVTDQ2PD   X10, Y12
+	VSUBPD      Y12, Y11, Y11
+	VCVTPD2PSY  Y11, X11
+	VINSERTF128 $0x01, X10, Y8, Y10
+	VINSERTF128 $0x01, X11, Y9, Y11
+	VMOVUPS     Y11, (R11)(DX*4)
+	VPMULLD     Y6, Y10, Y10
+	VPADDD      Y10, Y7, Y7
+	VMOVDQU     Y7, (AX)(DX*4)
+	ADDQ        $0x00000008, DX
+	JMP         points
+
+points_end:
+	VZEROUPPER
+	RET
+
+// func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·pass3(SB), $64-88
+	MOVQ      dst+0(FP), AX
+	MOVQ      c+32(FP), DX
+	MOVQ      tapStride+48(FP), BX
+	MOVQ      axes+64(FP), SI
+	MOVQ      table+72(FP), DI
+	MOVQ      follow+56(FP), R8
+	SHLQ      $0x02, BX
+	LEAQ      (BX)(BX*2), R9
+	LEAQ      31(SP), R10
+	ANDQ      $-32, R10
+	VXORPS    X0, X0, X0
+	VCVTSD2SS 48(SI), X0, X0
+	VMOVSS    X0, 16(R10)
+	XORQ      R11, R11
+
+row:
+	CMPQ R11, rows+16(FP)
+	JGE  end
+	XORQ R12, R12
+
+many:
+	VXORPS     X0, X0, X0
+	VCVTSI2SDQ R11, X0, X0
+	VMULSD     16(SI), X0, X0
+	VADDSD     (SI), X0, X0
+	VXORPS     X2, X2, X2
+	VCVTSI2SDQ R12, X2, X2
+	VMULSD     8(SI), X2, X2
+	VADDSD     X0, X2, X0
+	VMAXSD     24(SI), X0, X0
+	VMINSD     32(SI), X0, X0
+	VROUNDSD   $0x01, X0, X0, X1
+	VSUBSD     X1, X0, X0
+	VCVTSD2SS  X0, X0, X0
+	VMOVSS     X0, (R10)
+	VMOVSD     40(SI), X2
+	VSUBSD     X1, X2, X2
+	VCVTSD2SS  X2, X2, X2
+	VMOVSS     X2, 8(R10)
+	VCVTTSD2SI X1, CX
+	MOVL       (R8), R13
+	ANDL       R12, R13
+	NEGL       R13
+	ADDL       CX, R13
+	MOVL       R13, 12(R10)
+	NEGL       CX
+	VCVTSI2SSL CX, X2, X2
+	VMOVSS     X2, 4(R10)
+	VMOVUPS    (DI), Y0
+
+eight:
+	VBROADCASTSS 16(R10), Y1
+	VMULPS       Y1, Y0, Y2
+	VBROADCASTSS (R10), Y1
+	VADDPS       Y1, Y2, Y2
+	VANDPS       (R8), Y0, Y3
+	VADDPS       32(DI), Y0, Y0
+	VBROADCASTSS 4(R10), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMAXPS       Y1, Y2, Y2
+	VBROADCASTSS 8(R10), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMINPS       Y1, Y2, Y2
+	VROUNDPS     $0x01, Y2, Y1
+	VSUBPS       Y1, Y2, Y2
+	VCVTTPS2DQ   Y1, Y1
+	VPBROADCASTD 12(R10), Y3
+	VPADDD       Y3, Y1, Y1
+	VSUBPS       64(DI), Y2, Y2
+	VMULPS       Y2, Y2, Y3
+	VMULPS       96(DI), Y3, Y4
+	VADDPS       128(DI), Y4, Y4
+	VMULPS       160(DI), Y3, Y5
+	VADDPS       192(DI), Y5, Y5
+	VMULPS       Y2, Y5, Y5
+	VSUBPS       Y5, Y4, Y6
+	VADDPS       Y5, Y4, Y4
+	VMULPS       224(DI), Y3, Y5
+	VADDPS       256(DI), Y5, Y5
+	VMULPS       288(DI), Y3, Y3
+	VADDPS       320(DI), Y3, Y3
+	VMULPS       Y2, Y3, Y3
+	VSUBPS       Y3, Y5, Y2
+	VADDPS       Y3, Y5, Y3
+	VPBROADCASTD X1, Y5
+	VPCMPEQD     Y5, Y1, Y5
+	VMOVMSKPS    Y5, R13
+	VMOVD        X1, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R12*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y5
+	VMULPS       (CX)(BX*1), Y2, Y7
+	VADDPS       Y7, Y5, Y5
+	VMULPS       (CX)(BX*2), Y3, Y7
+	VMULPS       (CX)(R9*1), Y4, Y8
+	VADDPS       Y8, Y7, Y7
+	VADDPS       Y7, Y5, Y5
+	XORL         $0x000000ff, R13
+	JNZ          more
+
+summed:
+	MOVQ    width+24(FP), CX
+	SUBQ    R12, CX
+	CMPQ    CX, $+8
+	JL      tail
+	VMOVUPS Y5, (AX)(R12*4)
+	ADDQ    $0x08, R12
+	CMPQ    R12, width+24(FP)
+	JGE     nextRow
+	TESTQ   $0x0000003f, R12
+	JNZ     eight
+	JMP     many
+
+nextRow:
+	MOVQ dstStride+8(FP), CX
+	LEAQ (AX)(CX*4), AX
+	MOVQ rowStride+40(FP), CX
+	LEAQ (DX)(CX*4), DX
+	INCQ R11
+	JMP  row
+
+tail:
+	MOVQ       masks+80(FP), R13
+	NEGQ       CX
+	VMOVUPS    32(R13)(CX*4), Y0
+	VMASKMOVPS Y5, Y0, (AX)(R12*4)
+	JMP        nextRow
+
+more:
+	MOVQ width+24(FP), CX
+	SUBQ R12, CX
+	CMPQ CX, $+8
+	JGE  all
+	MOVQ $0x00000001, R14
+	SHLQ CL, R14
+	DECQ R14
+	ANDL R14, R13
+	JZ   summed
+
+all:
+	BSFL         R13, R15
+	VMOVD        R15, X7
+	VPBROADCASTD X7, Y7
+	VPERMD       Y1, Y7, Y7
+	VPCMPEQD     Y7, Y1, Y8
+	VMOVD        X7, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R12*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y7
+	VMULPS       (CX)(BX*1), Y2, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(BX*2), Y3, Y9
+	VMULPS       (CX)(R9*1), Y4, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y7, Y7
+	VBLENDVPS    Y8, Y7, Y5, Y5
+	VMOVMSKPS    Y8, CX
+	NOTL         CX
+	ANDL         CX, R13
+	JNZ          all
+	JMP          summed
+
+end:
+	VZEROUPPER
+	RET
+
+// func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·pass5(SB), $64-88
+	MOVQ      dst+0(FP), AX
+	MOVQ      c+32(FP), DX
+	MOVQ      tapStride+48(FP), BX
+	MOVQ      axes+64(FP), SI
+	MOVQ      table+72(FP), DI
+	MOVQ      follow+56(FP), R8
+	SHLQ      $0x02, BX
+	LEAQ      (BX)(BX*2), R9
+	LEAQ      (BX)(BX*4), R10
+	LEAQ      31(SP), R11
+	ANDQ      $-32, R11
+	VXORPS    X0, X0, X0
+	VCVTSD2SS 48(SI), X0, X0
+	VMOVSS    X0, 16(R11)
+	XORQ      R12, R12
+
+row:
+	CMPQ R12, rows+16(FP)
+	JGE  end
+	XORQ R13, R13
+
+many:
+	VXORPS     X0, X0, X0
+	VCVTSI2SDQ R12, X0, X0
+	VMULSD     16(SI), X0, X0
+	VADDSD     (SI), X0, X0
+	VXORPS     X2, X2, X2
+	VCVTSI2SDQ R13, X2, X2
+	VMULSD     8(SI), X2, X2
+	VADDSD     X0, X2, X0
+	VMAXSD     24(SI), X0, X0
+	VMINSD     32(SI), X0, X0
+	VROUNDSD   $0x01, X0, X0, X1
+	VSUBSD     X1, X0, X0
+	VCVTSD2SS  X0, X0, X0
+	VMOVSS     X0, (R11)
+	VMOVSD     40(SI), X2
+	VSUBSD     X1, X2, X2
+	VCVTSD2SS  X2, X2, X2
+	VMOVSS     X2, 8(R11)
+	VCVTTSD2SI X1, CX
+	MOVL       (R8), R14
+	ANDL       R13, R14
+	NEGL       R14
+	ADDL       CX, R14
+	MOVL       R14, 12(R11)
+	NEGL       CX
+	VCVTSI2SSL CX, X2, X2
+	VMOVSS     X2, 4(R11)
+	VMOVUPS    (DI), Y0
+
+eight:
+	VBROADCASTSS 16(R11), Y1
+	VMULPS       Y1, Y0, Y2
+	VBROADCASTSS (R11), Y1
+	VADDPS       Y1, Y2, Y2
+	VANDPS       (R8), Y0, Y3
+	VADDPS       32(DI), Y0, Y0
+	VBROADCASTSS 4(R11), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMAXPS       Y1, Y2, Y2
+	VBROADCASTSS 8(R11), Y1
+	VSUBPS       Y3, Y1, Y1
+	VMINPS       Y1, Y2, Y2
+	VROUNDPS     $0x01, Y2, Y1
+	VSUBPS       Y1, Y2, Y2
+	VCVTTPS2DQ   Y1, Y1
+	VPBROADCASTD 12(R11), Y3
+	VPADDD       Y3, Y1, Y1
+	VSUBPS       64(DI), Y2, Y2
+	VMULPS       Y2, Y2, Y3
+	VMULPS       96(DI), Y3, Y4
+	VADDPS       128(DI), Y4, Y4
+	VMULPS       Y3, Y4, Y4
+	VADDPS       160(DI), Y4, Y4
+	VMULPS       192(DI), Y3, Y5
+	VADDPS       224(DI), Y5, Y5
+	VMULPS       Y3, Y5, Y5
+	VADDPS       256(DI), Y5, Y5
+	VMULPS       Y2, Y5, Y5
+	VSUBPS       Y5, Y4, Y6
+	VADDPS       Y5, Y4, Y4
+	VMULPS       288(DI), Y3, Y5
+	VADDPS       320(DI), Y5, Y5
+	VMULPS       Y3, Y5, Y5
+	VADDPS       352(DI), Y5, Y5
+	VMULPS       384(DI), Y3, Y7
+	VADDPS       416(DI), Y7, Y7
+	VMULPS       Y3, Y7, Y7
+	VADDPS       448(DI), Y7, Y7
+	VMULPS       Y2, Y7, Y7
+	VSUBPS       Y7, Y5, Y8
+	VADDPS       Y7, Y5, Y5
+	VMULPS       480(DI), Y3, Y7
+	VADDPS       512(DI), Y7, Y7
+	VMULPS       Y3, Y7, Y7
+	VADDPS       544(DI), Y7, Y7
+	VMULPS       576(DI), Y3, Y9
+	VADDPS       608(DI), Y9, Y9
+	VMULPS       Y3, Y9, Y9
+	VADDPS       640(DI), Y9, Y9
+	VMULPS       Y2, Y9, Y9
+	VSUBPS       Y9, Y7, Y2
+	VADDPS       Y9, Y7, Y3
+	VPBROADCASTD X1, Y7
+	VPCMPEQD     Y7, Y1, Y7
+	VMOVMSKPS    Y7, R14
+	VMOVD        X1, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R13*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y7
+	VMULPS       (CX)(BX*1), Y8, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(BX*2), Y2, Y9
+	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX)(R9*1), Y3, Y9
+	VMULPS       (CX)(BX*4), Y5, Y10
+	VADDPS       Y10, Y9, Y9
+	VMULPS       (CX)(R10*1), Y4, Y10
+	VADDPS       Y10, Y9, Y9
+	VADDPS       Y9, Y7, Y7
+	XORL         $0x000000ff, R14
+	JNZ          more
+
+summed:
+	MOVQ    width+24(FP), CX
+	SUBQ    R13, CX
+	CMPQ    CX, $+8
+	JL      tail
+	VMOVUPS Y7, (AX)(R13*4)
+	ADDQ    $0x08, R13
+	CMPQ    R13, width+24(FP)
+	JGE     nextRow
+	TESTQ   $0x0000003f, R13
+	JNZ     eight
+	JMP     many
+
+nextRow:
+	MOVQ dstStride+8(FP), CX
+	LEAQ (AX)(CX*4), AX
+	MOVQ rowStride+40(FP), CX
+	LEAQ (DX)(CX*4), DX
+	INCQ R12
+	JMP  row
+
+tail:
+	MOVQ       masks+80(FP), R14
+	NEGQ       CX
+	VMOVUPS    32(R14)(CX*4), Y0
+	VMASKMOVPS Y7, Y0, (AX)(R13*4)
+	JMP        nextRow
+
+more:
+	MOVQ width+24(FP), CX
+	SUBQ R13, CX
+	CMPQ CX, $+8
+	JGE  all
+	MOVQ $0x00000001, R15
+	SHLQ CL, R15
+	DECQ R15
+	ANDL R15, R14
+	JZ   summed
+
+all:
+	BSFL         R14, BP
+	VMOVD        BP, X9
+	VPBROADCASTD X9, Y9
+	VPERMD       Y1, Y9, Y9
+	VPCMPEQD     Y9, Y1, Y10
+	VMOVD        X9, CX
+	MOVLQSX      CX, CX
+	IMULQ        BX, CX
+	LEAQ         (CX)(R13*4), CX
+	ADDQ         DX, CX
+	VMULPS       (CX), Y6, Y9
+	VMULPS       (CX)(BX*1), Y8, Y11
+	VADDPS       Y11, Y9, Y9
+	VMULPS       (CX)(BX*2), Y2, Y11
+	VADDPS       Y11, Y9, Y9
+	VMULPS       (CX)(R9*1), Y3, Y11
+	VMULPS       (CX)(BX*4), Y5, Y12
+	VADDPS       Y12, Y11, Y11
+	VMULPS       (CX)(R10*1), Y4, Y12
+	VADDPS       Y12, Y11, Y11
+	VADDPS       Y11, Y9, Y9
+	VBLENDVPS    Y10, Y9, Y7, Y7
+	VMOVMSKPS    Y10, CX
+	NOTL         CX
+	ANDL         CX, R14
+	JNZ          all
+	JMP          summed
+
+end:
 	VZEROUPPER
 	RET

@@ -40,6 +40,14 @@ func affineRow5(dst *float32, n int, c *float32, mx int, area int, axes *float64
 	panic("kernel: no assembly for this processor")
 }
 
+func flatRow3(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func flatRow5(dst *float32, n int, c *float32, mx int, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
 func strip3x32(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int) {
 	panic("kernel: no assembly for this processor")
 }
@@ -85,5 +93,21 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32) {
 }
 
 func abs(dst *float32, src *float32, n int, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int {
+	panic("kernel: no assembly for this processor")
+}
+
+func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }

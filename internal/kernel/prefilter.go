@@ -107,12 +107,29 @@ func (p *Prefilter) Size() [3]int { return p.m }
 // Run writes the coefficients of vol to the first elements of c, padding included.
 // c may be longer (see [Slack]); it must not overlap vol.
 func (p *Prefilter) Run(c, vol []float32) {
+	area, pad := p.m[0]*p.m[1], p.pad
+	check(len(c) >= area*p.m[2], "coefficients of another size")
+	p.planes(c[area*pad:], vol)
+	c = c[:area*p.m[2]]
+	p.axes[2].strips(c[area*pad:], area, area, p.work)
+	pads(c, area, p.n[2], pad)
+}
+
+// RunFlat does the same for a plane, whose third axis has one sample and no padding:
+// c begins with m[0]*m[1] coefficients, m as by [Prefilter.Size].
+func (p *Prefilter) RunFlat(c, plane []float32) {
+	check(p.n[2] == 1 && len(c) >= p.m[0]*p.m[1], "not a plane, or coefficients of another size")
+	p.planes(c, plane)
+}
+
+// planes filters along x and y, and pads there: plane k to c[m[0]*m[1]*k:].
+func (p *Prefilter) planes(c, vol []float32) {
 	nx, ny, nz := p.n[0], p.n[1], p.n[2]
-	mx, my, mz := p.m[0], p.m[1], p.m[2]
+	mx, my := p.m[0], p.m[1]
 	area, pad := mx*my, p.pad
-	check(len(vol) == nx*ny*nz && len(c) >= area*mz, "volume or coefficients of another size")
+	check(len(vol) == nx*ny*nz, "volume of another size")
 	// Along x, lanes are rows.
-	line := func(r int) int { return pad + mx*(pad+r%ny+my*(pad+r/ny)) } // in c
+	line := func(r int) int { return pad + mx*(pad+r%ny+my*(r/ny)) } // in c
 	for r0 := 0; r0 < ny*nz; r0 += stripLanes {
 		lanes := min(stripLanes, (ny*nz-r0+7)/8*8)
 		t := p.t[:mx*lanes]
@@ -135,13 +152,10 @@ func (p *Prefilter) Run(c, vol []float32) {
 		}
 	}
 	for k := range nz {
-		slab := c[area*(pad+k):][:area]
+		slab := c[area*k:][:area]
 		p.axes[1].strips(slab[mx*pad:], mx, mx, p.work)
 		pads(slab, mx, ny, pad)
 	}
-	c = c[:area*mz]
-	p.axes[2].strips(c[area*pad:], area, area, p.work)
-	pads(c, area, nz, pad)
 }
 
 // strips filters, in place, lines that lie across rows: row k at c[stride*k:], of
@@ -171,9 +185,23 @@ func (f *lineFilter) strips(c []float32, stride, width int, work []float32) {
 
 // strip filters 32 or 8 lines in place.
 func (f *lineFilter) strip(c []float32, stride int, work []float32, lanes int) {
-	check(len(c) >= stride*(f.n-1)+lanes && len(work) >= (f.n+2)*lanes, "strip of another size")
+	f.stripTo(c, stride, c, stride, work, lanes)
+}
+
+// stripTo filters 32 or 8 lines of src, row k at src[srcStride*k:], to dst, which
+// is src or does not overlap it.
+func (f *lineFilter) stripTo(dst []float32, dstStride int, src []float32, srcStride int, work []float32, lanes int) {
+	check(len(dst) >= dstStride*(f.n-1)+lanes && len(src) >= srcStride*(f.n-1)+lanes && len(work) >= (f.n+2)*lanes, "strip of another size")
+	if f.n < 3 {
+		for k := range f.n { // the ends are their own coefficients
+			copy(dst[dstStride*k:][:lanes], src[srcStride*k:][:lanes])
+		}
+		return
+	}
 	if !useAssembly {
-		f.stripPlain(c, stride, work, lanes)
+		for l := 0; l < lanes; l += 8 {
+			f.eightPlain(dst[l:], dstStride, src[l:], srcStride, work)
+		}
 		return
 	}
 	var w [2]*float32
@@ -192,24 +220,18 @@ func (f *lineFilter) strip(c []float32, stride int, work []float32, lanes int) {
 	case f.degree == 3:
 		run = strip3x8
 	}
-	run(&c[0], stride, &c[0], stride, &work[0], f.n, &f.factors[0], w[0], len(f.weights[0]), w[1], len(f.weights[1]))
+	run(&dst[0], dstStride, &src[0], srcStride, &work[0], f.n, &f.factors[0], w[0], len(f.weights[0]), w[1], len(f.weights[1]))
 }
 
-// stripPlain: what is left of a line less the straight one between its ends is odd
+// eightPlain: what is left of a line less the straight one between its ends is odd
 // about both, and the filter, being symmetric, leaves it so. Per pole z: causal c+[k] = s[k] + z c+[k-1],
 // anticausal c[k] = z (c[k+1] - c+[k]), zero at the end (Unser 1999, box 2).
 // The first sample is taken off by itself, before the slope: what an offset would
 // lose by rounding, the filter would amplify.
-func (f *lineFilter) stripPlain(c []float32, stride int, work []float32, lanes int) {
-	for l := 0; l < lanes; l += 8 {
-		f.eightPlain(c[l:], stride, work)
-	}
-}
-
-func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
+func (f *lineFilter) eightPlain(dst []float32, dstStride int, src []float32, srcStride int, work []float32) {
 	n := f.n
 	inner := work[:8*(n-2)] // rows 1 to n-2
-	first, end := *(*[8]float32)(c), (*[8]float32)(c[stride*(n-1):])
+	first, end := *(*[8]float32)(src), *(*[8]float32)(src[srcStride*(n-1):])
 	var slope, u [8]float32
 	for l, v := range first {
 		slope[l] = (end[l] - v) / f.factors[1]
@@ -217,7 +239,7 @@ func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
 	gain := f.factors[0]
 	for k := 1; k <= n-2; k++ {
 		kf := float32(k)
-		s, in := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(c[stride*k:])
+		s, in := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(src[srcStride*k:])
 		for l := range first {
 			s[l] = float32(gain * ((in[l] - first[l]) - float32(slope[l]*kf)))
 		}
@@ -272,9 +294,11 @@ func (f *lineFilter) eightPlain(c []float32, stride int, work []float32) {
 			r[7] = u7
 		}
 	}
+	copy(dst[:8], first[:])
+	copy(dst[dstStride*(n-1):][:8], end[:])
 	for k := 1; k <= n-2; k++ {
 		kf := float32(k)
-		r, out := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(c[stride*k:])
+		r, out := (*[8]float32)(inner[8*(k-1):]), (*[8]float32)(dst[dstStride*k:])
 		for l := range first {
 			out[l] = (r[l] + float32(slope[l]*kf)) + first[l]
 		}

@@ -1,6 +1,8 @@
 package main
 
 import (
+	"fmt"
+
 	. "github.com/mmcloughlin/avo/operand"
 	"github.com/mmcloughlin/avo/reg"
 )
@@ -22,16 +24,24 @@ const (
 )
 
 func affine() {
-	for _, degree := range []int{3, 5} {
-		affineRow(degree)
+	for _, dims := range []int{3, 2} {
+		for _, degree := range []int{3, 5} {
+			affineRow(degree, dims)
+		}
 	}
 }
 
-func affineRow(degree int) {
+// affineRow is for fields of three dimensions, or of two.
+func affineRow(degree, dims int) {
 	taps := degree + 1
-	name := map[int]string{3: "affineRow3", 5: "affineRow5"}[degree]
-	function(name, "func(dst *float32, n int, c *float32, mx, area int, axes *float64, table *float32, masks *int32)", name+" is the assembly of "+name+"Plain.")
-	dst, c, mx, area, axes, table := arg("dst"), arg("c"), arg("mx"), arg("area"), arg("axes"), arg("table")
+	name := fmt.Sprintf("%sRow%d", map[int]string{3: "affine", 2: "flat"}[dims], degree)
+	sizes := map[int]string{3: "mx, area", 2: "mx"}[dims]
+	function(name, "func(dst *float32, n int, c *float32, "+sizes+" int, axes *float64, table *float32, masks *int32)", name+" is the assembly of "+name+"Plain.")
+	dst, c, mx, axes, table := arg("dst"), arg("c"), arg("mx"), arg("axes"), arg("table")
+	area := reg.GPVirtual(nil)
+	if dims == 3 {
+		area = arg("area")
+	}
 	mx3, mx5 := g.GP64(), reg.GPVirtual(nil)
 	g.LEAQ(indexed(mx, mx, 2), mx3)
 	g.SHLQ(U8(2), mx3)
@@ -66,14 +76,14 @@ func affineRow(degree int) {
 	var fractionX reg.VecVirtual
 	p := g.GP64()
 	g.MOVQ(c, p)
-	for a := range 3 {
+	for a := range dims {
 		var cells, fracs [2]reg.VecVirtual
 		zero, limit := g.YMM(), g.YMM()
 		g.VXORPD(zero, zero, zero)
 		start, step := g.YMM(), g.YMM()
 		g.VBROADCASTSD(at(axes, 8*a), start)
-		g.VBROADCASTSD(at(axes, 24+8*a), step)
-		g.VBROADCASTSD(at(axes, 48+8*a), limit)
+		g.VBROADCASTSD(at(axes, 8*(dims+a)), step)
+		g.VBROADCASTSD(at(axes, 8*(2*dims+a)), limit)
 		for h := range 2 {
 			u, f := g.YMM(), g.YMM()
 			cells[h], fracs[h] = g.YMM(), g.YMM()
@@ -121,7 +131,7 @@ func affineRow(degree int) {
 
 	// Weights: of x in registers, of y and z in memory.
 	var wx [6]reg.VecVirtual
-	for a := 2; a >= 0; a-- {
+	for a := dims - 1; a >= 0; a-- {
 		t := fractionX
 		if a > 0 {
 			t = g.YMM()
@@ -151,11 +161,13 @@ func affineRow(degree int) {
 	}
 
 	sum := g.YMM()
-	g.VXORPS(sum, sum, sum)
 	w, z := g.GP64(), g.GP64()
-	g.MOVQ(work, w)
-	g.MOVQ(U32(taps), z)
-	g.Label("plane")
+	if dims == 3 {
+		g.VXORPS(sum, sum, sum)
+		g.MOVQ(work, w)
+		g.MOVQ(U32(taps), z)
+		g.Label("plane")
+	}
 	plane := g.YMM()
 	for y := range taps {
 		tapAt := func(k int) Mem {
@@ -195,11 +207,15 @@ func affineRow(degree int) {
 			accumulate(at(work, 32*y), part[0], plane, part[0])
 		}
 	}
-	accumulate(at(w, 32*taps), plane, sum, plane)
-	g.ADDQ(I8(32), w)
-	g.LEAQ(indexed(p, area, 4), p)
-	g.DECQ(z)
-	g.JNZ(LabelRef("plane"))
+	if dims == 3 {
+		accumulate(at(w, 32*taps), plane, sum, plane)
+		g.ADDQ(I8(32), w)
+		g.LEAQ(indexed(p, area, 4), p)
+		g.DECQ(z)
+		g.JNZ(LabelRef("plane"))
+	} else {
+		sum = plane
+	}
 
 	left := g.GP64()
 	g.MOVQ(onStack("n"), left)

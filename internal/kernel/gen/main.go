@@ -48,6 +48,9 @@ func generate() (map[string][]byte, error) {
 	prefilter()
 	gram()
 	rows()
+	locate()
+	cells()
+	passes()
 
 	f, err := g.Result()
 	if err != nil {

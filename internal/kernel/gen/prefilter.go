@@ -28,7 +28,7 @@ func prefilter() {
 func strip(degree, lanes int) {
 	name := fmt.Sprintf("strip%dx%d", degree, lanes)
 	function(name, "func(dst *float32, dstStride int, src *float32, srcStride int, work *float32, n int, factors *float32, w1 *float32, k1 int, w2 *float32, k2 int)",
-		fmt.Sprintf("%s is the assembly of stripPlain, degree %d, %d lanes.", name, degree, lanes))
+		fmt.Sprintf("%s is the assembly of eightPlain, degree %d, %d lanes.", name, degree, lanes))
 	vecs, row := lanes/8, 4*lanes
 	dst, ds, src, ss := arg("dst"), arg("dstStride"), arg("src"), arg("srcStride")
 	g.SHLQ(U8(2), ds)
