@@ -3992,141 +3992,158 @@ points_end:
 	RET
 
 // func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
-// Requires: AVX, AVX2
-TEXT ·pass3(SB), $64-88
+// Requires: AVX, AVX2, CMOV
+TEXT ·pass3(SB), $576-88
 	MOVQ      dst+0(FP), AX
 	MOVQ      c+32(FP), DX
 	MOVQ      tapStride+48(FP), BX
-	MOVQ      axes+64(FP), SI
-	MOVQ      table+72(FP), DI
-	MOVQ      follow+56(FP), R8
+	MOVQ      table+72(FP), SI
 	SHLQ      $0x02, BX
-	LEAQ      (BX)(BX*2), R9
-	LEAQ      31(SP), R10
-	ANDQ      $-32, R10
+	LEAQ      (BX)(BX*2), DI
+	LEAQ      31(SP), R8
+	ANDQ      $-32, R8
 	VXORPS    X0, X0, X0
-	VCVTSD2SS 48(SI), X0, X0
-	VMOVSS    X0, 16(R10)
-	XORQ      R11, R11
+	MOVQ      axes+64(FP), CX
+	VCVTSD2SS 48(CX), X0, X0
+	VMOVSS    X0, 16(R8)
+	XORQ      R9, R9
 
 row:
-	CMPQ R11, rows+16(FP)
+	CMPQ R9, rows+16(FP)
 	JGE  end
-	XORQ R12, R12
+	XORQ R10, R10
 
 many:
+	MOVQ       follow+56(FP), CX
+	MOVQ       axes+64(FP), R11
 	VXORPS     X0, X0, X0
-	VCVTSI2SDQ R11, X0, X0
-	VMULSD     16(SI), X0, X0
-	VADDSD     (SI), X0, X0
+	VCVTSI2SDQ R9, X0, X0
+	VMULSD     16(R11), X0, X0
+	VADDSD     (R11), X0, X0
 	VXORPS     X2, X2, X2
-	VCVTSI2SDQ R12, X2, X2
-	VMULSD     8(SI), X2, X2
+	VCVTSI2SDQ R10, X2, X2
+	VMULSD     8(R11), X2, X2
 	VADDSD     X0, X2, X0
-	VMAXSD     24(SI), X0, X0
-	VMINSD     32(SI), X0, X0
+	VMAXSD     24(R11), X0, X0
+	VMINSD     32(R11), X0, X0
 	VROUNDSD   $0x01, X0, X0, X1
 	VSUBSD     X1, X0, X0
 	VCVTSD2SS  X0, X0, X0
-	VMOVSS     X0, (R10)
-	VMOVSD     40(SI), X2
+	VMOVSS     X0, (R8)
+	VMOVSD     40(R11), X2
 	VSUBSD     X1, X2, X2
 	VCVTSD2SS  X2, X2, X2
-	VMOVSS     X2, 8(R10)
-	VCVTTSD2SI X1, CX
-	MOVL       (R8), R13
-	ANDL       R12, R13
-	NEGL       R13
-	ADDL       CX, R13
-	MOVL       R13, 12(R10)
-	NEGL       CX
-	VCVTSI2SSL CX, X2, X2
-	VMOVSS     X2, 4(R10)
-	VMOVUPS    (DI), Y0
+	VMOVSS     X2, 8(R8)
+	VCVTTSD2SI X1, R11
+	MOVL       (CX), R12
+	ANDL       R10, R12
+	NEGL       R12
+	ADDL       R11, R12
+	MOVL       R12, 12(R8)
+	NEGL       R11
+	VCVTSI2SSL R11, X2, X2
+	VMOVSS     X2, 4(R8)
+	VMOVUPS    (SI), Y0
+	MOVQ       width+24(FP), R12
+	SUBQ       R10, R12
+	MOVQ       $0x00000040, R11
+	CMPQ       R12, R11
+	CMOVQGT    R11, R12
+	XORQ       R11, R11
 
-eight:
-	VBROADCASTSS 16(R10), Y1
+place:
+	VBROADCASTSS 16(R8), Y1
 	VMULPS       Y1, Y0, Y2
-	VBROADCASTSS (R10), Y1
+	VBROADCASTSS (R8), Y1
 	VADDPS       Y1, Y2, Y2
-	VANDPS       (R8), Y0, Y3
-	VADDPS       32(DI), Y0, Y0
-	VBROADCASTSS 4(R10), Y1
+	VANDPS       (CX), Y0, Y3
+	VADDPS       32(SI), Y0, Y0
+	VBROADCASTSS 4(R8), Y1
 	VSUBPS       Y3, Y1, Y1
 	VMAXPS       Y1, Y2, Y2
-	VBROADCASTSS 8(R10), Y1
+	VBROADCASTSS 8(R8), Y1
 	VSUBPS       Y3, Y1, Y1
 	VMINPS       Y1, Y2, Y2
 	VROUNDPS     $0x01, Y2, Y1
 	VSUBPS       Y1, Y2, Y2
 	VCVTTPS2DQ   Y1, Y1
-	VPBROADCASTD 12(R10), Y3
+	VPBROADCASTD 12(R8), Y3
 	VPADDD       Y3, Y1, Y1
-	VSUBPS       64(DI), Y2, Y2
-	VMULPS       Y2, Y2, Y3
-	VMULPS       96(DI), Y3, Y4
-	VADDPS       128(DI), Y4, Y4
-	VMULPS       160(DI), Y3, Y5
-	VADDPS       192(DI), Y5, Y5
-	VMULPS       Y2, Y5, Y5
-	VSUBPS       Y5, Y4, Y6
-	VADDPS       Y5, Y4, Y4
-	VMULPS       224(DI), Y3, Y5
-	VADDPS       256(DI), Y5, Y5
-	VMULPS       288(DI), Y3, Y3
-	VADDPS       320(DI), Y3, Y3
-	VMULPS       Y2, Y3, Y3
-	VSUBPS       Y3, Y5, Y2
-	VADDPS       Y3, Y5, Y3
-	VPBROADCASTD X1, Y5
-	VPCMPEQD     Y5, Y1, Y5
-	VMOVMSKPS    Y5, R13
-	VMOVD        X1, CX
+	VSUBPS       64(SI), Y2, Y2
+	VMOVDQA      Y1, 32(R8)(R11*4)
+	VMOVAPS      Y2, 288(R8)(R11*4)
+	ADDQ         $0x08, R11
+	CMPQ         R11, R12
+	JL           place
+	XORQ         R11, R11
+
+eight:
+	VMOVDQA      32(R8)(R11*4), Y0
+	VMOVAPS      288(R8)(R11*4), Y1
+	VMULPS       Y1, Y1, Y2
+	VMULPS       96(SI), Y2, Y3
+	VADDPS       128(SI), Y3, Y3
+	VMULPS       160(SI), Y2, Y4
+	VADDPS       192(SI), Y4, Y4
+	VMULPS       Y1, Y4, Y4
+	VSUBPS       Y4, Y3, Y5
+	VADDPS       Y4, Y3, Y3
+	VMULPS       224(SI), Y2, Y4
+	VADDPS       256(SI), Y4, Y4
+	VMULPS       288(SI), Y2, Y2
+	VADDPS       320(SI), Y2, Y2
+	VMULPS       Y1, Y2, Y2
+	VSUBPS       Y2, Y4, Y1
+	VADDPS       Y2, Y4, Y2
+	VPBROADCASTD X0, Y4
+	VPCMPEQD     Y4, Y0, Y4
+	VMOVMSKPS    Y4, R13
+	VMOVD        X0, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
-	LEAQ         (CX)(R12*4), CX
+	LEAQ         (CX)(R10*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y6, Y5
-	VMULPS       (CX)(BX*1), Y2, Y7
-	VADDPS       Y7, Y5, Y5
-	VMULPS       (CX)(BX*2), Y3, Y7
-	VMULPS       (CX)(R9*1), Y4, Y8
-	VADDPS       Y8, Y7, Y7
-	VADDPS       Y7, Y5, Y5
+	VMULPS       (CX), Y5, Y4
+	VMULPS       (CX)(BX*1), Y1, Y6
+	VADDPS       Y6, Y4, Y4
+	VMULPS       (CX)(BX*2), Y2, Y6
+	VMULPS       (CX)(DI*1), Y3, Y7
+	VADDPS       Y7, Y6, Y6
+	VADDPS       Y6, Y4, Y4
 	XORL         $0x000000ff, R13
 	JNZ          more
 
 summed:
-	MOVQ    width+24(FP), CX
-	SUBQ    R12, CX
+	MOVQ    R12, CX
+	SUBQ    R11, CX
 	CMPQ    CX, $+8
 	JL      tail
-	VMOVUPS Y5, (AX)(R12*4)
-	ADDQ    $0x08, R12
-	CMPQ    R12, width+24(FP)
-	JGE     nextRow
-	TESTQ   $0x0000003f, R12
-	JNZ     eight
-	JMP     many
+	VMOVUPS Y4, (AX)(R10*4)
+	ADDQ    $0x08, R10
+	ADDQ    $0x08, R11
+	CMPQ    R11, R12
+	JL      eight
+	CMPQ    R10, width+24(FP)
+	JL      many
 
 nextRow:
 	MOVQ dstStride+8(FP), CX
 	LEAQ (AX)(CX*4), AX
 	MOVQ rowStride+40(FP), CX
 	LEAQ (DX)(CX*4), DX
-	INCQ R11
+	INCQ R9
 	JMP  row
 
 tail:
-	MOVQ       masks+80(FP), R13
+	MOVQ       masks+80(FP), R11
 	NEGQ       CX
-	VMOVUPS    32(R13)(CX*4), Y0
-	VMASKMOVPS Y5, Y0, (AX)(R12*4)
+	VMOVUPS    32(R11)(CX*4), Y0
+	VMASKMOVPS Y4, Y0, (AX)(R10*4)
 	JMP        nextRow
 
 more:
-	MOVQ width+24(FP), CX
-	SUBQ R12, CX
+	MOVQ R12, CX
+	SUBQ R11, CX
 	CMPQ CX, $+8
 	JGE  all
 	MOVQ $0x00000001, R14
@@ -4137,24 +4154,24 @@ more:
 
 all:
 	BSFL         R13, R15
-	VMOVD        R15, X7
-	VPBROADCASTD X7, Y7
-	VPERMD       Y1, Y7, Y7
-	VPCMPEQD     Y7, Y1, Y8
-	VMOVD        X7, CX
+	VMOVD        R15, X6
+	VPBROADCASTD X6, Y6
+	VPERMD       Y0, Y6, Y6
+	VPCMPEQD     Y6, Y0, Y7
+	VMOVD        X6, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
-	LEAQ         (CX)(R12*4), CX
+	LEAQ         (CX)(R10*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y6, Y7
-	VMULPS       (CX)(BX*1), Y2, Y9
-	VADDPS       Y9, Y7, Y7
-	VMULPS       (CX)(BX*2), Y3, Y9
-	VMULPS       (CX)(R9*1), Y4, Y10
-	VADDPS       Y10, Y9, Y9
-	VADDPS       Y9, Y7, Y7
-	VBLENDVPS    Y8, Y7, Y5, Y5
-	VMOVMSKPS    Y8, CX
+	VMULPS       (CX), Y5, Y6
+	VMULPS       (CX)(BX*1), Y1, Y8
+	VADDPS       Y8, Y6, Y6
+	VMULPS       (CX)(BX*2), Y2, Y8
+	VMULPS       (CX)(DI*1), Y3, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y6, Y6
+	VBLENDVPS    Y7, Y6, Y4, Y4
+	VMOVMSKPS    Y7, CX
 	NOTL         CX
 	ANDL         CX, R13
 	JNZ          all
@@ -4165,165 +4182,182 @@ end:
 	RET
 
 // func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
-// Requires: AVX, AVX2
-TEXT ·pass5(SB), $64-88
+// Requires: AVX, AVX2, CMOV
+TEXT ·pass5(SB), $576-88
 	MOVQ      dst+0(FP), AX
 	MOVQ      c+32(FP), DX
 	MOVQ      tapStride+48(FP), BX
-	MOVQ      axes+64(FP), SI
-	MOVQ      table+72(FP), DI
-	MOVQ      follow+56(FP), R8
+	MOVQ      table+72(FP), SI
 	SHLQ      $0x02, BX
-	LEAQ      (BX)(BX*2), R9
-	LEAQ      (BX)(BX*4), R10
-	LEAQ      31(SP), R11
-	ANDQ      $-32, R11
+	LEAQ      (BX)(BX*2), DI
+	LEAQ      (BX)(BX*4), R8
+	LEAQ      31(SP), R9
+	ANDQ      $-32, R9
 	VXORPS    X0, X0, X0
-	VCVTSD2SS 48(SI), X0, X0
-	VMOVSS    X0, 16(R11)
-	XORQ      R12, R12
+	MOVQ      axes+64(FP), CX
+	VCVTSD2SS 48(CX), X0, X0
+	VMOVSS    X0, 16(R9)
+	XORQ      R10, R10
 
 row:
-	CMPQ R12, rows+16(FP)
+	CMPQ R10, rows+16(FP)
 	JGE  end
-	XORQ R13, R13
+	XORQ R11, R11
 
 many:
+	MOVQ       follow+56(FP), CX
+	MOVQ       axes+64(FP), R12
 	VXORPS     X0, X0, X0
-	VCVTSI2SDQ R12, X0, X0
-	VMULSD     16(SI), X0, X0
-	VADDSD     (SI), X0, X0
+	VCVTSI2SDQ R10, X0, X0
+	VMULSD     16(R12), X0, X0
+	VADDSD     (R12), X0, X0
 	VXORPS     X2, X2, X2
-	VCVTSI2SDQ R13, X2, X2
-	VMULSD     8(SI), X2, X2
+	VCVTSI2SDQ R11, X2, X2
+	VMULSD     8(R12), X2, X2
 	VADDSD     X0, X2, X0
-	VMAXSD     24(SI), X0, X0
-	VMINSD     32(SI), X0, X0
+	VMAXSD     24(R12), X0, X0
+	VMINSD     32(R12), X0, X0
 	VROUNDSD   $0x01, X0, X0, X1
 	VSUBSD     X1, X0, X0
 	VCVTSD2SS  X0, X0, X0
-	VMOVSS     X0, (R11)
-	VMOVSD     40(SI), X2
+	VMOVSS     X0, (R9)
+	VMOVSD     40(R12), X2
 	VSUBSD     X1, X2, X2
 	VCVTSD2SS  X2, X2, X2
-	VMOVSS     X2, 8(R11)
-	VCVTTSD2SI X1, CX
-	MOVL       (R8), R14
-	ANDL       R13, R14
-	NEGL       R14
-	ADDL       CX, R14
-	MOVL       R14, 12(R11)
-	NEGL       CX
-	VCVTSI2SSL CX, X2, X2
-	VMOVSS     X2, 4(R11)
-	VMOVUPS    (DI), Y0
+	VMOVSS     X2, 8(R9)
+	VCVTTSD2SI X1, R12
+	MOVL       (CX), R13
+	ANDL       R11, R13
+	NEGL       R13
+	ADDL       R12, R13
+	MOVL       R13, 12(R9)
+	NEGL       R12
+	VCVTSI2SSL R12, X2, X2
+	VMOVSS     X2, 4(R9)
+	VMOVUPS    (SI), Y0
+	MOVQ       width+24(FP), R13
+	SUBQ       R11, R13
+	MOVQ       $0x00000040, R12
+	CMPQ       R13, R12
+	CMOVQGT    R12, R13
+	XORQ       R12, R12
 
-eight:
-	VBROADCASTSS 16(R11), Y1
+place:
+	VBROADCASTSS 16(R9), Y1
 	VMULPS       Y1, Y0, Y2
-	VBROADCASTSS (R11), Y1
+	VBROADCASTSS (R9), Y1
 	VADDPS       Y1, Y2, Y2
-	VANDPS       (R8), Y0, Y3
-	VADDPS       32(DI), Y0, Y0
-	VBROADCASTSS 4(R11), Y1
+	VANDPS       (CX), Y0, Y3
+	VADDPS       32(SI), Y0, Y0
+	VBROADCASTSS 4(R9), Y1
 	VSUBPS       Y3, Y1, Y1
 	VMAXPS       Y1, Y2, Y2
-	VBROADCASTSS 8(R11), Y1
+	VBROADCASTSS 8(R9), Y1
 	VSUBPS       Y3, Y1, Y1
 	VMINPS       Y1, Y2, Y2
 	VROUNDPS     $0x01, Y2, Y1
 	VSUBPS       Y1, Y2, Y2
 	VCVTTPS2DQ   Y1, Y1
-	VPBROADCASTD 12(R11), Y3
+	VPBROADCASTD 12(R9), Y3
 	VPADDD       Y3, Y1, Y1
-	VSUBPS       64(DI), Y2, Y2
-	VMULPS       Y2, Y2, Y3
-	VMULPS       96(DI), Y3, Y4
-	VADDPS       128(DI), Y4, Y4
-	VMULPS       Y3, Y4, Y4
-	VADDPS       160(DI), Y4, Y4
-	VMULPS       192(DI), Y3, Y5
-	VADDPS       224(DI), Y5, Y5
-	VMULPS       Y3, Y5, Y5
-	VADDPS       256(DI), Y5, Y5
-	VMULPS       Y2, Y5, Y5
-	VSUBPS       Y5, Y4, Y6
-	VADDPS       Y5, Y4, Y4
-	VMULPS       288(DI), Y3, Y5
-	VADDPS       320(DI), Y5, Y5
-	VMULPS       Y3, Y5, Y5
-	VADDPS       352(DI), Y5, Y5
-	VMULPS       384(DI), Y3, Y7
-	VADDPS       416(DI), Y7, Y7
-	VMULPS       Y3, Y7, Y7
-	VADDPS       448(DI), Y7, Y7
-	VMULPS       Y2, Y7, Y7
-	VSUBPS       Y7, Y5, Y8
-	VADDPS       Y7, Y5, Y5
-	VMULPS       480(DI), Y3, Y7
-	VADDPS       512(DI), Y7, Y7
-	VMULPS       Y3, Y7, Y7
-	VADDPS       544(DI), Y7, Y7
-	VMULPS       576(DI), Y3, Y9
-	VADDPS       608(DI), Y9, Y9
-	VMULPS       Y3, Y9, Y9
-	VADDPS       640(DI), Y9, Y9
-	VMULPS       Y2, Y9, Y9
-	VSUBPS       Y9, Y7, Y2
-	VADDPS       Y9, Y7, Y3
-	VPBROADCASTD X1, Y7
-	VPCMPEQD     Y7, Y1, Y7
-	VMOVMSKPS    Y7, R14
-	VMOVD        X1, CX
+	VSUBPS       64(SI), Y2, Y2
+	VMOVDQA      Y1, 32(R9)(R12*4)
+	VMOVAPS      Y2, 288(R9)(R12*4)
+	ADDQ         $0x08, R12
+	CMPQ         R12, R13
+	JL           place
+	XORQ         R12, R12
+
+eight:
+	VMOVDQA      32(R9)(R12*4), Y0
+	VMOVAPS      288(R9)(R12*4), Y1
+	VMULPS       Y1, Y1, Y2
+	VMULPS       96(SI), Y2, Y3
+	VADDPS       128(SI), Y3, Y3
+	VMULPS       Y2, Y3, Y3
+	VADDPS       160(SI), Y3, Y3
+	VMULPS       192(SI), Y2, Y4
+	VADDPS       224(SI), Y4, Y4
+	VMULPS       Y2, Y4, Y4
+	VADDPS       256(SI), Y4, Y4
+	VMULPS       Y1, Y4, Y4
+	VSUBPS       Y4, Y3, Y5
+	VADDPS       Y4, Y3, Y3
+	VMULPS       288(SI), Y2, Y4
+	VADDPS       320(SI), Y4, Y4
+	VMULPS       Y2, Y4, Y4
+	VADDPS       352(SI), Y4, Y4
+	VMULPS       384(SI), Y2, Y6
+	VADDPS       416(SI), Y6, Y6
+	VMULPS       Y2, Y6, Y6
+	VADDPS       448(SI), Y6, Y6
+	VMULPS       Y1, Y6, Y6
+	VSUBPS       Y6, Y4, Y7
+	VADDPS       Y6, Y4, Y4
+	VMULPS       480(SI), Y2, Y6
+	VADDPS       512(SI), Y6, Y6
+	VMULPS       Y2, Y6, Y6
+	VADDPS       544(SI), Y6, Y6
+	VMULPS       576(SI), Y2, Y8
+	VADDPS       608(SI), Y8, Y8
+	VMULPS       Y2, Y8, Y8
+	VADDPS       640(SI), Y8, Y8
+	VMULPS       Y1, Y8, Y8
+	VSUBPS       Y8, Y6, Y1
+	VADDPS       Y8, Y6, Y2
+	VPBROADCASTD X0, Y6
+	VPCMPEQD     Y6, Y0, Y6
+	VMOVMSKPS    Y6, R14
+	VMOVD        X0, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
-	LEAQ         (CX)(R13*4), CX
+	LEAQ         (CX)(R11*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y6, Y7
-	VMULPS       (CX)(BX*1), Y8, Y9
-	VADDPS       Y9, Y7, Y7
-	VMULPS       (CX)(BX*2), Y2, Y9
-	VADDPS       Y9, Y7, Y7
-	VMULPS       (CX)(R9*1), Y3, Y9
-	VMULPS       (CX)(BX*4), Y5, Y10
-	VADDPS       Y10, Y9, Y9
-	VMULPS       (CX)(R10*1), Y4, Y10
-	VADDPS       Y10, Y9, Y9
-	VADDPS       Y9, Y7, Y7
+	VMULPS       (CX), Y5, Y6
+	VMULPS       (CX)(BX*1), Y7, Y8
+	VADDPS       Y8, Y6, Y6
+	VMULPS       (CX)(BX*2), Y1, Y8
+	VADDPS       Y8, Y6, Y6
+	VMULPS       (CX)(DI*1), Y2, Y8
+	VMULPS       (CX)(BX*4), Y4, Y9
+	VADDPS       Y9, Y8, Y8
+	VMULPS       (CX)(R8*1), Y3, Y9
+	VADDPS       Y9, Y8, Y8
+	VADDPS       Y8, Y6, Y6
 	XORL         $0x000000ff, R14
 	JNZ          more
 
 summed:
-	MOVQ    width+24(FP), CX
-	SUBQ    R13, CX
+	MOVQ    R13, CX
+	SUBQ    R12, CX
 	CMPQ    CX, $+8
 	JL      tail
-	VMOVUPS Y7, (AX)(R13*4)
-	ADDQ    $0x08, R13
-	CMPQ    R13, width+24(FP)
-	JGE     nextRow
-	TESTQ   $0x0000003f, R13
-	JNZ     eight
-	JMP     many
+	VMOVUPS Y6, (AX)(R11*4)
+	ADDQ    $0x08, R11
+	ADDQ    $0x08, R12
+	CMPQ    R12, R13
+	JL      eight
+	CMPQ    R11, width+24(FP)
+	JL      many
 
 nextRow:
 	MOVQ dstStride+8(FP), CX
 	LEAQ (AX)(CX*4), AX
 	MOVQ rowStride+40(FP), CX
 	LEAQ (DX)(CX*4), DX
-	INCQ R12
+	INCQ R10
 	JMP  row
 
 tail:
-	MOVQ       masks+80(FP), R14
+	MOVQ       masks+80(FP), R12
 	NEGQ       CX
-	VMOVUPS    32(R14)(CX*4), Y0
-	VMASKMOVPS Y7, Y0, (AX)(R13*4)
+	VMOVUPS    32(R12)(CX*4), Y0
+	VMASKMOVPS Y6, Y0, (AX)(R11*4)
 	JMP        nextRow
 
 more:
-	MOVQ width+24(FP), CX
-	SUBQ R13, CX
+	MOVQ R13, CX
+	SUBQ R12, CX
 	CMPQ CX, $+8
 	JGE  all
 	MOVQ $0x00000001, R15
@@ -4334,28 +4368,28 @@ more:
 
 all:
 	BSFL         R14, BP
-	VMOVD        BP, X9
-	VPBROADCASTD X9, Y9
-	VPERMD       Y1, Y9, Y9
-	VPCMPEQD     Y9, Y1, Y10
-	VMOVD        X9, CX
+	VMOVD        BP, X8
+	VPBROADCASTD X8, Y8
+	VPERMD       Y0, Y8, Y8
+	VPCMPEQD     Y8, Y0, Y9
+	VMOVD        X8, CX
 	MOVLQSX      CX, CX
 	IMULQ        BX, CX
-	LEAQ         (CX)(R13*4), CX
+	LEAQ         (CX)(R11*4), CX
 	ADDQ         DX, CX
-	VMULPS       (CX), Y6, Y9
-	VMULPS       (CX)(BX*1), Y8, Y11
-	VADDPS       Y11, Y9, Y9
-	VMULPS       (CX)(BX*2), Y2, Y11
-	VADDPS       Y11, Y9, Y9
-	VMULPS       (CX)(R9*1), Y3, Y11
-	VMULPS       (CX)(BX*4), Y5, Y12
-	VADDPS       Y12, Y11, Y11
-	VMULPS       (CX)(R10*1), Y4, Y12
-	VADDPS       Y12, Y11, Y11
-	VADDPS       Y11, Y9, Y9
-	VBLENDVPS    Y10, Y9, Y7, Y7
-	VMOVMSKPS    Y10, CX
+	VMULPS       (CX), Y5, Y8
+	VMULPS       (CX)(BX*1), Y7, Y10
+	VADDPS       Y10, Y8, Y8
+	VMULPS       (CX)(BX*2), Y1, Y10
+	VADDPS       Y10, Y8, Y8
+	VMULPS       (CX)(DI*1), Y2, Y10
+	VMULPS       (CX)(BX*4), Y4, Y11
+	VADDPS       Y11, Y10, Y10
+	VMULPS       (CX)(R8*1), Y3, Y11
+	VADDPS       Y11, Y10, Y10
+	VADDPS       Y10, Y8, Y8
+	VBLENDVPS    Y9, Y8, Y6, Y6
+	VMOVMSKPS    Y9, CX
 	NOTL         CX
 	ANDL         CX, R14
 	JNZ          all

@@ -31,6 +31,8 @@ const (
 	passHi       = 8
 	passCell     = 12 // int32
 	passSigma    = 16 // float32
+	passKeys     = 32 // int32, 64 of them
+	passPlaces   = 32 + 4*64
 )
 
 func passes() {
@@ -44,7 +46,7 @@ func passOf(degree int) {
 	name := fmt.Sprintf("pass%d", degree)
 	function(name, "func(dst *float32, dstStride, rows, width int, c *float32, rowStride, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)",
 		fmt.Sprintf("%s is the assembly of passPlain, degree %d.", name, degree))
-	dst, c, stride, axes, table, follow := arg("dst"), arg("c"), arg("tapStride"), arg("axes"), arg("table"), arg("follow")
+	dst, c, stride, table := arg("dst"), arg("c"), arg("tapStride"), arg("table")
 	g.SHLQ(U8(2), stride)
 	stride3, stride5 := g.GP64(), reg.GPVirtual(nil)
 	g.LEAQ(indexed(stride, stride, 2), stride3)
@@ -52,14 +54,15 @@ func passOf(degree int) {
 		stride5 = g.GP64()
 		g.LEAQ(indexed(stride, stride, 4), stride5)
 	}
-	work := scratch(32)
+	work := scratch(passPlaces + 4*64)
 	{
 		x := g.XMM()
 		g.VXORPS(x, x, x)
-		g.VCVTSD2SS(at(axes, passSlope), x, x)
+		g.VCVTSD2SS(at(arg("axes"), passSlope), x, x)
 		g.VMOVSS(x, at(work, passSigma))
 	}
 	row, i := g.GP64(), g.GP64()
+	j, end := g.GP64(), g.GP64() // of 64 outputs
 	g.XORQ(row, row)
 
 	g.Label("row")
@@ -69,7 +72,9 @@ func passOf(degree int) {
 
 	// 64 outputs are placed against the first of them.
 	g.Label("many")
+	follow := arg("follow")
 	{
+		axes := arg("axes")
 		u, k, x := g.XMM(), g.XMM(), g.XMM()
 		g.VXORPS(u, u, u)
 		g.VCVTSI2SDQ(row, u, u)
@@ -104,11 +109,18 @@ func passOf(degree int) {
 	number := g.YMM()
 	g.VMOVUPS(at(table, passNumbers), number)
 
-	g.Label("eight")
-	// Where the next eight lie: first taps, less their own numbers where taps follow,
-	// and distances from the middle of a cell.
-	key, s := g.YMM(), g.YMM()
+	// Where they lie: first taps, less their own numbers where taps follow, and
+	// distances from the middle of a cell. All of them before the first is used: what
+	// follows then does not wait for the whole chain of every eight.
+	g.MOVQ(onStack("width"), end)
+	g.SUBQ(i, end)
+	g.MOVQ(U32(64), j)
+	g.CMPQ(end, j)
+	g.CMOVQGT(j, end)
+	g.XORQ(j, j)
+	g.Label("place")
 	{
+		key, s := g.YMM(), g.YMM()
 		bound, floor, gone := g.YMM(), g.YMM(), g.YMM()
 		g.VMULPS(broadcast(at(work, passSigma)), number, s)
 		g.VADDPS(broadcast(at(work, passFraction)), s, s)
@@ -127,10 +139,21 @@ func passOf(degree int) {
 		k := g.YMM()
 		g.VPBROADCASTD(at(work, passCell), k)
 		g.VPADDD(k, key, key)
+		g.VSUBPS(at(table, passHalf), s, s)
+		g.VMOVDQA(key, Mem{Base: work, Index: j, Scale: 4, Disp: passKeys})
+		g.VMOVAPS(s, Mem{Base: work, Index: j, Scale: 4, Disp: passPlaces})
 	}
+	g.ADDQ(U8(8), j)
+	g.CMPQ(j, end)
+	g.JL(LabelRef("place"))
+	g.XORQ(j, j)
+
+	g.Label("eight")
+	key, s := g.YMM(), g.YMM()
+	g.VMOVDQA(Mem{Base: work, Index: j, Scale: 4, Disp: passKeys}, key)
+	g.VMOVAPS(Mem{Base: work, Index: j, Scale: 4, Disp: passPlaces}, s)
 
 	// Weights, about the middle of the cell.
-	g.VSUBPS(at(table, passHalf), s, s)
 	q := g.YMM()
 	g.VMULPS(s, s, q)
 	w := make([]reg.VecVirtual, taps)
@@ -199,17 +222,17 @@ func passOf(degree int) {
 
 	g.Label("summed")
 	left := g.GP64()
-	g.MOVQ(onStack("width"), left)
-	g.SUBQ(i, left)
+	g.MOVQ(end, left)
+	g.SUBQ(j, left)
 	g.CMPQ(left, I8(8))
 	g.JL(LabelRef("tail"))
 	g.VMOVUPS(v, indexed(dst, i, 4))
 	g.ADDQ(U8(8), i)
+	g.ADDQ(U8(8), j)
+	g.CMPQ(j, end)
+	g.JL(LabelRef("eight"))
 	g.CMPQ(i, onStack("width"))
-	g.JGE(LabelRef("nextRow"))
-	g.TESTQ(U32(63), i)
-	g.JNZ(LabelRef("eight"))
-	g.JMP(LabelRef("many"))
+	g.JL(LabelRef("many"))
 	g.Label("nextRow")
 	step := g.GP64()
 	g.MOVQ(onStack("dstStride"), step)
@@ -225,8 +248,8 @@ func passOf(degree int) {
 
 	// Lanes of another cell: the first of them, and those with it.
 	g.Label("more")
-	g.MOVQ(onStack("width"), left)
-	g.SUBQ(i, left)
+	g.MOVQ(end, left)
+	g.SUBQ(j, left)
 	g.CMPQ(left, I8(8))
 	g.JGE(LabelRef("all"))
 	keep := g.GP64()
