@@ -106,3 +106,13 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32)
 //
 //go:noescape
 func abs(dst *float32, src *float32, n int, masks *int32)
+
+// interpolate is the assembly of interpolatePlain.
+//
+//go:noescape
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool
+
+// interpolateEach is the assembly of interpolateEachPlain.
+//
+//go:noescape
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool

@@ -87,3 +87,11 @@ func tukey(w *float32, r *float32, n int, inverse float32, masks *int32) {
 func abs(dst *float32, src *float32, n int, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
+
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}
+
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}

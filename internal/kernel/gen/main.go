@@ -48,6 +48,8 @@ func generate() (map[string][]byte, error) {
 	prefilter()
 	gram()
 	rows()
+	interpolate(false)
+	interpolate(true)
 
 	f, err := g.Result()
 	if err != nil {
