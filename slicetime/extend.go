@@ -246,3 +246,20 @@ func (s *arScratch) predict(x []lanes, e, n, q int, limit *lanes) {
 		}
 	}
 }
+
+// forward writes e samples after x[:n], each held within limit.
+func (s *arScratch) forward(x []lanes, n, e, q int, limit *lanes) {
+	for h := range e {
+		past := x[n+h-q : n+h+1]
+		var f lanes
+		for k := range q {
+			a, u := &s.coef[k], &past[q-1-k]
+			for l := range a {
+				f[l] += float64(a[l] * u[l])
+			}
+		}
+		for l := range f {
+			past[q][l] = max(-limit[l], min(limit[l], f[l]))
+		}
+	}
+}

@@ -256,12 +256,12 @@ type failer interface {
 // checkPrediction extends the series and returns the largest predicted residual
 // as a share of the largest residual.
 func checkPrediction(t failer, x []float32) float64 {
-	p := newPlan(len(x), Options{})
+	p := newPlan(len(x))
 	s := p.newScratch()
 	for i, v := range x {
 		p.samples(s)[i] = lanes{float64(v)}
 	}
-	s.removeLine(p.samples(s))
+	removeLine(p.samples(s))
 	top := largest(p.samples(s))[0]
 	p.extend(s.x, &s.ar)
 	predicted := max(largest(s.x[:p.ext])[0], largest(s.x[p.ext+p.n : p.n+2*p.ext])[0])

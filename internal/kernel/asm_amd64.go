@@ -136,3 +136,13 @@ func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStri
 //
 //go:noescape
 func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+
+// interpolate is the assembly of interpolatePlain.
+//
+//go:noescape
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool
+
+// interpolateEach is the assembly of interpolateEachPlain.
+//
+//go:noescape
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool

@@ -4364,3 +4364,373 @@ all:
 end:
 	VZEROUPPER
 	RET
+
+// func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool
+// Requires: AVX, AVX2
+TEXT ·interpolate(SB), $0-49
+	MOVQ     dst+0(FP), AX
+	MOVQ     n+8(FP), CX
+	MOVQ     w+16(FP), DX
+	MOVQ     src+24(FP), BX
+	MOVQ     taps+32(FP), SI
+	MOVQ     like+40(FP), DI
+	VXORPS   Y0, Y0, Y0
+	VXORPS   Y1, Y1, Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLD   $0x1f, Y2, Y2
+	XORQ     R8, R8
+	MOVQ     CX, R11
+	ANDQ     $-32, R11
+
+by32:
+	CMPQ   R8, R11
+	JGE    by32_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	VXORPD Y10, Y10, Y10
+	XORQ   R9, R9
+
+by32_tap:
+	CMPQ         R9, SI
+	JGE          by32_tap_end
+	VBROADCASTSD (DX)(R9*8), Y11
+	MOVQ         (BX)(R9*8), R10
+	VCVTPS2PD    (R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y3, Y3
+	VCVTPS2PD    16(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y4, Y4
+	VCVTPS2PD    32(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y5, Y5
+	VCVTPS2PD    48(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y6, Y6
+	VCVTPS2PD    64(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y7, Y7
+	VCVTPS2PD    80(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y8, Y8
+	VCVTPS2PD    96(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y9, Y9
+	VCVTPS2PD    112(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y10, Y10
+	ADDQ         $0x00000001, R9
+	JMP          by32_tap
+
+by32_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y11
+	VBLENDVPS   Y11, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y11
+	VORPS       Y11, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	VCVTPD2PSY  Y5, X5
+	VCVTPD2PSY  Y6, X6
+	VINSERTF128 $0x01, X6, Y5, Y5
+	VMOVUPS     32(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y5, Y4
+	VBLENDVPS   Y4, Y3, Y5, Y5
+	VSUBPS      Y5, Y5, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y5, 32(AX)(R8*4)
+	VCVTPD2PSY  Y7, X7
+	VCVTPD2PSY  Y8, X8
+	VINSERTF128 $0x01, X8, Y7, Y7
+	VMOVUPS     64(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y7, Y4
+	VBLENDVPS   Y4, Y3, Y7, Y7
+	VSUBPS      Y7, Y7, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y7, 64(AX)(R8*4)
+	VCVTPD2PSY  Y9, X9
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X10, Y9, Y9
+	VMOVUPS     96(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y9, Y4
+	VBLENDVPS   Y4, Y3, Y9, Y9
+	VSUBPS      Y9, Y9, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y9, 96(AX)(R8*4)
+	ADDQ        $0x00000020, R8
+	JMP         by32
+
+by32_end:
+	MOVQ CX, R11
+	ANDQ $-8, R11
+
+by8:
+	CMPQ   R8, R11
+	JGE    by8_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	XORQ   R9, R9
+
+by8_tap:
+	CMPQ         R9, SI
+	JGE          by8_tap_end
+	VBROADCASTSD (DX)(R9*8), Y5
+	MOVQ         (BX)(R9*8), R10
+	VCVTPS2PD    (R10)(R8*4), Y6
+	VMULPD       Y5, Y6, Y6
+	VADDPD       Y6, Y3, Y3
+	VCVTPS2PD    16(R10)(R8*4), Y6
+	VMULPD       Y5, Y6, Y6
+	VADDPD       Y6, Y4, Y4
+	ADDQ         $0x00000001, R9
+	JMP          by8_tap
+
+by8_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y5
+	VBLENDVPS   Y5, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y5
+	VORPS       Y5, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	ADDQ        $0x00000008, R8
+	JMP         by8
+
+by8_end:
+one:
+	CMPQ   R8, CX
+	JGE    one_end
+	VXORPD Y3, Y3, Y3
+	XORQ   R9, R9
+
+one_tap:
+	CMPQ         R9, SI
+	JGE          one_tap_end
+	VBROADCASTSD (DX)(R9*8), Y4
+	MOVQ         (BX)(R9*8), R10
+	VMOVSS       (R10)(R8*4), X5
+	VCVTSS2SD    X5, X5, X5
+	VMULSD       X4, X5, X5
+	VADDSD       X5, X3, X3
+	ADDQ         $0x00000001, R9
+	JMP          one_tap
+
+one_tap_end:
+	VXORPS    Y4, Y4, Y4
+	VXORPS    Y5, Y5, Y5
+	VCVTSD2SS X3, X4, X4
+	VMOVSS    (DI)(R8*4), X5
+	VANDPS    Y2, Y5, Y5
+	VCMPPS    $0x00, Y1, Y4, Y3
+	VBLENDVPS Y3, Y5, Y4, Y4
+	VSUBPS    Y4, Y4, Y3
+	VORPS     Y3, Y0, Y0
+	VMOVSS    X4, (AX)(R8*4)
+	ADDQ      $0x00000001, R8
+	JMP       one
+
+one_end:
+	VPTEST Y0, Y0
+	SETEQ  AL
+	VZEROUPPER
+	MOVB   AL, ret+48(FP)
+	RET
+
+// func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool
+// Requires: AVX, AVX2
+TEXT ·interpolateEach(SB), $0-49
+	MOVQ     dst+0(FP), AX
+	MOVQ     n+8(FP), CX
+	MOVQ     w+16(FP), DX
+	MOVQ     src+24(FP), BX
+	MOVQ     taps+32(FP), SI
+	MOVQ     like+40(FP), DI
+	VXORPS   Y0, Y0, Y0
+	VXORPS   Y1, Y1, Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLD   $0x1f, Y2, Y2
+	XORQ     R8, R8
+	MOVQ     CX, R12
+	ANDQ     $-32, R12
+
+by32:
+	CMPQ   R8, R12
+	JGE    by32_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	VXORPD Y10, Y10, Y10
+	XORQ   R9, R9
+
+by32_tap:
+	CMPQ      R9, SI
+	JGE       by32_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VCVTPS2PD (R10)(R8*4), Y11
+	VMULPD    (R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y3, Y3
+	VCVTPS2PD 16(R10)(R8*4), Y11
+	VMULPD    32(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y4, Y4
+	VCVTPS2PD 32(R10)(R8*4), Y11
+	VMULPD    64(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y5, Y5
+	VCVTPS2PD 48(R10)(R8*4), Y11
+	VMULPD    96(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y6, Y6
+	VCVTPS2PD 64(R10)(R8*4), Y11
+	VMULPD    128(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y7, Y7
+	VCVTPS2PD 80(R10)(R8*4), Y11
+	VMULPD    160(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y8, Y8
+	VCVTPS2PD 96(R10)(R8*4), Y11
+	VMULPD    192(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y9, Y9
+	VCVTPS2PD 112(R10)(R8*4), Y11
+	VMULPD    224(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y10, Y10
+	ADDQ      $0x00000001, R9
+	JMP       by32_tap
+
+by32_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y11
+	VBLENDVPS   Y11, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y11
+	VORPS       Y11, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	VCVTPD2PSY  Y5, X5
+	VCVTPD2PSY  Y6, X6
+	VINSERTF128 $0x01, X6, Y5, Y5
+	VMOVUPS     32(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y5, Y4
+	VBLENDVPS   Y4, Y3, Y5, Y5
+	VSUBPS      Y5, Y5, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y5, 32(AX)(R8*4)
+	VCVTPD2PSY  Y7, X7
+	VCVTPD2PSY  Y8, X8
+	VINSERTF128 $0x01, X8, Y7, Y7
+	VMOVUPS     64(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y7, Y4
+	VBLENDVPS   Y4, Y3, Y7, Y7
+	VSUBPS      Y7, Y7, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y7, 64(AX)(R8*4)
+	VCVTPD2PSY  Y9, X9
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X10, Y9, Y9
+	VMOVUPS     96(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y9, Y4
+	VBLENDVPS   Y4, Y3, Y9, Y9
+	VSUBPS      Y9, Y9, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y9, 96(AX)(R8*4)
+	ADDQ        $0x00000020, R8
+	JMP         by32
+
+by32_end:
+	MOVQ CX, R12
+	ANDQ $-8, R12
+
+by8:
+	CMPQ   R8, R12
+	JGE    by8_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	XORQ   R9, R9
+
+by8_tap:
+	CMPQ      R9, SI
+	JGE       by8_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VCVTPS2PD (R10)(R8*4), Y5
+	VMULPD    (R11)(R8*8), Y5, Y5
+	VADDPD    Y5, Y3, Y3
+	VCVTPS2PD 16(R10)(R8*4), Y5
+	VMULPD    32(R11)(R8*8), Y5, Y5
+	VADDPD    Y5, Y4, Y4
+	ADDQ      $0x00000001, R9
+	JMP       by8_tap
+
+by8_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y5
+	VBLENDVPS   Y5, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y5
+	VORPS       Y5, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	ADDQ        $0x00000008, R8
+	JMP         by8
+
+by8_end:
+one:
+	CMPQ   R8, CX
+	JGE    one_end
+	VXORPD Y3, Y3, Y3
+	XORQ   R9, R9
+
+one_tap:
+	CMPQ      R9, SI
+	JGE       one_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VMOVSS    (R10)(R8*4), X4
+	VCVTSS2SD X4, X4, X4
+	VMULSD    (R11)(R8*8), X4, X4
+	VADDSD    X4, X3, X3
+	ADDQ      $0x00000001, R9
+	JMP       one_tap
+
+one_tap_end:
+	VXORPS    Y4, Y4, Y4
+	VXORPS    Y5, Y5, Y5
+	VCVTSD2SS X3, X4, X4
+	VMOVSS    (DI)(R8*4), X5
+	VANDPS    Y2, Y5, Y5
+	VCMPPS    $0x00, Y1, Y4, Y3
+	VBLENDVPS Y3, Y5, Y4, Y4
+	VSUBPS    Y4, Y4, Y3
+	VORPS     Y3, Y0, Y0
+	VMOVSS    X4, (AX)(R8*4)
+	ADDQ      $0x00000001, R8
+	JMP       one
+
+one_end:
+	VPTEST Y0, Y0
+	SETEQ  AL
+	VZEROUPPER
+	MOVB   AL, ret+48(FP)
+	RET

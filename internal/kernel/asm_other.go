@@ -111,3 +111,11 @@ func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStri
 func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
+
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}
+
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}

@@ -51,6 +51,8 @@ func generate() (map[string][]byte, error) {
 	locate()
 	cells()
 	passes()
+	interpolate(false)
+	interpolate(true)
 
 	f, err := g.Result()
 	if err != nil {

@@ -1,0 +1,213 @@
+package slicetime
+
+import (
+	"fmt"
+	"sync"
+	"sync/atomic"
+)
+
+// Window moves every slice of a run to one instant, volume by volume, with the sinc
+// kernel, from the volumes around each: a run need not be held to be corrected. It
+// gives the bytes that [Correct] gives.
+//
+// A volume needs those that its kernel reaches and, within the kernel's reach of an end
+// of the run, the 40 volumes at that end, from which what stands beyond is predicted.
+// The volumes near an end are made together when the first of them is asked for, and
+// kept ([WindowBytes]).
+//
+// Its methods may be called by several goroutines at once.
+type Window struct {
+	*sinc
+	ends  [2]kept // head and tail
+	desks sync.Pool
+}
+
+// NewWindow prepares for a run of nt volumes of nx*ny*nz voxels; s and ref are those of
+// [Correct], and opt.Kernel must be [Sinc]. It returns an [*ArgumentError] as Correct
+// does, and for another kernel.
+func NewWindow(nx, ny, nz, nt int, s Schedule, ref float64, opt Options) (*Window, error) {
+	if min(nx, ny, nz, nt) < 1 {
+		panic("slicetime: a run without voxels")
+	}
+	size := [3]int{nx, ny, nz}
+	if err := check(size, nt, s, ref, opt); err != nil {
+		return nil, err
+	}
+	if opt.Kernel != Sinc {
+		return nil, &ArgumentError{"kernel", opt.Kernel.String(), fmt.Sprintf("%s: a window of volumes is enough for it alone", Sinc)}
+	}
+	w := &Window{sinc: newSinc(size, nt, s.Axis, s.shifts(ref), opt)}
+	w.desks.New = func() any { return w.newDesk(false) }
+	for i, e := range []*end{&w.head, &w.tail} {
+		w.ends[i] = kept{end: e, done: make(chan struct{}), broken: make(chan struct{})}
+		w.ends[i].left.Store(int64(w.pieces.count))
+	}
+	return w, nil
+}
+
+// WindowBytes bounds from above what a [Window] of these arguments allocates, with
+// so many goroutines asking for volumes, besides the volumes it is given and fills; 0 for
+// arguments that [NewWindow] refuses.
+func WindowBytes(nx, ny, nz, nt int, s Schedule, ref float64, opt Options, workers int) int64 {
+	size := [3]int{nx, ny, nz}
+	if min(nx, ny, nz, nt) < 1 || check(size, nt, s, ref, opt) != nil || opt.Kernel != Sinc {
+		return 0
+	}
+	p := newSinc(size, nt, s.Axis, s.shifts(ref), opt)
+	return 4*int64(p.volume)*int64(p.head.count+p.tail.count) + sincBytes(size, nt, s.Axis, workers, opt)
+}
+
+// Needs returns the volumes that volume t is made of, first to last, both included and
+// inside the run. Neither ever falls as t rises, and they are at most as far apart
+// as the larger of 40 volumes and the reach to both sides with the whole samples of
+// the shifts; but a run that hardly exceeds that may be wanted whole.
+func (w *Window) Needs(t int) (first, last int) {
+	if t < 0 || t >= w.n {
+		panic("slicetime: no such volume")
+	}
+	first, last = max(0, t+w.least), min(w.n-1, t+w.most)
+	// Held ready from before the tail begins until the head is over, so that
+	// neither bound falls.
+	if w.head.count > 0 {
+		last = max(last, w.head.samples-1)
+	}
+	if w.tail.count > 0 {
+		first = min(first, w.tail.first)
+	}
+	if w.head.isTail {
+		first = 0
+	}
+	return first, last
+}
+
+// Volume writes volume t to dst, of nx*ny*nz voxels. vol gives the volumes that [Window.Needs]
+// names, as they were measured; it is called from this goroutine only, and what it
+// returns must stay as it is until Volume returns. dst must be none of them.
+func (w *Window) Volume(dst []float32, t int, vol func(t int) []float32) {
+	if t < 0 || t >= w.n || len(dst) != w.volume {
+		panic("slicetime: no such volume, or of another size")
+	}
+	if !w.moved {
+		copy(dst, w.given(vol, t))
+		return
+	}
+	for i := range w.ends {
+		if e := &w.ends[i]; t >= e.from && t < e.from+e.count {
+			e.make(w, vol)
+			copy(dst, e.volumes[t-e.from])
+			return
+		}
+	}
+	d := w.desks.Get().(*sincDesk)
+	whole := d.whole[:w.most-w.least+1]
+	for k := range whole {
+		whole[k] = w.given(vol, t+w.least+k)
+	}
+	for i := range w.pieces.count {
+		start, width, slice := w.pieces.at(i)
+		least, count := w.least, len(whole)
+		if slice >= 0 {
+			least, count = w.filters[slice].first, len(w.filters[slice].taps)
+		}
+		own, to := whole[-w.least][start:][:width], dst[start:][:width]
+		if count == 0 {
+			copy(to, own)
+			continue
+		}
+		for k := range count {
+			d.taps[k] = whole[least-w.least+k][start:][:width]
+		}
+		w.inside(d, to, own, slice)
+	}
+	d.leave()
+	w.desks.Put(d)
+}
+
+func (w *Window) given(vol func(t int) []float32, t int) []float32 {
+	v := vol(t)
+	if len(v) != w.volume {
+		panic(fmt.Sprintf("slicetime: volume %d is given with %d voxels, not %d", t, len(v), w.volume))
+	}
+	return v
+}
+
+// leave lets go of the caller's volumes.
+func (d *sincDesk) leave() {
+	clear(d.whole)
+	clear(d.taps)
+	clear(d.rows)
+}
+
+// kept is an end whose volumes are made once, by all who ask for one meanwhile.
+type kept struct {
+	*end
+	once    sync.Once
+	volumes [][]float32
+	next    atomic.Int64 // piece to be taken
+	left    atomic.Int64 // pieces not done
+	done    chan struct{}
+	broken  chan struct{} // closed when a piece cannot be made
+	stop    sync.Once
+}
+
+func (e *kept) make(w *Window, vol func(t int) []float32) {
+	select {
+	case <-e.done:
+		return
+	default:
+	}
+	e.once.Do(func() {
+		all := make([]float32, e.count*w.volume)
+		for j := range e.count {
+			e.volumes = append(e.volumes, all[j*w.volume:][:w.volume])
+		}
+	})
+	d := w.desks.Get().(*sincDesk)
+	ok := false
+	defer func() {
+		if !ok {
+			e.stop.Do(func() { close(e.broken) })
+		}
+	}()
+	out := make([][]float32, e.count)
+	whole := d.whole[:e.samples]
+	for u := range whole {
+		whole[u] = nil
+	}
+	for {
+		i := int(e.next.Add(1) - 1)
+		if i >= w.pieces.count {
+			break
+		}
+		if whole[0] == nil {
+			for u := range whole {
+				whole[u] = w.given(vol, e.first+u)
+			}
+		}
+		start, width, slice := w.pieces.at(i)
+		for u := range whole {
+			d.rows[u] = whole[u][start:][:width]
+		}
+		for j := range out {
+			out[j] = e.volumes[j][start:][:width]
+		}
+		if slice >= 0 && w.filters[slice].taps == nil {
+			for j := range out {
+				copy(out[j], d.rows[e.from+j-e.first])
+			}
+		} else {
+			w.edge(d, e.end, out, slice, width)
+		}
+		if e.left.Add(-1) == 0 {
+			close(e.done)
+		}
+	}
+	ok = true
+	d.leave()
+	w.desks.Put(d)
+	select {
+	case <-e.done:
+	case <-e.broken:
+		panic("slicetime: another goroutine failed at an end of the run")
+	}
+}
