@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -108,7 +109,7 @@ func WorkBytes(nx, ny, nz, nt, axis, workers int, opt Options) int64 {
 	}
 	m := int64(fftLength((nt + 2*extension + 1) / 2))
 	b := blocksOf(size, axis, blockWidth)
-	each := 4*int64(b.width)*int64(nt) + 8*laneCount*2*m + 32<<10
+	each := 4*int64(b.width)*int64(nt) + 8*laneCount*2*m + 4*laneCount*int64(nt) + 32<<10
 	return 4*8*m*int64(size[axis]+2) + each*int64(max(1, workers)) + 64<<10
 }
 
@@ -174,11 +175,12 @@ type desk struct {
 	varies  []bool
 	batch   [laneCount]int // voxels of the block that wait for a full batch
 	waiting int
+	out     []float32 // [sample][lane] of a batch that does not lie together
 	work    *scratch
 }
 
 func (c *correction) newDesk() *desk {
-	return &desk{samples: make([]float32, c.blocks.width*c.nt), varies: make([]bool, c.blocks.width), work: c.plan.newScratch()}
+	return &desk{samples: make([]float32, c.blocks.width*c.nt), varies: make([]bool, c.blocks.width), out: make([]float32, laneCount*c.nt), work: c.plan.newScratch()}
 }
 
 // block moves block i.
@@ -252,11 +254,17 @@ func (c *correction) flush(d *desk, m *move, width int) {
 	if d.waiting == 0 {
 		return
 	}
-	for l := d.waiting; l < laneCount; l++ {
-		d.batch[l] = d.batch[0]
-	}
 	x := c.plan.samples(d.work)
 	v := &d.batch
+	if first := v[0]; d.waiting == laneCount && v[laneCount-1] == first+laneCount-1 {
+		kernel.WidenLanes(x, d.samples[first:], width)
+		m.run(d.work, d.samples[first:], width)
+		d.waiting = 0
+		return
+	}
+	for l := d.waiting; l < laneCount; l++ {
+		v[l] = v[0]
+	}
 	for t := range x {
 		row := d.samples[t*width:][:width]
 		x[t] = lanes{
@@ -264,10 +272,11 @@ func (c *correction) flush(d *desk, m *move, width int) {
 			float64(row[v[4]]), float64(row[v[5]]), float64(row[v[6]]), float64(row[v[7]]),
 		}
 	}
-	for t, r := range m.run(d.work) {
-		row := d.samples[t*width:][:width]
-		for l, voxel := range d.batch[:d.waiting] {
-			row[voxel] = store(r[l])
+	m.run(d.work, d.out, laneCount)
+	for t := range x {
+		row, from := d.samples[t*width:][:width], d.out[t*laneCount:][:laneCount]
+		for l, voxel := range v[:d.waiting] {
+			row[voxel] = from[l]
 		}
 	}
 	d.waiting = 0

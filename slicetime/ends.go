@@ -177,7 +177,7 @@ type sincDesk struct {
 	batch   [laneCount]int // voxels of the piece that wait for a full batch
 	waiting int
 	x, r    []lanes // samples of an end with what stands beyond; residuals of the fit
-	ar      arScratch
+	ar      kernel.Autoregression
 
 	ring, head, tail [][]float32 // for work in place: volumes of a piece
 }
@@ -387,7 +387,8 @@ func (s *sinc) flush(d *sincDesk, e *end, f *filter, out [][]float32) {
 	}
 	for j := range out {
 		t := e.from + j - e.first // the sample, counted from the end's first
-		sums := dotTaps(f.taps, d.x[e.before+t+f.first:])
+		var sums lanes
+		kernel.SumLanes(&sums, f.taps, d.x[e.before+t+f.first:])
 		own := &x[t]
 		for l, voxel := range d.batch[:d.waiting] {
 			r := float32(sums[l])
@@ -405,24 +406,6 @@ func (s *sinc) flush(d *sincDesk, e *end, f *filter, out [][]float32) {
 	d.waiting = 0
 }
 
-// dotTaps is the sum of taps[k] x[k] for every lane, in the order of k.
-func dotTaps(taps []float64, x []lanes) lanes {
-	var s0, s1, s2, s3, s4, s5, s6, s7 float64
-	x = x[:len(taps)]
-	for k, w := range taps {
-		v := &x[k]
-		s0 += float64(w * v[0])
-		s1 += float64(w * v[1])
-		s2 += float64(w * v[2])
-		s3 += float64(w * v[3])
-		s4 += float64(w * v[4])
-		s5 += float64(w * v[5])
-		s6 += float64(w * v[6])
-		s7 += float64(w * v[7])
-	}
-	return lanes{s0, s1, s2, s3, s4, s5, s6, s7}
-}
-
 // beyond fills count samples past an end of the run, from index at of d.x in steps
 // (1 at the tail, -1 at the head): the line through the volumes nearest that end, and
 // about it the prediction, for as long as the extension is, led to zero. Time runs
@@ -436,14 +419,11 @@ func (s *sinc) beyond(d *sincDesk, at, step, count int, f *filter) {
 	for i := range n {
 		r[i] = d.x[at-step*(n-i)]
 	}
-	level, slope := removeLine(r[:n])
+	var level, slope, top lanes
+	kernel.Line(r[:n], &level, &slope, &top)
 	predicted := min(count, extension)
-	limit := largest(r[:n])
-	for l := range limit {
-		limit[l] *= predictionLimit
-	}
-	d.ar.fit(r[:n], s.order, s.ridge)
-	d.ar.forward(r, n, predicted, s.order, &limit)
+	d.ar.Fit(r[:n], s.order, s.ridge)
+	d.ar.Forward(r[:n+predicted], n, limitOf(&top))
 	mid := float64(float64(n-1) / 2)
 	for h := range count {
 		u := (float64(n+h) - mid) + f.farther

@@ -5,6 +5,8 @@ import (
 	"slices"
 	"testing"
 
+	"evenkeel/internal/kernel"
+
 	"pgregory.net/rapid"
 )
 
@@ -261,14 +263,23 @@ func checkPrediction(t failer, x []float32) float64 {
 	for i, v := range x {
 		p.samples(s)[i] = lanes{float64(v)}
 	}
-	removeLine(p.samples(s))
-	top := largest(p.samples(s))[0]
-	p.extend(s.x, &s.ar)
-	predicted := max(largest(s.x[:p.ext])[0], largest(s.x[p.ext+p.n : p.n+2*p.ext])[0])
+	var level, slope, limit lanes
+	kernel.Line(p.samples(s), &level, &slope, &limit)
+	top := largest(p.samples(s))
+	p.extend(s.x, &limit, &s.ar)
+	predicted := max(largest(s.x[:p.ext]), largest(s.x[p.ext+p.n:p.n+2*p.ext]))
 	if !(predicted <= predictionLimit*top) {
 		t.Fatalf("prediction reaches %g, largest residual %g", predicted, top)
 	}
 	return predicted / top
+}
+
+// largest is the largest absolute value of the first lane.
+func largest(x []lanes) (m float64) {
+	for t := range x {
+		m = max(m, math.Abs(x[t][0]))
+	}
+	return m
 }
 
 // The guard of property 11 is needed: this series, silent and then growing

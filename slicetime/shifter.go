@@ -3,6 +3,8 @@ package slicetime
 import (
 	"fmt"
 	"math"
+
+	"evenkeel/internal/kernel"
 )
 
 // Kernel is a way to interpolate in time.
@@ -138,89 +140,42 @@ func (p *plan) newMove(shift float64) *move {
 // scratch is one goroutine's work space for one batch of series.
 type scratch struct {
 	x  []lanes // the extended residuals
-	ar arScratch
-	// Line of each series: level at the middle of the series, slope per sample.
-	level, slope lanes
+	ar kernel.Autoregression
 }
 
 func (p *plan) newScratch() *scratch {
 	return &scratch{x: make([]lanes, p.length())}
 }
 
-// samples is where the caller puts the n samples of the batch and finds them moved.
+// samples is where the caller puts the n samples of the batch.
 func (p *plan) samples(s *scratch) []lanes { return s.x[p.ext : p.ext+p.n] }
 
-// run moves the batch whose samples stand in p.samples(s) and returns the n
-// moved samples of each lane (valid until the next call).
-func (m *move) run(s *scratch) []lanes {
+// run moves the batch whose samples stand in m.samples(s) and writes the n moved
+// samples of every lane to dst[t*stride] and the seven values after it.
+func (m *move) run(s *scratch, dst []float32, stride int) {
 	e, n := m.ext, m.n
 	x := s.x
-	s.level, s.slope = removeLine(x[e : e+n])
-	m.extend(x, &s.ar)
-	from := e + m.whole // x[from+i] is the residual wanted for sample i
+	var level, slope, top lanes
+	kernel.Line(x[e:e+n], &level, &slope, &top)
+	m.extend(x, &top, &s.ar)
 	if m.phase != nil {
 		m.phase.apply(x)
 		clear(x[n+2*e:]) // nothing stands there, for this move and for the next batch
 	}
 	mid := float64(float64(n-1) / 2)
-	// In place: walk against the move, so that nothing is overwritten unread.
-	put := func(i int) {
-		var r lanes
-		if k := from + i; k >= 0 && k < len(x) {
-			r = x[k]
-		}
-		t := (float64(i) - mid) + m.shift
-		to := &x[e+i]
-		for l := range r {
-			to[l] = (s.level[l] + float64(s.slope[l]*t)) + r[l]
-		}
-	}
-	if m.whole >= 0 {
-		for i := range n {
-			put(i)
-		}
+	from := e + m.whole // x[from+i] is the residual wanted for sample i
+	if lo, hi := max(0, -from), min(n, len(x)-from); lo == 0 && hi == n {
+		kernel.NarrowLanes(dst, stride, x[from:from+n], &level, &slope, mid, m.shift)
 	} else {
-		for i := n - 1; i >= 0; i-- {
-			put(i)
+		// Past what is extended only the line is left.
+		for i := range n {
+			var r lanes
+			if i >= lo && i < hi {
+				r = x[from+i]
+			}
+			kernel.NarrowLanes(dst[i*stride:], stride, []lanes{r}, &level, &slope, mid-float64(i), m.shift)
 		}
 	}
-	return x[e : e+n]
-}
-
-// removeLine takes the least-squares line out of every lane and returns its level
-// at the middle and its slope per sample.
-func removeLine(x []lanes) (level, slope lanes) {
-	n := len(x)
-	mid := float64(float64(n-1) / 2)
-	var sum lanes
-	for t := range x {
-		for l, v := range x[t] {
-			sum[l] += v
-		}
-	}
-	for l := range level {
-		level[l] = sum[l] / float64(n)
-	}
-	// sum (t-mid)^2 = n (n^2-1)/12; the level is taken out first so that the
-	// slope of a constant is rounding of zero, not of a large number.
-	for t := range x {
-		d := float64(t) - mid
-		for l, v := range x[t] {
-			slope[l] += float64((v - level[l]) * d)
-		}
-	}
-	squares := float64(n) * (float64(float64(n)*float64(n)) - 1) / 12
-	for l := range slope {
-		slope[l] /= squares
-	}
-	for t := range x {
-		d := float64(t) - mid
-		r := &x[t]
-		for l := range r {
-			r[l] = (r[l] - level[l]) - float64(slope[l]*d)
-		}
-	}
-	return level, slope
 }
 
 // store rounds to float32. Overshoot beside the largest float32 is held there,
@@ -241,7 +196,8 @@ type Shifter struct {
 	n    int
 	move *move // Fourier
 	work *scratch
-	sinc *sinc // Sinc: of a volume of one voxel
+	out  []float32 // [sample][lane]
+	sinc *sinc     // Sinc: of a volume of one voxel
 	desk *sincDesk
 }
 
@@ -269,6 +225,7 @@ func NewShifter(n int, shift float64, opt Options) *Shifter {
 	s.move = p.newMove(shift)
 	if s.move.shift != 0 {
 		s.work = p.newScratch()
+		s.out = make([]float32, n*laneCount)
 	}
 	return s
 }
@@ -297,8 +254,9 @@ func (s *Shifter) Shift(dst, src []float32) []float32 {
 	for t, v := range src {
 		x[t] = lanes{float64(v)} // the other lanes idle at zero
 	}
-	for t, v := range s.move.run(s.work) {
-		dst[t] = store(v[0])
+	s.move.run(s.work, s.out, laneCount)
+	for t := range dst {
+		dst[t] = s.out[t*laneCount]
 	}
 	return dst
 }

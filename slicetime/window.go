@@ -18,8 +18,10 @@ import (
 // Its methods may be called by several goroutines at once.
 type Window struct {
 	*sinc
-	ends  [2]kept // head and tail
-	desks sync.Pool
+	ends [2]kept // head and tail
+
+	mutex sync.Mutex
+	desks []*sincDesk // nobody works at
 }
 
 // NewWindow prepares for a run of nt volumes of nx*ny*nz voxels; s and ref are those of
@@ -37,7 +39,6 @@ func NewWindow(nx, ny, nz, nt int, s Schedule, ref float64, opt Options) (*Windo
 		return nil, &ArgumentError{"kernel", opt.Kernel.String(), fmt.Sprintf("%s: a window of volumes is enough for it alone", Sinc)}
 	}
 	w := &Window{sinc: newSinc(size, nt, s.Axis, s.shifts(ref), opt)}
-	w.desks.New = func() any { return w.newDesk(false) }
 	for i, e := range []*end{&w.head, &w.tail} {
 		w.ends[i] = kept{end: e, done: make(chan struct{}), broken: make(chan struct{})}
 		w.ends[i].left.Store(int64(w.pieces.count))
@@ -98,7 +99,7 @@ func (w *Window) Volume(dst []float32, t int, vol func(t int) []float32) {
 			return
 		}
 	}
-	d := w.desks.Get().(*sincDesk)
+	d := w.desk()
 	whole := d.whole[:w.most-w.least+1]
 	for k := range whole {
 		whole[k] = w.given(vol, t+w.least+k)
@@ -119,8 +120,7 @@ func (w *Window) Volume(dst []float32, t int, vol func(t int) []float32) {
 		}
 		w.inside(d, to, own, slice)
 	}
-	d.leave()
-	w.desks.Put(d)
+	w.leave(d)
 }
 
 func (w *Window) given(vol func(t int) []float32, t int) []float32 {
@@ -131,11 +131,26 @@ func (w *Window) given(vol func(t int) []float32, t int) []float32 {
 	return v
 }
 
-// leave lets go of the caller's volumes.
-func (d *sincDesk) leave() {
+// desk returns a desk that nobody else works at.
+func (w *Window) desk() *sincDesk {
+	w.mutex.Lock()
+	defer w.mutex.Unlock()
+	if n := len(w.desks); n > 0 {
+		d := w.desks[n-1]
+		w.desks = w.desks[:n-1]
+		return d
+	}
+	return w.newDesk(false)
+}
+
+// leave gives a desk back and lets go of the caller's volumes.
+func (w *Window) leave(d *sincDesk) {
 	clear(d.whole)
 	clear(d.taps)
 	clear(d.rows)
+	w.mutex.Lock()
+	w.desks = append(w.desks, d)
+	w.mutex.Unlock()
 }
 
 // kept is an end whose volumes are made once, by all who ask for one meanwhile.
@@ -162,7 +177,7 @@ func (e *kept) make(w *Window, vol func(t int) []float32) {
 			e.volumes = append(e.volumes, all[j*w.volume:][:w.volume])
 		}
 	})
-	d := w.desks.Get().(*sincDesk)
+	d := w.desk()
 	ok := false
 	defer func() {
 		if !ok {
@@ -203,8 +218,7 @@ func (e *kept) make(w *Window, vol func(t int) []float32) {
 		}
 	}
 	ok = true
-	d.leave()
-	w.desks.Put(d)
+	w.leave(d)
 	select {
 	case <-e.done:
 	case <-e.broken:

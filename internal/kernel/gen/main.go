@@ -53,6 +53,8 @@ func generate() (map[string][]byte, error) {
 	passes()
 	interpolate(false)
 	interpolate(true)
+	lanesFunctions()
+	transform()
 
 	f, err := g.Result()
 	if err != nil {
