@@ -22,7 +22,8 @@ const blockWidth = 64
 // sample) and voxels that never change are left untouched, bit for bit.
 //
 // The bytes do not depend on workers, nor on what other voxels hold. A voxel
-// with a sample that is not finite comes out not finite; it touches no other.
+// with a sample that is not finite comes out not finite, with Sinc where the kernel
+// reaches that sample; it touches no other.
 //
 // It returns an [*ArgumentError] for fewer than MinVolumes volumes, a schedule
 // that does not fit the array, a repetition time not above zero, a shift of nt

@@ -241,13 +241,17 @@ func TestWorkBytes(t *testing.T) {
 		size [3]int
 		axis int
 		nt   int
+		ref  float64
 		opt  Options
 	}{
-		{[3]int{64, 64, 8}, 2, 200, Options{}},
-		{[3]int{64, 8, 64}, 1, 200, Options{}},
-		{[3]int{40, 64, 30}, 0, 100, Options{}},
-		{[3]int{64, 64, 8}, 2, 200, Options{Kernel: Sinc}},
-		{[3]int{8, 8, 8}, 0, 10, Options{Kernel: Sinc}},
+		{[3]int{64, 64, 8}, 2, 200, .9, Options{}},
+		{[3]int{64, 8, 64}, 1, 200, .9, Options{}},
+		{[3]int{40, 64, 30}, 0, 100, .9, Options{}},
+		{[3]int{64, 64, 8}, 2, 200, .9, Options{Kernel: Sinc}},
+		{[3]int{32, 64, 4}, 2, 200, 300, Options{Kernel: Sinc, Reach: 32}},
+		{[3]int{16, 32, 4}, 2, 1000, -1990, Options{Kernel: Sinc}},
+		{[3]int{40, 64, 30}, 0, 100, 150, Options{Kernel: Sinc}},
+		{[3]int{8, 8, 8}, 0, 10, .9, Options{Kernel: Sinc}},
 	} {
 		s := Schedule{Axis: c.axis, TR: 2}
 		for k := range c.size[c.axis] {
@@ -258,7 +262,7 @@ func TestWorkBytes(t *testing.T) {
 			data[i] = float32(i % 13 * (i % 2)) // mostly constant in time: quick
 		}
 		used := allocated(func() {
-			if err := Correct(t.Context(), data, c.size[0], c.size[1], c.size[2], c.nt, s, .9, c.opt, 2); err != nil {
+			if err := Correct(t.Context(), data, c.size[0], c.size[1], c.size[2], c.nt, s, c.ref, c.opt, 2); err != nil {
 				t.Fatal(err)
 			}
 		})

@@ -80,6 +80,18 @@ func TestProperty2Constant(t *testing.T) {
 			t.Fatalf("%v became %v", x[0], y)
 		}
 	})
+	for _, v := range []float64{math.Copysign(0, -1), math.MaxFloat32, -math.MaxFloat32, math.SmallestNonzeroFloat32, math.Inf(1), math.Inf(-1)} {
+		for _, n := range []int{5, 30, 60} {
+			for _, shift := range []float64{.3, -.5, 2.25, -40} {
+				for _, k := range []Kernel{Fourier, Sinc} {
+					x := slices.Repeat([]float32{float32(v)}, n)
+					if y := NewShifter(n, shift, Options{Kernel: k}).Shift(nil, x); !slices.Equal(bits(y), bits(x)) {
+						t.Fatalf("%s, n %d, shift %g: %v became %v", k, n, shift, x[0], y)
+					}
+				}
+			}
+		}
+	}
 }
 
 // lineLimit: the input itself is a line only to the rounding of float32 (6e-8 of

@@ -97,15 +97,34 @@ func TestWindowIsCorrect(t *testing.T) {
 			slices.SortFunc(order, func(a, b int) int { return (a*7919+seed)%nt*nt + a - (b*7919+seed)%nt*nt - b })
 		}
 		got := make([]float32, volume)
-		for _, v := range order {
-			r := &run{data: data, volume: volume}
-			r.first, r.last = w.Needs(v)
-			w.Volume(got, v, r.at)
+		check := func(v int) {
 			for at, g := range got {
 				if c := want[at+volume*v]; math.Float32bits(g) != math.Float32bits(c) && !(g != g && c != c) {
 					t.Fatalf("size %v, axis %d, %d volumes, voxel %d, volume %d: %g, of Correct %g", size, s.Axis, nt, at, v, g, c)
 				}
 			}
+		}
+		if many := rapid.IntRange(0, 9).Draw(t, "at once"); many > 0 {
+			for v := 0; v < nt; v += many {
+				several := make([][]float32, min(many, nt-v))
+				for j := range several {
+					several[j] = make([]float32, volume)
+				}
+				r := &run{data: data, volume: volume}
+				r.first, _ = w.Needs(v)
+				_, r.last = w.Needs(v + len(several) - 1)
+				w.Volumes(several, v, r.at)
+				for j := range several {
+					copy(got, several[j])
+					check(v + j)
+				}
+			}
+		}
+		for _, v := range order {
+			r := &run{data: data, volume: volume}
+			r.first, r.last = w.Needs(v)
+			w.Volume(got, v, r.at)
+			check(v)
 		}
 	})
 }
@@ -245,26 +264,52 @@ func TestEndAccuracyOfALongRun(t *testing.T) {
 	}
 }
 
-// A window's volumes, one after another, as a stream would ask for them.
+// A window's volumes, one after another and eight at a time, as a stream would ask for them.
 func BenchmarkWindow(b *testing.B) {
 	const nx, ny, nz, nt = 64, 64, 36, 200
 	data := make([]float32, nx*ny*nz*nt)
 	for i := range data {
 		data[i] = float32(1000 + 50*hashed(i))
 	}
-	out := make([]float32, nx*ny*nz)
 	s := Schedule{Axis: 2, TR: 2}
 	for k := range nz {
 		s.Times = append(s.Times, 2*float64(k)/nz)
 	}
-	b.SetBytes(int64(4 * len(data)))
-	for b.Loop() {
-		w, err := NewWindow(nx, ny, nz, nt, s, s.Middle()+.001, Options{Kernel: Sinc})
-		if err != nil {
-			b.Fatal(err)
+	for _, many := range []int{1, 8} {
+		out := make([][]float32, many)
+		for j := range out {
+			out[j] = make([]float32, nx*ny*nz)
 		}
-		for v := range nt {
-			w.Volume(out, v, func(t int) []float32 { return data[t*nx*ny*nz:][:nx*ny*nz] })
+		b.Run(fmt.Sprint(many), func(b *testing.B) {
+			b.SetBytes(int64(4 * len(data)))
+			for b.Loop() {
+				w, err := NewWindow(nx, ny, nz, nt, s, s.Middle()+.001, Options{Kernel: Sinc})
+				if err != nil {
+					b.Fatal(err)
+				}
+				for v := 0; v < nt; v += many {
+					w.Volumes(out, v, func(t int) []float32 { return data[t*nx*ny*nz:][:nx*ny*nz] })
+				}
+			}
+		})
+	}
+}
+
+// Where all samples that are reached are alike, and what is predicted rests on such
+// alone, they come back as they are, whatever the series does later.
+func TestAlikeForAWhile(t *testing.T) {
+	for _, v := range []float64{math.Copysign(0, -1), math.Inf(1), math.Inf(-1), 3} {
+		x := slices.Repeat([]float32{float32(v)}, 200)
+		for i := 50; i < 150; i++ {
+			x[i] = float32(i)
+		}
+		for _, shift := range []float64{.3, -.3} {
+			y := NewShifter(len(x), shift, Options{Kernel: Sinc, Reach: 32}).Shift(nil, x)
+			for _, i := range []int{0, 5, 16, 183, 199} { // the reach of all ends before 50
+				if math.Float32bits(y[i]) != math.Float32bits(x[i]) {
+					t.Errorf("shift %g, sample %d: %g became %g", shift, i, x[i], y[i])
+				}
+			}
 		}
 	}
 }
