@@ -789,6 +789,10 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 			use = append(use, t)
 		}
 	}
+	passes := true
+	for _, t := range use {
+		passes = passes && NearIdentity(PoseMap(e.g, vols[t].Pose))
+	}
 	// Volumes are resampled side by side, then added in their order.
 	res := make([]*Resampler, e.workers)
 	buf := make([][]float32, e.workers)
@@ -807,8 +811,7 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 			if patched := e.patch(vol, weak[t]); patched != nil {
 				vol = patched
 			}
-			res[worker].Load(vol)
-			res[worker].Eval(buf[worker], PoseMap(e.g, vols[t].Pose))
+			res[worker].Move(buf[worker], vol, PoseMap(e.g, vols[t].Pose), passes)
 			return nil
 		}, func() {
 			b := mul(inv, mul(vols[t].Pose.Matrix(), e.g.Affine))

@@ -28,6 +28,19 @@ func NewResampler(n [3]int, degree int) *Resampler {
 // Load takes a volume and computes its spline coefficients; vol is not kept.
 func (r *Resampler) Load(vol []float32) { r.s.load(vol) }
 
+// Move resamples vol into dst, which may be vol, as [Resampler.Near] does with passes, or
+// by Load and Eval. Near must take the map.
+func (r *Resampler) Move(dst, vol []float32, m Map, passes bool) {
+	if !passes {
+		r.Load(vol)
+		r.Eval(dst, m)
+		return
+	}
+	if !r.Near(dst, vol, m) {
+		panic("realign: three passes were decided on for a map that they do not take")
+	}
+}
+
 // Eval fills dst, of the size of the volume loaded, with values at the places
 // m gives. A point outside the field takes the value of the nearest point on
 // the field's edge (the centre of its outermost voxel), so that every value is

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -21,7 +22,8 @@ const blockWidth = 64
 // sample) and voxels that never change are left untouched, bit for bit.
 //
 // The bytes do not depend on workers, nor on what other voxels hold. A voxel
-// with a sample that is not finite comes out not finite; it touches no other.
+// with a sample that is not finite comes out not finite, with Sinc where the kernel
+// reaches that sample; it touches no other.
 //
 // It returns an [*ArgumentError] for fewer than MinVolumes volumes, a schedule
 // that does not fit the array, a repetition time not above zero, a shift of nt
@@ -36,10 +38,21 @@ func Correct(ctx context.Context, data []float32, nx, ny, nz, nt int, s Schedule
 	if err := check(size, nt, s, ref, opt); err != nil {
 		return err
 	}
-	c := &correction{data: data, volume: nx * ny * nz, nt: nt, blocks: blocksOf(size, s.Axis), plan: newPlan(nt, opt)}
+	shifts := s.shifts(ref)
+	if opt.Kernel == Sinc {
+		p := newSinc(size, nt, s.Axis, shifts, opt)
+		desks := make([]*sincDesk, max(1, workers))
+		return parallel.For(ctx, len(desks), p.pieces.count, func(worker, i int) error {
+			if desks[worker] == nil {
+				desks[worker] = p.newDesk(true)
+			}
+			p.inPlace(desks[worker], data, i)
+			return nil
+		})
+	}
+	c := &correction{data: data, volume: nx * ny * nz, nt: nt, blocks: blocksOf(size, s.Axis, blockWidth), plan: newPlan(nt)}
 	known := map[float64]*move{} // looked up only, never ranged over
-	for _, tau := range s.Times {
-		shift := (ref - tau) / s.TR
+	for _, shift := range shifts {
 		if known[shift] == nil {
 			known[shift] = c.plan.newMove(shift)
 		}
@@ -55,6 +68,15 @@ func Correct(ctx context.Context, data []float32, nx, ny, nz, nt int, s Schedule
 	})
 }
 
+// shifts returns, by slice, how many samples later than its own the instant ref is.
+func (s Schedule) shifts(ref float64) []float64 {
+	shifts := make([]float64, len(s.Times))
+	for i, tau := range s.Times {
+		shifts[i] = (ref - tau) / s.TR
+	}
+	return shifts
+}
+
 func check(size [3]int, nt int, s Schedule, ref float64, opt Options) error {
 	if s.Axis < 0 || s.Axis > 2 {
 		return &ArgumentError{"slice axis", fmt.Sprint(s.Axis), "0, 1 or 2"}
@@ -68,9 +90,9 @@ func check(size [3]int, nt int, s Schedule, ref float64, opt Options) error {
 	if !(s.TR > 0) || math.IsInf(s.TR, 0) {
 		return &ArgumentError{"repetition time", fmt.Sprintf("%g s", s.TR), "a number of seconds above zero"}
 	}
-	for i, tau := range s.Times {
-		if shift := (ref - tau) / s.TR; !(math.Abs(shift) < float64(nt)) {
-			return &ArgumentError{"move of slice index " + fmt.Sprint(i), fmt.Sprintf("%g repetition times (from %g s to %g s)", shift, tau, ref), fmt.Sprintf("less than the run's %d", nt)}
+	for i, shift := range s.shifts(ref) {
+		if !(math.Abs(shift) < float64(nt)) {
+			return &ArgumentError{"move of slice index " + fmt.Sprint(i), fmt.Sprintf("%g repetition times (from %g s to %g s)", shift, s.Times[i], ref), fmt.Sprintf("less than the run's %d", nt)}
 		}
 	}
 	return opt.Check()
@@ -83,16 +105,13 @@ func WorkBytes(nx, ny, nz, nt, axis, workers int, opt Options) int64 {
 	if nt < MinVolumes || axis < 0 || axis > 2 {
 		return 0
 	}
-	length := int64(nt + 2*extension)
-	tables := int64(2*MaxReach+1) * 8
-	if opt.Kernel == Fourier {
-		m := int64(fftLength((nt + 2*extension + 1) / 2))
-		length = 2 * m
-		tables = 4 * 8 * m
+	if opt.Kernel == Sinc {
+		return sincBytes(size, nt, axis, workers, opt)
 	}
-	b := blocksOf(size, axis)
-	each := 4*int64(b.width)*int64(nt) + 8*laneCount*(length+int64(nt)) + 32<<10
-	return tables*int64(size[axis]+2) + each*int64(max(1, workers)) + 64<<10
+	m := int64(fftLength((nt + 2*extension + 1) / 2))
+	b := blocksOf(size, axis, blockWidth)
+	each := 4*int64(b.width)*int64(nt) + 8*laneCount*2*m + 4*laneCount*int64(nt) + 32<<10
+	return 4*8*m*int64(size[axis]+2) + each*int64(max(1, workers)) + 64<<10
 }
 
 // blocks cuts a volume into pieces that are contiguous in memory. With the
@@ -108,7 +127,8 @@ type blocks struct {
 	group, chunks        int  // outers in a block; blocks of one row
 }
 
-func blocksOf(size [3]int, axis int) blocks {
+// blocksOf cuts into blocks of at most long voxels, across slices perhaps more.
+func blocksOf(size [3]int, axis, long int) blocks {
 	b := blocks{outer: 1, slices: size[axis], inner: 1}
 	for a, n := range size {
 		if a < axis {
@@ -119,15 +139,27 @@ func blocksOf(size [3]int, axis int) blocks {
 	}
 	if b.inner < 2*laneCount && b.outer > 1 {
 		b.across = true
-		b.group = min(b.outer, (laneCount+b.inner-1)/b.inner) // enough to fill a batch
+		// Enough to fill a batch of every slice.
+		b.group = min(b.outer, max((laneCount+b.inner-1)/b.inner, long/(b.slices*b.inner)))
 		b.width = b.group * b.slices * b.inner
 		b.count = (b.outer + b.group - 1) / b.group
 		return b
 	}
-	b.width = min(b.inner, blockWidth)
-	b.chunks = (b.inner + blockWidth - 1) / blockWidth
+	b.width = min(b.inner, long)
+	b.chunks = (b.inner + long - 1) / long
 	b.count = b.outer * b.slices * b.chunks
 	return b
+}
+
+// at returns where block i begins, how many voxels it has, and their slice, -1 for
+// a block across slices.
+func (b *blocks) at(i int) (start, width, slice int) {
+	if b.across {
+		from := i * b.group
+		return from * b.slices * b.inner, min(b.group, b.outer-from) * b.slices * b.inner, -1
+	}
+	row, chunk := i/b.chunks, i%b.chunks
+	return row*b.inner + chunk*b.width, min(b.width, b.inner-chunk*b.width), row % b.slices
 }
 
 type correction struct {
@@ -144,49 +176,39 @@ type desk struct {
 	varies  []bool
 	batch   [laneCount]int // voxels of the block that wait for a full batch
 	waiting int
+	out     []float32 // [sample][lane] of a batch that does not lie together
 	work    *scratch
 }
 
 func (c *correction) newDesk() *desk {
-	return &desk{samples: make([]float32, c.blocks.width*c.nt), varies: make([]bool, c.blocks.width), work: c.plan.newScratch()}
+	return &desk{samples: make([]float32, c.blocks.width*c.nt), varies: make([]bool, c.blocks.width), out: make([]float32, laneCount*c.nt), work: c.plan.newScratch()}
 }
 
 // block moves block i.
 func (c *correction) block(d *desk, i int) {
 	b := &c.blocks
-	if b.across {
-		from := i * b.group
-		outers := min(b.group, b.outer-from)
-		start, width := from*b.slices*b.inner, outers*b.slices*b.inner
-		c.gather(d, start, width)
+	start, width, slice := b.at(i)
+	if slice >= 0 && c.moves[slice].shift == 0 || !c.gather(d, start, width) {
+		return
+	}
+	if slice >= 0 {
+		for v := range width {
+			c.add(d, c.moves[slice], v, width)
+		}
+		c.flush(d, c.moves[slice], width)
+	} else {
 		for k, m := range c.moves {
 			if m.shift == 0 {
 				continue
 			}
-			for o := range outers {
+			for o := range width / (b.slices * b.inner) {
 				for j := range b.inner {
 					c.add(d, m, (o*b.slices+k)*b.inner+j, width)
 				}
 			}
 			c.flush(d, m, width)
 		}
-		c.scatter(d, start, width)
-		return
 	}
-	row, chunk := i/b.chunks, i%b.chunks
-	m := c.moves[row%b.slices]
-	if m.shift == 0 {
-		return
-	}
-	start := row*b.inner + chunk*blockWidth
-	width := min(blockWidth, b.inner-chunk*blockWidth)
-	if !c.gather(d, start, width) {
-		return
-	}
-	for v := range width {
-		c.add(d, m, v, width)
-	}
-	c.flush(d, m, width)
 	c.scatter(d, start, width)
 }
 
@@ -233,11 +255,17 @@ func (c *correction) flush(d *desk, m *move, width int) {
 	if d.waiting == 0 {
 		return
 	}
-	for l := d.waiting; l < laneCount; l++ {
-		d.batch[l] = d.batch[0]
-	}
 	x := c.plan.samples(d.work)
 	v := &d.batch
+	if first := v[0]; d.waiting == laneCount && v[laneCount-1] == first+laneCount-1 {
+		kernel.WidenLanes(x, d.samples[first:], width)
+		m.run(d.work, d.samples[first:], width)
+		d.waiting = 0
+		return
+	}
+	for l := d.waiting; l < laneCount; l++ {
+		v[l] = v[0]
+	}
 	for t := range x {
 		row := d.samples[t*width:][:width]
 		x[t] = lanes{
@@ -245,10 +273,11 @@ func (c *correction) flush(d *desk, m *move, width int) {
 			float64(row[v[4]]), float64(row[v[5]]), float64(row[v[6]]), float64(row[v[7]]),
 		}
 	}
-	for t, r := range m.run(d.work) {
-		row := d.samples[t*width:][:width]
-		for l, voxel := range d.batch[:d.waiting] {
-			row[voxel] = store(r[l])
+	m.run(d.work, d.out, laneCount)
+	for t := range x {
+		row, from := d.samples[t*width:][:width], d.out[t*laneCount:][:laneCount]
+		for l, voxel := range v[:d.waiting] {
+			row[voxel] = from[l]
 		}
 	}
 	d.waiting = 0

@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/kernel"
 )
 
 // What stands beyond the ends of a series.
@@ -23,7 +24,7 @@ import (
 //     sample of the series (line removed) before it feeds the next, so that even
 //     a growing mode ends at a level of the series' own size.
 const (
-	arOrder = 8
+	arOrder = kernel.MostOrder
 	// arRidge is the share of the mean diagonal added to the diagonal.
 	arRidge = 1e-2
 	// predictionLimit: no head tissue is expected to leave the range it kept
@@ -79,24 +80,12 @@ func taperFor(e int) []float64 {
 	return w
 }
 
-// arScratch holds the normal equations of one batch; the orders of short series
-// leave part of it unused.
-type arScratch struct {
-	phi   [arOrder + 1][arOrder + 1]lanes // i <= j
-	lower [arOrder][arOrder]lanes         // unit lower triangle of L D L', D on its diagonal
-	coef  [arOrder]lanes
-}
-
-// extend fills the e samples on each side of x[e:e+n], which holds residuals
-// about a line, and tapers them.
-func (p *plan) extend(x []lanes, s *arScratch) {
+// extend fills the e samples on each side of x[e:e+n], which holds residuals about a
+// line, the largest of them top, and tapers them.
+func (p *plan) extend(x []lanes, top *lanes, ar *kernel.Autoregression) {
 	e, n := p.ext, p.n
-	limit := largest(x[e : e+n])
-	for l := range limit {
-		limit[l] *= predictionLimit
-	}
-	s.fit(x[e:e+n], p.order, p.ridge)
-	s.predict(x, e, n, p.order, &limit)
+	ar.Fit(x[e:e+n], p.order, p.ridge)
+	ar.Outward(x[:n+2*e], n, limitOf(top))
 	inner := e - len(p.taper)
 	for i, w := range p.taper {
 		out, out2 := &x[e-1-inner-i], &x[e+n+inner+i]
@@ -107,142 +96,10 @@ func (p *plan) extend(x []lanes, s *arScratch) {
 	}
 }
 
-func largest(x []lanes) (m lanes) {
-	for t := range x {
-		for l, v := range x[t] {
-			// A comparison, not max: a NaN lane must not be spread or slow others.
-			if v = math.Abs(v); v > m[l] {
-				m[l] = v
-			}
-		}
+// limitOf is what predictions are held within.
+func limitOf(top *lanes) *lanes {
+	for l := range top {
+		top[l] *= predictionLimit
 	}
-	return m
-}
-
-// dot is sum_t a[t] b[t] for every lane, in the order of t.
-func dot(a, b []lanes) lanes {
-	var s0, s1, s2, s3, s4, s5, s6, s7 float64
-	b = b[:len(a)]
-	for i := range a {
-		p, q := &a[i], &b[i]
-		s0 += float64(p[0] * q[0])
-		s1 += float64(p[1] * q[1])
-		s2 += float64(p[2] * q[2])
-		s3 += float64(p[3] * q[3])
-		s4 += float64(p[4] * q[4])
-		s5 += float64(p[5] * q[5])
-		s6 += float64(p[6] * q[6])
-		s7 += float64(p[7] * q[7])
-	}
-	return lanes{s0, s1, s2, s3, s4, s5, s6, s7}
-}
-
-// at returns phi(i, j), which is symmetric.
-func (s *arScratch) at(i, j int) *lanes { return &s.phi[min(i, j)][max(i, j)] }
-
-// normal returns C(i, j) = phi(i, j) + phi(q-i, q-j).
-func (s *arScratch) normal(q, i, j int) (c lanes) {
-	u, v := s.at(i, j), s.at(q-i, q-j)
-	for l := range c {
-		c[l] = u[l] + v[l]
-	}
-	return c
-}
-
-// fit solves for the q coefficients of the series x, n > 2 q samples long.
-//
-// With phi(i,j) = sum_{t=q}^{n-1} x[t-i] x[t-j], forward and backward errors
-// together give sum_j C(i,j) a_j = C(i,0), C(i,j) = phi(i,j) + phi(q-i,q-j)
-// (Marple 1980). Only phi(0,j) is summed; the others follow from
-// phi(i+1,j+1) = phi(i,j) + x[q-1-i] x[q-1-j] - x[n-1-i] x[n-1-j].
-func (s *arScratch) fit(x []lanes, q int, share float64) {
-	n := len(x)
-	for j := 0; j <= q; j++ {
-		s.phi[0][j] = dot(x[q:], x[q-j:n-j])
-	}
-	for i := range q {
-		for j := i; j < q; j++ {
-			to, from := &s.phi[i+1][j+1], &s.phi[i][j]
-			a, b := &x[q-1-i], &x[q-1-j]
-			c, d := &x[n-1-i], &x[n-1-j]
-			for l := range to {
-				to[l] = (from[l] + float64(a[l]*b[l])) - float64(c[l]*d[l])
-			}
-		}
-	}
-	var ridge lanes
-	for i := 1; i <= q; i++ {
-		c := s.normal(q, i, i)
-		for l := range ridge {
-			ridge[l] += c[l]
-		}
-	}
-	for l := range ridge {
-		ridge[l] *= share / float64(q)
-		if !(ridge[l] > 0) {
-			ridge[l] = 1 // all residuals zero: the coefficients come out zero
-		}
-	}
-	// L D L' of the q x q system, row by row. Until its row is done lower[i][k]
-	// holds L_ik D_k; afterwards L_ik, with D_i on the diagonal. coef carries the
-	// forward substitution.
-	for i := range q {
-		for j := range i {
-			c := s.normal(q, i+1, j+1)
-			for k := range j {
-				a, b := &s.lower[i][k], &s.lower[j][k]
-				for l := range c {
-					c[l] -= float64(a[l] * b[l])
-				}
-			}
-			s.lower[i][j] = c
-		}
-		d, c := s.normal(q, i+1, i+1), s.normal(q, i+1, 0)
-		for l := range d {
-			d[l] += ridge[l]
-		}
-		for k := range i {
-			a, dk, b := &s.lower[i][k], &s.lower[k][k], &s.coef[k]
-			for l := range d {
-				ld := a[l]
-				a[l] = ld / dk[l]
-				d[l] -= float64(ld * a[l])
-				c[l] -= float64(a[l] * b[l])
-			}
-		}
-		s.lower[i][i], s.coef[i] = d, c
-	}
-	for i := q - 1; i >= 0; i-- {
-		c, d := &s.coef[i], &s.lower[i][i]
-		for l := range c {
-			c[l] /= d[l]
-		}
-		for k := i + 1; k < q; k++ {
-			a, b := &s.lower[k][i], &s.coef[k]
-			for l := range c {
-				c[l] -= float64(a[l] * b[l])
-			}
-		}
-	}
-}
-
-// predict writes e samples on each side of x[e:e+n], each held within limit.
-func (s *arScratch) predict(x []lanes, e, n, q int, limit *lanes) {
-	for h := range e {
-		forward := x[e+n+h-q : e+n+h+1]
-		backward := x[e-1-h : e-h+q]
-		var f, b lanes
-		for k := range q {
-			a := &s.coef[k]
-			u, v := &forward[q-1-k], &backward[1+k]
-			for l := range a {
-				f[l] += float64(a[l] * u[l])
-				b[l] += float64(a[l] * v[l])
-			}
-		}
-		for l := range f {
-			forward[q][l] = max(-limit[l], min(limit[l], f[l]))
-			backward[0][l] = max(-limit[l], min(limit[l], b[l]))
-		}
-	}
+	return top
 }

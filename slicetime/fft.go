@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/kernel"
 )
 
 // A batched complex discrete Fourier transform, our own because its bits must
@@ -20,11 +21,11 @@ import (
 //     pass is needed.
 //   - Neither direction scales; the filter carries 1/m.
 
-// laneCount series are worked on side by side. Eight float64 are one cache line.
-const laneCount = 8
+// laneCount series are worked on side by side.
+const laneCount = kernel.LaneCount
 
 // lanes holds one sample of laneCount series.
-type lanes [laneCount]float64
+type lanes = kernel.Lanes
 
 // fft is a plan for m complex points: read only once made, shared by workers.
 type fft struct {
@@ -106,213 +107,17 @@ func (f *fft) binAt(p int) int {
 
 // forward computes X[k] = sum_n z[n] exp(-2 pi i k n/m) in place; bin k ends at place[k].
 func (f *fft) forward(z []lanes) {
-	z = z[:2*f.m]
 	for i := range f.stages {
 		s := &f.stages[i]
-		switch s.radix {
-		case 4:
-			s.forward4(z)
-		case 3:
-			s.forward3(z)
-		default:
-			s.forward2(z)
-		}
+		kernel.Butterflies(z[:2*f.m], s.radix, s.size/s.radix, s.twiddle, false)
 	}
 }
 
 // inverse computes z[n] = sum_k X[k] exp(+2 pi i k n/m) in place from bins in
 // the order that forward leaves.
 func (f *fft) inverse(z []lanes) {
-	z = z[:2*f.m]
 	for i := len(f.stages) - 1; i >= 0; i-- {
 		s := &f.stages[i]
-		switch s.radix {
-		case 4:
-			s.inverse4(z)
-		case 3:
-			s.inverse3(z)
-		default:
-			s.inverse2(z)
-		}
-	}
-}
-
-func (s *stage) forward2(z []lanes) {
-	q := s.size / 2
-	for j := range q {
-		wr, wi := s.twiddle[2*j], s.twiddle[2*j+1]
-		for b := j; 2*b < len(z); b += s.size {
-			ar, ai := &z[2*b], &z[2*b+1]
-			br, bi := &z[2*(b+q)], &z[2*(b+q)+1]
-			for l := range ar {
-				xr, xi := ar[l]-br[l], ai[l]-bi[l]
-				ar[l] += br[l]
-				ai[l] += bi[l]
-				br[l] = float64(xr*wr) - float64(xi*wi)
-				bi[l] = float64(xr*wi) + float64(xi*wr)
-			}
-		}
-	}
-}
-
-func (s *stage) inverse2(z []lanes) {
-	q := s.size / 2
-	for j := range q {
-		wr, wi := s.twiddle[2*j], -s.twiddle[2*j+1]
-		for b := j; 2*b < len(z); b += s.size {
-			ar, ai := &z[2*b], &z[2*b+1]
-			br, bi := &z[2*(b+q)], &z[2*(b+q)+1]
-			for l := range ar {
-				xr := float64(br[l]*wr) - float64(bi[l]*wi)
-				xi := float64(br[l]*wi) + float64(bi[l]*wr)
-				br[l] = ar[l] - xr
-				bi[l] = ai[l] - xi
-				ar[l] += xr
-				ai[l] += xi
-			}
-		}
-	}
-}
-
-// sin60 is the sine of 60 degrees, sqrt(3)/2 (OEIS A010527).
-const sin60 = 0.86602540378443864676372317075293618
-
-func (s *stage) forward3(z []lanes) {
-	q := s.size / 3
-	for j := range q {
-		w := s.twiddle[4*j : 4*j+4 : 4*j+4]
-		w1r, w1i, w2r, w2i := w[0], w[1], w[2], w[3]
-		for at := j; 2*at < len(z); at += s.size {
-			ar, ai := &z[2*at], &z[2*at+1]
-			br, bi := &z[2*(at+q)], &z[2*(at+q)+1]
-			cr, ci := &z[2*(at+2*q)], &z[2*(at+2*q)+1]
-			for l := range ar {
-				sr, si := br[l]+cr[l], bi[l]+ci[l]
-				dr, di := float64((br[l]-cr[l])*sin60), float64((bi[l]-ci[l])*sin60)
-				hr, hi := ar[l]-float64(0.5*sr), ai[l]-float64(0.5*si)
-				ar[l] += sr
-				ai[l] += si
-				// b' = h - i d, c' = h + i d
-				xr, xi := hr+di, hi-dr
-				br[l] = float64(xr*w1r) - float64(xi*w1i)
-				bi[l] = float64(xr*w1i) + float64(xi*w1r)
-				xr, xi = hr-di, hi+dr
-				cr[l] = float64(xr*w2r) - float64(xi*w2i)
-				ci[l] = float64(xr*w2i) + float64(xi*w2r)
-			}
-		}
-	}
-}
-
-func (s *stage) inverse3(z []lanes) {
-	q := s.size / 3
-	for j := range q {
-		w := s.twiddle[4*j : 4*j+4 : 4*j+4]
-		w1r, w1i, w2r, w2i := w[0], -w[1], w[2], -w[3]
-		for at := j; 2*at < len(z); at += s.size {
-			ar, ai := &z[2*at], &z[2*at+1]
-			br, bi := &z[2*(at+q)], &z[2*(at+q)+1]
-			cr, ci := &z[2*(at+2*q)], &z[2*(at+2*q)+1]
-			for l := range ar {
-				pr := float64(br[l]*w1r) - float64(bi[l]*w1i)
-				pi := float64(br[l]*w1i) + float64(bi[l]*w1r)
-				qr := float64(cr[l]*w2r) - float64(ci[l]*w2i)
-				qi := float64(cr[l]*w2i) + float64(ci[l]*w2r)
-				sr, si := pr+qr, pi+qi
-				dr, di := float64((pr-qr)*sin60), float64((pi-qi)*sin60)
-				hr, hi := ar[l]-float64(0.5*sr), ai[l]-float64(0.5*si)
-				ar[l] += sr
-				ai[l] += si
-				// b = h + i d, c = h - i d
-				br[l], bi[l] = hr-di, hi+dr
-				cr[l], ci[l] = hr+di, hi-dr
-			}
-		}
-	}
-}
-
-func (s *stage) forward4(z []lanes) {
-	q := s.size / 4
-	for j := range q {
-		w := s.twiddle[6*j : 6*j+6 : 6*j+6]
-		w1r, w1i, w2r, w2i, w3r, w3i := w[0], w[1], w[2], w[3], w[4], w[5]
-		for at := j; 2*at < len(z); at += s.size {
-			ar, ai := &z[2*at], &z[2*at+1]
-			br, bi := &z[2*(at+q)], &z[2*(at+q)+1]
-			cr, ci := &z[2*(at+2*q)], &z[2*(at+2*q)+1]
-			dr, di := &z[2*(at+3*q)], &z[2*(at+3*q)+1]
-			if j == 0 { // every twiddle is one
-				for l := range ar {
-					pr, pi := ar[l]+cr[l], ai[l]+ci[l]
-					mr, mi := ar[l]-cr[l], ai[l]-ci[l]
-					sr, si := br[l]+dr[l], bi[l]+di[l]
-					tr, ti := br[l]-dr[l], bi[l]-di[l]
-					ar[l], ai[l] = pr+sr, pi+si
-					br[l], bi[l] = mr+ti, mi-tr
-					cr[l], ci[l] = pr-sr, pi-si
-					dr[l], di[l] = mr-ti, mi+tr
-				}
-				continue
-			}
-			for l := range ar {
-				pr, pi := ar[l]+cr[l], ai[l]+ci[l]
-				mr, mi := ar[l]-cr[l], ai[l]-ci[l]
-				sr, si := br[l]+dr[l], bi[l]+di[l]
-				tr, ti := br[l]-dr[l], bi[l]-di[l]
-				ar[l], ai[l] = pr+sr, pi+si
-				xr, xi := mr+ti, mi-tr // m - i t
-				br[l] = float64(xr*w1r) - float64(xi*w1i)
-				bi[l] = float64(xr*w1i) + float64(xi*w1r)
-				xr, xi = pr-sr, pi-si
-				cr[l] = float64(xr*w2r) - float64(xi*w2i)
-				ci[l] = float64(xr*w2i) + float64(xi*w2r)
-				xr, xi = mr-ti, mi+tr // m + i t
-				dr[l] = float64(xr*w3r) - float64(xi*w3i)
-				di[l] = float64(xr*w3i) + float64(xi*w3r)
-			}
-		}
-	}
-}
-
-func (s *stage) inverse4(z []lanes) {
-	q := s.size / 4
-	for j := range q {
-		w := s.twiddle[6*j : 6*j+6 : 6*j+6]
-		w1r, w1i, w2r, w2i, w3r, w3i := w[0], -w[1], w[2], -w[3], w[4], -w[5]
-		for at := j; 2*at < len(z); at += s.size {
-			ar, ai := &z[2*at], &z[2*at+1]
-			br, bi := &z[2*(at+q)], &z[2*(at+q)+1]
-			cr, ci := &z[2*(at+2*q)], &z[2*(at+2*q)+1]
-			dr, di := &z[2*(at+3*q)], &z[2*(at+3*q)+1]
-			if j == 0 {
-				for l := range ar {
-					pr, pi := ar[l]+cr[l], ai[l]+ci[l]
-					mr, mi := ar[l]-cr[l], ai[l]-ci[l]
-					sr, si := br[l]+dr[l], bi[l]+di[l]
-					tr, ti := br[l]-dr[l], bi[l]-di[l]
-					ar[l], ai[l] = pr+sr, pi+si
-					br[l], bi[l] = mr-ti, mi+tr
-					cr[l], ci[l] = pr-sr, pi-si
-					dr[l], di[l] = mr+ti, mi-tr
-				}
-				continue
-			}
-			for l := range ar {
-				xr := float64(br[l]*w1r) - float64(bi[l]*w1i)
-				xi := float64(br[l]*w1i) + float64(bi[l]*w1r)
-				yr := float64(cr[l]*w2r) - float64(ci[l]*w2i)
-				yi := float64(cr[l]*w2i) + float64(ci[l]*w2r)
-				vr := float64(dr[l]*w3r) - float64(di[l]*w3i)
-				vi := float64(dr[l]*w3i) + float64(di[l]*w3r)
-				pr, pi := ar[l]+yr, ai[l]+yi
-				mr, mi := ar[l]-yr, ai[l]-yi
-				sr, si := xr+vr, xi+vi
-				tr, ti := xr-vr, xi-vi
-				ar[l], ai[l] = pr+sr, pi+si
-				br[l], bi[l] = mr-ti, mi+tr // m + i t
-				cr[l], ci[l] = pr-sr, pi-si
-				dr[l], di[l] = mr+ti, mi-tr // m - i t
-			}
-		}
+		kernel.Butterflies(z[:2*f.m], s.radix, s.size/s.radix, s.twiddle, true)
 	}
 }

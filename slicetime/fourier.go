@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"evenkeel/internal/detmath"
+	"evenkeel/internal/kernel"
 )
 
 // A circular delay of real series of 2m samples, through one complex transform
@@ -79,31 +80,21 @@ func scale(a complex128, by float64) complex128 {
 func (p *phaseShift) apply(x []lanes) {
 	f := p.fft
 	f.forward(x)
-	for k := 0; 2*k <= f.m; k++ {
-		mirror := (f.m - k) % f.m
-		i, j := f.place[k], f.place[mirror]
+	own := func(k int) { // a bin that is its own mirror
+		i := f.place[k]
 		zr, zi := &x[2*i], &x[2*i+1]
 		t := p.table[4*k : 4*k+4 : 4*k+4]
 		ar, ai, br, bi := t[0], t[1], t[2], t[3]
-		if i == j { // bin 0, and bin m/2 of an even m
-			for l := range zr {
-				r, s := zr[l], zi[l]
-				zr[l] = (float64(ar*r) - float64(ai*s)) + (float64(br*r) + float64(bi*s))
-				zi[l] = (float64(ar*s) + float64(ai*r)) + (float64(bi*r) - float64(br*s))
-			}
-			continue
-		}
-		vr, vi := &x[2*j], &x[2*j+1]
-		u := p.table[4*mirror : 4*mirror+4 : 4*mirror+4]
-		cr, ci, dr, di := u[0], u[1], u[2], u[3]
 		for l := range zr {
 			r, s := zr[l], zi[l]
-			q, v := vr[l], vi[l]
-			zr[l] = (float64(ar*r) - float64(ai*s)) + (float64(br*q) + float64(bi*v))
-			zi[l] = (float64(ar*s) + float64(ai*r)) + (float64(bi*q) - float64(br*v))
-			vr[l] = (float64(cr*q) - float64(ci*v)) + (float64(dr*r) + float64(di*s))
-			vi[l] = (float64(cr*v) + float64(ci*q)) + (float64(di*r) - float64(dr*s))
+			zr[l] = (float64(ar*r) - float64(ai*s)) + (float64(br*r) + float64(bi*s))
+			zi[l] = (float64(ar*s) + float64(ai*r)) + (float64(bi*r) - float64(br*s))
 		}
 	}
+	own(0)
+	if f.m%2 == 0 {
+		own(f.m / 2)
+	}
+	kernel.Mirrored(x[:2*f.m], f.place, p.table)
 	f.inverse(x)
 }

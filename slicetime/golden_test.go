@@ -94,6 +94,7 @@ func TestSincGolden(t *testing.T) {
 			Reach int
 			Frac  float64
 			Taps  []float64
+			Line  []float64 `json:"line_taps"`
 		}
 	}
 	golden(t, "windowed_sinc.json", &file)
@@ -122,6 +123,17 @@ func TestSincGolden(t *testing.T) {
 			if math.Abs(w-c.Taps[i]) > 6e-12 {
 				t.Errorf("reach %d frac %g tap %d: %.15g, scipy %.15g", c.Reach, c.Frac, i, w, c.Taps[i])
 			}
+		}
+		line, moment := lineTaps(c.Reach, c.Frac, kaiserBeta), 0.0
+		for i, w := range line {
+			moment += w * float64(i-c.Reach)
+			if math.Abs(w-c.Line[i]) > 6e-12 {
+				t.Errorf("reach %d frac %g line tap %d: %.15g, numpy %.15g", c.Reach, c.Frac, i, w, c.Line[i])
+			}
+		}
+		// Some 65 terms of the size of the reach are summed.
+		if math.Abs(moment-c.Frac) > 1e-14 {
+			t.Errorf("reach %d frac %g: first moment off by %.1e", c.Reach, c.Frac, moment-c.Frac)
 		}
 		if math.Abs(sum-1) > 1e-15 {
 			t.Errorf("reach %d frac %g: taps sum to 1%+.1e", c.Reach, c.Frac, sum-1)

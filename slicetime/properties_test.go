@@ -5,6 +5,8 @@ import (
 	"slices"
 	"testing"
 
+	"evenkeel/internal/kernel"
+
 	"pgregory.net/rapid"
 )
 
@@ -78,6 +80,18 @@ func TestProperty2Constant(t *testing.T) {
 			t.Fatalf("%v became %v", x[0], y)
 		}
 	})
+	for _, v := range []float64{math.Copysign(0, -1), math.MaxFloat32, -math.MaxFloat32, math.SmallestNonzeroFloat32, math.Inf(1), math.Inf(-1)} {
+		for _, n := range []int{5, 30, 60} {
+			for _, shift := range []float64{.3, -.5, 2.25, -40} {
+				for _, k := range []Kernel{Fourier, Sinc} {
+					x := slices.Repeat([]float32{float32(v)}, n)
+					if y := NewShifter(n, shift, Options{Kernel: k}).Shift(nil, x); !slices.Equal(bits(y), bits(x)) {
+						t.Fatalf("%s, n %d, shift %g: %v became %v", k, n, shift, x[0], y)
+					}
+				}
+			}
+		}
+	}
 }
 
 // lineLimit: the input itself is a line only to the rounding of float32 (6e-8 of
@@ -256,19 +270,28 @@ type failer interface {
 // checkPrediction extends the series and returns the largest predicted residual
 // as a share of the largest residual.
 func checkPrediction(t failer, x []float32) float64 {
-	p := newPlan(len(x), Options{})
+	p := newPlan(len(x))
 	s := p.newScratch()
 	for i, v := range x {
 		p.samples(s)[i] = lanes{float64(v)}
 	}
-	s.removeLine(p.samples(s))
-	top := largest(p.samples(s))[0]
-	p.extend(s.x, &s.ar)
-	predicted := max(largest(s.x[:p.ext])[0], largest(s.x[p.ext+p.n : p.n+2*p.ext])[0])
+	var level, slope, limit lanes
+	kernel.Line(p.samples(s), &level, &slope, &limit)
+	top := largest(p.samples(s))
+	p.extend(s.x, &limit, &s.ar)
+	predicted := max(largest(s.x[:p.ext]), largest(s.x[p.ext+p.n:p.n+2*p.ext]))
 	if !(predicted <= predictionLimit*top) {
 		t.Fatalf("prediction reaches %g, largest residual %g", predicted, top)
 	}
 	return predicted / top
+}
+
+// largest is the largest absolute value of the first lane.
+func largest(x []lanes) (m float64) {
+	for t := range x {
+		m = max(m, math.Abs(x[t][0]))
+	}
+	return m
 }
 
 // The guard of property 11 is needed: this series, silent and then growing

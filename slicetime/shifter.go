@@ -3,6 +3,8 @@ package slicetime
 import (
 	"fmt"
 	"math"
+
+	"evenkeel/internal/kernel"
 )
 
 // Kernel is a way to interpolate in time.
@@ -80,186 +82,99 @@ func (e *ArgumentError) Error() string {
 // a twentieth of the rounding of float32.
 const smallestShift = 1e-9
 
-// plan is what all shifts of series of one length share; read only.
+// split returns the whole samples of a shift, within -far to far, and the rest,
+// between -0.5 and 0.5; none is true for a shift that is none.
+func split(shift float64, far int) (whole int, rest float64, none bool) {
+	if math.Abs(shift) < smallestShift {
+		return 0, 0, true
+	}
+	// Halves go towards zero, so that a move and its opposite are mirror images.
+	nearest := math.Copysign(math.Ceil(math.Abs(shift)-0.5), shift)
+	rest = shift - nearest
+	if math.Abs(rest) < smallestShift {
+		rest = 0
+	}
+	return int(max(-float64(far), min(float64(far), nearest))), rest, false
+}
+
+// plan is what all shifts by Fourier of series of one length share; read only.
 type plan struct {
 	n, ext int
 	order  int     // of the autoregression
 	ridge  float64 // its share of the mean diagonal
 	taper  []float64
-	fft    *fft // nil for the sinc kernel
-	opt    Options
+	fft    *fft
 }
 
-func newPlan(n int, opt Options) *plan {
+func newPlan(n int) *plan {
 	const e = extension
-	p := &plan{n: n, ext: e, taper: taperFor(e), opt: opt}
+	p := &plan{n: n, ext: e, taper: taperFor(e), fft: newFFT(fftLength((n + 2*e + 1) / 2))}
 	p.order, p.ridge = predictor(n)
-	if opt.Kernel == Fourier {
-		p.fft = newFFT(fftLength((n + 2*e + 1) / 2))
-	}
 	return p
 }
 
 // length is the number of samples of a work buffer: extension, series,
-// extension, and for the transform zeros up to its length.
-func (p *plan) length() int {
-	if p.fft != nil {
-		return 2 * p.fft.m
-	}
-	return p.n + 2*p.ext
-}
+// extension, and zeros up to the length of the transform.
+func (p *plan) length() int { return 2 * p.fft.m }
 
 // move is one constant shift; read only once made.
 type move struct {
 	*plan
 	shift float64 // = whole + rest, |rest| <= 0.5
 	whole int
-	phase *phaseShift // Fourier and rest != 0
-	taps  []float64   // Sinc and rest != 0
+	phase *phaseShift // rest != 0
 }
 
 func (p *plan) newMove(shift float64) *move {
-	m := &move{plan: p, shift: shift}
-	if math.Abs(shift) < smallestShift {
-		m.shift = 0
-		return m
-	}
-	// Halves go towards zero, so that a move and its opposite are mirror images.
-	whole := math.Copysign(math.Ceil(math.Abs(shift)-0.5), shift)
-	rest := shift - whole
-	if math.Abs(rest) < smallestShift {
-		rest = 0
-	}
 	// Beyond the extension only the line is left, however far.
-	far := float64(p.n + 2*p.ext + MaxReach)
-	m.whole = int(max(-far, min(far, whole)))
-	switch {
-	case rest == 0:
-	case p.opt.Kernel == Fourier:
+	whole, rest, none := split(shift, p.n+2*p.ext)
+	m := &move{plan: p, shift: shift, whole: whole}
+	if none {
+		m.shift = 0
+	} else if rest != 0 {
 		m.phase = newPhaseShift(p.fft, rest)
-	default:
-		m.taps = sincTaps(p.opt.reach(), rest, kaiserBeta)
 	}
 	return m
 }
 
 // scratch is one goroutine's work space for one batch of series.
 type scratch struct {
-	x   []lanes // the extended residuals
-	out []lanes // sinc only: the moved ones
-	ar  arScratch
-	// Line of each series: level at the middle of the series, slope per sample.
-	level, slope lanes
+	x  []lanes // the extended residuals
+	ar kernel.Autoregression
 }
 
 func (p *plan) newScratch() *scratch {
-	s := &scratch{x: make([]lanes, p.length())}
-	if p.opt.Kernel == Sinc {
-		s.out = make([]lanes, p.n)
-	}
-	return s
+	return &scratch{x: make([]lanes, p.length())}
 }
 
-// samples is where the caller puts the n samples of the batch and finds them moved.
+// samples is where the caller puts the n samples of the batch.
 func (p *plan) samples(s *scratch) []lanes { return s.x[p.ext : p.ext+p.n] }
 
-// run moves the batch whose samples stand in p.samples(s) and returns the n
-// moved samples of each lane (valid until the next call).
-func (m *move) run(s *scratch) []lanes {
+// run moves the batch whose samples stand in m.samples(s) and writes the n moved
+// samples of every lane to dst[t*stride] and the seven values after it.
+func (m *move) run(s *scratch, dst []float32, stride int) {
 	e, n := m.ext, m.n
 	x := s.x
-	s.removeLine(x[e : e+n])
-	m.extend(x, &s.ar)
-	out := x
-	from := e + m.whole // out[from+i] is the residual wanted for sample i
-	switch {
-	case m.phase != nil:
+	var level, slope, top lanes
+	kernel.Line(x[e:e+n], &level, &slope, &top)
+	m.extend(x, &top, &s.ar)
+	if m.phase != nil {
 		m.phase.apply(x)
 		clear(x[n+2*e:]) // nothing stands there, for this move and for the next batch
-	case m.taps != nil:
-		m.convolve(s.out, x[:n+2*e])
-		out, from = s.out, 0
 	}
 	mid := float64(float64(n-1) / 2)
-	// In place: walk against the move, so that nothing is overwritten unread.
-	put := func(i int) {
-		var r lanes
-		if k := from + i; k >= 0 && k < len(out) {
-			r = out[k]
-		}
-		t := (float64(i) - mid) + m.shift
-		to := &x[e+i]
-		for l := range r {
-			to[l] = (s.level[l] + float64(s.slope[l]*t)) + r[l]
-		}
-	}
-	if m.whole >= 0 {
-		for i := range n {
-			put(i)
-		}
+	from := e + m.whole // x[from+i] is the residual wanted for sample i
+	if lo, hi := max(0, -from), min(n, len(x)-from); lo == 0 && hi == n {
+		kernel.NarrowLanes(dst, stride, x[from:from+n], &level, &slope, mid, m.shift)
 	} else {
-		for i := n - 1; i >= 0; i-- {
-			put(i)
+		// Past what is extended only the line is left.
+		for i := range n {
+			var r lanes
+			if i >= lo && i < hi {
+				r = x[from+i]
+			}
+			kernel.NarrowLanes(dst[i*stride:], stride, []lanes{r}, &level, &slope, mid-float64(i), m.shift)
 		}
-	}
-	return x[e : e+n]
-}
-
-// removeLine takes the least-squares line out of every lane.
-func (s *scratch) removeLine(x []lanes) {
-	n := len(x)
-	mid := float64(float64(n-1) / 2)
-	var sum lanes
-	for t := range x {
-		for l, v := range x[t] {
-			sum[l] += v
-		}
-	}
-	var level, slope lanes
-	for l := range level {
-		level[l] = sum[l] / float64(n)
-	}
-	// sum (t-mid)^2 = n (n^2-1)/12; the level is taken out first so that the
-	// slope of a constant is rounding of zero, not of a large number.
-	for t := range x {
-		d := float64(t) - mid
-		for l, v := range x[t] {
-			slope[l] += float64((v - level[l]) * d)
-		}
-	}
-	squares := float64(n) * (float64(float64(n)*float64(n)) - 1) / 12
-	for l := range slope {
-		slope[l] /= squares
-	}
-	for t := range x {
-		d := float64(t) - mid
-		r := &x[t]
-		for l := range r {
-			r[l] = (r[l] - level[l]) - float64(slope[l]*d)
-		}
-	}
-	s.level, s.slope = level, slope
-}
-
-// convolve writes to out[i] the tap sum about x[ext+whole+i]; x is zero beyond its ends.
-func (m *move) convolve(out, x []lanes) {
-	reach := len(m.taps) / 2
-	for i := range out {
-		first := m.ext + m.whole + i - reach
-		lo, hi := max(0, -first), min(len(m.taps), len(x)-first)
-		var s0, s1, s2, s3, s4, s5, s6, s7 float64
-		for j := lo; j < hi; j++ {
-			w, v := m.taps[j], &x[first+j]
-			s0 += float64(w * v[0])
-			s1 += float64(w * v[1])
-			s2 += float64(w * v[2])
-			s3 += float64(w * v[3])
-			s4 += float64(w * v[4])
-			s5 += float64(w * v[5])
-			s6 += float64(w * v[6])
-			s7 += float64(w * v[7])
-		}
-		out[i] = lanes{s0, s1, s2, s3, s4, s5, s6, s7}
 	}
 }
 
@@ -278,8 +193,12 @@ func store(v float64) float32 {
 // Shifter moves equally spaced series of one length by one constant shift. It
 // holds tables and scratch and belongs to one goroutine.
 type Shifter struct {
-	move *move
+	n    int
+	move *move // Fourier
 	work *scratch
+	out  []float32 // [sample][lane]
+	sinc *sinc     // Sinc: of a volume of one voxel
+	desk *sincDesk
 }
 
 // NewShifter prepares for series of n samples, each wanted shift samples later:
@@ -296,10 +215,17 @@ func NewShifter(n int, shift float64, opt Options) *Shifter {
 	if err := opt.Check(); err != nil {
 		panic("slicetime: " + err.Error())
 	}
-	p := newPlan(n, opt)
-	s := &Shifter{move: p.newMove(shift)}
+	s := &Shifter{n: n}
+	if opt.Kernel == Sinc {
+		s.sinc = newSinc([3]int{1, 1, 1}, n, 0, []float64{shift}, opt)
+		s.desk = s.sinc.newDesk(true)
+		return s
+	}
+	p := newPlan(n)
+	s.move = p.newMove(shift)
 	if s.move.shift != 0 {
 		s.work = p.newScratch()
+		s.out = make([]float32, n*laneCount)
 	}
 	return s
 }
@@ -308,12 +234,17 @@ func NewShifter(n int, shift float64, opt Options) *Shifter {
 // A nil dst is allocated; dst may be src. Shift 0, and a series whose samples
 // are all equal, are copied bit for bit. It panics on a wrong length.
 func (s *Shifter) Shift(dst, src []float32) []float32 {
-	n := s.move.n
+	n := s.n
 	if dst == nil {
 		dst = make([]float32, n)
 	}
 	if len(src) != n || len(dst) != n {
 		panic("slicetime: series of another length than the Shifter's")
+	}
+	if s.sinc != nil {
+		copy(dst, src)
+		s.sinc.inPlace(s.desk, dst, 0)
+		return dst
 	}
 	if s.move.shift == 0 || isConstant(src) {
 		copy(dst, src)
@@ -323,8 +254,9 @@ func (s *Shifter) Shift(dst, src []float32) []float32 {
 	for t, v := range src {
 		x[t] = lanes{float64(v)} // the other lanes idle at zero
 	}
-	for t, v := range s.move.run(s.work) {
-		dst[t] = store(v[0])
+	s.move.run(s.work, s.out, laneCount)
+	for t := range dst {
+		dst[t] = s.out[t*laneCount]
 	}
 	return dst
 }

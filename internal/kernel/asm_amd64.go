@@ -136,3 +136,88 @@ func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStri
 //
 //go:noescape
 func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32)
+
+// interpolate is the assembly of interpolatePlain.
+//
+//go:noescape
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool
+
+// interpolateEach is the assembly of interpolateEachPlain.
+//
+//go:noescape
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool
+
+// widenLanes is the assembly of widenLanesPlain.
+//
+//go:noescape
+func widenLanes(x *float64, src *float32, stride int, n int)
+
+// narrowLanes is the assembly of narrowLanesPlain.
+//
+//go:noescape
+func narrowLanes(dst *float32, stride int, r *float64, n int, level *float64, slope *float64, from float64, shift float64, bounds *float64)
+
+// line is the assembly of linePlain.
+//
+//go:noescape
+func line(x *float64, n int, numbers *float64, level *float64, slope *float64, top *float64)
+
+// sumLanes is the assembly of sumLanesPlain.
+//
+//go:noescape
+func sumLanes(sum *float64, w *float64, x *float64, n int)
+
+// lags is the assembly of lagsPlain for order 8.
+//
+//go:noescape
+func lags(phi *float64, x *float64, n int)
+
+// solve is the assembly of Autoregression.solvePlain for order 8; s is phi, lower and coef.
+//
+//go:noescape
+func solve(s *float64, first *float64, last *float64, share float64)
+
+// forward predicts n samples of order 8, from after on and, if given, from before backwards.
+//
+//go:noescape
+func forward(after *float64, n int, coef *float64, limit *float64)
+
+// outward predicts n samples of order 8, from after on and, if given, from before backwards.
+//
+//go:noescape
+func outward(after *float64, before *float64, n int, coef *float64, limit *float64)
+
+// forward2 is the assembly of forward2Plain; end is the last value of z.
+//
+//go:noescape
+func forward2(z *float64, end *float64, q int, twiddle *float64)
+
+// forward3 is the assembly of forward3Plain; end is the last value of z.
+//
+//go:noescape
+func forward3(z *float64, end *float64, q int, twiddle *float64, sine float64)
+
+// forward4 is the assembly of forward4Plain; end is the last value of z.
+//
+//go:noescape
+func forward4(z *float64, end *float64, q int, twiddle *float64)
+
+// inverse2 is the assembly of inverse2Plain; end is the last value of z.
+//
+//go:noescape
+func inverse2(z *float64, end *float64, q int, twiddle *float64)
+
+// inverse3 is the assembly of inverse3Plain; end is the last value of z.
+//
+//go:noescape
+func inverse3(z *float64, end *float64, q int, twiddle *float64, sine float64)
+
+// inverse4 is the assembly of inverse4Plain; end is the last value of z.
+//
+//go:noescape
+func inverse4(z *float64, end *float64, q int, twiddle *float64)
+
+// mirrored is the assembly of mirroredPlain; mirror and mirrored run downwards.
+//
+//go:noescape
+func mirrored(z *float64, place *int, mirror *int, table *float64, mirrored *float64, n int)

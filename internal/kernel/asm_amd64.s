@@ -4398,3 +4398,3660 @@ all:
 end:
 	VZEROUPPER
 	RET
+
+// func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool
+// Requires: AVX, AVX2
+TEXT ·interpolate(SB), $0-49
+	MOVQ     dst+0(FP), AX
+	MOVQ     n+8(FP), CX
+	MOVQ     w+16(FP), DX
+	MOVQ     src+24(FP), BX
+	MOVQ     taps+32(FP), SI
+	MOVQ     like+40(FP), DI
+	VXORPS   Y0, Y0, Y0
+	VXORPS   Y1, Y1, Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLD   $0x1f, Y2, Y2
+	XORQ     R8, R8
+	MOVQ     CX, R11
+	ANDQ     $-32, R11
+
+by32:
+	CMPQ   R8, R11
+	JGE    by32_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	VXORPD Y10, Y10, Y10
+	XORQ   R9, R9
+
+by32_tap:
+	CMPQ         R9, SI
+	JGE          by32_tap_end
+	VBROADCASTSD (DX)(R9*8), Y11
+	MOVQ         (BX)(R9*8), R10
+	VCVTPS2PD    (R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y3, Y3
+	VCVTPS2PD    16(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y4, Y4
+	VCVTPS2PD    32(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y5, Y5
+	VCVTPS2PD    48(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y6, Y6
+	VCVTPS2PD    64(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y7, Y7
+	VCVTPS2PD    80(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y8, Y8
+	VCVTPS2PD    96(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y9, Y9
+	VCVTPS2PD    112(R10)(R8*4), Y12
+	VMULPD       Y11, Y12, Y12
+	VADDPD       Y12, Y10, Y10
+	ADDQ         $0x00000001, R9
+	JMP          by32_tap
+
+by32_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y11
+	VBLENDVPS   Y11, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y11
+	VORPS       Y11, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	VCVTPD2PSY  Y5, X5
+	VCVTPD2PSY  Y6, X6
+	VINSERTF128 $0x01, X6, Y5, Y5
+	VMOVUPS     32(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y5, Y4
+	VBLENDVPS   Y4, Y3, Y5, Y5
+	VSUBPS      Y5, Y5, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y5, 32(AX)(R8*4)
+	VCVTPD2PSY  Y7, X7
+	VCVTPD2PSY  Y8, X8
+	VINSERTF128 $0x01, X8, Y7, Y7
+	VMOVUPS     64(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y7, Y4
+	VBLENDVPS   Y4, Y3, Y7, Y7
+	VSUBPS      Y7, Y7, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y7, 64(AX)(R8*4)
+	VCVTPD2PSY  Y9, X9
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X10, Y9, Y9
+	VMOVUPS     96(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y9, Y4
+	VBLENDVPS   Y4, Y3, Y9, Y9
+	VSUBPS      Y9, Y9, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y9, 96(AX)(R8*4)
+	ADDQ        $0x00000020, R8
+	JMP         by32
+
+by32_end:
+	MOVQ CX, R11
+	ANDQ $-8, R11
+
+by8:
+	CMPQ   R8, R11
+	JGE    by8_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	XORQ   R9, R9
+
+by8_tap:
+	CMPQ         R9, SI
+	JGE          by8_tap_end
+	VBROADCASTSD (DX)(R9*8), Y5
+	MOVQ         (BX)(R9*8), R10
+	VCVTPS2PD    (R10)(R8*4), Y6
+	VMULPD       Y5, Y6, Y6
+	VADDPD       Y6, Y3, Y3
+	VCVTPS2PD    16(R10)(R8*4), Y6
+	VMULPD       Y5, Y6, Y6
+	VADDPD       Y6, Y4, Y4
+	ADDQ         $0x00000001, R9
+	JMP          by8_tap
+
+by8_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y5
+	VBLENDVPS   Y5, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y5
+	VORPS       Y5, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	ADDQ        $0x00000008, R8
+	JMP         by8
+
+by8_end:
+one:
+	CMPQ   R8, CX
+	JGE    one_end
+	VXORPD Y3, Y3, Y3
+	XORQ   R9, R9
+
+one_tap:
+	CMPQ         R9, SI
+	JGE          one_tap_end
+	VBROADCASTSD (DX)(R9*8), Y4
+	MOVQ         (BX)(R9*8), R10
+	VMOVSS       (R10)(R8*4), X5
+	VCVTSS2SD    X5, X5, X5
+	VMULSD       X4, X5, X5
+	VADDSD       X5, X3, X3
+	ADDQ         $0x00000001, R9
+	JMP          one_tap
+
+one_tap_end:
+	VXORPS    Y4, Y4, Y4
+	VXORPS    Y5, Y5, Y5
+	VCVTSD2SS X3, X4, X4
+	VMOVSS    (DI)(R8*4), X5
+	VANDPS    Y2, Y5, Y5
+	VCMPPS    $0x00, Y1, Y4, Y3
+	VBLENDVPS Y3, Y5, Y4, Y4
+	VSUBPS    Y4, Y4, Y3
+	VORPS     Y3, Y0, Y0
+	VMOVSS    X4, (AX)(R8*4)
+	ADDQ      $0x00000001, R8
+	JMP       one
+
+one_end:
+	VPTEST Y0, Y0
+	SETEQ  AL
+	VZEROUPPER
+	MOVB   AL, ret+48(FP)
+	RET
+
+// func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool
+// Requires: AVX, AVX2
+TEXT ·interpolateEach(SB), $0-49
+	MOVQ     dst+0(FP), AX
+	MOVQ     n+8(FP), CX
+	MOVQ     w+16(FP), DX
+	MOVQ     src+24(FP), BX
+	MOVQ     taps+32(FP), SI
+	MOVQ     like+40(FP), DI
+	VXORPS   Y0, Y0, Y0
+	VXORPS   Y1, Y1, Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLD   $0x1f, Y2, Y2
+	XORQ     R8, R8
+	MOVQ     CX, R12
+	ANDQ     $-32, R12
+
+by32:
+	CMPQ   R8, R12
+	JGE    by32_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	VXORPD Y9, Y9, Y9
+	VXORPD Y10, Y10, Y10
+	XORQ   R9, R9
+
+by32_tap:
+	CMPQ      R9, SI
+	JGE       by32_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VCVTPS2PD (R10)(R8*4), Y11
+	VMULPD    (R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y3, Y3
+	VCVTPS2PD 16(R10)(R8*4), Y11
+	VMULPD    32(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y4, Y4
+	VCVTPS2PD 32(R10)(R8*4), Y11
+	VMULPD    64(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y5, Y5
+	VCVTPS2PD 48(R10)(R8*4), Y11
+	VMULPD    96(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y6, Y6
+	VCVTPS2PD 64(R10)(R8*4), Y11
+	VMULPD    128(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y7, Y7
+	VCVTPS2PD 80(R10)(R8*4), Y11
+	VMULPD    160(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y8, Y8
+	VCVTPS2PD 96(R10)(R8*4), Y11
+	VMULPD    192(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y9, Y9
+	VCVTPS2PD 112(R10)(R8*4), Y11
+	VMULPD    224(R11)(R8*8), Y11, Y11
+	VADDPD    Y11, Y10, Y10
+	ADDQ      $0x00000001, R9
+	JMP       by32_tap
+
+by32_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y11
+	VBLENDVPS   Y11, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y11
+	VORPS       Y11, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	VCVTPD2PSY  Y5, X5
+	VCVTPD2PSY  Y6, X6
+	VINSERTF128 $0x01, X6, Y5, Y5
+	VMOVUPS     32(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y5, Y4
+	VBLENDVPS   Y4, Y3, Y5, Y5
+	VSUBPS      Y5, Y5, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y5, 32(AX)(R8*4)
+	VCVTPD2PSY  Y7, X7
+	VCVTPD2PSY  Y8, X8
+	VINSERTF128 $0x01, X8, Y7, Y7
+	VMOVUPS     64(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y7, Y4
+	VBLENDVPS   Y4, Y3, Y7, Y7
+	VSUBPS      Y7, Y7, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y7, 64(AX)(R8*4)
+	VCVTPD2PSY  Y9, X9
+	VCVTPD2PSY  Y10, X10
+	VINSERTF128 $0x01, X10, Y9, Y9
+	VMOVUPS     96(DI)(R8*4), Y3
+	VANDPS      Y2, Y3, Y3
+	VCMPPS      $0x00, Y1, Y9, Y4
+	VBLENDVPS   Y4, Y3, Y9, Y9
+	VSUBPS      Y9, Y9, Y4
+	VORPS       Y4, Y0, Y0
+	VMOVUPS     Y9, 96(AX)(R8*4)
+	ADDQ        $0x00000020, R8
+	JMP         by32
+
+by32_end:
+	MOVQ CX, R12
+	ANDQ $-8, R12
+
+by8:
+	CMPQ   R8, R12
+	JGE    by8_end
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	XORQ   R9, R9
+
+by8_tap:
+	CMPQ      R9, SI
+	JGE       by8_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VCVTPS2PD (R10)(R8*4), Y5
+	VMULPD    (R11)(R8*8), Y5, Y5
+	VADDPD    Y5, Y3, Y3
+	VCVTPS2PD 16(R10)(R8*4), Y5
+	VMULPD    32(R11)(R8*8), Y5, Y5
+	VADDPD    Y5, Y4, Y4
+	ADDQ      $0x00000001, R9
+	JMP       by8_tap
+
+by8_tap_end:
+	VCVTPD2PSY  Y3, X3
+	VCVTPD2PSY  Y4, X4
+	VINSERTF128 $0x01, X4, Y3, Y3
+	VMOVUPS     (DI)(R8*4), Y4
+	VANDPS      Y2, Y4, Y4
+	VCMPPS      $0x00, Y1, Y3, Y5
+	VBLENDVPS   Y5, Y4, Y3, Y3
+	VSUBPS      Y3, Y3, Y5
+	VORPS       Y5, Y0, Y0
+	VMOVUPS     Y3, (AX)(R8*4)
+	ADDQ        $0x00000008, R8
+	JMP         by8
+
+by8_end:
+one:
+	CMPQ   R8, CX
+	JGE    one_end
+	VXORPD Y3, Y3, Y3
+	XORQ   R9, R9
+
+one_tap:
+	CMPQ      R9, SI
+	JGE       one_tap_end
+	MOVQ      (DX)(R9*8), R11
+	MOVQ      (BX)(R9*8), R10
+	VMOVSS    (R10)(R8*4), X4
+	VCVTSS2SD X4, X4, X4
+	VMULSD    (R11)(R8*8), X4, X4
+	VADDSD    X4, X3, X3
+	ADDQ      $0x00000001, R9
+	JMP       one_tap
+
+one_tap_end:
+	VXORPS    Y4, Y4, Y4
+	VXORPS    Y5, Y5, Y5
+	VCVTSD2SS X3, X4, X4
+	VMOVSS    (DI)(R8*4), X5
+	VANDPS    Y2, Y5, Y5
+	VCMPPS    $0x00, Y1, Y4, Y3
+	VBLENDVPS Y3, Y5, Y4, Y4
+	VSUBPS    Y4, Y4, Y3
+	VORPS     Y3, Y0, Y0
+	VMOVSS    X4, (AX)(R8*4)
+	ADDQ      $0x00000001, R8
+	JMP       one
+
+one_end:
+	VPTEST Y0, Y0
+	SETEQ  AL
+	VZEROUPPER
+	MOVB   AL, ret+48(FP)
+	RET
+
+// func widenLanes(x *float64, src *float32, stride int, n int)
+// Requires: AVX
+TEXT ·widenLanes(SB), $0-32
+	MOVQ x+0(FP), AX
+	MOVQ src+8(FP), CX
+	MOVQ stride+16(FP), DX
+	MOVQ n+24(FP), BX
+	SHLQ $0x02, DX
+
+samples:
+	TESTQ     BX, BX
+	JZ        samples_end
+	VCVTPS2PD (CX), Y0
+	VMOVUPD   Y0, (AX)
+	VCVTPS2PD 16(CX), Y0
+	VMOVUPD   Y0, 32(AX)
+	ADDQ      $+64, AX
+	ADDQ      DX, CX
+	DECQ      BX
+	JMP       samples
+
+samples_end:
+	VZEROUPPER
+	RET
+
+// func narrowLanes(dst *float32, stride int, r *float64, n int, level *float64, slope *float64, from float64, shift float64, bounds *float64)
+// Requires: AVX
+TEXT ·narrowLanes(SB), $0-72
+	MOVQ         dst+0(FP), AX
+	MOVQ         stride+8(FP), CX
+	MOVQ         r+16(FP), DX
+	MOVQ         n+24(FP), BX
+	MOVQ         level+32(FP), SI
+	VMOVUPD      (SI), Y0
+	VMOVUPD      32(SI), Y1
+	MOVQ         slope+40(FP), SI
+	VMOVUPD      (SI), Y2
+	VMOVUPD      32(SI), Y3
+	VBROADCASTSD from+48(FP), Y4
+	VBROADCASTSD shift+56(FP), Y5
+	MOVQ         bounds+64(FP), SI
+	VBROADCASTSD (SI), Y6
+	VBROADCASTSD 8(SI), Y7
+	VBROADCASTSD 16(SI), Y8
+	SHLQ         $0x02, CX
+
+samples:
+	TESTQ      BX, BX
+	JZ         samples_end
+	VADDPD     Y5, Y4, Y9
+	VADDPD     Y8, Y4, Y4
+	VMULPD     Y2, Y9, Y10
+	VADDPD     Y10, Y0, Y10
+	VADDPD     (DX), Y10, Y10
+	VMINPD     Y10, Y6, Y10
+	VMAXPD     Y10, Y7, Y10
+	VCVTPD2PSY Y10, X10
+	VMOVUPS    X10, (AX)
+	VMULPD     Y3, Y9, Y9
+	VADDPD     Y9, Y1, Y9
+	VADDPD     32(DX), Y9, Y9
+	VMINPD     Y9, Y6, Y9
+	VMAXPD     Y9, Y7, Y9
+	VCVTPD2PSY Y9, X9
+	VMOVUPS    X9, 16(AX)
+	ADDQ       $+64, DX
+	ADDQ       CX, AX
+	DECQ       BX
+	JMP        samples
+
+samples_end:
+	VZEROUPPER
+	RET
+
+// func line(x *float64, n int, numbers *float64, level *float64, slope *float64, top *float64)
+// Requires: AVX, AVX2
+TEXT ·line(SB), $0-48
+	MOVQ   x+0(FP), AX
+	MOVQ   n+8(FP), CX
+	MOVQ   numbers+16(FP), DX
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	MOVQ   AX, BX
+	MOVQ   CX, SI
+
+sum:
+	TESTQ  SI, SI
+	JZ     sum_end
+	VADDPD (BX), Y0, Y0
+	VADDPD 32(BX), Y1, Y1
+	ADDQ   $+64, BX
+	DECQ   SI
+	JMP    sum
+
+sum_end:
+	VBROADCASTSD (DX), Y6
+	VDIVPD       Y6, Y0, Y0
+	VBROADCASTSD (DX), Y6
+	VDIVPD       Y6, Y1, Y1
+	VBROADCASTSD 8(DX), Y6
+	VBROADCASTSD 24(DX), Y7
+	MOVQ         AX, BX
+	MOVQ         CX, SI
+
+slope:
+	TESTQ   SI, SI
+	JZ      slope_end
+	VMOVUPD (BX), Y8
+	VMOVUPD 32(BX), Y9
+	VSUBPD  Y0, Y8, Y8
+	VMULPD  Y6, Y8, Y8
+	VADDPD  Y8, Y2, Y2
+	VSUBPD  Y1, Y9, Y9
+	VMULPD  Y6, Y9, Y9
+	VADDPD  Y9, Y3, Y3
+	VADDPD  Y7, Y6, Y6
+	ADDQ    $+64, BX
+	DECQ    SI
+	JMP     slope
+
+slope_end:
+	VBROADCASTSD 16(DX), Y6
+	VDIVPD       Y6, Y2, Y2
+	VBROADCASTSD 16(DX), Y6
+	VDIVPD       Y6, Y3, Y3
+	VBROADCASTSD 8(DX), Y6
+	VPCMPEQD     Y8, Y8, Y8
+	VPSRLQ       $0x01, Y8, Y8
+	MOVQ         AX, BX
+	MOVQ         CX, SI
+
+rest:
+	TESTQ   SI, SI
+	JZ      rest_end
+	VMOVUPD (BX), Y9
+	VMOVUPD 32(BX), Y10
+	VSUBPD  Y0, Y9, Y9
+	VMULPD  Y6, Y2, Y11
+	VSUBPD  Y11, Y9, Y9
+	VMOVUPD Y9, (BX)
+	VANDPD  Y8, Y9, Y9
+	VMAXPD  Y4, Y9, Y4
+	VSUBPD  Y1, Y10, Y10
+	VMULPD  Y6, Y3, Y9
+	VSUBPD  Y9, Y10, Y10
+	VMOVUPD Y10, 32(BX)
+	VANDPD  Y8, Y10, Y10
+	VMAXPD  Y5, Y10, Y5
+	VADDPD  Y7, Y6, Y6
+	ADDQ    $+64, BX
+	DECQ    SI
+	JMP     rest
+
+rest_end:
+	MOVQ    level+24(FP), AX
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	MOVQ    slope+32(FP), AX
+	VMOVUPD Y2, (AX)
+	VMOVUPD Y3, 32(AX)
+	MOVQ    top+40(FP), AX
+	VMOVUPD Y4, (AX)
+	VMOVUPD Y5, 32(AX)
+	VZEROUPPER
+	RET
+
+// func sumLanes(sum *float64, w *float64, x *float64, n int)
+// Requires: AVX
+TEXT ·sumLanes(SB), $0-32
+	MOVQ   sum+0(FP), AX
+	MOVQ   w+8(FP), CX
+	MOVQ   x+16(FP), DX
+	MOVQ   n+24(FP), BX
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+
+taps:
+	TESTQ        BX, BX
+	JZ           taps_end
+	VBROADCASTSD (CX), Y2
+	VMULPD       (DX), Y2, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       32(DX), Y2, Y2
+	VADDPD       Y2, Y1, Y1
+	ADDQ         $+8, CX
+	ADDQ         $+64, DX
+	DECQ         BX
+	JMP          taps
+
+taps_end:
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VZEROUPPER
+	RET
+
+// func lags(phi *float64, x *float64, n int)
+// Requires: AVX
+TEXT ·lags(SB), $0-24
+	MOVQ   phi+0(FP), AX
+	MOVQ   x+8(FP), CX
+	MOVQ   n+16(FP), DX
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	VXORPD Y2, Y2, Y2
+	VXORPD Y3, Y3, Y3
+	VXORPD Y4, Y4, Y4
+	VXORPD Y5, Y5, Y5
+	VXORPD Y6, Y6, Y6
+	VXORPD Y7, Y7, Y7
+	VXORPD Y8, Y8, Y8
+	MOVQ   CX, BX
+	MOVQ   DX, SI
+
+low:
+	TESTQ   SI, SI
+	JZ      low_end
+	VMOVUPD (BX), Y9
+	VMULPD  (BX), Y9, Y10
+	VADDPD  Y10, Y0, Y0
+	VMULPD  -64(BX), Y9, Y10
+	VADDPD  Y10, Y1, Y1
+	VMULPD  -128(BX), Y9, Y10
+	VADDPD  Y10, Y2, Y2
+	VMULPD  -192(BX), Y9, Y10
+	VADDPD  Y10, Y3, Y3
+	VMULPD  -256(BX), Y9, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -320(BX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  -384(BX), Y9, Y10
+	VADDPD  Y10, Y6, Y6
+	VMULPD  -448(BX), Y9, Y10
+	VADDPD  Y10, Y7, Y7
+	VMULPD  -512(BX), Y9, Y9
+	VADDPD  Y9, Y8, Y8
+	ADDQ    $+64, BX
+	DECQ    SI
+	JMP     low
+
+low_end:
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 64(AX)
+	VMOVUPD Y2, 128(AX)
+	VMOVUPD Y3, 192(AX)
+	VMOVUPD Y4, 256(AX)
+	VMOVUPD Y5, 320(AX)
+	VMOVUPD Y6, 384(AX)
+	VMOVUPD Y7, 448(AX)
+	VMOVUPD Y8, 512(AX)
+	VXORPD  Y0, Y0, Y0
+	VXORPD  Y1, Y1, Y1
+	VXORPD  Y2, Y2, Y2
+	VXORPD  Y3, Y3, Y3
+	VXORPD  Y4, Y4, Y4
+	VXORPD  Y5, Y5, Y5
+	VXORPD  Y6, Y6, Y6
+	VXORPD  Y7, Y7, Y7
+	VXORPD  Y8, Y8, Y8
+	MOVQ    DX, DX
+
+high:
+	TESTQ   DX, DX
+	JZ      high_end
+	VMOVUPD 32(CX), Y9
+	VMULPD  32(CX), Y9, Y10
+	VADDPD  Y10, Y0, Y0
+	VMULPD  -32(CX), Y9, Y10
+	VADDPD  Y10, Y1, Y1
+	VMULPD  -96(CX), Y9, Y10
+	VADDPD  Y10, Y2, Y2
+	VMULPD  -160(CX), Y9, Y10
+	VADDPD  Y10, Y3, Y3
+	VMULPD  -224(CX), Y9, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -288(CX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  -352(CX), Y9, Y10
+	VADDPD  Y10, Y6, Y6
+	VMULPD  -416(CX), Y9, Y10
+	VADDPD  Y10, Y7, Y7
+	VMULPD  -480(CX), Y9, Y9
+	VADDPD  Y9, Y8, Y8
+	ADDQ    $+64, CX
+	DECQ    DX
+	JMP     high
+
+high_end:
+	VMOVUPD Y0, 32(AX)
+	VMOVUPD Y1, 96(AX)
+	VMOVUPD Y2, 160(AX)
+	VMOVUPD Y3, 224(AX)
+	VMOVUPD Y4, 288(AX)
+	VMOVUPD Y5, 352(AX)
+	VMOVUPD Y6, 416(AX)
+	VMOVUPD Y7, 480(AX)
+	VMOVUPD Y8, 544(AX)
+	VZEROUPPER
+	RET
+
+// func solve(s *float64, first *float64, last *float64, share float64)
+// Requires: AVX, AVX2
+TEXT ·solve(SB), $0-32
+	MOVQ         s+0(FP), AX
+	MOVQ         first+8(FP), CX
+	MOVQ         last+16(FP), DX
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       448(CX), Y0, Y0
+	VADDPD       (AX), Y0, Y0
+	VMULPD       448(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 640(AX)
+	VMULPD       480(CX), Y1, Y1
+	VADDPD       32(AX), Y1, Y0
+	VMULPD       480(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 672(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       384(CX), Y0, Y0
+	VADDPD       64(AX), Y0, Y0
+	VMULPD       384(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 704(AX)
+	VMULPD       416(CX), Y1, Y1
+	VADDPD       96(AX), Y1, Y0
+	VMULPD       416(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 736(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       320(CX), Y0, Y0
+	VADDPD       128(AX), Y0, Y0
+	VMULPD       320(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 768(AX)
+	VMULPD       352(CX), Y1, Y1
+	VADDPD       160(AX), Y1, Y0
+	VMULPD       352(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 800(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       256(CX), Y0, Y0
+	VADDPD       192(AX), Y0, Y0
+	VMULPD       256(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 832(AX)
+	VMULPD       288(CX), Y1, Y1
+	VADDPD       224(AX), Y1, Y0
+	VMULPD       288(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 864(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       192(CX), Y0, Y0
+	VADDPD       256(AX), Y0, Y0
+	VMULPD       192(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 896(AX)
+	VMULPD       224(CX), Y1, Y1
+	VADDPD       288(AX), Y1, Y0
+	VMULPD       224(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 928(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       320(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 960(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       352(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 992(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       384(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1024(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       416(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1056(AX)
+	VMOVUPD      448(CX), Y0
+	VMOVUPD      480(CX), Y1
+	VMOVUPD      448(DX), Y2
+	VMOVUPD      480(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       448(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1088(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       480(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1120(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       384(CX), Y0, Y0
+	VADDPD       640(AX), Y0, Y0
+	VMULPD       384(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1280(AX)
+	VMULPD       416(CX), Y1, Y1
+	VADDPD       672(AX), Y1, Y0
+	VMULPD       416(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1312(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       320(CX), Y0, Y0
+	VADDPD       704(AX), Y0, Y0
+	VMULPD       320(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1344(AX)
+	VMULPD       352(CX), Y1, Y1
+	VADDPD       736(AX), Y1, Y0
+	VMULPD       352(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1376(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       256(CX), Y0, Y0
+	VADDPD       768(AX), Y0, Y0
+	VMULPD       256(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1408(AX)
+	VMULPD       288(CX), Y1, Y1
+	VADDPD       800(AX), Y1, Y0
+	VMULPD       288(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1440(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       192(CX), Y0, Y0
+	VADDPD       832(AX), Y0, Y0
+	VMULPD       192(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1472(AX)
+	VMULPD       224(CX), Y1, Y1
+	VADDPD       864(AX), Y1, Y0
+	VMULPD       224(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1504(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       896(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1536(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       928(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1568(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       960(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1600(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       992(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1632(AX)
+	VMOVUPD      384(CX), Y0
+	VMOVUPD      416(CX), Y1
+	VMOVUPD      384(DX), Y2
+	VMOVUPD      416(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       1024(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1664(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       1056(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1696(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       320(CX), Y0, Y0
+	VADDPD       1280(AX), Y0, Y0
+	VMULPD       320(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1920(AX)
+	VMULPD       352(CX), Y1, Y1
+	VADDPD       1312(AX), Y1, Y0
+	VMULPD       352(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 1952(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       256(CX), Y0, Y0
+	VADDPD       1344(AX), Y0, Y0
+	VMULPD       256(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 1984(AX)
+	VMULPD       288(CX), Y1, Y1
+	VADDPD       1376(AX), Y1, Y0
+	VMULPD       288(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2016(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       192(CX), Y0, Y0
+	VADDPD       1408(AX), Y0, Y0
+	VMULPD       192(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2048(AX)
+	VMULPD       224(CX), Y1, Y1
+	VADDPD       1440(AX), Y1, Y0
+	VMULPD       224(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2080(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       1472(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2112(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       1504(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2144(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       1536(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2176(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       1568(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2208(AX)
+	VMOVUPD      320(CX), Y0
+	VMOVUPD      352(CX), Y1
+	VMOVUPD      320(DX), Y2
+	VMOVUPD      352(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       1600(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2240(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       1632(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2272(AX)
+	VMOVUPD      256(CX), Y0
+	VMOVUPD      288(CX), Y1
+	VMOVUPD      256(DX), Y2
+	VMOVUPD      288(DX), Y3
+	VMULPD       256(CX), Y0, Y0
+	VADDPD       1920(AX), Y0, Y0
+	VMULPD       256(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2560(AX)
+	VMULPD       288(CX), Y1, Y1
+	VADDPD       1952(AX), Y1, Y0
+	VMULPD       288(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2592(AX)
+	VMOVUPD      256(CX), Y0
+	VMOVUPD      288(CX), Y1
+	VMOVUPD      256(DX), Y2
+	VMOVUPD      288(DX), Y3
+	VMULPD       192(CX), Y0, Y0
+	VADDPD       1984(AX), Y0, Y0
+	VMULPD       192(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2624(AX)
+	VMULPD       224(CX), Y1, Y1
+	VADDPD       2016(AX), Y1, Y0
+	VMULPD       224(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2656(AX)
+	VMOVUPD      256(CX), Y0
+	VMOVUPD      288(CX), Y1
+	VMOVUPD      256(DX), Y2
+	VMOVUPD      288(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       2048(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2688(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       2080(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2720(AX)
+	VMOVUPD      256(CX), Y0
+	VMOVUPD      288(CX), Y1
+	VMOVUPD      256(DX), Y2
+	VMOVUPD      288(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       2112(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2752(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       2144(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2784(AX)
+	VMOVUPD      256(CX), Y0
+	VMOVUPD      288(CX), Y1
+	VMOVUPD      256(DX), Y2
+	VMOVUPD      288(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       2176(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 2816(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       2208(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 2848(AX)
+	VMOVUPD      192(CX), Y0
+	VMOVUPD      224(CX), Y1
+	VMOVUPD      192(DX), Y2
+	VMOVUPD      224(DX), Y3
+	VMULPD       192(CX), Y0, Y0
+	VADDPD       2560(AX), Y0, Y0
+	VMULPD       192(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3200(AX)
+	VMULPD       224(CX), Y1, Y1
+	VADDPD       2592(AX), Y1, Y0
+	VMULPD       224(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3232(AX)
+	VMOVUPD      192(CX), Y0
+	VMOVUPD      224(CX), Y1
+	VMOVUPD      192(DX), Y2
+	VMOVUPD      224(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       2624(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3264(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       2656(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3296(AX)
+	VMOVUPD      192(CX), Y0
+	VMOVUPD      224(CX), Y1
+	VMOVUPD      192(DX), Y2
+	VMOVUPD      224(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       2688(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3328(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       2720(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3360(AX)
+	VMOVUPD      192(CX), Y0
+	VMOVUPD      224(CX), Y1
+	VMOVUPD      192(DX), Y2
+	VMOVUPD      224(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       2752(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3392(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       2784(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3424(AX)
+	VMOVUPD      128(CX), Y0
+	VMOVUPD      160(CX), Y1
+	VMOVUPD      128(DX), Y2
+	VMOVUPD      160(DX), Y3
+	VMULPD       128(CX), Y0, Y0
+	VADDPD       3200(AX), Y0, Y0
+	VMULPD       128(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3840(AX)
+	VMULPD       160(CX), Y1, Y1
+	VADDPD       3232(AX), Y1, Y0
+	VMULPD       160(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3872(AX)
+	VMOVUPD      128(CX), Y0
+	VMOVUPD      160(CX), Y1
+	VMOVUPD      128(DX), Y2
+	VMOVUPD      160(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       3264(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3904(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       3296(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 3936(AX)
+	VMOVUPD      128(CX), Y0
+	VMOVUPD      160(CX), Y1
+	VMOVUPD      128(DX), Y2
+	VMOVUPD      160(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       3328(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 3968(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       3360(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 4000(AX)
+	VMOVUPD      64(CX), Y0
+	VMOVUPD      96(CX), Y1
+	VMOVUPD      64(DX), Y2
+	VMOVUPD      96(DX), Y3
+	VMULPD       64(CX), Y0, Y0
+	VADDPD       3840(AX), Y0, Y0
+	VMULPD       64(DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 4480(AX)
+	VMULPD       96(CX), Y1, Y1
+	VADDPD       3872(AX), Y1, Y0
+	VMULPD       96(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 4512(AX)
+	VMOVUPD      64(CX), Y0
+	VMOVUPD      96(CX), Y1
+	VMOVUPD      64(DX), Y2
+	VMOVUPD      96(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       3904(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 4544(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       3936(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 4576(AX)
+	VMOVUPD      (CX), Y0
+	VMOVUPD      32(CX), Y1
+	VMOVUPD      (DX), Y2
+	VMOVUPD      32(DX), Y3
+	VMULPD       (CX), Y0, Y0
+	VADDPD       4480(AX), Y0, Y0
+	VMULPD       (DX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMOVUPD      Y0, 5120(AX)
+	VMULPD       32(CX), Y1, Y1
+	VADDPD       4512(AX), Y1, Y0
+	VMULPD       32(DX), Y3, Y3
+	VSUBPD       Y3, Y0, Y0
+	VMOVUPD      Y0, 5152(AX)
+	VXORPD       Y0, Y0, Y0
+	VXORPD       Y1, Y1, Y1
+	VMOVUPD      640(AX), Y2
+	VMOVUPD      672(AX), Y3
+	VADDPD       4480(AX), Y2, Y2
+	VADDPD       4512(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      1280(AX), Y2
+	VMOVUPD      1312(AX), Y3
+	VADDPD       3840(AX), Y2, Y2
+	VADDPD       3872(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      1920(AX), Y2
+	VMOVUPD      1952(AX), Y3
+	VADDPD       3200(AX), Y2, Y2
+	VADDPD       3232(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      2560(AX), Y2
+	VMOVUPD      2592(AX), Y3
+	VADDPD       2560(AX), Y2, Y2
+	VADDPD       2592(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      3200(AX), Y2
+	VMOVUPD      3232(AX), Y3
+	VADDPD       1920(AX), Y2, Y2
+	VADDPD       1952(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      3840(AX), Y2
+	VMOVUPD      3872(AX), Y3
+	VADDPD       1280(AX), Y2, Y2
+	VADDPD       1312(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      4480(AX), Y2
+	VMOVUPD      4512(AX), Y3
+	VADDPD       640(AX), Y2, Y2
+	VADDPD       672(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VMOVUPD      5120(AX), Y2
+	VMOVUPD      5152(AX), Y3
+	VADDPD       (AX), Y2, Y2
+	VADDPD       32(AX), Y3, Y3
+	VADDPD       Y2, Y0, Y0
+	VADDPD       Y3, Y1, Y1
+	VXORPD       Y2, Y2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSLLQ       $0x36, Y3, Y3
+	VPSRLQ       $0x02, Y3, Y3
+	VBROADCASTSD share+24(FP), Y4
+	VMULPD       Y4, Y0, Y0
+	VCMPPD       $0x1e, Y2, Y0, Y5
+	VBLENDVPD    Y5, Y0, Y3, Y0
+	VMULPD       Y4, Y1, Y1
+	VCMPPD       $0x1e, Y2, Y1, Y2
+	VBLENDVPD    Y2, Y1, Y3, Y1
+	VMOVUPD      640(AX), Y2
+	VMOVUPD      672(AX), Y3
+	VADDPD       4480(AX), Y2, Y2
+	VADDPD       4512(AX), Y3, Y3
+	VMOVUPD      64(AX), Y4
+	VMOVUPD      96(AX), Y5
+	VADDPD       4544(AX), Y4, Y4
+	VADDPD       4576(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      Y2, 5184(AX)
+	VMOVUPD      Y3, 5216(AX)
+	VMOVUPD      Y4, 9280(AX)
+	VMOVUPD      Y5, 9312(AX)
+	VMOVUPD      704(AX), Y2
+	VMOVUPD      736(AX), Y3
+	VADDPD       3904(AX), Y2, Y2
+	VADDPD       3936(AX), Y3, Y3
+	VMOVUPD      Y2, 5696(AX)
+	VMOVUPD      Y3, 5728(AX)
+	VMOVUPD      1280(AX), Y2
+	VMOVUPD      1312(AX), Y3
+	VADDPD       3840(AX), Y2, Y2
+	VADDPD       3872(AX), Y3, Y3
+	VMOVUPD      128(AX), Y4
+	VMOVUPD      160(AX), Y5
+	VADDPD       3968(AX), Y4, Y4
+	VADDPD       4000(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      5696(AX), Y6
+	VMOVUPD      5728(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 5696(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 5728(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 5760(AX)
+	VMOVUPD      Y3, 5792(AX)
+	VMOVUPD      Y4, 9344(AX)
+	VMOVUPD      Y5, 9376(AX)
+	VMOVUPD      768(AX), Y2
+	VMOVUPD      800(AX), Y3
+	VADDPD       3328(AX), Y2, Y2
+	VADDPD       3360(AX), Y3, Y3
+	VMOVUPD      Y2, 6208(AX)
+	VMOVUPD      Y3, 6240(AX)
+	VMOVUPD      1344(AX), Y2
+	VMOVUPD      1376(AX), Y3
+	VADDPD       3264(AX), Y2, Y2
+	VADDPD       3296(AX), Y3, Y3
+	VMOVUPD      6208(AX), Y4
+	VMOVUPD      6240(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 6272(AX)
+	VMOVUPD      Y3, 6304(AX)
+	VMOVUPD      1920(AX), Y2
+	VMOVUPD      1952(AX), Y3
+	VADDPD       3200(AX), Y2, Y2
+	VADDPD       3232(AX), Y3, Y3
+	VMOVUPD      192(AX), Y4
+	VMOVUPD      224(AX), Y5
+	VADDPD       3392(AX), Y4, Y4
+	VADDPD       3424(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      6208(AX), Y6
+	VMOVUPD      6240(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 6208(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 6240(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      6272(AX), Y6
+	VMOVUPD      6304(AX), Y7
+	VDIVPD       5760(AX), Y6, Y8
+	VMOVUPD      Y8, 6272(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9344(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5792(AX), Y7, Y6
+	VMOVUPD      Y6, 6304(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9376(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 6336(AX)
+	VMOVUPD      Y3, 6368(AX)
+	VMOVUPD      Y4, 9408(AX)
+	VMOVUPD      Y5, 9440(AX)
+	VMOVUPD      832(AX), Y2
+	VMOVUPD      864(AX), Y3
+	VADDPD       2752(AX), Y2, Y2
+	VADDPD       2784(AX), Y3, Y3
+	VMOVUPD      Y2, 6720(AX)
+	VMOVUPD      Y3, 6752(AX)
+	VMOVUPD      1408(AX), Y2
+	VMOVUPD      1440(AX), Y3
+	VADDPD       2688(AX), Y2, Y2
+	VADDPD       2720(AX), Y3, Y3
+	VMOVUPD      6720(AX), Y4
+	VMOVUPD      6752(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 6784(AX)
+	VMOVUPD      Y3, 6816(AX)
+	VMOVUPD      1984(AX), Y2
+	VMOVUPD      2016(AX), Y3
+	VADDPD       2624(AX), Y2, Y2
+	VADDPD       2656(AX), Y3, Y3
+	VMOVUPD      6720(AX), Y4
+	VMOVUPD      6752(AX), Y5
+	VMULPD       6208(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6240(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      6784(AX), Y4
+	VMOVUPD      6816(AX), Y5
+	VMULPD       6272(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6304(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 6848(AX)
+	VMOVUPD      Y3, 6880(AX)
+	VMOVUPD      2560(AX), Y2
+	VMOVUPD      2592(AX), Y3
+	VADDPD       2560(AX), Y2, Y2
+	VADDPD       2592(AX), Y3, Y3
+	VMOVUPD      256(AX), Y4
+	VMOVUPD      288(AX), Y5
+	VADDPD       2816(AX), Y4, Y4
+	VADDPD       2848(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      6720(AX), Y6
+	VMOVUPD      6752(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 6720(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 6752(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      6784(AX), Y6
+	VMOVUPD      6816(AX), Y7
+	VDIVPD       5760(AX), Y6, Y8
+	VMOVUPD      Y8, 6784(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9344(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5792(AX), Y7, Y6
+	VMOVUPD      Y6, 6816(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9376(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      6848(AX), Y6
+	VMOVUPD      6880(AX), Y7
+	VDIVPD       6336(AX), Y6, Y8
+	VMOVUPD      Y8, 6848(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9408(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6368(AX), Y7, Y6
+	VMOVUPD      Y6, 6880(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9440(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 6912(AX)
+	VMOVUPD      Y3, 6944(AX)
+	VMOVUPD      Y4, 9472(AX)
+	VMOVUPD      Y5, 9504(AX)
+	VMOVUPD      896(AX), Y2
+	VMOVUPD      928(AX), Y3
+	VADDPD       2176(AX), Y2, Y2
+	VADDPD       2208(AX), Y3, Y3
+	VMOVUPD      Y2, 7232(AX)
+	VMOVUPD      Y3, 7264(AX)
+	VMOVUPD      1472(AX), Y2
+	VMOVUPD      1504(AX), Y3
+	VADDPD       2112(AX), Y2, Y2
+	VADDPD       2144(AX), Y3, Y3
+	VMOVUPD      7232(AX), Y4
+	VMOVUPD      7264(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7296(AX)
+	VMOVUPD      Y3, 7328(AX)
+	VMOVUPD      2048(AX), Y2
+	VMOVUPD      2080(AX), Y3
+	VADDPD       2048(AX), Y2, Y2
+	VADDPD       2080(AX), Y3, Y3
+	VMOVUPD      7232(AX), Y4
+	VMOVUPD      7264(AX), Y5
+	VMULPD       6208(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6240(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7296(AX), Y4
+	VMOVUPD      7328(AX), Y5
+	VMULPD       6272(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6304(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7360(AX)
+	VMOVUPD      Y3, 7392(AX)
+	VMOVUPD      2624(AX), Y2
+	VMOVUPD      2656(AX), Y3
+	VADDPD       1984(AX), Y2, Y2
+	VADDPD       2016(AX), Y3, Y3
+	VMOVUPD      7232(AX), Y4
+	VMOVUPD      7264(AX), Y5
+	VMULPD       6720(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6752(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7296(AX), Y4
+	VMOVUPD      7328(AX), Y5
+	VMULPD       6784(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6816(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7360(AX), Y4
+	VMOVUPD      7392(AX), Y5
+	VMULPD       6848(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6880(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7424(AX)
+	VMOVUPD      Y3, 7456(AX)
+	VMOVUPD      3200(AX), Y2
+	VMOVUPD      3232(AX), Y3
+	VADDPD       1920(AX), Y2, Y2
+	VADDPD       1952(AX), Y3, Y3
+	VMOVUPD      320(AX), Y4
+	VMOVUPD      352(AX), Y5
+	VADDPD       2240(AX), Y4, Y4
+	VADDPD       2272(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      7232(AX), Y6
+	VMOVUPD      7264(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 7232(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 7264(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7296(AX), Y6
+	VMOVUPD      7328(AX), Y7
+	VDIVPD       5760(AX), Y6, Y8
+	VMOVUPD      Y8, 7296(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9344(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5792(AX), Y7, Y6
+	VMOVUPD      Y6, 7328(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9376(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7360(AX), Y6
+	VMOVUPD      7392(AX), Y7
+	VDIVPD       6336(AX), Y6, Y8
+	VMOVUPD      Y8, 7360(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9408(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6368(AX), Y7, Y6
+	VMOVUPD      Y6, 7392(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9440(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7424(AX), Y6
+	VMOVUPD      7456(AX), Y7
+	VDIVPD       6912(AX), Y6, Y8
+	VMOVUPD      Y8, 7424(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9472(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6944(AX), Y7, Y6
+	VMOVUPD      Y6, 7456(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9504(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 7488(AX)
+	VMOVUPD      Y3, 7520(AX)
+	VMOVUPD      Y4, 9536(AX)
+	VMOVUPD      Y5, 9568(AX)
+	VMOVUPD      960(AX), Y2
+	VMOVUPD      992(AX), Y3
+	VADDPD       1600(AX), Y2, Y2
+	VADDPD       1632(AX), Y3, Y3
+	VMOVUPD      Y2, 7744(AX)
+	VMOVUPD      Y3, 7776(AX)
+	VMOVUPD      1536(AX), Y2
+	VMOVUPD      1568(AX), Y3
+	VADDPD       1536(AX), Y2, Y2
+	VADDPD       1568(AX), Y3, Y3
+	VMOVUPD      7744(AX), Y4
+	VMOVUPD      7776(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7808(AX)
+	VMOVUPD      Y3, 7840(AX)
+	VMOVUPD      2112(AX), Y2
+	VMOVUPD      2144(AX), Y3
+	VADDPD       1472(AX), Y2, Y2
+	VADDPD       1504(AX), Y3, Y3
+	VMOVUPD      7744(AX), Y4
+	VMOVUPD      7776(AX), Y5
+	VMULPD       6208(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6240(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7808(AX), Y4
+	VMOVUPD      7840(AX), Y5
+	VMULPD       6272(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6304(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7872(AX)
+	VMOVUPD      Y3, 7904(AX)
+	VMOVUPD      2688(AX), Y2
+	VMOVUPD      2720(AX), Y3
+	VADDPD       1408(AX), Y2, Y2
+	VADDPD       1440(AX), Y3, Y3
+	VMOVUPD      7744(AX), Y4
+	VMOVUPD      7776(AX), Y5
+	VMULPD       6720(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6752(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7808(AX), Y4
+	VMOVUPD      7840(AX), Y5
+	VMULPD       6784(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6816(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7872(AX), Y4
+	VMOVUPD      7904(AX), Y5
+	VMULPD       6848(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6880(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 7936(AX)
+	VMOVUPD      Y3, 7968(AX)
+	VMOVUPD      3264(AX), Y2
+	VMOVUPD      3296(AX), Y3
+	VADDPD       1344(AX), Y2, Y2
+	VADDPD       1376(AX), Y3, Y3
+	VMOVUPD      7744(AX), Y4
+	VMOVUPD      7776(AX), Y5
+	VMULPD       7232(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7264(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7808(AX), Y4
+	VMOVUPD      7840(AX), Y5
+	VMULPD       7296(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7328(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7872(AX), Y4
+	VMOVUPD      7904(AX), Y5
+	VMULPD       7360(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7392(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      7936(AX), Y4
+	VMOVUPD      7968(AX), Y5
+	VMULPD       7424(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7456(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8000(AX)
+	VMOVUPD      Y3, 8032(AX)
+	VMOVUPD      3840(AX), Y2
+	VMOVUPD      3872(AX), Y3
+	VADDPD       1280(AX), Y2, Y2
+	VADDPD       1312(AX), Y3, Y3
+	VMOVUPD      384(AX), Y4
+	VMOVUPD      416(AX), Y5
+	VADDPD       1664(AX), Y4, Y4
+	VADDPD       1696(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      7744(AX), Y6
+	VMOVUPD      7776(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 7744(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 7776(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7808(AX), Y6
+	VMOVUPD      7840(AX), Y7
+	VDIVPD       5760(AX), Y6, Y8
+	VMOVUPD      Y8, 7808(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9344(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5792(AX), Y7, Y6
+	VMOVUPD      Y6, 7840(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9376(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7872(AX), Y6
+	VMOVUPD      7904(AX), Y7
+	VDIVPD       6336(AX), Y6, Y8
+	VMOVUPD      Y8, 7872(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9408(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6368(AX), Y7, Y6
+	VMOVUPD      Y6, 7904(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9440(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      7936(AX), Y6
+	VMOVUPD      7968(AX), Y7
+	VDIVPD       6912(AX), Y6, Y8
+	VMOVUPD      Y8, 7936(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9472(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6944(AX), Y7, Y6
+	VMOVUPD      Y6, 7968(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9504(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8000(AX), Y6
+	VMOVUPD      8032(AX), Y7
+	VDIVPD       7488(AX), Y6, Y8
+	VMOVUPD      Y8, 8000(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9536(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       7520(AX), Y7, Y6
+	VMOVUPD      Y6, 8032(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9568(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 8064(AX)
+	VMOVUPD      Y3, 8096(AX)
+	VMOVUPD      Y4, 9600(AX)
+	VMOVUPD      Y5, 9632(AX)
+	VMOVUPD      1024(AX), Y2
+	VMOVUPD      1056(AX), Y3
+	VADDPD       1024(AX), Y2, Y2
+	VADDPD       1056(AX), Y3, Y3
+	VMOVUPD      Y2, 8256(AX)
+	VMOVUPD      Y3, 8288(AX)
+	VMOVUPD      1600(AX), Y2
+	VMOVUPD      1632(AX), Y3
+	VADDPD       960(AX), Y2, Y2
+	VADDPD       992(AX), Y3, Y3
+	VMOVUPD      8256(AX), Y4
+	VMOVUPD      8288(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8320(AX)
+	VMOVUPD      Y3, 8352(AX)
+	VMOVUPD      2176(AX), Y2
+	VMOVUPD      2208(AX), Y3
+	VADDPD       896(AX), Y2, Y2
+	VADDPD       928(AX), Y3, Y3
+	VMOVUPD      8256(AX), Y4
+	VMOVUPD      8288(AX), Y5
+	VMULPD       6208(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6240(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8320(AX), Y4
+	VMOVUPD      8352(AX), Y5
+	VMULPD       6272(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6304(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8384(AX)
+	VMOVUPD      Y3, 8416(AX)
+	VMOVUPD      2752(AX), Y2
+	VMOVUPD      2784(AX), Y3
+	VADDPD       832(AX), Y2, Y2
+	VADDPD       864(AX), Y3, Y3
+	VMOVUPD      8256(AX), Y4
+	VMOVUPD      8288(AX), Y5
+	VMULPD       6720(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6752(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8320(AX), Y4
+	VMOVUPD      8352(AX), Y5
+	VMULPD       6784(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6816(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8384(AX), Y4
+	VMOVUPD      8416(AX), Y5
+	VMULPD       6848(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6880(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8448(AX)
+	VMOVUPD      Y3, 8480(AX)
+	VMOVUPD      3328(AX), Y2
+	VMOVUPD      3360(AX), Y3
+	VADDPD       768(AX), Y2, Y2
+	VADDPD       800(AX), Y3, Y3
+	VMOVUPD      8256(AX), Y4
+	VMOVUPD      8288(AX), Y5
+	VMULPD       7232(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7264(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8320(AX), Y4
+	VMOVUPD      8352(AX), Y5
+	VMULPD       7296(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7328(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8384(AX), Y4
+	VMOVUPD      8416(AX), Y5
+	VMULPD       7360(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7392(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8448(AX), Y4
+	VMOVUPD      8480(AX), Y5
+	VMULPD       7424(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7456(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8512(AX)
+	VMOVUPD      Y3, 8544(AX)
+	VMOVUPD      3904(AX), Y2
+	VMOVUPD      3936(AX), Y3
+	VADDPD       704(AX), Y2, Y2
+	VADDPD       736(AX), Y3, Y3
+	VMOVUPD      8256(AX), Y4
+	VMOVUPD      8288(AX), Y5
+	VMULPD       7744(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7776(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8320(AX), Y4
+	VMOVUPD      8352(AX), Y5
+	VMULPD       7808(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7840(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8384(AX), Y4
+	VMOVUPD      8416(AX), Y5
+	VMULPD       7872(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7904(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8448(AX), Y4
+	VMOVUPD      8480(AX), Y5
+	VMULPD       7936(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7968(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8512(AX), Y4
+	VMOVUPD      8544(AX), Y5
+	VMULPD       8000(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8032(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8576(AX)
+	VMOVUPD      Y3, 8608(AX)
+	VMOVUPD      4480(AX), Y2
+	VMOVUPD      4512(AX), Y3
+	VADDPD       640(AX), Y2, Y2
+	VADDPD       672(AX), Y3, Y3
+	VMOVUPD      448(AX), Y4
+	VMOVUPD      480(AX), Y5
+	VADDPD       1088(AX), Y4, Y4
+	VADDPD       1120(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      8256(AX), Y6
+	VMOVUPD      8288(AX), Y7
+	VDIVPD       5184(AX), Y6, Y8
+	VMOVUPD      Y8, 8256(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9280(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5216(AX), Y7, Y6
+	VMOVUPD      Y6, 8288(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9312(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8320(AX), Y6
+	VMOVUPD      8352(AX), Y7
+	VDIVPD       5760(AX), Y6, Y8
+	VMOVUPD      Y8, 8320(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9344(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       5792(AX), Y7, Y6
+	VMOVUPD      Y6, 8352(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9376(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8384(AX), Y6
+	VMOVUPD      8416(AX), Y7
+	VDIVPD       6336(AX), Y6, Y8
+	VMOVUPD      Y8, 8384(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9408(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6368(AX), Y7, Y6
+	VMOVUPD      Y6, 8416(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9440(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8448(AX), Y6
+	VMOVUPD      8480(AX), Y7
+	VDIVPD       6912(AX), Y6, Y8
+	VMOVUPD      Y8, 8448(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9472(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       6944(AX), Y7, Y6
+	VMOVUPD      Y6, 8480(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9504(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8512(AX), Y6
+	VMOVUPD      8544(AX), Y7
+	VDIVPD       7488(AX), Y6, Y8
+	VMOVUPD      Y8, 8512(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9536(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       7520(AX), Y7, Y6
+	VMOVUPD      Y6, 8544(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9568(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      8576(AX), Y6
+	VMOVUPD      8608(AX), Y7
+	VDIVPD       8064(AX), Y6, Y8
+	VMOVUPD      Y8, 8576(AX)
+	VMULPD       Y8, Y6, Y6
+	VSUBPD       Y6, Y2, Y2
+	VMULPD       9600(AX), Y8, Y8
+	VSUBPD       Y8, Y4, Y4
+	VDIVPD       8096(AX), Y7, Y6
+	VMOVUPD      Y6, 8608(AX)
+	VMULPD       Y6, Y7, Y7
+	VSUBPD       Y7, Y3, Y3
+	VMULPD       9632(AX), Y6, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMOVUPD      Y2, 8640(AX)
+	VMOVUPD      Y3, 8672(AX)
+	VMOVUPD      Y4, 9664(AX)
+	VMOVUPD      Y5, 9696(AX)
+	VMOVUPD      1088(AX), Y2
+	VMOVUPD      1120(AX), Y3
+	VADDPD       448(AX), Y2, Y2
+	VADDPD       480(AX), Y3, Y3
+	VMOVUPD      Y2, 8768(AX)
+	VMOVUPD      Y3, 8800(AX)
+	VMOVUPD      1664(AX), Y2
+	VMOVUPD      1696(AX), Y3
+	VADDPD       384(AX), Y2, Y2
+	VADDPD       416(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       5696(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       5728(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8832(AX)
+	VMOVUPD      Y3, 8864(AX)
+	VMOVUPD      2240(AX), Y2
+	VMOVUPD      2272(AX), Y3
+	VADDPD       320(AX), Y2, Y2
+	VADDPD       352(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       6208(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6240(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8832(AX), Y4
+	VMOVUPD      8864(AX), Y5
+	VMULPD       6272(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6304(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8896(AX)
+	VMOVUPD      Y3, 8928(AX)
+	VMOVUPD      2816(AX), Y2
+	VMOVUPD      2848(AX), Y3
+	VADDPD       256(AX), Y2, Y2
+	VADDPD       288(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       6720(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6752(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8832(AX), Y4
+	VMOVUPD      8864(AX), Y5
+	VMULPD       6784(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6816(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8896(AX), Y4
+	VMOVUPD      8928(AX), Y5
+	VMULPD       6848(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       6880(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 8960(AX)
+	VMOVUPD      Y3, 8992(AX)
+	VMOVUPD      3392(AX), Y2
+	VMOVUPD      3424(AX), Y3
+	VADDPD       192(AX), Y2, Y2
+	VADDPD       224(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       7232(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7264(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8832(AX), Y4
+	VMOVUPD      8864(AX), Y5
+	VMULPD       7296(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7328(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8896(AX), Y4
+	VMOVUPD      8928(AX), Y5
+	VMULPD       7360(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7392(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8960(AX), Y4
+	VMOVUPD      8992(AX), Y5
+	VMULPD       7424(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7456(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 9024(AX)
+	VMOVUPD      Y3, 9056(AX)
+	VMOVUPD      3968(AX), Y2
+	VMOVUPD      4000(AX), Y3
+	VADDPD       128(AX), Y2, Y2
+	VADDPD       160(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       7744(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7776(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8832(AX), Y4
+	VMOVUPD      8864(AX), Y5
+	VMULPD       7808(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7840(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8896(AX), Y4
+	VMOVUPD      8928(AX), Y5
+	VMULPD       7872(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7904(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8960(AX), Y4
+	VMOVUPD      8992(AX), Y5
+	VMULPD       7936(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       7968(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      9024(AX), Y4
+	VMOVUPD      9056(AX), Y5
+	VMULPD       8000(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8032(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 9088(AX)
+	VMOVUPD      Y3, 9120(AX)
+	VMOVUPD      4544(AX), Y2
+	VMOVUPD      4576(AX), Y3
+	VADDPD       64(AX), Y2, Y2
+	VADDPD       96(AX), Y3, Y3
+	VMOVUPD      8768(AX), Y4
+	VMOVUPD      8800(AX), Y5
+	VMULPD       8256(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8288(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8832(AX), Y4
+	VMOVUPD      8864(AX), Y5
+	VMULPD       8320(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8352(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8896(AX), Y4
+	VMOVUPD      8928(AX), Y5
+	VMULPD       8384(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8416(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      8960(AX), Y4
+	VMOVUPD      8992(AX), Y5
+	VMULPD       8448(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8480(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      9024(AX), Y4
+	VMOVUPD      9056(AX), Y5
+	VMULPD       8512(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8544(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      9088(AX), Y4
+	VMOVUPD      9120(AX), Y5
+	VMULPD       8576(AX), Y4, Y4
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       8608(AX), Y5, Y5
+	VSUBPD       Y5, Y3, Y3
+	VMOVUPD      Y2, 9152(AX)
+	VMOVUPD      Y3, 9184(AX)
+	VMOVUPD      5120(AX), Y2
+	VMOVUPD      5152(AX), Y3
+	VADDPD       (AX), Y2, Y2
+	VADDPD       32(AX), Y3, Y3
+	VMOVUPD      512(AX), Y4
+	VMOVUPD      544(AX), Y5
+	VADDPD       512(AX), Y4, Y4
+	VADDPD       544(AX), Y5, Y5
+	VADDPD       Y0, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VMOVUPD      8768(AX), Y0
+	VMOVUPD      8800(AX), Y1
+	VDIVPD       5184(AX), Y0, Y6
+	VMOVUPD      Y6, 8768(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9280(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       5216(AX), Y1, Y0
+	VMOVUPD      Y0, 8800(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9312(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      8832(AX), Y0
+	VMOVUPD      8864(AX), Y1
+	VDIVPD       5760(AX), Y0, Y6
+	VMOVUPD      Y6, 8832(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9344(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       5792(AX), Y1, Y0
+	VMOVUPD      Y0, 8864(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9376(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      8896(AX), Y0
+	VMOVUPD      8928(AX), Y1
+	VDIVPD       6336(AX), Y0, Y6
+	VMOVUPD      Y6, 8896(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9408(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       6368(AX), Y1, Y0
+	VMOVUPD      Y0, 8928(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9440(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      8960(AX), Y0
+	VMOVUPD      8992(AX), Y1
+	VDIVPD       6912(AX), Y0, Y6
+	VMOVUPD      Y6, 8960(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9472(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       6944(AX), Y1, Y0
+	VMOVUPD      Y0, 8992(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9504(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      9024(AX), Y0
+	VMOVUPD      9056(AX), Y1
+	VDIVPD       7488(AX), Y0, Y6
+	VMOVUPD      Y6, 9024(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9536(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       7520(AX), Y1, Y0
+	VMOVUPD      Y0, 9056(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9568(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      9088(AX), Y0
+	VMOVUPD      9120(AX), Y1
+	VDIVPD       8064(AX), Y0, Y6
+	VMOVUPD      Y6, 9088(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9600(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       8096(AX), Y1, Y0
+	VMOVUPD      Y0, 9120(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9632(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      9152(AX), Y0
+	VMOVUPD      9184(AX), Y1
+	VDIVPD       8640(AX), Y0, Y6
+	VMOVUPD      Y6, 9152(AX)
+	VMULPD       Y6, Y0, Y0
+	VSUBPD       Y0, Y2, Y2
+	VMULPD       9664(AX), Y6, Y6
+	VSUBPD       Y6, Y4, Y4
+	VDIVPD       8672(AX), Y1, Y0
+	VMOVUPD      Y0, 9184(AX)
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y1, Y3, Y3
+	VMULPD       9696(AX), Y0, Y0
+	VSUBPD       Y0, Y5, Y5
+	VMOVUPD      Y2, 9216(AX)
+	VMOVUPD      Y3, 9248(AX)
+	VMOVUPD      Y4, 9728(AX)
+	VMOVUPD      Y5, 9760(AX)
+	VMOVUPD      9728(AX), Y0
+	VMOVUPD      9760(AX), Y1
+	VDIVPD       9216(AX), Y0, Y0
+	VDIVPD       9248(AX), Y1, Y1
+	VMOVUPD      Y0, 9728(AX)
+	VMOVUPD      Y1, 9760(AX)
+	VMOVUPD      9664(AX), Y0
+	VMOVUPD      9696(AX), Y1
+	VDIVPD       8640(AX), Y0, Y0
+	VDIVPD       8672(AX), Y1, Y1
+	VMOVUPD      9152(AX), Y2
+	VMOVUPD      9184(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9664(AX)
+	VMOVUPD      Y1, 9696(AX)
+	VMOVUPD      9600(AX), Y0
+	VMOVUPD      9632(AX), Y1
+	VDIVPD       8064(AX), Y0, Y0
+	VDIVPD       8096(AX), Y1, Y1
+	VMOVUPD      8576(AX), Y2
+	VMOVUPD      8608(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      9088(AX), Y2
+	VMOVUPD      9120(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9600(AX)
+	VMOVUPD      Y1, 9632(AX)
+	VMOVUPD      9536(AX), Y0
+	VMOVUPD      9568(AX), Y1
+	VDIVPD       7488(AX), Y0, Y0
+	VDIVPD       7520(AX), Y1, Y1
+	VMOVUPD      8000(AX), Y2
+	VMOVUPD      8032(AX), Y3
+	VMULPD       9600(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9632(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8512(AX), Y2
+	VMOVUPD      8544(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      9024(AX), Y2
+	VMOVUPD      9056(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9536(AX)
+	VMOVUPD      Y1, 9568(AX)
+	VMOVUPD      9472(AX), Y0
+	VMOVUPD      9504(AX), Y1
+	VDIVPD       6912(AX), Y0, Y0
+	VDIVPD       6944(AX), Y1, Y1
+	VMOVUPD      7424(AX), Y2
+	VMOVUPD      7456(AX), Y3
+	VMULPD       9536(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9568(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7936(AX), Y2
+	VMOVUPD      7968(AX), Y3
+	VMULPD       9600(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9632(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8448(AX), Y2
+	VMOVUPD      8480(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8960(AX), Y2
+	VMOVUPD      8992(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9472(AX)
+	VMOVUPD      Y1, 9504(AX)
+	VMOVUPD      9408(AX), Y0
+	VMOVUPD      9440(AX), Y1
+	VDIVPD       6336(AX), Y0, Y0
+	VDIVPD       6368(AX), Y1, Y1
+	VMOVUPD      6848(AX), Y2
+	VMOVUPD      6880(AX), Y3
+	VMULPD       9472(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9504(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7360(AX), Y2
+	VMOVUPD      7392(AX), Y3
+	VMULPD       9536(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9568(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7872(AX), Y2
+	VMOVUPD      7904(AX), Y3
+	VMULPD       9600(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9632(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8384(AX), Y2
+	VMOVUPD      8416(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8896(AX), Y2
+	VMOVUPD      8928(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9408(AX)
+	VMOVUPD      Y1, 9440(AX)
+	VMOVUPD      9344(AX), Y0
+	VMOVUPD      9376(AX), Y1
+	VDIVPD       5760(AX), Y0, Y0
+	VDIVPD       5792(AX), Y1, Y1
+	VMOVUPD      6272(AX), Y2
+	VMOVUPD      6304(AX), Y3
+	VMULPD       9408(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9440(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      6784(AX), Y2
+	VMOVUPD      6816(AX), Y3
+	VMULPD       9472(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9504(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7296(AX), Y2
+	VMOVUPD      7328(AX), Y3
+	VMULPD       9536(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9568(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7808(AX), Y2
+	VMOVUPD      7840(AX), Y3
+	VMULPD       9600(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9632(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8320(AX), Y2
+	VMOVUPD      8352(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8832(AX), Y2
+	VMOVUPD      8864(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9344(AX)
+	VMOVUPD      Y1, 9376(AX)
+	VMOVUPD      9280(AX), Y0
+	VMOVUPD      9312(AX), Y1
+	VDIVPD       5184(AX), Y0, Y0
+	VDIVPD       5216(AX), Y1, Y1
+	VMOVUPD      5696(AX), Y2
+	VMOVUPD      5728(AX), Y3
+	VMULPD       9344(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9376(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      6208(AX), Y2
+	VMOVUPD      6240(AX), Y3
+	VMULPD       9408(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9440(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      6720(AX), Y2
+	VMOVUPD      6752(AX), Y3
+	VMULPD       9472(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9504(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7232(AX), Y2
+	VMOVUPD      7264(AX), Y3
+	VMULPD       9536(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9568(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      7744(AX), Y2
+	VMOVUPD      7776(AX), Y3
+	VMULPD       9600(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9632(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8256(AX), Y2
+	VMOVUPD      8288(AX), Y3
+	VMULPD       9664(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9696(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      8768(AX), Y2
+	VMOVUPD      8800(AX), Y3
+	VMULPD       9728(AX), Y2, Y2
+	VSUBPD       Y2, Y0, Y0
+	VMULPD       9760(AX), Y3, Y3
+	VSUBPD       Y3, Y1, Y1
+	VMOVUPD      Y0, 9280(AX)
+	VMOVUPD      Y1, 9312(AX)
+	VZEROUPPER
+	RET
+
+// func forward(after *float64, n int, coef *float64, limit *float64)
+// Requires: AVX, AVX2
+TEXT ·forward(SB), $0-32
+	MOVQ     after+0(FP), AX
+	MOVQ     n+8(FP), CX
+	MOVQ     coef+16(FP), DX
+	MOVQ     limit+24(FP), BX
+	VMOVUPD  (BX), Y0
+	VMOVUPD  32(BX), Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLQ   $0x3f, Y2, Y2
+	VXORPD   Y0, Y2, Y2
+	VPCMPEQD Y3, Y3, Y3
+	VPSLLQ   $0x3f, Y3, Y3
+	VXORPD   Y1, Y3, Y3
+
+samples:
+	TESTQ   CX, CX
+	JZ      samples_end
+	VXORPD  Y4, Y4, Y4
+	VXORPD  Y5, Y5, Y5
+	VMOVUPD (DX), Y6
+	VMOVUPD 32(DX), Y7
+	VMULPD  -64(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -32(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 64(DX), Y6
+	VMOVUPD 96(DX), Y7
+	VMULPD  -128(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -96(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 128(DX), Y6
+	VMOVUPD 160(DX), Y7
+	VMULPD  -192(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -160(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 192(DX), Y6
+	VMOVUPD 224(DX), Y7
+	VMULPD  -256(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -224(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 256(DX), Y6
+	VMOVUPD 288(DX), Y7
+	VMULPD  -320(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -288(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 320(DX), Y6
+	VMOVUPD 352(DX), Y7
+	VMULPD  -384(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -352(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 384(DX), Y6
+	VMOVUPD 416(DX), Y7
+	VMULPD  -448(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -416(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMOVUPD 448(DX), Y6
+	VMOVUPD 480(DX), Y7
+	VMULPD  -512(AX), Y6, Y6
+	VADDPD  Y6, Y4, Y4
+	VMULPD  -480(AX), Y7, Y6
+	VADDPD  Y6, Y5, Y5
+	VMINPD  Y4, Y0, Y4
+	VMAXPD  Y4, Y2, Y4
+	VMOVUPD Y4, (AX)
+	VMINPD  Y5, Y1, Y5
+	VMAXPD  Y5, Y3, Y5
+	VMOVUPD Y5, 32(AX)
+	ADDQ    $+64, AX
+	DECQ    CX
+	JMP     samples
+
+samples_end:
+	VZEROUPPER
+	RET
+
+// func outward(after *float64, before *float64, n int, coef *float64, limit *float64)
+// Requires: AVX, AVX2
+TEXT ·outward(SB), $0-40
+	MOVQ     after+0(FP), AX
+	MOVQ     n+16(FP), CX
+	MOVQ     coef+24(FP), DX
+	MOVQ     before+8(FP), BX
+	MOVQ     limit+32(FP), SI
+	VMOVUPD  (SI), Y0
+	VMOVUPD  32(SI), Y1
+	VPCMPEQD Y2, Y2, Y2
+	VPSLLQ   $0x3f, Y2, Y2
+	VXORPD   Y0, Y2, Y2
+	VPCMPEQD Y3, Y3, Y3
+	VPSLLQ   $0x3f, Y3, Y3
+	VXORPD   Y1, Y3, Y3
+
+samples:
+	TESTQ   CX, CX
+	JZ      samples_end
+	VXORPD  Y4, Y4, Y4
+	VXORPD  Y5, Y5, Y5
+	VXORPD  Y6, Y6, Y6
+	VXORPD  Y7, Y7, Y7
+	VMOVUPD (DX), Y8
+	VMOVUPD 32(DX), Y9
+	VMULPD  -64(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -32(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  64(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  96(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 64(DX), Y8
+	VMOVUPD 96(DX), Y9
+	VMULPD  -128(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -96(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  128(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  160(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 128(DX), Y8
+	VMOVUPD 160(DX), Y9
+	VMULPD  -192(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -160(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  192(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  224(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 192(DX), Y8
+	VMOVUPD 224(DX), Y9
+	VMULPD  -256(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -224(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  256(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  288(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 256(DX), Y8
+	VMOVUPD 288(DX), Y9
+	VMULPD  -320(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -288(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  320(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  352(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 320(DX), Y8
+	VMOVUPD 352(DX), Y9
+	VMULPD  -384(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -352(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  384(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  416(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 384(DX), Y8
+	VMOVUPD 416(DX), Y9
+	VMULPD  -448(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -416(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  448(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  480(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMOVUPD 448(DX), Y8
+	VMOVUPD 480(DX), Y9
+	VMULPD  -512(AX), Y8, Y10
+	VADDPD  Y10, Y4, Y4
+	VMULPD  -480(AX), Y9, Y10
+	VADDPD  Y10, Y5, Y5
+	VMULPD  512(BX), Y8, Y8
+	VADDPD  Y8, Y6, Y6
+	VMULPD  544(BX), Y9, Y8
+	VADDPD  Y8, Y7, Y7
+	VMINPD  Y4, Y0, Y4
+	VMAXPD  Y4, Y2, Y4
+	VMOVUPD Y4, (AX)
+	VMINPD  Y5, Y1, Y5
+	VMAXPD  Y5, Y3, Y5
+	VMOVUPD Y5, 32(AX)
+	ADDQ    $+64, AX
+	VMINPD  Y6, Y0, Y6
+	VMAXPD  Y6, Y2, Y6
+	VMOVUPD Y6, (BX)
+	VMINPD  Y7, Y1, Y7
+	VMAXPD  Y7, Y3, Y7
+	VMOVUPD Y7, 32(BX)
+	ADDQ    $-64, BX
+	DECQ    CX
+	JMP     samples
+
+samples_end:
+	VZEROUPPER
+	RET
+
+// func forward2(z *float64, end *float64, q int, twiddle *float64)
+// Requires: AVX, AVX2
+TEXT ·forward2(SB), $0-32
+	MOVQ     z+0(FP), AX
+	MOVQ     end+8(FP), CX
+	MOVQ     q+16(FP), DX
+	MOVQ     twiddle+24(FP), BX
+	MOVQ     DX, SI
+	SHLQ     $0x07, DX
+	MOVQ     DX, DI
+	ADDQ     DX, DI
+	LEAQ     (DX)(DX*1), R8
+	VPCMPEQD Y0, Y0, Y0
+	VPSLLQ   $0x3f, Y0, Y0
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R8
+
+block:
+	VMOVUPD      (R8)(DX*1), Y0
+	VMOVUPD      64(R8)(DX*1), Y1
+	VMOVUPD      (R8), Y2
+	VMOVUPD      64(R8), Y3
+	VSUBPD       Y0, Y2, Y4
+	VSUBPD       Y1, Y3, Y5
+	VBROADCASTSD (BX), Y6
+	VBROADCASTSD 8(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, (R8)(DX*1)
+	VMOVUPD      Y4, 64(R8)(DX*1)
+	VADDPD       Y0, Y2, Y0
+	VADDPD       Y1, Y3, Y1
+	VMOVUPD      Y0, (R8)
+	VMOVUPD      Y1, 64(R8)
+	VMOVUPD      32(R8)(DX*1), Y0
+	VMOVUPD      96(R8)(DX*1), Y1
+	VMOVUPD      32(R8), Y2
+	VMOVUPD      96(R8), Y3
+	VSUBPD       Y0, Y2, Y4
+	VSUBPD       Y1, Y3, Y5
+	VBROADCASTSD (BX), Y6
+	VBROADCASTSD 8(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, 32(R8)(DX*1)
+	VMOVUPD      Y4, 96(R8)(DX*1)
+	VADDPD       Y0, Y2, Y0
+	VADDPD       Y1, Y3, Y1
+	VMOVUPD      Y0, 32(R8)
+	VMOVUPD      Y1, 96(R8)
+	ADDQ         DI, R8
+	CMPQ         R8, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+16, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func forward3(z *float64, end *float64, q int, twiddle *float64, sine float64)
+// Requires: AVX, AVX2
+TEXT ·forward3(SB), $0-40
+	MOVQ         z+0(FP), AX
+	MOVQ         end+8(FP), CX
+	MOVQ         q+16(FP), DX
+	MOVQ         twiddle+24(FP), BX
+	MOVQ         DX, SI
+	SHLQ         $0x07, DX
+	MOVQ         DX, DI
+	ADDQ         DX, DI
+	ADDQ         DX, DI
+	LEAQ         (DX)(DX*1), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLQ       $0x3f, Y0, Y0
+	VBROADCASTSD sine+32(FP), Y0
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R9
+
+block:
+	VMOVUPD      (R9)(DX*1), Y1
+	VMOVUPD      64(R9)(DX*1), Y2
+	VMOVUPD      (R9)(R8*1), Y3
+	VMOVUPD      64(R9)(R8*1), Y4
+	VMOVUPD      (R9), Y5
+	VMOVUPD      64(R9), Y6
+	VADDPD       Y3, Y1, Y7
+	VADDPD       Y4, Y2, Y8
+	VSUBPD       Y3, Y1, Y1
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       Y0, Y2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSLLQ       $0x37, Y3, Y3
+	VPSRLQ       $0x02, Y3, Y3
+	VMULPD       Y3, Y7, Y4
+	VSUBPD       Y4, Y5, Y4
+	VMULPD       Y3, Y8, Y3
+	VSUBPD       Y3, Y6, Y3
+	VADDPD       Y7, Y5, Y5
+	VADDPD       Y8, Y6, Y6
+	VMOVUPD      Y5, (R9)
+	VMOVUPD      Y6, 64(R9)
+	VADDPD       Y2, Y4, Y5
+	VSUBPD       Y1, Y3, Y6
+	VBROADCASTSD (BX), Y7
+	VBROADCASTSD 8(BX), Y8
+	VMULPD       Y7, Y5, Y9
+	VMULPD       Y8, Y6, Y10
+	VSUBPD       Y10, Y9, Y9
+	VMULPD       Y8, Y5, Y5
+	VMULPD       Y7, Y6, Y6
+	VADDPD       Y6, Y5, Y5
+	VMOVUPD      Y9, (R9)(DX*1)
+	VMOVUPD      Y5, 64(R9)(DX*1)
+	VSUBPD       Y2, Y4, Y2
+	VADDPD       Y1, Y3, Y1
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 24(BX), Y4
+	VMULPD       Y3, Y2, Y5
+	VMULPD       Y4, Y1, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y2, Y2
+	VMULPD       Y3, Y1, Y1
+	VADDPD       Y1, Y2, Y1
+	VMOVUPD      Y5, (R9)(R8*1)
+	VMOVUPD      Y1, 64(R9)(R8*1)
+	VMOVUPD      32(R9)(DX*1), Y1
+	VMOVUPD      96(R9)(DX*1), Y2
+	VMOVUPD      32(R9)(R8*1), Y3
+	VMOVUPD      96(R9)(R8*1), Y4
+	VMOVUPD      32(R9), Y5
+	VMOVUPD      96(R9), Y6
+	VADDPD       Y3, Y1, Y7
+	VADDPD       Y4, Y2, Y8
+	VSUBPD       Y3, Y1, Y1
+	VMULPD       Y0, Y1, Y1
+	VSUBPD       Y4, Y2, Y2
+	VMULPD       Y0, Y2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSLLQ       $0x37, Y3, Y3
+	VPSRLQ       $0x02, Y3, Y3
+	VMULPD       Y3, Y7, Y4
+	VSUBPD       Y4, Y5, Y4
+	VMULPD       Y3, Y8, Y3
+	VSUBPD       Y3, Y6, Y3
+	VADDPD       Y7, Y5, Y5
+	VADDPD       Y8, Y6, Y6
+	VMOVUPD      Y5, 32(R9)
+	VMOVUPD      Y6, 96(R9)
+	VADDPD       Y2, Y4, Y5
+	VSUBPD       Y1, Y3, Y6
+	VBROADCASTSD (BX), Y7
+	VBROADCASTSD 8(BX), Y8
+	VMULPD       Y7, Y5, Y9
+	VMULPD       Y8, Y6, Y10
+	VSUBPD       Y10, Y9, Y9
+	VMULPD       Y8, Y5, Y5
+	VMULPD       Y7, Y6, Y6
+	VADDPD       Y6, Y5, Y5
+	VMOVUPD      Y9, 32(R9)(DX*1)
+	VMOVUPD      Y5, 96(R9)(DX*1)
+	VSUBPD       Y2, Y4, Y2
+	VADDPD       Y1, Y3, Y1
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 24(BX), Y4
+	VMULPD       Y3, Y2, Y5
+	VMULPD       Y4, Y1, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y2, Y2
+	VMULPD       Y3, Y1, Y1
+	VADDPD       Y1, Y2, Y1
+	VMOVUPD      Y5, 32(R9)(R8*1)
+	VMOVUPD      Y1, 96(R9)(R8*1)
+	ADDQ         DI, R9
+	CMPQ         R9, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+32, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func forward4(z *float64, end *float64, q int, twiddle *float64)
+// Requires: AVX, AVX2
+TEXT ·forward4(SB), $0-32
+	MOVQ     z+0(FP), AX
+	MOVQ     end+8(FP), CX
+	MOVQ     q+16(FP), DX
+	MOVQ     twiddle+24(FP), BX
+	MOVQ     DX, SI
+	SHLQ     $0x07, DX
+	MOVQ     DX, DI
+	ADDQ     DX, DI
+	ADDQ     DX, DI
+	ADDQ     DX, DI
+	LEAQ     (DX)(DX*1), R8
+	VPCMPEQD Y0, Y0, Y0
+	VPSLLQ   $0x3f, Y0, Y0
+	MOVQ     AX, R9
+
+first:
+	LEAQ    (R9)(DX*1), R10
+	VMOVUPD (R9)(R8*1), Y0
+	VMOVUPD 64(R9)(R8*1), Y1
+	VMOVUPD (R9), Y2
+	VMOVUPD 64(R9), Y3
+	VADDPD  Y0, Y2, Y4
+	VADDPD  Y1, Y3, Y5
+	VSUBPD  Y0, Y2, Y0
+	VSUBPD  Y1, Y3, Y1
+	VMOVUPD (R9)(DX*1), Y2
+	VMOVUPD 64(R9)(DX*1), Y3
+	VMOVUPD (R10)(R8*1), Y6
+	VMOVUPD 64(R10)(R8*1), Y7
+	VADDPD  Y6, Y2, Y8
+	VADDPD  Y7, Y3, Y9
+	VSUBPD  Y6, Y2, Y2
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y8, Y4, Y6
+	VADDPD  Y9, Y5, Y7
+	VMOVUPD Y6, (R9)
+	VMOVUPD Y7, 64(R9)
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y9, Y5, Y5
+	VMOVUPD Y4, (R9)(R8*1)
+	VMOVUPD Y5, 64(R9)(R8*1)
+	VADDPD  Y3, Y0, Y4
+	VSUBPD  Y2, Y1, Y5
+	VMOVUPD Y4, (R9)(DX*1)
+	VMOVUPD Y5, 64(R9)(DX*1)
+	VSUBPD  Y3, Y0, Y0
+	VADDPD  Y2, Y1, Y1
+	VMOVUPD Y0, (R10)(R8*1)
+	VMOVUPD Y1, 64(R10)(R8*1)
+	VMOVUPD 32(R9)(R8*1), Y0
+	VMOVUPD 96(R9)(R8*1), Y1
+	VMOVUPD 32(R9), Y2
+	VMOVUPD 96(R9), Y3
+	VADDPD  Y0, Y2, Y4
+	VADDPD  Y1, Y3, Y5
+	VSUBPD  Y0, Y2, Y0
+	VSUBPD  Y1, Y3, Y1
+	VMOVUPD 32(R9)(DX*1), Y2
+	VMOVUPD 96(R9)(DX*1), Y3
+	VMOVUPD 32(R10)(R8*1), Y6
+	VMOVUPD 96(R10)(R8*1), Y7
+	VADDPD  Y6, Y2, Y8
+	VADDPD  Y7, Y3, Y9
+	VSUBPD  Y6, Y2, Y2
+	VSUBPD  Y7, Y3, Y3
+	VADDPD  Y8, Y4, Y6
+	VADDPD  Y9, Y5, Y7
+	VMOVUPD Y6, 32(R9)
+	VMOVUPD Y7, 96(R9)
+	VSUBPD  Y8, Y4, Y4
+	VSUBPD  Y9, Y5, Y5
+	VMOVUPD Y4, 32(R9)(R8*1)
+	VMOVUPD Y5, 96(R9)(R8*1)
+	VADDPD  Y3, Y0, Y4
+	VSUBPD  Y2, Y1, Y5
+	VMOVUPD Y4, 32(R9)(DX*1)
+	VMOVUPD Y5, 96(R9)(DX*1)
+	VSUBPD  Y3, Y0, Y0
+	VADDPD  Y2, Y1, Y1
+	VMOVUPD Y0, 32(R10)(R8*1)
+	VMOVUPD Y1, 96(R10)(R8*1)
+	ADDQ    DI, R9
+	CMPQ    R9, CX
+	JL      first
+	ADDQ    $+128, AX
+	ADDQ    $+48, BX
+	DECQ    SI
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R9
+
+block:
+	LEAQ         (R9)(DX*1), R10
+	VMOVUPD      (R9)(R8*1), Y0
+	VMOVUPD      64(R9)(R8*1), Y1
+	VMOVUPD      (R9), Y2
+	VMOVUPD      64(R9), Y3
+	VADDPD       Y0, Y2, Y4
+	VADDPD       Y1, Y3, Y5
+	VSUBPD       Y0, Y2, Y0
+	VSUBPD       Y1, Y3, Y1
+	VMOVUPD      (R9)(DX*1), Y2
+	VMOVUPD      64(R9)(DX*1), Y3
+	VMOVUPD      (R10)(R8*1), Y6
+	VMOVUPD      64(R10)(R8*1), Y7
+	VADDPD       Y6, Y2, Y8
+	VADDPD       Y7, Y3, Y9
+	VSUBPD       Y6, Y2, Y2
+	VSUBPD       Y7, Y3, Y3
+	VADDPD       Y8, Y4, Y6
+	VADDPD       Y9, Y5, Y7
+	VMOVUPD      Y6, (R9)
+	VMOVUPD      Y7, 64(R9)
+	VSUBPD       Y8, Y4, Y4
+	VSUBPD       Y9, Y5, Y5
+	VBROADCASTSD 16(BX), Y6
+	VBROADCASTSD 24(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, (R9)(R8*1)
+	VMOVUPD      Y4, 64(R9)(R8*1)
+	VADDPD       Y3, Y0, Y4
+	VSUBPD       Y2, Y1, Y5
+	VBROADCASTSD (BX), Y6
+	VBROADCASTSD 8(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, (R9)(DX*1)
+	VMOVUPD      Y4, 64(R9)(DX*1)
+	VSUBPD       Y3, Y0, Y0
+	VADDPD       Y2, Y1, Y1
+	VBROADCASTSD 32(BX), Y2
+	VBROADCASTSD 40(BX), Y3
+	VMULPD       Y2, Y0, Y4
+	VMULPD       Y3, Y1, Y5
+	VSUBPD       Y5, Y4, Y4
+	VMULPD       Y3, Y0, Y0
+	VMULPD       Y2, Y1, Y1
+	VADDPD       Y1, Y0, Y0
+	VMOVUPD      Y4, (R10)(R8*1)
+	VMOVUPD      Y0, 64(R10)(R8*1)
+	VMOVUPD      32(R9)(R8*1), Y0
+	VMOVUPD      96(R9)(R8*1), Y1
+	VMOVUPD      32(R9), Y2
+	VMOVUPD      96(R9), Y3
+	VADDPD       Y0, Y2, Y4
+	VADDPD       Y1, Y3, Y5
+	VSUBPD       Y0, Y2, Y0
+	VSUBPD       Y1, Y3, Y1
+	VMOVUPD      32(R9)(DX*1), Y2
+	VMOVUPD      96(R9)(DX*1), Y3
+	VMOVUPD      32(R10)(R8*1), Y6
+	VMOVUPD      96(R10)(R8*1), Y7
+	VADDPD       Y6, Y2, Y8
+	VADDPD       Y7, Y3, Y9
+	VSUBPD       Y6, Y2, Y2
+	VSUBPD       Y7, Y3, Y3
+	VADDPD       Y8, Y4, Y6
+	VADDPD       Y9, Y5, Y7
+	VMOVUPD      Y6, 32(R9)
+	VMOVUPD      Y7, 96(R9)
+	VSUBPD       Y8, Y4, Y4
+	VSUBPD       Y9, Y5, Y5
+	VBROADCASTSD 16(BX), Y6
+	VBROADCASTSD 24(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, 32(R9)(R8*1)
+	VMOVUPD      Y4, 96(R9)(R8*1)
+	VADDPD       Y3, Y0, Y4
+	VSUBPD       Y2, Y1, Y5
+	VBROADCASTSD (BX), Y6
+	VBROADCASTSD 8(BX), Y7
+	VMULPD       Y6, Y4, Y8
+	VMULPD       Y7, Y5, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y4, Y4
+	VMULPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y8, 32(R9)(DX*1)
+	VMOVUPD      Y4, 96(R9)(DX*1)
+	VSUBPD       Y3, Y0, Y0
+	VADDPD       Y2, Y1, Y1
+	VBROADCASTSD 32(BX), Y2
+	VBROADCASTSD 40(BX), Y3
+	VMULPD       Y2, Y0, Y4
+	VMULPD       Y3, Y1, Y5
+	VSUBPD       Y5, Y4, Y4
+	VMULPD       Y3, Y0, Y0
+	VMULPD       Y2, Y1, Y1
+	VADDPD       Y1, Y0, Y0
+	VMOVUPD      Y4, 32(R10)(R8*1)
+	VMOVUPD      Y0, 96(R10)(R8*1)
+	ADDQ         DI, R9
+	CMPQ         R9, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+48, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func inverse2(z *float64, end *float64, q int, twiddle *float64)
+// Requires: AVX, AVX2
+TEXT ·inverse2(SB), $0-32
+	MOVQ     z+0(FP), AX
+	MOVQ     end+8(FP), CX
+	MOVQ     q+16(FP), DX
+	MOVQ     twiddle+24(FP), BX
+	MOVQ     DX, SI
+	SHLQ     $0x07, DX
+	MOVQ     DX, DI
+	ADDQ     DX, DI
+	LEAQ     (DX)(DX*1), R8
+	VPCMPEQD Y0, Y0, Y0
+	VPSLLQ   $0x3f, Y0, Y0
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R8
+
+block:
+	VMOVUPD      (R8)(DX*1), Y1
+	VMOVUPD      64(R8)(DX*1), Y2
+	VBROADCASTSD (BX), Y3
+	VBROADCASTSD 8(BX), Y4
+	VXORPD       Y0, Y4, Y4
+	VMULPD       Y3, Y1, Y5
+	VMULPD       Y4, Y2, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y1, Y1
+	VMULPD       Y3, Y2, Y2
+	VADDPD       Y2, Y1, Y1
+	VMOVUPD      (R8), Y2
+	VMOVUPD      64(R8), Y3
+	VSUBPD       Y5, Y2, Y4
+	VSUBPD       Y1, Y3, Y6
+	VMOVUPD      Y4, (R8)(DX*1)
+	VMOVUPD      Y6, 64(R8)(DX*1)
+	VADDPD       Y5, Y2, Y2
+	VADDPD       Y1, Y3, Y1
+	VMOVUPD      Y2, (R8)
+	VMOVUPD      Y1, 64(R8)
+	VMOVUPD      32(R8)(DX*1), Y1
+	VMOVUPD      96(R8)(DX*1), Y2
+	VBROADCASTSD (BX), Y3
+	VBROADCASTSD 8(BX), Y4
+	VXORPD       Y0, Y4, Y4
+	VMULPD       Y3, Y1, Y5
+	VMULPD       Y4, Y2, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y1, Y1
+	VMULPD       Y3, Y2, Y2
+	VADDPD       Y2, Y1, Y1
+	VMOVUPD      32(R8), Y2
+	VMOVUPD      96(R8), Y3
+	VSUBPD       Y5, Y2, Y4
+	VSUBPD       Y1, Y3, Y6
+	VMOVUPD      Y4, 32(R8)(DX*1)
+	VMOVUPD      Y6, 96(R8)(DX*1)
+	VADDPD       Y5, Y2, Y2
+	VADDPD       Y1, Y3, Y1
+	VMOVUPD      Y2, 32(R8)
+	VMOVUPD      Y1, 96(R8)
+	ADDQ         DI, R8
+	CMPQ         R8, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+16, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func inverse3(z *float64, end *float64, q int, twiddle *float64, sine float64)
+// Requires: AVX, AVX2
+TEXT ·inverse3(SB), $0-40
+	MOVQ         z+0(FP), AX
+	MOVQ         end+8(FP), CX
+	MOVQ         q+16(FP), DX
+	MOVQ         twiddle+24(FP), BX
+	MOVQ         DX, SI
+	SHLQ         $0x07, DX
+	MOVQ         DX, DI
+	ADDQ         DX, DI
+	ADDQ         DX, DI
+	LEAQ         (DX)(DX*1), R8
+	VPCMPEQD     Y0, Y0, Y0
+	VPSLLQ       $0x3f, Y0, Y0
+	VBROADCASTSD sine+32(FP), Y1
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R9
+
+block:
+	VMOVUPD      (R9)(DX*1), Y2
+	VMOVUPD      64(R9)(DX*1), Y3
+	VBROADCASTSD (BX), Y4
+	VBROADCASTSD 8(BX), Y5
+	VXORPD       Y0, Y5, Y5
+	VMULPD       Y4, Y2, Y6
+	VMULPD       Y5, Y3, Y7
+	VSUBPD       Y7, Y6, Y6
+	VMULPD       Y5, Y2, Y2
+	VMULPD       Y4, Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      (R9)(R8*1), Y3
+	VMOVUPD      64(R9)(R8*1), Y4
+	VBROADCASTSD 16(BX), Y5
+	VBROADCASTSD 24(BX), Y7
+	VXORPD       Y0, Y7, Y7
+	VMULPD       Y5, Y3, Y8
+	VMULPD       Y7, Y4, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y3, Y3
+	VMULPD       Y5, Y4, Y4
+	VADDPD       Y4, Y3, Y3
+	VMOVUPD      (R9), Y4
+	VMOVUPD      64(R9), Y5
+	VADDPD       Y8, Y6, Y7
+	VADDPD       Y3, Y2, Y9
+	VSUBPD       Y8, Y6, Y6
+	VMULPD       Y1, Y6, Y6
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       Y1, Y2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSLLQ       $0x37, Y3, Y3
+	VPSRLQ       $0x02, Y3, Y3
+	VMULPD       Y3, Y7, Y8
+	VSUBPD       Y8, Y4, Y8
+	VMULPD       Y3, Y9, Y3
+	VSUBPD       Y3, Y5, Y3
+	VADDPD       Y7, Y4, Y4
+	VADDPD       Y9, Y5, Y5
+	VMOVUPD      Y4, (R9)
+	VMOVUPD      Y5, 64(R9)
+	VADDPD       Y2, Y8, Y4
+	VSUBPD       Y6, Y3, Y5
+	VMOVUPD      Y4, (R9)(R8*1)
+	VMOVUPD      Y5, 64(R9)(R8*1)
+	VSUBPD       Y2, Y8, Y2
+	VADDPD       Y6, Y3, Y3
+	VMOVUPD      Y2, (R9)(DX*1)
+	VMOVUPD      Y3, 64(R9)(DX*1)
+	VMOVUPD      32(R9)(DX*1), Y2
+	VMOVUPD      96(R9)(DX*1), Y3
+	VBROADCASTSD (BX), Y4
+	VBROADCASTSD 8(BX), Y5
+	VXORPD       Y0, Y5, Y5
+	VMULPD       Y4, Y2, Y6
+	VMULPD       Y5, Y3, Y7
+	VSUBPD       Y7, Y6, Y6
+	VMULPD       Y5, Y2, Y2
+	VMULPD       Y4, Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      32(R9)(R8*1), Y3
+	VMOVUPD      96(R9)(R8*1), Y4
+	VBROADCASTSD 16(BX), Y5
+	VBROADCASTSD 24(BX), Y7
+	VXORPD       Y0, Y7, Y7
+	VMULPD       Y5, Y3, Y8
+	VMULPD       Y7, Y4, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y7, Y3, Y3
+	VMULPD       Y5, Y4, Y4
+	VADDPD       Y4, Y3, Y3
+	VMOVUPD      32(R9), Y4
+	VMOVUPD      96(R9), Y5
+	VADDPD       Y8, Y6, Y7
+	VADDPD       Y3, Y2, Y9
+	VSUBPD       Y8, Y6, Y6
+	VMULPD       Y1, Y6, Y6
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       Y1, Y2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSLLQ       $0x37, Y3, Y3
+	VPSRLQ       $0x02, Y3, Y3
+	VMULPD       Y3, Y7, Y8
+	VSUBPD       Y8, Y4, Y8
+	VMULPD       Y3, Y9, Y3
+	VSUBPD       Y3, Y5, Y3
+	VADDPD       Y7, Y4, Y4
+	VADDPD       Y9, Y5, Y5
+	VMOVUPD      Y4, 32(R9)
+	VMOVUPD      Y5, 96(R9)
+	VADDPD       Y2, Y8, Y4
+	VSUBPD       Y6, Y3, Y5
+	VMOVUPD      Y4, 32(R9)(R8*1)
+	VMOVUPD      Y5, 96(R9)(R8*1)
+	VSUBPD       Y2, Y8, Y2
+	VADDPD       Y6, Y3, Y3
+	VMOVUPD      Y2, 32(R9)(DX*1)
+	VMOVUPD      Y3, 96(R9)(DX*1)
+	ADDQ         DI, R9
+	CMPQ         R9, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+32, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func inverse4(z *float64, end *float64, q int, twiddle *float64)
+// Requires: AVX, AVX2
+TEXT ·inverse4(SB), $0-32
+	MOVQ     z+0(FP), AX
+	MOVQ     end+8(FP), CX
+	MOVQ     q+16(FP), DX
+	MOVQ     twiddle+24(FP), BX
+	MOVQ     DX, SI
+	SHLQ     $0x07, DX
+	MOVQ     DX, DI
+	ADDQ     DX, DI
+	ADDQ     DX, DI
+	ADDQ     DX, DI
+	LEAQ     (DX)(DX*1), R8
+	VPCMPEQD Y0, Y0, Y0
+	VPSLLQ   $0x3f, Y0, Y0
+	MOVQ     AX, R9
+
+first:
+	LEAQ    (R9)(DX*1), R10
+	VMOVUPD (R9)(R8*1), Y1
+	VMOVUPD 64(R9)(R8*1), Y2
+	VMOVUPD (R9), Y3
+	VMOVUPD 64(R9), Y4
+	VADDPD  Y1, Y3, Y5
+	VADDPD  Y2, Y4, Y6
+	VSUBPD  Y1, Y3, Y1
+	VSUBPD  Y2, Y4, Y2
+	VMOVUPD (R9)(DX*1), Y3
+	VMOVUPD 64(R9)(DX*1), Y4
+	VMOVUPD (R10)(R8*1), Y7
+	VMOVUPD 64(R10)(R8*1), Y8
+	VADDPD  Y7, Y3, Y9
+	VADDPD  Y8, Y4, Y10
+	VSUBPD  Y7, Y3, Y3
+	VSUBPD  Y8, Y4, Y4
+	VADDPD  Y9, Y5, Y7
+	VADDPD  Y10, Y6, Y8
+	VMOVUPD Y7, (R9)
+	VMOVUPD Y8, 64(R9)
+	VSUBPD  Y9, Y5, Y5
+	VSUBPD  Y10, Y6, Y6
+	VMOVUPD Y5, (R9)(R8*1)
+	VMOVUPD Y6, 64(R9)(R8*1)
+	VADDPD  Y4, Y1, Y5
+	VSUBPD  Y3, Y2, Y6
+	VMOVUPD Y5, (R10)(R8*1)
+	VMOVUPD Y6, 64(R10)(R8*1)
+	VSUBPD  Y4, Y1, Y1
+	VADDPD  Y3, Y2, Y2
+	VMOVUPD Y1, (R9)(DX*1)
+	VMOVUPD Y2, 64(R9)(DX*1)
+	VMOVUPD 32(R9)(R8*1), Y1
+	VMOVUPD 96(R9)(R8*1), Y2
+	VMOVUPD 32(R9), Y3
+	VMOVUPD 96(R9), Y4
+	VADDPD  Y1, Y3, Y5
+	VADDPD  Y2, Y4, Y6
+	VSUBPD  Y1, Y3, Y1
+	VSUBPD  Y2, Y4, Y2
+	VMOVUPD 32(R9)(DX*1), Y3
+	VMOVUPD 96(R9)(DX*1), Y4
+	VMOVUPD 32(R10)(R8*1), Y7
+	VMOVUPD 96(R10)(R8*1), Y8
+	VADDPD  Y7, Y3, Y9
+	VADDPD  Y8, Y4, Y10
+	VSUBPD  Y7, Y3, Y3
+	VSUBPD  Y8, Y4, Y4
+	VADDPD  Y9, Y5, Y7
+	VADDPD  Y10, Y6, Y8
+	VMOVUPD Y7, 32(R9)
+	VMOVUPD Y8, 96(R9)
+	VSUBPD  Y9, Y5, Y5
+	VSUBPD  Y10, Y6, Y6
+	VMOVUPD Y5, 32(R9)(R8*1)
+	VMOVUPD Y6, 96(R9)(R8*1)
+	VADDPD  Y4, Y1, Y5
+	VSUBPD  Y3, Y2, Y6
+	VMOVUPD Y5, 32(R10)(R8*1)
+	VMOVUPD Y6, 96(R10)(R8*1)
+	VSUBPD  Y4, Y1, Y1
+	VADDPD  Y3, Y2, Y2
+	VMOVUPD Y1, 32(R9)(DX*1)
+	VMOVUPD Y2, 96(R9)(DX*1)
+	ADDQ    DI, R9
+	CMPQ    R9, CX
+	JL      first
+	ADDQ    $+128, AX
+	ADDQ    $+48, BX
+	DECQ    SI
+
+butterfly:
+	TESTQ SI, SI
+	JZ    butterfly_end
+	MOVQ  AX, R9
+
+block:
+	LEAQ         (R9)(DX*1), R10
+	VMOVUPD      (R9)(R8*1), Y1
+	VMOVUPD      64(R9)(R8*1), Y2
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 24(BX), Y4
+	VXORPD       Y0, Y4, Y4
+	VMULPD       Y3, Y1, Y5
+	VMULPD       Y4, Y2, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y1, Y1
+	VMULPD       Y3, Y2, Y2
+	VADDPD       Y2, Y1, Y1
+	VMOVUPD      (R9), Y2
+	VMOVUPD      64(R9), Y3
+	VADDPD       Y5, Y2, Y4
+	VADDPD       Y1, Y3, Y6
+	VSUBPD       Y5, Y2, Y2
+	VSUBPD       Y1, Y3, Y1
+	VMOVUPD      (R9)(DX*1), Y3
+	VMOVUPD      64(R9)(DX*1), Y5
+	VBROADCASTSD (BX), Y7
+	VBROADCASTSD 8(BX), Y8
+	VXORPD       Y0, Y8, Y8
+	VMULPD       Y7, Y3, Y9
+	VMULPD       Y8, Y5, Y10
+	VSUBPD       Y10, Y9, Y9
+	VMULPD       Y8, Y3, Y3
+	VMULPD       Y7, Y5, Y5
+	VADDPD       Y5, Y3, Y3
+	VMOVUPD      (R10)(R8*1), Y5
+	VMOVUPD      64(R10)(R8*1), Y7
+	VBROADCASTSD 32(BX), Y8
+	VBROADCASTSD 40(BX), Y10
+	VXORPD       Y0, Y10, Y10
+	VMULPD       Y8, Y5, Y11
+	VMULPD       Y10, Y7, Y12
+	VSUBPD       Y12, Y11, Y11
+	VMULPD       Y10, Y5, Y5
+	VMULPD       Y8, Y7, Y7
+	VADDPD       Y7, Y5, Y5
+	VADDPD       Y11, Y9, Y7
+	VADDPD       Y5, Y3, Y8
+	VSUBPD       Y11, Y9, Y9
+	VSUBPD       Y5, Y3, Y3
+	VADDPD       Y7, Y4, Y5
+	VADDPD       Y8, Y6, Y10
+	VMOVUPD      Y5, (R9)
+	VMOVUPD      Y10, 64(R9)
+	VSUBPD       Y7, Y4, Y4
+	VSUBPD       Y8, Y6, Y5
+	VMOVUPD      Y4, (R9)(R8*1)
+	VMOVUPD      Y5, 64(R9)(R8*1)
+	VADDPD       Y3, Y2, Y4
+	VSUBPD       Y9, Y1, Y5
+	VMOVUPD      Y4, (R10)(R8*1)
+	VMOVUPD      Y5, 64(R10)(R8*1)
+	VSUBPD       Y3, Y2, Y2
+	VADDPD       Y9, Y1, Y1
+	VMOVUPD      Y2, (R9)(DX*1)
+	VMOVUPD      Y1, 64(R9)(DX*1)
+	VMOVUPD      32(R9)(R8*1), Y1
+	VMOVUPD      96(R9)(R8*1), Y2
+	VBROADCASTSD 16(BX), Y3
+	VBROADCASTSD 24(BX), Y4
+	VXORPD       Y0, Y4, Y4
+	VMULPD       Y3, Y1, Y5
+	VMULPD       Y4, Y2, Y6
+	VSUBPD       Y6, Y5, Y5
+	VMULPD       Y4, Y1, Y1
+	VMULPD       Y3, Y2, Y2
+	VADDPD       Y2, Y1, Y1
+	VMOVUPD      32(R9), Y2
+	VMOVUPD      96(R9), Y3
+	VADDPD       Y5, Y2, Y4
+	VADDPD       Y1, Y3, Y6
+	VSUBPD       Y5, Y2, Y2
+	VSUBPD       Y1, Y3, Y1
+	VMOVUPD      32(R9)(DX*1), Y3
+	VMOVUPD      96(R9)(DX*1), Y5
+	VBROADCASTSD (BX), Y7
+	VBROADCASTSD 8(BX), Y8
+	VXORPD       Y0, Y8, Y8
+	VMULPD       Y7, Y3, Y9
+	VMULPD       Y8, Y5, Y10
+	VSUBPD       Y10, Y9, Y9
+	VMULPD       Y8, Y3, Y3
+	VMULPD       Y7, Y5, Y5
+	VADDPD       Y5, Y3, Y3
+	VMOVUPD      32(R10)(R8*1), Y5
+	VMOVUPD      96(R10)(R8*1), Y7
+	VBROADCASTSD 32(BX), Y8
+	VBROADCASTSD 40(BX), Y10
+	VXORPD       Y0, Y10, Y10
+	VMULPD       Y8, Y5, Y11
+	VMULPD       Y10, Y7, Y12
+	VSUBPD       Y12, Y11, Y11
+	VMULPD       Y10, Y5, Y5
+	VMULPD       Y8, Y7, Y7
+	VADDPD       Y7, Y5, Y5
+	VADDPD       Y11, Y9, Y7
+	VADDPD       Y5, Y3, Y8
+	VSUBPD       Y11, Y9, Y9
+	VSUBPD       Y5, Y3, Y3
+	VADDPD       Y7, Y4, Y5
+	VADDPD       Y8, Y6, Y10
+	VMOVUPD      Y5, 32(R9)
+	VMOVUPD      Y10, 96(R9)
+	VSUBPD       Y7, Y4, Y4
+	VSUBPD       Y8, Y6, Y5
+	VMOVUPD      Y4, 32(R9)(R8*1)
+	VMOVUPD      Y5, 96(R9)(R8*1)
+	VADDPD       Y3, Y2, Y4
+	VSUBPD       Y9, Y1, Y5
+	VMOVUPD      Y4, 32(R10)(R8*1)
+	VMOVUPD      Y5, 96(R10)(R8*1)
+	VSUBPD       Y3, Y2, Y2
+	VADDPD       Y9, Y1, Y1
+	VMOVUPD      Y2, 32(R9)(DX*1)
+	VMOVUPD      Y1, 96(R9)(DX*1)
+	ADDQ         DI, R9
+	CMPQ         R9, CX
+	JL           block
+	ADDQ         $+128, AX
+	ADDQ         $+48, BX
+	DECQ         SI
+	JMP          butterfly
+
+butterfly_end:
+	VZEROUPPER
+	RET
+
+// func mirrored(z *float64, place *int, mirror *int, table *float64, mirrored *float64, n int)
+// Requires: AVX
+TEXT ·mirrored(SB), $0-48
+	MOVQ z+0(FP), AX
+	MOVQ place+8(FP), CX
+	MOVQ mirror+16(FP), DX
+	MOVQ table+24(FP), BX
+	MOVQ mirrored+32(FP), SI
+	MOVQ n+40(FP), DI
+
+pairs:
+	TESTQ        DI, DI
+	JZ           pairs_end
+	MOVQ         (CX), R8
+	MOVQ         (DX), R9
+	SHLQ         $0x07, R8
+	SHLQ         $0x07, R9
+	ADDQ         AX, R8
+	ADDQ         AX, R9
+	VMOVUPD      (R8), Y0
+	VMOVUPD      64(R8), Y1
+	VMOVUPD      (R9), Y2
+	VMOVUPD      64(R9), Y3
+	VBROADCASTSD (BX), Y4
+	VBROADCASTSD 8(BX), Y5
+	VBROADCASTSD 16(BX), Y6
+	VBROADCASTSD 24(BX), Y7
+	VMULPD       Y4, Y0, Y8
+	VMULPD       Y5, Y1, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y6, Y2, Y9
+	VMULPD       Y7, Y3, Y10
+	VADDPD       Y10, Y9, Y9
+	VADDPD       Y9, Y8, Y8
+	VMOVUPD      Y8, (R8)
+	VMULPD       Y4, Y1, Y4
+	VMULPD       Y5, Y0, Y5
+	VADDPD       Y5, Y4, Y4
+	VMULPD       Y7, Y2, Y5
+	VMULPD       Y6, Y3, Y6
+	VSUBPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y4, 64(R8)
+	VBROADCASTSD (SI), Y4
+	VBROADCASTSD 8(SI), Y5
+	VBROADCASTSD 16(SI), Y6
+	VBROADCASTSD 24(SI), Y7
+	VMULPD       Y4, Y2, Y8
+	VMULPD       Y5, Y3, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y6, Y0, Y9
+	VMULPD       Y7, Y1, Y10
+	VADDPD       Y10, Y9, Y9
+	VADDPD       Y9, Y8, Y8
+	VMOVUPD      Y8, (R9)
+	VMULPD       Y4, Y3, Y3
+	VMULPD       Y5, Y2, Y2
+	VADDPD       Y2, Y3, Y2
+	VMULPD       Y7, Y0, Y0
+	VMULPD       Y6, Y1, Y1
+	VSUBPD       Y1, Y0, Y0
+	VADDPD       Y0, Y2, Y0
+	VMOVUPD      Y0, 64(R9)
+	VMOVUPD      32(R8), Y0
+	VMOVUPD      96(R8), Y1
+	VMOVUPD      32(R9), Y2
+	VMOVUPD      96(R9), Y3
+	VBROADCASTSD (BX), Y4
+	VBROADCASTSD 8(BX), Y5
+	VBROADCASTSD 16(BX), Y6
+	VBROADCASTSD 24(BX), Y7
+	VMULPD       Y4, Y0, Y8
+	VMULPD       Y5, Y1, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y6, Y2, Y9
+	VMULPD       Y7, Y3, Y10
+	VADDPD       Y10, Y9, Y9
+	VADDPD       Y9, Y8, Y8
+	VMOVUPD      Y8, 32(R8)
+	VMULPD       Y4, Y1, Y4
+	VMULPD       Y5, Y0, Y5
+	VADDPD       Y5, Y4, Y4
+	VMULPD       Y7, Y2, Y5
+	VMULPD       Y6, Y3, Y6
+	VSUBPD       Y6, Y5, Y5
+	VADDPD       Y5, Y4, Y4
+	VMOVUPD      Y4, 96(R8)
+	VBROADCASTSD (SI), Y4
+	VBROADCASTSD 8(SI), Y5
+	VBROADCASTSD 16(SI), Y6
+	VBROADCASTSD 24(SI), Y7
+	VMULPD       Y4, Y2, Y8
+	VMULPD       Y5, Y3, Y9
+	VSUBPD       Y9, Y8, Y8
+	VMULPD       Y6, Y0, Y9
+	VMULPD       Y7, Y1, Y10
+	VADDPD       Y10, Y9, Y9
+	VADDPD       Y9, Y8, Y8
+	VMOVUPD      Y8, 32(R9)
+	VMULPD       Y4, Y3, Y3
+	VMULPD       Y5, Y2, Y2
+	VADDPD       Y2, Y3, Y2
+	VMULPD       Y7, Y0, Y0
+	VMULPD       Y6, Y1, Y1
+	VSUBPD       Y1, Y0, Y0
+	VADDPD       Y0, Y2, Y0
+	VMOVUPD      Y0, 96(R9)
+	ADDQ         $+8, CX
+	ADDQ         $-8, DX
+	ADDQ         $+32, BX
+	ADDQ         $-32, SI
+	DECQ         DI
+	JMP          pairs
+
+pairs_end:
+	VZEROUPPER
+	RET

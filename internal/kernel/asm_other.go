@@ -111,3 +111,69 @@ func pass3(dst *float32, dstStride int, rows int, width int, c *float32, rowStri
 func pass5(dst *float32, dstStride int, rows int, width int, c *float32, rowStride int, tapStride int, follow *int32, axes *float64, table *float32, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
+
+func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}
+
+func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool {
+	panic("kernel: no assembly for this processor")
+}
+
+func widenLanes(x *float64, src *float32, stride int, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func narrowLanes(dst *float32, stride int, r *float64, n int, level *float64, slope *float64, from float64, shift float64, bounds *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func line(x *float64, n int, numbers *float64, level *float64, slope *float64, top *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func sumLanes(sum *float64, w *float64, x *float64, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func lags(phi *float64, x *float64, n int) { panic("kernel: no assembly for this processor") }
+
+func solve(s *float64, first *float64, last *float64, share float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func forward(after *float64, n int, coef *float64, limit *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func outward(after *float64, before *float64, n int, coef *float64, limit *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func forward2(z *float64, end *float64, q int, twiddle *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func forward3(z *float64, end *float64, q int, twiddle *float64, sine float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func forward4(z *float64, end *float64, q int, twiddle *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func inverse2(z *float64, end *float64, q int, twiddle *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func inverse3(z *float64, end *float64, q int, twiddle *float64, sine float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func inverse4(z *float64, end *float64, q int, twiddle *float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func mirrored(z *float64, place *int, mirror *int, table *float64, mirrored *float64, n int) {
+	panic("kernel: no assembly for this processor")
+}

@@ -1,6 +1,7 @@
 // Package kernel holds the inner loops of resampling, matching and time
-// correction, in float32 over rows of values: as AVX2 assembly, written by
-// package gen, and as plain Go for every other processor.
+// correction, in float32 over rows of values, and in float64 where series in time are
+// worked on, eight side by side: as AVX2 assembly, written by package gen, and as plain
+// Go for every other processor.
 //
 // Both give the same bits for all inputs, NaN payloads apart: each file of kernels
 // ends in the plain twin of its assembly, with the same lanes and the same order of

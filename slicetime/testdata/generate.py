@@ -69,11 +69,16 @@ def taps(reach, frac):
     x = frac - np.arange(-reach, reach + 1); w = np.sinc(x) * kaiser(x, reach)
     return w / w.sum()
 
+def line_taps(reach, frac):
+    """the nearest taps, in squares divided by the window, that give sum 1 and first moment frac: least norm of lstsq"""
+    j = np.arange(-reach, reach + 1); w = taps(reach, frac); root = np.sqrt(kaiser(frac - j, reach)); A = np.vstack([np.ones(len(j)), j])
+    return w + root * np.linalg.lstsq(A * root, np.array([1., frac]) - A @ w, rcond=None)[0]
+
 def sinc():
     xs = np.array([0, .25, .5, .75, 1.25, 1.5, 2.5, 2.75, 3.5, 3.999, 4, 5])
     windows = [{"reach": a, "beta": b, "x": xs, "kernel": np.sinc(xs) * kaiser(xs, a, b)} for a, b in ((3, 6.), (4, 6.), (8, 6.), (8, 8.), (32, 6.))]
-    cases = [{"reach": r, "frac": f, "taps": taps(r, f)} for r in (1, 2, 3, 8, 17, 32) for f in (.5, .25, -.13, -.5, 1e-6)]
-    write("windowed_sinc.json", "sinc(x) w(x), w of Kaiser; taps of samples -reach..reach for a value frac later than sample 0, sum one", windows=windows, cases=cases)
+    cases = [{"reach": r, "frac": f, "taps": taps(r, f), "line_taps": line_taps(r, f)} for r in (1, 2, 3, 8, 17, 32) for f in (.5, .25, -.13, -.5, 1e-6)]
+    write("windowed_sinc.json", "sinc(x) w(x), w of Kaiser; taps of samples -reach..reach for a value frac later than sample 0, sum one; line_taps: first moment frac too", windows=windows, cases=cases)
 
 # ---------------------------------------------------------------- the whole method
 def autoregression(r, q=8, ridge=1e-2):
@@ -107,14 +112,21 @@ def moved(x, shift, kernel, reach=8):
         L = length(n + 2 * e); y = circular(np.concatenate([z, np.zeros(L - len(z))]), f)[:len(z)] if f else z
     pad = 200; out = np.zeros(n)
     if kernel == "fourier": y = np.concatenate([np.zeros(pad), y, np.zeros(pad)])
-    else: z = np.concatenate([np.zeros(pad), z, np.zeros(pad)])
+    else: return windowed(x, k, f, reach)
     for m in range(n):
         at = pad + e + m + k
-        if not (40 <= at < pad * 2 + n + 2 * e - 40): v = 0.
-        elif kernel == "fourier": v = y[at]
-        else: v = np.dot(taps(reach, f), z[at - reach:at + reach + 1])
+        v = y[at] if 40 <= at < pad * 2 + n + 2 * e - 40 else 0.
         out[m] = line(m + shift) + v
     return out
+
+def past(x):
+    """what stands after the last sample: line and prediction from the last 40, then the line"""
+    x = x[-40:]; n = len(x); t = np.arange(n); slope, level = np.polyfit(t, x, 1); e, z = extended(x - (level + slope * t))
+    p = np.zeros(400); p[:e] = z[e + n:]; return level + slope * (n + np.arange(400)) + p
+
+def windowed(x, k, f, reach):
+    n = len(x); pad = 400; z = np.concatenate([past(x[::-1])[::-1], x, past(x)]); w = line_taps(reach, f) if f else None
+    return np.array([z[pad + m + k] if w is None else np.dot(w, z[pad + m + k - reach:pad + m + k + reach + 1]) for m in range(n)])
 
 def whole(rng):
     cases = []

@@ -51,6 +51,10 @@ func generate() (map[string][]byte, error) {
 	locate()
 	cells()
 	passes()
+	interpolate(false)
+	interpolate(true)
+	lanesFunctions()
+	transform()
 
 	f, err := g.Result()
 	if err != nil {
