@@ -126,8 +126,8 @@ const (
 	rim = 2
 	// fineTolerance ends a match when another step would move no point of the head
 	// by more; the best precision that noise allows is about 5 um.
-	fineTolerance   = 5e-4
-	roughTolerance  = 5e-3 // first of two passes: small beside the noise of its single-volume template
+	fineTolerance   = 1e-4
+	roughTolerance  = 5e-4 // first of two passes: small beside the noise of its single-volume template
 	coarseTolerance = 2e-2
 	// maxIterations is twice what any start within capture range took.
 	maxIterations       = 30
@@ -372,7 +372,7 @@ func (e *estimator) against(image []float32, index int) (*Estimate, error) {
 // aligns all with the average.
 func (e *estimator) againstMean() (*Estimate, error) {
 	rough := e.fineEffort()
-	rough.tolerance, rough.thin = roughTolerance, true
+	rough.tolerance = roughTolerance
 	// The first volume serves unless hardly any other looks like it: then it is
 	// the odd one, and the middle or last volume gets its turn.
 	var vols []Volume
@@ -547,7 +547,7 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 		if known != nil && known[t].State != Lost {
 			f := e.withoutSpoilt(w, m, vol, w.m.match(m.fine, w.sFine, known[t].Pose, how), how)
 			if vols[t] = e.judge(m, f); vols[t].State != Lost {
-				if vols[t].State == Aligned && how.robust && !how.thin {
+				if vols[t].State == Aligned {
 					left[worker].add(&w.m, &f)
 				}
 				return nil
@@ -667,12 +667,9 @@ func (e *estimator) roughEffort() effort {
 	return effort{tolerance: coarseTolerance, iterations: coarseMaxIterations, sliceAxis: e.opt.SliceAxis}
 }
 
-// refine matches at the fine level from a coarse pose: most of the way on half
-// of the voxels, the rest as how says.
+// refine matches at the fine level from a coarse pose: most of the way on a quarter of
+// the rows, the rest as how says.
 func (e *estimator) refine(w *workspace, m *model, start Pose, how effort) found {
-	if how.thin {
-		return w.m.match(m.fine, w.sFine, start, how)
-	}
 	near := how
 	near.thin, near.tolerance = true, max(how.tolerance, coarseTolerance)
 	a := w.m.match(m.fine, w.sFine, start, near)

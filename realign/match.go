@@ -366,11 +366,11 @@ func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, 
 // which is smaller. With u = 1 - (r/cut)^2 they are u^2 and u (5 u - 4); their means,
 // by weight and squared gradient, stand for them at every point (Huber 1981, Robust
 // Statistics, section 7.8, modified residuals; from memory). For normal residuals it
-// is 1.2. Every eighth point tells.
+// is 1.2. One point in a few tells.
 func (m *matcher) slant(cut float32) float64 {
 	over := 1 / cut
 	var full, slope float64
-	for q := 0; q < len(m.res); q += 8 {
+	for _, q := range m.t.some {
 		r := float32(m.res[q] * over)
 		u := 1 - float32(r*r)
 		if !(u > 0) {
@@ -458,16 +458,13 @@ func sliceWeights(z []float64) []float64 {
 // are so many that what it is uncertain by (1.3 / sqrt of their number) is of no account.
 func (m *matcher) medianAbs() float32 {
 	m.some = m.some[:0]
-	stride := 1 + len(m.res)/enoughResiduals
-	for q := stride / 2; q < len(m.res); q += stride {
+	for _, q := range m.t.some {
 		if m.in[q] > 0 {
 			m.some = append(m.some, float32(math.Abs(float64(m.res[q]))))
 		}
 	}
 	return medianOf(m.some)
 }
-
-const enoughResiduals = 8000
 
 // median returns the upper median and reorders v. (Hoare 1961, CACM 4:321.)
 func median(v []float32) float32 {

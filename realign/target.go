@@ -21,6 +21,7 @@ type target struct {
 	weight []float32    // what a point counts in a robust match; nil: all alike
 	head   []span       // rows of the head, whether they take part or not
 	inHead []bool       // by point
+	some   []int32      // points that stand for all where a median or a mean is wanted
 	size   float64      // voxels of the head
 	fewer  *target      // every fourth row of it; nil: too few
 }
@@ -113,6 +114,7 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 		}
 		a.slope[q] = float32(float64(gw[0]*gw[0]) + float64(gw[1]*gw[1]) + float64(gw[2]*gw[2]))
 	}
+	a.some = a.sample()
 	a.thin()
 	return a
 }
@@ -144,9 +146,28 @@ func (t *target) thin() {
 			f.shade[k] = append(f.shade[k], t.shade[k][from:to]...)
 		}
 	}
+	f.some = f.sample()
 	if len(f.voxel) >= fewestPoints {
 		t.fewer = &f
 	}
+}
+
+// enoughSamples make a median certain to 1.5 % of the spread.
+const enoughSamples = 8000
+
+// sample picks about so many of the points, or all of fewer: voxels on every so many-th
+// sloping plane, counted from the corners, so that it is the same ones however
+// the array is turned.
+func (t *target) sample() (some []int32) {
+	every := max(1, len(t.voxel)/enoughSamples)
+	n := t.g.N
+	for q, v := range t.voxel {
+		x, y, z := int(v)%n[0], int(v)/n[0]%n[1], int(v)/(n[0]*n[1])
+		if (min(x, n[0]-1-x)+min(y, n[1]-1-y)+min(z, n[2]-1-z))%every == 0 {
+			some = append(some, int32(q))
+		}
+	}
+	return some
 }
 
 // weigh has points count as their voxels do.
