@@ -119,3 +119,19 @@ func interpolate(dst *float32, n int, w *float64, src **float32, taps int, like 
 func interpolateEach(dst *float32, n int, w **float64, src **float32, taps int, like *float32) bool {
 	panic("kernel: no assembly for this processor")
 }
+
+func addRamp(dst *float32, src *float32, n int, start float32, step float32, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func overRamp(dst *float32, src *float32, n int, start float32, step float32, least float32, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func slopes(out *float32, outStride int, in *float32, inStride int, value *float32, index *int32, n int, frame *float32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64) {
+	panic("kernel: no assembly for this processor")
+}

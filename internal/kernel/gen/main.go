@@ -53,6 +53,9 @@ func generate() (map[string][]byte, error) {
 	passes()
 	interpolate(false)
 	interpolate(true)
+	ramps()
+	slopes()
+	ladder()
 
 	f, err := g.Result()
 	if err != nil {
