@@ -471,7 +471,9 @@ func TestPathWithLostVolumes(t *testing.T) {
 // The array is a way to write the head down: the same run with axes swapped and
 // flipped (the schedule with them), another world, or another scale gives the
 // same path, and a run that goes backwards in time the mirrored one. Without noise;
-// bar 0.3 um at the worst excitation.
+// bar 0.6 um at the worst excitation: volumes are matched on rows of the array, so that the
+// path starts elsewhere by half a micrometre, and it ends where another iteration would add
+// less than noise would show.
 func TestPathDoesNotDependOnTheArray(t *testing.T) {
 	const nt = 6
 	g := axial([3]int{38, 44, 22}, [3]float64{4.8, 4.8, 5.2})
@@ -505,7 +507,7 @@ func TestPathDoesNotDependOnTheArray(t *testing.T) {
 		}
 		_, start := pathErrors(v, func(u float64) realign.Pose { return base.est.Volumes[int(u)].Pose }, headPoints)
 		t.Logf("%s: %.3f um, worst %.3f um; it started from volume poses that differ by %.3f um; strengths %.4g %.4g", name, e, w, start, r.path.StrengthShift, r.path.StrengthTurn)
-		if w > 0.3 || start > 0.3 {
+		if w > 0.6 || start > 0.6 {
 			t.Errorf("%s: the path moved by %.3f um, at worst %.3f um", name, e, w)
 		}
 	}
@@ -600,7 +602,7 @@ func pathDigest(p *realign.PathEstimate) string {
 }
 
 // As sameBytesDigest: recorded on amd64, the same everywhere.
-const sameBytesPathDigest = "3895e213d3a8fcea"
+const sameBytesPathDigest = "6d963651b5d904a7"
 
 // digestRun is small: an emulator runs it too. It jerks, so that slots are moved
 // about, and one slice is corrupt.
