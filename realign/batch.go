@@ -16,14 +16,6 @@ type batch struct {
 
 func (b *batch) reset() { b.base, b.tx, b.ty, b.tz = b.base[:0], b.tx[:0], b.ty[:0], b.tz[:0] }
 
-// grow makes room for n points.
-func (b *batch) grow(n int) {
-	if cap(b.base) < n {
-		b.base = make([]int32, 0, n)
-		b.tx, b.ty, b.tz = make([]float32, 0, n), make([]float32, 0, n), make([]float32, 0, n)
-	}
-}
-
 // add adds a point, clamped to the field, given by its voxel coordinate.
 func (s *spline) add(b *batch, x, y, z float64) {
 	i, tx := cell(x, s.n[0], s.degree)

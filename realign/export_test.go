@@ -123,18 +123,6 @@ func RebuildOn(ctx context.Context, g Grid, data []float32, nt int, s slicetime.
 	return &q
 }
 
-var NewBand = func(n int) band { return make(band, n) }
-
-const BandWidth = bandWidth
-
-type Band = band
-
-func (m band) Add(i, j int, v float64) { m.add(i, j, v) }
-func (m band) Cholesky() bool          { return m.cholesky() }
-func (m band) Solve(b []float64)       { m.solve(b) }
-func (m band) InverseBand() band       { return m.inverseBand() }
-func (m band) LogDiagonal() float64    { return m.logDiagonal() }
-
 // What the tests of the path need.
 
 type (
@@ -171,9 +159,16 @@ func (c *chain) Update(data []slotData, p []params) (moved, evidence float64) {
 }
 func (c *chain) Step(data []slotData, p []params) (delta []float64, evidence float64, ok bool) {
 	evidence, ok = c.step(data, p)
-	return append([]float64(nil), c.delta...), evidence, ok
+	for _, d := range c.delta {
+		delta = append(delta, d[:]...)
+	}
+	return delta, evidence, ok
 }
-func (c *chain) Tune(data []slotData, p []params)  { c.tune(data, p) }
+func (c *chain) Tune(data []slotData, p []params) { c.tune(c.link(data, p), allFactors) }
+func (c *chain) EvidenceAt(data []slotData, p []params, lt, lr float64) float64 {
+	at := [2]float64{lt, lr}
+	return c.evidences([4][2]float64{{1, 1}, {2, 3}, at, {4, 5}}, c.link(data, p))[2]
+}
 func (c *chain) Offset() []params                  { return c.offset }
 func (c *chain) Bend() [][3]float64                { return c.bend }
 func (c *chain) Weights() []float64                { return c.w }
@@ -181,7 +176,7 @@ func (c *chain) Strengths() (shift, turn float64)  { return c.lt, c.lr }
 func (c *chain) SetStrengths(shift, turn float64)  { c.lt, c.lr = shift, turn }
 func (s slotData) Moved(d *params) slotData        { return s.moved(d) }
 func (s slotData) Gradient() [poseUnknowns]float64 { return s.g }
-func (c *chain) InverseBand() band                 { return c.m.inverseBand() }
+func (c *chain) Covariances() []block              { return covariances(c.rungs) }
 
 // PathParams and PathPose convert between poses and the parameters of the path.
 func PathParams(centre [3]float64, p Pose) Params {
@@ -215,7 +210,7 @@ func HeldOut(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate
 			panic(err)
 		}
 	}
-	must(e.measure(make([]slotData, len(e.p)), true))
+	must(e.measure(make([]slotData, len(e.p)), looking{plain: true}))
 	e.noise = e.usualNoise()
 
 	volumes, err = e.heldOutVolumes()
@@ -225,4 +220,114 @@ func HeldOut(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate
 	path, err = e.heldOut(false)
 	must(err)
 	return volumes, path, harmAllowed(countState(est.Volumes, Aligned))
+}
+
+// Lines gives the points of a row of the reference as the rebuilding of the template finds
+// them: voxels x to x+n-1 of (y, z), after those of the row before; and in how many lines.
+func Lines(m Map, rows [][4]int) (points [][3]float64, lines int) {
+	var g rowGuess
+	for _, r := range rows {
+		at := r[0]
+		for _, l := range m.(*slotMap).lines(nil, r[0], r[1], r[2], r[3], &g) {
+			if l.x != at {
+				panic("lines do not follow each other")
+			}
+			at += l.n
+			lines++
+			for i := range l.n {
+				var v [3]float64
+				for k := range v {
+					v[k] = l.start[k] + l.step[k]*float64(i)
+				}
+				points = append(points, v)
+			}
+		}
+		if at != r[0]+r[1] {
+			panic("lines do not fill their row")
+		}
+	}
+	return points, lines
+}
+
+// Medians of sizes: as found from a guess, and by counting.
+func Medians(v []float32, guess float32) (near, counted float32) {
+	return medianNear(v, guess, make([]float32, 2*len(v))), medianOf(v)
+}
+
+// LineWeights is what the points of a line count in the average of volumes.
+func LineWeights(g Grid, axis, n int, start, step [3]float64, weak []bool) (weight []float32, full bool) {
+	e := &pathEstimator{estimator: &estimator{g: g}}
+	e.schedule.Axis = axis
+	weight = make([]float32, n)
+	full = e.weighLine(weight, &line{n: n, start: start, step: step}, weak)
+	return weight, full
+}
+
+func EdgeWeight(deep float64) float64 { return edgeWeight(deep) }
+
+// World is the place of a voxel, mm.
+func (g Grid) World(i, j, k float64) [3]float64 { return g.world(i, j, k) }
+
+// A Probe looks into the estimation of a path.
+type Probe struct{ e *pathEstimator }
+
+// NewProbe prepares a run for its path, with the reference of est as the template.
+func NewProbe(g Grid, data []float32, nt int, s slicetime.Schedule, est *Estimate) Probe {
+	e, err := newPathEstimator(context.Background(), g, Floats(data, nt), s, est, 1)
+	if err != nil {
+		panic(err)
+	}
+	e.shots = s.Shots()
+	e.lay()
+	e.setTemplate(est.Reference)
+	return Probe{e}
+}
+
+// Predicted gives, for the pixels of a shot of volume n at a pose, which voxel of the
+// volume each is, the prediction, and its derivatives by shift and turn.
+func (p Probe) Predicted(vol []float32, n, shot int, pose Pose) (voxel []int, value []float32, slope [6][]float32) {
+	e, w := p.e, p.e.work[0]
+	b := mul(e.t.inv, mul(pose.Inverse().Matrix(), e.g.Affine))
+	e.gather(w, vol, e.shots[shot].Slices, pose, &b)
+	rows := e.predict(w, n, e.schedule.Axis, &b, false)
+	for _, r := range w.rows {
+		for _, x := range w.sites.Index[r.from:r.to] {
+			voxel = append(voxel, int(x)+e.g.N[0]*(r.y+e.g.N[1]*r.z))
+		}
+	}
+	value = append(value, rows[0]...)
+	for k := range slope {
+		slope[k] = append(slope[k], rows[2+k]...)
+	}
+	return voxel, value, slope
+}
+
+// Level is volume n, all of whose slices stand at a pose, at the brightness of the
+// template, less the prediction with residual.
+func (p Probe) Level(vol []float32, n int, pose Pose, residual bool) []float32 {
+	e := p.e
+	for i := range e.shots {
+		e.poses[n*len(e.shots)+i] = pose
+	}
+	dst := make([]float32, len(vol))
+	e.level(dst, vol, n, residual, &batch{})
+	return dst
+}
+
+// SetGain has slice k of all volumes be as bright as said.
+func (p Probe) SetGain(k int, gain [4]float64) {
+	for n := range p.e.gains {
+		p.e.gains[n][k] = gain
+	}
+}
+
+func (p Probe) Region() []bool { return p.e.region }
+
+// Centred is the map by a twist about c.
+func Centred(w Twist, c [3]float64) Pose { return Exp(w).centred(c) }
+
+// GainAt is a gain at a voxel.
+func GainAt(g Grid, centre [3]float64, gain [4]float64, x, y, z int) float64 {
+	r := newGainRows(g, centre, &gain)
+	return r.at([3]float64{float64(x), float64(y), float64(z)})
 }

@@ -3,6 +3,7 @@ package realign
 import (
 	"context"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 	"evenkeel/slicetime"
 )
@@ -87,11 +88,7 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 					continue
 				}
 				gr := &gain[[3]int{0, y, z}[s.Axis]]
-				bright := gr.row(y, z)
-				for x, v := range predicted {
-					gn := float32(bright + float64(gr.step*float64(x)))
-					row[x] -= float32(gn * v)
-				}
+				kernel.AddRamp(row, predicted, float32(-gr.row(y, z)), float32(-gr.step))
 			}
 		}
 		return nil
@@ -110,40 +107,41 @@ func (p *PathEstimate) Joint(ctx context.Context, g Grid, data []float32, nt int
 			}
 		}
 	}
-	res := make([]*spline, workers)
+	// One way of resampling for the whole run.
+	near := true
+	for n := range nt {
+		near = near && NearIdentity(PoseMap(g, p.At(n, float64(float64(n)*s.TR)+t)))
+	}
+	res := make([]*Resampler, workers)
 	done.phase(inTime, 1, nt)
 	return parallel.For(ctx, workers, nt, func(worker, n int) error {
 		defer done.piece()
 		if res[worker] == nil {
-			res[worker] = newSpline(g.N, degree)
+			res[worker] = NewResampler(g.N, degree)
 		}
 		r := res[worker]
 		vol := data[n*nv:][:nv]
 		pose := p.At(n, float64(float64(n)*s.TR)+t)
-		still := pose == Identity
-		if !still {
-			r.load(vol)
-		}
 		m := mul(inv, mul(pose.Matrix(), g.Affine))
+		switch {
+		case pose == Identity:
+		case near:
+			r.Near(vol, vol, affineMap(m))
+		default:
+			r.Load(vol)
+			r.Eval(vol, affineMap(m))
+		}
 		gain := newGainRows(g, p.Centre, &given[n][0])
 		area := g.N[0] * g.N[1]
 		for z := range g.N[2] {
 			plane := vol[area*z:][:area]
-			if !still {
-				for y := range g.N[1] {
-					r.row(plane[g.N[0]*y:][:g.N[0]], &m, y, z)
-				}
-			}
 			for y := range g.N[1] {
 				// The gain is linear along a row, wherever that lies in the volume.
 				fy, fz := float64(y), float64(z)
 				bright := gain.at(applyAffine(&m, 0, fy, fz))
 				step := gain.at(applyAffine(&m, 1, fy, fz)) - bright
 				row, reference := plane[g.N[0]*y:][:g.N[0]], p.Reference[area*z+g.N[0]*y:][:g.N[0]]
-				for x, v := range reference {
-					gn := float32(bright + float64(step*float64(x)))
-					row[x] += float32(gn * v)
-				}
+				kernel.AddRamp(row, reference, float32(bright), float32(step))
 			}
 		}
 		return nil

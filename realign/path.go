@@ -69,12 +69,13 @@ const (
 	// where the slope of the template changes by a few percent.
 	pathFirstIterations = 4
 	pathNextIterations  = 2
-	pathRim             = 1    // voxels around the head that take part: past them an unfiltered template is flat
-	pathMargin          = 2.0  // planes left out at each field edge: slices are not smoothed, and a spline is bent there
-	draftProjections    = 1    // of a template that is still to change: one sharpens most
-	lastProjections     = 2    // of the last pass; more sharpen no further
-	pathTolerance       = 2e-4 // mm: a pass ends when no slot moves by more
-	draftTolerance      = 2e-3 // mm, of the first pass, whose template moves poses by more
+	pathRim             = 1   // voxels around the head that take part: past them an unfiltered template is flat
+	pathMargin          = 2.0 // planes left out at each field edge: slices are not smoothed, and a spline is bent there
+	draftProjections    = 1   // of a template that is still to change: one sharpens most
+	lastProjections     = 2   // of the last pass; more sharpen no further
+	// A pass ends when no slot moves by more than pathTolerance, mm: a next iteration
+	// would move that one by a tenth as much, and most by far less than a micrometre.
+	pathTolerance = 2e-2
 	// fewestData: a path is only worth its name where most slots see the head.
 	fewestData = 0.5
 	// fewestAligned: an average of one or two volumes fits those volumes whatever
@@ -152,6 +153,7 @@ type pathEstimator struct {
 	voxel    []float32      // weight of each voxel of the template; nil: all alike
 	thin     bool           // every other pixel only
 	others   bool           // with thin: the other half of them
+	chess    [2][]bool      // by x: the voxels of a row that are even, and those that are odd
 	noise    float64        // as seen so far, in units of the volumes
 	scale    []float64      // residual scale of each slot, 0: no data
 	// sliceScale is the same by volume and slice.
@@ -163,16 +165,51 @@ type pathEstimator struct {
 
 // slotWork is the scratch of one worker.
 type slotWork struct {
-	b    batch
-	val  []float32 // pixel
-	near []int32   // voxel of the template
-	gain []float32
-	head []bool
-	wt   []float32
-	res  []float32    // residual
-	abs  []float32    // its size
-	pred []float32    // prediction
-	j    [6][]float32 // derivatives of the prediction by pose
+	sites kernel.Sites
+	rows  []pixels
+	ends  []int
+	val   []float32 // pixel
+	wt    []float32
+	grad  []float32 // the template and its derivatives by voxel
+	out   []float32 // as kernel.Slopes writes it
+	abs   []float32 // size of the residual
+	near  []float32
+}
+
+// scale is that of residuals whose sizes are given: their median, times madScale. guess is
+// roughly that, or 0.
+func (w *slotWork) scale(size []float32, guess float64) float64 {
+	w.near = sized(w.near, 2*len(size))
+	return float64(madScale * float64(medianNear(size, float32(guess/madScale), w.near)))
+}
+
+// medianNear is medianOf, found sooner where it is within a tenth of guess: only what lies there
+// is put in order. room holds twice as many values.
+func medianNear(v []float32, guess float32, room []float32) float32 {
+	lo, hi := int32(math.Float32bits(guess*0.9)), int32(math.Float32bits(guess*1.1))
+	// Sizes are in the order of their bits; differences of those do not run over.
+	below, n := 0, 0
+	for _, x := range v {
+		u := int32(math.Float32bits(x))
+		room[n] = x
+		less := int(uint32(u-lo) >> 31)
+		below += less
+		n += int(uint32(u-hi)>>31) - less
+	}
+	k := len(v)/2 - below
+	if !(guess > 0) || k < 0 || k >= n {
+		return medianOf(v)
+	}
+	// The k-th of n is the median once the shorter side is made up.
+	for ; n > 2*k+1; k++ {
+		room[n] = 0
+		n++
+	}
+	for n < 2*k {
+		room[n] = math.MaxFloat32
+		n++
+	}
+	return median(room[:n])
 }
 
 func (e *pathEstimator) run() (*PathEstimate, error) {
@@ -207,24 +244,26 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	}
 	e.lay()
 	e.image = append([]float32(nil), e.est.Reference...)
-	e.setTemplate(e.image)
+	// Cubic, for a draft.
+	e.t = e.newTemplate(e.image, 3)
 	c := newChain(e.times, len(e.shots))
-	c.ctx, c.workers = e.ctx, e.workers
+	c.ctx = e.ctx
 	e.chain = c
 	slots := make([]slotData, len(e.times))
 	e.thin = true
-	e.done.phase(0, firstMeasured, e.nt*(1+pathFirstIterations))
-	if err := e.measure(slots, true); err != nil {
+	some := e.some()
+	e.done.phase(0, firstMeasured, len(some)+e.nt*pathFirstIterations)
+	if err := e.measure(slots, looking{plain: true, scales: true, only: some}); err != nil {
 		return nil, err
 	}
-	seen, posed := 0, (e.nt-countState(e.est.Volumes, Lost))*len(e.shots)
+	seen, posed := 0, len(some)*len(e.shots)
 	for _, s := range e.scale {
 		if s > 0 {
 			seen++
 		}
 	}
 	if float64(seen) < float64(fewestData*float64(posed)) {
-		return fallBack(fmt.Sprintf("only %d of the %d excitations of volumes that are not lost see enough of the head", seen, posed)), nil
+		return fallBack(fmt.Sprintf("only %d of %d excitations of volumes that are not lost see enough of the head", seen, posed)), nil
 	}
 	e.noise = e.usualNoise()
 	seenThen := e.noise
@@ -240,7 +279,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 			c.afresh = true
 		}
 		for range iterations {
-			if err := e.measure(slots, false); err != nil {
+			if err := e.measure(slots, looking{}); err != nil {
 				return nil, err
 			}
 			out.LastStep, out.Evidence = c.update(slots, e.p)
@@ -250,7 +289,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 			e.setPoses(c.offset)
 			out.Iterations++
 			e.noise = e.usualNoise()
-			if out.LastStep < pathTolerance || pass == 0 && out.LastStep < draftTolerance {
+			if out.LastStep < pathTolerance {
 				break
 			}
 		}
@@ -261,7 +300,7 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 			}
 			if moved {
 				c.reweight(e.p)
-				if err := e.measure(slots, false); err != nil {
+				if err := e.measure(slots, looking{}); err != nil {
 					return nil, err
 				}
 				c.update(slots, e.p)
@@ -311,8 +350,9 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 	e.expect(c, slots, out.Expected)
 	e.holdEnds(out.Expected)
 	// The comparison was in units of the noise as it was seen then.
-	out.VolumeResidual *= seenThen / e.noise
-	out.PathResidual *= seenThen / e.noise
+	units := math.Sqrt(e.unit(seenThen) / e.unit(e.noise))
+	out.VolumeResidual *= units
+	out.PathResidual *= units
 	out.Sigma, out.Settled = e.noise, out.LastStep < settledStep
 	if e.explain[1] > 0 {
 		out.Explained = 1 - e.explain[0]/e.explain[1]
@@ -327,7 +367,6 @@ func (e *pathEstimator) run() (*PathEstimate, error) {
 		{"first_iterations", pathFirstIterations},
 		{"next_iterations", pathNextIterations},
 		{"tolerance_mm", pathTolerance},
-		{"draft_tolerance_mm", draftTolerance},
 		{"settled_step_mm", settledStep},
 		{"most_passes", mostPasses},
 		{"enough_volumes", enoughVolumes},
@@ -365,21 +404,40 @@ func (e *pathEstimator) heldOut(plain bool) (float64, error) {
 	idle := make([]slotData, len(e.p))
 	scale, slicesOf, explain, thin := slices.Clone(e.scale), slices.Clone(e.sliceScale), e.explain, e.thin
 	defer func() { e.scale, e.sliceScale, e.explain, e.thin, e.others = scale, slicesOf, explain, thin, false }()
-	// What interpolation leaves in a run without noise says nothing about poses.
-	floor := float64(quietest * e.signal)
-	unit := float64(e.noise*e.noise) + float64(floor*floor)
+	nothing, unit := e.unit(0), e.unit(e.noise)
 	e.thin, e.others = true, true
-	if err := e.measure(idle, plain); err != nil {
+	some := e.some()
+	if err := e.measure(idle, looking{plain: plain, scales: true, only: some}); err != nil {
 		return 0, err
 	}
 	sum, n := 0.0, 0.0
-	for _, s := range e.scale {
-		if s > 0 {
-			sum += min((float64(s*s)+float64(floor*floor))/unit, mostSpoilt*mostSpoilt)
-			n++
+	for _, t := range some {
+		for _, s := range e.scale[t*len(e.shots):][:len(e.shots)] {
+			if s > 0 {
+				sum += min((float64(s*s)+nothing)/unit, mostSpoilt*mostSpoilt)
+				n++
+			}
 		}
 	}
 	return math.Sqrt(sum / max(n, 1)), nil
+}
+
+// unit is the square of what residual scales are compared with: the noise, and what
+// interpolation leaves in a run without any, which says nothing about poses.
+func (e *pathEstimator) unit(noise float64) float64 {
+	floor := float64(quietest * e.signal)
+	return float64(noise*noise) + float64(floor*floor)
+}
+
+// some lists volumes that are not lost, enough of them to tell what holds for all.
+func (e *pathEstimator) some() []int {
+	var posed []int
+	for n, v := range e.est.Volumes {
+		if v.State != Lost {
+			posed = append(posed, n)
+		}
+	}
+	return spread(posed, enoughVolumes)
 }
 
 // heldOutVolumes is heldOut of the volume poses, against a template made with them
@@ -486,6 +544,10 @@ func (e *pathEstimator) lay() {
 	e.signal = math.Sqrt(meanSquare(e.est.Reference, e.est.Mask)) * e.usualGain()
 	e.at = make([]params, len(e.p))
 	e.setPoses(nil)
+	for x := range e.g.N[0] {
+		odd := min(x, e.g.N[0]-1-x)&1 != 0
+		e.chess[0], e.chess[1] = append(e.chess[0], !odd), append(e.chess[1], odd)
+	}
 	e.work = make([]*slotWork, e.workers)
 	for i := range e.work {
 		e.work[i] = &slotWork{}
@@ -521,7 +583,11 @@ func (e *pathEstimator) setPoses(offset []params) {
 }
 
 func (e *pathEstimator) setTemplate(image []float32) {
-	e.t = newTemplate(e.g, image, e.est.Mask, e.est.unknown, pathRim, edgeMargins(e.g.N, pathMargin), e.est.Centre, 5)
+	e.t = e.newTemplate(image, 5)
+}
+
+func (e *pathEstimator) newTemplate(image []float32, degree int) *template {
+	return newTemplate(e.g, image, e.est.Mask, e.est.unknown, pathRim, edgeMargins(e.g.N, pathMargin), e.est.Centre, degree)
 }
 
 // jacobian is K = d(twist about the centre)/d(params): the twist's shift is
@@ -560,24 +626,39 @@ func jacobian(p Pose, q params) (rt, jr [9]float64) {
 	return rt, jr
 }
 
+// looking says what a pass over the slots is for.
+type looking struct {
+	plain  bool  // at the volume poses themselves
+	scales bool  // scales are all that is wanted
+	only   []int // volumes looked at, increasing; nil: all
+}
+
 // measure evaluates, for every slot, gradient and Hessian of the log likelihood
-// at the present path and template. plain uses the volume poses themselves
-// and only sets scales.
-func (e *pathEstimator) measure(slots []slotData, plain bool) error {
+// at the present path and template, or scales only.
+func (e *pathEstimator) measure(slots []slotData, how looking) error {
 	explain := make([][2]float64, e.nt)
-	err := e.each(nil, func(worker, n int, vol []float32) error {
+	var want func(n int) bool
+	if how.only != nil {
+		want = isIn(how.only, e.nt)
+	}
+	err := e.each(want, func(worker, n int, vol []float32) error {
 		defer e.done.piece()
 		for s, shot := range e.shots {
 			i := n*len(e.shots) + s
-			slots[i], e.scale[i] = slotData{}, 0
+			slots[i] = slotData{}
 			if e.est.Volumes[n].State == Lost {
+				e.scale[i] = 0
 				continue
 			}
 			pose := e.poses[i]
-			if plain {
+			if how.plain {
 				pose = e.est.Volumes[n].Pose
 			}
-			ex := e.slot(e.work[worker], vol, n, i, shot.Slices, pose, &slots[i])
+			to := &slots[i]
+			if how.scales {
+				to = nil
+			}
+			ex := e.slot(e.work[worker], vol, n, i, shot.Slices, pose, to)
 			explain[n][0] += ex[0]
 			explain[n][1] += ex[1]
 		}
@@ -591,102 +672,146 @@ func (e *pathEstimator) measure(slots []slotData, plain bool) error {
 	return err
 }
 
-// gather lists the pixels of one excitation of volume n that take part at a pose;
-// ends tells where the pixels of each slice end.
-func (e *pathEstimator) gather(w *slotWork, vol []float32, n int, slices []int, pose Pose) (ends []int) {
+// pixels are those of a row that take part: from and to tell which of the slot's.
+type pixels struct{ y, z, from, to int }
+
+// gather lists the pixels of one excitation that take part at a pose, given by b, which
+// takes voxels of the volume to voxels of the template; ends tells where the pixels of
+// each slice end.
+func (e *pathEstimator) gather(w *slotWork, vol []float32, slices []int, pose Pose, b *[16]float64) {
 	t := e.t
-	w.b.reset()
-	w.val, w.near, w.gain, w.head, w.wt = w.val[:0], w.near[:0], w.gain[:0], w.head[:0], w.wt[:0]
-	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
+	field := kernel.Field{N: t.g.N, Mask: t.usable, Pad: splinePad, Degree: t.s.degree, Lo: t.margin}
+	for a := range field.Hi {
+		field.Hi[a] = float64(t.g.N[a]-1) - t.margin[a]
+	}
+	w.sites.Reset()
+	w.rows, w.ends = w.rows[:0], w.ends[:0]
 	forth := mul(t.inv, mul(pose.Matrix(), t.g.Affine))
+	step := [3]float64{b[0], b[4], b[8]}
+	n := &e.g.N
 	for _, k := range slices {
 		lo, hi, ok := e.within(k)
-		if !ok {
-			ends = append(ends, len(w.val))
-			continue
-		}
-		lo, hi = t.reached(&forth, lo, hi)
-		gain := newGainRows(e.g, e.est.Centre, &e.gains[n][k])
-		for z := lo[2]; z <= hi[2]; z++ {
-			for y := lo[1]; y <= hi[1]; y++ {
-				row := t.g.N[0] * (y + t.g.N[1]*z)
-				bright := gain.row(y, z)
-				var o [3]float64 // of the row: at = o + b's first column times x
-				for a := range o {
-					o[a] = float64(b[4*a+1]*float64(y)) + float64(b[4*a+2]*float64(z)) + b[4*a+3]
-				}
-				for x := lo[0]; x <= hi[0]; x++ {
-					if e.thin && white(e.g.N, x, y, z) == !e.others {
-						continue
+		if ok {
+			lo, hi = t.reached(&forth, lo, hi)
+			count := hi[0] - lo[0] + 1
+			for z := lo[2]; z <= hi[2]; z++ {
+				for y := lo[1]; y <= hi[1] && count > 0; y++ {
+					var accept []bool
+					if e.thin {
+						odd := (min(y, n[1]-1-y) + min(z, n[2]-1-z)) & 1
+						if e.others {
+							odd ^= 1
+						}
+						accept = e.chess[odd][lo[0]:]
 					}
-					fx := float64(x)
-					at := [3]float64{o[0] + float64(b[0]*fx), o[1] + float64(b[4]*fx), o[2] + float64(b[8]*fx)}
-					near, ok := t.see(&w.b, &at)
-					if !ok {
-						continue
+					o := applyAffine(b, 0, float64(y), float64(z))
+					from := w.sites.Len()
+					if found := field.Locate(&w.sites, o, step, lo[0], count, accept); found > 0 {
+						w.rows = append(w.rows, pixels{y, z, from, from + found})
 					}
-					w.val = append(w.val, vol[row+x])
-					w.near = append(w.near, int32(near))
-					w.gain = append(w.gain, float32(bright+float64(gain.step*fx)))
-					w.head = append(w.head, t.head[near])
-					wt := float32(1)
-					if e.voxel != nil {
-						wt = e.voxel[near]
-					}
-					w.wt = append(w.wt, wt)
 				}
 			}
 		}
-		ends = append(ends, len(w.val))
+		w.ends = append(w.ends, w.sites.Len())
 	}
-	return ends
+	count := w.sites.Len()
+	w.val, w.wt = sized(w.val, count+kernel.Slack), sized(w.wt, count)
+	for _, r := range w.rows {
+		row := vol[n[0]*(r.y+n[1]*r.z):][:n[0]]
+		val := w.val[r.from:r.to]
+		for q, x := range w.sites.Index[r.from:r.to] {
+			val[q] = row[x]
+		}
+	}
+	if e.voxel == nil {
+		for q := range w.wt {
+			w.wt[q] = 1
+		}
+		return
+	}
+	for q, near := range w.sites.Near {
+		w.wt[q] = e.voxel[near]
+	}
 }
 
-// slot evaluates one excitation of volume n.
-func (e *pathEstimator) slot(w *slotWork, vol []float32, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+// predict evaluates the template at the pixels gathered, and, unless only values are
+// wanted, how it changes with the pose: prediction, residual and six derivatives.
+func (e *pathEstimator) predict(w *slotWork, n int, axis int, b *[16]float64, values bool) (rows [kernel.SlopeRows][]float32) {
 	t := e.t
-	ends := e.gather(w, vol, n, slices, pose)
-	t.s.gradients(&w.b)
-	count := len(w.val)
-	w.res, w.abs, w.pred = sized(w.res, count), sized(w.abs, count), sized(w.pred, count)
-	for a := range w.j {
-		w.j[a] = sized(w.j[a], count)
+	count := w.sites.Len()
+	stride := count + kernel.Slack
+	w.grad, w.out = sized(w.grad, 4*stride), sized(w.out, kernel.SlopeRows*stride)
+	var at [4][]float32
+	for k := range at {
+		at[k] = w.grad[k*stride:][:count]
+	}
+	if values {
+		t.s.valuesAt(at[0], &w.sites)
+	} else {
+		t.s.gradientsAt(&at, &w.sites)
 	}
 	toCentre := t.g.Affine
 	for a := range t.centre {
 		toCentre[4*a+3] -= t.centre[a]
 	}
-	// Where a pixel's point lies follows from its taps, to float32.
-	mx, my := t.s.m[0], t.s.m[1]
-	const first = splinePad - 2 // of the six taps, against the point's own cell
-	var mean, square, inside, left float64
-	for q := range count {
-		g := float64(w.gain[q])
-		pred := float64(g * float64(w.b.v[q]))
-		val := float64(w.val[q])
-		r := val - pred
-		w.pred[q], w.res[q] = float32(pred), float32(r)
-		gw := toWorld(&t.inv, [3]float64{float64(w.b.gx[q]), float64(w.b.gy[q]), float64(w.b.gz[q])})
-		base := int(w.b.base[q])
-		x, y, z := base%mx-first, base/mx%my-first, base/(mx*my)-first
-		m := cross(applyAffine(&toCentre, float64(x)+float64(w.b.tx[q]), float64(y)+float64(w.b.ty[q]), float64(z)+float64(w.b.tz[q])), gw)
-		for a := range 3 {
-			w.j[a][q], w.j[3+a][q] = float32(g*gw[a]), float32(g*m[a])
+	place := mul(toCentre, *b) // of the template, mm from the centre, by voxel of the volume
+	var f kernel.Frame
+	for a := range 3 {
+		for k := range 3 {
+			f.Turn[3*a+k] = float32(t.inv[4*k+a])
 		}
-		if w.head[q] {
+		f.Step[a] = float32(place[4*a])
+	}
+	slice, gain := -1, gainRows{}
+	for _, r := range w.rows {
+		if k := [3]int{int(w.sites.Index[r.from]), r.y, r.z}[axis]; k != slice {
+			slice, gain = k, newGainRows(e.g, e.est.Centre, &e.gains[n][k])
+		}
+		f.Gain, f.GainStep = float32(gain.row(r.y, r.z)), float32(gain.step)
+		start := applyAffine(&place, 0, float64(r.y), float64(r.z))
+		for a, v := range start {
+			f.At[a] = float32(v)
+		}
+		end := min(r.from+(r.to-r.from+7)&^7, count+kernel.Slack)
+		kernel.Slopes(w.out[r.from:], stride, w.grad[r.from:], stride, w.val[r.from:end], w.sites.Index[r.from:end], r.to-r.from, &f)
+	}
+	for k := range rows {
+		rows[k] = w.out[k*stride:][:count]
+	}
+	return rows
+}
+
+// slot evaluates one excitation of volume n; with out nil only its scales.
+func (e *pathEstimator) slot(w *slotWork, vol []float32, n, i int, slices []int, pose Pose, out *slotData) (explain [2]float64) {
+	t := e.t
+	b := mul(t.inv, mul(pose.Inverse().Matrix(), t.g.Affine))
+	e.gather(w, vol, slices, pose, &b)
+	rows := e.predict(w, n, e.schedule.Axis, &b, out == nil)
+	pred, res := rows[0], rows[1]
+	count := len(res)
+	var mean, square, inside, left float64
+	for q, near := range w.sites.Near {
+		if t.head[near] {
+			val, r := float64(w.val[q]), float64(res[q])
 			mean += val
 			square += float64(val * val)
 			left += float64(r * r)
 			inside++
 		}
 	}
-	kernel.Abs(w.abs, w.res)
+	w.abs = sized(w.abs, count)
+	kernel.Abs(w.abs, res)
+	// Medians are most often near those of the last time.
+	guess := e.scale[i]
+	e.scale[i] = 0
 	nz := e.g.N[e.schedule.Axis]
 	from := 0
-	for k, end := range ends {
-		e.sliceScale[n*nz+slices[k]] = 0
+	for k, end := range w.ends {
+		s := &e.sliceScale[n*nz+slices[k]]
+		was := *s
+		*s = 0
 		if end-from >= e.fewest() {
-			e.sliceScale[n*nz+slices[k]] = float64(madScale * float64(medianOf(w.abs[from:end])))
+			*s = w.scale(w.abs[from:end], was)
 		}
 		from = end
 	}
@@ -698,24 +823,35 @@ func (e *pathEstimator) slot(w *slotWork, vol []float32, n, i int, slices []int,
 	if count < e.fewest() {
 		return explain
 	}
-	scale := float64(madScale * float64(medianOf(w.abs)))
+	scale := 0.0
+	if len(slices) == 1 {
+		scale = e.sliceScale[n*nz+slices[0]]
+	} else {
+		scale = w.scale(w.abs, guess)
+	}
 	// Values that are exact (no noise at all) must not divide by zero.
 	scale = max(scale, float64(1e-5*level), 1e-30)
 	e.scale[i] = scale
-	kernel.Tukey(w.wt, w.res, float32(tukeyCut*scale))
-	const rows = 8
-	var sum [rows * (rows + 1) / 2]float64
-	kernel.Gram(sum[:], [][]float32{w.j[0], w.j[1], w.j[2], w.j[3], w.j[4], w.j[5], w.pred, w.res}, w.wt)
+	kernel.Tukey(w.wt, res, float32(tukeyCut*scale))
 	var h [21]float64
 	var g, jt [6]float64
-	at, to := 0, 0
-	for a := range 6 {
-		to += copy(h[to:], sum[at:at+6-a])
-		at += 6 - a
-		jt[a], g[a] = sum[at], -sum[at+1]
-		at += 2
+	var tt, tr float64
+	if out == nil {
+		var sum [3]float64
+		kernel.Gram(sum[:], [][]float32{pred, res}, w.wt)
+		tt, tr = sum[0], sum[1]
+	} else {
+		var sum [kernel.SlopeRows * (kernel.SlopeRows + 1) / 2]float64
+		kernel.Gram(sum[:], [][]float32{rows[2], rows[3], rows[4], rows[5], rows[6], rows[7], pred, res}, w.wt)
+		at, to := 0, 0
+		for a := range 6 {
+			to += copy(h[to:], sum[at:at+6-a])
+			at += 6 - a
+			jt[a], g[a] = sum[at], -sum[at+1]
+			at += 2
+		}
+		tt, tr = sum[at], sum[at+1]
 	}
-	tt, tr := sum[at], sum[at+1]
 	// The brightness of the excitation is unknown too: it is fitted along with the
 	// pose and eliminated (the Schur complement of its row). A scanner that breathes
 	// within a volume would otherwise pass for motion.
@@ -730,11 +866,14 @@ func (e *pathEstimator) slot(w *slotWork, vol []float32, n, i int, slices []int,
 		}
 		// What brightness explains is no misfit.
 		if c := tr / tt; math.Abs(c)*level > float64(0.05*scale) {
-			for q, p := range w.pred {
-				w.abs[q] = float32(math.Abs(float64(w.res[q]) - float64(c*float64(p))))
+			for q, p := range pred {
+				w.abs[q] = float32(math.Abs(float64(res[q]) - float64(c*float64(p))))
 			}
-			e.scale[i] = max(min(scale, float64(madScale*float64(medianOf(w.abs)))), float64(1e-5*level), 1e-30)
+			e.scale[i] = max(min(scale, w.scale(w.abs, scale)), float64(1e-5*level), 1e-30)
 		}
+	}
+	if out == nil {
+		return explain
 	}
 	// A slot that fits badly because its pose is still off must pull with full
 	// force, or the path stays where it is; one that fits so badly that it must be
@@ -815,7 +954,7 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 	any := false
 	for round := range relocations {
 		if round > 0 { // the first round goes by the last measurement
-			if err := e.measure(slots, false); err != nil {
+			if err := e.measure(slots, looking{}); err != nil {
 				return false, err
 			}
 		}
@@ -845,10 +984,9 @@ func (e *pathEstimator) relocate(slots []slotData) (bool, error) {
 					if j < 0 || j >= len(e.p) {
 						continue
 					}
-					var d slotData
 					// The neighbour's pose as it stands, with the offset of its shot: that of
 					// the slot's own has taken up part of the jerk.
-					e.slot(e.work[worker], vol, n, i, shot.Slices, e.poses[j], &d)
+					e.slot(e.work[worker], vol, n, i, shot.Slices, e.poses[j], nil)
 					if e.scale[i] > 0 && e.scale[i] < best {
 						best, to[i] = e.scale[i], j
 					}
@@ -915,7 +1053,7 @@ func (e *pathEstimator) usualNoise() float64 {
 }
 
 // expect fills the expected pose error of each volume from the posterior that
-// c.m holds the factor of: with covariance C of (t, r) at a slot, the mean square
+// c holds the factor of: with covariance C of (t, r) at a slot, the mean square
 // displacement over the head is tr Ct + tr(Cr (tr(S) I - S)), S the second
 // moments of the head about its centre.
 func (e *pathEstimator) expect(c *chain, slots []slotData, out []float64) {
@@ -942,20 +1080,19 @@ func (e *pathEstimator) expect(c *chain, slots []slotData, out []float64) {
 		return
 	}
 	trace := s[0][0] + s[1][1] + s[2][2]
-	z := c.m.inverseBand()
+	z := covariances(c.rungs)
 	for n := range e.nt {
 		sum := 0.0
 		for k := range e.shots {
-			base := poseUnknowns * (n*len(e.shots) + k)
+			cov := &z[n*len(e.shots)+k]
 			for a := range 3 {
-				sum += z[base+a][bandWidth]
+				sum += cov[a][a]
 				for b := range 3 {
-					hi, lo := base+3+max(a, b), base+3+min(a, b)
 					v := -s[a][b]
 					if a == b {
 						v += trace
 					}
-					sum += float64(z[hi][bandWidth+lo-hi]*v) / count
+					sum += float64(cov[3+a][3+b]*v) / count
 				}
 			}
 		}

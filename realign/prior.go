@@ -6,7 +6,7 @@ import (
 	"slices"
 
 	"evenkeel/internal/detmath"
-	"evenkeel/internal/parallel"
+	"evenkeel/internal/kernel"
 )
 
 // A path is a chain of slots, one for each excitation of the run in order of
@@ -52,6 +52,9 @@ const (
 	// weight has fallen do the strengths rise, and its weight falls further.
 	retunes   = 3
 	reweights = 4
+	// reweighted: weights that move no slot by more, mm, have settled. A hundredth of
+	// what a slot is uncertain by.
+	reweighted = 1e-4
 )
 
 // chain holds the prior of a run.
@@ -69,18 +72,18 @@ type chain struct {
 	w       []float64    // Student-t weights
 	lt      float64
 	lr      float64
-	m       band
-	delta   []float64
-	twin    *chain // scratch: the same chain at other strengths
+	links   []kernel.Link                 // the equations of a step, but for the strengths
+	inverse [][kernel.LadderLanes]float64 // scratch
+	rungs   []kernel.Rung                 // the factor at the last step
+	delta   []params                      // and its solution
 	ctx     context.Context
-	workers int
 	fresh   bool // strengths have never been tuned
 	afresh  bool // strengths are to be sought from the soft end too, at the next update
 }
 
 func newChain(times []float64, period int) *chain {
 	n := len(times)
-	c := &chain{period: period, offset: make([]params, period), bend: make([][3]float64, n), w: make([]float64, n), lt: startShift, lr: startTurn, m: make(band, poseUnknowns*n), delta: make([]float64, poseUnknowns*n), fresh: true, ctx: context.Background(), workers: 1}
+	c := &chain{period: period, offset: make([]params, period), bend: make([][3]float64, n), w: make([]float64, n), lt: startShift, lr: startTurn, links: make([]kernel.Link, n), rungs: make([]kernel.Rung, n), delta: make([]params, n), fresh: true, ctx: context.Background()}
 	// In units of the usual gap, that between the excitations of a volume: strengths
 	// then mean the same with a pause between volumes and without.
 	usual := 1.0
@@ -134,135 +137,155 @@ func (c *chain) reweight(p []params) {
 // into c.delta, and returns the log evidence up to a constant; ok is false where
 // the equations are not definite.
 func (c *chain) step(data []slotData, p []params) (evidence float64, ok bool) {
+	bent := c.link(data, p)
+	strengths := [2]float64{c.lt, c.lr}
+	log := newLogSum()
+	gained := 0.0
+	r1, r2 := &kernel.Rung{}, &kernel.Rung{}
+	for s := range c.links {
+		r := &c.rungs[s]
+		r.Eliminate(&c.links[s], &strengths, r1, r2)
+		product := 1.0
+		for a, y := range r.Y {
+			product = float64(product * r.D[a][a])
+			gained += float64(y * y)
+		}
+		log.add(product)
+		c.delta[s] = r.Y
+		r1, r2 = r, r1
+	}
+	if evidence, ok = c.evidence(strengths, gained, log.value(), bent); ok {
+		back(c.delta, c.rungs)
+	}
+	return evidence, ok
+}
+
+// evidences are those under other strengths, for the equations linked last; -Inf where
+// they have no solution.
+func (c *chain) evidences(strengths [kernel.LadderLanes][2]float64, bent [2]float64) (e [kernel.LadderLanes]float64) {
+	if c.inverse == nil {
+		c.inverse = make([][kernel.LadderLanes]float64, len(c.links))
+	}
+	gained := kernel.Ladder(c.inverse, c.links, &strengths)
+	for lane := range e {
+		log := newLogSum()
+		for s := range c.inverse {
+			log.add(c.inverse[s][lane])
+		}
+		var ok bool
+		if e[lane], ok = c.evidence(strengths[lane], gained[lane], log.value(), bent); !ok {
+			e[lane] = math.Inf(-1)
+		}
+	}
+	return e
+}
+
+// evidence puts together what the elimination of the equations of a step has left.
+//
+// With H and g the Hessian and gradient of the data, Q that of the prior, A = H + Q and
+// b = g - Q p, the log likelihood and log prior at the best change d = A^-1 b are
+// g'd - d'Hd/2 - (p+d)'Q(p+d)/2 = b'A^-1 b/2 - p'Qp/2, and b'A^-1 b is |L^-1 b|^2. The
+// volume of the posterior adds -log|L|.
+func (c *chain) evidence(strengths [2]float64, gained, logInverse float64, bent [2]float64) (e float64, ok bool) {
+	gained -= float64(strengths[0]*bent[0]) + float64(strengths[1]*bent[1])
+	e = gained/2 + logInverse
+	e += float64(float64(1.5*float64(len(c.links)-2)) * (detmath.Log(strengths[0]) + detmath.Log(strengths[1])))
+	return e, !math.IsNaN(e) && !math.IsInf(e, 0)
+}
+
+// link sets up the equations of a step, for any strengths, and returns the penalties of
+// the path as it is, over their strengths.
+func (c *chain) link(data []slotData, p []params) (bent [2]float64) {
 	n := len(p)
-	for i := range c.m {
-		c.m[i] = [bandWidth + 1]float64{}
-	}
-	rhs := c.delta
-	for s := range data {
-		at := 0
-		for a := range poseUnknowns {
-			rhs[poseUnknowns*s+a] = data[s].g[a]
-			for b := a; b < poseUnknowns; b++ {
-				c.m.add(poseUnknowns*s+b, poseUnknowns*s+a, data[s].h[at])
-				at++
-			}
-		}
+	for s := range c.links {
+		c.links[s] = kernel.Link{H: data[s].h, G: data[s].g}
 	}
 	for s := 1; s < n-1; s++ {
-		b := &c.bend[s]
-		for k := range poseUnknowns {
-			q := float64(c.w[s] * c.strength(k))
-			v := float64(q * c.curve(p, s, k))
-			for i := range 3 {
-				row := poseUnknowns*(s-1+i) + k
-				rhs[row] -= float64(b[i] * v)
-				qb := float64(q * b[i])
-				for j := 0; j <= i; j++ {
-					c.m.add(row, poseUnknowns*(s-1+j)+k, float64(qb*b[j]))
-				}
-			}
-		}
-	}
-	if !c.m.cholesky() {
-		return 0, false
-	}
-	c.m.solve(c.delta)
-	// Likelihood and prior at the new path, and the volume of the posterior.
-	for s := range data {
-		d := c.delta[poseUnknowns*s:][:poseUnknowns]
-		at := 0
-		for a := range poseUnknowns {
-			evidence += float64(data[s].g[a] * d[a])
-			for b := a; b < poseUnknowns; b++ {
-				v := float64(float64(data[s].h[at]*d[a]) * d[b])
-				if a == b {
-					v /= 2
-				}
-				evidence -= v
-				at++
-			}
-		}
-	}
-	for s := 1; s < n-1; s++ {
-		b := &c.bend[s]
+		w, b := c.w[s], &c.bend[s]
+		before, here, after := &c.links[s-1], &c.links[s], &c.links[s+1]
+		w0, w1, w2 := float64(w*b[0]), float64(w*b[1]), float64(w*b[2])
+		before.Q[0] += float64(w0 * b[0])
+		here.Q[0] += float64(w1 * b[1])
+		here.Q[1] += float64(w1 * b[0])
+		after.Q[0] += float64(w2 * b[2])
+		after.Q[1] += float64(w2 * b[1])
+		after.Q[2] += float64(w2 * b[0])
 		for k := range poseUnknowns {
 			v := c.curve(p, s, k)
-			for i := range 3 {
-				v += float64(b[i] * c.delta[poseUnknowns*(s-1+i)+k])
-			}
-			evidence -= float64(float64(float64(float64(c.w[s]*c.strength(k))*v)*v) / 2)
+			bent[k/3] += float64(float64(w*v) * v)
+			before.U[k] += float64(w0 * v)
+			here.U[k] += float64(w1 * v)
+			after.U[k] += float64(w2 * v)
 		}
 	}
-	evidence -= c.m.logDiagonal()
-	evidence += float64(float64(1.5*float64(n-2)) * (detmath.Log(c.lt) + detmath.Log(c.lr)))
-	return evidence, true
+	return bent
 }
 
 // tuneFromSoft seeks the strengths once more from the soft end and keeps what is more
 // probable: where a path is all but straight the evidence is flat, and a search
 // from there does not find its way to motion that a better template shows.
 func (c *chain) tuneFromSoft(data []slotData, p []params) {
-	stiff, ok := c.step(data, p)
+	bent := c.link(data, p)
 	lt, lr := c.lt, c.lr
-	best := [2]float64{lt, lr}
-	for _, start := range [][2]float64{{softShift, softTurn}, {lt, softTurn}, {softShift, lr}} {
+	starts := [kernel.LadderLanes][2]float64{{lt, lr}, {softShift, softTurn}, {lt, softTurn}, {softShift, lr}}
+	stiff := c.evidences(starts, bent)[0]
+	best, found := math.Inf(-1), starts[0]
+	for _, start := range starts[1:] {
+		// Roughly first: only the best of the three is worth more.
 		c.lt, c.lr = start[0], start[1]
-		c.tune(data, p)
-		if e, fine := c.step(data, p); fine && (!ok || e > stiff) {
-			stiff, ok, best = e, true, [2]float64{c.lt, c.lr}
+		if e := c.tune(bent, coarseFactors); e > best {
+			best, found = e, [2]float64{c.lt, c.lr}
 		}
 	}
-	c.lt, c.lr = best[0], best[1]
+	c.lt, c.lr = found[0], found[1]
+	if !(c.tune(bent, fineFactors) > stiff) {
+		c.lt, c.lr = lt, lr
+	}
 }
 
-// tune moves the strengths to the greatest evidence, by coordinate steps of
-// ever smaller factors, from where they are.
-func (c *chain) tune(data []slotData, p []params) {
-	best, ok := c.step(data, p)
-	if !ok {
-		c.lt, c.lr = softShift, softTurn
-		if best, ok = c.step(data, p); !ok {
-			return
+// Factors by which strengths are moved in turn while the evidence rises. It is all but
+// flat about its top: strengths that are off by the last factor cost a path nothing.
+var (
+	coarseFactors = []float64{10}
+	fineFactors   = []float64{3.2, 1.8}
+	allFactors    = []float64{10, 3.2, 1.8}
+)
+
+// tune moves the strengths to the greatest evidence for the equations linked last, by steps
+// of the factors given, from where they are, and returns it.
+func (c *chain) tune(bent [2]float64, factors []float64) (best float64) {
+	at := [2]float64{c.lt, c.lr}
+	first := c.evidences([kernel.LadderLanes][2]float64{at, {softShift, softTurn}, at, at}, bent)
+	if best = first[0]; math.IsInf(best, -1) {
+		if best = first[1]; math.IsInf(best, -1) {
+			return best
 		}
+		at = [2]float64{softShift, softTurn}
 	}
-	// Up and down are tried side by side.
-	if c.twin == nil {
-		c.twin = &chain{bend: c.bend, w: c.w, m: make(band, len(c.m)), delta: make([]float64, len(c.delta))}
-	}
-	side := [2]*chain{c, c.twin}
-	for _, factor := range []float64{10, 3.2, 1.8} {
+	for _, factor := range factors {
 		for moved := true; moved; {
+			// Up and down of either are tried side by side, and the best is taken.
 			moved = false
-			for _, up := range [][2]float64{{factor, 1}, {1, factor}} {
-				lt, lr := c.lt, c.lr
-				evidence := [2]float64{math.Inf(-1), math.Inf(-1)}
-				c.lt, c.lr = min(mostShift, float64(lt*up[0])), min(mostTurn, float64(lr*up[1]))
-				c.twin.lt, c.twin.lr = lt/up[0], lr/up[1]
-				capped := c.lt == lt && c.lr == lr
-				// A half cannot fail. Where ctx has ended nothing is better than what
-				// there is, and the caller notices.
-				_ = parallel.For(c.ctx, min(len(side), c.workers), len(side), func(_, i int) error {
-					if i == 0 && capped {
-						return nil
-					}
-					if e, ok := side[i].step(data, p); ok {
-						evidence[i] = e
-					}
-					return nil
-				})
-				switch {
-				case evidence[0] > best && evidence[0] >= evidence[1]:
-					best, moved = evidence[0], true
-				case evidence[1] > best:
-					best, moved = evidence[1], true
-					c.lt, c.lr = c.twin.lt, c.twin.lr
-				default:
-					c.lt, c.lr = lt, lr
+			tries := [kernel.LadderLanes][2]float64{
+				{min(mostShift, float64(at[0]*factor)), at[1]}, {at[0] / factor, at[1]},
+				{at[0], min(mostTurn, float64(at[1]*factor))}, {at[0], at[1] / factor},
+			}
+			for lane, e := range c.evidences(tries, bent) {
+				if e > best && tries[lane] != at {
+					best, moved = e, true
+					c.lt, c.lr = tries[lane][0], tries[lane][1]
 				}
+			}
+			if moved {
+				at = [2]float64{c.lt, c.lr}
+			}
+			if c.ctx.Err() != nil {
+				break // the caller notices
 			}
 		}
 	}
+	c.lt, c.lr = at[0], at[1]
+	return best
 }
 
 // update moves path and offsets by one step of the outer iteration. data is
@@ -273,16 +296,17 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 	local := make([]slotData, len(data))
 	shift := make([]params, c.period) // change of the offsets
 	ok := false
-	again := retunes
+	again, factors := retunes, allFactors
 	if !c.fresh && !c.afresh {
-		again = 1 // jerks have been found; strengths and weights only follow
+		// Jerks have been found; strengths and weights only follow.
+		again, factors = 1, fineFactors
 	}
 	for round := range again + 1 {
 		for s := range data {
 			local[s] = data[s].moved(&shift[s%c.period])
 		}
 		if !c.fresh || round > 0 {
-			c.tune(local, p)
+			c.tune(c.link(local, p), factors)
 		}
 		if c.afresh {
 			c.tuneFromSoft(local, p)
@@ -295,12 +319,19 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 				break
 			}
 			ok, evidence = true, e
+			changed := 0.0
 			for s := range p {
+				var to params
 				for k := range poseUnknowns {
-					next[s][k] = p[s][k] + c.delta[poseUnknowns*s+k]
+					to[k] = p[s][k] + c.delta[s][k]
 				}
+				changed = max(changed, apart(&to, &next[s]))
+				next[s] = to
 			}
 			c.reweight(next)
+			if changed < reweighted {
+				break
+			}
 		}
 		if round < again {
 			c.offsets(data, shift)
@@ -324,14 +355,19 @@ func (c *chain) update(data []slotData, p []params) (moved, evidence float64) {
 		return 0, math.Inf(-1)
 	}
 	for s := range p {
-		var t, r [3]float64
-		for k := range 3 {
-			t[k], r[k] = next[s][k]-p[s][k], next[s][3+k]-p[s][3+k]
-		}
-		moved = max(moved, norm(t)+float64(turnReach*norm(r)))
+		moved = max(moved, apart(&next[s], &p[s]))
 	}
 	copy(p, next)
 	return moved, evidence
+}
+
+// apart bounds how far two poses of a slot are apart at the edge of a head, mm.
+func apart(p, q *params) float64 {
+	var t, r [3]float64
+	for k := range 3 {
+		t[k], r[k] = p[k]-q[k], p[3+k]-q[3+k]
+	}
+	return norm(t) + float64(turnReach*norm(r))
 }
 
 // moved gives the same quadratic around a point d further on.
@@ -357,9 +393,7 @@ func (c *chain) offsets(data []slotData, shift []params) {
 		var h [poseUnknowns][poseUnknowns]float64
 		var g params
 		for s := i; s < len(data); s += c.period {
-			var d params
-			copy(d[:], c.delta[poseUnknowns*s:])
-			q := data[s].moved(&d)
+			q := data[s].moved(&c.delta[s])
 			at := 0
 			for a := range poseUnknowns {
 				g[a] += q.g[a]

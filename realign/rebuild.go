@@ -2,7 +2,9 @@ package realign
 
 import (
 	"math"
+	"slices"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -72,6 +74,77 @@ func (s *slotMap) through(k, x, y, z float64) [3]float64 {
 	return a
 }
 
+// A line is a piece of a row of the reference whose points lie, in the volume, on a
+// straight line: voxels x to x+n-1, of which the first is at start.
+type line struct {
+	x, n        int
+	start, step [3]float64
+}
+
+// straight: a row is cut until no point lies further from its line than this, in voxels:
+// a few micrometres, where poses differ from slice to slice by more than that.
+const straight = 1e-3
+
+// halfSlice: within half a slice a row crosses no more than one slice's plane, where
+// the map bends. The bend then shows in the middle by half of what it is at most; over more,
+// it may bend one way and back, and be straight in its middle by chance.
+const halfSlice = 0.5
+
+// lines cuts the row of voxels x to x+n-1 of (y, z) into lines, in order, and appends
+// them to those given. g is carried from row to row.
+func (s *slotMap) lines(to []line, x, n, y, z int, g *rowGuess) []line {
+	r := row{s, y, z}
+	first := r.find(x, float64([3]int{x, y, z}[s.axis])+g.moved)
+	g.moved = first[s.axis] - float64([3]int{x, y, z}[s.axis])
+	if n == 1 {
+		return append(to, line{x: x, n: 1, start: first})
+	}
+	steps := float64(n - 1)
+	last := r.find(x+n-1, first[s.axis]+float64(g.slope*steps))
+	g.slope = (last[s.axis] - first[s.axis]) / steps
+	to = r.cut(to, x, x+n-1, first, last)
+	to[len(to)-1].n++
+	return to
+}
+
+// rowGuess carries from row to row how far the slice coordinate of a row's first voxel
+// moved, and how it grows along the row.
+type rowGuess struct{ moved, slope float64 }
+
+// row is one of the reference.
+type row struct {
+	s    *slotMap
+	y, z int
+}
+
+// find returns where a voxel of the row lies, guess as for at.
+func (r *row) find(x int, guess float64) [3]float64 {
+	return r.s.at(float64(x), float64(r.y), float64(r.z), guess)
+}
+
+// cut makes lines of the voxels from a up to but not including b.
+func (r *row) cut(to []line, a, b int, va, vb [3]float64) []line {
+	l := line{x: a, n: b - a, start: va}
+	for k := range va {
+		l.step[k] = (vb[k] - va[k]) / float64(b-a)
+	}
+	if b-a == 1 {
+		return append(to, l)
+	}
+	axis, mid := r.s.axis, (a+b)/2
+	steps := float64(mid - a)
+	v := r.find(mid, va[axis]+float64(l.step[axis]*steps))
+	near := math.Abs(vb[axis]-va[axis]) <= halfSlice
+	for k := range v {
+		near = near && math.Abs(v[k]-(va[k]+float64(l.step[k]*steps))) <= straight/2
+	}
+	if near {
+		return append(to, l)
+	}
+	to = r.cut(to, a, mid, va, v)
+	return r.cut(to, mid, b, v, vb)
+}
+
 // Row makes a slotMap a [Map].
 func (s *slotMap) Row(j, k int, x, y, z []float64) {
 	var g guess
@@ -100,12 +173,8 @@ func SlotMap(g Grid, axis int, pose func(slice int) Pose) Map { return newSlotMa
 // them tell.
 func (e *pathEstimator) rebuild(projections int, draft bool) error {
 	use := e.est.used()
-	var at []int
-	for i, in := range e.region {
-		if in {
-			at = append(at, i)
-		}
-	}
+	rows := spansOf(e.region, e.g.N)
+	at := voxelsOf(rows, e.g.N)
 	if e.sliceScale != nil {
 		e.judgeSlices()
 	}
@@ -119,7 +188,7 @@ func (e *pathEstimator) rebuild(projections int, draft bool) error {
 		if round > 0 || draft {
 			from = spread(use, enoughVolumes)
 		}
-		mean, square, count, err := e.backMap(from, at, weak, round > 0)
+		mean, square, count, err := e.backMap(from, rows, len(at), weak, round > 0, draft && round == projections)
 		if err != nil {
 			return err
 		}
@@ -236,30 +305,89 @@ func (e *pathEstimator) usualScale(scale []float64, n int) []float64 {
 	return usual
 }
 
-// backMap averages, at the voxels listed and by edgeWeight, the volumes (or, with residual, what
-// the template fails to predict of them) mapped back along the path.
-func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (mean, square []float32, count []int32, err error) {
+// voxelsOf lists the voxels of spans.
+func voxelsOf(rows []span, n [3]int) (at []int) {
+	for _, r := range rows {
+		for x := range r.n {
+			at = append(at, r.x+x+n[0]*(r.y+n[1]*r.z))
+		}
+	}
+	return at
+}
+
+// An average sums volumes mapped back, at the voxels of a region.
+type average struct {
+	sum, square, full []float64
+	count             []int32
+}
+
+// part is what one volume has for an average: values and, by pieces of the list of
+// voxels, what they count.
+type part struct {
+	value, weight []float32
+	pieces        []piece
+}
+
+// piece is a part of the list of voxels; all of it counts in full, or as its weights
+// say: not at all where they are 0.
+type piece struct {
+	at, n int
+	full  bool
+}
+
+// add adds a volume, with squares or without.
+func (a *average) add(p *part, squares bool) {
+	for _, c := range p.pieces {
+		v := p.value[c.at:][:c.n]
+		sum, full, count := a.sum[c.at:][:c.n], a.full[c.at:][:c.n], a.count[c.at:][:c.n]
+		if !c.full {
+			weight, square := p.weight[c.at:][:c.n], a.square[c.at:][:c.n]
+			for q, w := range weight {
+				if w, v := float64(w), float64(v[q]); w > 0 {
+					sum[q] += float64(w * v)
+					square[q] += float64(float64(w*v) * v)
+					full[q] += w
+					count[q]++
+				}
+			}
+			continue
+		}
+		for q, v := range v {
+			sum[q] += float64(v)
+			full[q]++
+			count[q]++
+		}
+		if squares {
+			square := a.square[c.at:][:c.n]
+			for q, v := range v {
+				square[q] += float64(float64(v) * float64(v))
+			}
+		}
+	}
+}
+
+// backMap averages, at the voxels of the region and by edgeWeight, the volumes (or, with
+// residual, what the template fails to predict of them) mapped back along the path;
+// with squares their squares as well.
+func (e *pathEstimator) backMap(use []int, rows []span, voxels int, weak [][]bool, residual, squares bool) (mean, square []float32, count []int32, err error) {
 	degree := 5
 	if residual {
 		degree = 3
 	}
-	sum, sum2, full := make([]float64, len(at)), make([]float64, len(at)), make([]float64, len(at))
-	count = make([]int32, len(at))
+	a := average{make([]float64, voxels), make([]float64, voxels), make([]float64, voxels), make([]int32, voxels)}
 	type scratch struct {
-		s           *spline
-		vol         []float32
-		b           batch
-		to          []int32 // of each point of b: its place in at
-		val, weight []float32
+		s   *spline
+		vol []float32
+		b   batch
+		part
+		lines []line
 	}
 	work := make([]*scratch, e.workers)
-	n0, n1 := e.g.N[0], e.g.N[1]
-	axis := e.schedule.Axis
 	var turns parallel.Turns
 	err = e.each(isIn(use, e.nt), func(worker, n int, raw []float32) error {
 		defer e.done.piece()
 		if work[worker] == nil {
-			work[worker] = &scratch{s: newSpline(e.g.N, degree), vol: make([]float32, e.g.voxels()), val: make([]float32, len(at)), weight: make([]float32, len(at))}
+			work[worker] = &scratch{s: newSpline(e.g.N, degree), vol: make([]float32, e.g.voxels()), part: part{value: make([]float32, voxels), weight: make([]float32, voxels)}}
 		}
 		w := work[worker]
 		return turns.Do(rank(use, n), func() error {
@@ -269,105 +397,163 @@ func (e *pathEstimator) backMap(use, at []int, weak [][]bool, residual bool) (me
 				vol = p
 			}
 			w.s.load(vol)
-			m := newSlotMap(e.g, axis, func(k int) Pose { return e.poses[n*len(e.shots)+e.shotOf[k]] })
-			w.b.reset()
-			w.b.grow(len(at))
-			w.to = w.to[:0]
-			var g guess
-			for q, i := range at {
-				x := [3]float64{float64(i % n0), float64(i / n0 % n1), float64(i / (n0 * n1))}
-				v := m.at(x[0], x[1], x[2], g.next(x[axis]))
-				g.was(x[axis], v[axis])
-				counts, ok := 1.0, true
-				if !e.g.wellInside(&v) {
-					deep := e.g.depth(v)
-					counts, ok = edgeWeight(deep), deep >= -0.5
+			m := newSlotMap(e.g, e.schedule.Axis, func(k int) Pose { return e.poses[n*len(e.shots)+e.shotOf[k]] })
+			w.pieces = w.pieces[:0]
+			var g rowGuess
+			for _, r := range rows {
+				w.lines = m.lines(w.lines[:0], r.x, r.n, r.y, r.z, &g)
+				for i := range w.lines {
+					l := &w.lines[i]
+					at := r.at + l.x - r.x
+					w.s.line(w.value[at:][:l.n], l.start, l.step)
+					full := e.weighLine(w.weight[at:][:l.n], l, weak[n])
+					if k := len(w.pieces) - 1; k >= 0 && w.pieces[k].full == full {
+						w.pieces[k].n += l.n
+					} else {
+						w.pieces = append(w.pieces, piece{at, l.n, full})
+					}
 				}
-				if ok {
-					s := int(v[axis] + 1)
-					ok = !(s > 0 && weak[n][s-1] || s < len(weak[n]) && weak[n][s])
-				}
-				w.weight[q] = 0 // nothing known
-				if ok {
-					w.weight[q] = float32(counts)
-					w.s.add(&w.b, v[0], v[1], v[2])
-					w.to = append(w.to, int32(q))
-				}
-			}
-			w.s.values(&w.b)
-			for i, q := range w.to {
-				w.val[q] = w.b.v[i]
 			}
 			return nil
-		}, func() {
-			for q, weight := range w.weight {
-				if w, v := float64(weight), float64(w.val[q]); w > 0 {
-					sum[q] += float64(w * v)
-					sum2[q] += float64(float64(w*v) * v)
-					full[q] += w
-					count[q]++
-				}
-			}
-		})
+		}, func() { a.add(&w.part, squares) })
 	})
 	if err != nil {
 		return nil, nil, nil, err
 	}
-	mean, square = make([]float32, len(at)), make([]float32, len(at))
+	mean, square = make([]float32, voxels), make([]float32, voxels)
 	for q := range mean {
-		if n := full[q]; n > 0 {
-			mean[q], square[q] = float32(sum[q]/n), float32(sum2[q]/n)
+		if n := a.full[q]; n > 0 {
+			mean[q], square[q] = float32(a.sum[q]/n), float32(a.square[q]/n)
 		}
 	}
-	return mean, square, count, nil
+	return mean, square, a.count, nil
+}
+
+// weighLine fills weight with what the points of a line count, unless all of them count
+// in full: weak slices and those beside them do not, what lies outside the field does
+// not, and what lies near its edge counts less.
+func (e *pathEstimator) weighLine(weight []float32, l *line, weak []bool) (full bool) {
+	axis := e.schedule.Axis
+	point := func(i int) (v [3]float64) {
+		for k := range v {
+			v[k] = l.start[k] + float64(l.step[k]*float64(i))
+		}
+		return v
+	}
+	// What a line's ends are not, nothing between them is.
+	a, b := l.start, point(l.n-1)
+	if e.g.wellInside(&a) && e.g.wellInside(&b) {
+		lo, hi := int(min(a[axis], b[axis])), int(max(a[axis], b[axis]))+1
+		if !slices.Contains(weak[lo:hi+1], true) {
+			return true
+		}
+	}
+	for i := range weight {
+		v := point(i)
+		deep := e.g.depth(v)
+		weight[i] = 0
+		if deep < -0.5 {
+			continue
+		}
+		s := int(v[axis] + 1)
+		if !(s > 0 && weak[s-1] || s < len(weak) && weak[s]) {
+			weight[i] = float32(edgeWeight(deep))
+		}
+	}
+	return false
 }
 
 // level fills dst with volume n at the brightness of the reference, less the
-// prediction with residual (0 where nothing is predicted). b is scratch.
+// prediction with residual (0 where nothing is predicted: outside the region). b is scratch.
 func (e *pathEstimator) level(dst, vol []float32, n int, residual bool, b *batch) {
-	axis := e.schedule.Axis
-	rows := e.gainRows(n)
-	i := 0
-	for z := range e.g.N[2] {
-		for y := range e.g.N[1] {
-			for x := range e.g.N[0] {
-				r := &rows[[3]int{x, y, z}[axis]]
-				dst[i] = vol[i] / float32(max(r.row(y, z)+float64(r.step*float64(x)), faintest))
-				i++
-			}
+	axis, nx := e.schedule.Axis, e.g.N[0]
+	gain := e.gainRows(n)
+	var maps [][16]float64
+	var boxes [][2][3]int // what can be predicted of each slice
+	if residual {
+		region := template{box: boxOf(e.region, e.g.N)}
+		maps, boxes = make([][16]float64, e.g.N[axis]), make([][2][3]int, e.g.N[axis])
+		for k := range maps {
+			pose := e.poses[n*len(e.shots)+e.shotOf[k]]
+			maps[k] = mul(e.t.inv, mul(pose.Inverse().Matrix(), e.g.Affine))
+			forth := mul(e.t.inv, mul(pose.Matrix(), e.g.Affine))
+			boxes[k][0], boxes[k][1] = region.reached(&forth, [3]int{}, [3]int{nx - 1, e.g.N[1] - 1, e.g.N[2] - 1})
 		}
 	}
-	if !residual {
-		return
-	}
-	maps := make([][16]float64, e.g.N[axis])
-	for k := range maps {
-		maps[k] = mul(e.t.inv, mul(e.poses[n*len(e.shots)+e.shotOf[k]].Inverse().Matrix(), e.g.Affine))
-	}
-	b.reset()
-	b.grow(len(dst))
-	i = 0
 	for z := range e.g.N[2] {
 		for y := range e.g.N[1] {
-			for x := range e.g.N[0] {
-				at := applyAffine(&maps[[3]int{x, y, z}[axis]], float64(x), float64(y), float64(z))
-				if e.t.inField(at) && e.region[e.t.nearest(at)] {
-					e.t.s.add(b, at[0], at[1], at[2])
-				} else {
-					dst[i] = nothing
+			from := nx * (y + e.g.N[1]*z)
+			row, raw := dst[from:][:nx], vol[from:][:nx]
+			if axis == 0 {
+				// Neighbours in a row stand at poses of their own.
+				for x, v := range raw {
+					row[x] = v / float32(max(gain[x].row(y, z)+float64(gain[x].step*float64(x)), faintest))
 				}
-				i++
+				if residual {
+					e.unpredictedPoints(row, maps, y, z, b)
+				}
+				continue
 			}
+			k := [3]int{0, y, z}[axis]
+			if !residual {
+				kernel.OverRamp(row, raw, float32(gain[k].row(y, z)), float32(gain[k].step), faintest)
+				continue
+			}
+			clear(row)
+			if box := &boxes[k]; y < box[0][1] || y > box[1][1] || z < box[0][2] || z > box[1][2] {
+				continue
+			}
+			x, end := e.predicted(&maps[k], y, z, &boxes[k])
+			if x >= end {
+				continue
+			}
+			kernel.OverRamp(row[x:end], raw[x:end], float32(gain[k].row(y, z)+float64(gain[k].step*float64(x))), float32(gain[k].step), faintest)
+			b.v = sized(b.v, end-x)
+			e.t.s.line(b.v, applyAffine(&maps[k], float64(x), float64(y), float64(z)), [3]float64{maps[k][0], maps[k][4], maps[k][8]})
+			kernel.AddRamp(row[x:end], b.v, -1, 0)
+		}
+	}
+}
+
+// predicted gives the voxels of a row, x to end-1, from the first to the last that m takes
+// into the region, which lies in a box.
+func (e *pathEstimator) predicted(m *[16]float64, y, z int, box *[2][3]int) (x, end int) {
+	o := applyAffine(m, 0, float64(y), float64(z))
+	in := func(x int) bool {
+		fx := float64(x)
+		at := [3]float64{o[0] + float64(m[0]*fx), o[1] + float64(m[4]*fx), o[2] + float64(m[8]*fx)}
+		return e.t.inField(at) && e.region[e.t.nearest(at)]
+	}
+	x, end = box[0][0], box[1][0]+1
+	for x < end && !in(x) {
+		x++
+	}
+	for end > x && !in(end-1) {
+		end--
+	}
+	return x, end
+}
+
+// unpredictedPoints takes the prediction out of a row whose voxels stand at poses of
+// their own.
+func (e *pathEstimator) unpredictedPoints(row []float32, maps [][16]float64, y, z int, b *batch) {
+	b.reset()
+	for x := range row {
+		at := applyAffine(&maps[x], float64(x), float64(y), float64(z))
+		if e.t.inField(at) && e.region[e.t.nearest(at)] {
+			e.t.s.add(b, at[0], at[1], at[2])
+		} else {
+			row[x] = nothing
 		}
 	}
 	e.t.s.values(b)
 	next := 0
-	for i, v := range dst {
+	for x, v := range row {
 		if v == nothing {
-			dst[i] = 0
+			row[x] = 0
 			continue
 		}
-		dst[i] = v - b.v[next]
+		row[x] = v - b.v[next]
 		next++
 	}
 }
@@ -393,4 +579,33 @@ func (t *template) inField(x [3]float64) bool {
 		}
 	}
 	return true
+}
+
+// line interpolates along a line of points: start, start + step and so on.
+func (s *spline) line(dst []float32, start, step [3]float64) {
+	if s.degree == 5 {
+		kernel.AffineRow5(dst, s.c, s.n, splinePad, start, step)
+	} else {
+		kernel.AffineRow3(dst, s.c, s.n, splinePad, start, step)
+	}
+}
+
+// valuesAt interpolates at many points.
+func (s *spline) valuesAt(v []float32, p *kernel.Sites) {
+	mx, area := s.m[0], s.m[0]*s.m[1]
+	if s.degree == 5 {
+		kernel.Value5(v, s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	} else {
+		kernel.Value3(v, s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	}
+}
+
+// gradientsAt does so with derivatives: value, and those by x, y and z.
+func (s *spline) gradientsAt(to *[4][]float32, p *kernel.Sites) {
+	mx, area := s.m[0], s.m[0]*s.m[1]
+	if s.degree == 5 {
+		kernel.Gradient5(to[0], to[1], to[2], to[3], s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	} else {
+		kernel.Gradient3(to[0], to[1], to[2], to[3], s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	}
 }

@@ -99,36 +99,6 @@ func edgeMargins(n [3]int, want float64) (m [3]float64) {
 	return m
 }
 
-// see adds the point at a voxel coordinate to b if it keeps clear of the edges and
-// its nearest voxel is usable; near is that voxel.
-func (t *template) see(b *batch, x *[3]float64) (near int, ok bool) {
-	n := &t.g.N
-	if !(x[0] >= t.margin[0] && x[0] <= float64(n[0]-1)-t.margin[0] &&
-		x[1] >= t.margin[1] && x[1] <= float64(n[1]-1)-t.margin[1] &&
-		x[2] >= t.margin[2] && x[2] <= float64(n[2]-1)-t.margin[2]) {
-		return 0, false
-	}
-	i, j, k := int(x[0]), int(x[1]), int(x[2])
-	tx, ty, tz := x[0]-float64(i), x[1]-float64(j), x[2]-float64(k)
-	near = i + n[0]*(j+n[1]*k)
-	if tx >= 0.5 {
-		near++
-	}
-	if ty >= 0.5 {
-		near += n[0]
-	}
-	if tz >= 0.5 {
-		near += n[0] * n[1]
-	}
-	if !t.usable[near] {
-		return 0, false
-	}
-	taps := splinePad - t.s.degree/2
-	b.base = append(b.base, int32(i+taps+t.s.m[0]*(j+taps+t.s.m[1]*(k+taps))))
-	b.tx, b.ty, b.tz = append(b.tx, float32(tx)), append(b.ty, float32(ty)), append(b.tz, float32(tz))
-	return near, true
-}
-
 // nearest is the flat index of the voxel nearest to a coordinate in the field.
 func (t *template) nearest(x [3]float64) int {
 	i, j, k := int(x[0]+0.5), int(x[1]+0.5), int(x[2]+0.5)

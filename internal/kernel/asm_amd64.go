@@ -221,3 +221,23 @@ func inverse4(z *float64, end *float64, q int, twiddle *float64)
 //
 //go:noescape
 func mirrored(z *float64, place *int, mirror *int, table *float64, mirrored *float64, n int)
+
+// addRamp is the assembly of addRampPlain.
+//
+//go:noescape
+func addRamp(dst *float32, src *float32, n int, start float32, step float32, table *float32, masks *int32)
+
+// overRamp is the assembly of overRampPlain.
+//
+//go:noescape
+func overRamp(dst *float32, src *float32, n int, start float32, step float32, least float32, table *float32, masks *int32)
+
+// slopes is the assembly of slopesPlain; strides are in bytes, n is a multiple of 8.
+//
+//go:noescape
+func slopes(out *float32, outStride int, in *float32, inStride int, value *float32, index *int32, n int, frame *float32)
+
+// ladder is the assembly of ladderPlain; rungs is zero.
+//
+//go:noescape
+func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64)

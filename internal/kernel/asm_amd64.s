@@ -8055,3 +8055,2180 @@ pairs:
 pairs_end:
 	VZEROUPPER
 	RET
+
+// func addRamp(dst *float32, src *float32, n int, start float32, step float32, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·addRamp(SB), $0-48
+	MOVQ         src+8(FP), AX
+	VBROADCASTSS start+24(FP), Y0
+	VBROADCASTSS step+28(FP), Y1
+	MOVQ         table+32(FP), CX
+	VMOVDQU      320(CX), Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSRLD       $0x1f, Y3, Y3
+	VPSLLD       $0x03, Y3, Y3
+	MOVQ         dst+0(FP), CX
+	MOVQ         dst+0(FP), DX
+	MOVQ         n+16(FP), BX
+	MOVQ         masks+40(FP), SI
+	XORQ         DI, DI
+	MOVQ         BX, R8
+	ANDQ         $-8, R8
+
+eight:
+	CMPQ      DI, R8
+	JGE       eight_end
+	VCVTDQ2PS Y2, Y4
+	VPADDD    Y3, Y2, Y2
+	VMULPS    Y1, Y4, Y4
+	VADDPS    Y0, Y4, Y4
+	VMOVUPS   (AX)(DI*4), Y5
+	VMULPS    Y5, Y4, Y4
+	VMOVUPS   (CX)(DI*4), Y5
+	VADDPS    Y4, Y5, Y5
+	VMOVUPS   Y5, (DX)(DI*4)
+	ADDQ      $0x00000008, DI
+	JMP       eight
+
+eight_end:
+	SUBQ       R8, BX
+	JZ         done
+	NEGQ       BX
+	VMOVUPS    32(SI)(BX*4), Y4
+	VCVTDQ2PS  Y2, Y5
+	VPADDD     Y3, Y2, Y2
+	VMULPS     Y1, Y5, Y5
+	VADDPS     Y0, Y5, Y5
+	VMASKMOVPS (AX)(DI*4), Y4, Y0
+	VMULPS     Y0, Y5, Y5
+	VMASKMOVPS (CX)(DI*4), Y4, Y0
+	VADDPS     Y5, Y0, Y0
+	VMASKMOVPS Y0, Y4, (DX)(DI*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func overRamp(dst *float32, src *float32, n int, start float32, step float32, least float32, table *float32, masks *int32)
+// Requires: AVX, AVX2
+TEXT ·overRamp(SB), $0-56
+	MOVQ         src+8(FP), AX
+	VBROADCASTSS start+24(FP), Y0
+	VBROADCASTSS step+28(FP), Y1
+	MOVQ         table+40(FP), CX
+	VMOVDQU      320(CX), Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSRLD       $0x1f, Y3, Y3
+	VPSLLD       $0x03, Y3, Y3
+	VBROADCASTSS least+32(FP), Y4
+	MOVQ         dst+0(FP), CX
+	MOVQ         n+16(FP), DX
+	MOVQ         masks+48(FP), BX
+	XORQ         SI, SI
+	MOVQ         DX, DI
+	ANDQ         $-8, DI
+
+eight:
+	CMPQ      SI, DI
+	JGE       eight_end
+	VCVTDQ2PS Y2, Y5
+	VPADDD    Y3, Y2, Y2
+	VMULPS    Y1, Y5, Y5
+	VADDPS    Y0, Y5, Y5
+	VMAXPS    Y4, Y5, Y5
+	VMOVUPS   (AX)(SI*4), Y6
+	VDIVPS    Y5, Y6, Y6
+	VMOVUPS   Y6, (CX)(SI*4)
+	ADDQ      $0x00000008, SI
+	JMP       eight
+
+eight_end:
+	SUBQ       DI, DX
+	JZ         done
+	NEGQ       DX
+	VMOVUPS    32(BX)(DX*4), Y5
+	VCVTDQ2PS  Y2, Y6
+	VPADDD     Y3, Y2, Y2
+	VMULPS     Y1, Y6, Y6
+	VADDPS     Y0, Y6, Y6
+	VMAXPS     Y4, Y6, Y6
+	VMASKMOVPS (AX)(SI*4), Y5, Y0
+	VDIVPS     Y6, Y0, Y0
+	VMASKMOVPS Y0, Y5, (CX)(SI*4)
+
+done:
+	VZEROUPPER
+	RET
+
+// func slopes(out *float32, outStride int, in *float32, inStride int, value *float32, index *int32, n int, frame *float32)
+// Requires: AVX
+TEXT ·slopes(SB), $0-64
+	MOVQ out+0(FP), AX
+	MOVQ outStride+8(FP), CX
+	MOVQ in+16(FP), DX
+	MOVQ inStride+24(FP), BX
+	MOVQ value+32(FP), SI
+	MOVQ index+40(FP), DI
+	MOVQ n+48(FP), R8
+	MOVQ frame+56(FP), R9
+	LEAQ (CX)(CX*2), R10
+	LEAQ (BX)(BX*2), R11
+	LEAQ (AX)(CX*4), R12
+
+eight:
+	VCVTDQ2PS    (DI), Y0
+	VBROADCASTSS 64(R9), Y1
+	VMULPS       Y0, Y1, Y1
+	VBROADCASTSS 60(R9), Y2
+	VADDPS       Y2, Y1, Y1
+	VMULPS       (DX), Y1, Y2
+	VMOVUPS      Y2, (AX)
+	VMOVUPS      (SI), Y3
+	VSUBPS       Y2, Y3, Y3
+	VMOVUPS      Y3, (AX)(CX*1)
+	VMOVUPS      (DX)(BX*1), Y2
+	VMOVUPS      (DX)(BX*2), Y3
+	VMOVUPS      (DX)(R11*1), Y4
+	VBROADCASTSS (R9), Y5
+	VMULPS       Y2, Y5, Y5
+	VBROADCASTSS 4(R9), Y6
+	VMULPS       Y3, Y6, Y6
+	VADDPS       Y6, Y5, Y5
+	VBROADCASTSS 8(R9), Y6
+	VMULPS       Y4, Y6, Y6
+	VADDPS       Y6, Y5, Y5
+	VMULPS       Y1, Y5, Y5
+	VBROADCASTSS 12(R9), Y6
+	VMULPS       Y2, Y6, Y6
+	VBROADCASTSS 16(R9), Y7
+	VMULPS       Y3, Y7, Y7
+	VADDPS       Y7, Y6, Y6
+	VBROADCASTSS 20(R9), Y7
+	VMULPS       Y4, Y7, Y7
+	VADDPS       Y7, Y6, Y6
+	VMULPS       Y1, Y6, Y6
+	VBROADCASTSS 24(R9), Y7
+	VMULPS       Y2, Y7, Y7
+	VBROADCASTSS 28(R9), Y2
+	VMULPS       Y3, Y2, Y2
+	VADDPS       Y2, Y7, Y7
+	VBROADCASTSS 32(R9), Y2
+	VMULPS       Y4, Y2, Y2
+	VADDPS       Y2, Y7, Y7
+	VMULPS       Y1, Y7, Y7
+	VMOVUPS      Y5, (AX)(CX*2)
+	VMOVUPS      Y6, (AX)(R10*1)
+	VMOVUPS      Y7, (R12)
+	VBROADCASTSS 48(R9), Y1
+	VMULPS       Y0, Y1, Y1
+	VBROADCASTSS 36(R9), Y2
+	VADDPS       Y2, Y1, Y1
+	VBROADCASTSS 52(R9), Y2
+	VMULPS       Y0, Y2, Y2
+	VBROADCASTSS 40(R9), Y3
+	VADDPS       Y3, Y2, Y2
+	VBROADCASTSS 56(R9), Y3
+	VMULPS       Y0, Y3, Y3
+	VBROADCASTSS 44(R9), Y0
+	VADDPS       Y0, Y3, Y3
+	VMULPS       Y2, Y7, Y0
+	VMULPS       Y3, Y6, Y4
+	VSUBPS       Y4, Y0, Y0
+	VMOVUPS      Y0, (R12)(CX*1)
+	VMULPS       Y3, Y5, Y0
+	VMULPS       Y1, Y7, Y3
+	VSUBPS       Y3, Y0, Y0
+	VMOVUPS      Y0, (R12)(CX*2)
+	VMULPS       Y1, Y6, Y0
+	VMULPS       Y2, Y5, Y1
+	VSUBPS       Y1, Y0, Y0
+	VMOVUPS      Y0, (R12)(R10*1)
+	ADDQ         $0x20, AX
+	ADDQ         $0x20, R12
+	ADDQ         $0x20, DX
+	ADDQ         $0x20, SI
+	ADDQ         $0x20, DI
+	SUBQ         $0x08, R8
+	JNZ          eight
+	VZEROUPPER
+	RET
+
+// func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64)
+// Requires: AVX, AVX2
+TEXT ·ladder(SB), $0-48
+	MOVQ     inverse+0(FP), AX
+	MOVQ     links+16(FP), CX
+	MOVQ     n+24(FP), DX
+	MOVQ     strengths+32(FP), BX
+	MOVQ     rungs+40(FP), SI
+	LEAQ     2688(SI), DI
+	LEAQ     5376(SI), R8
+	VXORPD   Y0, Y0, Y0
+	VPCMPEQD Y1, Y1, Y1
+	VPSLLQ   $0x36, Y1, Y1
+	VPSRLQ   $0x02, Y1, Y1
+
+link:
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMULPD       (R8), Y2, Y2
+	VMOVUPD      Y2, 672(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       32(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(R8), Y2, Y2
+	VMOVUPD      Y2, 704(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       64(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       224(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(R8), Y2, Y2
+	VMOVUPD      Y2, 736(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       96(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       256(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       384(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(R8), Y2, Y2
+	VMOVUPD      Y2, 768(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       128(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       288(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       416(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       512(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(R8), Y2, Y2
+	VMOVUPD      Y2, 800(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       160(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       320(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       448(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       544(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       608(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 832(SI)
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMULPD       192(R8), Y2, Y2
+	VMOVUPD      Y2, 864(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       224(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(R8), Y2, Y2
+	VMOVUPD      Y2, 896(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       256(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       384(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(R8), Y2, Y2
+	VMOVUPD      Y2, 928(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       288(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       416(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       512(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(R8), Y2, Y2
+	VMOVUPD      Y2, 960(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       320(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       448(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       544(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       608(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 992(SI)
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMULPD       352(R8), Y2, Y2
+	VMOVUPD      Y2, 1024(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       384(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(R8), Y2, Y2
+	VMOVUPD      Y2, 1056(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       416(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       512(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(R8), Y2, Y2
+	VMOVUPD      Y2, 1088(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       448(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       544(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       608(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 1120(SI)
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMULPD       480(R8), Y2, Y2
+	VMOVUPD      Y2, 1152(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       512(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(R8), Y2, Y2
+	VMOVUPD      Y2, 1184(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       544(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       608(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 1216(SI)
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMULPD       576(R8), Y2, Y2
+	VMOVUPD      Y2, 1248(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       608(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 1280(SI)
+	VBROADCASTSD 280(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMULPD       640(R8), Y2, Y2
+	VMOVUPD      Y2, 1312(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       1344(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       1376(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       1408(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       1440(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       1472(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 1344(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       1536(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       1568(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       1600(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       1632(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       1664(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 1376(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       1728(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       1760(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       1792(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       1824(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       1856(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 1408(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       1920(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       1952(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       1984(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       2016(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       2048(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1408(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 1440(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       2112(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       2144(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       2176(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       2208(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       2240(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1408(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1440(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 1472(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       2304(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       2336(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       2368(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       2400(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       2432(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1408(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1440(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1472(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 1504(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       1376(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       1408(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       1440(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       1472(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 1536(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       1568(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       1600(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       1632(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       1664(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 1568(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       1760(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       1792(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       1824(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       1856(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 1600(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       1952(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       1984(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       2016(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       2048(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 1632(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       2144(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       2176(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       2208(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       2240(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1632(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 1664(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       2336(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       2368(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       2400(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       2432(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1632(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1664(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 1696(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       1408(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       1440(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       1472(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 1728(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       1600(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       1632(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       1664(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 1760(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       (BX), Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       1792(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       1824(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       1856(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 1792(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       1984(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       2016(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       2048(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 1824(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       2176(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       2208(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       2240(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 1856(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       2368(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       2400(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       2432(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1856(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 1888(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       1440(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       1472(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 1920(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       1632(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       1664(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 1952(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       1824(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       1856(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 1984(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       2016(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       2048(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 2016(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       2208(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       2240(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 2048(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       2400(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       2432(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 2080(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1472(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 2112(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1664(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 2144(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1856(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 2176(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       2048(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 2208(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       2240(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 2240(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       2432(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 2272(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1504(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (DI), Y2, Y2
+	VMOVUPD      Y2, 2304(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1696(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       32(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(DI), Y2, Y2
+	VMOVUPD      Y2, 2336(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1888(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       64(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       224(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(DI), Y2, Y2
+	VMOVUPD      Y2, 2368(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       2080(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       96(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       256(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       384(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(DI), Y2, Y2
+	VMOVUPD      Y2, 2400(SI)
+	VXORPD       Y2, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       2272(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       128(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       288(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       416(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       512(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(DI), Y2, Y2
+	VMOVUPD      Y2, 2432(SI)
+	VBROADCASTSD 272(CX), Y2
+	VMULPD       32(BX), Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       2464(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       160(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       320(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       448(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       544(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       608(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(DI), Y2, Y2
+	VMOVUPD      Y2, 2464(SI)
+	VBROADCASTSD (CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       672(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       704(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       736(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       768(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       800(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1408(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1440(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1472(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1504(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, (SI)
+	VBROADCASTSD 8(CX), Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       704(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       736(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       768(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       800(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1632(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1664(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1696(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 32(SI)
+	VBROADCASTSD 16(CX), Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       736(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       768(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       800(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1856(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1888(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 64(SI)
+	VBROADCASTSD 24(CX), Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       768(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       800(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2080(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 96(SI)
+	VBROADCASTSD 32(CX), Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       800(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 128(SI)
+	VBROADCASTSD 40(CX), Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       832(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       1344(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       1376(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       1408(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       1440(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       1472(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       1504(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 160(SI)
+	VBROADCASTSD 48(CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       864(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       896(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       928(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       960(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       992(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       1536(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       1568(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       1600(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1632(SI), Y3
+	VMULPD       1632(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1664(SI), Y3
+	VMULPD       1664(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1696(SI), Y3
+	VMULPD       1696(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      32(SI), Y3
+	VMULPD       32(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, 192(SI)
+	VBROADCASTSD 56(CX), Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       896(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       928(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       960(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       992(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       1536(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       1568(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       1600(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       1632(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1856(SI), Y3
+	VMULPD       1664(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1888(SI), Y3
+	VMULPD       1696(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      64(SI), Y3
+	VMULPD       32(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      Y2, 224(SI)
+	VBROADCASTSD 64(CX), Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       928(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       960(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       992(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       1536(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       1568(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       1600(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       1632(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       1664(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2080(SI), Y3
+	VMULPD       1696(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      96(SI), Y3
+	VMULPD       32(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      Y2, 256(SI)
+	VBROADCASTSD 72(CX), Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       960(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       992(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       1536(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       1568(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       1600(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       1632(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       1664(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       1696(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      128(SI), Y3
+	VMULPD       32(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      Y2, 288(SI)
+	VBROADCASTSD 80(CX), Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       992(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       1536(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       1568(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       1600(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       1632(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       1664(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       1696(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       32(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      Y2, 320(SI)
+	VBROADCASTSD 88(CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       1024(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       1056(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       1088(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       1120(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       1728(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       1760(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       1792(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       1824(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1856(SI), Y3
+	VMULPD       1856(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1888(SI), Y3
+	VMULPD       1888(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      64(SI), Y3
+	VMULPD       64(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      224(SI), Y3
+	VMULPD       224(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, 352(SI)
+	VBROADCASTSD 96(CX), Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       1056(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       1088(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       1120(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       1728(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       1760(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       1792(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       1824(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       1856(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2080(SI), Y3
+	VMULPD       1888(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      96(SI), Y3
+	VMULPD       64(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      256(SI), Y3
+	VMULPD       224(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(SI), Y2, Y2
+	VMOVUPD      Y2, 384(SI)
+	VBROADCASTSD 104(CX), Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1088(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1120(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       1728(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       1760(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       1792(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       1824(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       1856(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       1888(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      128(SI), Y3
+	VMULPD       64(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      288(SI), Y3
+	VMULPD       224(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(SI), Y2, Y2
+	VMOVUPD      Y2, 416(SI)
+	VBROADCASTSD 112(CX), Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1120(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       1728(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       1760(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       1792(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       1824(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       1856(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       1888(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       64(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      320(SI), Y3
+	VMULPD       224(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(SI), Y2, Y2
+	VMOVUPD      Y2, 448(SI)
+	VBROADCASTSD 120(CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       1152(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       1184(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       1216(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       1920(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       1952(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       1984(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       2016(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       2048(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2080(SI), Y3
+	VMULPD       2080(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      96(SI), Y3
+	VMULPD       96(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      256(SI), Y3
+	VMULPD       256(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      384(SI), Y3
+	VMULPD       384(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, 480(SI)
+	VBROADCASTSD 128(CX), Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1184(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1216(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       1920(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       1952(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       1984(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       2016(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       2048(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       2080(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      128(SI), Y3
+	VMULPD       96(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      288(SI), Y3
+	VMULPD       256(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      416(SI), Y3
+	VMULPD       384(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(SI), Y2, Y2
+	VMOVUPD      Y2, 512(SI)
+	VBROADCASTSD 136(CX), Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1216(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       1920(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       1952(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       1984(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       2016(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       2048(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       2080(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       96(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      320(SI), Y3
+	VMULPD       256(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      448(SI), Y3
+	VMULPD       384(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(SI), Y2, Y2
+	VMOVUPD      Y2, 544(SI)
+	VBROADCASTSD 144(CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       1248(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       1280(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       2112(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       2144(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       2176(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       2208(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       2240(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       2272(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      128(SI), Y3
+	VMULPD       128(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      288(SI), Y3
+	VMULPD       288(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      416(SI), Y3
+	VMULPD       416(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      512(SI), Y3
+	VMULPD       512(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, 576(SI)
+	VBROADCASTSD 152(CX), Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1280(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       2112(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       2144(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       2176(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       2208(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       2240(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       2272(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       128(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      320(SI), Y3
+	VMULPD       288(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      448(SI), Y3
+	VMULPD       416(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      544(SI), Y3
+	VMULPD       512(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(SI), Y2, Y2
+	VMOVUPD      Y2, 608(SI)
+	VBROADCASTSD 160(CX), Y2
+	VBROADCASTSD 264(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VADDPD       Y3, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       1312(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       2304(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       2336(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       2368(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       2400(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       2432(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       2464(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       160(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      320(SI), Y3
+	VMULPD       320(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      448(SI), Y3
+	VMULPD       448(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      544(SI), Y3
+	VMULPD       544(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      608(SI), Y3
+	VMULPD       608(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VSQRTPD      Y2, Y2
+	VDIVPD       Y2, Y1, Y2
+	VMOVUPD      Y2, 640(SI)
+	VBROADCASTSD 168(CX), Y2
+	VBROADCASTSD 216(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      672(SI), Y3
+	VMULPD       2496(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      704(SI), Y3
+	VMULPD       2528(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      736(SI), Y3
+	VMULPD       2560(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      768(SI), Y3
+	VMULPD       2592(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      800(SI), Y3
+	VMULPD       2624(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      832(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1344(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1376(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1408(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1440(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1472(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1504(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       (SI), Y2, Y2
+	VMOVUPD      Y2, 2496(SI)
+	VBROADCASTSD 176(CX), Y2
+	VBROADCASTSD 224(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      864(SI), Y3
+	VMULPD       2528(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      896(SI), Y3
+	VMULPD       2560(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      928(SI), Y3
+	VMULPD       2592(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      960(SI), Y3
+	VMULPD       2624(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      992(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1536(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1568(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1600(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1632(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1664(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1696(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      32(SI), Y3
+	VMULPD       2496(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      Y2, 2528(SI)
+	VBROADCASTSD 184(CX), Y2
+	VBROADCASTSD 232(CX), Y3
+	VMULPD       (BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1024(SI), Y3
+	VMULPD       2560(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1056(SI), Y3
+	VMULPD       2592(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1088(SI), Y3
+	VMULPD       2624(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1120(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1728(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1760(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1792(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1824(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1856(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1888(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      64(SI), Y3
+	VMULPD       2496(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      224(SI), Y3
+	VMULPD       2528(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       352(SI), Y2, Y2
+	VMOVUPD      Y2, 2560(SI)
+	VBROADCASTSD 192(CX), Y2
+	VBROADCASTSD 240(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1152(SI), Y3
+	VMULPD       2592(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1184(SI), Y3
+	VMULPD       2624(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1216(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1920(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1952(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1984(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2016(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2048(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2080(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      96(SI), Y3
+	VMULPD       2496(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      256(SI), Y3
+	VMULPD       2528(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      384(SI), Y3
+	VMULPD       2560(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       480(SI), Y2, Y2
+	VMOVUPD      Y2, 2592(SI)
+	VBROADCASTSD 200(CX), Y2
+	VBROADCASTSD 248(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1248(SI), Y3
+	VMULPD       2624(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1280(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2112(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2144(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2176(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2208(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2240(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2272(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      128(SI), Y3
+	VMULPD       2496(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      288(SI), Y3
+	VMULPD       2528(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      416(SI), Y3
+	VMULPD       2560(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      512(SI), Y3
+	VMULPD       2592(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       576(SI), Y2, Y2
+	VMOVUPD      Y2, 2624(SI)
+	VBROADCASTSD 208(CX), Y2
+	VBROADCASTSD 256(CX), Y3
+	VMULPD       32(BX), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      1312(SI), Y3
+	VMULPD       2656(R8), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2304(SI), Y3
+	VMULPD       2496(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2336(SI), Y3
+	VMULPD       2528(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2368(SI), Y3
+	VMULPD       2560(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2400(SI), Y3
+	VMULPD       2592(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2432(SI), Y3
+	VMULPD       2624(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      2464(SI), Y3
+	VMULPD       2656(DI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      160(SI), Y3
+	VMULPD       2496(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      320(SI), Y3
+	VMULPD       2528(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      448(SI), Y3
+	VMULPD       2560(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      544(SI), Y3
+	VMULPD       2592(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMOVUPD      608(SI), Y3
+	VMULPD       2624(SI), Y3, Y3
+	VSUBPD       Y3, Y2, Y2
+	VMULPD       640(SI), Y2, Y2
+	VMOVUPD      Y2, 2656(SI)
+	VMOVUPD      (SI), Y2
+	VMOVUPD      2496(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       192(SI), Y2, Y2
+	VMOVUPD      2528(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       352(SI), Y2, Y2
+	VMOVUPD      2560(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       480(SI), Y2, Y2
+	VMOVUPD      2592(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       576(SI), Y2, Y2
+	VMOVUPD      2624(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMULPD       640(SI), Y2, Y2
+	VMOVUPD      2656(SI), Y3
+	VMULPD       Y3, Y3, Y3
+	VADDPD       Y3, Y0, Y0
+	VMOVUPD      Y2, (AX)
+	ADDQ         $0x20, AX
+	ADDQ         $0x00000120, CX
+	MOVQ         R8, R9
+	MOVQ         DI, R8
+	MOVQ         SI, DI
+	MOVQ         R9, SI
+	DECQ         DX
+	JNZ          link
+	MOVQ         gained+8(FP), AX
+	VMOVUPD      Y0, (AX)
+	VZEROUPPER
+	RET

@@ -177,3 +177,19 @@ func inverse4(z *float64, end *float64, q int, twiddle *float64) {
 func mirrored(z *float64, place *int, mirror *int, table *float64, mirrored *float64, n int) {
 	panic("kernel: no assembly for this processor")
 }
+
+func addRamp(dst *float32, src *float32, n int, start float32, step float32, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func overRamp(dst *float32, src *float32, n int, start float32, step float32, least float32, table *float32, masks *int32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func slopes(out *float32, outStride int, in *float32, inStride int, value *float32, index *int32, n int, frame *float32) {
+	panic("kernel: no assembly for this processor")
+}
+
+func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64) {
+	panic("kernel: no assembly for this processor")
+}

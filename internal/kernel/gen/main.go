@@ -55,6 +55,9 @@ func generate() (map[string][]byte, error) {
 	interpolate(true)
 	lanesFunctions()
 	transform()
+	ramps()
+	slopes()
+	ladder()
 
 	f, err := g.Result()
 	if err != nil {
