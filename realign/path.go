@@ -43,8 +43,9 @@ type PathEstimate struct {
 	Evidence float64 // of the path, at the last step: log, up to a constant
 	LastStep float64 // the last change of a slot's pose, at most, mm at 80 mm
 	Settled  bool    // LastStep is small beside what a slot is uncertain by; if not, Expected is too small
-	// Residuals of pixels that took no part in finding the path, over Sigma: their scale,
-	// rms over slots, with one pose a volume and along the path.
+	// Residuals of pixels that took no part in finding the path, over Sigma (and what
+	// interpolation leaves at the least): their scale, rms over the slots of enough volumes,
+	// with one pose a volume and along the path.
 	VolumeResidual float64
 	PathResidual   float64
 	Explained      float64 // share of the variance inside the head that the template explains
