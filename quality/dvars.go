@@ -8,10 +8,6 @@ import (
 	"evenkeel/internal/parallel"
 )
 
-// sumBlock is how many terms are added before the partial sum is put aside:
-// it keeps rounding small and is part of the definition of the result's bits.
-const sumBlock = 4096
-
 // DVARS returns, for each volume t, the root mean square over the voxels of
 // mask of x_t - x_(t-1), in percent of the mean of all values of mask and
 // volumes (Smyser et al. 2010, Cerebral Cortex 20(12):2852-2862; Power et al.
@@ -26,70 +22,99 @@ func DVARS(ctx context.Context, data []float32, nv, nt int, mask, use []bool, wo
 	if use != nil && len(use) != nt {
 		panic(fmt.Sprintf("quality: DVARS: %d marks for %d volumes", len(use), nt))
 	}
-	voxels := inside("DVARS", mask, nv)
-	level := make([]float64, nt)  // sum of the values
-	change := make([]float64, nt) // sum of squared differences
+	c := NewChange(nv, nt, mask)
 	err := parallel.For(ctx, workers, nt, func(_, t int) error {
-		now := data[t*nv : (t+1)*nv]
-		before := now
+		var before []float32
 		if t > 0 {
 			before = data[(t-1)*nv : t*nv]
 		}
-		for rest := voxels; len(rest) > 0; {
-			n := min(sumBlock, len(rest))
-			var l, c float64
-			for _, v := range rest[:n] {
-				x := float64(now[v])
-				d := x - float64(before[v])
-				l += x
-				c += float64(d * d)
-			}
-			level[t] += l
-			change[t] += c
-			rest = rest[n:]
-		}
+		c.Volume(t, before, data[t*nv:(t+1)*nv])
 		return nil
 	})
 	if err != nil {
 		return nil, err
 	}
+	return c.DVARS(use), nil
+}
+
+// A Change is [DVARS] of a series that comes volume by volume.
+type Change struct {
+	nv     int
+	runs   []run
+	voxels int
+	level  []float64 // by volume: sum of the values
+	change []float64 // by volume: sum of squared differences
+}
+
+// NewChange prepares for nt volumes of nv voxels; mask is as for [DVARS] and not kept.
+func NewChange(nv, nt int, mask []bool) *Change {
+	checkMask("DVARS", mask, nv)
+	c := &Change{nv: nv, level: make([]float64, nt), change: make([]float64, nt)}
+	c.runs, c.voxels = runsOf(mask, 0, nv)
+	return c
+}
+
+// Volume takes volume t, of nv voxels, and the one before it, which is not looked at for t = 0.
+// Every volume must be given once, in any order and from any goroutine; nothing is
+// kept of them.
+func (c *Change) Volume(t int, before, now []float32) {
+	if t == 0 {
+		before = now
+	}
+	if len(now) != c.nv || len(before) != c.nv {
+		panic(fmt.Sprintf("quality: DVARS: volumes of %d and %d voxels, not %d", len(before), len(now), c.nv))
+	}
+	var level, change float64
+	for _, r := range c.runs {
+		l, d := changeOf(before[r.from:r.from+r.n], now[r.from:r.from+r.n])
+		level += l
+		change += d
+	}
+	c.level[t], c.change[t] = level, change
+}
+
+// changeOf sums values and squared differences in four strands, so that an addition
+// need not wait for the one before it.
+func changeOf(before, now []float32) (level, change float64) {
+	before = before[:len(now)]
+	var l0, l1, l2, l3, c0, c1, c2, c3 float64
+	for len(now) >= 4 && len(before) >= 4 {
+		x0, x1, x2, x3 := float64(now[0]), float64(now[1]), float64(now[2]), float64(now[3])
+		d0, d1, d2, d3 := x0-float64(before[0]), x1-float64(before[1]), x2-float64(before[2]), x3-float64(before[3])
+		l0, l1, l2, l3 = l0+x0, l1+x1, l2+x2, l3+x3
+		c0 += float64(d0 * d0)
+		c1 += float64(d1 * d1)
+		c2 += float64(d2 * d2)
+		c3 += float64(d3 * d3)
+		now, before = now[4:], before[4:]
+	}
+	before = before[:len(now)]
+	for i, v := range now {
+		x := float64(v)
+		d := x - float64(before[i])
+		l0 += x
+		c0 += float64(d * d)
+	}
+	return (l0 + l1) + (l2 + l3), (c0 + c1) + (c2 + c3)
+}
+
+// DVARS returns the measure once every volume was taken; use is as for the function [DVARS].
+func (c *Change) DVARS(use []bool) []float64 {
 	var total, used float64
-	for t, l := range level {
+	for t, l := range c.level {
 		if use == nil || use[t] {
 			total += l
 			used++
 		}
 	}
-	n := float64(len(voxels))
+	n := float64(c.voxels)
 	mean := total / (n * used)
-	dvars := make([]float64, nt)
+	dvars := make([]float64, len(c.level))
 	for t := range dvars {
 		dvars[t] = math.NaN()
 		if t > 0 && mean > 0 {
-			dvars[t] = 100 * math.Sqrt(change[t]/n) / mean
+			dvars[t] = 100 * math.Sqrt(c.change[t]/n) / mean
 		}
 	}
-	return dvars, nil
-}
-
-// checkSeries panics unless data holds nt volumes of nv voxels.
-func checkSeries(who string, data []float32, nv, nt int) {
-	if nv < 0 || nt < 0 || len(data) != nv*nt {
-		panic(fmt.Sprintf("quality: %s: %d values for %d volumes of %d voxels", who, len(data), nt, nv))
-	}
-}
-
-// inside returns the indices of the voxels of mask in increasing order; every
-// voxel if mask is nil.
-func inside(who string, mask []bool, nv int) []int {
-	if mask != nil && len(mask) != nv {
-		panic(fmt.Sprintf("quality: %s: mask of %d voxels for a volume of %d", who, len(mask), nv))
-	}
-	voxels := make([]int, 0, nv)
-	for v := range nv {
-		if mask == nil || mask[v] {
-			voxels = append(voxels, v)
-		}
-	}
-	return voxels
+	return dvars
 }

@@ -53,85 +53,152 @@ const spikeFloor = 1.0 / (1 << 23)
 // data holds nt volumes of nx*ny*nz voxels, x fastest; a nil mask takes every
 // voxel. At most workers goroutines are used. The only error is that of ctx.
 func SliceSpikes(ctx context.Context, data []float32, nx, ny, nz, nt, axis int, mask []bool, workers int) ([][]float64, error) {
-	if axis < 0 || axis > 2 {
-		panic(fmt.Sprintf("quality: SliceSpikes: no axis %d", axis))
-	}
+	s := NewSpikes(nx, ny, nz, nt, axis, mask)
 	nv := nx * ny * nz
 	checkSeries("SliceSpikes", data, nv, nt)
-	n := [3]int{nx, ny, nz}
-	stride := [3]int{1, nx, nx * ny}
-	ns := n[axis]
-	voxels := make([][]int, ns)
-	for _, v := range inside("SliceSpikes", mask, nv) {
-		s := v / stride[axis] % ns
-		voxels[s] = append(voxels[s], v)
-	}
-
-	score := make([][]float64, nt)
-	for t := range score {
-		score[t] = make([]float64, ns)
-		for s := range score[t] {
-			score[t][s] = math.NaN()
-		}
-	}
-	if nt < MinSpikeVolumes {
-		return score, ctx.Err()
-	}
-	dev := make([]float64, nt*ns)  // d, then by slice: dev[s*nt+t]
-	size := make([]float64, nt*ns) // mean magnitude, likewise
 	err := parallel.For(ctx, workers, nt, func(_, t int) error {
-		volume := func(t int) []float32 { return data[t*nv : (t+1)*nv] }
-		now, near := volume(t), [4][]float32{}
-		first := min(max(t-2, 0), nt-5)
-		for k, u := 0, first; u < first+5; u++ {
-			if u != t {
-				near[k] = volume(u)
-				k++
-			}
-		}
-		for s, list := range voxels {
-			if len(list) < MinSpikeVoxels {
-				continue
-			}
-			var d, l float64
-			for _, v := range list {
-				a, b, c, e := near[0][v], near[1][v], near[2][v], near[3][v]
-				// The middle two of four, unordered: the larger of the smaller
-				// ones and the smaller of the larger ones of two pairs.
-				low, high := max(min(a, b), min(c, e)), min(max(a, b), max(c, e))
-				x := float64(now[v])
-				d += math.Abs(x - float64(0.5*(float64(low)+float64(high))))
-				l += math.Abs(x)
-			}
-			dev[s*nt+t] = d / float64(len(list))
-			size[s*nt+t] = l / float64(len(list))
-		}
+		s.Volume(t, func(u int) []float32 { return data[u*nv : (u+1)*nv] })
 		return nil
 	})
 	if err != nil {
 		return nil, err
 	}
-	away := make([]float64, nt)
-	for s, list := range voxels {
-		if len(list) < MinSpikeVoxels {
+	return s.Scores(), nil
+}
+
+// Spikes is [SliceSpikes] of a series that comes volume by volume.
+type Spikes struct {
+	nv, nt, ns int
+	runs       [][]run   // by slice
+	voxels     []int     // by slice
+	dev        []float64 // d of step 1: dev[t*ns+s]
+	size       []float64 // mean magnitude, likewise
+}
+
+// NewSpikes prepares for nt volumes of nx*ny*nz voxels; axis and mask are as for [SliceSpikes],
+// and mask is not kept.
+func NewSpikes(nx, ny, nz, nt, axis int, mask []bool) *Spikes {
+	if axis < 0 || axis > 2 {
+		panic(fmt.Sprintf("quality: SliceSpikes: no axis %d", axis))
+	}
+	nv := nx * ny * nz
+	checkMask("SliceSpikes", mask, nv)
+	inner := [3]int{1, nx, nx * ny}[axis]
+	ns := [3]int{nx, ny, nz}[axis]
+	s := &Spikes{nv: nv, nt: nt, ns: ns, runs: make([][]run, ns), voxels: make([]int, ns), dev: make([]float64, nt*ns), size: make([]float64, nt*ns)}
+	for v := 0; v < nv; v += inner {
+		k := v / inner % ns
+		runs, n := runsOf(mask, v, v+inner)
+		s.runs[k] = append(s.runs[k], runs...)
+		s.voxels[k] += n
+	}
+	for k, n := range s.voxels {
+		if n < MinSpikeVoxels {
+			s.runs[k] = nil
+		}
+	}
+	return s
+}
+
+// Span returns the first and the last of the volumes that [Spikes.Volume] looks at for
+// volume t; both grow with t.
+func (s *Spikes) Span(t int) (first, last int) {
+	if s.nt < MinSpikeVolumes {
+		return t, t
+	}
+	first = min(max(t-2, 0), s.nt-MinSpikeVolumes)
+	return first, first + MinSpikeVolumes - 1
+}
+
+// Volume measures volume t; at returns the volumes of [Spikes.Span], t among them. Every volume must be
+// measured once, in any order and from any goroutine; nothing is kept of them.
+func (s *Spikes) Volume(t int, at func(t int) []float32) {
+	if s.nt < MinSpikeVolumes {
+		return
+	}
+	var near [4][]float32
+	first, last := s.Span(t)
+	for k, u := 0, first; u <= last; u++ {
+		if u != t {
+			near[k] = at(u)[:s.nv]
+			k++
+		}
+	}
+	now := at(t)[:s.nv]
+	for k, runs := range s.runs {
+		var d, l float64
+		for _, r := range runs {
+			to := r.from + r.n
+			rd, rl := apart(now[r.from:to], near[0][r.from:to], near[1][r.from:to], near[2][r.from:to], near[3][r.from:to])
+			d += rd
+			l += rl
+		}
+		s.dev[t*s.ns+k] = d / float64(s.voxels[k])
+		s.size[t*s.ns+k] = l / float64(s.voxels[k])
+	}
+}
+
+// apart sums the distances of x from the medians of the four others, and the
+// magnitudes of x.
+func apart(x, a, b, c, e []float32) (dist, size float64) {
+	a, b, c, e = a[:len(x)], b[:len(x)], c[:len(x)], e[:len(x)]
+	for i, v := range x {
+		// The middle two of four, unordered: the larger of the smaller
+		// ones and the smaller of the larger ones of two pairs. Whole numbers are
+		// compared without a branch.
+		p, q, r, s := rank(a[i]), rank(b[i]), rank(c[i]), rank(e[i])
+		low, high := max(min(p, q), min(r, s)), min(max(p, q), max(r, s))
+		w := float64(v)
+		dist += math.Abs(w - float64(0.5*(float64(unrank(low))+float64(unrank(high)))))
+		size += math.Abs(w)
+	}
+	return dist, size
+}
+
+// rank maps numbers to whole numbers in the same order (IEEE 754 keeps sign and
+// magnitude); unrank is its inverse.
+func rank(x float32) int32 {
+	b := int32(math.Float32bits(x))
+	return b ^ int32(uint32(b>>31)>>1)
+}
+
+func unrank(b int32) float32 { return math.Float32frombits(uint32(b ^ int32(uint32(b>>31)>>1))) }
+
+// Scores returns score[t][s] as [SliceSpikes] does, once every volume was measured.
+func (s *Spikes) Scores() [][]float64 {
+	score := make([][]float64, s.nt)
+	for t := range score {
+		score[t] = make([]float64, s.ns)
+		for k := range score[t] {
+			score[t][k] = math.NaN()
+		}
+	}
+	if s.nt < MinSpikeVolumes {
+		return score
+	}
+	d, away := make([]float64, s.nt), make([]float64, s.nt)
+	for k, n := range s.voxels {
+		if n < MinSpikeVoxels {
 			continue
 		}
-		d := dev[s*nt : (s+1)*nt]
-		mid := median(d)
 		var level float64
 		for t := range d {
-			away[t] = math.Abs(d[t] - mid)
-			level += size[s*nt+t]
+			d[t] = s.dev[t*s.ns+k]
+			level += s.size[t*s.ns+k]
 		}
-		scale := max(madScale*median(away), spikeFloor*(level/float64(nt)))
+		mid := median(d)
 		for t := range d {
-			score[t][s] = 0
+			away[t] = math.Abs(d[t] - mid)
+		}
+		scale := max(madScale*median(away), spikeFloor*(level/float64(s.nt)))
+		for t := range d {
+			score[t][k] = 0
 			if d[t] != mid {
-				score[t][s] = (d[t] - mid) / scale
+				score[t][k] = (d[t] - mid) / scale
 			}
 		}
 	}
-	return score, nil
+	return score
 }
 
 // median returns the middle value, or half the sum of the middle two; v is not
