@@ -34,8 +34,9 @@ type Reader struct {
 	s    *stream
 	conv converter
 	buf  []byte
-	t    int   // next volume
-	err  error // what ended the reading
+	wide []float32 // room for StoredVolume.take
+	t    int       // next volume
+	err  error     // what ended the reading
 }
 
 // Open opens an image. Every byte read from its file or files goes to tap too,
@@ -158,7 +159,7 @@ func (r *Reader) next(dst []float32, v *StoredVolume) error {
 			}
 		}
 		if v != nil {
-			if i, x := v.take(done, b); i >= 0 {
+			if i, x := v.take(done, b, &r.wide); i >= 0 {
 				return r.notFinite(done+i, x)
 			}
 		}

@@ -18,7 +18,6 @@ type StoredVolume struct {
 	b8     []byte    // Uint8, Int8
 	b16    []int16   // Int16; Uint16 as the same bits
 	f32    []float32 // all others, scaled
-	wide   []float32 // where 8 or 16 bits can become something not finite: to look
 	index  int
 	origin *Stream // nil if it belongs to the caller
 	out    bool    // handed out by origin
@@ -110,10 +109,11 @@ func (c *converter) widen8(dst []float32, b []byte) {
 	}
 }
 
-// take stores the voxels in b from voxel number at on; b may be changed. It
+// take stores the voxels in b from voxel number at on; b may be changed. wide is room to
+// look at values in, where 8 or 16 bits can become something not finite. It
 // returns the index, from there, of the first value that is not finite and the
 // value, or -1.
-func (v *StoredVolume) take(at int, b []byte) (int, float32) {
+func (v *StoredVolume) take(at int, b []byte, wide *[]float32) (int, float32) {
 	n := len(b) / v.conv.dt.Bytes()
 	switch {
 	case v.f32 != nil:
@@ -143,12 +143,13 @@ func (v *StoredVolume) take(at int, b []byte) (int, float32) {
 	if !v.conv.mustCheck {
 		return -1, 0
 	}
-	if len(v.wide) < n {
-		v.wide = make([]float32, n)
+	if len(*wide) < n {
+		*wide = make([]float32, n)
 	}
-	v.Widen(v.wide[:n], at)
-	if i := firstNotFinite(v.wide[:n]); i >= 0 {
-		return i, v.wide[i]
+	w := (*wide)[:n]
+	v.Widen(w, at)
+	if i := firstNotFinite(w); i >= 0 {
+		return i, w[i]
 	}
 	return -1, 0
 }
@@ -186,7 +187,6 @@ func ReadStored(path string, tap io.Writer, skip int) (h *Header, s *StoredSerie
 		if err := r.ReadStored(v); err != nil {
 			return nil, nil, err
 		}
-		v.wide = nil
 		s.vols = append(s.vols, v)
 	}
 	if err := r.SkipVolume(); err != io.EOF {

@@ -17,6 +17,7 @@ import (
 type Stream struct {
 	h      *Header
 	nt     int
+	part   bool               // volumes that are there are left
 	vols   chan *StoredVolume // closed at the end
 	quit   chan struct{}
 	ended  chan struct{} // the goroutine has gone
@@ -36,11 +37,29 @@ type Stream struct {
 // of the stream's own: it is left alone from when Next has returned an error
 // (io.EOF among them), or Close has returned. The caller must Close the stream.
 func OpenStream(path string, tap io.Writer, skip, ahead int) (*Stream, error) {
+	return openStreamOf(path, tap, skip, -1, ahead)
+}
+
+// OpenPart is [OpenStream] for the first count volumes after those left out. The rest of
+// the file is neither read nor checked, unless there is no other volume.
+func OpenPart(path string, tap io.Writer, skip, count, ahead int) (*Stream, error) {
+	if count < 0 {
+		panic("nifti: a negative number of volumes")
+	}
+	return openStreamOf(path, tap, skip, count, ahead)
+}
+
+// openStreamOf opens the first count volumes, all if count is below zero.
+func openStreamOf(path string, tap io.Writer, skip, count, ahead int) (*Stream, error) {
 	r, nt, err := openBehind(path, tap, skip)
 	if err != nil {
 		return nil, err
 	}
-	s := &Stream{h: r.h, nt: nt, r: r, quit: make(chan struct{}), ended: make(chan struct{}),
+	part := count >= 0 && count < nt
+	if part {
+		nt = count
+	}
+	s := &Stream{h: r.h, nt: nt, part: part, r: r, quit: make(chan struct{}), ended: make(chan struct{}),
 		// One is in the hands of the goroutine while the channel is full.
 		vols: make(chan *StoredVolume, max(ahead, 1)-1)}
 	go s.run()
@@ -120,6 +139,10 @@ func (s *Stream) run() {
 			s.err = errStreamClosed
 			return
 		}
+	}
+	if s.part {
+		s.err = io.EOF
+		return
 	}
 	s.err = s.r.SkipVolume() // the rest of the file
 }

@@ -27,7 +27,7 @@ func (p *Plan) instants() []float64 {
 
 // estimatePath follows the volume poses with a pose for every excitation, where that is
 // asked for, on the series s they came from.
-func (w *worker) estimatePath(ctx context.Context, p *Plan, g realign.Grid, s *loaded, po *posed) (err error) {
+func (w *worker) estimatePath(ctx context.Context, p *Plan, g realign.Grid, s realign.Series, po *posed) (err error) {
 	schedule := p.Schedule
 	schedule.TR = p.Timing.TR
 	switch {
@@ -40,7 +40,7 @@ func (w *worker) estimatePath(ctx context.Context, p *Plan, g realign.Grid, s *l
 	default:
 		est := *po.est
 		est.Progress = w.within(p, "estimate", volumesShare, 1)
-		po.path, err = realign.EstimatePath(ctx, g, realign.Floats(s.data, s.nt), schedule, &est, w.workers)
+		po.path, err = realign.EstimatePath(ctx, g, s, schedule, &est, w.workers)
 	}
 	return err
 }

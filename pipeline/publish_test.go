@@ -17,6 +17,7 @@ import (
 
 	"evenkeel/dataset"
 	"evenkeel/provenance"
+	"evenkeel/realign"
 	"evenkeel/slicetime"
 )
 
@@ -215,8 +216,8 @@ func TestArgumentErrorIsABug(t *testing.T) {
 }
 
 func TestMeanVolume(t *testing.T) {
-	got := meanVolume([]float32{1, 2, 3, 4, 5, 9}, 2, 3)
-	if got[0] != 3 || got[1] != 5 {
-		t.Error(got)
+	got, err := meanVolume(t.Context(), realign.Floats([]float32{1, 2, 3, 4, 5, 9}, 3))
+	if err != nil || got[0] != 3 || got[1] != 5 {
+		t.Error(got, err)
 	}
 }

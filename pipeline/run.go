@@ -11,7 +11,6 @@ import (
 	"math"
 	"os"
 	"path/filepath"
-	"runtime"
 	"runtime/debug"
 	"slices"
 	"time"
@@ -24,8 +23,16 @@ import (
 	"evenkeel/slicetime"
 )
 
-// Stages of a run, in the order of the work. Observers count them.
-var Stages = []string{"read", "estimate", "measure-raw", "time", "space", "joint", "measure-steady", "write"}
+// Stages of a run, in the order of the work. Observers count them. The seconds of a
+// stage are those that pass while it lasts, all that is done beside it included:
+//
+//   - estimate: reading the raw series, as often as is needed, and finding the reference and the poses
+//   - read: reading the series once more into memory, as float32
+//   - measure-raw, time, space, joint, measure-steady: each over the series in memory
+//   - steady: in place of all those, where the run is streamed: reading, measuring, moving in time and
+//     space and writing the series in one pass
+//   - write: writing what is not written yet
+var Stages = []string{"estimate", "read", "measure-raw", "time", "space", "joint", "measure-steady", "steady", "write"}
 
 // A unit is worked on as a whole: its echoes share one pose.
 type unit struct {
@@ -36,49 +43,10 @@ type unit struct {
 type worker struct {
 	out     string
 	folders *folders
-	workers int // goroutines inside a run
+	workers int  // goroutines inside a run
+	whole   bool // never stream: for tests
 	stage   func(p *Plan, stage string)
 	share   func(p *Plan, stage string, share float64) // nil: nobody listens
-}
-
-// loaded is a series in memory with the digest of the bytes it was decoded from.
-type loaded struct {
-	data   []float32
-	nt     int
-	digest *provenance.Digester
-}
-
-// load reads a series; errors are faults (*Refused), IOError, or that of ctx.
-func load(ctx context.Context, p *Plan, rel string, skip int) (*loaded, error) {
-	d := &provenance.Digester{}
-	_, s, err := nifti.ReadSeries(p.Dataset.Path(rel), tap{ctx, d}, skip)
-	if ctx.Err() != nil {
-		return nil, ctx.Err()
-	}
-	// A file that changed under us explains whatever else is wrong with it.
-	if faults := p.changed(); len(faults) > 0 {
-		return nil, &Refused{faults}
-	}
-	if f, isFault := imageFault(rel, err); isFault {
-		return nil, &Refused{[]fault.Fault{f}}
-	}
-	if err != nil {
-		return nil, &IOError{Path: rel, Step: "reading", Err: err}
-	}
-	return &loaded{s.Data, s.NT, d}, nil
-}
-
-// A tap digests what is read, and ends the reading when ctx ends.
-type tap struct {
-	ctx context.Context
-	d   *provenance.Digester
-}
-
-func (t tap) Write(b []byte) (int, error) {
-	if err := t.ctx.Err(); err != nil {
-		return 0, err
-	}
-	return t.d.Write(b)
 }
 
 // posed is what the pose series gave: shared by the echoes, not changed by them.
@@ -113,9 +81,10 @@ func (w *worker) run(ctx context.Context, u unit) []Outcome {
 	return out
 }
 
-// makeRoom gives back the memory of a series that nothing refers to any more,
-// before the next is read: the plan allows for one.
-func makeRoom() { runtime.GC() }
+// makeRoom gives back to the system the memory of a series, or of an estimate, that nothing refers to any
+// more, before what comes next takes its own: the plan allows for the larger of both. What the
+// collector alone would do is to keep it, in pieces that a longer array cannot use.
+func makeRoom() { debug.FreeOSMemory() }
 
 func (w *worker) recovered(ctx context.Context, p *Plan, shared **posed) (o Outcome) {
 	defer func() {
@@ -123,8 +92,13 @@ func (w *worker) recovered(ctx context.Context, p *Plan, shared **posed) (o Outc
 			o = Outcome{Plan: p, State: Failed, Faults: p.Faults, Err: asBug(p.Run.Stem, v, debug.Stack())}
 		}
 	}()
-	figures, err := w.one(ctx, p, shared)
-	return ended(p, figures, err)
+	rec := &recorder{started: time.Now(), seconds: map[string]float64{}}
+	figures, err := w.one(ctx, p, shared, rec)
+	o = ended(p, figures, err)
+	if o.State == Done {
+		o.StageSeconds = rec.seconds
+	}
+	return o
 }
 
 // ended turns how a run ended into its outcome.
@@ -146,8 +120,7 @@ func ended(p *Plan, figures *Figures, err error) Outcome {
 }
 
 // one does one run.
-func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, error) {
-	rec := &recorder{started: time.Now(), seconds: map[string]float64{}}
+func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder) (*Figures, error) {
 	stage := func(name string) func() {
 		if err := ctx.Err(); err == nil && w.stage != nil {
 			w.stage(p, name)
@@ -159,93 +132,74 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 		return nil, &Refused{faults}
 	}
 
-	// Read, and estimate on the raw series of the shortest echo.
-	var s *loaded
+	route := p.route()
+	if w.whole {
+		route.streamed = false
+	}
+	raw := newReel(p, p.Run.File, route.keep)
+	end := stage("estimate")
 	if *shared == nil {
-		end := stage("read")
-		first, err := load(ctx, p, p.Pose.File, p.Settings.Skip)
+		// On the raw series of the shortest echo.
+		of := raw
+		if p.Pose.File != p.Run.File {
+			of = newReel(p, p.Pose.File, route.keep)
+		}
+		po, err := w.estimate(ctx, p, of)
 		if err != nil {
 			return nil, err
 		}
-		end()
-		end = stage("estimate")
-		po, err := w.estimate(ctx, p, first)
-		if err != nil {
-			return nil, err
+		if of != raw {
+			of.drop()
 		}
-		end()
 		*shared = po
-		if p.Pose.File == p.Run.File {
-			s = first
-		} else {
-			first.data = nil
-			makeRoom()
-		}
 	}
-	if s == nil {
-		end := stage("read")
-		var err error
-		if s, err = load(ctx, p, p.Run.File, p.Settings.Skip); err != nil {
-			return nil, err
-		}
-		end()
-	}
-	if err := ctx.Err(); err != nil {
-		return nil, err
-	}
-	nt := s.nt
 	po := *shared
-
-	reference, mask, centre := p.standard(po, s)
-	m := &measures{mask: mask}
-	m.measurePoses(po, p.rowPoses(po), nt)
-
-	end := stage("measure-raw")
-	if err := m.measureRaw(ctx, p, s.data, nt, w.workers); err != nil {
-		return nil, err
-	}
-	end()
-	steps := []string{"time", "space"}
-	switch p.Settings.Order {
-	case "space-first":
-		steps = []string{"space", "time"}
-	case "joint":
-		steps = []string{"joint"}
-	}
-	for _, step := range steps {
-		end := stage(step)
-		var err error
-		switch step {
-		case "joint":
-			err = w.joint(ctx, p, po, s.data, nt)
-		case "time":
-			err = w.correctTime(ctx, p, s.data, nt)
-		default:
-			err = w.resample(ctx, p, po, s.data, nt)
+	nt := p.Volumes
+	var data []float32 // the series in memory, where it is not streamed
+	series := realign.Series(raw)
+	if !route.streamed {
+		end()
+		end = stage("read")
+		if raw.kept != nil && p.storedBytes() > keptBytes {
+			raw.drop()
 		}
-		if err != nil {
+		makeRoom()
+		var err error
+		if data, err = raw.floats(ctx, w.workers); err != nil {
 			return nil, err
 		}
-		end()
+		raw.drop()
+		series = realign.Floats(data, nt)
 	}
-	end = stage("measure-steady")
-	if err := m.measureSteady(ctx, s.data, nt, w.workers); err != nil {
-		return nil, err
-	}
-	end()
-
-	end = stage("write")
-	inputs, err := p.inputFiles(s, po)
+	reference, mask, centre, err := p.standard(ctx, po, series)
 	if err != nil {
 		return nil, err
 	}
+	end()
+	m := &measures{mask: mask}
+	m.measurePoses(po, p.rowPoses(po), nt)
+	pub := &publisher{out: w.out}
+	defer pub.discard()
+
+	if route.streamed {
+		makeRoom() // of the estimate
+		end := stage("steady")
+		if err := w.writeStream(ctx, p, po, raw, m, pub); err != nil {
+			return nil, err
+		}
+		raw.drop()
+		end()
+	} else if err := w.inMemory(ctx, p, po, data, m, stage); err != nil {
+		return nil, err
+	}
+
+	end = stage("write")
+	inputs := p.inputFiles(raw, po)
 	// The last look at the inputs: what was read is what the record names.
 	if faults := p.changed(); len(faults) > 0 {
 		return nil, &Refused{faults}
 	}
-	pub := &publisher{out: w.out}
-	defer pub.discard()
-	if err := p.writeData(ctx, w.workers, pub, s.data, nt, reference, mask, centre, m, po); err != nil {
+	if err := p.writeData(ctx, w.workers, pub, data, reference, mask, centre, m, po); err != nil {
 		return nil, err
 	}
 	end()
@@ -266,9 +220,42 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed) (*Figures, er
 	return figures, nil
 }
 
+// inMemory does what is between reading and writing on a series in memory, in place.
+func (w *worker) inMemory(ctx context.Context, p *Plan, po *posed, data []float32, m *measures, stage func(name string) func()) error {
+	nt := p.Volumes
+	steps := []string{"measure-raw", "time", "space", "measure-steady"}
+	switch p.Settings.Order {
+	case "space-first":
+		steps[1], steps[2] = "space", "time"
+	case "joint":
+		steps = []string{"measure-raw", "joint", "measure-steady"}
+	}
+	for _, step := range steps {
+		end := stage(step)
+		var err error
+		switch step {
+		case "measure-raw":
+			err = m.measureRaw(ctx, p, data, nt, w.workers)
+		case "joint":
+			err = w.joint(ctx, p, po, data, nt)
+		case "time":
+			err = w.correctTime(ctx, p, data, nt)
+		case "space":
+			err = w.resample(ctx, p, po, data, nt)
+		default:
+			err = m.measureSteady(ctx, data, nt, w.workers)
+		}
+		if err != nil {
+			return err
+		}
+		end()
+	}
+	return ctx.Err()
+}
+
 // estimate finds the poses of the pose series, on the raw data.
-func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, error) {
-	po := &posed{digest: s.digest}
+func (w *worker) estimate(ctx context.Context, p *Plan, s *reel) (*posed, error) {
+	po := &posed{}
 	if p.Settings.Motion == "none" {
 		return po, nil
 	}
@@ -281,19 +268,12 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 	case "middle":
 		opt.Reference = realign.Middle
 	case "sbref":
-		d := &provenance.Digester{}
-		_, ref, err := nifti.ReadSeries(p.Dataset.Path(p.Pose.SBRef), tap{ctx, d}, 0)
-		if ctx.Err() != nil {
-			return nil, ctx.Err()
-		}
-		if f, isFault := imageFault(p.Pose.SBRef, err); isFault {
-			return nil, &Refused{[]fault.Fault{f}}
-		}
+		ref, d, err := readOne(ctx, p, p.Pose.SBRef)
 		if err != nil {
-			return nil, &IOError{Path: p.Pose.SBRef, Step: "reading", Err: err}
+			return nil, err
 		}
 		po.reference = d
-		opt.Reference, opt.External = realign.External, ref.Volume(0) // the only one, as planned
+		opt.Reference, opt.External = realign.External, ref
 	default:
 		opt.Reference, opt.Index = realign.Index, r.Index
 	}
@@ -306,7 +286,7 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 		volumes = volumesShare
 	}
 	opt.Progress = w.within(p, "estimate", 0, volumes)
-	est, err := realign.EstimateVolumes(ctx, g, realign.Floats(s.data, s.nt), opt)
+	est, err := realign.EstimateVolumes(ctx, g, s, opt)
 	var few *realign.TooFewAligned
 	if errors.As(err, &few) {
 		return nil, &Refused{[]fault.Fault{fault.New("motion-lost", p.Pose.File, "",
@@ -317,7 +297,11 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *loaded) (*posed, erro
 		return nil, err
 	}
 	po.est = est
-	return po, w.estimatePath(ctx, p, g, s, po)
+	if err := w.estimatePath(ctx, p, g, s, po); err != nil {
+		return nil, err
+	}
+	po.digest = s.digest
+	return po, nil
 }
 
 // volumesShare is roughly what part of the time of an estimate with a path goes into the
@@ -332,11 +316,12 @@ func (w *worker) within(p *Plan, stage string, from, to float64) func(share floa
 	return func(share float64) { w.share(p, stage, from+float64(share*(to-from))) }
 }
 
-// standard gives the reference volume, the head mask and its centroid.
-func (p *Plan) standard(po *posed, s *loaded) (ref []float32, mask []bool, centre [3]float64) {
+// standard gives the reference volume, the head mask and its centroid; s is the raw series, of which
+// the reference is a part where no poses were estimated.
+func (p *Plan) standard(ctx context.Context, po *posed, s realign.Series) (ref []float32, mask []bool, centre [3]float64, err error) {
 	if po.est != nil {
 		if p.Settings.Reference.Word == "mean" {
-			return po.path.Reference, po.est.Mask, po.est.Centre // sharper, along a path
+			return po.path.Reference, po.est.Mask, po.est.Centre, nil // sharper, along a path
 		}
 		ref = po.est.Reference // a copy of its own, never part of the series
 		if k := po.est.Scale; k != 1 {
@@ -345,35 +330,51 @@ func (p *Plan) standard(po *posed, s *loaded) (ref []float32, mask []bool, centr
 				ref[i] /= k // a power of two: what was given comes back bit for bit
 			}
 		}
-		return ref, po.est.Mask, po.est.Centre
+		return ref, po.est.Mask, po.est.Centre, nil
 	}
-	nv := len(s.data) / s.nt
-	pick := func(t int) []float32 { return append([]float32{}, s.data[t*nv:(t+1)*nv]...) }
 	switch r := p.Settings.Reference; r.Word {
 	case "first":
-		ref = pick(0)
+		ref, err = volumeOf(ctx, s, 0)
 	case "middle":
-		ref = pick(s.nt / 2)
+		ref, err = volumeOf(ctx, s, s.Len()/2)
 	case "":
-		ref = pick(r.Index)
+		ref, err = volumeOf(ctx, s, r.Index)
 	default:
-		ref = meanVolume(s.data, nv, s.nt)
+		ref, err = meanVolume(ctx, s)
+	}
+	if err != nil {
+		return nil, nil, centre, err
 	}
 	mask = realign.HeadMask(p.Grid, ref)
-	return ref, mask, realign.Centroid(p.Grid, mask)
+	return ref, mask, realign.Centroid(p.Grid, mask), nil
+}
+
+// volumeOf returns volume t of a series.
+func volumeOf(ctx context.Context, s realign.Series, t int) (vol []float32, err error) {
+	err = s.Each(ctx, 1, func(u int) bool { return u == t }, func(_, _ int, v []float32) error {
+		vol = append([]float32{}, v...)
+		return nil
+	})
+	return vol, err
 }
 
 // meanVolume averages volumes in their order.
-func meanVolume(data []float32, nv, nt int) []float32 {
-	out := make([]float32, nv)
-	for v := range out {
-		sum := 0.0
-		for t := range nt {
-			sum += float64(data[t*nv+v])
+func meanVolume(ctx context.Context, s realign.Series) ([]float32, error) {
+	var sum []float64
+	err := s.Each(ctx, 1, nil, func(_, _ int, vol []float32) error {
+		if sum == nil {
+			sum = make([]float64, len(vol))
 		}
-		out[v] = float32(sum / float64(nt))
+		for i, v := range vol {
+			sum[i] += float64(v)
+		}
+		return nil
+	})
+	out := make([]float32, len(sum))
+	for i, v := range sum {
+		out[i] = float32(v / float64(s.Len()))
 	}
-	return out
+	return out, err
 }
 
 // correctTime moves every slice to the run's instant, in place.
@@ -415,7 +416,7 @@ func (w *worker) resample(ctx context.Context, p *Plan, po *posed, data []float3
 }
 
 // inputFiles describes what the run was computed from, for its record.
-func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
+func (p *Plan) inputFiles(s *reel, po *posed) []provenance.File {
 	var out []provenance.File
 	for _, in := range p.Inputs {
 		switch in.Role {
@@ -429,22 +430,60 @@ func (p *Plan) inputFiles(s *loaded, po *posed) ([]provenance.File, error) {
 			out = append(out, provenance.File{Role: in.Role, Path: in.Path, SHA256: in.sha256, Bytes: in.stamp.size})
 		}
 	}
-	return out, nil
+	return out
 }
 
-// writeData writes every file of the run but its record, under hidden names.
-func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data []float32, nt int, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
-	t := p.Timing
-	nv := len(ref)
+// steadyHeader is the header of the corrected series; data is needed for int16 alone.
+func (p *Plan) steadyHeader(data []float32) *nifti.Header {
 	dt := nifti.Float32
 	if p.Settings.Store == "int16" {
 		dt = nifti.Int16
 	}
-	series := p.Header.Derived(nt, false, dt, t.AtOneInstant && p.Settings.Time != "none", t.StartTime)
-	p.correctVolumeTime(series)
+	h := p.Header.Derived(p.Volumes, false, dt, p.Timing.AtOneInstant && p.Settings.Time != "none", p.Timing.StartTime)
+	p.correctVolumeTime(h)
 	if dt == nifti.Int16 {
-		series.SclSlope, series.SclInter = nifti.Int16Scaling(extent(data))
+		h.SclSlope, h.SclInter = nifti.Int16Scaling(extent(data))
 	}
+	return h
+}
+
+// writeStream streams the series to its file, under a hidden name.
+func (w *worker) writeStream(ctx context.Context, p *Plan, po *posed, raw *reel, m *measures, pub *publisher) error {
+	// What goes wrong before anything is written is no error of writing.
+	var other error
+	err := pub.write("steady-series", p.Output("steady-series"), func(out io.Writer) error {
+		wrote := &listener{w: out}
+		err := w.stream(ctx, p, po, raw, m, p.steadyHeader(nil), wrote)
+		if wrote.err == nil {
+			other = err
+		}
+		return err
+	})
+	if other != nil {
+		return other
+	}
+	return err
+}
+
+// A listener remembers what went wrong in writing.
+type listener struct {
+	w   io.Writer
+	err error
+}
+
+func (l *listener) Write(b []byte) (int, error) {
+	n, err := l.w.Write(b)
+	if err != nil {
+		l.err = err
+	}
+	return n, err
+}
+
+// writeData writes every file of the run but its record, under hidden names; the series
+// only if data is not nil.
+func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
+	t := p.Timing
+	nv := len(ref)
 	single := func(dt nifti.Datatype) *nifti.Header { return p.Header.Derived(1, true, dt, true, 0) }
 	inside := make([]float32, nv)
 	for i, in := range mask {
@@ -467,7 +506,10 @@ func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data 
 		var fill func(io.Writer) error
 		switch o.Role {
 		case "steady-series":
-			fill = image(series, data)
+			if data == nil {
+				continue // streamed
+			}
+			fill = image(p.steadyHeader(data), data)
 		case "steady-sidecar":
 			fill = text(p.steadySidecar(po))
 		case "reference":

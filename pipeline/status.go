@@ -191,6 +191,8 @@ type Outcome struct {
 	Figures *Figures      // nil unless Done or UpToDate
 	Outside []Breach      // limits that the run is outside of
 	Older   bool          // refused or failed, while OUT still holds the outputs of an earlier time
+	// StageSeconds is how long each of the run's [Stages] lasted, nil unless Done.
+	StageSeconds map[string]float64
 }
 
 // codeOf gives the exit code that an error of any kind stands for.

@@ -144,3 +144,6 @@ func (c *Course) TSNR(dst []float32) {
 		dst[i] = float32(ratio)
 	}
 }
+
+// Voxels is how many voxels a volume has.
+func (c *Course) Voxels() int { return len(c.first) }

@@ -80,6 +80,9 @@ func TestInterruptedAtEveryStage(t *testing.T) {
 		if stage == "time" || stage == "space" { // those of another order
 			settings.Order = "time-first"
 		}
+		if stage == "steady" {
+			settings.Time, settings.Motion, settings.Order = "sinc", "volume", "time-first"
+		}
 		plans, err := pipeline.Survey(context.Background(), ds, pipeline.Request{Settings: settings})
 		if err != nil {
 			t.Fatal(err)

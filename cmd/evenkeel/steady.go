@@ -135,24 +135,23 @@ func (s *session) observe(e pipeline.Event) {
 }
 
 // stageShares is roughly what part of a run's time each stage takes: measured on the runs of the
-// demo (40x48x30x60, two cores), reading and writing counted up for larger, compressed series.
-var stageShares = map[string]float64{"read": 0.03, "estimate": 0.80, "measure-raw": 0.01, "time": 0.03, "space": 0.08, "measure-steady": 0.01, "write": 0.04}
+// demo (40x48x30x60, two cores), reading and writing counted up for larger, compressed series. A
+// stage that is not here stands for others.
+var stageShares = map[string]float64{"estimate": 0.80, "read": 0.03, "measure-raw": 0.01, "time": 0.03, "space": 0.08, "measure-steady": 0.01, "write": 0.04}
 
 // advance moves the bar when a run has done a share of a stage, by that and the stages before
 // it; with stage "" the run has ended, and counts as a whole.
 func (s *session) advance(p *pipeline.Plan, stage string, share float64) {
 	at := 1.0
 	if i := slices.Index(pipeline.Stages, stage); i >= 0 {
+		of, in := stageShares[stage], standsFor(stage)
 		at = 0
 		for _, before := range pipeline.Stages[:i] {
-			if stage == "joint" && (before == "time" || before == "space") {
-				continue // it stands for both
+			if slices.Contains(in, before) {
+				of += stageShares[before]
+			} else {
+				at += stageShares[before]
 			}
-			at += stageShares[before]
-		}
-		of := stageShares[stage]
-		if stage == "joint" {
-			of = stageShares["time"] + stageShares["space"]
 		}
 		at += share * of
 	}
@@ -170,11 +169,25 @@ func (s *session) advance(p *pipeline.Plan, stage string, share float64) {
 	}
 }
 
+// standsFor names the stages that one stands for.
+func standsFor(stage string) []string {
+	switch stage {
+	case "joint":
+		return []string{"time", "space"}
+	case "steady":
+		return []string{"read", "measure-raw", "time", "space", "measure-steady"}
+	}
+	return nil
+}
+
 func (s *session) ended(run string, o *pipeline.Outcome) {
 	s.advance(o.Plan, "", 0)
 	f := fields{"run": run, "state": o.State}
 	switch o.State {
 	case pipeline.Done:
+		if o.StageSeconds != nil {
+			f["stage_seconds"] = o.StageSeconds
+		}
 		s.log.info("done", run+": done", f)
 	case pipeline.UpToDate:
 		s.log.info("up-to-date", run+": up to date", f)
