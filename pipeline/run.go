@@ -43,8 +43,8 @@ type unit struct {
 type worker struct {
 	out     string
 	folders *folders
-	workers int  // goroutines inside a run
-	whole   bool // never stream: for tests
+	workers int               // goroutines inside a run
+	route   func(*Plan) route // nil: that of the plan
 	stage   func(p *Plan, stage string)
 	share   func(p *Plan, stage string, share float64) // nil: nobody listens
 }
@@ -133,8 +133,8 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder
 	}
 
 	route := p.route()
-	if w.whole {
-		route.streamed = false
+	if w.route != nil {
+		route = w.route(p)
 	}
 	raw := newReel(p, p.Run.File, route.keep)
 	end := stage("estimate")
@@ -159,11 +159,11 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder
 	series := realign.Series(raw)
 	if !route.streamed {
 		end()
-		end = stage("read")
-		if raw.kept != nil && p.storedBytes() > keptBytes {
+		if p.storedBytes() > keptBytes {
 			raw.drop()
 		}
-		makeRoom()
+		makeRoom() // of the estimate too
+		end = stage("read")
 		var err error
 		if data, err = raw.floats(ctx, w.workers); err != nil {
 			return nil, err

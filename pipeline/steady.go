@@ -25,7 +25,7 @@ type Job struct {
 	Memory int64 // bytes that runs may hold together; 0: [DefaultMemory]
 	Redo   bool
 	Limits Limits
-	whole  bool // series in memory throughout: for tests
+	route  func(*Plan) route // for tests; nil: that of the plan
 	// Observe, if not nil, is told what happens, one call at a time, from
 	// any goroutine.
 	Observe func(Event)
@@ -146,7 +146,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 		}
 		group.Go(func() error {
 			defer admit.release(need)
-			w := &worker{out: job.Out, folders: dirs, workers: workers, whole: job.whole, stage: func(p *Plan, s string) {
+			w := &worker{out: job.Out, folders: dirs, workers: workers, route: job.route, stage: func(p *Plan, s string) {
 				observe(Event{Kind: RunStage, Plan: p, Stage: s})
 			}}
 			if job.Observe != nil {
