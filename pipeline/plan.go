@@ -109,50 +109,6 @@ func (p *Plan) Output(role string) string {
 // unit is the name shared by all echoes of one acquisition.
 func (p *Plan) unit() string { return path.Join(p.Run.Dir, p.Run.Group) }
 
-// Bytes per voxel of a volume held beside the series while a run is worked on:
-// the fixed part (reference, mask, maps, the smoothed reference with its
-// derivatives and coefficients) and what each worker needs (a volume's
-// coefficients, its smoothed copy, residuals and weights). Measured as resident
-// memory on 64x64x36x200 with 1, 2 and 4 workers (195, 208, 217 MiB, of which
-// the series is 112.5), with a margin of a quarter on what is not the series.
-const (
-	fixedPerVoxel  = 340
-	workerPerVoxel = 110
-	// bytesPerSlot is what a pose path keeps for each excitation: its poses, what the
-	// images say of it (twice), and the rows of the banded equations (three times).
-	bytesPerSlot = 3500
-	// runOverhead stands for the program, tables, compression buffers and
-	// the allocator.
-	runOverhead = 32 << 20
-)
-
-// Memory estimates, from the header, the bytes that the run holds at most when
-// it is worked on by that many workers.
-func (p *Plan) Memory(workers int) int64 {
-	if p.Header == nil {
-		return 0
-	}
-	nx, ny, nz, _ := p.Header.Size()
-	nv := int64(nx) * int64(ny) * int64(nz)
-	// Time and space are done one after the other: the larger counts.
-	work := nv * workerPerVoxel * int64(max(1, workers))
-	if p.Timing.Temporal {
-		kernel := slicetime.Options{Kernel: slicetime.Fourier, Reach: p.Settings.SincReach}
-		if p.Settings.Time == "sinc" {
-			kernel.Kernel = slicetime.Sinc
-		}
-		work = max(work, slicetime.WorkBytes(nx, ny, nz, p.Volumes, p.Schedule.Axis, workers, kernel))
-	}
-	fixed := int64(fixedPerVoxel)
-	if p.Settings.Reference.Word == "sbref" {
-		fixed += 4 // read beside the series that is matched to it
-	}
-	if p.Settings.Motion == "path" && p.timed() {
-		work += bytesPerSlot * int64(p.Volumes) * int64(len(p.Schedule.Shots()))
-	}
-	return nv*(4*int64(p.Volumes)+fixed) + work + runOverhead
-}
-
 // Request says which runs are wanted and how they are to be processed.
 type Request struct {
 	Filter   dataset.Filter

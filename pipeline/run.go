@@ -11,6 +11,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"runtime"
 	"runtime/debug"
 	"slices"
 	"time"
@@ -231,6 +232,7 @@ func (w *worker) inMemory(ctx context.Context, p *Plan, po *posed, data []float3
 		steps = []string{"measure-raw", "joint", "measure-steady"}
 	}
 	for _, step := range steps {
+		runtime.GC() // what the step before has left makes room; next to no work, with so few arrays
 		end := stage(step)
 		var err error
 		switch step {

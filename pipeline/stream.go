@@ -101,17 +101,12 @@ func (l *looks) results(nt int, counts []bool) (dvars []float64, tsnr []float32)
 func (w *worker) stream(ctx context.Context, p *Plan, po *posed, r *reel, m *measures, h *nifti.Header, out io.Writer) (err error) {
 	c := &current{w: w, p: p, nt: r.nt, nv: r.nv, count: m.counts(), poses: p.rowPoses(po)}
 	n := p.Grid.N
-	needs := func(t int) (first, last int) { return t, t }
-	if p.Timing.Temporal {
-		c.window, err = slicetime.NewWindow(n[0], n[1], n[2], c.nt, p.Schedule, p.Timing.Origin, p.Settings.kernel())
-		if err != nil {
-			return err
-		}
-		needs = c.window.Needs
+	if c.window, err = p.window(); err != nil {
+		return err
 	}
 	c.spikes = quality.NewSpikes(n[0], n[1], n[2], c.nt, p.Schedule.Axis, m.mask)
 	c.before, c.after = newLooks(m, c.nv, c.nt), newLooks(m, c.nv, c.nt)
-	steps, ring := batches(c.nt, needs, c.spikes.Span)
+	steps, ring := p.batches(c.window)
 	c.raw = make([][]float32, ring)
 	c.steady = make([][]float32, min(c.nt, batchVolumes+1)) // and the last of the batch before
 	workers := max(1, w.workers)
@@ -154,6 +149,28 @@ func (w *worker) stream(ctx context.Context, p *Plan, po *posed, r *reel, m *mea
 	m.dvarsSteady, m.tsnrSteady = c.after.results(c.nt, c.count)
 	m.spikes = c.spikes.Scores()
 	return nil
+}
+
+// batches plans the pass over the run.
+func (p *Plan) batches(window *slicetime.Window) (steps []batch, ring int) {
+	return batches(p.Volumes, needsOf(window), func(t int) (first, last int) { return quality.SpikeSpan(t, p.Volumes) })
+}
+
+// window moves the slices of a streamed run in time; nil where none is moved.
+func (p *Plan) window() (*slicetime.Window, error) {
+	if !p.Timing.Temporal {
+		return nil, nil
+	}
+	n := p.Grid.N
+	return slicetime.NewWindow(n[0], n[1], n[2], p.Volumes, p.Schedule, p.Timing.Origin, p.Settings.kernel())
+}
+
+// needsOf says which volumes a volume is made of.
+func needsOf(w *slicetime.Window) func(t int) (first, last int) {
+	if w == nil {
+		return func(t int) (first, last int) { return t, t }
+	}
+	return w.Needs
 }
 
 // room gives the place of volume t in a ring, made when it is first needed.

@@ -100,24 +100,24 @@ func NewSpikes(nx, ny, nz, nt, axis int, mask []bool) *Spikes {
 	return s
 }
 
-// Span returns the first and the last of the volumes that [Spikes.Volume] looks at for
-// volume t; both grow with t.
-func (s *Spikes) Span(t int) (first, last int) {
-	if s.nt < MinSpikeVolumes {
+// SpikeSpan returns the first and the last of the volumes that volume t of nt is held
+// against, itself among them; both grow with t.
+func SpikeSpan(t, nt int) (first, last int) {
+	if nt < MinSpikeVolumes {
 		return t, t
 	}
-	first = min(max(t-2, 0), s.nt-MinSpikeVolumes)
+	first = min(max(t-2, 0), nt-MinSpikeVolumes)
 	return first, first + MinSpikeVolumes - 1
 }
 
-// Volume measures volume t; at returns the volumes of [Spikes.Span], t among them. Every volume must be
+// Volume measures volume t; at returns the volumes of [SpikeSpan]. Every volume must be
 // measured once, in any order and from any goroutine; nothing is kept of them.
 func (s *Spikes) Volume(t int, at func(t int) []float32) {
 	if s.nt < MinSpikeVolumes {
 		return
 	}
 	var near [4][]float32
-	first, last := s.Span(t)
+	first, last := SpikeSpan(t, s.nt)
 	for k, u := 0, first; u <= last; u++ {
 		if u != t {
 			near[k] = at(u)[:s.nv]
