@@ -4,6 +4,8 @@ import (
 	"encoding/binary"
 	"fmt"
 	"io"
+
+	"evenkeel/internal/kernel"
 )
 
 // A StoredVolume is one volume in the smallest form that loses nothing: voxels of
@@ -76,21 +78,13 @@ func (v *StoredVolume) Widen(dst []float32, from int) {
 	case v.b8 != nil:
 		c.widen8(dst, v.b8[from:from+len(dst)])
 	case c.dt == Uint16 && c.scaled:
-		for i, x := range v.b16[from : from+len(dst)] {
-			dst[i] = float32(float64(c.slope*float64(uint16(x))) + c.inter)
-		}
+		kernel.FromUint16Scaled(dst, v.b16[from:from+len(dst)], c.slope, c.inter)
 	case c.dt == Uint16:
-		for i, x := range v.b16[from : from+len(dst)] {
-			dst[i] = float32(uint16(x))
-		}
+		kernel.FromUint16(dst, v.b16[from:from+len(dst)])
 	case c.scaled:
-		for i, x := range v.b16[from : from+len(dst)] {
-			dst[i] = float32(float64(c.slope*float64(x)) + c.inter)
-		}
+		kernel.FromInt16Scaled(dst, v.b16[from:from+len(dst)], c.slope, c.inter)
 	default:
-		for i, x := range v.b16[from : from+len(dst)] {
-			dst[i] = float32(x)
-		}
+		kernel.FromInt16(dst, v.b16[from:from+len(dst)])
 	}
 }
 

@@ -272,8 +272,10 @@ func (r *reel) each(ctx context.Context, workers int, want func(t int) bool, f f
 	return s.finish()
 }
 
-// floats reads the series into one array, as it is needed for work in place.
+// floats reads the series into one array, as it is needed for work in place. It is the last pass, of
+// which nothing is kept that is not there already.
 func (r *reel) floats(ctx context.Context, workers int) ([]float32, error) {
+	r.keep = false
 	data := make([]float32, r.nv*r.nt)
 	err := r.each(ctx, workers, nil, func(_, t int, v *nifti.StoredVolume) error {
 		v.Widen(data[t*r.nv:][:r.nv], 0)

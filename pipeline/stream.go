@@ -117,6 +117,7 @@ func (w *worker) stream(ctx context.Context, p *Plan, po *posed, r *reel, m *mea
 	// Nobody may wait for a volume that will not come.
 	defer context.AfterFunc(ctx, func() { c.out.Abort(ctx.Err()) })()
 
+	r.keep = false // from the last pass nothing is kept that is not there already
 	s, err := r.begin(ctx, c.nt, batchVolumes)
 	if err != nil {
 		return err

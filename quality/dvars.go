@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -66,36 +67,11 @@ func (c *Change) Volume(t int, before, now []float32) {
 	}
 	var level, change float64
 	for _, r := range c.runs {
-		l, d := changeOf(before[r.from:r.from+r.n], now[r.from:r.from+r.n])
+		l, d := kernel.Changes(now[r.from:r.from+r.n], before[r.from:r.from+r.n])
 		level += l
 		change += d
 	}
 	c.level[t], c.change[t] = level, change
-}
-
-// changeOf sums values and squared differences in four strands, so that an addition
-// need not wait for the one before it.
-func changeOf(before, now []float32) (level, change float64) {
-	before = before[:len(now)]
-	var l0, l1, l2, l3, c0, c1, c2, c3 float64
-	for len(now) >= 4 && len(before) >= 4 {
-		x0, x1, x2, x3 := float64(now[0]), float64(now[1]), float64(now[2]), float64(now[3])
-		d0, d1, d2, d3 := x0-float64(before[0]), x1-float64(before[1]), x2-float64(before[2]), x3-float64(before[3])
-		l0, l1, l2, l3 = l0+x0, l1+x1, l2+x2, l3+x3
-		c0 += float64(d0 * d0)
-		c1 += float64(d1 * d1)
-		c2 += float64(d2 * d2)
-		c3 += float64(d3 * d3)
-		now, before = now[4:], before[4:]
-	}
-	before = before[:len(now)]
-	for i, v := range now {
-		x := float64(v)
-		d := x - float64(before[i])
-		l0 += x
-		c0 += float64(d * d)
-	}
-	return (l0 + l1) + (l2 + l3), (c0 + c1) + (c2 + c3)
 }
 
 // DVARS returns the measure once every volume was taken; use is as for the function [DVARS].

@@ -6,6 +6,7 @@ import (
 	"math"
 	"slices"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -129,7 +130,7 @@ func (s *Spikes) Volume(t int, at func(t int) []float32) {
 		var d, l float64
 		for _, r := range runs {
 			to := r.from + r.n
-			rd, rl := apart(now[r.from:to], near[0][r.from:to], near[1][r.from:to], near[2][r.from:to], near[3][r.from:to])
+			rd, rl := kernel.Apart(now[r.from:to], &[4][]float32{near[0][r.from:to], near[1][r.from:to], near[2][r.from:to], near[3][r.from:to]})
 			d += rd
 			l += rl
 		}
@@ -137,32 +138,6 @@ func (s *Spikes) Volume(t int, at func(t int) []float32) {
 		s.size[t*s.ns+k] = l / float64(s.voxels[k])
 	}
 }
-
-// apart sums the distances of x from the medians of the four others, and the
-// magnitudes of x.
-func apart(x, a, b, c, e []float32) (dist, size float64) {
-	a, b, c, e = a[:len(x)], b[:len(x)], c[:len(x)], e[:len(x)]
-	for i, v := range x {
-		// The middle two of four, unordered: the larger of the smaller
-		// ones and the smaller of the larger ones of two pairs. Whole numbers are
-		// compared without a branch.
-		p, q, r, s := rank(a[i]), rank(b[i]), rank(c[i]), rank(e[i])
-		low, high := max(min(p, q), min(r, s)), min(max(p, q), max(r, s))
-		w := float64(v)
-		dist += math.Abs(w - float64(0.5*(float64(unrank(low))+float64(unrank(high)))))
-		size += math.Abs(w)
-	}
-	return dist, size
-}
-
-// rank maps numbers to whole numbers in the same order (IEEE 754 keeps sign and
-// magnitude); unrank is its inverse.
-func rank(x float32) int32 {
-	b := int32(math.Float32bits(x))
-	return b ^ int32(uint32(b>>31)>>1)
-}
-
-func unrank(b int32) float32 { return math.Float32frombits(uint32(b ^ int32(uint32(b>>31)>>1))) }
 
 // Scores returns score[t][s] as [SliceSpikes] does, once every volume was measured.
 func (s *Spikes) Scores() [][]float64 {

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"math"
 
+	"evenkeel/internal/kernel"
 	"evenkeel/internal/parallel"
 )
 
@@ -101,18 +102,7 @@ func (c *Course) Block(vols [][]float32, b int) {
 	// Four volumes for one visit to the sums; added one after another, so
 	// that where the fours begin does not matter.
 	for ; len(vols) >= 4; vols = vols[4:] {
-		v0, v1, v2, v3 := vols[0][lo:hi], vols[1][lo:hi], vols[2][lo:hi], vols[3][lo:hi]
-		v0, v1, v2, v3 = v0[:len(d1)], v1[:len(d1)], v2[:len(d1)], v3[:len(d1)]
-		for i, s1 := range d1 {
-			f, s2 := float64(first[i]), d2[i]
-			a, b, c, d := float64(v0[i])-f, float64(v1[i])-f, float64(v2[i])-f, float64(v3[i])-f
-			d1[i] = (((s1 + a) + b) + c) + d
-			s2 += float64(a * a)
-			s2 += float64(b * b)
-			s2 += float64(c * c)
-			s2 += float64(d * d)
-			d2[i] = s2
-		}
+		kernel.Courses(d1, d2, first, &[4][]float32{vols[0][lo:hi], vols[1][lo:hi], vols[2][lo:hi], vols[3][lo:hi]})
 	}
 	for _, vol := range vols {
 		v := vol[lo:hi][:len(d1)]

@@ -241,3 +241,38 @@ func slopes(out *float32, outStride int, in *float32, inStride int, value *float
 //
 //go:noescape
 func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64)
+
+// fromInt16 is the assembly of the function of that name, for a multiple of eight numbers.
+//
+//go:noescape
+func fromInt16(dst *float32, src *int16, n int)
+
+// fromInt16Scaled is the assembly of the function of that name, for a multiple of eight numbers.
+//
+//go:noescape
+func fromInt16Scaled(dst *float32, src *int16, n int, slope float64, inter float64)
+
+// fromUint16 is the assembly of the function of that name, for a multiple of eight numbers.
+//
+//go:noescape
+func fromUint16(dst *float32, src *int16, n int)
+
+// fromUint16Scaled is the assembly of the function of that name, for a multiple of eight numbers.
+//
+//go:noescape
+func fromUint16Scaled(dst *float32, src *int16, n int, slope float64, inter float64)
+
+// changes is the assembly of changesPlain for a multiple of four values.
+//
+//go:noescape
+func changes(sums *[8]float64, now *float32, before *float32, n int)
+
+// apart is the assembly of Apart for a multiple of four values.
+//
+//go:noescape
+func apart(sums *[8]float64, x *float32, others *[4]*float32, n int)
+
+// courses is the assembly of Courses for a multiple of four values.
+//
+//go:noescape
+func courses(d1 *float64, d2 *float64, first *float32, volumes *[4]*float32, n int)

@@ -10232,3 +10232,237 @@ link:
 	VMOVUPD      Y0, (AX)
 	VZEROUPPER
 	RET
+
+// func fromInt16(dst *float32, src *int16, n int)
+// Requires: AVX, AVX2
+TEXT ·fromInt16(SB), $0-24
+	MOVQ dst+0(FP), AX
+	MOVQ src+8(FP), CX
+	MOVQ n+16(FP), DX
+	XORQ BX, BX
+
+by8:
+	CMPQ      BX, DX
+	JGE       by8_end
+	VPMOVSXWD (CX)(BX*2), Y0
+	VCVTDQ2PS Y0, Y0
+	VMOVUPS   Y0, (AX)(BX*4)
+	ADDQ      $0x00000008, BX
+	JMP       by8
+
+by8_end:
+	VZEROUPPER
+	RET
+
+// func fromInt16Scaled(dst *float32, src *int16, n int, slope float64, inter float64)
+// Requires: AVX, AVX2
+TEXT ·fromInt16Scaled(SB), $0-40
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         n+16(FP), DX
+	XORQ         BX, BX
+	VBROADCASTSD slope+24(FP), Y0
+	VBROADCASTSD inter+32(FP), Y1
+
+by8:
+	CMPQ         BX, DX
+	JGE          by8_end
+	VPMOVSXWD    (CX)(BX*2), Y2
+	VEXTRACTI128 $0x01, Y2, X3
+	VCVTDQ2PD    X2, Y2
+	VCVTDQ2PD    X3, Y3
+	VMULPD       Y0, Y2, Y2
+	VMULPD       Y0, Y3, Y3
+	VADDPD       Y1, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VCVTPD2PSY   Y2, X2
+	VCVTPD2PSY   Y3, X3
+	VMOVUPS      X2, (AX)(BX*4)
+	VMOVUPS      X3, 16(AX)(BX*4)
+	ADDQ         $0x00000008, BX
+	JMP          by8
+
+by8_end:
+	VZEROUPPER
+	RET
+
+// func fromUint16(dst *float32, src *int16, n int)
+// Requires: AVX, AVX2
+TEXT ·fromUint16(SB), $0-24
+	MOVQ dst+0(FP), AX
+	MOVQ src+8(FP), CX
+	MOVQ n+16(FP), DX
+	XORQ BX, BX
+
+by8:
+	CMPQ      BX, DX
+	JGE       by8_end
+	VPMOVZXWD (CX)(BX*2), Y0
+	VCVTDQ2PS Y0, Y0
+	VMOVUPS   Y0, (AX)(BX*4)
+	ADDQ      $0x00000008, BX
+	JMP       by8
+
+by8_end:
+	VZEROUPPER
+	RET
+
+// func fromUint16Scaled(dst *float32, src *int16, n int, slope float64, inter float64)
+// Requires: AVX, AVX2
+TEXT ·fromUint16Scaled(SB), $0-40
+	MOVQ         dst+0(FP), AX
+	MOVQ         src+8(FP), CX
+	MOVQ         n+16(FP), DX
+	XORQ         BX, BX
+	VBROADCASTSD slope+24(FP), Y0
+	VBROADCASTSD inter+32(FP), Y1
+
+by8:
+	CMPQ         BX, DX
+	JGE          by8_end
+	VPMOVZXWD    (CX)(BX*2), Y2
+	VEXTRACTI128 $0x01, Y2, X3
+	VCVTDQ2PD    X2, Y2
+	VCVTDQ2PD    X3, Y3
+	VMULPD       Y0, Y2, Y2
+	VMULPD       Y0, Y3, Y3
+	VADDPD       Y1, Y2, Y2
+	VADDPD       Y1, Y3, Y3
+	VCVTPD2PSY   Y2, X2
+	VCVTPD2PSY   Y3, X3
+	VMOVUPS      X2, (AX)(BX*4)
+	VMOVUPS      X3, 16(AX)(BX*4)
+	ADDQ         $0x00000008, BX
+	JMP          by8
+
+by8_end:
+	VZEROUPPER
+	RET
+
+// func changes(sums *[8]float64, now *float32, before *float32, n int)
+// Requires: AVX
+TEXT ·changes(SB), $0-32
+	MOVQ   sums+0(FP), AX
+	MOVQ   now+8(FP), CX
+	MOVQ   before+16(FP), DX
+	MOVQ   n+24(FP), BX
+	VXORPD Y0, Y0, Y0
+	VXORPD Y1, Y1, Y1
+	XORQ   SI, SI
+
+by4:
+	CMPQ      SI, BX
+	JGE       by4_end
+	VCVTPS2PD (CX)(SI*4), Y2
+	VCVTPS2PD (DX)(SI*4), Y3
+	VSUBPD    Y3, Y2, Y3
+	VADDPD    Y2, Y0, Y0
+	VMULPD    Y3, Y3, Y3
+	VADDPD    Y3, Y1, Y1
+	ADDQ      $0x00000004, SI
+	JMP       by4
+
+by4_end:
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VZEROUPPER
+	RET
+
+// func apart(sums *[8]float64, x *float32, others *[4]*float32, n int)
+// Requires: AVX, AVX2
+TEXT ·apart(SB), $0-32
+	MOVQ         sums+0(FP), AX
+	MOVQ         x+8(FP), CX
+	MOVQ         others+16(FP), DX
+	MOVQ         n+24(FP), BX
+	MOVQ         (DX), SI
+	MOVQ         8(DX), DI
+	MOVQ         16(DX), R8
+	MOVQ         24(DX), R9
+	VXORPD       Y0, Y0, Y0
+	VXORPD       Y1, Y1, Y1
+	MOVQ         $0x3fe0000000000000, DX
+	VMOVQ        DX, X2
+	VBROADCASTSD X2, Y2
+	VPCMPEQD     Y3, Y3, Y3
+	VPSRLQ       $0x01, Y3, Y3
+	XORQ         DX, DX
+
+by4:
+	CMPQ      DX, BX
+	JGE       by4_end
+	VMOVUPS   (SI)(DX*4), X4
+	VMOVUPS   (R8)(DX*4), X5
+	VMINPS    (DI)(DX*4), X4, X6
+	VMAXPS    (DI)(DX*4), X4, X4
+	VMINPS    (R9)(DX*4), X5, X7
+	VMAXPS    (R9)(DX*4), X5, X5
+	VMAXPS    X7, X6, X6
+	VMINPS    X5, X4, X4
+	VCVTPS2PD X6, Y6
+	VCVTPS2PD X4, Y4
+	VCVTPS2PD (CX)(DX*4), Y5
+	VADDPD    Y4, Y6, Y6
+	VMULPD    Y2, Y6, Y6
+	VSUBPD    Y6, Y5, Y6
+	VANDPD    Y3, Y6, Y6
+	VANDPD    Y3, Y5, Y5
+	VADDPD    Y6, Y0, Y0
+	VADDPD    Y5, Y1, Y1
+	ADDQ      $0x00000004, DX
+	JMP       by4
+
+by4_end:
+	VMOVUPD Y0, (AX)
+	VMOVUPD Y1, 32(AX)
+	VZEROUPPER
+	RET
+
+// func courses(d1 *float64, d2 *float64, first *float32, volumes *[4]*float32, n int)
+// Requires: AVX
+TEXT ·courses(SB), $0-40
+	MOVQ d1+0(FP), AX
+	MOVQ d2+8(FP), CX
+	MOVQ first+16(FP), DX
+	MOVQ volumes+24(FP), BX
+	MOVQ n+32(FP), SI
+	MOVQ (BX), DI
+	MOVQ 8(BX), R8
+	MOVQ 16(BX), R9
+	MOVQ 24(BX), R10
+	XORQ BX, BX
+
+by4:
+	CMPQ      BX, SI
+	JGE       by4_end
+	VCVTPS2PD (DX)(BX*4), Y0
+	VMOVUPD   (AX)(BX*8), Y1
+	VMOVUPD   (CX)(BX*8), Y2
+	VCVTPS2PD (DI)(BX*4), Y3
+	VSUBPD    Y0, Y3, Y3
+	VADDPD    Y3, Y1, Y1
+	VMULPD    Y3, Y3, Y3
+	VADDPD    Y3, Y2, Y2
+	VCVTPS2PD (R8)(BX*4), Y3
+	VSUBPD    Y0, Y3, Y3
+	VADDPD    Y3, Y1, Y1
+	VMULPD    Y3, Y3, Y3
+	VADDPD    Y3, Y2, Y2
+	VCVTPS2PD (R9)(BX*4), Y3
+	VSUBPD    Y0, Y3, Y3
+	VADDPD    Y3, Y1, Y1
+	VMULPD    Y3, Y3, Y3
+	VADDPD    Y3, Y2, Y2
+	VCVTPS2PD (R10)(BX*4), Y3
+	VSUBPD    Y0, Y3, Y3
+	VADDPD    Y3, Y1, Y1
+	VMULPD    Y3, Y3, Y3
+	VADDPD    Y3, Y2, Y2
+	VMOVUPD   Y1, (AX)(BX*8)
+	VMOVUPD   Y2, (CX)(BX*8)
+	ADDQ      $0x00000004, BX
+	JMP       by4
+
+by4_end:
+	VZEROUPPER
+	RET

@@ -193,3 +193,27 @@ func slopes(out *float32, outStride int, in *float32, inStride int, value *float
 func ladder(inverse *float64, gained *float64, links *float64, n int, strengths *float64, rungs *float64) {
 	panic("kernel: no assembly for this processor")
 }
+
+func fromInt16(dst *float32, src *int16, n int) { panic("kernel: no assembly for this processor") }
+
+func fromInt16Scaled(dst *float32, src *int16, n int, slope float64, inter float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func fromUint16(dst *float32, src *int16, n int) { panic("kernel: no assembly for this processor") }
+
+func fromUint16Scaled(dst *float32, src *int16, n int, slope float64, inter float64) {
+	panic("kernel: no assembly for this processor")
+}
+
+func changes(sums *[8]float64, now *float32, before *float32, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func apart(sums *[8]float64, x *float32, others *[4]*float32, n int) {
+	panic("kernel: no assembly for this processor")
+}
+
+func courses(d1 *float64, d2 *float64, first *float32, volumes *[4]*float32, n int) {
+	panic("kernel: no assembly for this processor")
+}

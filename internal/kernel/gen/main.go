@@ -58,6 +58,13 @@ func generate() (map[string][]byte, error) {
 	ramps()
 	slopes()
 	ladder()
+	for _, unsigned := range []bool{false, true} {
+		from16(unsigned, false)
+		from16(unsigned, true)
+	}
+	changes()
+	apart()
+	courses()
 
 	f, err := g.Result()
 	if err != nil {
