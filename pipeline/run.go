@@ -388,33 +388,72 @@ func (w *worker) correctTime(ctx context.Context, p *Plan, data []float32, nt in
 	return slicetime.Correct(ctx, data, n[0], n[1], n[2], nt, p.Schedule, p.Timing.Origin, p.Settings.kernel(), w.workers)
 }
 
-// resample brings every volume to the reference, in place, each volume once. A
-// volume that stands there already is left as it is, bit for bit.
+// resample brings every volume to the reference, in place, each volume once.
 func (w *worker) resample(ctx context.Context, p *Plan, po *posed, data []float32, nt int) error {
 	if po.est == nil {
 		return ctx.Err()
 	}
-	poses := p.rowPoses(po)
 	nv := len(data) / nt
-	rs := make([]*realign.Resampler, max(1, w.workers))
+	r := p.resampling(po, w.workers)
 	return parallel.For(ctx, w.workers, nt, func(worker, t int) error {
-		bySlice := po.path.Used && p.Settings.Order == "space-first"
-		if poses[t] == realign.Identity && !bySlice {
-			return nil
-		}
-		if rs[worker] == nil {
-			rs[worker] = realign.NewResampler(p.Grid.N, p.Settings.degree())
-		}
-		from := realign.PoseMap(p.Grid, poses[t])
-		if bySlice {
-			// Slices that have not been moved in time yet stand at poses of their own.
-			from = realign.SlotMap(p.Grid, p.Schedule.Axis, func(k int) realign.Pose { return po.path.Slot(t, k) })
-		}
 		vol := data[t*nv : (t+1)*nv]
-		rs[worker].Load(vol)
-		rs[worker].Eval(vol, from)
+		r.volume(worker, t, vol, vol)
 		return nil
 	})
+}
+
+// A resampling brings the volumes of a run to the reference.
+type resampling struct {
+	p       *Plan
+	path    *realign.PathEstimate // nil: one pose a volume
+	poses   []realign.Pose        // nil: none
+	near    bool                  // every volume is resampled one axis after the other
+	scratch []*realign.Resampler  // by worker
+}
+
+// resampling prepares for so many workers.
+func (p *Plan) resampling(po *posed, workers int) *resampling {
+	r := &resampling{p: p, poses: p.rowPoses(po), scratch: make([]*realign.Resampler, max(1, workers))}
+	if r.poses != nil && po.path.Used && p.Settings.Order == "space-first" {
+		r.path = po.path
+	}
+	r.near = r.path == nil && allNear(p.Grid, r.poses)
+	return r
+}
+
+// allNear reports whether all volumes of a run can be resampled one axis after the other: they are
+// in the same way, or the noise would tell them apart.
+func allNear(g realign.Grid, poses []realign.Pose) bool {
+	return !slices.ContainsFunc(poses, func(p realign.Pose) bool {
+		return p != realign.Identity && !realign.NearIdentity(realign.PoseMap(g, p))
+	})
+}
+
+// volume writes volume t to dst, from src, which may be the same. A volume that stands at the
+// reference already stays as it is, bit for bit.
+func (r *resampling) volume(worker, t int, dst, src []float32) {
+	if r.poses == nil || r.poses[t] == realign.Identity && r.path == nil {
+		if &dst[0] != &src[0] {
+			copy(dst, src)
+		}
+		return
+	}
+	s := r.scratch[worker]
+	if s == nil {
+		s = realign.NewResampler(r.p.Grid.N, r.p.Settings.degree())
+		r.scratch[worker] = s
+	}
+	from := realign.PoseMap(r.p.Grid, r.poses[t])
+	if r.path != nil {
+		// Slices that have not been moved in time yet stand at poses of their own.
+		from = realign.SlotMap(r.p.Grid, r.p.Schedule.Axis, func(k int) realign.Pose { return r.path.Slot(t, k) })
+	}
+	if r.near {
+		s.Near(dst, src, from)
+		return
+	}
+	s.Load(src)
+	s.Eval(dst, from)
 }
 
 // inputFiles describes what the run was computed from, for its record.

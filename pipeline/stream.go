@@ -10,7 +10,6 @@ import (
 	"evenkeel/internal/parallel"
 	"evenkeel/nifti"
 	"evenkeel/quality"
-	"evenkeel/realign"
 	"evenkeel/slicetime"
 )
 
@@ -55,19 +54,18 @@ func batches(nt int, needs, look func(t int) (first, last int)) (steps []batch, 
 
 // current is what a pass holds.
 type current struct {
-	w       *worker
-	p       *Plan
-	nt, nv  int
-	count   []bool // volumes that enter averages
-	poses   []realign.Pose
-	window  *slicetime.Window // nil: nothing is moved in time
-	raw     [][]float32       // volume t in raw[t%len(raw)]
-	steady  [][]float32       // likewise
-	before  *looks
-	after   *looks
-	spikes  *quality.Spikes
-	scratch []*realign.Resampler
-	out     *nifti.VolumeWriter
+	w      *worker
+	p      *Plan
+	nt, nv int
+	count  []bool // volumes that enter averages
+	space  *resampling
+	window *slicetime.Window // nil: nothing is moved in time
+	raw    [][]float32       // volume t in raw[t%len(raw)]
+	steady [][]float32       // likewise
+	before *looks
+	after  *looks
+	spikes *quality.Spikes
+	out    *nifti.VolumeWriter
 }
 
 // looks are the measures taken both of the raw and of the corrected series.
@@ -99,7 +97,7 @@ func (l *looks) results(nt int, counts []bool) (dvars []float64, tsnr []float32)
 // what comes out and writes it to out as an image with header h. The fields of m
 // that measureRaw and measureSteady fill are filled.
 func (w *worker) stream(ctx context.Context, p *Plan, po *posed, r *reel, m *measures, h *nifti.Header, out io.Writer) (err error) {
-	c := &current{w: w, p: p, nt: r.nt, nv: r.nv, count: m.counts(), poses: p.rowPoses(po)}
+	c := &current{w: w, p: p, nt: r.nt, nv: r.nv, count: m.counts(), space: p.resampling(po, w.workers)}
 	n := p.Grid.N
 	if c.window, err = p.window(); err != nil {
 		return err
@@ -110,7 +108,6 @@ func (w *worker) stream(ctx context.Context, p *Plan, po *posed, r *reel, m *mea
 	c.raw = make([][]float32, ring)
 	c.steady = make([][]float32, min(c.nt, batchVolumes+1)) // and the last of the batch before
 	workers := max(1, w.workers)
-	c.scratch = make([]*realign.Resampler, workers)
 	if c.out, err = nifti.NewVolumeWriter(out, h, true, 2*workers+1); err != nil {
 		return err
 	}
@@ -282,16 +279,7 @@ func (c *current) one(worker, t int, at func(t int) []float32) error {
 		c.window.Volume(dst, t, at)
 		src = dst
 	}
-	switch {
-	case c.poses != nil && c.poses[t] != realign.Identity:
-		if c.scratch[worker] == nil {
-			c.scratch[worker] = realign.NewResampler(c.p.Grid.N, c.p.Settings.degree())
-		}
-		c.scratch[worker].Load(src)
-		c.scratch[worker].Eval(dst, realign.PoseMap(c.p.Grid, c.poses[t]))
-	case c.window == nil:
-		copy(dst, src)
-	}
+	c.space.volume(worker, t, dst, src)
 	err := c.out.Volume(t, dst)
 	whole = true
 	if err == nil && c.w.share != nil {

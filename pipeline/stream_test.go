@@ -570,3 +570,18 @@ func TestStreamAllocatesNothingForAVolume(t *testing.T) {
 }
 
 var _ realign.Series = (*reel)(nil)
+
+// One volume that turned far, and all go the same way; shifts alone do not matter.
+func TestResampledInOneWay(t *testing.T) {
+	g := realign.Grid{N: watchSize, Affine: watchAffine()}
+	pose := func(shift, turn float64) realign.Pose {
+		return realign.FromParams([3]float64{shift, 0, 0}, [3]float64{turn, 0, 0}, [3]float64{})
+	}
+	still := realign.Identity
+	if !allNear(g, nil) || !allNear(g, []realign.Pose{still, pose(30, 0), pose(1, 0.01)}) {
+		t.Error("poses near the reference are not taken so")
+	}
+	if allNear(g, []realign.Pose{still, pose(1, 0.01), pose(0, 0.2), still}) {
+		t.Error("a turn of eleven degrees is taken for a small one")
+	}
+}
