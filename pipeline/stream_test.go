@@ -267,46 +267,55 @@ func TestBatches(t *testing.T) {
 		if !grows(needs) || !grows(look) {
 			t.Skip("not like a window")
 		}
-		steps, ring := batches(nt, needs, look)
-		at := make([]int, ring)
-		for i := range at {
-			at[i] = -1
-		}
-		have := func(u int) {
-			if u >= 0 && at[u%ring] != u {
-				t.Fatalf("volume %d is not in the ring", u)
-			}
-		}
-		var was batch
-		for _, b := range steps {
-			if b.made-was.made > batchVolumes || b.made <= was.made || b.read < was.read || b.measured < was.measured {
-				t.Fatalf("%+v after %+v", b, was)
-			}
-			for u := was.read; u < b.read; u++ {
-				at[u%ring] = u
-			}
-			for u := was.read; u < b.read; u++ {
-				have(u)
-				have(u - 1)
-			}
-			for u := was.made; u < b.made; u++ {
-				first, last := needs(u)
-				for k := first; k <= last; k++ {
-					have(k)
-				}
-			}
-			for u := was.measured; u < b.measured; u++ {
-				first, last := look(u)
-				for k := first; k <= last; k++ {
-					have(k)
-				}
-			}
-			was = b
-		}
-		if was != (batch{nt, nt, nt}) || ring > nt {
-			t.Fatalf("ended at %+v of %d, ring %d", was, nt, ring)
-		}
+		checkBatches(t, nt, needs, look)
 	})
+	// Each from itself alone: what is needed besides is the volume before.
+	alone := func(u int) (int, int) { return u, u }
+	for _, nt := range []int{1, 2, batchVolumes, batchVolumes + 1, 5*batchVolumes - 3} {
+		checkBatches(t, nt, alone, alone)
+	}
+}
+
+func checkBatches(t interface{ Fatalf(string, ...any) }, nt int, needs, look func(int) (int, int)) {
+	steps, ring := batches(nt, needs, look)
+	at := make([]int, ring)
+	for i := range at {
+		at[i] = -1
+	}
+	have := func(u int) {
+		if u >= 0 && at[u%ring] != u {
+			t.Fatalf("volume %d is not in the ring", u)
+		}
+	}
+	var was batch
+	for _, b := range steps {
+		if b.made-was.made > batchVolumes || b.made <= was.made || b.read < was.read || b.measured < was.measured {
+			t.Fatalf("%+v after %+v", b, was)
+		}
+		for u := was.read; u < b.read; u++ {
+			at[u%ring] = u
+		}
+		for u := was.read; u < b.read; u++ {
+			have(u)
+			have(u - 1)
+		}
+		for u := was.made; u < b.made; u++ {
+			first, last := needs(u)
+			for k := first; k <= last; k++ {
+				have(k)
+			}
+		}
+		for u := was.measured; u < b.measured; u++ {
+			first, last := look(u)
+			for k := first; k <= last; k++ {
+				have(k)
+			}
+		}
+		was = b
+	}
+	if was != (batch{nt, nt, nt}) || ring > nt {
+		t.Fatalf("ended at %+v of %d, ring %d", was, nt, ring)
+	}
 }
 
 // watchReel is the raw series of a run of nt volumes.
@@ -371,8 +380,16 @@ func TestReelBreaksOff(t *testing.T) {
 		goroutines := runtime.NumGoroutine()
 		for _, workers := range []int{1, 4} {
 			var turns parallel.Turns
+			six := make(chan struct{})
 			err := r.Each(t.Context(), workers, nil, func(_, u int, _ []float32) error {
 				return turns.Do(u, func() error {
+					switch {
+					case u == 5 && workers > 1:
+						<-six // which fails later
+					case u == 6:
+						close(six)
+						time.Sleep(20 * time.Millisecond)
+					}
 					if u >= 5 {
 						return fmt.Errorf("leak in hold %d", u)
 					}
