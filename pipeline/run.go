@@ -59,7 +59,7 @@ type posed struct {
 }
 
 // run does the plans of a unit; the result has one outcome a plan. It holds at most one
-// series at a time, the pose series first, so that no file is read twice. A run that
+// series at a time, the pose series first. A run that
 // panics fails alone: what its companions have published stands.
 func (w *worker) run(ctx context.Context, u unit) []Outcome {
 	out := make([]Outcome, len(u.plans))
@@ -194,6 +194,7 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder
 		return nil, err
 	}
 
+	runtime.GC() // as in inMemory
 	end = stage("write")
 	inputs := p.inputFiles(raw, po)
 	// The last look at the inputs: what was read is what the record names.

@@ -1,7 +1,10 @@
 package main
 
 import (
+	"encoding/json"
 	"fmt"
+	"maps"
+	"os"
 	"path/filepath"
 	"slices"
 	"strconv"
@@ -11,6 +14,7 @@ import (
 	"time"
 
 	"evenkeel/pipeline"
+	"evenkeel/provenance"
 )
 
 // screen shows what a terminal would after these bytes, as far as the bar uses one: line
@@ -303,6 +307,53 @@ func TestRunsTellShares(t *testing.T) {
 			told := shares[stage]
 			if len(told) < 2*crewVolumes || !slices.IsSorted(told) || told[0] > 0.1 || told[len(told)-1] < 0.999 || told[len(told)-1] > 1.001 {
 				t.Errorf("%s, %s: told %v", motion, stage, told)
+			}
+		}
+	}
+}
+
+// The JSON log and the record tell how long the stages lasted, in the same words: those of a
+// run in memory and those of a streamed one.
+func TestStageSeconds(t *testing.T) {
+	for _, c := range []struct{ args, stages []string }{
+		{nil, []string{"estimate", "joint", "measure-raw", "measure-steady", "read", "write"}},
+		{[]string{"--motion", "volume", "--time", "sinc"}, []string{"estimate", "steady", "write"}},
+	} {
+		dir, out := t.TempDir(), filepath.Join(t.TempDir(), "out")
+		writeDataset(dir, newSailor().files(theRun))
+		code, stdout, stderr := run(append([]string{"steady", dir, out, "--log", "json"}, c.args...)...)
+		if code != 0 {
+			t.Fatal(dump(code, stdout, stderr))
+		}
+		var told map[string]float64
+		for _, line := range strings.Split(strings.TrimSpace(stderr), "\n") {
+			var e struct {
+				Event   string
+				Seconds map[string]float64 `json:"stage_seconds"`
+			}
+			if err := json.Unmarshal([]byte(line), &e); err != nil {
+				t.Fatal(err)
+			}
+			if e.Event == "done" {
+				told = e.Seconds
+			}
+		}
+		record, err := os.ReadFile(filepath.Join(out, filepath.FromSlash(theRun+"_desc-steady_prov.json")))
+		if err != nil {
+			t.Fatal(err)
+		}
+		r, err := provenance.Parse(record)
+		if err != nil {
+			t.Fatal(err)
+		}
+		for _, seconds := range []map[string]float64{told, r.Log.StageSeconds} {
+			if got := slices.Sorted(maps.Keys(seconds)); !slices.Equal(got, c.stages) {
+				t.Errorf("%v: stages %v, want %v", c.args, got, c.stages)
+			}
+			for stage, s := range seconds {
+				if s <= 0 {
+					t.Errorf("%v: %s lasted %g s", c.args, stage, s)
+				}
 			}
 		}
 	}
