@@ -238,6 +238,36 @@ func TestStreamBreaksOff(t *testing.T) {
 			t.Errorf("%d goroutines, %d before", n, goroutines)
 		}
 	}
+	// A part ends by itself, and what follows it in the file is not looked at.
+	cut := writeFile(t, "cut.nii.gz", func() []byte {
+		b, err := os.ReadFile(path)
+		if err != nil {
+			t.Fatal(err)
+		}
+		return b[:len(b)-8]
+	}())
+	for _, count := range []int{0, 1, 7, 50} {
+		st, err := OpenPart(cut, nil, 0, count, 3)
+		if err != nil {
+			t.Fatal(err)
+		}
+		n := 0
+		for {
+			v, e := st.Next()
+			if err = e; err != nil {
+				break
+			}
+			if v.Index() != n {
+				t.Errorf("volume %d, want %d", v.Index(), n)
+			}
+			n++
+			v.Release()
+		}
+		if (err == io.EOF) != (count < 50) || st.Volumes() != count || n < min(count, 49) {
+			t.Errorf("a part of %d: %d volumes, %v", count, n, err)
+		}
+		st.Close()
+	}
 	if _, err := OpenStream(path, nil, 50, 3); asError(t, err).Field != "dim[4]" {
 		t.Error(err)
 	}

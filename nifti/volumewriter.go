@@ -299,27 +299,44 @@ func (pk *packer) pack(p *packet, f *frame, v []float32) (notFinite int, err err
 // panic in fill is raised again here, as package internal/parallel does.
 func WriteVolumes(ctx context.Context, w io.Writer, h *Header, compress bool, workers int, fill func(worker, n int, dst []float32) error) error {
 	workers = max(workers, 1)
+	dst := make([][]float32, workers)
+	return writeVolumes(ctx, w, h, compress, workers, func(worker, n int) ([]float32, error) {
+		if dst[worker] == nil {
+			dst[worker] = make([]float32, h.voxels())
+		}
+		return dst[worker], fill(worker, n, dst[worker])
+	})
+}
+
+// WriteSeries is [WriteVolumes] for volumes that are in memory: volume n is
+// data[n*nv:(n+1)*nv], nv being nx*ny*nz; another length panics.
+func WriteSeries(ctx context.Context, w io.Writer, h *Header, compress bool, workers int, data []float32) error {
+	nv := h.voxels()
+	if _, _, _, nt := h.Size(); len(data) != nv*nt {
+		panic("nifti: WriteSeries of another number of values than the image has voxels")
+	}
+	return writeVolumes(ctx, w, h, compress, max(workers, 1), func(_, n int) ([]float32, error) { return data[n*nv:][:nv], nil })
+}
+
+// writeVolumes writes the volumes that give gives.
+func writeVolumes(ctx context.Context, w io.Writer, h *Header, compress bool, workers int, give func(worker, n int) ([]float32, error)) error {
 	vw, err := NewVolumeWriter(w, h, compress, 2*workers+1)
 	if err != nil {
 		return err
 	}
 	stop := context.AfterFunc(ctx, func() { vw.Abort(ctx.Err()) })
 	defer stop()
-	dst := make([][]float32, workers)
 	err = parallel.For(ctx, workers, vw.nt, func(worker, n int) error {
-		if dst[worker] == nil {
-			dst[worker] = make([]float32, vw.h.voxels())
-		}
 		whole := false
 		defer func() {
 			if !whole {
 				vw.Abort(errGivenUp)
 			}
 		}()
-		err := fill(worker, n, dst[worker])
+		v, err := give(worker, n)
 		whole = true
 		if err == nil {
-			return vw.Volume(n, dst[worker])
+			return vw.Volume(n, v)
 		}
 		vw.Abort(err)
 		return err

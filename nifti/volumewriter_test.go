@@ -150,6 +150,17 @@ func TestVolumeWriterBytes(t *testing.T) {
 				if !bytes.Equal(got.Bytes(), want.Bytes()) {
 					t.Fatalf("%v %v, compressed %v, %d workers: WriteVolumes gives other bytes", c.dims, c.dt, compress, workers)
 				}
+				got.Reset()
+				data := make([]float32, h.voxels()*c.dims[3])
+				for n := range c.dims[3] {
+					numbered(h, n, data[n*h.voxels():][:h.voxels()])
+				}
+				if err := WriteSeries(context.Background(), &got, h, compress, workers, data); err != nil {
+					t.Fatal(err)
+				}
+				if !bytes.Equal(got.Bytes(), want.Bytes()) {
+					t.Fatalf("%v %v, compressed %v, %d workers: WriteSeries gives other bytes", c.dims, c.dt, compress, workers)
+				}
 			}
 			if !compress {
 				continue

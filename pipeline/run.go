@@ -535,10 +535,7 @@ func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data,
 	}
 	image := func(h *nifti.Header, data []float32) func(io.Writer) error {
 		return func(w io.Writer) error {
-			return nifti.WriteVolumes(ctx, w, h, true, workers, func(_, n int, dst []float32) error {
-				copy(dst, data[n*nv:(n+1)*nv])
-				return nil
-			})
+			return nifti.WriteSeries(ctx, w, h, true, workers, data)
 		}
 	}
 	text := func(b []byte) func(io.Writer) error {
