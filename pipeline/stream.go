@@ -18,6 +18,9 @@ import (
 // waiting at the meetings. It changes no byte.
 const batchVolumes = 8
 
+// windowVolumes is how many volumes at most a worker makes at a time. It changes no byte.
+const windowVolumes = 4
+
 // A batch is a step of a pass: the volumes up to (not including) those named are, after
 // it, read, measured as they were, and made.
 type batch struct{ read, measured, made int }
@@ -244,8 +247,10 @@ func (c *current) make(ctx context.Context, workers int, was, b batch) error {
 		room(c.steady, t, c.nv)
 	}
 	at := func(t int) []float32 { return c.raw[t%len(c.raw)] }
-	// The longest pieces first.
-	made, changes, looked := b.made-was.made, b.read-was.read, b.measured-was.measured
+	// The longest pieces first: a few volumes each, which the window makes with fewer trips
+	// to memory than one by one.
+	few := max(1, min(windowVolumes, (b.made-was.made)/workers))
+	made, changes, looked := (b.made-was.made+few-1)/few, b.read-was.read, b.measured-was.measured
 	blocks := c.before.course.Blocks()
 	if len(read) == 0 {
 		blocks = 0
@@ -253,7 +258,7 @@ func (c *current) make(ctx context.Context, workers int, was, b batch) error {
 	return parallel.For(ctx, workers, made+looked+changes+blocks, func(worker, i int) error {
 		switch {
 		case i < made:
-			return c.one(worker, was.made+i, at)
+			return c.some(worker, was.made+i*few, min(was.made+(i+1)*few, b.made), at)
 		case i < made+looked:
 			c.spikes.Volume(was.measured+i-made, at)
 		case i < made+looked+changes:
@@ -265,25 +270,33 @@ func (c *current) make(ctx context.Context, workers int, was, b batch) error {
 	})
 }
 
-// one makes volume t and hands it over to be written.
-func (c *current) one(worker, t int, at func(t int) []float32) error {
+// some makes the volumes between two and hands them over to be written.
+func (c *current) some(worker, from, to int, at func(t int) []float32) (err error) {
 	whole := false
 	defer func() {
 		if !whole { // a panic
 			c.out.Abort(errGivenUp)
 		}
 	}()
-	dst := c.steady[t%len(c.steady)]
-	src := at(t)
 	if c.window != nil {
-		c.window.Volume(dst, t, at)
-		src = dst
+		var room [windowVolumes][]float32
+		dst := room[:0]
+		for t := from; t < to; t++ {
+			dst = append(dst, c.steady[t%len(c.steady)])
+		}
+		c.window.Volumes(dst, from, at)
 	}
-	c.space.volume(worker, t, dst, src)
-	err := c.out.Volume(t, dst)
+	for t := from; t < to && err == nil; t++ {
+		dst := c.steady[t%len(c.steady)]
+		src := dst
+		if c.window == nil {
+			src = at(t)
+		}
+		c.space.volume(worker, t, dst, src)
+		if err = c.out.Volume(t, dst); err == nil && c.w.share != nil {
+			c.w.share(c.p, "steady", float64(t+1)/float64(c.nt))
+		}
+	}
 	whole = true
-	if err == nil && c.w.share != nil {
-		c.w.share(c.p, "steady", float64(t+1)/float64(c.nt))
-	}
 	return err
 }
