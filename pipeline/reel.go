@@ -85,13 +85,14 @@ type pass struct {
 	t      int // next volume
 	stream *nifti.Stream
 	digest *provenance.Digester
+	keeps  bool
 	kept   []*nifti.StoredVolume
 }
 
 // begin starts a pass over the first count volumes, of which at most so many are decoded
 // ahead. It must be closed, and ends well only with finish.
 func (r *reel) begin(ctx context.Context, count, ahead int) (*pass, error) {
-	s := &pass{r: r, ctx: ctx, count: count}
+	s := &pass{r: r, ctx: ctx, count: count, keeps: r.keep && count == r.nt}
 	if r.kept != nil {
 		return s, nil
 	}
@@ -132,15 +133,15 @@ func (s *pass) next() (*nifti.StoredVolume, error) {
 		return nil, s.r.failed(s.ctx, err)
 	}
 	s.t++
-	if s.r.keep && s.count == s.r.nt {
+	if s.keeps {
 		s.kept = append(s.kept, v)
 	}
 	return v, nil
 }
 
-// release takes a volume back.
+// release takes a volume back, from any goroutine.
 func (s *pass) release(v *nifti.StoredVolume) {
-	if s.stream != nil && s.kept == nil {
+	if s.stream != nil && !s.keeps {
 		v.Release()
 	}
 }
@@ -159,7 +160,7 @@ func (s *pass) finish() error {
 	if s.digest != nil {
 		s.r.digest = s.digest
 	}
-	if s.kept != nil {
+	if s.keeps {
 		s.r.kept = s.kept
 	}
 	return nil
