@@ -17,7 +17,7 @@ import (
 // leaves may be known to all: fault (values without behaviour), and the
 // internal ones (arithmetic, loops, kernels, decompression).
 var rooms = map[string][]string{
-	"cmd/evenkeel-bench":  {"nifti"},
+	"cmd/evenkeel-bench":  {"nifti", "realign"},
 	"cmd/evenkeel":        {"pipeline", "dataset", "provenance", "realign", "quality", "phantom"},
 	"pipeline":            {"dataset", "sidecar", "nifti", "slicetime", "realign", "quality", "provenance"},
 	"dataset":             {},
