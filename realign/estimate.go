@@ -885,7 +885,13 @@ func (g *Grid) wellInside(x *[3]float64) bool {
 func (g Grid) depth(x [3]float64) float64 {
 	d := math.Inf(1)
 	for a, v := range x {
-		d = min(d, v, float64(g.N[a]-1)-v)
+		// Not min, which takes care of NaN.
+		if v < d {
+			d = v
+		}
+		if u := float64(g.N[a]-1) - v; u < d {
+			d = u
+		}
 	}
 	return d
 }
