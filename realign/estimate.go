@@ -582,7 +582,9 @@ func (e *estimator) quieten(m *model, vols []Volume, left *leftovers, passes int
 // that does not lead to a good match.
 func (e *estimator) search(w *workspace, m *model, how effort) found {
 	rough := e.roughEffort()
-	c := w.m.match(m.coarse, w.sCoarse, Identity, rough)
+	first := rough
+	first.draft = true
+	c := w.m.match(m.coarse, w.sCoarse, Identity, first)
 	best := e.refine(w, m, c.pose, how)
 	best.iterations += c.iterations
 	if best.fit >= fanBelow && best.converged {
@@ -671,7 +673,7 @@ func (e *estimator) roughEffort() effort {
 // the rows, the rest as how says.
 func (e *estimator) refine(w *workspace, m *model, start Pose, how effort) found {
 	near := how
-	near.thin, near.tolerance = true, max(how.tolerance, coarseTolerance)
+	near.thin, near.draft, near.tolerance = true, true, max(how.tolerance, coarseTolerance)
 	a := w.m.match(m.fine, w.sFine, start, near)
 	b := w.m.match(m.fine, w.sFine, a.pose, how)
 	b.iterations += a.iterations

@@ -37,6 +37,7 @@ type effort struct {
 	iterations int
 	robust     bool // weights by slice and by Tukey's biweight
 	thin       bool // every fourth row only
+	draft      bool // only the pose is wanted
 	sliceAxis  int
 	skip       []bool // slices that take no part; nil: all do
 }
@@ -220,6 +221,9 @@ func (m *matcher) match(t *target, s *spline, start Pose, e effort) found {
 			f.converged = true
 			break
 		}
+	}
+	if e.draft {
+		return f
 	}
 	f.gain = scannerGain(gain, f.pose, t.centre)
 	var weights []float64

@@ -130,33 +130,35 @@ func newPathEstimator(ctx context.Context, g Grid, series Series, s slicetime.Sc
 	e.weak = e.weakSlices(est.Volumes, -1)
 	e.gains = est.sliceGains(g, s)
 	e.region = dilate(est.Mask, g.N, regionRim)
+	e.regionRows = extentsOf(e.region, g.N)
 	return e, nil
 }
 
 // pathEstimator holds what the passes share.
 type pathEstimator struct {
 	*estimator
-	schedule slicetime.Schedule
-	est      *Estimate
-	shots    []slicetime.Shot
-	shotOf   []int // by slice
-	times    []float64
-	p        []params // the path
-	at       []params // the path and the offsets of the shots: where slots are measured
-	poses    []Pose   // of at
-	chain    *chain
-	t        *template // unsmoothed
-	image    []float32
-	region   []bool
-	weak     [][]bool       // by volume and slice: as the volume match found
-	spoilt   [][]bool       // left out of the template; nil: not judged yet
-	gains    [][][4]float64 // by volume and slice
-	voxel    []float32      // weight of each voxel of the template; nil: all alike
-	thin     bool           // every other pixel only
-	others   bool           // with thin: the other half of them
-	chess    [2][]bool      // by x: the voxels of a row that are even, and those that are odd
-	noise    float64        // as seen so far, in units of the volumes
-	scale    []float64      // residual scale of each slot, 0: no data
+	schedule   slicetime.Schedule
+	est        *Estimate
+	shots      []slicetime.Shot
+	shotOf     []int // by slice
+	times      []float64
+	p          []params // the path
+	at         []params // the path and the offsets of the shots: where slots are measured
+	poses      []Pose   // of at
+	chain      *chain
+	t          *template // unsmoothed
+	image      []float32
+	region     []bool
+	regionRows *extents
+	weak       [][]bool       // by volume and slice: as the volume match found
+	spoilt     [][]bool       // left out of the template; nil: not judged yet
+	gains      [][][4]float64 // by volume and slice
+	voxel      []float32      // weight of each voxel of the template; nil: all alike
+	thin       bool           // every other pixel only
+	others     bool           // with thin: the other half of them
+	chess      [2][]bool      // by x: the voxels of a row that are even, and those that are odd
+	noise      float64        // as seen so far, in units of the volumes
+	scale      []float64      // residual scale of each slot, 0: no data
 	// sliceScale is the same by volume and slice.
 	sliceScale []float64
 	signal     float64 // rms in the head

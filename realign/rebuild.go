@@ -525,6 +525,11 @@ func (e *pathEstimator) predicted(m *[16]float64, y, z int, box *[2][3]int) (x, 
 		return e.t.inField(at) && e.region[e.t.nearest(at)]
 	}
 	x, end = box[0][0], box[1][0]+1
+	// Where the row leads past rows of the region only, it can be told from those.
+	if first, last, ok := e.regionRows.along(m, &o, end-1); ok {
+		end = min(end, last+1)
+		x = min(max(x, first), end)
+	}
 	for x < end && !in(x) {
 		x++
 	}
@@ -532,6 +537,52 @@ func (e *pathEstimator) predicted(m *[16]float64, y, z int, box *[2][3]int) (x, 
 		end--
 	}
 	return x, end
+}
+
+// extents holds, for each row of a field, the first and the last voxel of a mask in that row
+// and the rows around it; first > last where there is none.
+type extents struct {
+	n           [3]int
+	first, last []int
+}
+
+func extentsOf(mask []bool, n [3]int) *extents {
+	e := &extents{n: n, first: make([]int, n[1]*n[2]), last: make([]int, n[1]*n[2])}
+	for row := range e.first {
+		e.first[row], e.last[row] = n[0], -1
+	}
+	for _, s := range spansOf(mask, n) {
+		for z := max(0, s.z-1); z <= min(n[2]-1, s.z+1); z++ {
+			for y := max(0, s.y-1); y <= min(n[1]-1, s.y+1); y++ {
+				row := y + n[1]*z
+				e.first[row], e.last[row] = min(e.first[row], s.x), max(e.last[row], s.x+s.n-1)
+			}
+		}
+	}
+	return e
+}
+
+// along gives the voxels x of a row, of 0 to end, that m can take to voxels of the mask; o is
+// where it takes the first. ok is false where the row leads too far across others.
+func (e *extents) along(m *[16]float64, o *[3]float64, end int) (first, last int, ok bool) {
+	if !(m[0] > 0.5) {
+		return 0, 0, false
+	}
+	var at [3]int
+	for a := 1; a < 3; a++ {
+		half := float64(m[4*a] * float64(end) / 2)
+		// Half a voxel either way is nearest to the middle row or one beside it.
+		middle := math.Floor(o[a] + half + 0.5)
+		if !(math.Abs(half) < 0.5) || !(middle >= 0 && middle < float64(e.n[a])) {
+			return 0, 0, false
+		}
+		at[a] = int(middle)
+	}
+	row := at[1] + e.n[1]*at[2]
+	if e.first[row] > e.last[row] {
+		return 0, -1, true
+	}
+	return int((float64(e.first[row])-0.5-o[0])/m[0]) - 1, int((float64(e.last[row])+0.5-o[0])/m[0]) + 1, true
 }
 
 // unpredictedPoints takes the prediction out of a row whose voxels stand at poses of
