@@ -27,16 +27,6 @@ func gradient5(v *float32, gx *float32, gy *float32, gz *float32, c *float32, mx
 //go:noescape
 func symmetric(dst *float32, n int, rows **float32, h *float32, reach int, masks *int32)
 
-// combine is the assembly of combinePlain.
-//
-//go:noescape
-func combine(dst *float32, n int, w *float32, src **float32, taps int, add bool, masks *int32)
-
-// combineInt16 is the assembly of combineInt16Plain.
-//
-//go:noescape
-func combineInt16(dst *float32, n int, w *float32, src **int16, taps int, add bool, masks *int32)
-
 // affineRow3 is the assembly of affineRow3Plain.
 //
 //go:noescape
@@ -121,11 +111,6 @@ func abs(dst *float32, src *float32, n int, masks *int32)
 //
 //go:noescape
 func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int
-
-// cells is the assembly of cellsPlain; n is a multiple of 8.
-//
-//go:noescape
-func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32)
 
 // pass3 is the assembly of passPlain, degree 3.
 //

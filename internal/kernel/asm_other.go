@@ -24,14 +24,6 @@ func symmetric(dst *float32, n int, rows **float32, h *float32, reach int, masks
 	panic("kernel: no assembly for this processor")
 }
 
-func combine(dst *float32, n int, w *float32, src **float32, taps int, add bool, masks *int32) {
-	panic("kernel: no assembly for this processor")
-}
-
-func combineInt16(dst *float32, n int, w *float32, src **int16, taps int, add bool, masks *int32) {
-	panic("kernel: no assembly for this processor")
-}
-
 func affineRow3(dst *float32, n int, c *float32, mx int, area int, axes *float64, table *float32, masks *int32) {
 	panic("kernel: no assembly for this processor")
 }
@@ -97,10 +89,6 @@ func abs(dst *float32, src *float32, n int, masks *int32) {
 }
 
 func locate(base *int32, near *int32, index *int32, tx *float32, ty *float32, tz *float32, first int, count int, axes *float64, strides *int32, mask *bool, accept *bool, table *float64, order *uint8) int {
-	panic("kernel: no assembly for this processor")
-}
-
-func cells(base *int32, tx *float32, ty *float32, tz *float32, x *float64, y *float64, z *float64, n int, limits *float64, strides *int32) {
 	panic("kernel: no assembly for this processor")
 }
 

@@ -11,34 +11,24 @@ import (
 
 // firCase is rows and taps for all filters.
 type firCase struct {
-	n     int
-	h, w  []float32
-	rows  [][]float32 // for Symmetric
-	line  []float32
-	src   [][]float32 // for Combine
-	short [][]int16
-	old   []float32
+	n    int
+	h    []float32
+	rows [][]float32 // for Symmetric
+	line []float32
+	old  []float32
 }
 
-func newFIR(seed uint64, n, reach, taps int) *firCase {
+func newFIR(seed uint64, n, reach int) *firCase {
 	r := random(seed)
-	c := &firCase{n: n, h: noise(r, reach+1), w: noise(r, taps), line: noise(r, n+2*reach), old: noise(r, n)}
+	c := &firCase{n: n, h: noise(r, reach+1), line: noise(r, n+2*reach), old: noise(r, n)}
 	for range 2*reach + 1 {
 		c.rows = append(c.rows, noise(r, n))
-	}
-	for range taps {
-		c.src = append(c.src, noise(r, n))
-		row := make([]int16, n)
-		for i := range row {
-			row[i] = int16(r.Uint32())
-		}
-		c.short = append(c.short, row)
 	}
 	return c
 }
 
 func (c *firCase) run() [][]float32 {
-	var out [6][]float32
+	var out [2][]float32
 	for k := range out {
 		out[k] = slices.Clone(c.old)
 	}
@@ -49,16 +39,12 @@ func (c *firCase) run() [][]float32 {
 func (c *firCase) into(out [][]float32) {
 	Symmetric(out[0], c.h, c.rows)
 	SymmetricLine(out[1], c.h, c.line)
-	Combine(out[2], c.w, c.src, false)
-	Combine(out[3], c.w, c.src, true)
-	CombineInt16(out[4], c.w, c.short, false)
-	CombineInt16(out[5], c.w, c.short, true)
 }
 
 func TestFIRTwins(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		n := rapid.OneOf(rapid.IntRange(0, 20), rapid.IntRange(0, 200)).Draw(t, "n")
-		c := newFIR(rapid.Uint64().Draw(t, "seed"), n, rapid.IntRange(0, MostReach).Draw(t, "reach"), rapid.IntRange(0, 2*tapsAtOnce+3).Draw(t, "taps"))
+		c := newFIR(rapid.Uint64().Draw(t, "seed"), n, rapid.IntRange(0, MostReach).Draw(t, "reach"))
 		for i := range c.old {
 			if i%7 == 2 {
 				c.old[i], c.line[i] = float32(math.Copysign(0, -1)), float32(math.NaN())
@@ -68,34 +54,25 @@ func TestFIRTwins(t *testing.T) {
 	})
 }
 
-// Up to 70 terms below 2: sums of signs that differ stay below 32, and 140 roundings of
-// 2^-19 that do not line up add to some 12 x 2^-20 = 1e-5. Integers are 32768 times larger.
+// Up to 65 terms below 2: sums of signs that differ stay below 32, and 130 roundings of
+// 2^-19 that do not line up add to some 12 x 2^-20 = 1e-5.
 func TestFIRAgainstDirect(t *testing.T) {
-	for _, size := range [][3]int{{1, 0, 1}, {7, 3, 16}, {70, 16, 17}, {131, 32, 70}} {
-		c := newFIR(uint64(size[0]), size[0], size[1], size[2])
+	for _, size := range [][2]int{{1, 0}, {7, 3}, {70, 16}, {131, 32}} {
+		c := newFIR(uint64(size[0]), size[0], size[1])
 		for _, plain := range []bool{true, false} {
 			was := SetPlain(plain)
 			out := c.run()
 			SetPlain(was)
 			for i := range c.n {
-				var want [6]float64
+				var want [2]float64
 				r := size[1]
 				for k := -r; k <= r; k++ {
 					w := float64(c.h[max(k, -k)])
 					want[0] += w * float64(c.rows[r+k][i])
 					want[1] += w * float64(c.line[i+r+k])
 				}
-				for k, w := range c.w {
-					want[2] += float64(w) * float64(c.src[k][i])
-					want[4] += float64(w) * float64(c.short[k][i])
-				}
-				want[3], want[5] = want[2]+float64(c.old[i]), want[4]+float64(c.old[i])
 				for k, w := range want {
-					scale := 1.0
-					if k >= 4 {
-						scale = 32768
-					}
-					if d := math.Abs(float64(out[k][i]) - w); !(d < 1e-5*scale) {
+					if d := math.Abs(float64(out[k][i]) - w); !(d < 1e-5) {
 						t.Errorf("size %v, plain %v, output %d, value %d: %g, want %g", size, plain, k, i, out[k][i], w)
 					}
 				}
@@ -107,15 +84,12 @@ func TestFIRAgainstDirect(t *testing.T) {
 func TestFIRStaysInside(t *testing.T) {
 	for _, front := range []bool{false, true} {
 		for _, n := range []int{1, 2, 7, 8, 9, 31, 33, 63, 65, 76} {
-			c := newFIR(uint64(n), n, 4, 9)
-			c.h, c.w, c.line = fenced(t, c.h, front), fenced(t, c.w, front), fenced(t, c.line, front)
+			c := newFIR(uint64(n), n, 4)
+			c.h, c.line = fenced(t, c.h, front), fenced(t, c.line, front)
 			for k := range c.rows {
 				c.rows[k] = fenced(t, c.rows[k], front)
 			}
-			for k := range c.src {
-				c.src[k], c.short[k] = fenced(t, c.src[k], front), fenced(t, c.short[k], front)
-			}
-			var out [6][]float32
+			var out [2][]float32
 			for k := range out {
 				out[k] = fenced(t, c.old, front)
 			}
@@ -135,12 +109,12 @@ func TestFIRStaysInside(t *testing.T) {
 }
 
 func TestSameBytesFIR(t *testing.T) {
-	sameBytes(t, "084506c3ded12822", newFIR(9, 1003, 12, 21).run)
+	sameBytes(t, "04ac275a3a58949e", newFIR(9, 1003, 12).run)
 }
 
 // No kernel allocates, whichever twin runs.
 func TestNothingIsAllocated(t *testing.T) {
-	c := newFIR(1, 100, 8, 16)
+	c := newFIR(1, 100, 8)
 	var out [6][]float32
 	for k := range out {
 		out[k] = make([]float32, c.n)
@@ -174,18 +148,16 @@ func TestNothingIsAllocated(t *testing.T) {
 
 func BenchmarkFIR(b *testing.B) {
 	const n = 4096
-	c := newFIR(1, n, 6, 16)
+	c := newFIR(1, n, 6)
 	dst := make([]float32, n)
 	for _, plain := range []bool{false, true} {
 		name := map[bool]string{false: "asm", true: "plain"}[plain]
 		for k, f := range []func(){
 			func() { Symmetric(dst, c.h, c.rows) },
 			func() { SymmetricLine(dst[:70], c.h, c.line[:82]) },
-			func() { Combine(dst, c.w, c.src, true) },
-			func() { CombineInt16(dst, c.w, c.short, true) },
 		} {
-			items := []int{n, 70, n, n}[k]
-			b.Run(fmt.Sprintf("%s/%s", []string{"symmetric6", "line6", "combine16", "int16x16"}[k], name), func(b *testing.B) {
+			items := []int{n, 70}[k]
+			b.Run(fmt.Sprintf("%s/%s", []string{"symmetric6", "line6"}[k], name), func(b *testing.B) {
 				defer SetPlain(SetPlain(plain))
 				per := perItem()
 				for b.Loop() {

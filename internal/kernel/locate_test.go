@@ -255,49 +255,6 @@ func TestLocatePanics(t *testing.T) {
 	}
 }
 
-func cellsCase(seed uint64, count int) func() [][]float32 {
-	r := random(seed)
-	n := [3]int{1 + r.IntN(30), 1 + r.IntN(30), 1 + r.IntN(30)}
-	degree := 3 + 2*r.IntN(2)
-	pad := degree/2 + 1 + r.IntN(2)
-	var at [3][]float64
-	for a := range at {
-		at[a] = make([]float64, count)
-		for i := range at[a] {
-			at[a][i] = r.Float64()*float64(n[a]+4) - 2
-			if r.IntN(8) == 0 {
-				at[a][i] = []float64{0, float64(n[a] - 1), math.NaN(), math.Inf(1), math.Inf(-1), 1e300, math.Copysign(0, -1)}[r.IntN(7)]
-			}
-		}
-	}
-	return func() [][]float32 {
-		s := &Sites{Base: make([]int32, count), X: make([]float32, count), Y: make([]float32, count), Z: make([]float32, count)}
-		Cells(s.Base, s.X, s.Y, s.Z, at[0], at[1], at[2], n, pad, degree)
-		// By the definition.
-		for i, b := range s.Base {
-			for a, t := range [3]float32{s.X[i], s.Y[i], s.Z[i]} {
-				m := n[a] + 2*pad
-				c := int(b)%m - (pad - degree/2)
-				b /= int32(m)
-				want := math.Min(math.Max(at[a][i], 0), float64(n[a]-1))
-				if want != want {
-					want = 0
-				}
-				if c != int(want) || t != float32(want-float64(c)) {
-					panic(fmt.Sprintf("axis %d: cell %d and %g of coordinate %g", a, c, t, at[a][i]))
-				}
-			}
-		}
-		return s.rows()
-	}
-}
-
-func TestCellsTwins(t *testing.T) {
-	rapid.Check(t, func(t *rapid.T) {
-		both(t, cellsCase(rapid.Uint64().Draw(t, "seed"), rapid.IntRange(0, 60).Draw(t, "count")))
-	})
-}
-
 func BenchmarkLocate(b *testing.B) {
 	n := [3]int{64, 64, 36}
 	c := newRowCase(1, n, 5, 64)
@@ -329,18 +286,5 @@ func BenchmarkLocate(b *testing.B) {
 				per(b, 64, "point")
 			})
 		}
-		x := make([]float64, 64)
-		for i := range x {
-			x[i] = 0.3 + float64(i)
-		}
-		base, tx, ty, tz := make([]int32, 64), make([]float32, 64), make([]float32, 64), make([]float32, 64)
-		b.Run("cells/"+name, func(b *testing.B) {
-			defer SetPlain(SetPlain(plain))
-			per := perItem()
-			for b.Loop() {
-				Cells(base, tx, ty, tz, x, x, x, n, 3, 5)
-			}
-			per(b, 64, "point")
-		})
 	}
 }

@@ -9,8 +9,6 @@ import (
 
 func fir() {
 	symmetric()
-	combine(false)
-	combine(true)
 }
 
 // strips runs body over n values from i: many registers at a time, then one, then
@@ -83,87 +81,6 @@ func symmetric() {
 	mask = tailMask(masks, n)
 	body("rest", 1, true)
 	g.Label("done")
-	g.VZEROUPPER()
-	g.RET()
-}
-
-func combine(short bool) {
-	name, typ, size := "combine", "float32", 4
-	if short {
-		name, typ, size = "combineInt16", "int16", 2
-	}
-	function(name, "func(dst *float32, n int, w *float32, src **"+typ+", taps int, add bool, masks *int32)", name+" is the assembly of "+name+"Plain.")
-	dst, n, w, src, taps, masks := arg("dst"), arg("n"), arg("w"), arg("src"), arg("taps"), arg("masks")
-	add := g.GP8()
-	g.Load(g.Param("add"), add)
-	i, k, p := g.GP64(), g.GP64(), g.GP64()
-	var mask reg.VecVirtual
-	body := func(label string, vecs int, tail bool) {
-		acc := make([]reg.VecVirtual, vecs)
-		for v := range acc {
-			acc[v] = g.YMM()
-			g.VXORPS(acc[v], acc[v], acc[v])
-		}
-		place := func(v int) Mem { return Mem{Base: dst, Index: i, Scale: 4, Disp: 32 * v} }
-		g.TESTB(add, add)
-		g.JZ(LabelRef(label + "_zero"))
-		for v := range acc {
-			switch {
-			case tail && short:
-				g.VMOVSS(place(v), acc[v].AsX())
-			case tail:
-				g.VMASKMOVPS(place(v), mask, acc[v])
-			default:
-				g.VMOVUPS(place(v), acc[v])
-			}
-		}
-		g.Label(label + "_zero")
-		g.XORQ(k, k)
-		loop(label+"_tap", k, 1, taps, func() {
-			f := broadcast(indexed(w, k, 4))
-			g.MOVQ(indexed(src, k, 8), p)
-			for v := range acc {
-				x := g.YMM()
-				m := Mem{Base: p, Index: i, Scale: uint8(size), Disp: 8 * size * v}
-				switch {
-				case tail && short:
-					value := g.GP32()
-					g.MOVWLSX(m, value)
-					g.VXORPS(x.AsX(), x.AsX(), x.AsX())
-					g.VCVTSI2SSL(value, x.AsX(), x.AsX())
-				case short:
-					g.VPMOVSXWD(m, x)
-					g.VCVTDQ2PS(x, x)
-				case tail:
-					g.VMASKMOVPS(m, mask, x)
-				default:
-					accumulate(m, f, acc[v], x)
-					continue
-				}
-				accumulate(x, f, acc[v], x)
-			}
-		})
-		for v := range acc {
-			switch {
-			case tail && short:
-				g.VMOVSS(acc[v].AsX(), place(v))
-			case tail:
-				g.VMASKMOVPS(acc[v], mask, place(v))
-			default:
-				g.VMOVUPS(acc[v], place(v))
-			}
-		}
-	}
-	strips(8, n, i, body)
-	if short {
-		loop("one", i, 1, n, func() { body("rest", 1, true) })
-	} else {
-		g.SUBQ(i, n)
-		g.JZ(LabelRef("done"))
-		mask = tailMask(masks, n)
-		body("rest", 1, true)
-		g.Label("done")
-	}
 	g.VZEROUPPER()
 	g.RET()
 }

@@ -49,7 +49,6 @@ func generate() (map[string][]byte, error) {
 	gram()
 	rows()
 	locate()
-	cells()
 	passes()
 	interpolate(false)
 	interpolate(true)
