@@ -51,16 +51,6 @@ func (v *StoredVolume) Len() int { return v.n }
 // those left out.
 func (v *StoredVolume) Index() int { return v.index }
 
-// Int16 returns the stored voxels where the type of the image is [Int16], else
-// nil. They alias v and must not be changed; [Header.Scaling] tells what they
-// mean.
-func (v *StoredVolume) Int16() []int16 {
-	if v.conv.dt != Int16 {
-		return nil
-	}
-	return v.b16
-}
-
 // Float32 returns the values of an image that is held as such (see
 // [StoredVolume]), else nil. They alias v and must not be changed.
 func (v *StoredVolume) Float32() []float32 { return v.f32 }
@@ -146,47 +136,6 @@ func (v *StoredVolume) take(at int, b []byte, wide *[]float32) (int, float32) {
 		return i, w[i]
 	}
 	return -1, 0
-}
-
-// A StoredSeries is a whole image in memory, in the smallest form that loses
-// nothing; see [StoredVolume]. It may be read by several goroutines at once.
-type StoredSeries struct {
-	NX, NY, NZ, NT int
-	vols           []*StoredVolume
-}
-
-// Volume returns volume t, which stays a part of the series.
-func (s *StoredSeries) Volume(t int) *StoredVolume { return s.vols[t] }
-
-// Widen gives the len(dst) values of volume t from voxel number from on, as
-// [StoredVolume.Widen] does.
-func (s *StoredSeries) Widen(dst []float32, t, from int) { s.vols[t].Widen(dst, from) }
-
-// ReadStored is [ReadSeries] for a series as it is stored.
-func ReadStored(path string, tap io.Writer, skip int) (h *Header, s *StoredSeries, err error) {
-	r, nt, err := openBehind(path, tap, skip)
-	if err != nil {
-		return nil, nil, err
-	}
-	defer func() {
-		if e := r.Close(); e != nil && err == nil {
-			h, s, err = nil, nil, e
-		}
-	}()
-	nx, ny, nz, _ := r.h.Size()
-	s = &StoredSeries{NX: nx, NY: ny, NZ: nz, NT: nt}
-	for t := range nt {
-		v := NewStored(r.h)
-		v.index = t
-		if err := r.ReadStored(v); err != nil {
-			return nil, nil, err
-		}
-		s.vols = append(s.vols, v)
-	}
-	if err := r.SkipVolume(); err != io.EOF {
-		return nil, nil, err
-	}
-	return r.h, s, nil
 }
 
 // openBehind opens an image and reads past the first skip volumes; nt are left.

@@ -104,31 +104,37 @@ func TestStoredProperty(t *testing.T) {
 			t.Fatalf("after the end: %v", err)
 		}
 		seen.Reset()
-		h, ss, err := ReadStored(path, &seen, skip)
+		// Volumes that are kept stay what they are.
+		again, err := OpenStream(path, nil, skip, 1)
 		if err != nil {
 			t.Fatal(err)
 		}
-		if !bytes.Equal(seen.Bytes(), b) {
-			t.Fatal("the tap of ReadStored did not see the file")
+		defer again.Close()
+		if again.Volumes() != nt-skip || again.Header().Datatype != dt {
+			t.Fatalf("%d volumes of %v", again.Volumes(), again.Header().Datatype)
 		}
-		if ss.NX != nx || ss.NY != ny || ss.NZ != nz || ss.NT != nt-skip || h.Datatype != dt {
-			t.Fatalf("%+v", ss)
+		var kept []*StoredVolume
+		for range again.Volumes() {
+			v, err := again.Next()
+			if err != nil {
+				t.Fatal(err)
+			}
+			kept = append(kept, v)
 		}
-		for n := range ss.NT {
+		for n, v := range kept {
 			from := rapid.IntRange(0, nv).Draw(t, "from")
 			part := make([]float32, rapid.IntRange(0, nv-from).Draw(t, "length"))
-			ss.Widen(part, n, from)
+			v.Widen(part, from)
 			if i := sameFloats(part, want.Volume(n)[from:from+len(part)]); i >= 0 {
 				t.Fatalf("%v: value %d of volume %d differs", dt, from+i, n)
 			}
-			v := ss.Volume(n)
 			if v.Index() != n {
 				t.Fatal("index")
 			}
-			if (v.Int16() != nil) != (dt == Int16) || (v.Float32() != nil) != (dt.Bytes() >= 4) {
-				t.Fatalf("%v held as %v, %v", dt, v.Int16(), v.Float32())
+			if (v.b16 != nil) != (dt.Bytes() == 2) || (v.Float32() != nil) != (dt.Bytes() >= 4) {
+				t.Fatalf("%v held as %v, %v", dt, v.b16, v.Float32())
 			}
-			for i, x := range v.Int16() {
+			for i, x := range v.b16 {
 				if x != int16(im.order.Uint16(im.data[2*(i+nv*(n+skip)):])) {
 					t.Fatalf("stored voxel %d is %d", i, x)
 				}
@@ -137,7 +143,7 @@ func TestStoredProperty(t *testing.T) {
 	})
 }
 
-// Every malformed file gives ReadStored and a Stream the error that ReadSeries gives.
+// Every malformed file gives a Stream the error that ReadSeries gives.
 func TestStoredMalformed(t *testing.T) {
 	for _, c := range malformed {
 		if strings.HasSuffix(c.file, ".hdr") {
@@ -145,11 +151,6 @@ func TestStoredMalformed(t *testing.T) {
 		}
 		path := writeFile(t, c.file, c.make())
 		_, _, want := ReadSeries(path, nil, 0)
-		h, s, err := ReadStored(path, nil, 0)
-		if err == nil || h != nil || s != nil || err.Error() != want.Error() {
-			t.Errorf("%s: ReadStored: %v\nwant %v", c.name, err, want)
-		}
-		asError(t, err)
 		st, err := OpenStream(path, nil, 0, 2)
 		if err == nil {
 			_, err = streamAll(st)
@@ -159,8 +160,9 @@ func TestStoredMalformed(t *testing.T) {
 			st.Close()
 		}
 		if err == nil || err.Error() != want.Error() {
-			t.Errorf("%s: Stream: %v\nwant %v", c.name, err, want)
+			t.Errorf("%s: %v\nwant %v", c.name, err, want)
 		}
+		asError(t, err)
 	}
 }
 
@@ -172,7 +174,12 @@ func TestStoredNotFinite(t *testing.T) {
 		im.data[67*dt.Bytes()] = 0x7f
 		path := writeFile(t, "a.nii", im.bytes())
 		_, _, want := ReadSeries(path, nil, 0)
-		_, _, err := ReadStored(path, nil, 0)
+		st, err := OpenStream(path, nil, 0, 2)
+		if err != nil {
+			t.Fatal(err)
+		}
+		_, err = streamAll(st)
+		st.Close()
 		if err == nil || err.Error() != want.Error() || asError(t, err).Field != "voxel (2,1,0), volume 1" {
 			t.Errorf("%v: %v, want %v", dt, err, want)
 		}
@@ -322,7 +329,7 @@ func TestStreamMemory(t *testing.T) {
 					return
 				}
 				mu.Lock()
-				if seen[v.Index()] || v.Int16()[77] != int16(v.Index()) {
+				if seen[v.Index()] || v.b16[77] != int16(v.Index()) {
 					t.Errorf("volume %d twice, or with the voxels of another", v.Index())
 				}
 				seen[v.Index()] = true
