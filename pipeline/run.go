@@ -172,19 +172,19 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder
 		raw.drop()
 		series = realign.Floats(data, nt)
 	}
-	reference, mask, centre, err := p.standard(ctx, po, series)
+	to, err := p.standard(ctx, po, series)
 	if err != nil {
 		return nil, err
 	}
 	end()
-	m := &measures{mask: mask}
+	m := &measures{mask: to.mask}
 	m.measurePoses(po, p.rowPoses(po), nt)
 	pub := &publisher{out: w.out}
 	defer pub.discard()
 
 	if route.streamed {
 		makeRoom() // of the estimate
-		end := stage("steady")
+		end = stage("steady")
 		if err := w.writeStream(ctx, p, po, raw, m, pub); err != nil {
 			return nil, err
 		}
@@ -201,7 +201,7 @@ func (w *worker) one(ctx context.Context, p *Plan, shared **posed, rec *recorder
 	if faults := p.changed(); len(faults) > 0 {
 		return nil, &Refused{faults}
 	}
-	if err := p.writeData(ctx, w.workers, pub, data, reference, mask, centre, m, po); err != nil {
+	if err := p.writeData(ctx, w.workers, pub, data, to, m, po); err != nil {
 		return nil, err
 	}
 	end()
@@ -319,37 +319,44 @@ func (w *worker) within(p *Plan, stage string, from, to float64) func(share floa
 	return func(share float64) { w.share(p, stage, from+float64(share*(to-from))) }
 }
 
-// standard gives the reference volume, the head mask and its centroid; s is the raw series, of which
-// the reference is a part where no poses were estimated.
-func (p *Plan) standard(ctx context.Context, po *posed, s realign.Series) (ref []float32, mask []bool, centre [3]float64, err error) {
+// A standard is what the volumes of a run are brought to.
+type standard struct {
+	reference []float32
+	mask      []bool     // the head in it
+	centre    [3]float64 // of the head, world mm
+}
+
+// standard gives that of the run; s is the raw series, of which the reference is a part where no
+// poses were estimated.
+func (p *Plan) standard(ctx context.Context, po *posed, s realign.Series) (to standard, err error) {
 	if po.est != nil {
+		to = standard{po.est.Reference, po.est.Mask, po.est.Centre} // a copy of its own, never part of the series
 		if p.Settings.Reference.Word == "mean" {
-			return po.path.Reference, po.est.Mask, po.est.Centre, nil // sharper, along a path
-		}
-		ref = po.est.Reference // a copy of its own, never part of the series
-		if k := po.est.Scale; k != 1 {
-			ref = append([]float32{}, ref...)
-			for i := range ref {
-				ref[i] /= k // a power of two: what was given comes back bit for bit
+			to.reference = po.path.Reference // sharper, along a path
+		} else if k := po.est.Scale; k != 1 {
+			to.reference = slices.Clone(to.reference)
+			for i := range to.reference {
+				to.reference[i] /= k // a power of two: what was given comes back bit for bit
 			}
 		}
-		return ref, po.est.Mask, po.est.Centre, nil
+		return to, nil
 	}
 	switch r := p.Settings.Reference; r.Word {
 	case "first":
-		ref, err = volumeOf(ctx, s, 0)
+		to.reference, err = volumeOf(ctx, s, 0)
 	case "middle":
-		ref, err = volumeOf(ctx, s, s.Len()/2)
+		to.reference, err = volumeOf(ctx, s, s.Len()/2)
 	case "":
-		ref, err = volumeOf(ctx, s, r.Index)
+		to.reference, err = volumeOf(ctx, s, r.Index)
 	default:
-		ref, err = meanVolume(ctx, s)
+		to.reference, err = meanVolume(ctx, s)
 	}
 	if err != nil {
-		return nil, nil, centre, err
+		return standard{}, err
 	}
-	mask = realign.HeadMask(p.Grid, ref)
-	return ref, mask, realign.Centroid(p.Grid, mask), nil
+	to.mask = realign.HeadMask(p.Grid, to.reference)
+	to.centre = realign.Centroid(p.Grid, to.mask)
+	return to, nil
 }
 
 // volumeOf returns volume t of a series.
@@ -491,8 +498,7 @@ func (p *Plan) steadyHeader(data []float32) *nifti.Header {
 
 // writeStream streams the series to its file, under a hidden name.
 func (w *worker) writeStream(ctx context.Context, p *Plan, po *posed, raw *reel, m *measures, pub *publisher) error {
-	// What goes wrong before anything is written is no error of writing.
-	var other error
+	var other error // what went wrong in anything but writing
 	err := pub.write("steady-series", p.Output("steady-series"), func(out io.Writer) error {
 		wrote := &listener{w: out}
 		err := w.stream(ctx, p, po, raw, m, p.steadyHeader(nil), wrote)
@@ -523,12 +529,11 @@ func (l *listener) Write(b []byte) (int, error) {
 
 // writeData writes every file of the run but its record, under hidden names; the series
 // only if data is not nil.
-func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data, ref []float32, mask []bool, centre [3]float64, m *measures, po *posed) error {
+func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data []float32, to standard, m *measures, po *posed) error {
 	t := p.Timing
-	nv := len(ref)
 	single := func(dt nifti.Datatype) *nifti.Header { return p.Header.Derived(1, true, dt, true, 0) }
-	inside := make([]float32, nv)
-	for i, in := range mask {
+	inside := make([]float32, len(to.mask))
+	for i, in := range to.mask {
 		if in {
 			inside[i] = 1
 		}
@@ -552,7 +557,7 @@ func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data,
 		case "steady-sidecar":
 			fill = text(p.steadySidecar(po))
 		case "reference":
-			fill = image(single(nifti.Float32), ref)
+			fill = image(single(nifti.Float32), to.reference)
 		case "reference-sidecar":
 			fill = text(p.referenceSidecar(po))
 		case "mask":
@@ -562,7 +567,7 @@ func (p *Plan) writeData(ctx context.Context, workers int, pub *publisher, data,
 		case "pose-table":
 			fill = text(poseTable(p, m))
 		case "pose-description":
-			fill = text(poseDescription(p, po, centre))
+			fill = text(poseDescription(p, po, to.centre))
 		case "shots-table":
 			fill = text(shotsTable(p, po))
 		case "shots-description":
