@@ -842,10 +842,7 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 					q := [3]float64{start[0] + float64(step[0]*f), start[1] + float64(step[1]*f), start[2] + float64(step[2]*f)}
 					deep := e.g.depth(q)
 					in := deep >= -0.5
-					if in && spoilt != nil {
-						s := int(q[e.opt.SliceAxis] + 1) // between slices s-1 and s
-						in = !(s > 0 && spoilt[s-1] || s < len(spoilt) && spoilt[s])
-					}
+					in = in && (spoilt == nil || !besideAny(spoilt, q[e.opt.SliceAxis]))
 					if !in {
 						out[at+x] += float64(values[x])
 						lack[x]++
@@ -872,6 +869,12 @@ func (e *estimator) average(vols []Volume, weak [][]bool) (image []float32, unkn
 		unknown[v] = float64(len(use)-int(missed[v])) < float64(coverage*float64(len(use)))
 	}
 	return image, unknown, nil
+}
+
+// besideAny reports whether a slice coordinate, from -0.5 on, lies on or next to a marked slice.
+func besideAny(marked []bool, k float64) bool {
+	s := int(k + 1) // between slices s-1 and s
+	return s > 0 && marked[s-1] || s < len(marked) && marked[s]
 }
 
 // wellInside reports whether a voxel coordinate keeps clear of the planes at the

@@ -72,12 +72,7 @@ func (m *matcher) see(t *target, s *spline, p Pose, e *effort, same bool) {
 	slices := t.g.N[e.sliceAxis]
 	for k, r := range t.rows {
 		start := applyAffine(&b, float64(r.x), float64(r.y), float64(r.z))
-		v := m.v[r.at:][:r.n]
-		if t.degree == 5 {
-			kernel.AffineRow5(v, s.c, s.n, splinePad, start, step)
-		} else {
-			kernel.AffineRow3(v, s.c, s.n, splinePad, start, step)
-		}
+		s.line(m.v[r.at:][:r.n], start, step)
 		if same {
 			continue
 		}

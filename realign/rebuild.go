@@ -455,8 +455,7 @@ func (e *pathEstimator) weighLine(weight []float32, l *line, weak []bool) (full 
 		if deep < -0.5 {
 			continue
 		}
-		s := int(v[axis] + 1)
-		if !(s > 0 && weak[s-1] || s < len(weak) && weak[s]) {
+		if !besideAny(weak, v[axis]) {
 			weight[i] = float32(edgeWeight(deep))
 		}
 	}
