@@ -39,12 +39,35 @@ func (s *spline) load(vol []float32) {
 // row interpolates along a row of outputs whose source coordinates m gives: those of
 // (0..len(dst)-1, j, k).
 func (s *spline) row(dst []float32, m *[16]float64, j, k int) {
-	start := applyAffine(m, 0, float64(j), float64(k))
-	step := [3]float64{m[0], m[4], m[8]}
+	s.line(dst, applyAffine(m, 0, float64(j), float64(k)), [3]float64{m[0], m[4], m[8]})
+}
+
+// line interpolates along a line of points: start, start + step and so on.
+func (s *spline) line(dst []float32, start, step [3]float64) {
 	if s.degree == 5 {
 		kernel.AffineRow5(dst, s.c, s.n, splinePad, start, step)
 	} else {
 		kernel.AffineRow3(dst, s.c, s.n, splinePad, start, step)
+	}
+}
+
+// valuesAt interpolates at many points.
+func (s *spline) valuesAt(v []float32, p *kernel.Sites) {
+	mx, area := s.m[0], s.m[0]*s.m[1]
+	if s.degree == 5 {
+		kernel.Value5(v, s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	} else {
+		kernel.Value3(v, s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	}
+}
+
+// gradientsAt does so with derivatives: value, and those by x, y and z.
+func (s *spline) gradientsAt(to *[4][]float32, p *kernel.Sites) {
+	mx, area := s.m[0], s.m[0]*s.m[1]
+	if s.degree == 5 {
+		kernel.Gradient5(to[0], to[1], to[2], to[3], s.c, mx, area, p.Base, p.X, p.Y, p.Z)
+	} else {
+		kernel.Gradient3(to[0], to[1], to[2], to[3], s.c, mx, area, p.Base, p.X, p.Y, p.Z)
 	}
 }
 
