@@ -552,6 +552,9 @@ func (e *estimator) pass(m *model, known []Volume, how effort) ([]Volume, *lefto
 				}
 				return nil
 			}
+			if f.again {
+				w.load(vol, m.fine.degree)
+			}
 		}
 		w.loadCoarse(vol)
 		vols[t] = e.judge(m, e.withoutSpoilt(w, m, vol, e.search(w, m, how), how))

@@ -331,3 +331,23 @@ func GainAt(g Grid, centre [3]float64, gain [4]float64, x, y, z int) float64 {
 	r := newGainRows(g, centre, &gain)
 	return r.at([3]float64{float64(x), float64(y), float64(z)})
 }
+
+// PassFrom matches volume 1 of two with volume 0 as a pass does, from a known pose or from
+// scratch, and gives what was found before any second look.
+func PassFrom(g Grid, data []float32, axis int, pose Pose, known bool) Volume {
+	e, err := newEstimator(context.Background(), g, Floats(data, 2), Options{SliceAxis: axis, Workers: 1})
+	if err != nil {
+		panic(err)
+	}
+	e.prepare()
+	m := e.newModel(data[:g.voxels()], nil, 5)
+	var from []Volume
+	if known {
+		from = []Volume{{Pose: Identity, State: Aligned}, {Pose: pose, State: Doubtful}}
+	}
+	vols, _, err := e.pass(m, from, e.fineEffort())
+	if err != nil {
+		panic(err)
+	}
+	return vols[1]
+}

@@ -17,7 +17,7 @@ type target struct {
 	jac    [6][]float32 // gradient and moment of the reference, per mm and per rad
 	phi    [3][]float32 // coordinates for the gain, from the centre, / gainReach
 	shade  [3][]float32 // value times phi
-	slope  []float32    // squared length of the gradient
+	slope  []float32    // squared length of the gradient, in units of the reference's size
 	weight []float32    // what a point counts in a robust match; nil: all alike
 	head   []span       // rows of the head, whether they take part or not
 	inHead []bool       // by point
@@ -102,6 +102,7 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 		a.phi[k], a.shade[k] = make([]float32, count), make([]float32, count)
 	}
 	a.slope = make([]float32, count)
+	unit := unitOf(a.value)
 	for q, v := range a.voxel {
 		x := int(v)
 		at := applyAffine(&toCentre, float64(x%g.N[0]), float64(x/g.N[0]%g.N[1]), float64(x/(g.N[0]*g.N[1])))
@@ -112,11 +113,28 @@ func newTarget(g Grid, vol []float32, head, unknown []bool, rim int, margin [3]f
 			a.phi[k][q] = float32(at[k] * (1.0 / gainReach))
 			a.shade[k][q] = float32(a.value[q] * a.phi[k][q])
 		}
+		for k := range gw {
+			gw[k] *= unit
+		}
 		a.slope[q] = float32(float64(gw[0]*gw[0]) + float64(gw[1]*gw[1]) + float64(gw[2]*gw[2]))
 	}
 	a.some = a.sample()
 	a.thin()
 	return a
+}
+
+// unitOf is the power of two that brings the largest value near to one, so that squares stay
+// in the range of float32; 1 where there is none.
+func unitOf(v []float32) float64 {
+	peak := 0.0
+	for _, x := range v {
+		peak = max(peak, math.Abs(float64(x)))
+	}
+	if !(peak > 0 && peak <= math.MaxFloat32) {
+		return 1
+	}
+	_, e := math.Frexp(peak)
+	return math.Ldexp(1, -e)
 }
 
 // thin prepares every fourth row. Rows are counted from both ends of an axis towards

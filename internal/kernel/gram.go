@@ -1,5 +1,7 @@
 package kernel
 
+import "math"
+
 // MostRows is the largest number of rows of [Gram].
 const MostRows = 12
 
@@ -17,7 +19,8 @@ type gramLanes [MostRows / 3 * (MostRows/3 + 1) / 2][9][4]float64
 // 16 of them (of the points i with the same i mod 8, 128 points at a time) are in float32,
 // what those are added to in float64: lanes 0 to 3, then 4 to 7, to lanes mod 4, which
 // join as (0 + 2) + (1 + 3). What comes out so hangs on the length of the call, though not
-// on the processor.
+// on the processor. Where products leave the range of float32 for a row, all sums are made
+// in float64, point after point.
 func Gram(sum []float64, rows [][]float32, w []float32) {
 	m, n := len(rows), len(w)
 	check(m <= MostRows && len(sum) == m*(m+1)/2, "too many rows, or sums of another number of rows")
@@ -58,6 +61,15 @@ func Gram(sum []float64, rows [][]float32, w []float32) {
 			gramBlockPlain(&acc, &a, &b, tiles, wide)
 		}
 	}
+	for r := range m {
+		i := r / 3
+		s := &acc[i*tiles-i*(i-1)/2][4*(r%3)]
+		// Of a sum of squares: what others hold is below the geometric mean of two of them.
+		if own := (s[0] + s[2]) + (s[1] + s[3]); !(math.Abs(own) <= math.MaxFloat32 && math.Abs(own) >= gramLeast) {
+			gramWide(sum, rows, w)
+			return
+		}
+	}
 	at := 0
 	for r := range m {
 		for c := r; c < m; c++ {
@@ -66,6 +78,26 @@ func Gram(sum []float64, rows [][]float32, w []float32) {
 			s := &acc[i*tiles-i*(i-1)/2+j-i][3*(r%3)+c%3]
 			sum[at] += (s[0] + s[2]) + (s[1] + s[3])
 			at++
+		}
+	}
+}
+
+// gramLeast: squares that sum to less may have lost bits below the range of float32.
+const gramLeast = 1e-25
+
+// gramWide is Gram in float64.
+func gramWide(sum []float64, rows [][]float32, w []float32) {
+	for q, v := range w {
+		if v == 0 {
+			continue
+		}
+		at := 0
+		for a := range rows {
+			p := float64(v) * float64(rows[a][q])
+			for _, row := range rows[a:] {
+				sum[at] += float64(p * float64(row[q]))
+				at++
+			}
 		}
 	}
 }

@@ -93,6 +93,30 @@ func TestGramAgainstDirect(t *testing.T) {
 	}
 }
 
+// Squares of what float32 holds need not be in its range: sums are those of rows of usual
+// size, by a power of two.
+func TestGramRange(t *testing.T) {
+	rows, w := gramRows(8, 7, 400)
+	usual := make([]float64, 28)
+	Gram(usual, rows, w)
+	for _, e := range []int{-110, -90, -70, 62, 70, 110} {
+		rows, _ := gramRows(8, 7, 400)
+		for _, row := range rows {
+			for i, v := range row {
+				row[i] = float32(math.Ldexp(float64(v), e))
+			}
+		}
+		sum := make([]float64, len(usual))
+		Gram(sum, rows, w)
+		for i, v := range sum {
+			v = math.Ldexp(v, -2*e)
+			if want := usual[i]; !(math.Abs(v-want) <= 3e-7*400) { // as in TestGramAgainstDirect, of products below one
+				t.Errorf("2^%d: sum %d is %g, want %g", e, i, v, want)
+			}
+		}
+	}
+}
+
 func TestGramStaysInside(t *testing.T) {
 	for _, front := range []bool{false, true} {
 		for n := 1; n < 70; n++ {
