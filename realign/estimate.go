@@ -638,10 +638,16 @@ func (e *estimator) withoutSpoilt(w *workspace, m *model, vol []float32, f found
 	}
 	spoilt := make([]bool, len(f.slices))
 	copy(spoilt, how.skip)
+	few := 0
 	for s, z := range f.slices {
-		spoilt[s] = spoilt[s] || z > spoiltFrom && f.shares[s] > weakShare
+		if z > spoiltFrom && f.shares[s] > weakShare {
+			spoilt[s] = true
+			few++
+		}
 	}
-	if len(spoilt) == 0 || slices.Equal(spoilt, how.skip) {
+	// Where more than a quarter stand out it is not they that are wrong: the head has jerked among them,
+	// and they keep their say.
+	if len(spoilt) == 0 || few > max(3, len(spoilt)/4) || slices.Equal(spoilt, how.skip) {
 		return f
 	}
 	patched := e.patch(vol, spoilt)

@@ -53,6 +53,8 @@ type matcher struct {
 	count int       // points that take part
 	res   []float32 // residual
 
+	disturbed bool // of a robust match: slices stand out
+
 	weight []float32
 	some   []float32 // sizes of some residuals
 }
@@ -153,7 +155,8 @@ func white(n [3]int, x, y, z int) bool {
 
 // shrink is what is left of a step after the next one, at most: 0.015 to 0.03 on heads
 // with noise. (Derivatives are those of the reference itself, and slant makes up for the
-// biweight.)
+// biweight.) It does not hold where slices stand out, as in a volume with a jerk: two poses
+// then compete for the weights, and a match ends only when its steps are small themselves.
 const shrink = 0.05
 
 // enough: where what is left of a step is below a tenth of what noise leaves uncertain,
@@ -184,6 +187,7 @@ const runaway = 150
 // 3.2, for rigid maps; the gain joins the unknowns as a linear appearance, ibid. part 3).
 func (m *matcher) match(t *target, s *spline, start Pose, e effort) found {
 	f := found{pose: start}
+	m.disturbed = false
 	if e.thin && t.fewer != nil {
 		t = t.fewer
 	}
@@ -205,7 +209,11 @@ func (m *matcher) match(t *target, s *spline, start Pose, e effort) found {
 			return f
 		}
 		f.pose = f.pose.Compose(Exp(step).centred(t.centre))
-		done := float64(moved*shrink) < e.tolerance || e.robust && float64(size*shrink) < enough
+		left := shrink
+		if m.disturbed {
+			left = 1
+		}
+		done := float64(moved*left) < e.tolerance || e.robust && float64(size*left) < enough
 		if distance(valued, f.pose, t.centre) > nearMM && !done {
 			m.see(t, s, f.pose, &e, f.iterations >= settling)
 			valued = f.pose
@@ -305,8 +313,12 @@ func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, 
 	copy(m.weight, m.in)
 	longer, scale := 1.0, 0.0
 	if e.robust {
-		slices, _ := m.slicesOf(t.g.N[e.sliceAxis])
-		bySlice := sliceWeights(slices)
+		over, share := m.slicesOf(t.g.N[e.sliceAxis])
+		bySlice := sliceWeights(over)
+		m.disturbed = false
+		for s, z := range over {
+			m.disturbed = m.disturbed || z > standsOut && share[s] > weakShare
+		}
 		m.bySlice(func(s int32, from, to int) {
 			if w := float32(bySlice[s]); w != 1 {
 				for q := from; q < to; q++ {
@@ -321,7 +333,9 @@ func (m *matcher) step(gain *[4]float64, e *effort) (twist Twist, size float64, 
 		}
 		scale = madScale * float64(m.medianAbs())
 		if cut := float32(tukeyCut * scale); cut > 0 {
-			longer = m.slant(cut)
+			if !m.disturbed {
+				longer = m.slant(cut)
+			}
 			kernel.Tukey(m.weight, m.res, cut)
 		}
 	}
@@ -437,6 +451,9 @@ func (m *matcher) slicesOf(n int) (over, share []float64) {
 	return over, share
 }
 
+// standsOut: slices whose residual is above so many times the median one's count less.
+const standsOut = 1.5
+
 // sliceWeights lowers the weight of slices whose residual stands out: with z
 // the slice's rms over the median slice's, w = min(1, (1.5/z)^4). A slice lost
 // to a spike or to motion during its excitation then counts next to nothing,
@@ -445,7 +462,7 @@ func sliceWeights(z []float64) []float64 {
 	w := make([]float64, len(z))
 	for s := range w {
 		w[s] = 1
-		if u := 1.5 / z[s]; z[s] > 1.5 {
+		if u := standsOut / z[s]; z[s] > standsOut {
 			u = float64(u * u)
 			w[s] = float64(u * u)
 		}
