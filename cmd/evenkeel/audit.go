@@ -3,10 +3,12 @@ package main
 import (
 	"encoding/json"
 	"fmt"
+	"path/filepath"
 	"strings"
 
 	"github.com/urfave/cli/v2"
 
+	"evenkeel/dataset"
 	"evenkeel/pipeline"
 	"evenkeel/provenance"
 )
@@ -80,7 +82,7 @@ func (s *session) audit(c *cli.Context, out string) error {
 	if err != nil {
 		return err
 	}
-	doc := auditDocument{out, raw, checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, nil, append([]provenance.Finding{}, findings...)}
+	doc := auditDocument{out, shownRaw(out, raw, c.String("dataset")), checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, nil, append([]provenance.Finding{}, findings...)}
 	if replay != nil && checked.Records > 0 {
 		if raw == "" {
 			_, why := pipeline.LinkedRaw(out)
@@ -113,6 +115,23 @@ func (s *session) audit(c *cli.Context, out string) error {
 		return &exit{pipeline.ExitOutside}
 	}
 	return nil
+}
+
+// shownRaw gives the raw dataset as it may be shown: as it was given, or found from OUT the way
+// OUT was given, for the folders above both may be named after a person.
+func shownRaw(out, raw, given string) string {
+	if given != "" || raw == "" || filepath.IsAbs(out) {
+		return raw
+	}
+	here, err := dataset.RealPath(".")
+	if err != nil {
+		return raw
+	}
+	rel, err := filepath.Rel(here, raw)
+	if err != nil {
+		return raw
+	}
+	return rel
 }
 
 // replayRequest reads the options that go with --replay; nil without it.
