@@ -141,9 +141,9 @@ func (m marks) image(where string, s *sailor, version int) []byte {
 // What may come out, of which place, and in which files ("-" is a stream). Nothing else may.
 var mayCarry = []struct{ place, in string }{
 	{`task-watch_bold\.json: TaskName carried`, `_desc-steady_(bold|prov)\.json$`},
-	{`task-watch_bold\.json: Manufacturer carried`, `_desc-steady_bold\.json$`},
-	{`task-watch_bold\.json: ManufacturersModelName carried`, `_desc-steady_bold\.json$`},
-	{`task-watch_bold\.json: CogAtlasID carried`, `_desc-steady_bold\.json$`},
+	{`task-watch_bold\.json: Manufacturer carried`, `_desc-steady_(bold|prov)\.json$`},
+	{`task-watch_bold\.json: ManufacturersModelName carried`, `_desc-steady_(bold|prov)\.json$`},
+	{`task-watch_bold\.json: CogAtlasID carried`, `_desc-steady_(bold|prov)\.json$`},
 	{`^dataset_description\.json: Name$`, `^dataset_description\.json$|^README$|_prov\.json$`},
 	{`^dataset_description\.json: DatasetDOI$`, `^dataset_description\.json$`},
 	{`_events\.tsv`, `_desc-steady_events\.tsv$`}, // with --events only
@@ -338,7 +338,8 @@ func TestNothingPrivateInAnyOutput(t *testing.T) {
 	// The dataset lies in a home folder, as datasets do, and OUT elsewhere and beside it.
 	home := filepath.Join(base, "home", "skipper-qhomeq")
 	raw, deck := filepath.Join(home, "study-qdirq", "raw"), filepath.Join(base, "scratch", "deck-qoutq")
-	for _, dir := range []string{raw, deck} {
+	lab := filepath.Join(base, "lab") // where people's folders stand side by side, as in a home folder
+	for _, dir := range []string{raw, deck, lab} {
 		if err := os.MkdirAll(dir, 0o755); err != nil {
 			t.Fatal(err)
 		}
@@ -417,10 +418,17 @@ func TestNothingPrivateInAnyOutput(t *testing.T) {
 		{"untouched", "untouched", []string{"--motion", "none", "--time", "none", "--subject", "01", "--subject", "02", "--events", "--log", "json"}},
 		// Given in full, from a folder that is nobody's: what is written still names neither.
 		{"far away", filepath.Join(deck, "out"), []string{"--motion", "none", "--subject", "01", "--log", "json"}},
+		{"two people's", filepath.Join(lab, "deck-qoutq", "out"), []string{"--motion", "none", "--subject", "01"}},
 	} {
 		in, ask := "raw", quiet
 		if filepath.IsAbs(c.out) {
 			in, ask = raw, streams
+		}
+		if strings.HasPrefix(c.out, lab) {
+			in = filepath.Join(lab, "study-qdirq", "raw")
+			if err := os.CopyFS(in, os.DirFS(raw)); err != nil {
+				t.Fatal(err)
+			}
 		}
 		ask(c.what, 0, append([]string{"steady", in, c.out}, c.args...)...)
 		all := everything(t, c.out)
