@@ -1,6 +1,7 @@
 package pipeline
 
 import (
+	"cmp"
 	"path"
 	"runtime"
 	"runtime/debug"
@@ -10,6 +11,7 @@ import (
 
 	"evenkeel/fault"
 	"evenkeel/provenance"
+	"evenkeel/sidecar"
 )
 
 // recorder gathers the log part of a record.
@@ -58,7 +60,7 @@ func (p *Plan) writeRecord(pub *publisher, rec *recorder, inputs []provenance.Fi
 	for _, f := range p.Faults {
 		r.Faults = append(r.Faults, rawJSON(f))
 	}
-	for _, f := range p.Acq.Used {
+	for _, f := range told(p.Acq) {
 		r.Values = append(r.Values, provenance.Value{Key: f.Key, JSON: f.Raw, File: f.Origin.File})
 	}
 	data, err := r.Marshal()
@@ -66,6 +68,14 @@ func (p *Plan) writeRecord(pub *publisher, rec *recorder, inputs []provenance.Fi
 		return err
 	}
 	return pub.writeBytes("record", p.Output("record"), data)
+}
+
+// told is every sidecar value that something written rests on, sorted by key: those that were
+// used, and those that went into the sidecar of the series.
+func told(a *sidecar.Acquisition) []sidecar.Field {
+	all := slices.Concat(a.Used, a.Carried)
+	slices.SortStableFunc(all, func(a, b sidecar.Field) int { return cmp.Compare(a.Key, b.Key) })
+	return slices.CompactFunc(all, func(a, b sidecar.Field) bool { return a.Key == b.Key })
 }
 
 // accepted names the faults that the run has and the user accepted.

@@ -9,6 +9,7 @@ import (
 	"path/filepath"
 	"runtime/debug"
 	"slices"
+	"strings"
 	"sync"
 
 	"golang.org/x/sync/errgroup"
@@ -68,6 +69,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	if err != nil {
 		return nil, creating(job.Out, err)
 	}
+	given := job.Out
 	job.Out = out
 	outcomes := make([]Outcome, len(plans))
 	observe := serial(job.Observe)
@@ -76,6 +78,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 			_, err := os.Stat(filepath.Join(job.Out, filepath.FromSlash(o.Plan.Output("record"))))
 			o.Older = err == nil
 		}
+		asGiven(o.Err, out, given)
 		outcomes[i] = o
 		observe(Event{Kind: RunEnded, Plan: o.Plan, Outcome: &outcomes[i]})
 	}
@@ -104,7 +107,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 		return outcomes, nil // no derivative of a derivative: nothing is written at all
 	}
 	if err := os.MkdirAll(job.Out, 0o755); err != nil {
-		return outcomes[:0], creating(job.Out, err)
+		return outcomes[:0], creating(given, err)
 	}
 	if err := writeDescriptions(ds, job.Out); err != nil {
 		return outcomes[:0], err
@@ -169,6 +172,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 
 	// An interruption must not lose what has been done: the table is small.
 	if err := writeRuns(context.WithoutCancel(ctx), job.Out, outcomes); err != nil {
+		asGiven(err, out, given)
 		return outcomes, err
 	}
 	return outcomes, nil
@@ -221,6 +225,18 @@ func serial(observe func(Event)) func(Event) {
 		mu.Lock()
 		defer mu.Unlock()
 		observe(e)
+	}
+}
+
+// asGiven makes an error name OUT the way it was given: the folders above it may be called
+// after a person, and a log is passed on.
+func asGiven(err error, out, given string) {
+	if c := (*CreateError)(nil); errors.As(err, &c) {
+		if rest, ok := strings.CutPrefix(c.Path, out); ok {
+			c.Path = given + rest
+		} else if rest, ok := strings.CutPrefix(c.Path, "a file in "+out); ok {
+			c.Path = "a file in " + given + rest
+		}
 	}
 }
 

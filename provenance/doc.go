@@ -26,7 +26,7 @@
 //	          run:stage-0001 ...   evenkeel:Stage: evenkeel:name, evenkeel:parameters,
 //	                               evenkeel:outcome, dcterms:isPartOf run:run
 //	agent     run:software         prov:SoftwareAgent: evenkeel:version, evenkeel:revision,
-//	                               evenkeel:goVersion, evenkeel:module
+//	                               evenkeel:modified, evenkeel:goVersion, evenkeel:module
 //
 // used ties the run to its inputs and values, wasGeneratedBy the outputs to the
 // run, wasDerivedFrom outputs to inputs and values to the file they came from,

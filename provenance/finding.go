@@ -20,6 +20,8 @@ const (
 	InputChanged    = "input-changed"
 	InputUnreadable = "input-unreadable"
 	OtherVersion    = "other-version"
+	ReplayDiffers   = "replay-differs"
+	NotReplayed     = "not-replayed"
 )
 
 // Kind describes one kind of finding.
@@ -42,6 +44,8 @@ var Kinds = []Kind{
 	{InputChanged, true, "a raw file that a record names has another size or digest"},
 	{InputUnreadable, true, "a raw file that a record names cannot be read"},
 	{OtherVersion, false, "a record was written by another version"},
+	{ReplayDiffers, true, "a run computed again from its record gives something else than is there"},
+	{NotReplayed, true, "a run cannot be computed again from its record"},
 }
 
 // Finding is one thing an audit noticed.

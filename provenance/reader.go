@@ -188,6 +188,8 @@ func (t thing) values(key string) ([]literal, *Error) {
 		switch n.kind {
 		case isString:
 			list = append(list, literal{text: n.text})
+		case isBool: // as some libraries write an xsd:boolean
+			list = append(list, literal{n.text, "xsd:boolean"})
 		case isObject:
 			text, typ := n.members["$"], n.members["type"]
 			// The submission wants a string; a number is what some libraries write.
@@ -253,6 +255,20 @@ func (t thing) integer(key string) (int64, *Error) {
 		return 0, t.bad(key, show(s), "a whole number")
 	}
 	return n, nil
+}
+
+// truth returns an xsd:boolean (XML Schema Part 2, 3.3.2), false if it is absent.
+func (t thing) truth(key string) (bool, *Error) {
+	s, err := t.one(key, false, "xsd:boolean")
+	switch {
+	case err != nil:
+		return false, err
+	case s == "true", s == "1":
+		return true, nil
+	case s == "", s == "false", s == "0":
+		return false, nil
+	}
+	return false, t.bad(key, show(s), "true or false")
 }
 
 // json returns embedded JSON in its compact form.
@@ -484,6 +500,9 @@ func (p *parser) software() *Error {
 		return err
 	}
 	if s.Revision, err = t.text("evenkeel:revision", false); err != nil {
+		return err
+	}
+	if s.Modified, err = t.truth("evenkeel:modified"); err != nil {
 		return err
 	}
 	if s.GoVersion, err = t.text("evenkeel:goVersion", false); err != nil {

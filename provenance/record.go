@@ -37,7 +37,9 @@ type Module struct{ Path, Version string }
 // Software names what computed the run. Name and Version must be there.
 type Software struct {
 	Name, Version, Revision, GoVersion string
-	Modules                            []Module
+	// Modified says that the source was not the revision's own when it was built.
+	Modified bool
+	Modules  []Module
 }
 
 // Log is the part of a record that may differ between runs with the same bytes.

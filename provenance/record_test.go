@@ -294,7 +294,7 @@ func genRecord(t *rapid.T) *Record {
 		Stages: rapid.SliceOfNDistinct(rapid.Custom(func(t *rapid.T) Stage {
 			return Stage{free.Draw(t, "name"), maybe.Draw(t, "parameters"), maybe.Draw(t, "outcome")}
 		}), 0, 4, func(s Stage) string { return s.Name }).Draw(t, "stages"),
-		Software: Software{free.Draw(t, "name"), free.Draw(t, "version"), any.Draw(t, "revision"), any.Draw(t, "go"),
+		Software: Software{free.Draw(t, "name"), free.Draw(t, "version"), any.Draw(t, "revision"), any.Draw(t, "go"), rapid.Bool().Draw(t, "modified"),
 			rapid.SliceOfN(rapid.Custom(func(t *rapid.T) Module {
 				return Module{free.Draw(t, "path"), rapid.StringMatching(`(v[0-9.]{1,5})?`).Draw(t, "version")}
 			}), 0, 3).Draw(t, "modules")},
@@ -515,6 +515,9 @@ func TestParseRefuses(t *testing.T) {
 		{"activity.run:run.evenkeel:fault", `{"$": "{\"id\":\"tr-mismatch\",\"level\":\"error\"}", "type": "rdf:JSON"}`, `"{}"`},
 		{"agent.run:software", `"run:software": {`, `"run:hardware": {`},
 		{"agent.run:software.evenkeel:module", "example.org/hull@v1.2.3", "example.org/hull"},
+		{"agent.run:software.evenkeel:modified", `{"$": "true", "type": "xsd:boolean"}`, `{"$": "perhaps", "type": "xsd:boolean"}`},
+		{"agent.run:software.evenkeel:modified", `{"$": "true", "type": "xsd:boolean"}`, `"true"`},
+		{"agent.run:software.evenkeel:version", `"evenkeel:version": "0.1.0"`, `"evenkeel:version": true`},
 		{"used._:used-0001.prov:entity", `"prov:entity": "run:input-0001"`, `"prov:entity": "run:input-0009"`},
 		{"used", `"prov:entity": "run:input-0001"`, `"prov:entity": "run:input-0002"`},
 		{"wasGeneratedBy", `"prov:entity": "run:output-0001"`, `"prov:entity": "run:output-0002"`},
@@ -599,6 +602,7 @@ func TestParseTolerates(t *testing.T) {
 		{`"prov:type": {"$": "prov:Plan", "type": "xsd:QName"}`, `"prov:type": [{"$": "prov:Plan", "type": "prov:QUALIFIED_NAME"}, {"$": "prov:Collection", "type": "xsd:QName"}]`},
 		{`"evenkeel:accepted": "tr-mismatch"`, `"evenkeel:accepted": ["tr-mismatch"]`},
 		{"2026-03-02T09:15:00Z", "2026-03-02T10:15:00+01:00"},
+		{`{"$": "true", "type": "xsd:boolean"}`, "true"},
 	} {
 		if !strings.Contains(s, c[0]) {
 			t.Fatalf("%s is not in the document", c[0])

@@ -37,7 +37,7 @@ func sample() *Record {
 			{"resample", json.RawMessage(`{"degree":5}`), nil},
 		},
 		Software: Software{
-			Name: "evenkeel", Version: "0.1.0", Revision: "0123abc", GoVersion: "go1.26.0",
+			Name: "evenkeel", Version: "0.1.0", Revision: "0123abc", Modified: true, GoVersion: "go1.26.0",
 			Modules: []Module{{"example.org/hull", "v1.2.3"}, {"example.org/mast/v2", "v2.0.0"}},
 		},
 		Log: Log{

@@ -193,6 +193,9 @@ func (r *Record) agents() object {
 		{"evenkeel:version", s.Version},
 	}
 	software.text("evenkeel:revision", s.Revision)
+	if s.Modified {
+		software.add("evenkeel:modified", literal{"true", "xsd:boolean"})
+	}
 	software.text("evenkeel:goVersion", s.GoVersion)
 	var modules []any
 	for _, m := range s.Modules {

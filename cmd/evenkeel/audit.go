@@ -1,13 +1,14 @@
 package main
 
 import (
-	"context"
 	"encoding/json"
 	"fmt"
+	"path/filepath"
 	"strings"
 
 	"github.com/urfave/cli/v2"
 
+	"evenkeel/dataset"
 	"evenkeel/pipeline"
 	"evenkeel/provenance"
 )
@@ -19,7 +20,9 @@ func (s *session) auditCommand() *cli.Command {
 		ArgsUsage: "OUT",
 		Description: describe("Digests every file that a record in OUT names and says which are missing or changed.\n"+
 			"The raw files are found through OUT's DatasetLinks, or with --dataset. A record of\n"+
-			"another version is noted and is no difference.", "evenkeel audit voyage-steady --dataset voyage",
+			"another version is noted and is no difference. With --replay each run is also computed\n"+
+			"again in a scratch folder, from the raw data and the settings that its record names,\n"+
+			"and compared byte for byte: what differs is named with where and by how much.", "evenkeel audit voyage-steady --dataset voyage --replay",
 			codes(pipeline.ExitDone, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt).
 				but(pipeline.ExitDone, "every file looked for is what its record says").
 				but(pipeline.ExitOutside, "a difference was found").
@@ -29,23 +32,47 @@ func (s *session) auditCommand() *cli.Command {
 		Flags: []cli.Flag{
 			&cli.StringFlag{Name: "dataset", Usage: "the raw dataset, in `DIR`"},
 			&cli.BoolFlag{Name: "json", Usage: "the findings as one JSON document"},
-			&cli.BoolFlag{Name: "replay", Usage: "recompute each run from its record and compare (comes with a later version)"},
+			&cli.BoolFlag{Name: "replay", Usage: "also compute each run again from its record alone, and compare every byte"},
+			&cli.StringFlag{Name: "scratch", Usage: "with --replay: compute in a folder of its own inside `DIR`, one run at a time", DefaultText: "the system's temporary folder"},
+			&cli.StringFlag{Name: "jobs", Usage: "with --replay: `N` runs at once", DefaultText: "chosen from cores and runs"},
+			memoryFlag(),
 		},
 		Action: func(c *cli.Context) error {
 			args, err := arguments(c, "OUT")
 			if err != nil {
 				return err
 			}
-			if c.Bool("replay") {
-				return &pipeline.UsageError{Where: "--replay", Message: "comes with a later version; without it, digests are checked"}
-			}
-			return s.audit(c.Context, args[0], c.String("dataset"), c.Bool("json"))
+			return s.audit(c, args[0])
 		},
 	}
 }
 
-func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error {
-	findings, checked, raw, err := pipeline.Audit(ctx, out, raw, func(done, of int) {
+// auditDocument is what --json prints.
+type auditDocument struct {
+	Out      string               `json:"out"`
+	Dataset  string               `json:"dataset"` // "" when it could not be found
+	Records  int                  `json:"records"`
+	Outputs  int                  `json:"outputs"`
+	Inputs   int                  `json:"inputs"`
+	Unseen   int                  `json:"inputs_unseen"`
+	Unlisted int                  `json:"unlisted"`
+	Replay   *replayDocument      `json:"replay,omitempty"`
+	Findings []provenance.Finding `json:"findings"`
+}
+
+type replayDocument struct {
+	Runs        int `json:"runs"`
+	Same        int `json:"same"`
+	Differ      int `json:"differ"`
+	NotReplayed int `json:"not_replayed"`
+}
+
+func (s *session) audit(c *cli.Context, out string) error {
+	replay, err := s.replayRequest(c, out)
+	if err != nil {
+		return err
+	}
+	findings, checked, raw, err := pipeline.Audit(c.Context, out, c.String("dataset"), func(done, of int) {
 		if done == 1 {
 			s.log.startProgress(float64(of))
 		}
@@ -55,30 +82,23 @@ func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error
 	if err != nil {
 		return err
 	}
-	var b strings.Builder
-	if asJSON {
-		doc := struct {
-			Out      string               `json:"out"`
-			Dataset  string               `json:"dataset"` // "" when it could not be found
-			Records  int                  `json:"records"`
-			Outputs  int                  `json:"outputs"`
-			Inputs   int                  `json:"inputs"`
-			Unseen   int                  `json:"inputs_unseen"`
-			Unlisted int                  `json:"unlisted"`
-			Findings []provenance.Finding `json:"findings"`
-		}{out, raw, checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, append([]provenance.Finding{}, findings...)}
-		data, err := json.MarshalIndent(doc, "", "  ")
+	doc := auditDocument{out, shownRaw(out, raw, c.String("dataset")), checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, nil, append([]provenance.Finding{}, findings...)}
+	if replay != nil && checked.Records > 0 {
+		if raw == "" {
+			_, why := pipeline.LinkedRaw(out)
+			return &pipeline.UsageError{Where: "--replay", Message: "nothing can be computed again: " + why + "; give --dataset DIR"}
+		}
+		replay.Raw = raw
+		s.log.startProgress(float64(checked.Records))
+		more, count, err := replay.Run(c.Context)
+		s.log.stopProgress()
 		if err != nil {
 			return err
 		}
-		b.Write(append(data, '\n'))
-	} else {
-		for _, f := range findings {
-			b.WriteString(f.String() + "\n")
-		}
-		fmt.Fprintf(&b, "%s, %s and %s checked: %s\n", counted(checked.Records, "record"), counted(checked.Outputs, "output"), counted(checked.Inputs, "input"), counted(provenance.Differences(findings), "difference"))
+		doc.Findings = append(doc.Findings, more...)
+		doc.Replay = &replayDocument{count.Runs, count.Same, count.Other, count.Missed()}
 	}
-	if _, err := fmt.Fprint(s.stdout, b.String()); err != nil {
+	if err := s.writeAudit(doc, c.Bool("json")); err != nil {
 		return &pipeline.IOError{Path: "standard output", Err: err}
 	}
 	if checked.Unlisted > 0 {
@@ -91,10 +111,76 @@ func (s *session) audit(ctx context.Context, out, raw string, asJSON bool) error
 	if checked.Records == 0 {
 		s.log.warn("no-records", out+" holds no record: nothing could be checked", nil)
 	}
-	if provenance.Differences(findings) > 0 {
+	if provenance.Differences(doc.Findings) > 0 {
 		return &exit{pipeline.ExitOutside}
 	}
 	return nil
+}
+
+// shownRaw gives the raw dataset as it may be shown: as it was given, or found from OUT the way
+// OUT was given, for the folders above both may be named after a person.
+func shownRaw(out, raw, given string) string {
+	if given != "" || raw == "" || filepath.IsAbs(out) {
+		return raw
+	}
+	here, err := dataset.RealPath(".")
+	if err != nil {
+		return raw
+	}
+	rel, err := filepath.Rel(here, raw)
+	if err != nil {
+		return raw
+	}
+	return rel
+}
+
+// replayRequest reads the options that go with --replay; nil without it.
+func (s *session) replayRequest(c *cli.Context, out string) (*pipeline.Replay, error) {
+	if !c.Bool("replay") {
+		for _, name := range []string{"scratch", "jobs", "memory"} {
+			if c.IsSet(name) {
+				return nil, &pipeline.UsageError{Where: "--" + name, Message: "goes with --replay"}
+			}
+		}
+		return nil, nil
+	}
+	r := &pipeline.Replay{Out: out, Scratch: c.String("scratch"), Observe: s.observeReplay}
+	var err error
+	if c.IsSet("jobs") {
+		if r.Jobs, err = count(c, "jobs", 1); err != nil {
+			return nil, err
+		}
+	}
+	r.Memory, err = memory(c)
+	return r, err
+}
+
+// observeReplay shows how far a replay is; what came of a run is among the findings.
+func (s *session) observeReplay(e pipeline.Event) {
+	if e.Kind == pipeline.RunEnded {
+		s.log.step(1)
+	}
+}
+
+func (s *session) writeAudit(doc auditDocument, asJSON bool) error {
+	var b strings.Builder
+	if asJSON {
+		data, err := json.MarshalIndent(doc, "", "  ")
+		if err != nil {
+			return err
+		}
+		b.Write(append(data, '\n'))
+	} else {
+		for _, f := range doc.Findings {
+			b.WriteString(f.String() + "\n")
+		}
+		fmt.Fprintf(&b, "%s, %s and %s checked: %s\n", counted(doc.Records, "record"), counted(doc.Outputs, "output"), counted(doc.Inputs, "input"), counted(provenance.Differences(doc.Findings), "difference"))
+		if r := doc.Replay; r != nil {
+			fmt.Fprintf(&b, "%s computed again: %d the same byte for byte, %d not the same, %d could not be computed\n", counted(r.Runs, "run"), r.Same, r.Differ, r.NotReplayed)
+		}
+	}
+	_, err := fmt.Fprint(s.stdout, b.String())
+	return err
 }
 
 func counted(n int, what string) string {
