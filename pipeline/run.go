@@ -293,7 +293,7 @@ func (w *worker) estimate(ctx context.Context, p *Plan, s *reel) (*posed, error)
 	var few *realign.TooFewAligned
 	if errors.As(err, &few) {
 		return nil, &Refused{[]fault.Fault{fault.New("motion-lost", p.Pose.File, "",
-			fmt.Sprintf("%d of %d volumes that could be aligned", few.Aligned, few.Volumes), "at least 2",
+			fmt.Sprintf("of %d volumes %d aligned and %d doubtful", few.Volumes, few.Aligned, few.Doubtful), "at least 2 with a pose and, for --reference mean, 1 that is aligned",
 			"look at the images; another --reference, or --motion none, may still give something")}}
 	}
 	if err != nil {

@@ -562,6 +562,9 @@ func TestStreamBreaksOff(t *testing.T) {
 
 // What another volume allocates is small beside the volume: maps and closures.
 func TestStreamAllocatesNothingForAVolume(t *testing.T) {
+	if raceEnabled {
+		t.Skip("the race detector allocates")
+	}
 sets:
 	for _, keys := range []map[string]string{{"motion": "none", "time": "sinc"}, {"motion": "none", "time": "none"}} {
 		allocated := func(nt int) uint64 {

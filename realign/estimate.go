@@ -90,14 +90,21 @@ type Parameter struct {
 	Value float64
 }
 
-// TooFewAligned is returned when all but one volume are lost, or all.
+// TooFewAligned is returned when no pose was found for all but one volume, or all; or when
+// none is good enough to be averaged where a mean is the reference.
 type TooFewAligned struct {
-	Aligned int // volumes for which a pose was found, doubtful ones included
-	Volumes int
+	Aligned  int // volumes that look like the reference
+	Doubtful int // volumes for which a pose was found, but that do not
+	Volumes  int
 }
 
 func (e *TooFewAligned) Error() string {
-	return fmt.Sprintf("%d of %d volumes could be aligned, at least 2 are needed", e.Aligned, e.Volumes)
+	return fmt.Sprintf("of %d volumes %d are aligned and %d doubtful; at least 2 with a pose are needed, and for a mean at least 1 that is aligned", e.Volumes, e.Aligned, e.Doubtful)
+}
+
+// tooFew counts the volumes of a run that cannot go on.
+func tooFew(vols []Volume) error {
+	return &TooFewAligned{Aligned: countState(vols, Aligned), Doubtful: countState(vols, Doubtful), Volumes: len(vols)}
 }
 
 // Constants of the estimate, each with its reason.
@@ -402,7 +409,7 @@ func (e *estimator) againstMean() (*Estimate, error) {
 	for range 3 {
 		// The average stands at the pose of the first aligned volume.
 		if first = firstAligned(vols); first < 0 {
-			return nil, &TooFewAligned{Aligned: e.nt - countState(vols, Lost), Volumes: e.nt}
+			return nil, tooFew(vols)
 		}
 		back := vols[first].Pose.Inverse()
 		used := make([]bool, e.nt)
@@ -440,7 +447,7 @@ func (e *estimator) againstMean() (*Estimate, error) {
 	}
 	// Whatever still does not fit stays out of the reference that is given.
 	if firstAligned(vols) < 0 {
-		return nil, &TooFewAligned{Aligned: e.nt - countState(vols, Lost), Volumes: e.nt}
+		return nil, tooFew(vols)
 	}
 	image, unknown, err := e.average(vols, weak)
 	if err != nil {
@@ -976,7 +983,7 @@ func (e *estimator) patch(vol []float32, weak []bool) []float32 {
 func (e *estimator) finish(m *model, vols []Volume, index, passes int) (*Estimate, error) {
 	posed := e.nt - countState(vols, Lost)
 	if posed < 2 {
-		return nil, &TooFewAligned{Aligned: posed, Volumes: e.nt}
+		return nil, tooFew(vols)
 	}
 	// Lost volumes stand between aligned ones, or, where there are none (an
 	// external reference of another kind), between doubtful ones.
