@@ -20,16 +20,28 @@ type recorder struct {
 	seconds map[string]float64
 }
 
-// Software names the program, for records and for the version command.
+// What release/build.sh writes into the binaries that it makes (go build -ldflags -X): the
+// revision of the source, and "true" when the source was not that revision's own.
+var builtFrom, builtModified string
+
+// Software names the program and its build, for records and for the version command. The
+// revision is what a release was stamped with, or what Go found when it built from a checkout;
+// "" for a program built from sources without git.
 func Software() provenance.Software {
-	s := provenance.Software{Name: "evenkeel", Version: Version, GoVersion: runtime.Version()}
+	s := provenance.Software{Name: "evenkeel", Version: Version, GoVersion: runtime.Version(),
+		Revision: builtFrom, Modified: builtModified == "true"}
 	info, ok := debug.ReadBuildInfo()
 	if !ok {
 		return s
 	}
-	for _, set := range info.Settings {
-		if set.Key == "vcs.revision" {
-			s.Revision = set.Value
+	if builtFrom == "" {
+		for _, set := range info.Settings {
+			switch set.Key {
+			case "vcs.revision":
+				s.Revision = set.Value
+			case "vcs.modified":
+				s.Modified = set.Value == "true"
+			}
 		}
 	}
 	for _, d := range info.Deps {
