@@ -319,10 +319,10 @@ func WriteCohort(ctx context.Context, dir string, workers int) ([]TrueRun, error
 	plans := cohort()
 	for _, f := range cohortFiles(plans) {
 		path := filepath.Join(dir, filepath.FromSlash(f.key))
-		if err := os.MkdirAll(filepath.Dir(path), 0o755); err != nil {
+		if err := os.MkdirAll(filepath.Dir(path), 0o777); err != nil {
 			return nil, fmt.Errorf("phantom: %w", err)
 		}
-		if err := os.WriteFile(path, []byte(f.value.(string)), 0o644); err != nil {
+		if err := os.WriteFile(path, []byte(f.value.(string)), 0o666); err != nil {
 			return nil, fmt.Errorf("phantom: %w", err)
 		}
 	}

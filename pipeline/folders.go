@@ -30,7 +30,7 @@ func (f *folders) make(dir string) error {
 		}
 		missing = append(missing, d)
 	}
-	if err := os.MkdirAll(dir, 0o755); err != nil {
+	if err := os.MkdirAll(dir, 0o777); err != nil {
 		return err
 	}
 	for _, d := range missing {

@@ -24,7 +24,7 @@ func lockFile(ctx context.Context, name string, waiting func()) (*fileLock, erro
 		if err := ctx.Err(); err != nil {
 			return nil, err
 		}
-		f, err := os.OpenFile(name, os.O_CREATE|os.O_RDWR, 0o644)
+		f, err := os.OpenFile(name, os.O_CREATE|os.O_RDWR, 0o666)
 		if err != nil {
 			return nil, creating(filepath.Base(name), err)
 		}

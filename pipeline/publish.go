@@ -3,8 +3,8 @@ package pipeline
 // How files come to stand under their final names:
 //
 //  1. Everything a run writes goes to hidden files in the folder of the final
-//     ones (a rename across file systems would not be atomic), created 0644 less
-//     the user's umask.
+//     ones (a rename across file systems would not be atomic), created 0666 less
+//     the user's umask, folders 0777.
 //  2. Each is synced to the disk before it is closed.
 //  3. When all are whole, an older record is removed, then all are renamed, the
 //     new record last. Whatever happens in between, a record that exists names
@@ -71,7 +71,7 @@ func (p *publisher) path(rel string) string { return filepath.Join(p.out, filepa
 func (p *publisher) write(role, rel string, fill func(io.Writer) error) error {
 	final := p.path(rel)
 	pf := &pendingFile{role: role, rel: rel, final: final, hidden: hiddenName(final), sum: sha256.New()}
-	f, err := os.OpenFile(pf.hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
+	f, err := os.OpenFile(pf.hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o666)
 	if err != nil {
 		return creating(rel, err)
 	}
@@ -205,7 +205,7 @@ func replaceFile(name, rel string, data []byte) error {
 		return nil
 	}
 	hidden := hiddenName(name)
-	f, err := os.OpenFile(hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
+	f, err := os.OpenFile(hidden, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o666)
 	if err != nil {
 		return creating(rel, err)
 	}

@@ -106,7 +106,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	if ds.Derivative {
 		return outcomes, nil // no derivative of a derivative: nothing is written at all
 	}
-	if err := os.MkdirAll(job.Out, 0o755); err != nil {
+	if err := os.MkdirAll(job.Out, 0o777); err != nil {
 		return outcomes[:0], creating(given, err)
 	}
 	if err := writeDescriptions(ds, job.Out); err != nil {

@@ -55,7 +55,7 @@ func (s *session) demo(ctx context.Context, dir string) error {
 		}
 	} else if entries, err := os.ReadDir(dir); err == nil && len(entries) > 0 {
 		return &pipeline.CreateError{Path: dir, Err: errors.New("the folder is not empty; name a new one")}
-	} else if err := os.MkdirAll(dir, 0o755); err != nil {
+	} else if err := os.MkdirAll(dir, 0o777); err != nil {
 		return &pipeline.CreateError{Path: dir, Err: err}
 	}
 	raw, out := filepath.Join(dir, "raw"), filepath.Join(dir, "steady")
