@@ -372,7 +372,7 @@ func settle(ds *dataset.Dataset, s *source, echoes []*source, req Request) (*Pla
 		found = append(found, p.fewVolumes(nt)...)
 		found = append(found, p.findReference()...)
 		if need := p.Memory(1); req.Memory > 0 && need > req.Memory {
-			found = append(found, fault.New("memory-short", p.Run.File, "", Bytes(need)+" needed",
+			found = append(found, fault.New("memory-short", p.Run.File, "", bytesUp(need)+" needed",
 				"at most "+Bytes(req.Memory), "give --memory a larger size, or run it on a machine with more memory"))
 		}
 	}

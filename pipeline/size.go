@@ -16,6 +16,17 @@ import (
 // Bytes writes a size for people, in binary units.
 func Bytes(n int64) string { return units.BytesSize(float64(n)) }
 
+// bytesUp writes a size like [Bytes], but rounded up: what it writes, read by [ParseBytes], is n
+// or more, by less than 2 in 1000. Who is told that so much is needed must be able to ask for it.
+func bytesUp(n int64) string {
+	for m := n; ; m += m>>12 + 1 { // Bytes keeps four digits
+		s := Bytes(m)
+		if v, err := ParseBytes("", s); err != nil || v >= n {
+			return s
+		}
+	}
+}
+
 // ParseBytes reads a size such as 8GiB, 8GB, 512m; units are powers of 1024, as
 // is usual for memory. It returns a [*UsageError].
 func ParseBytes(option, v string) (int64, error) {
