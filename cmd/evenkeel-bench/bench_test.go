@@ -248,3 +248,24 @@ func TestGrowth(t *testing.T) {
 		t.Errorf("left behind: %v", left)
 	}
 }
+
+// What trust costs is told of whole runs, and nothing is left behind.
+func TestOverhead(t *testing.T) {
+	program := filepath.Join(t.TempDir(), "evenkeel")
+	if out, err := exec.Command("go", "build", "-o", program, "evenkeel/cmd/evenkeel").CombinedOutput(); err != nil {
+		t.Skipf("no go to build with: %v\n%s", err, out)
+	}
+	b := &bench{set: &settings{times: 1, program: program}, dir: t.TempDir(), self: built(t), stderr: io.Discard}
+	var out strings.Builder
+	if err := b.overhead(context.Background(), size{24, 24, 16, 12}, &out); err != nil {
+		t.Fatal(err)
+	}
+	for _, want := range []string{"24x24x16x12, processor", "\n| default | ", "\n| volume-first | "} {
+		if !strings.Contains(out.String(), want) {
+			t.Errorf("%q is not in\n%s", want, out.String())
+		}
+	}
+	if left, _ := os.ReadDir(b.dir); len(left) != 0 {
+		t.Errorf("left behind: %v", left)
+	}
+}

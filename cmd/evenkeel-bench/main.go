@@ -45,6 +45,7 @@ type settings struct {
 	only        []string
 	python      string
 	growth      []int
+	overhead    bool
 }
 
 // A size is nx, ny, nz, nt.
@@ -96,6 +97,11 @@ func run(ctx context.Context, args []string, stdout, stderr io.Writer) error {
 				return err
 			}
 			return synthesiseMany(ctx, args[1], n)
+		case "trust":
+			if len(args) != 3 {
+				return errors.New("trust: expected DIR OUT")
+			}
+			return trust(args[1], args[2], stdout)
 		case "resample":
 			if len(args) != 5 {
 				return errors.New("resample: expected DIR WAY SIZE TIMES")
@@ -137,6 +143,7 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 	fs.StringVar(&only, "only", "", "measure just these rows, by `NAMES` as in the table, with commas; resampling is all that -python adds")
 	fs.StringVar(&set.python, "python", "", "a Python with numpy and scipy: also measure resampling alone, beside scipy's")
 	fs.StringVar(&growth, "growth", "", "instead of all else, measure how the cost of a volume grows with their number, on the grid of the first\nof the sizes: `COUNTS` of volumes with commas, as 100,200,400,800")
+	fs.BoolVar(&set.overhead, "overhead", false, "instead of all else, measure what digests and syncing cost of a run's processor time")
 	if err := fs.Parse(args); err != nil {
 		return nil, err
 	}
@@ -204,6 +211,14 @@ func measure(ctx context.Context, set *settings, stdout, stderr io.Writer) (err 
 	b := &bench{set: set, dir: dir, self: self, stderr: stderr}
 	if len(set.growth) > 0 {
 		return b.growth(ctx, stdout)
+	}
+	if set.overhead {
+		for _, s := range set.sizes {
+			if err := b.overhead(ctx, s, stdout); err != nil {
+				return err
+			}
+		}
+		return nil
 	}
 	wants := func(name string) bool { return len(set.only) == 0 || slices.Contains(set.only, name) }
 	for _, s := range set.sizes {
