@@ -34,6 +34,7 @@ var rooms = map[string][]string{
 	"internal/kernel":     nil,
 	"internal/kernel/gen": nil,
 	"internal/parallel":   nil,
+	"release":             nil,
 	"":                    nil,
 }
 
