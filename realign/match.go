@@ -246,7 +246,7 @@ func scannerGain(g [4]float64, pose Pose, c [3]float64) (out [4]float64) {
 	out[0] = g[0]
 	r := pose.rotation()
 	for a := range 3 {
-		out[0] += float64(g[1+a]*(back[a]-c[a])) * (1.0 / gainReach)
+		out[0] += float64(float64(g[1+a]*(back[a]-c[a])) * (1.0 / gainReach))
 		for b := range 3 {
 			out[1+a] += float64(r[3*a+b] * g[1+b])
 		}

@@ -188,7 +188,7 @@ func (c *chain) evidences(strengths [kernel.LadderLanes][2]float64, bent [2]floa
 // volume of the posterior adds -log|L|.
 func (c *chain) evidence(strengths [2]float64, gained, logInverse float64, bent [2]float64) (e float64, ok bool) {
 	gained -= float64(strengths[0]*bent[0]) + float64(strengths[1]*bent[1])
-	e = gained/2 + logInverse
+	e = float64(gained/2) + logInverse
 	e += float64(float64(1.5*float64(len(c.links)-2)) * (detmath.Log(strengths[0]) + detmath.Log(strengths[1])))
 	return e, !math.IsNaN(e) && !math.IsInf(e, 0)
 }
