@@ -35,6 +35,15 @@ type Replay struct {
 	Observe  func(Event)
 }
 
+// Verdict says what came of a run that was to be computed again.
+type Verdict int
+
+const (
+	NotComputed Verdict = iota
+	Same
+	NotSame
+)
+
 // Replayed counts the runs of a [Replay].
 type Replayed struct {
 	Runs  int // records that could be read
@@ -155,13 +164,19 @@ func (r Replay) group(ctx context.Context, ds *dataset.Dataset, scratch string, 
 	_, err = Steady(ctx, ds, plans, Job{
 		Out: scratch, Jobs: r.Jobs, Cores: r.Cores, Memory: r.Memory,
 		Observe: func(e Event) { // one at a time
-			if r.Observe != nil {
-				r.Observe(e)
-			}
 			if e.Kind != RunEnded || failed != nil {
+				if r.Observe != nil {
+					r.Observe(e)
+				}
 				return
 			}
 			rec := g.records[e.Plan.Output("record")]
+			e.Verdict = NotComputed
+			defer func() {
+				if r.Observe != nil {
+					r.Observe(e)
+				}
+			}()
 			switch e.Outcome.State {
 			case Done:
 				same := true
@@ -174,8 +189,10 @@ func (r Replay) group(ctx context.Context, ds *dataset.Dataset, scratch string, 
 				}
 				if same {
 					count.Same++
+					e.Verdict = Same
 				} else {
 					count.Other++
+					e.Verdict = NotSame
 				}
 			case RefusedRun:
 				found := "refused"
@@ -228,8 +245,8 @@ func (r Replay) hold(rec recorded, scratch string, p *Plan, find finder) error {
 		return &IOError{Path: fresh, Step: "reading back", Err: err}
 	}
 	by := ""
-	if v := rec.record.Software.Version; v != Version {
-		by = fmt.Sprintf("; written by version %s, computed again by %s", v, Version)
+	if a, b := buildOf(rec.record.Software), buildOf(again.Software); a != b {
+		by = fmt.Sprintf("; written by %s, computed again by %s", a, b)
 	}
 	made := map[string]bool{}
 	for _, f := range again.Outputs {
@@ -266,6 +283,35 @@ func (r Replay) hold(rec recorded, scratch string, p *Plan, find finder) error {
 		}
 	}
 	return os.Remove(fresh)
+}
+
+// buildOf names a build of the program.
+func buildOf(s provenance.Software) string {
+	name := "version " + s.Version
+	if s.Revision != "" {
+		name += ", revision " + s.Revision[:min(12, len(s.Revision))]
+	}
+	if s.Modified {
+		name += " with changes"
+	}
+	return name
+}
+
+// CheckScratch refuses a folder for a replay that lies in OUT or in the raw dataset.
+func CheckScratch(out, raw, scratch string) error {
+	if scratch == "" {
+		return nil
+	}
+	for what, root := range map[string]string{"OUT": out, "the raw dataset": raw} {
+		a, b, err := realPaths(root, scratch)
+		if err != nil {
+			return err
+		}
+		if rel, err := filepath.Rel(a, b); err == nil && (rel == "." || filepath.IsLocal(rel)) {
+			return &UsageError{Where: "--scratch", Message: scratch + " lies on or inside " + what + "; give a folder outside it"}
+		}
+	}
+	return nil
 }
 
 // accountsDiffer names the parts of two records that differ though they are about one
@@ -404,7 +450,11 @@ func imageDifference(was, now string) string {
 	if first < 0 {
 		return "the same voxels, but other bytes: the header, or how they are compressed"
 	}
-	return fmt.Sprintf("volume %d is the first that differs; %d voxels differ in all, by %s at most", first, voxels, strconv.FormatFloat(most, 'g', 4, 64))
+	s := "s that differ"
+	if voxels == 1 {
+		s = " that differs"
+	}
+	return fmt.Sprintf("%d voxel%s, by %s at most, the first in volume %d", voxels, s, strconv.FormatFloat(most, 'g', 4, 64), first)
 }
 
 // lineDifference names the first line that differs.
@@ -425,11 +475,11 @@ func lineDifference(was, now string) (string, error) {
 		v, errB := y.ReadString('\n')
 		switch {
 		case u != v:
-			return fmt.Sprintf("line %d is the first that differs", line), nil
+			return fmt.Sprintf("line %d to be the first that differs", line), nil
 		case errA != nil && errA != io.EOF:
 			return "", errA
 		case errA != nil || errB != nil:
-			return fmt.Sprintf("line %d is the first that differs", line), nil
+			return fmt.Sprintf("line %d to be the first that differs", line), nil
 		}
 	}
 }

@@ -51,6 +51,7 @@ type Event struct {
 	Share   float64  // with RunShare: roughly what share of the stage is done, 0 to 1; it may fall
 	Why     string   // with RunStarted: why a run that OUT holds something of is computed again, "" for a new one
 	Outcome *Outcome // with RunEnded
+	Verdict Verdict  // with RunEnded, of a replay
 }
 
 // Steady processes the plans that are not refused and returns one outcome a plan,

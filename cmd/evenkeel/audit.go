@@ -22,20 +22,23 @@ func (s *session) auditCommand() *cli.Command {
 			"The raw files are found through OUT's DatasetLinks, or with --dataset. A record of\n"+
 			"another version is noted and is no difference. With --replay each run is also computed\n"+
 			"again in a scratch folder, from the raw data and the settings that its record names,\n"+
-			"and compared byte for byte: what differs is named with where and by how much.", "evenkeel audit voyage-steady --dataset voyage --replay",
-			codes(pipeline.ExitDone, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitIO, pipeline.ExitInterrupt).
+			"and compared byte for byte: what differs is named with where and by how much. Replay\n"+
+			"with the version that wrote a record: another may rightly give other bytes, and the\n"+
+			"finding then names both.", "evenkeel audit voyage-steady --dataset voyage --replay",
+			codes(pipeline.ExitDone, pipeline.ExitOutside, pipeline.ExitUsage, pipeline.ExitNoInput, pipeline.ExitBug, pipeline.ExitNoCreate, pipeline.ExitIO, pipeline.ExitInterrupt).
 				but(pipeline.ExitDone, "every file looked for is what its record says").
 				but(pipeline.ExitOutside, "a difference was found").
 				but(pipeline.ExitUsage, "the command line is wrong; nothing was started").
+				but(pipeline.ExitNoCreate, "the scratch folder cannot be created").
 				but(pipeline.ExitNoInput, "OUT or the raw dataset given is missing or unreadable, or OUT holds no record").
 				but(pipeline.ExitInterrupt, "interrupted: run the same command again")),
 		Flags: []cli.Flag{
 			&cli.StringFlag{Name: "dataset", Usage: "the raw dataset, in `DIR`"},
 			&cli.BoolFlag{Name: "json", Usage: "the findings as one JSON document"},
 			&cli.BoolFlag{Name: "replay", Usage: "also compute each run again from its record alone, and compare every byte"},
-			&cli.StringFlag{Name: "scratch", Usage: "with --replay: compute in a folder of its own inside `DIR`, one run at a time", DefaultText: "the system's temporary folder"},
+			&cli.StringFlag{Name: "scratch", Usage: "with --replay: compute in a new folder inside `DIR`, which needs room for the outputs of the runs at work; each is taken away when it has been compared", DefaultText: "the system's temporary folder"},
 			&cli.StringFlag{Name: "jobs", Usage: "with --replay: `N` runs at once", DefaultText: "chosen from cores and runs"},
-			memoryFlag(),
+			&cli.StringFlag{Name: "memory", Usage: "with --replay: memory that runs may hold together, as `SIZE` (8GiB)", DefaultText: "3/4 of what is free"},
 		},
 		Action: func(c *cli.Context) error {
 			args, err := arguments(c, "OUT")
@@ -85,8 +88,16 @@ func (s *session) audit(c *cli.Context, out string) error {
 	doc := auditDocument{out, shownRaw(out, raw, c.String("dataset")), checked.Records, checked.Outputs, checked.Inputs, checked.InputsUnseen, checked.Unlisted, nil, append([]provenance.Finding{}, findings...)}
 	if replay != nil && checked.Records > 0 {
 		if raw == "" {
+			// What the digests tell is told all the same.
+			if err := s.writeAudit(doc, c.Bool("json")); err != nil {
+				return &pipeline.IOError{Path: "standard output", Err: err}
+			}
 			_, why := pipeline.LinkedRaw(out)
-			return &pipeline.UsageError{Where: "--replay", Message: "nothing can be computed again: " + why + "; give --dataset DIR"}
+			s.log.error("not-replayed", "nothing can be computed again: "+why+"; give --dataset DIR", nil)
+			return &exit{pipeline.ExitNoInput}
+		}
+		if err := pipeline.CheckScratch(out, raw, replay.Scratch); err != nil {
+			return err
 		}
 		replay.Raw = raw
 		s.log.startProgress(float64(checked.Records))
@@ -155,11 +166,14 @@ func (s *session) replayRequest(c *cli.Context, out string) (*pipeline.Replay, e
 	return r, err
 }
 
-// observeReplay shows how far a replay is; what came of a run is among the findings.
+// observeReplay shows how far a replay is; how a run differs is among the findings.
 func (s *session) observeReplay(e pipeline.Event) {
-	if e.Kind == pipeline.RunEnded {
-		s.log.step(1)
+	if e.Kind != pipeline.RunEnded {
+		return
 	}
+	s.log.step(1)
+	says := map[pipeline.Verdict]string{pipeline.Same: "the same byte for byte", pipeline.NotSame: "not the same", pipeline.NotComputed: "could not be computed"}[e.Verdict]
+	s.log.info("replayed", e.Plan.Run.Stem+": "+says, nil)
 }
 
 func (s *session) writeAudit(doc auditDocument, asJSON bool) error {

@@ -107,8 +107,8 @@ func TestReplayFindsAForgery(t *testing.T) {
 	}
 	code, stdout, stderr := run("audit", out, "--dataset", dir, "--replay")
 	for _, want := range []string{
-		"replay-differs: " + theRun + "_desc-steady_bold.nii.gz: found volume 3 is the first that differs; 2 voxels differ in all, by 1.5 at most",
-		"replay-differs: " + theRun + "_desc-steady_pose.tsv: found line 5 is the first that differs",
+		"replay-differs: " + theRun + "_desc-steady_bold.nii.gz: found 2 voxels that differ, by 1.5 at most, the first in volume 3",
+		"replay-differs: " + theRun + "_desc-steady_pose.tsv: found line 5 to be the first that differs",
 		"2 runs computed again: 1 the same byte for byte, 1 not the same, 0 could not be computed",
 	} {
 		if !strings.Contains(stdout, want) {
@@ -157,7 +157,7 @@ func TestReplaySaysWhatCannotBe(t *testing.T) {
 	forge(t, out, theRun, func(r *provenance.Record) {
 		r.Settings = bytes.Replace(r.Settings, []byte(`"quintic"`), []byte(`"cubic"`), 1)
 	})
-	check("other settings", 4, "replay-differs: "+theRun+"_desc-steady_bold.nii.gz: found volume ", "another account of stage space", "1 not the same")
+	check("other settings", 4, "replay-differs: "+theRun+"_desc-steady_bold.nii.gz: found ", "another account of stage space", "1 not the same")
 	forge(t, out, theRun, func(r *provenance.Record) {
 		r.Settings = bytes.Replace(r.Settings, []byte(`"cubic"`), []byte(`"sextic"`), 1)
 	})
@@ -180,10 +180,13 @@ func TestReplaySaysWhatCannotBe(t *testing.T) {
 	if code != pipeline.ExitNoInput {
 		t.Error(dump(code, stdout, stderr))
 	}
+	if code, stdout, stderr := run("audit", out, "--replay", "--dataset", dir, "--scratch", out); code != pipeline.ExitUsage || !strings.Contains(stderr, "lies on or inside OUT") {
+		t.Error(dump(code, stdout, stderr))
+	}
 	if code, stdout, stderr := run("audit", out, "--scratch", t.TempDir()); code != pipeline.ExitUsage || !strings.Contains(stderr, "goes with --replay") {
 		t.Error(dump(code, stdout, stderr))
 	}
-	if code, stdout, stderr := run("audit", out, "--replay", "--dataset", dir, "--scratch", filepath.Join(out, "not", "there")); code != pipeline.ExitNoCreate {
+	if code, stdout, stderr := run("audit", out, "--replay", "--dataset", dir, "--scratch", filepath.Join(t.TempDir(), "not", "there")); code != pipeline.ExitNoCreate {
 		t.Error(dump(code, stdout, stderr))
 	}
 }
