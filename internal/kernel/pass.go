@@ -274,9 +274,9 @@ func aboutMiddle(by []float64) []float64 {
 	c := make([]float64, len(by))
 	for k := len(by) - 1; k >= 0; k-- { // Horner: c = c*(s + 1/2) + by[k]
 		for i := len(c) - 1; i > 0; i-- {
-			c[i] = c[i-1] + c[i]/2
+			c[i] = c[i-1] + float64(c[i]/2)
 		}
-		c[0] = c[0]/2 + by[k]
+		c[0] = float64(c[0]/2) + by[k]
 	}
 	return c
 }
