@@ -140,7 +140,7 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 	fs.StringVar(&set.program, "program", "", "the evenkeel to measure (default: built from the module in the current folder)")
 	fs.StringVar(&script, "script", "", "a command to measure beside it; the words IN and OUT become the run and a new .nii.gz")
 	fs.StringVar(&set.folder, "folder", "", "where to put runs and outputs (default: a temporary folder, removed in the end)")
-	fs.StringVar(&only, "only", "", "measure just these rows, by `NAMES` as in the table, with commas; resampling is all that -python adds")
+	fs.StringVar(&only, "only", "", "measure just these rows, by `NAMES` as in the table, with commas (docs/speed.md tells them); resampling needs -python")
 	fs.StringVar(&set.python, "python", "", "a Python with numpy and scipy: also measure resampling alone, beside scipy's")
 	fs.StringVar(&growth, "growth", "", "instead of all else, measure how the cost of a volume grows with their number, on the grid of the first\nof the sizes: `COUNTS` of volumes with commas, as 100,200,400,800")
 	fs.BoolVar(&set.overhead, "overhead", false, "instead of all else, measure what digests and syncing cost of a run's processor time")
@@ -182,6 +182,18 @@ func parse(args []string, stderr io.Writer) (*settings, error) {
 	set.script = strings.Fields(script)
 	if only != "" {
 		set.only = strings.Split(only, ",")
+	}
+	names := []string{floorRow, ownRow, scriptRow, resamplingRow}
+	for _, p := range programs {
+		names = append(names, p.name)
+	}
+	for _, name := range set.only {
+		if !slices.Contains(names, name) {
+			return nil, fmt.Errorf("only: found %q, expected some of %s", name, strings.Join(names, ", "))
+		}
+		if name == resamplingRow && set.python == "" {
+			return nil, errors.New("only: resampling needs -python")
+		}
 	}
 	return set, nil
 }
