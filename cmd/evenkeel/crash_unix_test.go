@@ -7,7 +7,9 @@ package main
 
 import (
 	"bytes"
+	"compress/gzip"
 	"context"
+	"encoding/binary"
 	"errors"
 	"flag"
 	"fmt"
@@ -445,4 +447,22 @@ func TestLeftoversOfTheDead(t *testing.T) {
 		t.Fatal(p)
 	}
 	want.same(t, out, "leftovers")
+}
+
+// headerBytes are those before the voxels, whatever the header claims.
+func (s *sailor) headerBytes() []byte {
+	good := newSailor().image()[:352]
+	for k := range 4 { // dim[1..4] (nifti1.h)
+		binary.LittleEndian.PutUint16(good[42+2*k:], uint16(s.header.Dim[k+1]))
+	}
+	return good
+}
+
+// packed compresses bytes.
+func packed(data []byte) []byte {
+	var b bytes.Buffer
+	w := gzip.NewWriter(&b)
+	w.Write(data)
+	w.Close()
+	return b.Bytes()
 }
