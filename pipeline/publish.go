@@ -155,6 +155,13 @@ func (p *publisher) publish(old []string) error {
 			return &IOError{Path: f.rel, Step: "renaming", Err: err}
 		}
 	}
+	// The folders may be new themselves.
+	for _, dir := range dirs {
+		for up := filepath.Dir(dir); len(up) >= len(p.out) && up != dir && !seen[up]; up = filepath.Dir(up) {
+			seen[up] = true
+			dirs = append(dirs, up)
+		}
+	}
 	syncDirs(dirs)
 	p.pending = nil
 	return nil
@@ -257,5 +264,6 @@ func replaceFile(name, rel string, data []byte) error {
 		os.Remove(hidden)
 		return &IOError{Path: rel, Step: "writing", Err: err}
 	}
+	syncDirs([]string{filepath.Dir(name)})
 	return nil
 }

@@ -293,7 +293,7 @@ func TestInputChangesMidRun(t *testing.T) {
 			return unix.Mkfifo(full, 0o644)
 		},
 	} {
-		for _, args := range [][]string{nil, {"--motion", "volume", "--time", "sinc"}} {
+		for _, args := range [][]string{{"--order", "time-first"}, {"--motion", "volume", "--time", "sinc"}} { // in memory, and streamed
 			dir := crewCohort(t, 2)
 			out := filepath.Join(t.TempDir(), "out")
 			p := start(t, nil, append([]string{"steady", dir, out, "--jobs", "1"}, args...)...)

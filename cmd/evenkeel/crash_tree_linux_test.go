@@ -347,3 +347,16 @@ func TestHostileOut(t *testing.T) {
 		}
 	}
 }
+
+// A settings file that never ends is refused like any other that is none: 64, and no memory is
+// filled with it.
+func TestEndlessSettings(t *testing.T) {
+	dir := crewCohort(t, 1)
+	p := start(t, nil, "steady", dir, filepath.Join(t.TempDir(), "out"), "--settings", "/dev/zero")
+	if code := p.wait(); code != 64 || !strings.Contains(p.stderr.String(), "/dev/zero: found more than 16 MiB") {
+		t.Error(p)
+	}
+	if rss := p.cmd.ProcessState.SysUsage().(*syscall.Rusage).Maxrss; rss > 160<<10 { // KiB; 16 MiB, twice while they grow, and the program
+		t.Errorf("held %d MiB", rss>>10)
+	}
+}
