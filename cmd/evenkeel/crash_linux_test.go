@@ -70,7 +70,7 @@ func (f finished) withoutTable(t *testing.T, out, when string) {
 func TestDiskIsFull(t *testing.T) {
 	asRoot(t)
 	dir := crewCohort(t, 2)
-	for _, args := range [][]string{{"--motion", "none"}, {"--motion", "volume", "--time", "sinc"}} {
+	for i, args := range [][]string{{"--motion", "volume", "--time", "sinc"}, {"--motion", "none"}} { // streamed, and in memory
 		whole := process(t, dir, args...)
 		want := finish(t, whole)
 		var size int64
@@ -82,10 +82,9 @@ func TestDiskIsFull(t *testing.T) {
 			size += info.Size()
 		}
 		for _, c := range []struct{ full, room string }{
-			{"size=4k", ""}, {"size=16k", ""},
-			{fmt.Sprintf("size=%d", size/4), ""}, {fmt.Sprintf("size=%d", size/2), ""}, {fmt.Sprintf("size=%d", size*7/8), ""},
-			{"nr_inodes=3", "nr_inodes=1000"}, {"nr_inodes=12", "nr_inodes=1000"},
-		} {
+			{fmt.Sprintf("size=%d", size/2), ""}, {fmt.Sprintf("size=%d", size*7/8), ""}, {"nr_inodes=12", "nr_inodes=1000"},
+			{"size=4k", ""}, {"size=16k", ""}, {fmt.Sprintf("size=%d", size/4), ""}, {"nr_inodes=3", "nr_inodes=1000"},
+		}[:7-4*i] {
 			disk, remount := smallDisk(t, c.full)
 			out := filepath.Join(disk, "out")
 			when := fmt.Sprintf("%v %s", args, c.full)
@@ -273,6 +272,7 @@ func TestUserWithoutRights(t *testing.T) {
 // by each run itself; the others of the cohort are done.
 func TestInputChangesMidRun(t *testing.T) {
 	image := theRun + "_bold.nii"
+	routes := [][]string{{"--order", "time-first"}, {"--motion", "volume", "--time", "sinc"}} // in memory, and streamed
 	for name, change := range map[string]func(full string) error{
 		"vanishes":      os.Remove,
 		"is cut short":  func(full string) error { return os.Truncate(full, 5000) },
@@ -293,7 +293,11 @@ func TestInputChangesMidRun(t *testing.T) {
 			return unix.Mkfifo(full, 0o644)
 		},
 	} {
-		for _, args := range [][]string{{"--order", "time-first"}, {"--motion", "volume", "--time", "sinc"}} { // in memory, and streamed
+		these := routes
+		if name != "vanishes" && name != "is cut short" {
+			these = these[1:] // one of them will do
+		}
+		for _, args := range these {
 			dir := crewCohort(t, 2)
 			out := filepath.Join(t.TempDir(), "out")
 			p := start(t, nil, append([]string{"steady", dir, out, "--jobs", "1"}, args...)...)

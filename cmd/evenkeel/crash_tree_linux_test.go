@@ -263,7 +263,9 @@ func TestHostileTrees(t *testing.T) {
 					p.wait()
 					t.Fatalf("%v hangs", args[0])
 				}
-				t.Logf("%v: %.2f s", args[0], time.Since(from).Seconds())
+				if d := time.Since(from); d > 2*time.Second {
+					t.Logf("%v: %.2f s", args[0], d.Seconds())
+				}
 				said := p.stdout.String() + p.stderr.String()
 				noTrace(t, said)
 				if code := p.wait(); code != c.code {

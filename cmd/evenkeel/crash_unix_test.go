@@ -206,11 +206,11 @@ func crewCohort(t *testing.T, runs int) (dir string) {
 // undisturbed process takes; half follow upon the appearance of some number of names in OUT, for most of the
 // time is arithmetic, and what can go wrong goes wrong while files come and go.
 func TestKilledAnywhere(t *testing.T) {
-	dir := crewCohort(t, 3)
-	total := 20
+	total, runs := 20, 2
 	if *crashLong {
-		total = 200
+		total, runs = 200, 4
 	}
+	dir := crewCohort(t, runs)
 	random := rand.New(rand.NewPCG(crashSeed, 0))
 	var kills, late, hidden, partial, records int
 	for _, c := range []struct {
@@ -258,7 +258,7 @@ func TestKilledAnywhere(t *testing.T) {
 				}
 			} else {
 				// Of an older result names go before others come: changes are counted, whichever way.
-				n := 1 + random.IntN(max(1, len(after)))
+				n := 1 + random.IntN(max(1, len(after)*3/4))
 				wait := time.Duration(random.Int64N(2) * random.Int64N(int64(3*time.Millisecond)))
 				when = fmt.Sprintf("%s, killed %v after %d changes", c.name, wait, n)
 				for seen, last := 0, first; seen < n; {
@@ -286,7 +286,7 @@ func TestKilledAnywhere(t *testing.T) {
 			if w.hidden > 0 {
 				hidden++
 			}
-			if w.final > 0 && w.records < 3 {
+			if w.final > 0 && w.records < runs {
 				partial++
 			}
 			if w.records > 0 {
@@ -299,7 +299,7 @@ func TestKilledAnywhere(t *testing.T) {
 		}
 	}
 	t.Logf("%d kills: %d left hidden files, %d some files under their final names without all records, %d at least one record; %d came too late", kills, hidden, partial, records, late)
-	if late > kills/3 || hidden == 0 || partial == 0 {
+	if late > kills/2 || hidden == 0 || partial == 0 {
 		t.Errorf("the instants do not meet the work")
 	}
 }
