@@ -40,7 +40,7 @@ func Audit(ctx context.Context, out, raw string, done func(done, of int)) ([]pro
 	if err != nil {
 		return findings, checked, raw, &IOError{Path: out, Step: "auditing", Err: err}
 	}
-	if description, _ := os.ReadFile(filepath.Join(out, descriptionName)); checked.Records == 0 && len(findings) == 0 && !isOurs(description) {
+	if description, _ := readOwn(filepath.Join(out, descriptionName)); checked.Records == 0 && len(findings) == 0 && !isOurs(description) {
 		return nil, checked, raw, &dataset.NotFound{Root: out, Err: errors.New("no dataset of evenkeel's, and no record (*_desc-steady_prov.json) in it")}
 	}
 	return findings, checked, raw, nil
@@ -66,7 +66,7 @@ func LinkedRaw(out string) (raw, why string) {
 		return "", "OUT does not tell where the raw dataset is"
 	}
 	link := raw
-	if data, err := os.ReadFile(filepath.Join(out, descriptionName)); err == nil {
+	if data, err := readOwn(filepath.Join(out, descriptionName)); err == nil {
 		if v := gjson.GetBytes(data, "DatasetLinks."+dataset.RawName).String(); v != "" {
 			link = v
 		}

@@ -39,7 +39,7 @@ func CheckOut(root, out string) error {
 		}
 	}
 	const remedy = "; give an empty or a new folder"
-	data, err := os.ReadFile(filepath.Join(o, descriptionName))
+	data, err := readOwn(filepath.Join(o, descriptionName))
 	switch {
 	case err == nil && isOurs(data):
 		return nil
@@ -65,6 +65,9 @@ func CheckOut(root, out string) error {
 
 const descriptionName = "dataset_description.json"
 
+// commonLock is held by whoever writes a file of OUT that belongs to no single run.
+const commonLock = ".runs.tsv.lock"
+
 func realPaths(a, b string) (ra, rb string, err error) {
 	if ra, err = dataset.RealPath(a); err == nil {
 		rb, err = dataset.RealPath(b)
@@ -84,13 +87,14 @@ func isOurs(description []byte) bool {
 }
 
 // writeDescriptions writes dataset_description.json, README, .bidsignore and
-// runs.json. The description comes first: it marks the folder as ours.
-func writeDescriptions(ds *dataset.Dataset, out string) error {
+// runs.json. The description comes first: it marks the folder as ours. Hidden files
+// of any of them, and of runs.tsv, that a process left that died are removed.
+func writeDescriptions(ctx context.Context, ds *dataset.Dataset, out string) error {
 	d := dataset.Derivative{
 		SourceName: ds.Name, SourceDOI: ds.DOI, Version: Version,
 		RawLink: dataset.RawLinkFor(out, ds.Root),
 	}
-	for _, f := range []struct {
+	files := []struct {
 		name string
 		data []byte
 	}{
@@ -98,7 +102,29 @@ func writeDescriptions(ds *dataset.Dataset, out string) error {
 		{"README", d.ReadmeText()},
 		{".bidsignore", dataset.IgnoreText()},
 		{"runs.json", runsDescription()},
-	} {
+	}
+	names, same := []string{"runs.tsv"}, true
+	for _, f := range files {
+		names = append(names, f.name)
+		have, err := readOwn(filepath.Join(out, f.name))
+		same = same && err == nil && bytes.Equal(have, f.data)
+	}
+	if same && len(leftovers(out, names)) == 0 {
+		return nil
+	}
+	// Another process may be writing them too.
+	lock, err := lockFile(ctx, filepath.Join(out, commonLock), nil)
+	switch create := (*CreateError)(nil); {
+	case errors.As(err, &create) && same:
+		return nil // nothing can be removed, and nothing has to be written
+	case errors.As(err, &create):
+		return &CreateError{Path: "a file in " + out, Err: cause(create.Err)}
+	case err != nil:
+		return err
+	}
+	defer lock.release()
+	sweep(out, names)
+	for _, f := range files {
 		if err := replaceFile(filepath.Join(out, f.name), f.name, f.data); err != nil {
 			return err
 		}
@@ -230,11 +256,11 @@ func (r runRow) figure(get func(*Figures) float64) string {
 func writeRuns(ctx context.Context, out string, outcomes []Outcome) error {
 	// Parts of a cohort may end at the same time.
 	name := filepath.Join(out, "runs.tsv")
-	lock, err := lockFile(ctx, filepath.Join(out, ".runs.tsv.lock"), nil)
+	lock, err := lockFile(ctx, filepath.Join(out, commonLock), nil)
 	if create := (*CreateError)(nil); errors.As(err, &create) {
 		// Nothing can be written, which is no matter where nothing changes.
 		table, terr := runsTable(out, outcomes)
-		if have, rerr := os.ReadFile(name); terr == nil && rerr == nil && bytes.Equal(have, table) {
+		if have, rerr := readOwn(name); terr == nil && rerr == nil && bytes.Equal(have, table) {
 			return nil
 		}
 		return &CreateError{Path: "a file in " + out, Err: cause(create.Err)}
@@ -254,7 +280,7 @@ func writeRuns(ctx context.Context, out string, outcomes []Outcome) error {
 func runsTable(out string, outcomes []Outcome) ([]byte, error) {
 	rows := map[string]runRow{}
 	outside := map[string]string{} // by run
-	if data, err := os.ReadFile(filepath.Join(out, "runs.tsv")); err == nil {
+	if data, err := readOwn(filepath.Join(out, "runs.tsv")); err == nil {
 		for _, r := range earlierRows(data) {
 			outside[r.run] = r.outside
 			if r.state != string(Done) {
@@ -285,7 +311,7 @@ func runsTable(out string, outcomes []Outcome) ([]byte, error) {
 		}
 		for _, f := range r.Outputs {
 			if f.Role == "quality" {
-				if data, err := os.ReadFile(filepath.Join(out, filepath.FromSlash(f.Path))); err == nil {
+				if data, err := readOwn(filepath.Join(out, filepath.FromSlash(f.Path))); err == nil {
 					row.figures, _ = parseFigures(data)
 				}
 			}

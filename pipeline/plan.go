@@ -212,6 +212,7 @@ func look(ds *dataset.Dataset, r dataset.Run) (s *source) {
 		}
 	}
 	var docs []sidecar.Source
+	unread := false // whether a sidecar is there that could not be read
 	for _, name := range r.Sidecars {
 		in := Input{Role: "sidecar", Path: name}
 		data, err := readSmall(ds.Path(name), &in.stamp)
@@ -223,8 +224,9 @@ func look(ds *dataset.Dataset, r dataset.Run) (s *source) {
 			s.faults = append(s.faults, fault.New("sidecar-syntax", name, "", "more than 16 MiB",
 				"a JSON object of acquisition fields", "replace it by the sidecar that belongs to the image"))
 		case err != nil:
+			unread = true
 			if s.err == nil {
-				s.err = &IOError{Path: name, Err: err}
+				s.err = &IOError{Path: name, Step: "reading", Err: err}
 			}
 		default:
 			sum := sha256.Sum256(data)
@@ -245,6 +247,9 @@ func look(ds *dataset.Dataset, r dataset.Run) (s *source) {
 	g.TRSec, _ = s.header.SecondsPerVolume()
 	s.acq, faults = doc.Acquisition(g)
 	s.echoTime = s.acq.EchoTime
+	if unread {
+		return s // what seems to be missing may stand there
+	}
 	for i := range faults {
 		if faults[i].ID == "slice-times-missing" {
 			faults[i].Remedy += s.headerSchedule()

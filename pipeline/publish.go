@@ -10,7 +10,9 @@ package pipeline
 //     new record last. Whatever happens in between, a record that exists names
 //     files that belong to it.
 //  4. Hidden files left by a process that died are removed by the next one that
-//     holds the lock of the run.
+//     holds the lock of the run, or that of the files common to all runs. So are
+//     files of an earlier time that have no place in the new record, also where the
+//     record that named them is gone already.
 
 import (
 	"bufio"
@@ -25,8 +27,10 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 
+	"evenkeel/dataset"
 	"evenkeel/provenance"
 )
 
@@ -151,6 +155,13 @@ func (p *publisher) publish(old []string) error {
 			return &IOError{Path: f.rel, Step: "renaming", Err: err}
 		}
 	}
+	// The folders may be new themselves.
+	for _, dir := range dirs {
+		for up := filepath.Dir(dir); len(up) >= len(p.out) && up != dir && !seen[up]; up = filepath.Dir(up) {
+			seen[up] = true
+			dirs = append(dirs, up)
+		}
+	}
 	syncDirs(dirs)
 	p.pending = nil
 	return nil
@@ -175,12 +186,30 @@ func (p *publisher) discard() {
 	p.pending = nil
 }
 
-// sweep removes hidden files that a dead process left of these outputs. The
-// caller holds the run's lock, so no live process can own one.
-func sweep(out string, outputs []Output) {
+// possible lists every file that a run can have in OUT, whatever the settings: those
+// of a process that died may have been others than those of today.
+func possible(r dataset.Run) (paths []string) {
+	for _, o := range dataset.Outputs {
+		for _, ext := range o.Exts {
+			paths = append(paths, dataset.OutputPath(r, o.Desc, o.Suffix, ext))
+		}
+	}
+	return paths
+}
+
+// sweep removes hidden files that a dead process left of these files of OUT. The
+// caller holds their lock, so no live process can own one.
+func sweep(out string, paths []string) {
+	for _, name := range leftovers(out, paths) {
+		os.Remove(name)
+	}
+}
+
+// leftovers lists the hidden files of these files of OUT.
+func leftovers(out string, paths []string) (names []string) {
 	byDir := map[string][]string{}
-	for _, o := range outputs {
-		dir, base := filepath.Split(filepath.Join(out, filepath.FromSlash(o.Path)))
+	for _, p := range paths {
+		dir, base := filepath.Split(filepath.Join(out, filepath.FromSlash(p)))
 		byDir[dir] = append(byDir[dir], base)
 	}
 	for dir, bases := range byDir {
@@ -189,19 +218,31 @@ func sweep(out string, outputs []Output) {
 			continue // nothing there yet
 		}
 		for _, e := range entries {
-			for _, base := range bases {
-				if isHidden(e.Name(), base) {
-					os.Remove(filepath.Join(dir, e.Name()))
-				}
+			if slices.ContainsFunc(bases, func(base string) bool { return isHidden(e.Name(), base) }) {
+				names = append(names, filepath.Join(dir, e.Name()))
 			}
 		}
 	}
+	return names
+}
+
+// readOwn reads a file of OUT. Whatever is no file, a pipe that nobody writes to,
+// say, is an error instead of being waited for.
+func readOwn(name string) ([]byte, error) {
+	info, err := os.Stat(name)
+	if err != nil {
+		return nil, err
+	}
+	if !info.Mode().IsRegular() {
+		return nil, &fs.PathError{Op: "read", Path: name, Err: errors.New("it is not a file")}
+	}
+	return os.ReadFile(name)
 }
 
 // replaceFile writes one file of the dataset as a whole, atomically, if its content
 // is not there already. rel is for messages.
 func replaceFile(name, rel string, data []byte) error {
-	if have, err := os.ReadFile(name); err == nil && bytes.Equal(have, data) {
+	if have, err := readOwn(name); err == nil && bytes.Equal(have, data) {
 		return nil
 	}
 	hidden := hiddenName(name)
@@ -223,5 +264,6 @@ func replaceFile(name, rel string, data []byte) error {
 		os.Remove(hidden)
 		return &IOError{Path: rel, Step: "writing", Err: err}
 	}
+	syncDirs([]string{filepath.Dir(name)})
 	return nil
 }

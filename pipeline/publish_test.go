@@ -121,7 +121,7 @@ func TestSweep(t *testing.T) {
 	for _, name := range []string{".x_bold.json0123456789", filepath.Base(hiddenName("x_bold.json")), ".xy_bold.json0123456789", "x_bold.json", ".x.lock", ".x_bold.json", ".x_bold.json123", ".x_bold.json01234567890"} {
 		os.WriteFile(filepath.Join(dir, name), nil, 0o644)
 	}
-	sweep(dir, []Output{{"", "x_bold.json"}})
+	sweep(dir, []string{"x_bold.json"})
 	if got := strings.Join(listing(t, dir), " "); got != ".x.lock .x_bold.json .x_bold.json01234567890 .x_bold.json123 .xy_bold.json0123456789 x_bold.json" {
 		t.Errorf("left: %s", got)
 	}

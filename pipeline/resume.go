@@ -130,7 +130,7 @@ func standing(ctx context.Context, out string, p *Plan, redo bool) (Standing, er
 			return again("input changed: %s", path.Base(in.Path))
 		}
 	}
-	quality, err := os.ReadFile(at(p.Output("quality")))
+	quality, err := readOwn(at(p.Output("quality")))
 	if err != nil {
 		return again("file cannot be read: %s", path.Base(p.Output("quality")))
 	}

@@ -9,7 +9,6 @@ import (
 	"fmt"
 	"io"
 	"math"
-	"os"
 	"path/filepath"
 	"runtime"
 	"runtime/debug"
@@ -623,13 +622,14 @@ func (p *Plan) correctVolumeTime(h *nifti.Header) {
 	h.SetSecondsPerVolume(p.Timing.TR)
 }
 
-// oldOutputs names the files of an earlier record of this very run that no
-// longer belong to it, as far as they lie beside it.
+// oldOutputs names the files of an earlier time of this very run: every file that a
+// run can have, for a process that died may have taken the record away before the
+// files, and those that a record names, as far as they lie beside it.
 func oldOutputs(p *Plan, old *provenance.Record) []string {
+	out := possible(p.Run)
 	if old == nil {
-		return nil
+		return out
 	}
-	var out []string
 	for _, f := range old.Outputs {
 		if isOwn(p, f.Path) {
 			out = append(out, f.Path)
@@ -639,7 +639,7 @@ func oldOutputs(p *Plan, old *provenance.Record) []string {
 }
 
 func readRecord(name string) (*provenance.Record, error) {
-	data, err := os.ReadFile(name)
+	data, err := readOwn(name)
 	if err != nil {
 		return nil, err
 	}

@@ -110,7 +110,7 @@ func Steady(ctx context.Context, ds *dataset.Dataset, plans []*Plan, job Job) ([
 	if err := os.MkdirAll(job.Out, 0o777); err != nil {
 		return outcomes[:0], creating(given, err)
 	}
-	if err := writeDescriptions(ds, job.Out); err != nil {
+	if err := writeDescriptions(ctx, ds, job.Out); err != nil {
 		return outcomes[:0], err
 	}
 
@@ -280,7 +280,7 @@ func (w *worker) guarded(ctx context.Context, u unit, job Job, observe func(Even
 	out = make([]Outcome, len(u.plans))
 	var todo unit
 	for i, p := range u.plans {
-		sweep(job.Out, p.Outputs)
+		sweep(job.Out, possible(p.Run))
 		st, err := standing(ctx, job.Out, p, job.Redo)
 		switch {
 		case err != nil:

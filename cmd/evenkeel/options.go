@@ -1,6 +1,8 @@
 package main
 
 import (
+	"fmt"
+	"io"
 	"math"
 	"os"
 	"strconv"
@@ -10,6 +12,7 @@ import (
 
 	"evenkeel/dataset"
 	"evenkeel/pipeline"
+	"evenkeel/provenance"
 )
 
 // selectors are the options that choose runs, with the BIDS key each stands for.
@@ -69,7 +72,7 @@ func filter(c *cli.Context) (dataset.Filter, string) {
 func settings(c *cli.Context) (pipeline.Settings, error) {
 	set := pipeline.DefaultSettings()
 	if name := c.String("settings"); name != "" {
-		data, err := os.ReadFile(name)
+		data, err := readSettings(name)
 		if err != nil {
 			return set, &pipeline.UsageError{Where: "--settings", Message: err.Error()}
 		}
@@ -94,6 +97,21 @@ func settings(c *cli.Context) (pipeline.Settings, error) {
 		}
 	}
 	return set, set.Check()
+}
+
+// readSettings reads a file of settings, or a record, which is larger. A pipe will do, but
+// what never ends is not read on and on.
+func readSettings(name string) ([]byte, error) {
+	f, err := os.Open(name)
+	if err != nil {
+		return nil, err
+	}
+	defer f.Close()
+	data, err := io.ReadAll(io.LimitReader(f, provenance.MaxBytes+1))
+	if err == nil && len(data) > provenance.MaxBytes {
+		err = fmt.Errorf("%s: found more than %d MiB, expected an object of settings or a record", name, provenance.MaxBytes>>20)
+	}
+	return data, err
 }
 
 // memory reads --memory.
