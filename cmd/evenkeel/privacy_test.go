@@ -112,7 +112,7 @@ func (m marks) image(where string, s *sailor, version int) []byte {
 	for _, r := range rooms {
 		copy(b[r.at:r.at+r.of], m.at(where+": "+r.name))
 	}
-	// Extensions: a size (a multiple of 16), a code (2 DICOM, 4 AFNI's own, 6 a comment, 44 BIDS JSON), text.
+	// Extensions: a size (a multiple of 16), a code (2 DICOM, 6 a comment, 44 BIDS JSON), text.
 	b = append(b, 1, 0, 0, 0)
 	for _, code := range []uint32{2, 6, 44} {
 		e := make([]byte, 64)
