@@ -302,13 +302,13 @@ func CheckScratch(out, raw, scratch string) error {
 	if scratch == "" {
 		return nil
 	}
-	for what, root := range map[string]string{"OUT": out, "the raw dataset": raw} {
-		a, b, err := realPaths(root, scratch)
+	for _, in := range [2]struct{ what, root string }{{"OUT", out}, {"the raw dataset", raw}} {
+		a, b, err := realPaths(in.root, scratch)
 		if err != nil {
 			return err
 		}
 		if rel, err := filepath.Rel(a, b); err == nil && (rel == "." || filepath.IsLocal(rel)) {
-			return &UsageError{Where: "--scratch", Message: scratch + " lies on or inside " + what + "; give a folder outside it"}
+			return &UsageError{Where: "--scratch", Message: scratch + " lies on or inside " + in.what + "; give a folder outside it"}
 		}
 	}
 	return nil

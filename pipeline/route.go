@@ -9,7 +9,7 @@ import (
 // A route says what of a series is in memory when.
 //
 // The poses are estimated on the raw series. Volume poses need it a few times over, and
-// its file is read anew for each; a pose path needs it dozens of times, so there it is kept as it
+// its file is read anew for each; a pose path needs it many times, so there it is kept as it
 // is stored. A series of at most keptBytes is kept in any case: as much is needed for the
 // program itself, and then no file is read twice.
 //
